@@ -1,0 +1,1 @@
+"""Errors and findings, unit conversions, random streams: used by every other folder."""

@@ -1,0 +1,133 @@
+"""What the decomposition solves: a weighted, acyclic graph of linear programs with named states.
+
+A *family* is one constraint matrix shared by several *members* (the periods in which a scenario
+may begin, say): costs and bounds differ, the matrix does not. One member of one family is a *node*
+of the graph, and has a value function of its incoming state ``s`` and the capacities ``c``:
+
+    value(s, c) = (1 / scale) * min  cost @ y + offset + sum_e weight_e * theta_e
+                  subject to the rows and bounds of the member,
+                             y[in_columns] = s,   y[capacity_columns] = c,
+                             theta_e >= value of the child of exit e at (y[out_columns[e]], c)
+
+An *exit* hands the state in ``out_columns[e]`` on to a child. A *gated* exit has two children: the
+capacities named in ``gate`` sum to 0 or 1; at 0 its value is that of ``child``, at 1 that of
+``child_if_gated`` (a failure that a measure avoids). ``first_stage`` decides ``x`` once; every
+*root* is a node with a weight, its own map from ``x`` to the capacities in service, and a map from
+capacities to its initial state:
+
+    min  first_stage(x) + sum_r weight_r * value_r(state_matrix c_r + state_offset, c_r),
+         c_r = capacity_matrix x + capacity_offset
+
+The engine (``xlplan.solve``) knows these records and no bus and no kW.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from xlplan.model.linear_program import LinearProgram
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
+
+@dataclass(frozen=True)
+class Member:
+    """Numbers of one member of a family; arrays are full length and owned by the caller.
+
+    in_columns : (n_state,), column that holds each incoming state component, -1 where the member
+        leaves that component free (it then belongs to no cut)
+    exit_weight : (n_exit,), 0 where the exit does not count for this member
+    exit_child : (n_exit, 2), family and member of the child, -1 where there is none
+    exit_child_if_gated : (n_exit, 2), likewise for gated exits
+    scale : positive; costs, offset and weights above are the true ones times ``scale``
+        (the same multipliers then serve all members of a family)
+    value_lower, value_upper : valid bounds of the node's value in its state and capacity box;
+        ``-inf`` lets the engine compute the lower one
+    """
+
+    cost: FloatArray
+    offset: float
+    col_lower: FloatArray
+    col_upper: FloatArray
+    row_lower: FloatArray
+    row_upper: FloatArray
+    in_columns: IntArray
+    exit_weight: FloatArray
+    exit_child: IntArray
+    exit_child_if_gated: IntArray
+    scale: float
+    value_lower: float
+    value_upper: float
+
+
+class Family:
+    """One constraint matrix and its members. Subclasses must be picklable.
+
+    Attributes
+    ----------
+    name : str, for messages
+    program : LinearProgram, its costs and bounds are those of no member in particular; bounds of
+        state and capacity columns are the finite boxes in which values are asked for
+    n_member : int
+    capacity_columns : (n_capacity,), -1 where a capacity plays no part in the family's own rows
+        (it still reaches the children)
+    out_columns : (n_exit, n_state), columns of the state at each exit
+    exit_gate : one tuple of capacity positions per exit, () where not gated
+    is_expanded : True if the cost of following a plan expands the exits that lead to this family
+        over all of them (outage events: cheap), False if it samples them
+    """
+
+    name: str
+    program: LinearProgram
+    n_member: int
+    capacity_columns: IntArray
+    out_columns: IntArray
+    exit_gate: tuple[tuple[int, ...], ...]
+    is_expanded: bool
+
+    def member(self, i_member: int) -> Member:
+        """Numbers of one member."""
+        raise NotImplementedError
+
+
+@dataclass(frozen=True)
+class Root:
+    """One node whose value enters the first stage."""
+
+    name: str
+    family: int
+    member: int
+    weight: float
+    capacity_matrix: FloatArray
+    capacity_offset: FloatArray
+    state_matrix: FloatArray
+    state_offset: FloatArray
+
+
+@dataclass(frozen=True)
+class ValueGraph:
+    """Families, roots and the first stage.
+
+    ``first_stage`` has the columns ``x`` with finite bounds, integers allowed;
+    ``order``: every node as (family, member), children before parents (the graph is acyclic);
+    ``capacity_lower``, ``capacity_upper``: finite box of the capacities;
+    ``state_lower_matrix``, ``state_upper_matrix``: the state's domain as functions of the
+    capacities, into which states are clipped before they are passed on.
+    """
+
+    families: tuple[Family, ...]
+    roots: tuple[Root, ...]
+    first_stage: LinearProgram
+    order: IntArray
+    capacity_names: tuple[str, ...]
+    capacity_lower: FloatArray
+    capacity_upper: FloatArray
+    state_names: tuple[tuple[str, ...], ...]
+    """Per family: names of its state components (families of one window share them)."""
+    state_lower_matrix: tuple[FloatArray, ...]
+    state_upper_matrix: tuple[FloatArray, ...]
+    """Per family: lower <= s <= upper with lower = matrix @ c, (n_state, n_capacity)."""
