@@ -1,0 +1,68 @@
+"""The whole answer to a study: what ``report`` writes and computes nothing of."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from xlplan.base.errors import Finding
+from xlplan.evaluate.results import CheckLine, PlanResult
+
+
+@dataclass(frozen=True)
+class InputEcho:
+    """One input used, default or typed: for the Assumptions sheet."""
+
+    sheet: str
+    row: str
+    """Id of the row, or the settings group."""
+    title: str
+    unit: str
+    value: object
+    is_default: bool
+    source: str
+
+
+@dataclass(frozen=True)
+class StudyResult:
+    """Plans in the order existing, ignoring outages, least cost, then the user's own.
+
+    ``status``: gap reached, limit reached or interrupted (of the least-cost plan).
+    """
+
+    study_name: str
+    prepared_by: str
+    currency: str
+    price_year: int | None
+    study_file: str
+    fingerprint: str
+    seed: int
+    method: str
+    method_reason: str
+    status: str
+    gap_target_frac: float
+    recommended: str
+    plans: tuple[PlanResult, ...]
+    value_of_outage_planning: float
+    value_of_outage_planning_interval: tuple[float, float]
+    scenarios: int
+    findings: tuple[Finding, ...]
+    checks: tuple[CheckLine, ...]
+    """Checks of the study as a whole (history, totals); plans have their own."""
+    inputs: tuple[InputEcho, ...]
+    real_discount_rate_frac: float
+    capital_budget: float | None
+    demand_charge_per_kw_year: float
+    peak_kw: float
+    customers: float
+    versions: tuple[tuple[str, str], ...]
+    started_at: str
+    read_seconds: float
+    solve_seconds: float
+    write_seconds: float = 0.0
+
+    def plan(self, name: str) -> PlanResult:
+        """The plan of that name; KeyError if there is none."""
+        for plan in self.plans:
+            if plan.name == name:
+                return plan
+        raise KeyError(name)
