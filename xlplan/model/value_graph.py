@@ -45,6 +45,7 @@ class Member:
     exit_child_if_gated : (n_exit, 2), likewise for gated exits
     scale : positive; costs, offset and weights above are the true ones times ``scale``
         (the same multipliers then serve all members of a family)
+    patch_value : (n_patch,), this member's values of the matrix entries ``Family.patch``
     value_lower, value_upper : valid bounds of the node's value in its state and capacity box;
         ``-inf`` lets the engine compute the lower one
     """
@@ -60,12 +61,16 @@ class Member:
     exit_child: IntArray
     exit_child_if_gated: IntArray
     scale: float
+    patch_value: FloatArray
     value_lower: float
     value_upper: float
 
 
 class Family:
     """One constraint matrix and its members. Subclasses must be picklable.
+
+    A few matrix entries may differ between members (a load's share of its section, the availability
+    of a plant that can be bought): ``patch`` holds their positions in ``program.value``.
 
     Attributes
     ----------
@@ -77,6 +82,7 @@ class Family:
         (it still reaches the children)
     out_columns : (n_exit, n_state), columns of the state at each exit
     exit_gate : one tuple of capacity positions per exit, () where not gated
+    patch : (n_patch,), positions in ``program.value`` that vary by member; mostly empty
     is_expanded : True if the cost of following a plan expands the exits that lead to this family
         over all of them (outage events: cheap), False if it samples them
     """
@@ -87,6 +93,7 @@ class Family:
     capacity_columns: IntArray
     out_columns: IntArray
     exit_gate: tuple[tuple[int, ...], ...]
+    patch: IntArray
     is_expanded: bool
 
     def member(self, i_member: int) -> Member:

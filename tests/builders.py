@@ -1,0 +1,1086 @@
+"""Studies for tests, made directly as records: no workbook takes part.
+
+``small_study`` is easy to reason about by hand. ``random_study`` draws small radial studies whose
+whole scenario tree stays tiny, with failures so frequent that second failures matter; together a
+few dozen seeds use every feature of the model. ``feature_names`` says which ones a study uses.
+
+The ``make_*`` functions make one record each from defaults that do nothing special.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import fields, replace
+from typing import ClassVar
+
+import numpy as np
+
+from xlplan.base.rng import stream
+from xlplan.base.units import HOURS_PER_YEAR
+from xlplan.study.study import (
+    Bus,
+    CustomerClass,
+    Device,
+    Generator,
+    Line,
+    Load,
+    LoadControl,
+    Measure,
+    NeighbourSupply,
+    OutageClass,
+    Profiles,
+    RateBasis,
+    RepairSpread,
+    Settings,
+    Storage,
+    Study,
+    Technology,
+    Window,
+)
+
+FEATURES = (
+    "storage",
+    "storage curve",
+    "existing storage",
+    "storage steps",
+    "storage site cost",
+    "longest hours",
+    "start charge by window",
+    "generator",
+    "existing generator",
+    "ramp",
+    "start delay",
+    "start failure",
+    "tank",
+    "refill",
+    "outage only",
+    "generator steps",
+    "generator site cost",
+    "solar",
+    "wind",
+    "grant",
+    "budget",
+    "demand charge",
+    "substation limit",
+    "first-moment cost",
+    "bus load control",
+    "remote disconnection",
+    "forming storage",
+    "forming generator",
+    "following unit",
+    "island headroom",
+    "boost",
+    "sale",
+    "loss allowance",
+    "several windows",
+    "load multiplier",
+    "price profile",
+    "load profile",
+    "tie",
+    "neighbour supply",
+    "neighbour supply sharing the bulk supply",
+    "supply profile",
+    "bulk supply failure",
+    "generator failure",
+    "storage failure",
+    "three-point repair",
+    "weather exposure",
+    "failure profile",
+    "failure multiplier",
+    "repair multiplier",
+    "all-year rates",
+    "capacitor",
+    "line rating",
+    "tight voltage",
+    "reactive load",
+    "breaker",
+    "recloser",
+    "fuse",
+    "switch",
+    "bare line end",
+    "reversed line",
+    "isolation",
+    "hardening",
+    "exclusive hardening",
+    "stored-energy price",
+    "default stored-energy price",
+    "repair outlasting the window",
+    "repair cost",
+    "no discount",
+)
+"""What a study can use; every one is used by some seed below 30 (tests/test_builders.py)."""
+
+ALWAYS_DRAWN = frozenset({"breaker", "repair outlasting the window"})
+"""Present in every random study: the source's breaker; failures strike in the last period too."""
+
+MAX_TREE_NODES = 450
+"""Periods in the whole scenario tree of a random study, by an estimate that merges nothing."""
+
+
+def make_settings(**changes: object) -> Settings:
+    """Settings of a flat, simple study: hourly periods, wide limits, no demand charge, no sale."""
+    plain: dict[str, object] = {
+        "study_name": "test",
+        "prepared_by": "",
+        "currency": "EUR",
+        "price_year": None,
+        "source_bus": "S",
+        "base_kv": 10.0,
+        "source_voltage_pu": 1.0,
+        "substation_limit_kva": 10_000.0,
+        "length_unit": "km",
+        "period_h": 1.0,
+        "vmin_pu": 0.9,
+        "vmax_pu": 1.1,
+        "vmin_event_pu": 0.85,
+        "vmax_event_pu": 1.1,
+        "loss_allowance_frac": 0.0,
+        "real_discount_rate_frac": 0.05,
+        "capital_budget": None,
+        "energy_price_per_kwh": 0.1,
+        "export_price_per_kwh": None,
+        "demand_charge_per_kw_year": 0.0,
+        "stored_energy_price_per_kwh": None,
+        "surplus_cost_per_kwh": 0.001,
+        "rate_basis": RateBasis.FAIR_WEATHER,
+        "bulk_supply_outage_class": None,
+        "repair_spread": RepairSpread.NONE,
+        "load_control": LoadControl.SECTION,
+        "island_ratio": 1.0,
+        "island_headroom_frac": 0.0,
+        "measured_peak_kw": None,
+        "history_saifi": None,
+        "history_saidi_h": None,
+        "gap_target_frac": 0.01,
+        "time_limit_h": 0.25,
+        "samples": 100,
+        "random_seed": 1,
+        "risk_weight_frac": 0.0,
+        "risk_tail_frac": 0.05,
+    }
+    return Settings(**{**plain, **changes})  # type: ignore[arg-type]
+
+
+def make_bus(bus: str, capacitor_kvar: float = 0.0) -> Bus:
+    """A bus, without capacitor unless given."""
+    return Bus(bus=bus, name=bus, capacitor_kvar=capacitor_kvar, x=None, y=None)
+
+
+def make_load(load: str, bus: str, peak_kw: float = 100.0, **changes: object) -> Load:
+    """A flat load at unity power factor with ten customers of class ``homes``."""
+    plain: dict[str, object] = {
+        "customer_class": "homes",
+        "power_factor": 1.0,
+        "customers": 10.0,
+        "load_profile": None,
+        "remote_disconnect_frac": 0.0,
+    }
+    return Load(load=load, bus=bus, peak_kw=peak_kw, **{**plain, **changes})  # type: ignore[arg-type]
+
+
+def make_line(line: str, from_bus: str, to_bus: str, **changes: object) -> Line:
+    """A closed line of 1 km and 0.1 + j0.1 ohm, breaker at its start, class ``overhead``."""
+    plain: dict[str, object] = {
+        "length": 1.0,
+        "r_ohm": 0.1,
+        "x_ohm": 0.1,
+        "rating_kva": math.inf,
+        "boost_frac": 0.0,
+        "from_device": Device.BREAKER,
+        "to_device": Device.NONE,
+        "normally_open": False,
+        "outage_class": "overhead",
+    }
+    return Line(line=line, from_bus=from_bus, to_bus=to_bus, **{**plain, **changes})  # type: ignore[arg-type]
+
+
+def make_supply(
+    supply: str, bus: str, spare_kw: float = 100.0, **changes: object
+) -> NeighbourSupply:
+    """A neighbour supply of its own bulk supply."""
+    plain: dict[str, object] = {"spare_profile": None, "shares_bulk_supply": False}
+    return NeighbourSupply(supply=supply, bus=bus, spare_kw=spare_kw, **{**plain, **changes})  # type: ignore[arg-type]
+
+
+def make_generator(generator: str, bus: str, **changes: object) -> Generator:
+    """A dispatchable grid-forming candidate of up to 100 kW, without ramp limit, delay or tank."""
+    plain: dict[str, object] = {
+        "technology": Technology.DISPATCHABLE,
+        "profile": None,
+        "existing_kw": 0.0,
+        "max_new_kw": 100.0,
+        "step_kw": None,
+        "capital_cost_per_kw": 500.0,
+        "capital_site_cost": 0.0,
+        "grant_frac": 0.0,
+        "fixed_om_per_kw": 5.0,
+        "life_years": 20.0,
+        "running_cost_per_kwh": 0.3,
+        "is_outage_only": False,
+        "ramp_frac_per_period": None,
+        "start_delay_h": 0.0,
+        "start_failure_frac": 0.0,
+        "tank_h": None,
+        "refill_delay_h": 0.0,
+        "refill_frac_per_h": None,
+        "is_grid_forming": True,
+        "outage_class": None,
+    }
+    return Generator(generator=generator, bus=bus, **{**plain, **changes})  # type: ignore[arg-type]
+
+
+def curve_of_efficiency(round_trip_frac: float) -> tuple[tuple[float, float], ...]:
+    """Two straight edges: the square root of the round-trip efficiency each way."""
+    one_way = math.sqrt(round_trip_frac)
+    return ((-one_way, -1.0), (0.0, 0.0), (1.0 / one_way, 1.0))
+
+
+def make_storage(storage: str, bus: str, **changes: object) -> Storage:
+    """A grid-forming candidate of up to 100 kW and 200 kWh, 81 % round trip, half full."""
+    plain: dict[str, object] = {
+        "existing_kw": 0.0,
+        "existing_kwh": 0.0,
+        "max_new_kw": 100.0,
+        "max_new_kwh": 200.0,
+        "step_kw": None,
+        "longest_h": None,
+        "capital_cost_per_kw": 200.0,
+        "capital_cost_per_kwh": 300.0,
+        "capital_site_cost": 0.0,
+        "grant_frac": 0.0,
+        "fixed_om_per_kw": 5.0,
+        "life_years": 15.0,
+        "curve": curve_of_efficiency(0.81),
+        "start_soc_frac": 0.5,
+        "min_soc_frac": 0.1,
+        "is_grid_forming": True,
+        "outage_class": None,
+    }
+    return Storage(storage=storage, bus=bus, **{**plain, **changes})  # type: ignore[arg-type]
+
+
+def make_outage_class(
+    outage_class: str, failures_per_year: float, **changes: object
+) -> OutageClass:
+    """Two hours of repair, no isolation time, not exposed to weather, no repair cost."""
+    plain: dict[str, object] = {
+        "failures_per_length_year": 0.0,
+        "repair_h": 2.0,
+        "switching_h": 0.0,
+        "is_weather_exposed": False,
+        "repair_cost_per_failure": 0.0,
+        "is_included": True,
+        "figure_from": "invented",
+    }
+    return OutageClass(
+        outage_class=outage_class,
+        failures_per_year=failures_per_year,
+        **{**plain, **changes},  # type: ignore[arg-type]
+    )
+
+
+def make_measure(measure: str, lines: tuple[str, ...], **changes: object) -> Measure:
+    """A measure of 10,000 over 30 years that avoids half the failures of its lines."""
+    plain: dict[str, object] = {
+        "capital_cost": 10_000.0,
+        "grant_frac": 0.0,
+        "life_years": 30.0,
+        "fixed_om": 0.0,
+        "failures_avoided_frac": 0.5,
+    }
+    return Measure(measure=measure, lines=lines, **{**plain, **changes})  # type: ignore[arg-type]
+
+
+def make_customer_class(customer_class: str = "homes", **changes: object) -> CustomerClass:
+    """Costs 2 per kWh however long it lasts, nothing in the first moment."""
+    plain: dict[str, object] = {
+        "is_critical": False,
+        "cost_0h_per_kw": 0.0,
+        "cost_1h_per_kw": 2.0,
+        "cost_4h_per_kw": 8.0,
+        "cost_8h_per_kw": 16.0,
+        "cost_after_8h_per_kwh": 2.0,
+    }
+    return CustomerClass(customer_class=customer_class, **{**plain, **changes})  # type: ignore[arg-type]
+
+
+def make_window(window: str = "day", n_period: int = 4, **changes: object) -> Window:
+    """A window from the first profile row, a hundred times a year, counting for demand."""
+    plain: dict[str, object] = {
+        "occurrences_per_year": 100.0,
+        "start_row": 0,
+        "load_multiplier": 1.0,
+        "price_profile": None,
+        "failure_multiplier": 1.0,
+        "repair_multiplier": 1.0,
+        "failure_profile": None,
+        "start_soc_frac": None,
+        "counts_for_demand": True,
+        "is_storm": False,
+    }
+    return Window(window=window, n_period=n_period, **{**plain, **changes})  # type: ignore[arg-type]
+
+
+def make_profiles(n_row: int, **columns: object) -> Profiles:
+    """Profiles of ``n_row`` rows, one column per keyword; times are row numbers."""
+    values = {name: np.asarray(column, dtype=float) for name, column in columns.items()}
+    return Profiles(times=tuple(range(n_row)), values=values)
+
+
+def change_study(study: Study, **changes: object) -> Study:
+    """The study with other fields; a key of ``Settings`` changes that setting."""
+    of_study = {field.name for field in fields(Study)}
+    direct = {key: value for key, value in changes.items() if key in of_study}
+    settings = {key: value for key, value in changes.items() if key not in of_study}
+    study = replace(study, **direct)  # type: ignore[arg-type]
+    return replace(study, settings=replace(study.settings, **settings))  # type: ignore[arg-type]
+
+
+def small_study(**changes: object) -> Study:
+    """Three buses in a row, S - A - B, 100 kW flat at A and at B, nothing to buy.
+
+    Line ``SA`` starts with a breaker and ``AB`` with a fuse, so that a fault on ``AB`` leaves A
+    served. Lines fail once a year each, for 2 hours without isolation time. One window ``day`` of
+    4 hours, 100 times a year; energy at 0.1, interruptions at 2 per kWh. Changes are those of
+    ``change_study``: fields of ``Study``, or settings.
+
+    >>> small_study(energy_price_per_kwh=0.2).settings.energy_price_per_kwh
+    0.2
+    """
+    study = Study(
+        settings=make_settings(),
+        buses=(make_bus("S"), make_bus("A"), make_bus("B")),
+        loads=(make_load("LA", "A"), make_load("LB", "B")),
+        lines=(make_line("SA", "S", "A"), make_line("AB", "A", "B", from_device=Device.FUSE)),
+        supplies=(),
+        generators=(),
+        storage=(),
+        outage_classes=(make_outage_class("overhead", 1.0),),
+        measures=(),
+        customer_classes=(make_customer_class(),),
+        profiles=make_profiles(4),
+        windows=(make_window(),),
+    )
+    return change_study(study, **changes)
+
+
+def random_study(seed: int, n_period: int | None = None, features: set[str] | None = None) -> Study:
+    """A small valid radial study.
+
+    Parameters
+    ----------
+    seed : int; the same seed, period count and features give the same study
+    n_period : int or None, periods of every window; drawn from 3 to 6 if None (fewer where the
+        scenario tree would grow too large)
+    features : set of names of ``FEATURES`` or None; exactly these are used (with
+        ``ALWAYS_DRAWN``, and what they need); each is drawn by chance if None
+
+    Returns
+    -------
+    Study with 2 to 5 buses, 30- or 60-minute periods, chances of failure of 5 to 40 % a period
+    """
+    return _Draw(seed, n_period, features).study()
+
+
+class _Draw:
+    """One random study in the making: every method draws one kind of record."""
+
+    def __init__(self, seed: int, n_period: int | None, features: set[str] | None) -> None:
+        self.rng = stream(seed, "random study")
+        if features is not None and not features <= set(FEATURES):
+            raise ValueError(f"unknown features: {sorted(features - set(FEATURES))}")
+        drawn = {name for name in FEATURES if self.rng.random() < 0.45}
+        self.asked_periods = n_period
+        self.period_h = float(self.rng.choice([0.5, 1.0]))
+        if features is None:
+            drawn |= {self.pick(["storage", "generator", "hardening"])}  # something to decide
+            self.features = self._without_orphans(drawn)
+        else:
+            self.features = self._with_needs(set(features))
+
+    def _without_orphans(self, drawn: set[str]) -> set[str]:
+        """Drops the features of parts that were not drawn."""
+        for part, users in self.NEEDS.items():
+            if part not in drawn:
+                drawn = drawn - users
+        return drawn
+
+    def _with_needs(self, asked: set[str]) -> set[str]:
+        """Adds the parts that the features asked for belong to."""
+        for part, users in reversed(self.NEEDS.items()):
+            if asked & users:
+                asked = asked | {part}
+        return asked
+
+    NEEDS: ClassVar[dict[str, set[str]]] = {
+        "storage": {
+            "storage curve",
+            "existing storage",
+            "storage steps",
+            "storage site cost",
+            "longest hours",
+            "start charge by window",
+            "forming storage",
+            "storage failure",
+            "stored-energy price",
+        },
+        "generator": {
+            "existing generator",
+            "ramp",
+            "start delay",
+            "start failure",
+            "tank",
+            "refill",
+            "outage only",
+            "generator steps",
+            "generator site cost",
+            "forming generator",
+            "generator failure",
+        },
+        "existing storage": {"storage failure"},
+        "existing generator": {"generator failure"},
+        "tank": {"refill"},
+        "hardening": {"exclusive hardening"},
+        "neighbour supply": {"supply profile"},
+    }
+
+    def has(self, feature: str) -> bool:
+        return feature in self.features
+
+    def uniform(self, low: float, high: float, digits: int = 3) -> float:
+        """A short decimal number, so that failing cases can be read."""
+        return round(float(self.rng.uniform(low, high)), digits)
+
+    def chance(self, share: float) -> bool:
+        return bool(self.rng.random() < share)
+
+    def pick(self, items: list[str]) -> str:
+        return items[int(self.rng.integers(len(items)))]
+
+    def study(self) -> Study:
+        """The records in the order in which they depend on one another."""
+        self.buses = self._buses()
+        self.away = [bus.bus for bus in self.buses[1:]]
+        self.loads = self._loads()
+        self.storage = self._storage()
+        self.generators = self._generators()
+        self.lines = self._lines()
+        self.supplies = self._supplies()
+        self.measures = self._measures()
+        self.bulk = "bulk" if self.has("bulk supply failure") else None
+        self._keep_failures_few()
+        self.windows = self._windows()
+        self.profiles = self._profiles()
+        classes = self._outage_classes()
+        return Study(
+            settings=self._settings(),
+            buses=self.buses,
+            loads=self.loads,
+            lines=self.lines,
+            supplies=self.supplies,
+            generators=self.generators,
+            storage=self.storage,
+            outage_classes=classes,
+            measures=self.measures,
+            customer_classes=self._customer_classes(),
+            profiles=self.profiles,
+            windows=self.windows,
+        )
+
+    def _buses(self) -> tuple[Bus, ...]:
+        least = 3 if self.features & {"tie", "exclusive hardening", "remote disconnection"} else 2
+        n_bus = int(self.rng.integers(least, 6))
+        ids = ["S", *[f"B{i}" for i in range(1, n_bus)]]
+        chosen = int(self.rng.integers(1, n_bus)) if self.has("capacitor") else -1
+        return tuple(
+            make_bus(bus, self.uniform(20, 80, 0) if i == chosen else 0.0)
+            for i, bus in enumerate(ids)
+        )
+
+    def _loads(self) -> tuple[Load, ...]:
+        """A load at every bus away from the source, now and then two at one bus."""
+        buses = list(self.away)
+        if self.chance(0.3):
+            buses.append(self.pick(self.away))
+        loads = []
+        for i, bus in enumerate(buses):
+            load = make_load(
+                f"L{i + 1}",
+                bus,
+                peak_kw=self.uniform(50, 250, 0),
+                customer_class="shops" if i % 2 else "homes",
+                customers=float(self.rng.integers(5, 60)),
+                power_factor=self.uniform(0.88, 0.98) if self.has("reactive load") else 1.0,
+                load_profile="demand" if self.has("load profile") and i % 3 != 2 else None,
+            )
+            if self.has("remote disconnection") and self.chance(0.7 if i else 1.0):
+                load = replace(load, remote_disconnect_frac=self.uniform(0.3, 1.0, 1))
+            loads.append(load)
+        return tuple(loads)
+
+    def _storage(self) -> tuple[Storage, ...]:
+        if not self.has("storage"):
+            return ()
+        units = []
+        for i in range(1 + self.chance(0.25)):
+            floor = self.uniform(0.0, 0.2, 2)
+            exists = self.has("existing storage") and i == 0
+            can_grow = not exists or self.chance(0.6)
+            size = self.uniform(60, 250, 0)
+            unit = make_storage(
+                f"ES{i + 1}",
+                self.pick(self.away),
+                existing_kw=self.uniform(30, 80, 0) if exists else 0.0,
+                existing_kwh=self.uniform(40, 160, 0) if exists else 0.0,
+                max_new_kw=size if can_grow else 0.0,
+                max_new_kwh=round(size * self.uniform(1, 3), 0) if can_grow else 0.0,
+                capital_cost_per_kw=self.uniform(50, 300, 0),
+                capital_cost_per_kwh=self.uniform(50, 400, 0),
+                fixed_om_per_kw=self.uniform(0, 8, 1),
+                life_years=float(self.rng.integers(8, 20)),
+                curve=curve_of_efficiency(self.uniform(0.75, 0.95, 2)),
+                min_soc_frac=floor,
+                start_soc_frac=round(floor + self.uniform(0.0, 0.7, 2), 2),
+                is_grid_forming=self.has("forming storage") and i == 0,
+                grant_frac=self.uniform(0.1, 0.4, 2) if self.has("grant") else 0.0,
+            )
+            if self.has("storage curve") and i == 0:
+                unit = replace(
+                    unit,
+                    curve=((-0.9, -1.0), (-0.45, -0.48), (0.0, 0.0), (0.5, 0.47), (1.05, 0.9)),
+                )
+            if can_grow and self.has("storage steps"):
+                unit = replace(unit, step_kw=round(size / 3, 0))
+            if can_grow and self.has("storage site cost"):
+                unit = replace(unit, capital_site_cost=self.uniform(2000, 20_000, 0))
+            if can_grow and self.has("longest hours"):
+                unit = replace(unit, longest_h=self.uniform(0.5, 2.5, 1))
+            if exists and self.has("storage failure"):
+                unit = replace(unit, outage_class="unit")
+            units.append(unit)
+        return tuple(units)
+
+    def _generators(self) -> tuple[Generator, ...]:
+        units = []
+        if self.has("generator"):
+            units.append(self._dispatchable())
+        for technology in (Technology.SOLAR, Technology.WIND):
+            if self.has(str(technology)):
+                units.append(
+                    make_generator(
+                        "PV" if technology is Technology.SOLAR else "WT",
+                        self.pick(self.away),
+                        technology=technology,
+                        profile=str(technology),
+                        existing_kw=self.uniform(20, 80, 0) if self.chance(0.4) else 0.0,
+                        max_new_kw=self.uniform(50, 150, 0),
+                        capital_cost_per_kw=self.uniform(100, 600, 0),
+                        fixed_om_per_kw=self.uniform(0, 5, 1),
+                        running_cost_per_kwh=0.0,
+                        is_grid_forming=False,
+                    )
+                )
+        return tuple(units)
+
+    def _dispatchable(self) -> Generator:
+        exists = self.has("existing generator")
+        can_grow = not exists or self.chance(0.6)
+        size = self.uniform(60, 250, 0)
+        unit = make_generator(
+            "G1",
+            self.pick(self.away),
+            existing_kw=self.uniform(40, 120, 0) if exists else 0.0,
+            max_new_kw=size if can_grow else 0.0,
+            capital_cost_per_kw=self.uniform(100, 500, 0),
+            fixed_om_per_kw=self.uniform(0, 8, 1),
+            life_years=float(self.rng.integers(10, 25)),
+            running_cost_per_kwh=self.uniform(0.08, 0.4),
+            is_outage_only=self.has("outage only"),
+            is_grid_forming=self.has("forming generator"),
+            grant_frac=self.uniform(0.1, 0.3, 2) if self.has("grant") else 0.0,
+        )
+        if self.has("ramp"):
+            unit = replace(unit, ramp_frac_per_period=self.uniform(0.25, 0.7, 2))
+        if self.has("start delay"):
+            unit = replace(unit, start_delay_h=self.period_h)
+        if self.has("start failure"):
+            unit = replace(unit, start_failure_frac=self.uniform(0.05, 0.3, 2))
+        if self.has("tank"):
+            unit = replace(unit, tank_h=round(self.period_h * self.uniform(0.8, 2.0, 1), 2))
+        if self.has("refill"):
+            unit = replace(
+                unit,
+                refill_frac_per_h=round(self.uniform(0.1, 0.5, 2) / self.period_h, 3),
+                refill_delay_h=self.period_h * int(self.rng.integers(0, 3)),
+            )
+        if can_grow and self.has("generator steps"):
+            unit = replace(unit, step_kw=round(size / 3, 0))
+        if can_grow and self.has("generator site cost"):
+            unit = replace(unit, capital_site_cost=self.uniform(2000, 20_000, 0))
+        if exists and self.has("generator failure"):
+            unit = replace(unit, outage_class="unit")
+        return unit
+
+    def _lines(self) -> tuple[Line, ...]:
+        """A random tree from the source, each line from the nearer bus unless reversed; one tie."""
+        lines = []
+        ids = [bus.bus for bus in self.buses]
+        total_kva = sum(load.peak_kw / load.power_factor for load in self.loads)
+        ohm = 8.0 if self.has("tight voltage") else 1.0
+        for i in range(1, len(ids)):
+            parent = ids[int(self.rng.integers(max(0, i - 2), i))]
+            line = make_line(
+                f"{parent}-{ids[i]}",
+                parent,
+                ids[i],
+                length=self.uniform(0.5, 3.0, 1),
+                r_ohm=round(ohm * self.uniform(0.3, 1.0), 3),
+                x_ohm=round(ohm * self.uniform(0.3, 1.0), 3),
+                from_device=Device.BREAKER if parent == "S" else self._device(),
+                to_device=self._far_device(),
+            )
+            if self.has("line rating") and self.chance(0.5 if i > 1 else 1.0):
+                line = replace(line, rating_kva=round(total_kva * self.uniform(0.6, 1.2), 0))
+            if self.has("boost") and i == len(ids) - 1:
+                line = replace(line, boost_frac=0.025)
+            elif self.has("reversed line") and (i == 1 or self.chance(0.3)):
+                line = replace(
+                    line,
+                    from_bus=line.to_bus,
+                    to_bus=line.from_bus,
+                    from_device=line.to_device,
+                    to_device=line.from_device,
+                )
+            lines.append(line)
+        if self.has("tie"):
+            lines.append(self._tie(ids, lines))
+        return tuple(lines)
+
+    def _device(self) -> Device:
+        """What the near end of a line carries: one of the kinds drawn for this study."""
+        kinds = [Device.NONE] if self.has("bare line end") or self.chance(0.3) else []
+        for kind in (Device.BREAKER, Device.RECLOSER, Device.FUSE, Device.SWITCH):
+            if self.has(str(kind)):
+                kinds.append(kind)
+        return Device(self.pick([str(kind) for kind in kinds or [Device.NONE]]))
+
+    def _far_device(self) -> Device:
+        return Device.SWITCH if self.has("switch") and self.chance(0.4) else Device.NONE
+
+    def _tie(self, ids: list[str], lines: list[Line]) -> Line:
+        """A normally open line between two buses that no line joins directly."""
+        joined = {frozenset((line.from_bus, line.to_bus)) for line in lines}
+        pairs = [
+            (a, b)
+            for i, a in enumerate(ids)
+            for b in ids[i + 1 :]
+            if frozenset((a, b)) not in joined
+        ] or [(ids[0], ids[-1])]
+        from_bus, to_bus = pairs[int(self.rng.integers(len(pairs)))]
+        ends = Device.NONE if self.chance(0.2) else Device.SWITCH
+        return make_line(
+            "T1",
+            from_bus,
+            to_bus,
+            r_ohm=self.uniform(0.3, 1.0),
+            x_ohm=self.uniform(0.3, 1.0),
+            rating_kva=self.uniform(60, 250, 0),
+            from_device=ends,
+            to_device=ends,
+            normally_open=True,
+        )
+
+    def _supplies(self) -> tuple[NeighbourSupply, ...]:
+        supplies = []
+        if self.has("neighbour supply"):
+            supplies.append(
+                make_supply(
+                    "N1",
+                    self.pick(self.away),
+                    spare_kw=self.uniform(50, 200, 0),
+                    spare_profile="spare" if self.has("supply profile") else None,
+                )
+            )
+        if self.has("neighbour supply sharing the bulk supply"):
+            supplies.append(
+                make_supply(
+                    "N2",
+                    self.pick(self.away),
+                    spare_kw=self.uniform(50, 200, 0),
+                    shares_bulk_supply=True,
+                )
+            )
+        return tuple(supplies)
+
+    def _measures(self) -> tuple[Measure, ...]:
+        if not self.has("hardening"):
+            return ()
+        closed = [line.line for line in self.lines if not line.normally_open]
+        first = self.pick(closed)
+        measures = [
+            make_measure(
+                "M1",
+                (first,),
+                capital_cost=self.uniform(5_000, 60_000, 0),
+                failures_avoided_frac=self.uniform(0.3, 0.7, 1),
+                grant_frac=self.uniform(0.1, 0.3, 2) if self.has("grant") else 0.0,
+                fixed_om=self.uniform(0, 200, 0),
+            )
+        ]
+        if self.has("exclusive hardening"):
+            others = [line for line in closed if line != first]
+            lines = (first, self.pick(others)) if others and self.chance(0.5) else (first,)
+            measures.append(
+                make_measure(
+                    "M2",
+                    lines,
+                    capital_cost=self.uniform(20_000, 120_000, 0),
+                    failures_avoided_frac=self.uniform(0.7, 1.0, 1),
+                )
+            )
+        return tuple(measures)
+
+    def _keep_failures_few(self) -> None:
+        """Takes the outage class off lines, and periods off windows, until the tree is tiny.
+
+        Hardened lines keep their class. The estimate counts every component as a scenario.
+        """
+        hardened = {line for measure in self.measures for line in measure.lines}
+        n_window = 2 if self.has("several windows") else 1
+        longest = 4 if n_window == 2 else 6
+        n_period = self.asked_periods or int(self.rng.integers(3, longest + 1))
+        repair_periods = int(self.rng.integers(1, 4))
+        while True:
+            failing = [
+                line.line for line in self.lines if line.outage_class and not line.normally_open
+            ]
+            spare = [line for line in failing if line not in hardened]
+            n_scenario = len(failing) + len(hardened) * len(self.measures)
+            n_scenario += sum(unit.outage_class is not None for unit in self.storage)
+            n_scenario += sum(unit.outage_class is not None for unit in self.generators)
+            n_scenario += self.bulk is not None
+            n_scenario *= 1 + sum(unit.start_failure_frac > 0 for unit in self.generators)
+            if self.has("three-point repair"):
+                repairs = [math.ceil(0.5 * repair_periods), repair_periods, 2 * repair_periods]
+            else:
+                repairs = [repair_periods]
+            n_node = n_window * tree_nodes(n_period, n_scenario, repairs)
+            if n_node <= MAX_TREE_NODES:
+                break
+            if n_period > 3 and self.asked_periods is None:
+                n_period -= 1
+            elif len(failing) > 1 and spare:
+                self._without_failures(spare[-1])
+            elif repair_periods > 1:
+                repair_periods -= 1
+            else:
+                break
+        self.n_period, self.n_window, self.repair_periods = n_period, n_window, repair_periods
+
+    def _without_failures(self, name: str) -> None:
+        self.lines = tuple(
+            replace(line, outage_class=None) if line.line == name else line for line in self.lines
+        )
+
+    def _windows(self) -> tuple[Window, ...]:
+        windows = []
+        for i in range(self.n_window):
+            last = i == self.n_window - 1
+            window = make_window(
+                "day" if i == 0 else "storm",
+                self.n_period,
+                start_row=1 + i * self.n_period,
+                occurrences_per_year=self.uniform(5, 60, 0),
+                price_profile="price" if self.has("price profile") else None,
+                failure_profile="weather" if self.has("failure profile") else None,
+                counts_for_demand=i == 0,
+                is_storm=i > 0,
+            )
+            if last and self.has("load multiplier"):
+                window = replace(window, load_multiplier=self.uniform(0.7, 1.3, 2))
+            if last and self.has("failure multiplier"):
+                window = replace(window, failure_multiplier=self.uniform(1.5, 3.0, 1))
+            if last and self.has("repair multiplier"):
+                window = replace(window, repair_multiplier=self.uniform(1.2, 2.0, 1))
+            if last and self.has("start charge by window"):
+                floor = max(unit.min_soc_frac for unit in self.storage)
+                window = replace(
+                    window, start_soc_frac=round(floor + self.uniform(0, 1 - floor, 2), 2)
+                )
+            windows.append(window)
+        return tuple(windows)
+
+    def _profiles(self) -> Profiles:
+        n_row = 2 + self.n_window * self.n_period
+        draws = {
+            "demand": (0.4, 1.0),
+            "solar": (0.0, 0.9),
+            "wind": (0.0, 1.0),
+            "price": (0.5, 2.0),
+            "spare": (0.2, 1.0),
+            "weather": (0.3, 2.0),
+        }
+        return make_profiles(
+            n_row,
+            **{
+                name: np.round(self.rng.uniform(low, high, n_row), 2)
+                for name, (low, high) in draws.items()
+            },
+        )
+
+    def _exposed(self) -> bool:
+        """Weather matters only to exposed classes: the features of exposure imply it."""
+        of_exposure = {
+            "weather exposure",
+            "failure profile",
+            "failure multiplier",
+            "repair multiplier",
+        }
+        return bool(self.features & of_exposure)
+
+    def _outage_classes(self) -> tuple[OutageClass, ...]:
+        """Rates that give a chance of failure of 5 to 40 % a period where it is highest on average."""
+        n_line = sum(bool(line.outage_class) and not line.normally_open for line in self.lines)
+        n_unit = sum(unit.outage_class is not None for unit in (*self.storage, *self.generators))
+        n_component = n_line + n_unit + (self.bulk is not None)
+        per_period = -math.log(1.0 - self.uniform(0.05, 0.4))
+        if self._exposed():
+            per_period /= max(window.failure_multiplier for window in self.windows)
+        rate = per_period / max(n_component, 1) * HOURS_PER_YEAR / self.period_h
+        isolation_h = self.period_h if self.has("isolation") else 0.0
+        mean_length = float(np.mean([line.length for line in self.lines]))
+        by_length = self.chance(0.5)
+        cost = self.uniform(200, 2000, 0) if self.has("repair cost") else 0.0
+        line_rate = rate * self._all_year_factor(self._exposed())
+        other_rate = rate * self._all_year_factor(False)
+        repair_h = self.period_h * self.repair_periods
+        classes = [
+            make_outage_class(
+                "overhead",
+                0.0 if by_length else round(line_rate, 2),
+                failures_per_length_year=round(line_rate / mean_length, 2) if by_length else 0.0,
+                repair_h=repair_h,
+                switching_h=isolation_h,
+                is_weather_exposed=self._exposed(),
+                repair_cost_per_failure=cost,
+            )
+        ]
+        if n_unit:
+            classes.append(make_outage_class("unit", round(other_rate, 2), repair_h=self.period_h))
+        if self.bulk:
+            classes.append(
+                make_outage_class(
+                    "bulk", round(other_rate, 2), repair_h=repair_h, switching_h=isolation_h
+                )
+            )
+        return tuple(classes)
+
+    def _all_year_factor(self, is_exposed: bool) -> float:
+        """What the rate is divided by under the all-year basis (model.md section 2)."""
+        if not self.has("all-year rates"):
+            return 1.0
+        total = 0.0
+        for window in self.windows:
+            multiplier = window.failure_multiplier if is_exposed else 1.0
+            total += window.occurrences_per_year * multiplier * window.n_period
+        return total * self.period_h / HOURS_PER_YEAR
+
+    def _customer_classes(self) -> tuple[CustomerClass, ...]:
+        classes = []
+        for name, low, high in (("homes", 1.0, 4.0), ("shops", 3.0, 20.0)):
+            at_once = self.uniform(0.5, 3.0, 1) if self.has("first-moment cost") else 0.0
+            first = round(at_once + self.uniform(low, high, 1), 1)
+            fourth = round(first + 3 * self.uniform(low, high, 1), 1)
+            classes.append(
+                make_customer_class(
+                    name,
+                    is_critical=name == "shops",
+                    cost_0h_per_kw=at_once,
+                    cost_1h_per_kw=first,
+                    cost_4h_per_kw=fourth,
+                    cost_8h_per_kw=round(fourth + 4 * self.uniform(low, high, 1), 1),
+                    cost_after_8h_per_kwh=self.uniform(low, high, 1),
+                )
+            )
+        return tuple(classes)
+
+    def _settings(self) -> Settings:
+        peak_kva = sum(load.peak_kw / load.power_factor for load in self.loads)
+        price = self.uniform(0.1, 0.25)
+        limit = round(peak_kva * self.uniform(0.8, 1.1), 0)
+        is_tight = self.has("tight voltage")
+        return make_settings(
+            period_h=self.period_h,
+            energy_price_per_kwh=price,
+            # Price profiles are at least 0.5, so the sale price stays below every purchase price.
+            export_price_per_kwh=round(price * 0.4, 4) if self.has("sale") else None,
+            demand_charge_per_kw_year=(
+                self.uniform(20, 120, 0) if self.has("demand charge") else 0.0
+            ),
+            substation_limit_kva=limit if self.has("substation limit") else 20.0 * peak_kva,
+            vmin_pu=0.95 if is_tight else 0.9,
+            vmax_pu=1.05 if is_tight else 1.1,
+            vmin_event_pu=0.93 if is_tight else 0.88,
+            vmax_event_pu=1.06 if is_tight else 1.1,
+            loss_allowance_frac=0.03 if self.has("loss allowance") else 0.0,
+            real_discount_rate_frac=0.0 if self.has("no discount") else self.uniform(0.02, 0.09),
+            capital_budget=self.uniform(10_000, 80_000, 0) if self.has("budget") else None,
+            stored_energy_price_per_kwh=(
+                self.uniform(0.1, 0.5, 2) if self.has("stored-energy price") else None
+            ),
+            rate_basis=(
+                RateBasis.ALL_YEAR if self.has("all-year rates") else RateBasis.FAIR_WEATHER
+            ),
+            bulk_supply_outage_class=self.bulk,
+            repair_spread=(
+                RepairSpread.THREE_POINT if self.has("three-point repair") else RepairSpread.NONE
+            ),
+            load_control=LoadControl.BUS if self.has("bus load control") else LoadControl.SECTION,
+            island_ratio=self.uniform(0.6, 1.5, 2),
+            island_headroom_frac=0.1 if self.has("island headroom") else 0.0,
+        )
+
+
+def tree_nodes(n_period: int, n_scenario: int, repairs: list[int]) -> int:
+    """Periods in the whole scenario tree if every one of the scenarios may strike in every period.
+
+    ``N(u) = T - u + scenarios * sum_k sum_repairs (repair + N(k + 1 + repair))``.
+
+    >>> tree_nodes(2, 1, [1])  # 2 periods; a failure in each, 1 period long, none after it
+    4
+    """
+    nodes = [0] * (n_period + 1)
+    for u in range(n_period - 1, -1, -1):
+        after = sum(
+            repair + (nodes[k + 1 + repair] if k + 1 + repair < n_period else 0)
+            for k in range(u, n_period)
+            for repair in repairs
+        )
+        nodes[u] = n_period - u + n_scenario * after
+    return nodes[0]
+
+
+def feature_names(study: Study) -> set[str]:
+    """Features of ``FEATURES`` that a study really uses.
+
+    Parameters
+    ----------
+    study : Study
+
+    Returns
+    -------
+    set of names; read off the records, so that a study made any other way can be asked too
+    """
+    used = {name for name, is_used in _unit_features(study).items() if is_used}
+    used |= {name for name, is_used in _network_features(study).items() if is_used}
+    return used | {name for name, is_used in _money_features(study).items() if is_used}
+
+
+def _unit_features(study: Study) -> dict[str, bool]:
+    settings, stores = study.settings, study.storage
+    fuelled = [u for u in study.generators if u.technology is Technology.DISPATCHABLE]
+    followers = [u for u in (*stores, *study.generators) if not u.is_grid_forming]
+    formers = [u for u in (*stores, *study.generators) if u.is_grid_forming]
+    classes = {c.outage_class for c in study.outage_classes if c.is_included}
+    return {
+        "storage": bool(stores),
+        "storage curve": any(len(u.curve) > 3 for u in stores),
+        "existing storage": any(u.existing_kw > 0 and u.existing_kwh > 0 for u in stores),
+        "storage steps": any(u.step_kw and u.max_new_kw for u in stores),
+        "storage site cost": any(u.capital_site_cost and u.max_new_kw for u in stores),
+        "longest hours": any(u.longest_h and u.max_new_kw for u in stores),
+        "start charge by window": bool(stores)
+        and any(w.start_soc_frac is not None for w in study.windows),
+        "generator": bool(fuelled),
+        "existing generator": any(u.existing_kw > 0 for u in fuelled),
+        "ramp": any(u.ramp_frac_per_period is not None for u in fuelled),
+        "start delay": any(u.start_delay_h > 0 for u in fuelled),
+        "start failure": any(u.start_failure_frac > 0 for u in fuelled),
+        "tank": any(u.tank_h is not None for u in fuelled),
+        "refill": any(u.tank_h is not None and u.refill_frac_per_h is not None for u in fuelled),
+        "outage only": any(u.is_outage_only for u in fuelled),
+        "generator steps": any(u.step_kw and u.max_new_kw for u in fuelled),
+        "generator site cost": any(u.capital_site_cost and u.max_new_kw for u in fuelled),
+        "solar": any(u.technology is Technology.SOLAR for u in study.generators),
+        "wind": any(u.technology is Technology.WIND for u in study.generators),
+        "forming storage": any(u.is_grid_forming for u in stores),
+        "forming generator": any(u.is_grid_forming for u in fuelled),
+        "following unit": bool(followers) and bool(formers),
+        "island headroom": settings.island_headroom_frac > 0 and bool(formers),
+        "generator failure": any(u.outage_class in classes and u.existing_kw > 0 for u in fuelled),
+        "storage failure": any(u.outage_class in classes and u.existing_kw > 0 for u in stores),
+        "stored-energy price": bool(stores) and settings.stored_energy_price_per_kwh is not None,
+        "default stored-energy price": bool(stores)
+        and settings.stored_energy_price_per_kwh is None,
+    }
+
+
+def _network_features(study: Study) -> dict[str, bool]:
+    settings, lines, windows = study.settings, study.lines, study.windows
+    classes = {c.outage_class: c for c in study.outage_classes if c.is_included}
+    failing = [x for x in lines if x.outage_class in classes and not x.normally_open]
+    devices = {end for line in lines for end in (line.from_device, line.to_device)}
+    exposed = any(classes[x.outage_class or ""].is_weather_exposed for x in failing)
+    has_failures = bool(failing) or settings.bulk_supply_outage_class in classes
+    shared = [
+        line
+        for line in failing
+        if sum(line.line in measure.lines for measure in study.measures) > 1
+    ]
+    is_hardened = any(x.line in measure.lines for x in failing for measure in study.measures)
+    return {
+        "boost": any(line.boost_frac != 0 for line in lines),
+        "tie": any(line.normally_open for line in lines),
+        "neighbour supply": any(not s.shares_bulk_supply for s in study.supplies),
+        "neighbour supply sharing the bulk supply": any(
+            s.shares_bulk_supply for s in study.supplies
+        ),
+        "supply profile": any(s.spare_profile is not None for s in study.supplies),
+        "bulk supply failure": settings.bulk_supply_outage_class in classes,
+        "three-point repair": settings.repair_spread is RepairSpread.THREE_POINT and has_failures,
+        "weather exposure": exposed,
+        "failure profile": exposed and any(w.failure_profile is not None for w in windows),
+        "failure multiplier": exposed and any(w.failure_multiplier != 1 for w in windows),
+        "repair multiplier": exposed and any(w.repair_multiplier != 1 for w in windows),
+        "all-year rates": settings.rate_basis is RateBasis.ALL_YEAR and has_failures,
+        "capacitor": any(bus.capacitor_kvar > 0 for bus in study.buses),
+        "line rating": any(math.isfinite(x.rating_kva) and not x.normally_open for x in lines),
+        "tight voltage": settings.vmin_pu >= 0.95,
+        "breaker": Device.BREAKER in devices,
+        "recloser": Device.RECLOSER in devices,
+        "fuse": Device.FUSE in devices,
+        "switch": Device.SWITCH in devices,
+        "bare line end": any(
+            Device.NONE in (x.from_device, x.to_device) for x in lines if not x.normally_open
+        ),
+        "reversed line": any(x.to_bus == settings.source_bus for x in lines),
+        "isolation": any(c.switching_h > 0 for c in classes.values()),
+        "hardening": is_hardened,
+        "exclusive hardening": bool(shared),
+        "repair outlasting the window": has_failures,
+        "repair cost": any(c.repair_cost_per_failure > 0 for c in classes.values()),
+    }
+
+
+def _money_features(study: Study) -> dict[str, bool]:
+    settings, windows = study.settings, study.windows
+    assets = (*study.storage, *study.generators, *study.measures)
+    return {
+        "grant": any(asset.grant_frac > 0 for asset in assets),
+        "budget": settings.capital_budget is not None and bool(assets),
+        "demand charge": settings.demand_charge_per_kw_year > 0,
+        "substation limit": settings.substation_limit_kva
+        < 1.5 * sum(load.peak_kw for load in study.loads),
+        "first-moment cost": any(c.cost_0h_per_kw > 0 for c in study.customer_classes),
+        "bus load control": settings.load_control is LoadControl.BUS,
+        "remote disconnection": settings.load_control is LoadControl.SECTION
+        and any(load.remote_disconnect_frac > 0 for load in study.loads),
+        "sale": settings.export_price_per_kwh is not None,
+        "loss allowance": settings.loss_allowance_frac > 0,
+        "several windows": len(windows) > 1,
+        "load multiplier": any(w.load_multiplier != 1 for w in windows),
+        "price profile": any(w.price_profile is not None for w in windows),
+        "load profile": any(load.load_profile is not None for load in study.loads),
+        "reactive load": any(load.power_factor < 1 for load in study.loads),
+        "no discount": settings.real_discount_rate_frac == 0,
+    }

@@ -1,0 +1,140 @@
+"""The network of one period as rows and columns: terminals in, balances and voltages out.
+
+A *terminal* is what a device or load offers to the network: a bus, terms in kW and terms in kvar.
+The block adds one flow pair per live line, one squared voltage per live bus, and the rows of
+linearised DistFlow (Baran and Wu 1989, losses dropped). Nothing outside knows how power gets from
+one terminal to another, so another network model can take this one's place.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from xlplan.base.units import v_sq_drop_per_kw
+from xlplan.model.linear_program import ProgramBuilder
+from xlplan.network.feeder import Feeder
+from xlplan.outages.records import ServicePeriod
+
+N_CORNER = 12
+"""Corners of the polygon inside the circle of a rating (model.md section 4)."""
+
+V_SCALE = 1000.0
+"""Voltage columns hold 1000 times the squared p.u. voltage: impedances of 1e-4 ohm then stay well
+above the 1e-9 under which the solver drops a coefficient."""
+
+Terms = list[tuple[int, float]]
+
+
+@dataclass
+class Terminal:
+    """Power offered to a bus: positive terms flow into the network."""
+
+    bus: int
+    kw: Terms
+    kvar: Terms
+
+
+@dataclass(frozen=True)
+class NetworkColumns:
+    """Columns and rows of one period; -1 where a bus or line plays no part.
+
+    The balance rows read ``terminals - outflow + inflow = load``; their bounds are the load.
+    """
+
+    flow_kw: np.ndarray
+    flow_kvar: np.ndarray
+    v_sq: np.ndarray
+    kw_row: np.ndarray
+    kvar_row: np.ndarray
+
+
+def add_polygon(
+    builder: ProgramBuilder, name: str, kw: Terms, kvar: Terms, rating: Terms | float
+) -> None:
+    """Keeps (kW, kvar) inside the regular 12-gon inscribed in the circle of the rating.
+
+    ``rating`` is a number, or terms where the rating is bought. The rows are lazy: few ever bind.
+    """
+    shrink = np.cos(np.pi / N_CORNER)
+    for i in range(N_CORNER):
+        angle = (2 * i + 1) * np.pi / N_CORNER
+        terms = [(c, a * np.cos(angle)) for c, a in kw] + [(c, a * np.sin(angle)) for c, a in kvar]
+        if isinstance(rating, float):
+            builder.add_row(f"{name} polygon {i}", terms, upper=rating * shrink, is_lazy=True)
+        else:
+            terms += [(c, -a * shrink) for c, a in rating]
+            builder.add_row(f"{name} polygon {i}", terms, upper=0.0, is_lazy=True)
+
+
+def add_network(
+    builder: ProgramBuilder,
+    tag: str,
+    feeder: Feeder,
+    service: ServicePeriod,
+    terminals: list[Terminal],
+    band_pu: tuple[float, float],
+    flow_limit_kw: float,
+    voltage_sources: list[int],
+) -> NetworkColumns:
+    """Adds one period's network.
+
+    Parameters
+    ----------
+    builder : ProgramBuilder, its terminals' columns already there
+    tag : str, ends every name
+    feeder : Feeder
+    service : ServicePeriod, which lines and buses are live
+    terminals : list of Terminal
+    band_pu : (lowest, highest) voltage in p.u.
+    flow_limit_kw : float, no flow can pass this (a finite box for lines without a rating)
+    voltage_sources : buses held at the source voltage
+
+    Returns
+    -------
+    NetworkColumns
+    """
+    n_bus, n_line = feeder.n_bus, feeder.n_line
+    flow_kw = np.full(n_line, -1)
+    flow_kvar = np.full(n_line, -1)
+    v_sq = np.full(n_bus, -1)
+    kw_terms: dict[int, Terms] = {}
+    kvar_terms: dict[int, Terms] = {}
+    low, high = V_SCALE * band_pu[0] ** 2, V_SCALE * band_pu[1] ** 2
+    for bus in np.flatnonzero(service.bus_live):
+        kw_terms[bus], kvar_terms[bus] = [], []
+        bounds = (low, high)
+        if bus in voltage_sources:
+            held = V_SCALE * feeder.source_v_sq_pu
+            bounds = (held, held)
+        v_sq[bus] = builder.add_column(f"v2 {feeder.bus_ids[bus]} {tag}", *bounds)
+    for terminal in terminals:
+        kw_terms[terminal.bus] += terminal.kw
+        kvar_terms[terminal.bus] += terminal.kvar
+    for line in np.flatnonzero(service.line_live):
+        i, j = int(feeder.from_bus[line]), int(feeder.to_bus[line])
+        if not (service.bus_live[i] and service.bus_live[j]):
+            continue
+        name = f"{feeder.line_ids[line]} {tag}"
+        rating = float(feeder.rating_kva[line])
+        box = min(rating, flow_limit_kw)
+        flow_kw[line] = p = builder.add_column(f"kW {name}", -box, box)
+        flow_kvar[line] = q = builder.add_column(f"kvar {name}", -box, box)
+        for terms, flow in ((kw_terms, p), (kvar_terms, q)):
+            terms[i].append((flow, -1.0))
+            terms[j].append((flow, 1.0))
+        drop_r = V_SCALE * v_sq_drop_per_kw(float(feeder.r_ohm[line]), feeder.base_kv)
+        drop_x = V_SCALE * v_sq_drop_per_kw(float(feeder.x_ohm[line]), feeder.base_kv)
+        boost = (1.0 + float(feeder.boost_frac[line])) ** 2
+        terms = [(v_sq[j], 1.0), (v_sq[i], -boost), (p, drop_r), (q, drop_x)]
+        builder.add_row(f"voltage {name}", terms, 0.0, 0.0)
+        if np.isfinite(rating):
+            add_polygon(builder, f"rating {name}", [(p, 1.0)], [(q, 1.0)], rating)
+    kw_row = np.full(n_bus, -1)
+    kvar_row = np.full(n_bus, -1)
+    for bus in kw_terms:
+        name = f"{feeder.bus_ids[bus]} {tag}"
+        kw_row[bus] = builder.add_row(f"kW balance {name}", kw_terms[bus], 0.0, 0.0)
+        kvar_row[bus] = builder.add_row(f"kvar balance {name}", kvar_terms[bus], 0.0, 0.0)
+    return NetworkColumns(flow_kw, flow_kvar, v_sq, kw_row, kvar_row)

@@ -1,0 +1,128 @@
+"""A table placed on a sheet: where each of its cells is, before anything is written.
+
+Formulas need addresses, often of tables further down or on other sheets. So a ``Grid`` is placed
+first, from its columns and its number of rows, and written once all formulas are known.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+
+from xlsxwriter.utility import xl_rowcol_to_cell
+
+from xlplan.report.safe_book import ABSENT, SafeSheet
+
+
+@dataclass(frozen=True)
+class Formula:
+    """A live formula and the value it gives."""
+
+    text: str
+    value: float | str
+
+
+Cell = Formula | float | str | None
+"""``None`` and numbers that are not finite show as "not computed"; ``""`` stays blank."""
+
+
+@dataclass(frozen=True)
+class Column:
+    """One column: ``title`` with its unit (``{money}`` stands for the currency), its format."""
+
+    key: str
+    title: str
+    look: str = "text"
+    is_input: bool = False
+    """Typed figures that formulas use: shown in blue on a pale fill."""
+
+
+@dataclass(frozen=True)
+class Grid:
+    """A heading row at ``top`` and ``n_row`` rows under it, from column ``left`` on."""
+
+    sheet: str
+    top: int
+    columns: tuple[Column, ...]
+    n_row: int
+    left: int = 0
+
+    @property
+    def below(self) -> int:
+        """First row under the table (an empty table takes one row, which says so)."""
+        return self.top + 1 + max(self.n_row, 1)
+
+    def row(self, i_row: int) -> int:
+        """Sheet row of a table row."""
+        return self.top + 1 + i_row
+
+    def col(self, key: str) -> int:
+        """Sheet column of a key."""
+        return self.left + [column.key for column in self.columns].index(key)
+
+    def here(self, i_row: int, key: str) -> str:
+        """Address within the sheet, relative: ``D7``."""
+        return str(xl_rowcol_to_cell(self.row(i_row), self.col(key)))
+
+    def fixed(self, i_row: int, key: str) -> str:
+        """Address within the sheet, absolute: ``$D$7``."""
+        return str(xl_rowcol_to_cell(self.row(i_row), self.col(key), True, True))
+
+    def away(self, i_row: int, key: str) -> str:
+        """Address for other sheets: ``'Plan'!$D$7``."""
+        return f"'{self.sheet}'!{self.fixed(i_row, key)}"
+
+    def span(self, key: str, first: int = 0, n: int | None = None) -> str:
+        """Absolute range of a column, or of ``n`` of its rows: ``$D$7:$D$9``."""
+        last = first + (self.n_row if n is None else n) - 1
+        return f"{self.fixed(first, key)}:{self.fixed(last, key)}"
+
+    def span_away(self, key: str, first: int = 0, n: int | None = None) -> str:
+        """The same for other sheets."""
+        return f"'{self.sheet}'!{self.span(key, first, n)}"
+
+    def chart_values(self, key: str) -> list[str | int]:
+        """Range of a column as charts take it."""
+        col = self.col(key)
+        return [self.sheet, self.row(0), col, self.row(self.n_row - 1), col]
+
+    def chart_name(self, key: str) -> list[str | int]:
+        """Heading cell of a column as charts take it."""
+        return [self.sheet, self.top, self.col(key)]
+
+    def write(
+        self,
+        sheet: SafeSheet,
+        rows: Sequence[Mapping[str, Cell]],
+        marked: Sequence[int] = (),
+        heading_lines: int = 2,
+    ) -> None:
+        """Writes headings and rows; rows in ``marked`` are set off."""
+        if len(rows) != self.n_row:
+            raise ValueError(f"{len(rows)} rows for a table of {self.n_row}")
+        numeric = [not column.look.startswith(("text", "wrap", "status")) for column in self.columns]
+        for i, column in enumerate(self.columns):
+            title = sheet.book.words(column.title)
+            look = "heading_right" if numeric[i] else "heading"
+            sheet.text(self.top, self.left + i, title, look)
+        sheet.height(self.top, 13.5 * heading_lines + 3)
+        if not rows:
+            sheet.text(self.row(0), self.left, "none", "note")
+        for i_row, row in enumerate(rows):
+            extra = ("plan",) if i_row in marked else ()
+            for i, column in enumerate(self.columns):
+                looks = (column.look, *(("input",) if column.is_input else ()), *extra)
+                write_cell(sheet, self.row(i_row), self.left + i, row[column.key], *looks)
+
+
+def write_cell(sheet: SafeSheet, row: int, col: int, cell: Cell, *looks: str) -> None:
+    """One cell of any kind."""
+    if isinstance(cell, Formula):
+        sheet.formula(row, col, cell.text, cell.value, *looks)
+    elif isinstance(cell, str):
+        sheet.text(row, col, cell, *looks)
+    elif cell is None or not math.isfinite(cell):
+        sheet.text(row, col, ABSENT, "absent", *looks[1:])
+    else:
+        sheet.number(row, col, cell, *looks)

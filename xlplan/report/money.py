@@ -1,0 +1,56 @@
+"""Stored values of the money formulas on the Alternatives sheet, and how amounts are worded.
+
+The sheet shows live formulas; viewers without a calculator see these values. The definitions are
+those of the formulas, in words beside each of them.
+"""
+
+from __future__ import annotations
+
+from xlplan.compare.study_result import StudyResult
+from xlplan.evaluate.results import PlanResult
+
+STUDY_LIFE_YEARS = 20.0
+"""Years over which the present value is taken (common practice); a cell of its own to change."""
+
+NO_PAYBACK = "does not pay back"
+NOTHING_BOUGHT = "nothing bought"
+
+
+def annuity_factor(rate_frac: float, years: float) -> float:
+    """Present value of 1 a year for some years, paid at each year's end."""
+    if rate_frac == 0.0:
+        return years
+    return float((1.0 - (1.0 + rate_frac) ** -years) / rate_frac)
+
+
+def saving(base: float, base_investment: float, total: float, investment: float) -> float:
+    """Yearly saving against the existing feeder before the yearly cost of investment."""
+    return (base - base_investment) - (total - investment)
+
+
+def payback_years(extra_capital: float, yearly_saving: float) -> float | str:
+    """Years until the savings have returned the capital, without interest."""
+    return NO_PAYBACK if yearly_saving <= 0.0 else extra_capital / yearly_saving
+
+
+def money_words(amount: float, currency: str) -> str:
+    """An amount in words: ``12,300 EUR``; cents only where the amount is small."""
+    cents_below = 100.0
+    digits = 2 if 0.0 < abs(amount) < cents_below else 0
+    number = f"{amount:,.{digits}f}"
+    return f"{'0' if float(number.replace(',', '')) == 0.0 else number} {currency}"
+
+
+def largest_amount(result: StudyResult) -> float:
+    """The largest yearly cost of any plan, which settles the digits shown."""
+    return max(abs(plan.costs.total) for plan in result.plans)
+
+
+def baseline(result: StudyResult) -> PlanResult:
+    """The existing feeder: the first plan by contract."""
+    return result.plans[0]
+
+
+def buys_anything(plan: PlanResult) -> bool:
+    """True if the plan spends capital or buys an asset."""
+    return plan.capital_gross > 0.0 or any(asset.is_bought for asset in plan.purchases)

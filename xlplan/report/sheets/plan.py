@@ -1,0 +1,187 @@
+"""Plan: what each alternative buys, from prices to yearly cost, in live formulas.
+
+Three tables: totals by alternative, one price list that all alternatives share, and one block of
+purchases per alternative in the order of the price list. A price or the discount rate changed here
+moves every total of the workbook; the purchases stay what the run found.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from xlplan.compare.study_result import StudyResult
+from xlplan.evaluate.results import PlanResult, Purchase
+from xlplan.report.grid import Cell, Formula, Grid
+from xlplan.report.money import baseline, buys_anything
+from xlplan.report.safe_book import SafeBook
+from xlplan.report.tables import PLAN, PLAN_TOTALS, PRICES, PURCHASES
+
+DISCOUNT_RATE = "discount_rate"
+"""Name of the cell that holds the real discount rate; it stands on the Alternatives sheet."""
+
+NOISE = 1e-6
+"""Money below which a remainder is rounding of sums, not a device change."""
+
+WIDTHS = (25, 18, 12, 12, 13, 13, 14, 14, 14, 14, 13, 13, 13)
+
+
+@dataclass(frozen=True)
+class PlanCells:
+    """Where the totals stand: row i belongs to plan i of the result."""
+
+    totals: Grid
+
+
+def write(book: SafeBook, result: StudyResult) -> PlanCells:
+    """Writes the sheet; the place of its totals is needed by Alternatives and Checks."""
+    sheet = book.sheet(PLAN)
+    sheet.head(
+        "What each alternative buys",
+        "Blue figures on a pale fill were given or found by the run; black ones are formulas that "
+        "follow them. Changing a figure moves the totals; it does not search for a new plan.",
+    )
+    shown = [plan for plan in result.plans if buys_anything(plan)]
+    assets = baseline(result).purchases or result.plans[-1].purchases
+    totals = Grid(PLAN, 4, PLAN_TOTALS, len(result.plans))
+    prices = Grid(PLAN, totals.below + 2, PRICES, len(assets))
+    n_row = sum(len(plan.purchases) for plan in shown)
+    bought = Grid(PLAN, prices.below + 2, PURCHASES, n_row)
+
+    sheet.text(totals.top - 1, 0, "Totals by alternative", "section")
+    first_row = {}
+    rows: list[dict[str, Cell]] = []
+    for plan in shown:
+        first_row[plan.name] = len(rows)
+        for i_asset, asset in enumerate(plan.purchases):
+            rows.append(_purchase_row(plan, asset, bought, len(rows), prices, i_asset))
+    total_rows = [
+        _total_row(plan, i, totals, bought, first_row.get(plan.name))
+        for i, plan in enumerate(result.plans)
+    ]
+    best = [i for i, plan in enumerate(result.plans) if plan.name == result.recommended]
+    totals.write(sheet, total_rows, marked=best, heading_lines=3)
+
+    sheet.text(prices.top - 1, 0, "Prices and lives, as given in the study", "section")
+    prices.write(sheet, [_price_row(a, prices, i) for i, a in enumerate(assets)], heading_lines=4)
+
+    sheet.text(bought.top - 1, 0, "Purchases by alternative", "section")
+    marked = [i for i, row in enumerate(rows) if row["is_bought"] == "yes"]
+    bought.write(sheet, rows, marked=marked, heading_lines=3)
+    sheet.text(bought.below + 1, 0, NOTE, "note")
+    sheet.widths(WIDTHS)
+    sheet.freeze(2, 1)
+    sheet.print_setup(bought.below + 1, len(PURCHASES) - 1)
+    return PlanCells(totals)
+
+
+NOTE = (
+    "Capital recovery factor = r (1 + r)^n / ((1 + r)^n - 1), 1/n at r = 0, with each asset's own "
+    "life n. Alternatives that buy nothing have no rows."
+)
+
+
+def _price_row(asset: Purchase, prices: Grid, i: int) -> dict[str, Cell]:
+    """One asset that can be bought: its prices, and the factor of its own life."""
+    return {
+        "asset": asset.asset,
+        "place": asset.place,
+        "kind": asset.kind,
+        "max_kw": asset.max_new_kw,
+        "max_kwh": asset.max_new_kwh,
+        "per_kw": asset.capital_per_kw,
+        "per_kwh": asset.capital_per_kwh,
+        "site": asset.capital_site,
+        "grant": asset.grant_frac,
+        "life": asset.life_years,
+        "om_rate": asset.fixed_om_rate,
+        "crf": Formula(f"=-PMT({DISCOUNT_RATE},{prices.here(i, 'life')},1)", asset.crf),
+    }
+
+
+def _purchase_row(
+    plan: PlanResult, asset: Purchase, bought: Grid, i: int, prices: Grid, i_price: int
+) -> dict[str, Cell]:
+    """What a plan buys of one asset: capital, grant, factor, yearly cost."""
+
+    def price(key: str) -> str:
+        return prices.fixed(i_price, key)
+
+    is_bought, kw, kwh = (bought.here(i, key) for key in ("is_bought", "kw", "kwh"))
+    capital = f"{price('site')}+{kw}*{price('per_kw')}+{kwh}*{price('per_kwh')}"
+    om_units = f'=IF({is_bought}="yes",IF({bought.here(i, "kind")}="hardening",1,{kw}),0)'
+    net, crf = bought.here(i, "net"), bought.here(i, "crf")
+    investment, fixed_om = bought.here(i, "investment"), bought.here(i, "fixed_om")
+    units = 0.0 if not asset.is_bought else 1.0 if asset.kind == "hardening" else asset.kw
+    return {
+        "name": plan.name,
+        "asset": asset.asset,
+        "kind": asset.kind,
+        "is_bought": "yes" if asset.is_bought else "no",
+        "kw": asset.kw,
+        "kwh": asset.kwh,
+        "om_units": Formula(om_units, units),
+        "gross": Formula(f'=IF({is_bought}="yes",{capital},0)', asset.capital_gross),
+        "net": Formula(f"={bought.here(i, 'gross')}*(1-{price('grant')})", asset.capital_net),
+        "crf": Formula(f"={price('crf')}", asset.crf),
+        "investment": Formula(f"={net}*{crf}", asset.investment),
+        "fixed_om": Formula(
+            f"={bought.here(i, 'om_units')}*{price('om_rate')}",
+            asset.fixed_om,
+        ),
+        "yearly": Formula(f"={investment}+{fixed_om}", asset.investment + asset.fixed_om),
+    }
+
+
+def _total_row(
+    plan: PlanResult, i: int, totals: Grid, bought: Grid, first: int | None
+) -> dict[str, Cell]:
+    """Sums over a plan's block of purchases, and what device changes add."""
+    assets = plan.purchases
+    n = len(assets)
+
+    def block_sum(key: str, value: float, extra: str = "") -> Formula:
+        if first is None or n == 0:
+            return Formula(f"=0{'+' + extra if extra else ''}", value)
+        return Formula(f"=SUM({bought.span(key, first, n)}){'+' + extra if extra else ''}", value)
+
+    def sum_of_kind(kind: str, key: str) -> Formula:
+        value = sum((getattr(a, key) for a in assets if a.kind == kind and a.is_bought), 0.0)
+        if first is None or n == 0:
+            return Formula("=0", value)
+        kinds, numbers = bought.span("kind", first, n), bought.span(key, first, n)
+        yes = bought.span("is_bought", first, n)
+        return Formula(f'=SUMIFS({numbers},{kinds},"{kind}",{yes},"yes")', value)
+
+    measures = float(sum(a.is_bought for a in assets if a.kind == "hardening"))
+    count = Formula("=0", measures)
+    if first is not None and n:
+        kinds, yes = bought.span("kind", first, n), bought.span("is_bought", first, n)
+        count = Formula(f'=COUNTIFS({kinds},"hardening",{yes},"yes")', measures)
+    other_capital = _remainder(plan.capital_cost, [a.capital_net for a in assets])
+    other_yearly = _remainder(plan.costs.investment, [a.investment for a in assets])
+    gross = sum(a.capital_gross for a in assets) + other_capital
+    capital_cell, yearly_cell = totals.here(i, "other_capital"), totals.here(i, "other_yearly")
+    return {
+        "name": plan.name,
+        "place": plan.kind,
+        "storage_kw": sum_of_kind("storage", "kw"),
+        "storage_kwh": sum_of_kind("storage", "kwh"),
+        "generator_kw": sum_of_kind("generator", "kw"),
+        "measures": count,
+        "other_capital": other_capital,
+        "other_yearly": other_yearly,
+        "gross": block_sum("gross", gross, capital_cell),
+        "net": block_sum("net", plan.capital_cost, capital_cell),
+        "investment": block_sum("investment", plan.costs.investment, yearly_cell),
+        "fixed_om": block_sum("fixed_om", plan.costs.fixed_om),
+        "yearly": Formula(
+            f"={totals.here(i, 'investment')}+{totals.here(i, 'fixed_om')}",
+            plan.costs.investment + plan.costs.fixed_om,
+        ),
+    }
+
+
+def _remainder(total: float, parts: list[float]) -> float:
+    """What no listed asset accounts for: the changed devices of an alternative."""
+    rest = total - sum(parts)
+    return 0.0 if abs(rest) < max(NOISE, 1e-12 * abs(total)) else rest

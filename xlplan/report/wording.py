@@ -1,0 +1,171 @@
+"""The finding and the uncertainties in sentences, made from the numbers by rule.
+
+A title is a claim. So the sentence says when the interval of the difference includes 0, when the
+run stopped before its target, and when another alternative is just as cheap.
+"""
+
+from __future__ import annotations
+
+from xlplan.base.names import LEAST_COST
+from xlplan.base.units import pct_from_frac
+from xlplan.compare.study_result import StudyResult
+from xlplan.evaluate.results import PlanResult
+from xlplan.report.money import baseline, buys_anything, money_words
+
+GAP_REACHED = "gap reached"
+POISSON_WARNING_FRAC = 0.05
+"""Above this share the one-at-a-time rule hides too many events (model.md section 2)."""
+
+
+def plan_words(plan: PlanResult) -> str:
+    """How a sentence names a plan."""
+    return f"The {LEAST_COST[0].lower()}{LEAST_COST[1:]}" if plan.name == LEAST_COST else (
+        f"“{plan.name}”"
+    )
+
+
+def includes_zero(interval: tuple[float, float]) -> bool:
+    """True if a difference of 0 cannot be excluded."""
+    return interval[0] <= 0.0 <= interval[1]
+
+
+def stopped_early(result: StudyResult, plan: PlanResult) -> bool:
+    """True if the run ended before its gap target, whatever it calls itself."""
+    misses = plan.gap_frac is None or plan.gap_frac > result.gap_target_frac * (1.0 + 1e-9)
+    return result.status != GAP_REACHED or misses
+
+
+def headline(result: StudyResult) -> str:
+    """The finding in one sentence (two where the run stopped early)."""
+    best = result.plan(result.recommended)
+    finding = _finding(result, best)
+    if not stopped_early(result, best):
+        return finding
+    gap = "unknown" if best.gap_frac is None else f"{pct_from_frac(best.gap_frac):.1f} %"
+    target = f"{pct_from_frac(result.gap_target_frac):.1f} %"
+    return f"Stopped before its target (gap {gap}, target {target}); best plan so far: {finding}"
+
+
+def _finding(result: StudyResult, best: PlanResult) -> str:
+    base = baseline(result)
+    currency = result.currency
+    name = plan_words(best)
+    if best.name == base.name or not buys_anything(best):
+        return (
+            f"{name} buys nothing: no purchase on offer was found to lower the yearly cost, "
+            "customers' outage costs included."
+        )
+    low, high = best.difference_interval
+    span = f"{money_words(low, currency)} to {money_words(high, currency)}"
+    if includes_zero((low, high)):
+        return (
+            f"{name} and the existing feeder cannot be told apart on yearly cost: the 95 % "
+            f"interval of the difference, {span}, includes 0."
+        )
+    amount = money_words(abs(best.difference), currency)
+    share = ""
+    if base.costs.total > 0.0:
+        share = f" ({pct_from_frac(abs(best.difference) / base.costs.total):.1f} %)"
+    verb = "lowers" if high < 0.0 else "raises"
+    return f"{name} {verb} the yearly cost by {amount}{share}, customers' outage costs included."
+
+
+def consequence(result: StudyResult) -> str:
+    """What the plan costs and what it does for customers, in one line."""
+    best, base = result.plan(result.recommended), baseline(result)
+    currency = result.currency
+    return (
+        f"Capital after grants: {money_words(best.capital_cost, currency)}. "
+        f"Outage hours per customer: {base.indices.saidi_h:.2f} a year on the existing feeder, "
+        f"{best.indices.saidi_h:.2f} with the plan. Utility's own cost "
+        f"{_change(best.costs.utility - base.costs.utility, currency)} a year, customers' outage "
+        f"cost {_change(best.costs.customers - base.costs.customers, currency)} a year."
+    )
+
+
+def _change(amount: float, currency: str) -> str:
+    direction = "up" if amount > 0.0 else "down"
+    return f"{direction} {money_words(abs(amount), currency)}"
+
+
+def basis(result: StudyResult) -> str:
+    """Which study, whose, on which prices and discount rate."""
+    year = "price year not given" if result.price_year is None else f"prices of {result.price_year}"
+    author = f", prepared by {result.prepared_by}" if result.prepared_by else ""
+    rate = pct_from_frac(result.real_discount_rate_frac)
+    return (
+        f"Study: {result.study_name}{author}. {year[0].upper()}{year[1:]}, {result.currency}; real "
+        f"discount rate {rate:.2f} % a year. Peak load {result.peak_kw:,.0f} kW, "
+        f"{result.customers:,.0f} customers."
+    )
+
+
+def uncertainties(result: StudyResult) -> list[str]:
+    """What is uncertain, most telling first."""
+    best, currency = result.plan(result.recommended), result.currency
+    low, high = best.cost_interval
+    said = []
+    if best.is_enumerated:
+        said.append("Every path was counted, so the yearly cost has no sampling error.")
+    else:
+        said.append(
+            f"Yearly cost of the plan: {money_words(low, currency)} to "
+            f"{money_words(high, currency)} (95 % interval, {best.n_sample:,} sampled "
+            "continuations: a statistical figure)."
+        )
+    if best.lower_bound is not None and best.gap_frac is not None:
+        said.append(
+            f"No plan on offer costs less than {money_words(best.lower_bound, currency)} a year: "
+            f"this one is within {pct_from_frac(best.gap_frac):.2f} % of that."
+        )
+    said += _rivals(result, best)
+    value = result.value_of_outage_planning
+    span = result.value_of_outage_planning_interval
+    words = f"{money_words(span[0], currency)} to {money_words(span[1], currency)}"
+    zero = "; the interval includes 0" if includes_zero(span) else ""
+    said.append(
+        f"Planning for outages is worth {money_words(value, currency)} a year "
+        f"(95 % interval {words}{zero})."
+    )
+    said.append(
+        f"Years differ: mean {money_words(best.risk.mean, currency)}; one year in twenty costs "
+        f"more than {money_words(best.risk.p95, currency)} ({best.risk.n_year:,} simulated years)."
+    )
+    said += _warnings(result, best)
+    return said
+
+
+def _rivals(result: StudyResult, best: PlanResult) -> list[str]:
+    """Other alternatives that are as cheap, within the interval or the gap."""
+    gap = abs(best.costs.total) * (best.gap_frac or 0.0)
+    reach = max(best.cost_interval[1], best.costs.total + gap)
+    near = [
+        plan.name
+        for plan in result.plans
+        if plan.name != best.name and plan.cost_interval[0] <= reach
+    ]
+    if not near:
+        return []
+    return [f"Not clearly dearer than the plan, within interval or gap: {'; '.join(near)}."]
+
+
+def _warnings(result: StudyResult, best: PlanResult) -> list[str]:
+    said = []
+    history = [line for line in result.checks if line.is_warning]
+    missed = [line.name for line in history if not line.passes]
+    if missed:
+        said.append(f"STOP and look: far from the feeder's own records: {'; '.join(missed)}.")
+    elif not history:
+        said.append("Nothing in the study lets the existing feeder be compared with its records.")
+    for window in best.windows:
+        if window.poisson_events > window.expected_events * (1.0 + POISSON_WARNING_FRAC):
+            said.append(
+                f"Window {window.window}: failures overlap often, and one-at-a-time hides them."
+            )
+    if best.normal_shed_kwh > 0.5:
+        said.append(
+            f"Planning violation: {best.normal_shed_kwh:,.0f} kWh a year are shed in normal service."
+        )
+    if best.numerical_events:
+        said.append(f"The solver met {best.numerical_events} numerically difficult problems.")
+    return said

@@ -1,0 +1,324 @@
+"""The only module that imports highspy.
+
+``KeptModel`` keeps one HiGHS object with its basis and changes it in bulk; ``solve_program`` solves
+one program once. Statuses, limits and the fallbacks after a surprising status are handled here.
+
+HiGHS at a limit gives vectors of zeros and an infeasible program says objective 0: nothing is read
+unless the status says that it exists.
+"""
+
+from __future__ import annotations
+
+import logging
+import tempfile
+import time
+from collections import Counter
+from pathlib import Path
+
+import highspy
+import numpy as np
+from numpy.typing import NDArray
+
+from xlplan.model.linear_program import LinearProgram
+from xlplan.solve.result import SolveResult, Termination
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
+_LOG = logging.getLogger(__name__)
+
+FEASIBILITY_TOLERANCE = 1e-7
+"""HiGHS's own default, stated because lazy rows are checked with the same."""
+
+_ROWWISE = int(highspy.MatrixFormat.kRowwise)
+_MINIMISE = int(highspy.ObjSense.kMinimize)
+
+_TERMINATIONS = {
+    "kOptimal": Termination.OPTIMAL,
+    "kModelEmpty": Termination.OPTIMAL,
+    "kInfeasible": Termination.INFEASIBLE,
+    "kUnbounded": Termination.UNBOUNDED,
+    "kUnboundedOrInfeasible": Termination.UNBOUNDED,
+    "kTimeLimit": Termination.TIME_LIMIT,
+    "kIterationLimit": Termination.OTHER_LIMIT,
+    "kSolutionLimit": Termination.OTHER_LIMIT,
+    "kObjectiveBound": Termination.OTHER_LIMIT,
+    "kObjectiveTarget": Termination.OTHER_LIMIT,
+    "kMemoryLimit": Termination.OTHER_LIMIT,
+    "kInterrupt": Termination.INTERRUPTED,
+    "kHighsInterrupt": Termination.INTERRUPTED,
+}
+
+
+class _QuietHighs(highspy.Highs):  # type: ignore[misc]
+    """Turns output off before anything else: the wrapper's callbacks print a banner."""
+
+    def enableCallbacks(self) -> None:  # noqa: N802 (name given by the base class)
+        self.setOptionValue("output_flag", False)
+
+
+def _new_highs(**options: object) -> highspy.Highs:
+    """HiGHS object without output, on one thread."""
+    highs = _QuietHighs()
+    # One value of threads per process: mixing them makes later runs fail silently.
+    for name, value in {"output_flag": False, "threads": 1, **options}.items():
+        if highs.setOptionValue(name, value) != highspy.HighsStatus.kOk:
+            raise ValueError(f"HiGHS refused option {name} = {value!r}")
+    return highs
+
+
+def _int32(values: object) -> NDArray[np.int32]:
+    return np.ascontiguousarray(values, dtype=np.int32)
+
+
+def _float(values: object) -> FloatArray:
+    return np.ascontiguousarray(values, dtype=np.float64)
+
+
+class SolverFailureError(RuntimeError):
+    """No attempt gave an optimum; ``path`` holds the model, for the log and the report."""
+
+    def __init__(self, name: str, raw_status: str, path: Path | None) -> None:
+        super().__init__(f"{name}: {raw_status}; model saved as {path}")
+        self.path = path
+        self.raw_status = raw_status
+
+
+class KeptModel:
+    """A linear program kept in HiGHS: bounds, costs and rows change, the basis stays.
+
+    ``counts`` collects solves, simplex iterations, seconds and fallbacks.
+    """
+
+    def __init__(
+        self,
+        name: str,
+        cost: FloatArray,
+        col_lower: FloatArray,
+        col_upper: FloatArray,
+        row_lower: FloatArray,
+        row_upper: FloatArray,
+        start: IntArray,
+        index: IntArray,
+        value: FloatArray,
+    ) -> None:
+        self.name = name
+        self.counts: Counter[str] = Counter()
+        self.seconds = 0.0
+        self._highs = _new_highs(solver="simplex", simplex_strategy=1, presolve="off")
+        n_col, n_row = len(cost), len(row_lower)
+        status = self._highs.passModel(
+            n_col,
+            n_row,
+            len(index),
+            _ROWWISE,
+            _MINIMISE,
+            0.0,
+            _float(cost),
+            _float(col_lower),
+            _float(col_upper),
+            _float(row_lower),
+            _float(row_upper),
+            _int32(start),
+            _int32(index),
+            _float(value),
+            np.zeros(n_col, dtype=np.int32),  # an empty array would be read out of bounds
+        )
+        if status == highspy.HighsStatus.kError:
+            raise ValueError(f"HiGHS refused the model of {name}")
+
+    @property
+    def n_row(self) -> int:
+        """Rows now in the model."""
+        return int(self._highs.getNumRow())
+
+    def set_col_bounds(self, columns: IntArray, lower: FloatArray, upper: FloatArray) -> None:
+        """New bounds of some columns."""
+        if len(columns):
+            self._highs.changeColsBounds(
+                len(columns), _int32(columns), _float(lower), _float(upper)
+            )
+
+    def set_costs(self, columns: IntArray, cost: FloatArray) -> None:
+        """New costs of some columns."""
+        if len(columns):
+            self._highs.changeColsCost(len(columns), _int32(columns), _float(cost))
+
+    def set_row_bounds(self, rows: IntArray, lower: FloatArray, upper: FloatArray) -> None:
+        """New sides of some rows."""
+        if len(rows):
+            self._highs.changeRowsBounds(len(rows), _int32(rows), _float(lower), _float(upper))
+
+    def set_row_coefficients(self, row: int, columns: IntArray, value: FloatArray) -> None:
+        """New coefficients in one row; the basis stays valid, unlike after deleting the row."""
+        for column, coefficient in zip(columns, value, strict=True):
+            self._highs.changeCoeff(row, int(column), float(coefficient))
+
+    def add_rows(
+        self,
+        lower: FloatArray,
+        upper: FloatArray,
+        start: IntArray,
+        index: IntArray,
+        value: FloatArray,
+    ) -> None:
+        """Adds rows at the end; ``start`` has one entry per row or one more."""
+        if len(lower):
+            status = self._highs.addRows(
+                len(lower),
+                _float(lower),
+                _float(upper),
+                len(index),
+                _int32(start[: len(lower)]),
+                _int32(index),
+                _float(value),
+            )
+            if status == highspy.HighsStatus.kError:
+                raise ValueError(f"HiGHS refused rows of {self.name}")
+
+    def delete_rows(self, rows: IntArray) -> None:
+        """Deletes rows; those behind them move up."""
+        if len(rows):
+            self._highs.deleteRows(len(rows), _int32(rows))
+
+    def forget_basis(self) -> None:
+        """The next run starts cold."""
+        self._highs.clearSolver()
+        self.counts["cold restart"] += 1
+
+    def run(self) -> SolveResult:
+        """Solves; tries harder where the status is not optimal.
+
+        Raises SolverFailureError where nothing helps; the model is then written to a file.
+        """
+        result = self._run_once()
+        if result.termination is Termination.OPTIMAL:
+            return result
+        first_status = result.raw_status
+        for word, options in (
+            ("cold restart", {}),
+            ("presolve on", {"presolve": "on"}),
+            ("interior point", {"solver": "ipm", "presolve": "on"}),
+        ):
+            self.counts[f"fallback {word}"] += 1
+            _LOG.info("%s: %s, trying %s", self.name, result.raw_status, word)
+            self._highs.clearSolver()
+            for name, value in options.items():
+                self._highs.setOptionValue(name, value)
+            result = self._run_once()
+            self._highs.setOptionValue("presolve", "off")
+            self._highs.setOptionValue("solver", "simplex")
+            if result.termination is Termination.OPTIMAL:
+                return result
+        self.counts["failed"] += 1
+        raise SolverFailureError(self.name, first_status, self.save())
+
+    def _run_once(self) -> SolveResult:
+        begin = time.perf_counter()
+        run_status = self._highs.run()
+        result = _read_result(self._highs, run_status, False, begin)
+        info = self._highs.getInfo()
+        self.counts["solve"] += 1
+        self.counts["simplex iteration"] += max(int(info.simplex_iteration_count), 0)
+        self.seconds += result.seconds
+        return result
+
+    def save(self) -> Path | None:
+        """Writes the model to a file of the temporary folder; None where that fails."""
+        word = "".join(c if c.isalnum() else "_" for c in self.name)
+        with tempfile.NamedTemporaryFile(
+            prefix=f"xlplan_{word}_", suffix=".mps", delete=False
+        ) as handle:
+            path = Path(handle.name)
+        status = self._highs.writeModel(str(path))
+        return None if status == highspy.HighsStatus.kError else path
+
+
+def _read_result(
+    highs: highspy.Highs, run_status: highspy.HighsStatus, is_mip: bool, begin: float
+) -> SolveResult:
+    """Turns HiGHS's state into a ``SolveResult``, reading only what is valid."""
+    seconds = time.perf_counter() - begin
+    model_status = highs.getModelStatus()
+    termination = _TERMINATIONS.get(model_status.name, Termination.ERROR)
+    if run_status == highspy.HighsStatus.kError:
+        termination = Termination.ERROR
+    solution = highs.getSolution()
+    info = highs.getInfo()
+    is_optimal = termination is Termination.OPTIMAL
+    is_feasible = info.primal_solution_status == highspy.SolutionStatus.kSolutionStatusFeasible
+    has_incumbent = is_optimal or (is_mip and solution.value_valid and is_feasible)
+    has_dual = is_optimal and not is_mip and solution.dual_valid
+    objective = float(highs.getObjectiveValue()) if has_incumbent else float("nan")
+    bound = float("nan")
+    if is_mip and termination is not Termination.ERROR:
+        bound = float(info.mip_dual_bound)
+    elif is_optimal:
+        bound = objective
+    return SolveResult(
+        termination=termination,
+        has_incumbent=bool(has_incumbent),
+        has_dual=bool(has_dual),
+        raw_status=f"{model_status.name[1:]} ({run_status.name[1:]})",
+        seconds=seconds,
+        objective_or_nan=objective,
+        bound_or_nan=bound,
+        # Attribute access builds a list of the whole vector, hence once each.
+        col_value_or_none=np.asarray(solution.col_value) if has_incumbent else None,
+        row_dual_or_none=np.asarray(solution.row_dual) if has_dual else None,
+        col_dual_or_none=np.asarray(solution.col_dual) if has_dual else None,
+    )
+
+
+def solve_program(
+    program: LinearProgram,
+    time_limit_s: float | None = None,
+    gap_frac: float = 1e-6,
+    start_point: FloatArray | None = None,
+) -> SolveResult:
+    """Solves one LP or MILP from scratch.
+
+    Parameters
+    ----------
+    program : LinearProgram, all of whose rows count, lazy ones included
+    time_limit_s : float or None
+    gap_frac : float, relative gap at which a MILP stops
+    start_point : array, shape (n_col,), a known good point of a MILP, or None
+
+    Returns
+    -------
+    SolveResult; for a MILP ``bound`` is the proven dual bound, not the incumbent
+    """
+    is_mip = bool(program.is_integer.any())
+    options: dict[str, object] = {}
+    if is_mip:
+        options = {"mip_rel_gap": float(gap_frac), "mip_abs_gap": 1e-9}
+    if time_limit_s is not None:
+        options["time_limit"] = max(float(time_limit_s), 1e-3)
+    highs = _new_highs(**options)
+    status = highs.passModel(
+        program.n_col,
+        program.n_row,
+        len(program.index),
+        _ROWWISE,
+        _MINIMISE,
+        float(program.offset),
+        _float(program.cost),
+        _float(program.col_lower),
+        _float(program.col_upper),
+        _float(program.row_lower),
+        _float(program.row_upper),
+        _int32(program.start),
+        _int32(program.index),
+        _float(program.value),
+        _int32(program.is_integer),
+    )
+    if status == highspy.HighsStatus.kError:
+        raise ValueError("HiGHS refused the model")
+    if is_mip and start_point is not None:
+        solution = highspy.HighsSolution()
+        solution.col_value = [float(v) for v in start_point]
+        highs.setSolution(solution)
+    begin = time.perf_counter()
+    run_status = highs.run()
+    return _read_result(highs, run_status, is_mip, begin)

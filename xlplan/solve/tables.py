@@ -1,0 +1,188 @@
+"""What the engine looks up about a graph again and again, gathered once.
+
+Enters: a ``ValueGraph``. Leaves: ``GraphTables``: bounds of every node's value, children of every
+exit, domains. ``MemberCache`` keeps the members used last, within a limit of memory.
+"""
+
+from __future__ import annotations
+
+from collections import OrderedDict
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from xlplan.model.value_graph import Family, Member, ValueGraph
+from xlplan.solve.cuts import DomainBox
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
+CACHE_BYTES = 300_000_000
+"""Memory for members kept in one process; an amount, not a tolerance: results do not depend on it."""
+
+
+@dataclass(frozen=True)
+class FamilyTable:
+    """Numbers of one family.
+
+    value_lower, value_upper : (n_member,), valid bounds of every member's value
+    is_fixed : True if every exit has one and the same child in all members where it counts
+    child, child_if_gated : (n_exit, 2), that child where ``is_fixed``, else -1
+    theta_lower : (n_exit,), lowest value of any child of the exit
+    """
+
+    n_state: int
+    value_lower: FloatArray
+    value_upper: FloatArray
+    is_fixed: bool
+    child: IntArray
+    child_if_gated: IntArray
+    theta_lower: FloatArray
+    box: DomainBox
+
+
+@dataclass(frozen=True)
+class GraphTables:
+    """Tables of every family, and how many nodes there are."""
+
+    families: tuple[FamilyTable, ...]
+    n_node: int
+
+
+class MemberCache:
+    """Members of all families used last; the graph may work each one out anew."""
+
+    def __init__(self, families: tuple[Family, ...], limit_bytes: int = CACHE_BYTES) -> None:
+        self._families = families
+        self._limit = limit_bytes
+        self._members: OrderedDict[tuple[int, int], tuple[Member, int]] = OrderedDict()
+        self._bytes = 0
+
+    def get(self, family: int, member: int) -> Member:
+        """One member."""
+        key = (family, member)
+        if key in self._members:
+            self._members.move_to_end(key)
+            return self._members[key][0]
+        made = self._families[family].member(member)
+        size = 8 * (3 * len(made.cost) + 2 * len(made.row_lower) + 5 * len(made.exit_weight))
+        self._members[key] = (made, size)
+        self._bytes += size
+        while self._bytes > self._limit and len(self._members) > 1:
+            self._bytes -= self._members.popitem(last=False)[1][1]
+        return made
+
+
+def gather_tables(graph: ValueGraph, cache: MemberCache) -> GraphTables:
+    """Looks at every node once, children first.
+
+    Raises ValueError where a column has no finite box, for no valid cut could then be made, or
+    where ``graph.order`` is not children first or lacks a node.
+    """
+    lowers = [np.full(f.n_member, np.nan) for f in graph.families]
+    uppers = [np.full(f.n_member, np.nan) for f in graph.families]
+    n_exits = [len(f.exit_gate) for f in graph.families]
+    children = [np.full((n, 2), -1, dtype=np.int64) for n in n_exits]
+    gated = [np.full((n, 2), -1, dtype=np.int64) for n in n_exits]
+    theta_lowers = [np.full(n, np.inf) for n in n_exits]
+    is_fixed = [True] * len(graph.families)
+    for i_family, i_member in graph.order.tolist():
+        family = graph.families[i_family]
+        member = cache.get(i_family, i_member)
+        _check_boxes(family, member, i_member)
+        lower = _exit_lower(family, member, i_member, lowers)
+        active = member.exit_weight > 0.0
+        theta_lowers[i_family] = np.where(
+            active, np.minimum(theta_lowers[i_family], lower), theta_lowers[i_family]
+        )
+        for table, now in (
+            (children[i_family], member.exit_child),
+            (gated[i_family], member.exit_child_if_gated),
+        ):
+            known = table[:, 1] >= 0
+            both = known & active
+            if np.any(table[both] != now[both]):
+                is_fixed[i_family] = False
+            fresh = active & ~known
+            table[fresh] = now[fresh]
+        value_lower = member.value_lower
+        if not np.isfinite(value_lower):
+            columns = np.minimum(member.cost * member.col_lower, member.cost * member.col_upper)
+            exits = member.exit_weight[active] @ lower[active] if active.any() else 0.0
+            value_lower = (columns.sum() + member.offset + exits) / member.scale
+        lowers[i_family][i_member] = value_lower
+        uppers[i_family][i_member] = member.value_upper
+    if any(np.isnan(lower).any() for lower in lowers):
+        raise ValueError("the order of the graph lacks a node")
+    tables = []
+    for i, family in enumerate(graph.families):
+        n_state = family.out_columns.shape[1] if n_exits[i] else len(graph.state_names[i])
+        tables.append(
+            FamilyTable(
+                n_state=len(graph.state_names[i]) if len(graph.state_names) > i else n_state,
+                value_lower=lowers[i],
+                value_upper=uppers[i],
+                is_fixed=is_fixed[i],
+                child=children[i] if is_fixed[i] else np.full_like(children[i], -1),
+                child_if_gated=gated[i] if is_fixed[i] else np.full_like(gated[i], -1),
+                theta_lower=np.where(np.isfinite(theta_lowers[i]), theta_lowers[i], 0.0),
+                box=_domain(graph, i, family),
+            )
+        )
+    return GraphTables(tuple(tables), len(graph.order))
+
+
+def _check_boxes(family: Family, member: Member, i_member: int) -> None:
+    is_open = ~(np.isfinite(member.col_lower) & np.isfinite(member.col_upper))
+    if is_open.any():
+        names = family.program.col_names
+        column = int(np.flatnonzero(is_open)[0])
+        word = names[column] if names else str(column)
+        raise ValueError(f"{family.name}, member {i_member}: column {word} has no finite box")
+
+
+def _exit_lower(
+    family: Family, member: Member, i_member: int, lowers: list[FloatArray]
+) -> FloatArray:
+    """Lower bound of the value at every exit that counts, (n_exit,); 0 elsewhere."""
+    lower = np.full(len(member.exit_weight), np.inf)
+    for table in (member.exit_child, member.exit_child_if_gated):
+        for i_child in np.unique(table[table[:, 1] >= 0, 0]):
+            here = (table[:, 0] == i_child) & (table[:, 1] >= 0)
+            lower[here] = np.minimum(lower[here], lowers[i_child][table[here, 1]])
+    active = member.exit_weight > 0.0
+    if np.isnan(lower[active]).any() or np.isposinf(lower[active]).any():
+        raise ValueError(
+            f"{family.name}, member {i_member}: an exit has no child, or the order of the graph "
+            "does not put children first"
+        )
+    return np.where(active, lower, 0.0)
+
+
+def _domain(graph: ValueGraph, i_family: int, family: Family) -> DomainBox:
+    """Domain of the states at a family's exits."""
+    program = family.program
+    out = family.out_columns
+    if len(out):
+        lower = program.col_lower[out].min(axis=0)
+        upper = program.col_upper[out].max(axis=0)
+    else:
+        n_state = len(graph.state_names[i_family])
+        lower, upper = np.zeros(n_state), np.zeros(n_state)
+    return DomainBox(
+        capacity_lower=graph.capacity_lower,
+        capacity_upper=graph.capacity_upper,
+        state_lower=lower,
+        state_upper=upper,
+        state_lower_matrix=graph.state_lower_matrix[i_family],
+        state_upper_matrix=graph.state_upper_matrix[i_family],
+    )
+
+
+def clip_state(table: FamilyTable, state: FloatArray, capacity: FloatArray) -> FloatArray:
+    """A state brought into its domain: solvers leave it outside by a rounding error."""
+    lower = table.box.state_lower_matrix @ capacity
+    upper = table.box.state_upper_matrix @ capacity
+    clipped: FloatArray = np.minimum(np.maximum(state, lower), np.maximum(upper, lower))
+    return clipped

@@ -1,0 +1,225 @@
+"""Each field against its schema: type, bounds, choices, what is required, what is unlikely.
+
+Enters: a ``Table`` as typed. Leaves: a ``CheckedTable``: values in workbook units (percent stays
+percent), blanks replaced by defaults, faulty cells marked as such. Nothing here looks at a second
+cell.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, replace
+
+from xlplan.base.codes import Code
+from xlplan.base.errors import Finding, Level
+from xlplan.schema.fields import Field, Kind, Sheet
+from xlplan.workbook.tables import Cell, Row, Table, finding_at
+from xlplan.workbook.values import read_value
+
+MOST_OF_A_KIND = 50
+"""Faults of one kind that are listed for one column; more of them have one cause."""
+
+
+@dataclass(frozen=True)
+class CheckedRow:
+    """The values of one row by key; None: blank without default, or faulty.
+
+    ``typed``: keys that were typed, ``faulty``: keys whose cell cannot be used.
+    """
+
+    row: Row
+    values: Mapping[str, object]
+    typed: frozenset[str]
+    faulty: frozenset[str]
+
+    def number(self, key: str) -> float | None:
+        """Value of a number field, None where blank or faulty."""
+        value = self.values.get(key)
+        return float(value) if isinstance(value, (int, float)) else None
+
+    def text(self, key: str) -> str | None:
+        """Value of a name, choice or text field, None where blank or faulty."""
+        value = self.values.get(key)
+        return value if isinstance(value, str) else None
+
+    def is_yes(self, key: str) -> bool:
+        """True where a yes-or-no field says yes."""
+        return self.values.get(key) is True
+
+
+@dataclass(frozen=True)
+class CheckedTable:
+    """The rows of one sheet, each field checked."""
+
+    table: Table
+    schema: Sheet
+    rows: tuple[CheckedRow, ...]
+
+
+def check_table(table: Table, schema: Sheet) -> tuple[CheckedTable, list[Finding]]:
+    """Every field of every row against its schema.
+
+    Parameters
+    ----------
+    table : Table
+    schema : Sheet, of the same name
+
+    Returns
+    -------
+    (CheckedTable, findings); notes of one kind in one column are one note
+    """
+    findings: list[Finding] = []
+    fields = list(schema.fields)
+    if schema.other_columns is not None:
+        known = {field.key for field in fields}
+        fields += [
+            replace(schema.other_columns, key=key, title=key)
+            for key in table.column_of
+            if key not in known
+        ]
+    rows = []
+    for row in table.rows:
+        checked, found = _check_row(row, fields)
+        rows.append(checked)
+        findings += found
+    if not table.rows and not schema.is_optional and table.header_row:
+        findings.append(
+            Finding(
+                Level.FAULT,
+                Code.SHEET_EMPTY,
+                table.sheet,
+                f"A{table.header_row + 1}",
+                schema.id_field or "",
+                "",
+                "the sheet has no rows.",
+                "At least one is needed.",
+            )
+        )
+    return CheckedTable(table, schema, tuple(rows)), _shorten(findings)
+
+
+def _check_row(row: Row, fields: list[Field]) -> tuple[CheckedRow, list[Finding]]:
+    values: dict[str, object] = {}
+    typed, faulty = set(), set()
+    findings: list[Finding] = []
+    for field in fields:
+        if field.is_required and row.number and field.key not in row.cells:
+            faulty.add(field.key)  # the whole column is missing, which the reader said once
+            values[field.key] = None
+            continue
+        cell = row.cell(field.key)
+        value, found = check_field(cell, field)
+        findings += found
+        if any(finding.level is Level.FAULT for finding in found):
+            faulty.add(field.key)
+            values[field.key] = None
+        elif value is None:
+            values[field.key] = _default_of(field)
+        else:
+            typed.add(field.key)
+            values[field.key] = value
+    return CheckedRow(row, values, frozenset(typed), frozenset(faulty)), findings
+
+
+def check_field(cell: Cell, field: Field) -> tuple[object, tuple[Finding, ...]]:
+    """Value of one cell (None: blank or faulty) and the findings about it."""
+    reading = read_value(cell, field)
+    if reading.is_faulty:
+        return None, reading.findings
+    if reading.value is None:
+        if field.is_required:
+            return None, (*reading.findings, _about_blank(cell, field))
+        return None, reading.findings
+    if isinstance(reading.value, (int, float)) and not isinstance(reading.value, bool):
+        fault = _out_of_bounds(cell, field, float(reading.value))
+        if fault:
+            return None, (*reading.findings, fault)
+        warning = _unlikely(cell, field, float(reading.value))
+        if warning:
+            return reading.value, (*reading.findings, warning)
+    return reading.value, reading.findings
+
+
+def _default_of(field: Field) -> object:
+    """The schema's default in the form that a reading has."""
+    if field.kind is Kind.YES_NO:
+        return field.default in (True, "yes")
+    return field.default
+
+
+def _about_blank(cell: Cell, field: Field) -> Finding:
+    if not cell.address:
+        message, hint = (
+            f"the setting '{field.title}' is missing.",
+            "Add a row for it, with its value beside it.",
+        )
+    else:
+        unit = f" Give it in {field.unit}." if field.unit else ""
+        message, hint = f"'{field.title}' is blank, and a value is needed.{unit}", ""
+    return finding_at(cell, Level.FAULT, Code.BLANK, field.key, message, hint)
+
+
+_Breaks = Callable[[float, float], bool]
+
+_BOUNDS: tuple[tuple[str, _Breaks, str], ...] = (
+    ("minimum", lambda value, bound: value < bound, "is below"),
+    ("exclusive_minimum", lambda value, bound: value <= bound, "is not above"),
+    ("maximum", lambda value, bound: value > bound, "is above"),
+    ("exclusive_maximum", lambda value, bound: value >= bound, "is not below"),
+)
+
+
+def _out_of_bounds(cell: Cell, field: Field, value: float) -> Finding | None:
+    for name, breaks, words in _BOUNDS:
+        bound = getattr(field, name)
+        if bound is not None and breaks(value, bound):
+            unit = f" Give it in {field.unit}." if field.unit else ""
+            return finding_at(
+                cell,
+                Level.FAULT,
+                Code.OUT_OF_BOUNDS,
+                field.key,
+                f"{value:g} {words} {bound:g}.{unit}",
+            )
+    return None
+
+
+def _unlikely(cell: Cell, field: Field, value: float) -> Finding | None:
+    below = field.likely_min is not None and value < field.likely_min
+    above = field.likely_max is not None and value > field.likely_max
+    if not (below or above):
+        return None
+    unit = f" {field.unit}" if field.unit else ""
+    means = field.likely_text or "an unusual value"
+    return finding_at(
+        cell,
+        Level.WARNING,
+        Code.UNLIKELY_VALUE,
+        field.key,
+        f"{value:g}{unit} would mean {means}.",
+        "It is used as it stands.",
+    )
+
+
+def _shorten(findings: list[Finding]) -> list[Finding]:
+    """Findings of one kind in one column, so many of them that the first few say it all.
+
+    One note stands for all notes of its kind; of faults and warnings the first fifty are kept.
+    """
+    kept: list[Finding] = []
+    last: dict[tuple[str, str, str], int] = {}
+    count: dict[tuple[str, str, str], int] = {}
+    for finding in findings:
+        kind = (finding.level, finding.code, finding.key)
+        count[kind] = count.get(kind, 0) + 1
+        if count[kind] <= (1 if finding.level is Level.NOTE else MOST_OF_A_KIND):
+            last[kind] = len(kept)
+            kept.append(finding)
+    for kind, position in last.items():
+        n_more = count[kind] - (1 if kind[0] == Level.NOTE else MOST_OF_A_KIND)
+        if n_more > 0:
+            others = f"{n_more} other cell{'s' if n_more > 1 else ''}"
+            finding = kept[position]
+            message = f"{finding.message} The same in {others} of this column."
+            kept[position] = replace(finding, message=message)
+    return kept

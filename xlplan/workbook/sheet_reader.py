@@ -1,0 +1,360 @@
+"""The cells of one sheet to a table: heading row, columns, rows, and what is wrong with them.
+
+Enters: a ``Grid`` (non-blank cells by row and column) and the sheet's schema. Leaves: a ``Table``
+and findings. Columns are found by heading, never by position; what stands beside, above or in
+columns of the user's own is left alone.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from dataclasses import dataclass, field
+from dataclasses import replace as replace_in
+
+from openpyxl.utils import column_index_from_string, get_column_letter
+from openpyxl.utils.cell import coordinate_from_string, range_boundaries
+
+from xlplan.base.codes import Code
+from xlplan.base.errors import Finding, Level
+from xlplan.schema.fields import Field, Sheet
+from xlplan.workbook.folding import clean, fold, fold_heading
+from xlplan.workbook.headings import (
+    field_of_heading,
+    heading_match_count,
+    near_miss,
+    unit_differs,
+    words_in_parentheses,
+)
+from xlplan.workbook.sheet_facts import SheetFacts
+from xlplan.workbook.tables import Cell, Row, Table, finding_at
+from xlplan.workbook.values import is_blank, read_value
+
+HEADING_ROWS = 15
+"""The heading row is looked for so far down."""
+
+
+@dataclass
+class Grid:
+    """Non-blank cells of one sheet, by row number and 1-based column."""
+
+    sheet: str
+    rows: dict[int, dict[int, Cell]] = field(default_factory=dict)
+
+    def add_uncalculated(self, addresses: Iterable[str]) -> None:
+        """Puts in the formulas without a stored value, which otherwise look blank."""
+        for address in addresses:
+            letters, number = coordinate_from_string(address)
+            cells = self.rows.setdefault(number, {})
+            cells[column_index_from_string(letters)] = Cell(
+                self.sheet, address, is_uncalculated=True
+            )
+        self.rows = dict(sorted(self.rows.items()))
+
+    def texts(self, number: int) -> list[str]:
+        """The texts of one row."""
+        return [c.value for c in self.rows.get(number, {}).values() if isinstance(c.value, str)]
+
+
+def read_sheet(schema: Sheet, grid: Grid, facts: SheetFacts) -> tuple[Table, list[Finding]]:
+    """The table of one sheet.
+
+    Parameters
+    ----------
+    schema : Sheet
+    grid : Grid, its cells
+    facts : SheetFacts, what is hidden, merged or not calculated there
+
+    Returns
+    -------
+    (Table, findings)
+    """
+    header_row = _find_header_row(schema, grid)
+    if header_row == 0:
+        return Table(schema.name, grid.sheet), about_no_header(schema, grid)
+    findings: list[Finding] = []
+    columns = _match_columns(schema, grid, header_row, findings)
+    column_of = {key: get_column_letter(column) for key, column in columns.items()}
+    rows, found = _read_rows(schema, grid, header_row, columns, column_of)
+    findings += found
+    findings += _about_missing_columns(schema, grid, header_row, columns, bool(rows))
+    last_row = max((row.number for row in rows), default=header_row)
+    findings += about_merges(grid.sheet, facts, header_row, last_row, set(columns.values()))
+    findings += _about_hidden(grid.sheet, facts, rows, column_of)
+    return Table(schema.name, grid.sheet, header_row, column_of, rows), findings
+
+
+def _sheet_finding(
+    level: Level, code: Code, sheet: str, cell: str, message: str, hint: str = "", key: str = ""
+) -> Finding:
+    return Finding(level, code, sheet, cell, key, "", message, hint)
+
+
+def _find_header_row(schema: Sheet, grid: Grid) -> int:
+    """The row among the first that names most fields; 0 where none names any."""
+    best, best_count = 0, 0
+    for number in sorted(row for row in grid.rows if row <= HEADING_ROWS):
+        count = heading_match_count(grid.texts(number), schema)
+        if count > best_count:
+            best, best_count = number, count
+    return best
+
+
+def about_no_header(schema: Sheet, grid: Grid) -> list[Finding]:
+    if schema.is_optional and not any(number > 3 for number in grid.rows):
+        return []
+    names = ", ".join(f.heading for f in schema.fields if f.is_required)
+    return [
+        _sheet_finding(
+            Level.FAULT,
+            Code.NO_HEADINGS,
+            grid.sheet,
+            "",
+            f"no heading row was found in the first {HEADING_ROWS} rows.",
+            f"It needs at least: {names}.",
+        )
+    ]
+
+
+def _match_columns(
+    schema: Sheet, grid: Grid, header_row: int, findings: list[Finding]
+) -> dict[str, int]:
+    """Column of each key; a profile's key is its own heading."""
+    columns: dict[str, int] = {}
+    others: list[tuple[int, Cell]] = []
+    for column, cell in sorted(grid.rows[header_row].items()):
+        found = field_of_heading(cell.typed, schema.fields)
+        if found is None:
+            others.append((column, cell))
+        elif found.key in columns:
+            findings.append(_about_double(cell, found.key, columns[found.key], header_row))
+        else:
+            columns[found.key] = column
+            warning = unit_differs(cell, words_in_parentheses(cell.typed), found)
+            findings += [warning] if warning else []
+    if schema.other_columns is not None:
+        columns |= _profile_columns(schema, grid, header_row, others, columns, findings)
+        return columns
+    missing = [f for f in schema.fields if f.key not in columns]
+    ignored = []
+    for _, cell in others:
+        miss = near_miss(cell, missing)
+        if miss:
+            findings.append(miss)
+        elif not is_blank(cell):
+            ignored.append(cell)
+    if ignored:
+        names = ", ".join(f"'{clean(cell.typed)}'" for cell in ignored)
+        findings.append(
+            finding_at(ignored[0], Level.NOTE, Code.COLUMN_IGNORED, "", f"not used: {names}.")
+        )
+    return columns
+
+
+def _about_double(cell: Cell, key: str, first_column: int, header_row: int) -> Finding:
+    first = f"{get_column_letter(first_column)}{header_row}"
+    return finding_at(
+        cell,
+        Level.FAULT,
+        Code.HEADING_TWICE,
+        key,
+        f"'{clean(cell.typed)}' also stands in {first}.",
+        "Delete or rename one of the two columns.",
+    )
+
+
+def _profile_columns(
+    schema: Sheet,
+    grid: Grid,
+    header_row: int,
+    others: list[tuple[int, Cell]],
+    columns: dict[str, int],
+    findings: list[Finding],
+) -> dict[str, int]:
+    """Columns under headings of the user's own that hold at least one number."""
+    profiles: dict[str, int] = {}
+    spelling: dict[str, str] = {}
+    named = {column for column, _ in others} | set(columns.values())
+    below = [number for number in grid.rows if number > header_row]
+    assert schema.other_columns is not None
+    for column, cell in others:
+        name = clean(cell.typed)
+        if not _has_number(grid, below, column, schema.other_columns):
+            findings.append(
+                finding_at(
+                    cell,
+                    Level.NOTE,
+                    Code.COLUMN_IGNORED,
+                    "",
+                    f"'{name}' holds no numbers and is not used as a profile.",
+                )
+            )
+        elif fold(name) in spelling:
+            first = profiles[spelling[fold(name)]]
+            findings.append(_about_double(cell, name, first, header_row))
+        else:
+            profiles[name] = column
+            spelling[fold(name)] = name
+    nameless = sorted(
+        {
+            column
+            for number in below
+            for column, cell in grid.rows[number].items()
+            if column not in named and read_value(cell, schema.other_columns).value is not None
+        }
+    )
+    for column in nameless:
+        findings.append(
+            _sheet_finding(
+                Level.FAULT,
+                Code.PROFILE_WITHOUT_NAME,
+                grid.sheet,
+                f"{get_column_letter(column)}{header_row}",
+                "this column holds numbers but has no heading.",
+                "Name the profile, or clear the column.",
+            )
+        )
+    return profiles
+
+
+def _has_number(grid: Grid, below: list[int], column: int, profile: Field) -> bool:
+    """True if any cell of a column could be a profile's value."""
+    for number in below:
+        cell = grid.rows[number].get(column)
+        if cell is None:
+            continue
+        if cell.is_uncalculated or cell.is_error or read_value(cell, profile).value is not None:
+            return True
+    return False
+
+
+def _about_missing_columns(
+    schema: Sheet, grid: Grid, header_row: int, columns: dict[str, int], has_rows: bool
+) -> list[Finding]:
+    if schema.is_optional and not has_rows:
+        return []
+    first = min(grid.rows[header_row])
+    return [
+        _sheet_finding(
+            Level.FAULT,
+            Code.COLUMN_MISSING,
+            grid.sheet,
+            f"{get_column_letter(first)}{header_row}",
+            f"the column '{f.heading}' is missing.",
+            "Add it to the heading row.",
+            f.key,
+        )
+        for f in schema.fields
+        if f.is_required and f.key not in columns
+    ]
+
+
+def _read_rows(
+    schema: Sheet,
+    grid: Grid,
+    header_row: int,
+    columns: dict[str, int],
+    column_of: dict[str, str],
+) -> tuple[tuple[Row, ...], list[Finding]]:
+    """Rows with a value in any column of ours; those without a name are faults and left out."""
+    rows: list[Row] = []
+    findings: list[Finding] = []
+    n_gap = 0
+    previous = header_row
+    for number, found in grid.rows.items():
+        if number <= header_row:
+            continue
+        cells = {
+            key: found.get(column) or Cell(grid.sheet, f"{column_of[key]}{number}")
+            for key, column in columns.items()
+        }
+        if all(is_blank(cell) for cell in cells.values()):
+            continue
+        n_gap += number - previous - 1
+        previous = number
+        row = Row(grid.sheet, number, cells, column_of)
+        if schema.id_field in cells and is_blank(cells[schema.id_field]):
+            findings.append(_about_no_id(schema, schema.id_field, row))
+        else:
+            rows.append(row)
+    if n_gap:
+        findings.append(
+            _sheet_finding(
+                Level.NOTE,
+                Code.BLANK_ROWS,
+                grid.sheet,
+                f"A{header_row + 1}",
+                f"{n_gap} blank row{'s' if n_gap > 1 else ''} between the others skipped.",
+            )
+        )
+    return tuple(rows), findings
+
+
+def _about_no_id(schema: Sheet, key: str, row: Row) -> Finding:
+    cell = row.cells[key]
+    typed = next(c for c in row.cells.values() if not is_blank(c))
+    title = schema.field(key).title
+    finding = finding_at(
+        cell,
+        Level.FAULT,
+        Code.ROW_WITHOUT_ID,
+        key,
+        f"row {row.number} has values (such as {typed.typed or 'a formula'} in {typed.address}) "
+        f"but nothing under '{title}'.",
+        f"Fill in '{title}', or clear the row; notes and sums belong outside these columns.",
+    )
+    return replace_in(finding, value=typed.typed)
+
+
+def about_merges(
+    sheet: str, facts: SheetFacts, header_row: int, last_row: int, columns: set[int]
+) -> list[Finding]:
+    """Faults about merged cells inside the table: all but one of them lost their value."""
+    findings = []
+    for merged in facts.merged_ranges:
+        first_column, first_row, last_column, final_row = range_boundaries(merged)
+        is_inside = first_row <= last_row and final_row >= header_row
+        if is_inside and columns & set(range(first_column, last_column + 1)):
+            findings.append(
+                _sheet_finding(
+                    Level.FAULT,
+                    Code.MERGED_CELLS,
+                    sheet,
+                    merged.split(":")[0],
+                    f"the cells {merged} are merged inside the table.",
+                    "Unmerge them and give every row its own value.",
+                )
+            )
+    return findings
+
+
+def _about_hidden(
+    sheet: str, facts: SheetFacts, rows: tuple[Row, ...], column_of: dict[str, str]
+) -> list[Finding]:
+    """Notes about hidden rows and columns, whose values are used all the same."""
+    findings = []
+    hidden = [row.number for row in rows if row.number in facts.hidden_rows]
+    if hidden:
+        findings.append(
+            _sheet_finding(
+                Level.NOTE,
+                Code.HIDDEN_ROWS,
+                sheet,
+                f"A{hidden[0]}",
+                f"{len(hidden)} hidden or filtered row{'s were' if len(hidden) > 1 else ' was'} "
+                f"used.",
+                "Delete rows that are not to count.",
+            )
+        )
+    for key, letter in column_of.items():
+        if column_index_from_string(letter) in facts.hidden_columns:
+            findings.append(
+                _sheet_finding(
+                    Level.NOTE,
+                    Code.HIDDEN_COLUMN,
+                    sheet,
+                    f"{letter}{max((row.number for row in rows), default=1)}",
+                    "this column is hidden. Its values are used.",
+                    key=key,
+                )
+            )
+    return findings
