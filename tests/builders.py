@@ -839,7 +839,7 @@ class _Draw:
         return bool(self.features & of_exposure)
 
     def _outage_classes(self) -> tuple[OutageClass, ...]:
-        """Rates that give a chance of failure of 5 to 40 % a period where it is highest on average."""
+        """Rates that give at most 5 to 40 % chance of failure in a period, weather aside."""
         n_line = sum(bool(line.outage_class) and not line.normally_open for line in self.lines)
         n_unit = sum(unit.outage_class is not None for unit in (*self.storage, *self.generators))
         n_component = n_line + n_unit + (self.bulk is not None)

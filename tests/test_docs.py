@@ -46,11 +46,10 @@ def documented_parameters(docstring: str) -> list[str] | None:
     names: list[str] = []
     for line, following in zip(lines[starts[0] + 2 :], [*lines[starts[0] + 3 :], ""], strict=False):
         text = line.strip()
-        if text and set(following.strip()) == {"-"}:  # the next section's title
+        # A blank line, or the title of the next section, ends the list.
+        if not text or set(following.strip()) == {"-"}:
             break
-        if text.startswith("Raises "):
-            break
-        if text and len(line) - len(line.lstrip()) == margin:
+        if len(line) - len(line.lstrip()) == margin:
             # An entry may name several parameters; a wrapped list of names ends in a comma.
             head = re.split(r" : |;|:", text)[0]
             names += [name.strip(" *`") for name in head.split(",") if name.strip(" *`")]
@@ -125,5 +124,7 @@ def test_readme_names_no_module_and_starts_with_two_commands() -> None:
 def test_every_module_says_what_it_is() -> None:
     """Empty package files have nothing to say."""
     sources = {str(file): file.read_text("utf-8") for file in FILES}
-    silent = [f for f, text in sources.items() if text and not ast.get_docstring(ast.parse(text))]
+    silent = [
+        f for f, text in sources.items() if text.strip() and not ast.get_docstring(ast.parse(text))
+    ]
     assert not silent, silent

@@ -6,6 +6,8 @@ says (never mixed), fractions instead of percent.
 
 from __future__ import annotations
 
+import math
+
 HOURS_PER_YEAR = 8760.0
 """Hours in a year of 365 days, the base of yearly failure rates (common practice)."""
 
@@ -40,3 +42,8 @@ def v_sq_drop_per_kw(ohm: float, base_kv: float) -> float:
     ``1000 kV^2`` kW ohm.
     """
     return 2.0 * ohm / (1000.0 * base_kv * base_kv)
+
+
+def kva_from_ampere(ampere: float, base_kv: float) -> float:
+    """Three-phase apparent power of a current at a line-to-line voltage: sqrt(3) kV A."""
+    return math.sqrt(3.0) * base_kv * ampere

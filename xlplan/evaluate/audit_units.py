@@ -156,8 +156,6 @@ def _audit_curve(findings: Findings, unit: Storage, kw: float, draw: float, size
     findings.at_least("draw below the curve's end", unit.storage, draw, store[0])
     findings.at_most("draw above the curve's end", unit.storage, draw, store[-1])
     on_curve = float(np.interp(draw, store, terminal)) if size > 0.0 else 0.0
-    # Just beyond an end point, within the tolerance, the curve still has a slope: one more
-    # tolerance times that slope, at most about 2, is allowed for.
     findings.at_most("power above the loss curve", unit.storage, kw, on_curve)
 
 

@@ -126,6 +126,8 @@ class PlanFamily(Family):
     value_upper: FloatArray
     columns: dict[str, IntArray]
     end_columns: IntArray
+    meter: object = None
+    """Set by evaluation: reads a solution where it was solved."""
 
     def member(self, i_member: int) -> Member:
         """Numbers of the plan from period ``i_member`` on."""
@@ -181,6 +183,8 @@ class EventFamily(Family):
     columns: dict[str, IntArray]
     end_columns: IntArray
     n_event_period: int
+    meter: object = None
+    """Set by evaluation: reads a solution where it was solved."""
 
     def member(self, i_member: int) -> Member:
         """Numbers of the event whose failure strikes in period ``i_member``."""

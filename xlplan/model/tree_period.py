@@ -18,7 +18,7 @@ from xlplan.network.feeder import Feeder
 from xlplan.outages.damage import normal_service_price_per_kwh, price_per_kwh
 from xlplan.outages.records import Island, ServicePeriod
 from xlplan.outages.sections import build_sections
-from xlplan.study.study import LoadControl, Study
+from xlplan.study.study import LoadControl, Study, Technology
 from xlplan.study.windows import WindowSeries
 
 Expression = pulp.LpAffineExpression
@@ -84,8 +84,8 @@ class OperatedPeriod:
     v_sq_pu: list[Expression | None]
     cost: Expression = field(default_factory=Expression)
 
-    def state(self, case: Case) -> PlantState:
-        """State at the end of the period; a unit that stood still has no previous output."""
+    def state(self) -> PlantState:
+        """State at the end of the period; a unit that stood still has a previous output of 0."""
         return PlantState(
             energy_kwh=tuple(self.energy_kwh),
             generator_kw=tuple(self.generator_kw),
@@ -113,10 +113,16 @@ class PeriodEquations:
         class_of = {record.customer_class: record for record in study.customer_classes}
         self.class_of_load = [class_of[load.customer_class] for load in study.loads]
         self.sold_per_shed = 1.0 / (1.0 + study.settings.loss_allowance_frac)
+        # Plain floats: NumPy's own would try to turn expressions into arrays.
+        self.load_kw: list[list[float]] = series.load_kw.tolist()
+        self.load_kvar: list[list[float]] = series.load_kvar.tolist()
+        self.price_per_kwh: list[float] = series.price_per_kwh.tolist()
+        self.availability: list[list[float]] = series.availability.tolist()
+        self.start_soc_frac: list[float] = series.start_soc_frac.tolist()
 
     def start_state(self) -> PlantState:
         """Stores at their start charge, tanks full, previous output free."""
-        soc = self.series.start_soc_frac
+        soc = self.start_soc_frac
         return PlantState(
             energy_kwh=tuple(
                 soc[i] * kwh for i, kwh in enumerate(self.capacity.storage_kwh)
@@ -158,20 +164,20 @@ class PeriodEquations:
         cost = []
         for i, energy_kwh in enumerate(state.energy_kwh):
             missing = self._column(f"missing_kwh_{i}_{name}", 0)
-            start_kwh = self.series.start_soc_frac[i] * self.capacity.storage_kwh[i]
+            start_kwh = self.start_soc_frac[i] * self.capacity.storage_kwh[i]
             self._row(missing >= start_kwh - energy_kwh, f"missing_{i}_{name}")
-            cost.append(self.series.stored_energy_price_per_kwh[i] * missing)
+            cost.append(float(self.series.stored_energy_price_per_kwh[i]) * missing)
         return pulp.lpSum(cost)
 
     def normal_supply_cost(self, row: int) -> Expression:
         """What the load less solar and wind would cost if everything were in service."""
         renewable_kw = pulp.lpSum(
-            self.series.availability[row, i] * self.capacity.generator_kw[i]
+            self.availability[row][i] * self.capacity.generator_kw[i]
             for i, unit in enumerate(self.study.generators)
-            if not unit.technology == "dispatchable"
+            if unit.technology is not Technology.DISPATCHABLE
         )
-        bought_kw = float(self.series.load_kw[row].sum()) - renewable_kw
-        return self.series.price_per_kwh[row] * self.series.period_h * bought_kw
+        bought_kw = sum(self.load_kw[row]) - renewable_kw
+        return self.price_per_kwh[row] * self.series.period_h * bought_kw
 
     # ---- one rule each ----------------------------------------------------------------------
 
@@ -194,7 +200,7 @@ class PeriodEquations:
         """Neighbour supplies that are closed, up to their spare power."""
         for i in range(len(self.study.supplies)):
             if self._supply_feeds(case, i):
-                spare_kw = self.series.supply_kw[case.row, i]
+                spare_kw = float(self.series.supply_kw[case.row, i])
                 period.supply_kw[i] = self._column(f"supply_kw_{i}_{case.name}", 0, spare_kw)
                 period.supply_kvar[i] = self._column(f"supply_kvar_{i}_{case.name}")
 
@@ -210,7 +216,7 @@ class PeriodEquations:
         if case.service.generator_may_run[i]:
             output = period.generator_kw[i] = self._column(f"kw_{name}", 0)
             period.generator_kvar[i] = self._column(f"kvar_{name}")
-            self._row(output <= self.series.availability[case.row, i] * kw, f"available_{name}")
+            self._row(output <= self.availability[case.row][i] * kw, f"available_{name}")
             self._add_rating(output, period.generator_kvar[i], kw, name)
         output, previous = period.generator_kw[i], before.generator_kw[i]
         if unit.ramp_frac_per_period is not None and previous is not None:
@@ -260,7 +266,7 @@ class PeriodEquations:
         by_section = self.study.settings.load_control is LoadControl.SECTION
         share_of_section: dict[int, Expression] = {}
         for i, load in enumerate(self.study.loads):
-            bus, load_kw = self.feeder.load_bus[i], float(self.series.load_kw[case.row, i])
+            bus, load_kw = self.feeder.load_bus[i], self.load_kw[case.row][i]
             name = f"{i}_{case.name}"
             if not case.service.bus_live[bus]:
                 period.shed_kw[i] = Expression(constant=load_kw)
@@ -292,7 +298,7 @@ class PeriodEquations:
                 limits = (self.feeder.source_v_sq_pu, self.feeder.source_v_sq_pu)
             period.v_sq_pu[bus] = self._column(f"v_sq_pu_{bus}_{case.name}", *limits)
             period.surplus_kw[bus] = self._column(f"surplus_kw_{bus}_{case.name}", 0)
-            kvar = self.feeder.capacitor_kvar[bus]
+            kvar = float(self.feeder.capacitor_kvar[bus])
             if kvar > 0:
                 column = self._column(f"capacitor_kvar_{bus}_{case.name}", 0, kvar)
                 period.capacitor_kvar[bus] = column
@@ -308,10 +314,10 @@ class PeriodEquations:
             p = period.line_kw[i] = self._column(f"kw_{name}")
             q = period.line_kvar[i] = self._column(f"kvar_{name}")
             if self.feeder.rating_kva[i] < float("inf"):
-                self._add_rating(p, q, Expression(constant=self.feeder.rating_kva[i]), name)
-            ratio_sq = (1.0 + self.feeder.boost_frac[i]) ** 2
-            drop_p = v_sq_drop_per_kw(self.feeder.r_ohm[i], self.feeder.base_kv) * p
-            drop_q = v_sq_drop_per_kw(self.feeder.x_ohm[i], self.feeder.base_kv) * q
+                self._add_rating(p, q, Expression(constant=float(self.feeder.rating_kva[i])), name)
+            ratio_sq = float((1.0 + self.feeder.boost_frac[i]) ** 2)
+            drop_p = v_sq_drop_per_kw(float(self.feeder.r_ohm[i]), self.feeder.base_kv) * p
+            drop_q = v_sq_drop_per_kw(float(self.feeder.x_ohm[i]), self.feeder.base_kv) * q
             self._row(v_to == ratio_sq * v_from - drop_p - drop_q, f"drop_{name}")
 
     def _add_balance(self, case: Case, period: OperatedPeriod) -> None:
@@ -335,7 +341,7 @@ class PeriodEquations:
                 kw[bus].append(item_kw)
                 kvar[bus].append(item_kvar)
         for i, bus in enumerate(feeder.load_bus):
-            load_kw, load_kvar = self.series.load_kw[case.row, i], self.series.load_kvar[case.row, i]
+            load_kw, load_kvar = self.load_kw[case.row][i], self.load_kvar[case.row][i]
             kvar_per_kw = load_kvar / load_kw if load_kw > 0 else 0.0
             kw[bus].append(period.shed_kw[i] - load_kw)
             kvar[bus].append(kvar_per_kw * period.shed_kw[i] - load_kvar)
@@ -375,7 +381,7 @@ class PeriodEquations:
             pulp.lpSum(following_output) <= settings.island_ratio * rated_kw, f"ratio_{name}"
         )
         served = pulp.lpSum(
-            float(self.series.load_kw[case.row, i]) - period.shed_kw[i]
+            self.load_kw[case.row][i] - period.shed_kw[i]
             for i, bus in enumerate(self.feeder.load_bus)
             if bus in island.buses
         )
@@ -385,7 +391,7 @@ class PeriodEquations:
     def _cost(self, case: Case, period: OperatedPeriod) -> Expression:
         """Energy bought less sold, fuel, surplus and trips, and load shed by its price now."""
         settings, series = self.study.settings, self.series
-        price = series.price_per_kwh[case.row]
+        price = self.price_per_kwh[case.row]
         cost = [price * period.import_kw]
         cost += [price * kw for kw in period.supply_kw]
         if series.export_price_per_kwh is not None:

@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from xlplan.base.codes import Code
-from xlplan.base.errors import Finding, Level, Origin
+from xlplan.base.errors import Finding, Level
 from xlplan.base.units import pct_from_frac
 from xlplan.network.feeder import Feeder
 from xlplan.network.tree import RadialTree, radial_tree
@@ -27,7 +27,7 @@ VOLTAGE_TOLERANCE_PU = 1e-9
 
 
 class StageLike(Protocol):
-    """What the voltage check needs of one stage of an outage event."""
+    """What the check needs of one stage of an outage event (the record's own layer is later)."""
 
     @property
     def line_live(self) -> BoolArray: ...
@@ -41,13 +41,29 @@ class StageLike(Protocol):
     def islands(self) -> tuple[tuple[int, ...], ...]: ...
 
 
+class IslandLike(Protocol):
+    """The buses of an island that something forms."""
+
+    @property
+    def buses(self) -> tuple[int, ...]: ...
+
+
+class PeriodLike(Protocol):
+    """The islands formed in one period."""
+
+    @property
+    def islands(self) -> tuple[IslandLike, ...]: ...
+
+
 class ScenarioLike(Protocol):
-    """What the voltage check needs of a scenario (its record lives in a later layer)."""
+    """What the check needs of a scenario."""
 
     @property
     def name(self) -> str: ...
     @property
     def stages(self) -> tuple[StageLike, ...]: ...
+    @property
+    def service(self) -> tuple[PeriodLike, ...]: ...
 
 
 def no_load_v_sq(feeder: Feeder, tree: RadialTree, root_v_sq: float) -> FloatArray:
@@ -73,95 +89,118 @@ def check_no_load_voltage(
 ) -> list[Finding]:
     """Faults where the voltage with nothing flowing leaves a band, in service or in an event.
 
-    Complete recourse rests on it: all shed, all units at 0, no-load voltage has to be feasible
-    (model.md section 4). Parts fed by a source hold the source's voltage there; in an island the
-    level is free, so only the ratio of its highest to its lowest voltage has to fit the band.
+    Parts fed by a source hold the source's voltage there; a normal feeder has to fit both bands,
+    since the source feeds all of it in some events too. In an island the level is free, so only
+    the ratio of its highest to its lowest voltage has to fit the band of outage events; islands
+    that nothing forms are dead and have none.
+
+    Parameters
+    ----------
+    study, feeder : of one study, radial
+    scenarios_by_window : scenarios of each window, by its name
 
     Returns
     -------
     list of Finding, one per place and band, at the boost of the last boosted line on the way to
     the bus, or at the source voltage where no line on the way has a boost
     """
-    settings = study.settings
-    normal_band = (settings.vmin_pu, settings.vmax_pu)
-    event_band = (settings.vmin_event_pu, settings.vmax_event_pu)
-    found: dict[tuple[str, str, str], Finding] = {}
-
-    def add(place: tuple[Origin, str, str], band: str, message: str, hint: str) -> None:
-        origin, key, value = place
-        found.setdefault(
-            (origin.sheet, origin.cell(key), band),
-            Finding(
-                level=Level.FAULT,
-                code=Code.NO_LOAD_VOLTAGE,
-                sheet=origin.sheet,
-                cell=origin.cell(key),
-                key=key,
-                value=value,
-                message=message,
-                hint=hint,
-            ),
-        )
-
-    def check_fed(tree: RadialTree, limits: tuple[float, float], band: str, when: str) -> None:
-        v_pu = np.sqrt(no_load_v_sq(feeder, tree, feeder.source_v_sq_pu))
-        for i_bus in tree.order:
-            if limits[0] - VOLTAGE_TOLERANCE_PU <= v_pu[i_bus] <= limits[1] + VOLTAGE_TOLERANCE_PU:
-                continue
-            add(
-                _voltage_place(study, feeder, tree.path_lines(i_bus)),
-                band,
-                f"with nothing flowing, bus {feeder.bus_ids[i_bus]} has {v_pu[i_bus]:.4f} p.u. "
-                f"{when}, outside the limits for {band}, {limits[0]:g} to {limits[1]:g} p.u.",
-                "Change the boost, the source voltage or the limits.",
-            )
-
-    closed = ~feeder.normally_open
-    tree = radial_tree(feeder, closed, [feeder.source])
-    check_fed(tree, normal_band, "normal service", "in normal service")
-    check_fed(tree, event_band, "outage events", "as long as the source feeds it")
-    seen: set[tuple[object, ...]] = set()
+    check = _Check(study, feeder)
+    tree = radial_tree(feeder, ~feeder.normally_open, [feeder.source])
+    check.fed_part(tree, is_event=False, when="in normal service")
+    check.fed_part(tree, is_event=True, when="while the source feeds all of the feeder")
     for window, scenarios in scenarios_by_window.items():
         for scenario in scenarios:
+            when = f'in "{scenario.name}" ({window})'
+            formed = {island.buses for period in scenario.service for island in period.islands}
             for stage in scenario.stages:
-                sources = [int(feeder.supply_bus[i]) for i in stage.closed_supplies]
-                if stage.source_live and stage.bus_live[feeder.source]:
-                    sources.append(feeder.source)
-                key = (stage.line_live.tobytes(), stage.bus_live.tobytes(), tuple(sources))
-                if key in seen:
-                    continue
-                seen.add(key)
-                when = f'in "{scenario.name}" ({window})'
-                check_fed(
-                    radial_tree(feeder, stage.line_live, sources), event_band, "outage events", when
-                )
-                for island in stage.islands:
-                    tree = radial_tree(feeder, stage.line_live, [island[0]])
-                    v_pu = np.sqrt(no_load_v_sq(feeder, tree, 1.0))[list(island)]
-                    if v_pu.max() / v_pu.min() <= event_band[1] / event_band[0] * (
-                        1.0 + VOLTAGE_TOLERANCE_PU
-                    ):
-                        continue
-                    high, low = island[int(v_pu.argmax())], island[int(v_pu.argmin())]
-                    path = radial_tree(feeder, stage.line_live, [low]).path_lines(high)
-                    add(
-                        _voltage_place(study, feeder, path),
-                        "outage events",
-                        f"with nothing flowing, bus {feeder.bus_ids[high]} is "
-                        f"{pct_from_frac(v_pu.max() / v_pu.min() - 1.0):.1f} % above bus "
-                        f"{feeder.bus_ids[low]} of the same island {when}: no voltage of the "
-                        f"island puts both between {event_band[0]:g} and {event_band[1]:g} p.u.",
-                        "Change the boost or the limits for outage events.",
-                    )
-    return list(found.values())
+                check.stage(stage, formed, when)
+    return list(check.found.values())
 
 
-def _voltage_place(study: Study, feeder: Feeder, path: tuple[int, ...]) -> tuple[Origin, str, str]:
-    """Origin, key and value of what sets a no-load voltage: the last boost on the way."""
-    for i_line in reversed(path):
-        if feeder.boost_frac[i_line] != 0.0:
-            boost_pct = pct_from_frac(float(feeder.boost_frac[i_line]))
-            return study.lines[i_line].origin, "boost_pct", f"{boost_pct:g}"
-    key = "source_voltage_pu"
-    origin = study.settings.origin_of.get(key, NOWHERE)
-    return origin, key, f"{study.settings.source_voltage_pu:g}"
+class _Check:
+    """The findings so far; a topology that was seen before is passed over."""
+
+    def __init__(self, study: Study, feeder: Feeder) -> None:
+        self.study = study
+        self.feeder = feeder
+        self.found: dict[tuple[str, str, bool], Finding] = {}
+        self._seen: set[tuple[object, ...]] = set()
+
+    def stage(self, stage: StageLike, formed: set[tuple[int, ...]], when: str) -> None:
+        """One stage: what its sources feed, and its islands."""
+        feeder = self.feeder
+        sources = [int(feeder.supply_bus[i]) for i in stage.closed_supplies]
+        if stage.source_live and stage.bus_live[feeder.source]:
+            sources.append(feeder.source)
+        lines = stage.line_live.tobytes()
+        if self._is_new(lines, tuple(sources)):
+            tree = radial_tree(feeder, stage.line_live, sources)
+            self.fed_part(tree, is_event=True, when=when)
+        for island in stage.islands:
+            if island in formed and self._is_new(lines, island):
+                self.island(stage.line_live, island, when)
+
+    def _is_new(self, *key: object) -> bool:
+        """True the first time."""
+        is_new = key not in self._seen
+        self._seen.add(key)
+        return is_new
+
+    def fed_part(self, tree: RadialTree, is_event: bool, when: str) -> None:
+        """Buses fed from a source stay inside the band."""
+        settings = self.study.settings
+        low, high = settings.vmin_pu, settings.vmax_pu
+        band = "normal service"
+        if is_event:
+            low, high, band = settings.vmin_event_pu, settings.vmax_event_pu, "outage events"
+        v_pu = np.sqrt(no_load_v_sq(self.feeder, tree, self.feeder.source_v_sq_pu))
+        for i_bus in tree.order:
+            if low - VOLTAGE_TOLERANCE_PU <= v_pu[i_bus] <= high + VOLTAGE_TOLERANCE_PU:
+                continue
+            self._add(
+                tree.path_lines(i_bus),
+                is_event,
+                f"with nothing flowing, bus {self.feeder.bus_ids[i_bus]} has {v_pu[i_bus]:.4f} "
+                f"p.u. {when}, outside the limits for {band}, {low:g} to {high:g} p.u.",
+            )
+
+    def island(self, line_live: BoolArray, island: tuple[int, ...], when: str) -> None:
+        """The highest voltage of an island over its lowest fits the band."""
+        feeder, settings = self.feeder, self.study.settings
+        tree = radial_tree(feeder, line_live, [island[0]])
+        v_pu = np.sqrt(no_load_v_sq(feeder, tree, 1.0))[list(island)]
+        ratio = float(v_pu.max() / v_pu.min())
+        if ratio <= settings.vmax_event_pu / settings.vmin_event_pu + VOLTAGE_TOLERANCE_PU:
+            return
+        high, low = island[int(v_pu.argmax())], island[int(v_pu.argmin())]
+        self._add(
+            radial_tree(feeder, line_live, [low]).path_lines(high),
+            True,
+            f"with nothing flowing, bus {feeder.bus_ids[high]} is "
+            f"{pct_from_frac(ratio - 1.0):.1f} % above bus {feeder.bus_ids[low]} of the same "
+            f"island {when}: no voltage of the island puts both between "
+            f"{settings.vmin_event_pu:g} and {settings.vmax_event_pu:g} p.u.",
+        )
+
+    def _add(self, path: tuple[int, ...], is_event: bool, message: str) -> None:
+        """One finding per place and band, at what sets the voltage: the last boost on the way."""
+        key, value = "source_voltage_pu", self.study.settings.source_voltage_pu
+        origin = self.study.settings.origin_of.get(key, NOWHERE)
+        for i_line in path:
+            boost_frac = float(self.feeder.boost_frac[i_line])
+            if boost_frac != 0.0:
+                key, value = "boost_pct", pct_from_frac(boost_frac)
+                origin = self.study.lines[i_line].origin
+        # Records made without a workbook all stand nowhere, so the message tells them apart.
+        place = (origin.sheet, origin.cell(key) if origin.sheet else message, is_event)
+        finding = Finding(
+            level=Level.FAULT,
+            code=Code.NO_LOAD_VOLTAGE,
+            sheet=origin.sheet,
+            cell=origin.cell(key),
+            key=key,
+            value=f"{value:g}",
+            message=message,
+            hint="Change the boost, the source voltage or the limits.",
+        )
+        self.found.setdefault(place, finding)

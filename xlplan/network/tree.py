@@ -63,10 +63,10 @@ def radial_tree(feeder: Feeder, line_live: BoolArray, roots: Iterable[int]) -> R
     RadialTree; two roots joined by live lines count as a loop
     """
     neighbours: list[list[tuple[int, int]]] = [[] for _ in range(feeder.n_bus)]
-    for i_line in np.flatnonzero(line_live):
+    for i_line in (int(i) for i in np.flatnonzero(line_live)):
         i, j = int(feeder.from_bus[i_line]), int(feeder.to_bus[i_line])
-        neighbours[i].append((int(i_line), j))
-        neighbours[j].append((int(i_line), i))
+        neighbours[i].append((i_line, j))
+        neighbours[j].append((i_line, i))
     parent_line = np.full(feeder.n_bus, -1, dtype=np.int64)
     parent_bus = np.full(feeder.n_bus, -1, dtype=np.int64)
     root_of_bus = np.full(feeder.n_bus, -1, dtype=np.int64)

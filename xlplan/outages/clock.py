@@ -79,7 +79,7 @@ class Clock:
     @property
     def n_scenario(self) -> int:
         """Number of scenarios."""
-        return self.rate_per_year.shape[1]
+        return int(self.rate_per_year.shape[1])
 
     def thinned(self, avoided_frac: ArrayLike) -> Clock:
         """Clock of the real failures, where a share of each scenario's potential ones is avoided.

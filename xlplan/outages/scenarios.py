@@ -14,37 +14,33 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from xlplan.base.units import HOURS_PER_YEAR
 from xlplan.network.feeder import Feeder
 from xlplan.outages.faults import bulk_supply_stages, failed_unit_stages, isolation_and_repair
+from xlplan.outages.rates import (
+    BULK_SUPPLY,
+    GENERATOR,
+    LINE,
+    STORAGE,
+    Component,
+    components,
+    rate_by_period,
+    rate_divisors,
+)
 from xlplan.outages.records import Cause, Scenario, ServicePeriod, Stage
 from xlplan.outages.sections import Sections, build_sections
 from xlplan.outages.service import n_period_of, normal_service, service_periods
-from xlplan.study.study import OutageClass, RateBasis, RepairSpread, Study
-from xlplan.study.windows import WindowSeries, build_window_series
+from xlplan.study.study import RepairSpread, Study
+from xlplan.study.windows import WindowSeries
 
 FloatArray = NDArray[np.float64]
 
 __all__ = ["build_scenarios", "normal_service", "rate_divisors", "service_periods"]
-
-LINE, GENERATOR, STORAGE, BULK_SUPPLY = "line", "generator", "storage", "bulk supply"
 
 REPAIR_SPREAD = {
     RepairSpread.NONE: ((1.0, 1.0),),
     RepairSpread.THREE_POINT: ((0.5, 0.4), (1.0, 0.4), (2.0, 0.2)),
 }
 """(multiple of the repair time, chance); the three points are those of model.md section 2."""
-
-
-@dataclass(frozen=True)
-class _Component:
-    """Something that can fail, at a typed yearly rate above 0."""
-
-    kind: str
-    position: int
-    ident: str
-    outage_class: OutageClass
-    failures_per_year: float
 
 
 @dataclass(frozen=True)
@@ -96,32 +92,6 @@ def _stage_key(stage: Stage) -> tuple[object, ...]:
     )
 
 
-def rate_divisors(study: Study) -> dict[str, float]:
-    """What each class's typed rate is divided by, so that a year adds up to it.
-
-    Returns
-    -------
-    dict by outage class: ``sum_w n_w sum_k mu_c(w,k) dt / 8760`` where the rates hold for all the
-    year, 1 where they are those of fair weather
-    """
-    if study.settings.rate_basis is RateBasis.FAIR_WEATHER:
-        return {c.outage_class: 1.0 for c in study.outage_classes}
-    exposed = sheltered = 0.0
-    for window in study.windows:
-        series = build_window_series(study, window)
-        share = window.occurrences_per_year * series.period_h / HOURS_PER_YEAR
-        sheltered += share * series.n_period
-        exposed += share * float(_exposure(series).sum())
-    return {
-        c.outage_class: exposed if c.is_weather_exposed else sheltered for c in study.outage_classes
-    }
-
-
-def _exposure(series: WindowSeries) -> FloatArray:
-    """``mu`` of weather-exposed classes, shape (n_period,)."""
-    return series.failure_multiplier * series.failure_shape
-
-
 def build_scenarios(
     study: Study,
     feeder: Feeder,
@@ -146,52 +116,13 @@ def build_scenarios(
     divisors = rate_divisors(study) if divisors is None else divisors
     builder = _EventBuilder(study, feeder, build_sections(feeder) if sections is None else sections)
     merged: dict[tuple[object, ...], list[_Event]] = {}
-    for component in _components(study):
-        rate = _rate_by_period(component, series, divisors)
+    for component in components(study):
+        rate = rate_by_period(component, series, divisors)
         if not rate.any():
             continue
         for event in builder.events(component, rate, series.repair_multiplier):
             merged.setdefault(event.key, []).append(event)
     return _with_unique_names([_merge(events) for events in merged.values()])
-
-
-def _components(study: Study) -> Iterator[_Component]:
-    """All that can fail: closed lines, existing units, the bulk supply."""
-    classes = {c.outage_class: c for c in study.outage_classes if c.is_included}
-
-    def component(
-        kind: str, position: int, ident: str, name: str | None, length: float = 0.0
-    ) -> Iterator[_Component]:
-        outage_class = classes.get(name) if name is not None else None
-        if outage_class is None:
-            return
-        rate = outage_class.failures_per_year + outage_class.failures_per_length_year * length
-        if rate > 0.0:
-            yield _Component(kind, position, ident, outage_class, rate)
-
-    for i, line in enumerate(study.lines):
-        if not line.normally_open:
-            yield from component(LINE, i, line.line, line.outage_class, line.length)
-    for i, generator in enumerate(study.generators):
-        if generator.existing_kw > 0.0:
-            yield from component(GENERATOR, i, generator.generator, generator.outage_class)
-    for i, unit in enumerate(study.storage):
-        if unit.existing_kw > 0.0:
-            yield from component(STORAGE, i, unit.storage, unit.outage_class)
-    settings = study.settings
-    yield from component(BULK_SUPPLY, 0, settings.source_bus, settings.bulk_supply_outage_class)
-
-
-def _rate_by_period(
-    component: _Component, series: WindowSeries, divisors: Mapping[str, float]
-) -> FloatArray:
-    """Failures per year in each period, shape (n_period,); 0 if the class can never strike."""
-    divisor = divisors[component.outage_class.outage_class]
-    if divisor <= 0.0:
-        return np.zeros(series.n_period)
-    is_exposed = component.outage_class.is_weather_exposed
-    exposure = _exposure(series) if is_exposed else np.ones(series.n_period)
-    return component.failures_per_year / divisor * exposure
 
 
 class _EventBuilder:
@@ -206,7 +137,7 @@ class _EventBuilder:
         ] = {}
 
     def events(
-        self, component: _Component, rate: FloatArray, repair_multiplier: float
+        self, component: Component, rate: FloatArray, repair_multiplier: float
     ) -> Iterator[_Event]:
         """Events of one component, with their shares of its rate.
 
@@ -224,7 +155,7 @@ class _EventBuilder:
             for copy, share in copies:
                 yield _scaled(copy, share)
 
-    def _event(self, component: _Component, rate: FloatArray, repair_h: float) -> _Event:
+    def _event(self, component: Component, rate: FloatArray, repair_h: float) -> _Event:
         """The event in which every unit starts."""
         outage_class = component.outage_class
         period_h = self.study.settings.period_h
@@ -263,7 +194,7 @@ class _EventBuilder:
         )
 
     def _stages(
-        self, component: _Component, n_isolation: int, n_period: int
+        self, component: Component, n_isolation: int, n_period: int
     ) -> tuple[tuple[Stage, ...], tuple[ServicePeriod, ...]]:
         """Stages and service of a failure."""
         place = component.position
@@ -284,7 +215,7 @@ class _EventBuilder:
             self._cache[key] = (stages, service)
         return self._cache[key]
 
-    def _hardening(self, component: _Component) -> tuple[tuple[int, float], ...]:
+    def _hardening(self, component: Component) -> tuple[tuple[int, float], ...]:
         """(measure, share of failures avoided) of a line, ascending by share."""
         if component.kind != LINE:
             return ()

@@ -120,7 +120,8 @@ def _fed_by_bulk(feeder: Feeder, stage: Stage) -> BoolArray:
     """(n_bus,), True where the bulk supply reaches the bus."""
     if not stage.source_live:
         return np.zeros(feeder.n_bus, dtype=bool)
-    return stage.bus_live & (stage.part_of_bus == stage.part_of_bus[feeder.source])
+    is_fed: BoolArray = stage.bus_live & (stage.part_of_bus == stage.part_of_bus[feeder.source])
+    return is_fed
 
 
 def _service_period(

@@ -226,7 +226,7 @@ RUN_FACTS = (
 
 FINDINGS = (
     Column("level", "Level", "text"),
-    Column("place", "Place", "wrap"),
+    Column("place", "Place", "text"),
     Column("key", "Field", "text"),
     Column("value", "As typed", "wrap"),
     Column("message", "What was noticed", "wrap"),
@@ -248,3 +248,67 @@ CAUTION_LINES = (
     Column("caution", "What to keep in mind", "wrap"),
     Column("decides", "Who or what settles it", "wrap"),
 )
+
+YEARLY = "{money}/year"
+MONEY = "{money}"
+
+STATEMENT = (
+    (
+        "Yearly cost that the utility bears",
+        (
+            ("investment", "Investment", YEARLY, "money", "", "From the Plan sheet: capital after grants times each asset's capital recovery factor"),
+            ("fixed_om", "Fixed O&M of what is bought", YEARLY, "money", "", "From the Plan sheet; what exists already is sunk and not counted"),
+            ("energy", "Energy bought less energy sold", YEARLY, "money", "", "Grid and neighbour supplies at the purchase price"),
+            ("fuel", "Fuel and other running cost", YEARLY, "money", "", "Generators' energy at their running cost"),
+            ("demand", "Demand charge", YEARLY, "money", "", "On the highest grid purchase planned in the windows that count for demand"),
+            ("repair", "Repairs", YEARLY, "money", "", "Repair cost per failure times failures"),
+            ("surplus", "Surplus and tripping", YEARLY, "money", "", "Energy that finds no use, at its small price"),
+            ("end_of_window", "Stored energy at the end of windows", YEARLY, "money", "", "Energy missing against the start; below 0 where repairs outlast a window"),
+            ("utility", "Utility's own cost", YEARLY, "money", "total", "Sum of the parts above"),
+        ),
+    ),
+    (
+        "Yearly cost that customers bear",
+        (
+            ("interruption", "Interruptions by outages", YEARLY, "money", "", "By customer class and by hours since the outage began; survey averages"),
+            ("normal_shedding", "Load shed in normal service", YEARLY, "money", "", "Priced as the first hour of an interruption; a planning violation where above 0"),
+            ("customers", "Customers' outage cost", YEARLY, "money", "total", "Sum of the parts above"),
+        ),
+    ),
+    (
+        "Total and how sure it is",
+        (
+            ("total", "Total yearly cost", YEARLY, "money", "total", "Utility's own cost and customers' outage cost"),
+            ("low", "95 % interval of the total: low", YEARLY, "money", "", "Statistical figure of the run; it does not follow changed cells"),
+            ("high", "95 % interval of the total: high", YEARLY, "money", "", "Both ends are equal where every path was counted"),
+            ("difference", "Against the existing feeder", YEARLY, "change", "bold", "Below 0: cheaper than the existing feeder"),
+            ("difference_low", "95 % interval of the difference: low", YEARLY, "change", "", "Same random numbers for all alternatives, differences taken path by path"),
+            ("difference_high", "95 % interval of the difference: high", YEARLY, "change", "", "If 0 lies in the interval, the two cannot be told apart"),
+            ("bound", "Lower bound", YEARLY, "money", "", "No plan that the alternative allows costs less; none for a plan that is no optimum"),
+            ("gap", "Gap", "share of cost", "percent", "", "Upper end of the interval less the lower bound, over the cost"),
+        ),
+    ),
+    (
+        "Capital",
+        (
+            ("gross", "Capital before grants", MONEY, "money", "", "From the Plan sheet"),
+            ("grants", "Grants", MONEY, "money", "", "Capital before less capital after grants"),
+            ("net", "Capital after grants", MONEY, "money", "total", "From the Plan sheet; this is what a budget caps"),
+            ("extra_capital", "Extra capital against existing", MONEY, "change", "", "Capital after grants less that of the existing feeder"),
+        ),
+    ),
+    (
+        "Is it worth it",
+        (
+            ("saving", "Yearly saving before investment", YEARLY, "change", "", "All costs but investment, existing feeder less this alternative, customers included"),
+            ("payback", "Simple payback, customers included", "years", "years", "", "Extra capital over that saving, without interest"),
+            ("own_saving", "Utility's own saving before investment", YEARLY, "change", "", "The same without customers' outage cost"),
+            ("own_payback", "Simple payback on the utility's own money", "years", "years", "", "Extra capital over the utility's own saving, without interest"),
+            ("extra_investment", "Extra yearly investment", YEARLY, "change", "", "Investment less that of the existing feeder"),
+            ("ratio", "Benefit-cost ratio", "ratio", "hours", "", "Yearly saving before investment over extra yearly investment; above 1 it earns its keep"),
+            ("present_total", "Present value of the total yearly cost", MONEY, "money", "", "Over the years and at the discount rate above, end-of-year; assets renewed at the same real price"),
+            ("present_difference", "Present value against existing", MONEY, "change", "", "Below 0: cheaper than the existing feeder over those years"),
+        ),
+    ),
+)
+"""Rows of the Alternatives sheet: block, then (key, label, unit, look, modifier, what it is)."""

@@ -194,7 +194,8 @@ class CutPool:
         """Invariants, for tests."""
         assert sum(len(p) for p in self._positions) == self.n == len(self._by_group)
         assert all(np.all(self._member[p] == m) for m, p in enumerate(self._positions) if p)
-        assert np.isfinite(self.intercept).all() and np.isfinite(self.state_slope).all()
+        assert np.isfinite(self.intercept).all()
+        assert np.isfinite(self.state_slope).all()
 
 
 @dataclass(frozen=True)
@@ -283,6 +284,10 @@ class DualBound:
         self.matrix = sparse.csr_array(
             (program.value, program.index, program.start), shape=(program.n_row, program.n_col)
         )
+        self.patch = family.patch
+        self.patch_base = program.value[family.patch]
+        self.patch_row = np.searchsorted(program.start, family.patch, side="right") - 1
+        self.patch_column = program.index[family.patch]
         self.theta_lower = theta_lower
         self.capacity_lower = capacity_lower
         self.capacity_upper = capacity_upper
@@ -306,7 +311,7 @@ class DualBound:
     ) -> CutBatch:
         """Cuts of one member and of those that follow it by ``changes``, from one ``pi``.
 
-        Only what changes from member to member is worked out anew.
+        Only what changes from member to member is worked out anew; the family has no patch.
         """
         walk = _Walk(self, member, pi, exits)
         terms = [walk.terms()]
@@ -376,6 +381,9 @@ class _Walk:
         self.d = self.cost.copy()
         if len(used):
             self.d -= matrix[used].T @ self.pi[used]
+        if len(bound.patch):
+            step = self.pi[bound.patch_row] * (member.patch_value - bound.patch_base)
+            np.subtract.at(self.d, bound.patch_column, step)
         # Cuts of the children, ordered by exit so that one exit is one slice.
         order = np.argsort(exits.exit, kind="stable")
         self.cut_exit, self.cut_pi = exits.exit[order], exits.pi[order]

@@ -53,7 +53,7 @@ _TERMINATIONS = {
 class _QuietHighs(highspy.Highs):  # type: ignore[misc]
     """Turns output off before anything else: the wrapper's callbacks print a banner."""
 
-    def enableCallbacks(self) -> None:  # noqa: N802 (name given by the base class)
+    def enableCallbacks(self) -> None:
         self.setOptionValue("output_flag", False)
 
 

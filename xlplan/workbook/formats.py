@@ -47,9 +47,11 @@ class Role(StrEnum):
     VALUE_NEEDED_TEXT = "needed setting, text"
     VALUE_NEEDED_NUMBER = "needed setting, number"
     LABEL = "label"
+    STEP = "number of a step"
     UNIT = "unit"
     NOTE = "wrapped note"
     PLAIN = "plain line"
+    MEANING = "text beside a label"
     LINK = "link"
     SAMPLE_NEEDED = "colour key: needed"
     SAMPLE_OPTIONAL = "colour key: optional"
@@ -59,7 +61,8 @@ class Role(StrEnum):
 _EDGE = {"border": 1, "border_color": RULE}
 _TOP = {"valign": "top"}
 _WRAPPED = {"text_wrap": True, **_TOP}
-_VALUE = {**_EDGE, **_TOP}
+_INDENTED = {"align": "left", "indent": 1}
+_VALUE = {"indent": 1, **_EDGE, **_TOP}
 
 _PROPERTIES: dict[Role, dict[str, Any]] = {
     Role.TITLE: {"bold": True, "font_size": 15, "font_color": PINE},
@@ -69,6 +72,7 @@ _PROPERTIES: dict[Role, dict[str, Any]] = {
         "bold": True,
         "font_color": PAPER,
         "bg_color": PINE,
+        **_INDENTED,
         **_WRAPPED,
         **_EDGE,
     },
@@ -76,13 +80,14 @@ _PROPERTIES: dict[Role, dict[str, Any]] = {
         "bold": True,
         "font_color": INK,
         "bg_color": MIST,
+        **_INDENTED,
         **_WRAPPED,
         **_EDGE,
     },
-    Role.HINT: {"italic": True, "font_size": 8, "font_color": FAINT_INK},
-    Role.TEXT: {"num_format": TEXT_FORMAT},
-    Role.NUMBER: {"align": "right"},
-    Role.TIME: {"num_format": TIME_FORMAT, "align": "left"},
+    Role.HINT: {**_INDENTED, "italic": True, "font_size": 8, "font_color": FAINT_INK},
+    Role.TEXT: {"num_format": TEXT_FORMAT, **_INDENTED},
+    Role.NUMBER: {"align": "right", "indent": 1},
+    Role.TIME: {"num_format": TIME_FORMAT, **_INDENTED},
     Role.VALUE_TEXT: {"num_format": TEXT_FORMAT, "align": "left", **_VALUE},
     Role.VALUE_NUMBER: {"align": "right", **_VALUE},
     Role.VALUE_NEEDED_TEXT: {
@@ -92,14 +97,16 @@ _PROPERTIES: dict[Role, dict[str, Any]] = {
         **_VALUE,
     },
     Role.VALUE_NEEDED_NUMBER: {"align": "right", "bg_color": STRAW, **_VALUE},
-    Role.LABEL: {**_EDGE, **_TOP},
-    Role.UNIT: {"font_color": FAINT_INK, **_EDGE, **_WRAPPED},
-    Role.NOTE: {"font_color": FAINT_INK, **_EDGE, **_WRAPPED},
-    Role.PLAIN: {**_TOP},
-    Role.LINK: {"font_color": LINK, "underline": 1, **_EDGE, **_TOP},
-    Role.SAMPLE_NEEDED: {"bg_color": STRAW, **_EDGE},
-    Role.SAMPLE_OPTIONAL: {"bg_color": PAPER, **_EDGE},
-    Role.SAMPLE_ALERT: {"bg_color": ALERT_FILL, "font_color": ALERT_INK, **_EDGE},
+    Role.LABEL: {**_INDENTED, **_EDGE, **_TOP},
+    Role.STEP: {"align": "center", **_EDGE, **_TOP},
+    Role.UNIT: {"font_color": FAINT_INK, **_INDENTED, **_EDGE, **_WRAPPED},
+    Role.NOTE: {"font_color": FAINT_INK, **_INDENTED, **_EDGE, **_WRAPPED},
+    Role.PLAIN: {"align": "left", **_TOP},
+    Role.MEANING: {**_INDENTED, **_TOP},
+    Role.LINK: {"font_color": LINK, "underline": 1, **_INDENTED, **_EDGE, **_TOP},
+    Role.SAMPLE_NEEDED: {**_INDENTED, "bg_color": STRAW, **_EDGE},
+    Role.SAMPLE_OPTIONAL: {**_INDENTED, "bg_color": PAPER, **_EDGE},
+    Role.SAMPLE_ALERT: {**_INDENTED, "bg_color": ALERT_FILL, "font_color": ALERT_INK, **_EDGE},
 }
 
 NEEDED_CELLS = {"bg_color": STRAW, **_EDGE}

@@ -52,7 +52,7 @@ def hint(field: Field) -> str:
 
 def plain(value: object) -> str:
     """A default or an example in plain writing."""
-    return f"{value:g}" if isinstance(value, float) else str(value)
+    return f"{value:.12g}" if isinstance(value, float) else str(value)
 
 
 def limits(field: Field) -> str:
@@ -175,6 +175,6 @@ def _number(field: Field, cell: str) -> dict[str, Any]:
         "validate": "custom",
         "value": "=AND(" + ",".join(tests) + ")" if len(tests) > 1 else f"={tests[0]}",
         "error_type": "warning",
-        "error_title": "Unusual value",
+        "error_title": "Outside the limits",
         "error_message": f"This should be {whole}{allowed}. The unit is in the heading.",
     }

@@ -196,7 +196,9 @@ def new_workbook(path: Path, title: str) -> Iterator[tuple[Any, Formats]]:
     try:
         handle, name = tempfile.mkstemp(prefix=".", suffix=".part", dir=folder)
     except OSError as error:
-        raise ResultFileError(f"Cannot write into the folder '{folder}': {error.strerror}.") from error
+        raise ResultFileError(
+            f"Cannot write into the folder '{folder}': {error.strerror}."
+        ) from error
     os.close(handle)
     part = Path(name)
     try:

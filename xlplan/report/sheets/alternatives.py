@@ -6,7 +6,6 @@ numbers; investment and fixed O&M are taken from the Plan sheet; everything else
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass
 
 from xlsxwriter.utility import xl_rowcol_to_cell
@@ -17,24 +16,21 @@ from xlplan.report import money
 from xlplan.report.grid import Cell, Formula, write_cell
 from xlplan.report.safe_book import SafeBook
 from xlplan.report.sheets.plan import DISCOUNT_RATE, PlanCells
-from xlplan.report.tables import ALTERNATIVES
+from xlplan.report.tables import ALTERNATIVES, STATEMENT
 
 STUDY_LIFE = "study_life_years"
 RATE_ROW, LIFE_ROW, HEAD_ROW = 3, 4, 6
 FIRST_PLAN_COL = 2
-
-
-@dataclass(frozen=True)
-class Line:
-    """One row of the statement; ``cell`` gives the content for plan i."""
-
-    key: str
-    label: str
-    unit: str
-    look: str
-    note: str
-    cell: Callable[[int], Cell]
-    modifier: str = ""
+NUMBER_PARTS = (
+    "energy",
+    "fuel",
+    "demand",
+    "repair",
+    "surplus",
+    "end_of_window",
+    "interruption",
+    "normal_shedding",
+)
 
 
 @dataclass(frozen=True)
@@ -47,13 +43,14 @@ class AlternativesCells:
         """Relative address on the sheet."""
         return str(xl_rowcol_to_cell(self.row_of[key], FIRST_PLAN_COL + i_plan))
 
-    def fixed(self, key: str, i_plan: int) -> str:
-        """Absolute address on the sheet."""
-        return str(xl_rowcol_to_cell(self.row_of[key], FIRST_PLAN_COL + i_plan, True, True))
+    def base(self, key: str) -> str:
+        """The existing feeder's figure: the column stays where the formula is copied."""
+        return str(xl_rowcol_to_cell(self.row_of[key], FIRST_PLAN_COL, False, True))
 
     def away(self, key: str, i_plan: int) -> str:
         """Address for other sheets."""
-        return f"'{ALTERNATIVES}'!{self.fixed(key, i_plan)}"
+        cell = xl_rowcol_to_cell(self.row_of[key], FIRST_PLAN_COL + i_plan, True, True)
+        return f"'{ALTERNATIVES}'!{cell}"
 
 
 def write(book: SafeBook, result: StudyResult, plan_cells: PlanCells) -> AlternativesCells:
@@ -61,28 +58,143 @@ def write(book: SafeBook, result: StudyResult, plan_cells: PlanCells) -> Alterna
     sheet = book.sheet(ALTERNATIVES)
     sheet.head(
         "Alternatives side by side",
-        "Yearly cost from its parts to totals, then capital, present value and payback, all "
-        "against the existing feeder. Blue figures can be changed; formulas follow.",
+        "Yearly cost from its parts to totals, then capital, payback and present value, against "
+        "the existing feeder. Blue figures can be changed; formulas follow.",
     )
     _write_assumptions(book, result)
-    lines = _cost_lines(result, plan_cells) + _money_lines(result)
+    cells, last_row = _place()
+    note_col = FIRST_PLAN_COL + len(result.plans)
+    for i, plan in enumerate(result.plans):
+        mark = "  (least cost)" if plan.name == result.recommended != "Least-cost plan" else ""
+        sheet.text(HEAD_ROW, FIRST_PLAN_COL + i, plan.name + mark, "heading_right")
+    for col, title in ((0, "Figure"), (1, "Unit"), (note_col, "What it is")):
+        sheet.text(HEAD_ROW, col, title, "heading")
+    sheet.height(HEAD_ROW, 30)
+    content = [
+        {**_cost_cells(plan, i, cells, plan_cells), **_worth_cells(result, plan, i, cells)}
+        for i, plan in enumerate(result.plans)
+    ]
+    for block, lines in STATEMENT:
+        sheet.text(cells.row_of[block], 0, block, "section")
+        for key, label, unit, look, modifier, note in lines:
+            row = cells.row_of[key]
+            extra = (modifier,) if modifier else ()
+            sheet.text(row, 0, label, "text", *extra)
+            sheet.text(row, 1, book.words(unit), "subtitle", *extra)
+            for i, by_key in enumerate(content):
+                write_cell(sheet, row, FIRST_PLAN_COL + i, by_key[key], look, *extra)
+            sheet.text(row, note_col, note, "note", *(("total",) if extra == ("total",) else ()))
+    sheet.widths([40, 15] + [17] * len(result.plans) + [92])
+    sheet.freeze(HEAD_ROW + 1, FIRST_PLAN_COL)
+    sheet.print_setup(last_row, note_col)
+    return cells
+
+
+def _write_assumptions(book: SafeBook, result: StudyResult) -> None:
+    """The two figures that formulas of several sheets use, each with a name."""
+    sheet = book.sheet(ALTERNATIVES)
+    rate, years = result.real_discount_rate_frac, money.STUDY_LIFE_YEARS
+    sheet.text(RATE_ROW, 0, "Real discount rate (per year)")
+    sheet.number(RATE_ROW, 1, rate, "percent", "input")
+    sheet.text(RATE_ROW, 2, "As given in the study", "note")
+    sheet.text(LIFE_ROW, 0, "Years that present values cover")
+    sheet.number(LIFE_ROW, 1, years, "years", "input")
+    sheet.text(LIFE_ROW, 2, "Common practice; not an input of the study", "note")
+    book.define_name(DISCOUNT_RATE, ALTERNATIVES, f"$B${RATE_ROW + 1}")
+    book.define_name(STUDY_LIFE, ALTERNATIVES, f"$B${LIFE_ROW + 1}")
+
+
+def _place() -> tuple[AlternativesCells, int]:
+    """Row of every block and figure, and the last row."""
     row_of: dict[str, int] = {}
     row = HEAD_ROW + 1
-    for block, block_lines in lines:
-        row += 1 if row > HEAD_ROW + 1 else 0
+    for block, lines in STATEMENT:
         row_of[block] = row
-        for line in block_lines:
+        for line in lines:
             row += 1
-            row_of[line.key] = row
-        row += 1
-    cells = AlternativesCells(row_of)
-    _CURRENT.append(cells)
-    try:
-        _write_lines(book, result, lines, cells)
-    finally:
-        _CURRENT.pop()
-    note_col = FIRST_PLAN_COL + len(result.plans)
-    sheet.widths([42, 16] + [17] * len(result.plans) + [88])
-    sheet.freeze(HEAD_ROW + 1, FIRST_PLAN_COL)
-    sheet.print_setup(row, note_col)
-    return cells
+            row_of[line[0]] = row
+        row += 2
+    return AlternativesCells(row_of), row - 2
+
+
+def _cost_cells(
+    plan: PlanResult, i: int, cells: AlternativesCells, plan_cells: PlanCells
+) -> dict[str, Cell]:
+    """Cost parts, subtotals and total."""
+    costs = plan.costs
+
+    def column_sum(first: str, last: str, value: float) -> Formula:
+        return Formula(f"=SUM({cells.here(first, i)}:{cells.here(last, i)})", value)
+
+    parts: dict[str, Cell] = {key: getattr(costs, key) for key in NUMBER_PARTS}
+    totals = plan_cells.totals
+    return {
+        **parts,
+        "investment": Formula(f"={totals.away(i, 'investment')}", costs.investment),
+        "fixed_om": Formula(f"={totals.away(i, 'fixed_om')}", costs.fixed_om),
+        "utility": column_sum("investment", "end_of_window", costs.utility),
+        "customers": column_sum("interruption", "normal_shedding", costs.customers),
+        "total": Formula(f"={cells.here('utility', i)}+{cells.here('customers', i)}", costs.total),
+        "low": plan.cost_interval[0],
+        "high": plan.cost_interval[1],
+        "bound": plan.lower_bound,
+        "gap": plan.gap_frac,
+        "gross": Formula(f"={totals.away(i, 'gross')}", plan.capital_gross),
+        "net": Formula(f"={totals.away(i, 'net')}", plan.capital_cost),
+        "grants": Formula(
+            f"={cells.here('gross', i)}-{cells.here('net', i)}",
+            plan.capital_gross - plan.capital_cost,
+        ),
+    }
+
+
+def _worth_cells(
+    result: StudyResult, plan: PlanResult, i: int, cells: AlternativesCells
+) -> dict[str, Cell]:
+    """Difference to the existing feeder, saving, payback, benefit-cost ratio, present value."""
+    base = money.baseline(result)
+    extra_capital = plan.capital_cost - base.capital_cost
+    extra_investment = plan.costs.investment - base.costs.investment
+    factor = money.annuity_factor(result.real_discount_rate_frac, money.STUDY_LIFE_YEARS)
+    difference = plan.costs.total - base.costs.total
+
+    def less_base(key: str, value: float) -> Formula:
+        return Formula(f"={cells.here(key, i)}-{cells.base(key)}", value)
+
+    def saving_on(key: str, base_cost: float, cost: float) -> tuple[Formula, float]:
+        value = money.saving(base_cost, base.costs.investment, cost, plan.costs.investment)
+        text = (
+            f"=({cells.base(key)}-{cells.base('investment')})"
+            f"-({cells.here(key, i)}-{cells.here('investment', i)})"
+        )
+        return Formula(text, value), value
+
+    saving_cell, saving = saving_on("total", base.costs.total, plan.costs.total)
+    own_cell, own_saving = saving_on("utility", base.costs.utility, plan.costs.utility)
+
+    def payback(saving_key: str, value: float) -> Cell:
+        if not money.buys_anything(plan):
+            return money.NOTHING_BOUGHT
+        saved = cells.here(saving_key, i)
+        text = f'=IF({saved}<=0,"{money.NO_PAYBACK}",{cells.here("extra_capital", i)}/{saved})'
+        return Formula(text, money.payback_years(extra_capital, value))
+
+    ratio: Cell = money.NOTHING_BOUGHT
+    if extra_investment > 0.0:
+        text = f"={cells.here('saving', i)}/{cells.here('extra_investment', i)}"
+        ratio = Formula(text, saving / extra_investment)
+    present = f"=-PV({DISCOUNT_RATE},{STUDY_LIFE},{cells.here('total', i)})"
+    return {
+        "difference": less_base("total", difference),
+        "difference_low": plan.difference_interval[0],
+        "difference_high": plan.difference_interval[1],
+        "extra_capital": less_base("net", extra_capital),
+        "extra_investment": less_base("investment", extra_investment),
+        "saving": saving_cell,
+        "payback": payback("saving", saving),
+        "own_saving": own_cell,
+        "own_payback": payback("own_saving", own_saving),
+        "ratio": ratio,
+        "present_total": Formula(present, plan.costs.total * factor),
+        "present_difference": less_base("present_total", difference * factor),
+    }

@@ -1,0 +1,239 @@
+"""Native charts, all of one manner: Arial, light gridlines, axis titles with units, no effects.
+
+Names and values of series are always given as cells, never as text: text that begins with ``=``
+would be taken for a formula.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Any
+
+from xlsxwriter.chart import Chart
+
+from xlplan.report.looks import BLACK, FONT, GREY, GRID_GREY, INK
+from xlplan.report.safe_book import SafeBook
+
+CellRange = list[str | int]
+
+PIXELS_PER_ROW = 20
+"""Height of a sheet row of standard height."""
+
+MAX_TICK_LABELS = 12
+
+
+@dataclass(frozen=True)
+class Series:
+    """One series: its name and values as cells, its colour.
+
+    ``labels``: value of each point, to label those large enough to hold a label; ``dash``: line
+    style, which keeps lines apart in a grey print.
+    """
+
+    name: CellRange
+    values: CellRange
+    colour: str
+    labels: tuple[float, ...] = ()
+    label_colour: str = BLACK
+    dash: str = "solid"
+    width_pt: float = 2.0
+
+
+def bars(
+    book: SafeBook,
+    title: str,
+    categories: CellRange,
+    series: Sequence[Series],
+    axis_title: str,
+    is_stacked: bool = False,
+    label_above: float = 0.0,
+    label_format: str = "#,##0",
+    has_labels: bool = True,
+) -> Chart:
+    """Horizontal bars from 0, first category on top; stacked segments from ``label_above`` on."""
+    chart = book.new_chart("bar", "stacked" if is_stacked else None)
+    for one in series:
+        options: dict[str, Any] = {
+            "name": one.name,
+            "categories": categories,
+            "values": one.values,
+            "fill": {"color": one.colour},
+            "border": {"color": INK, "width": 0.5},
+            "gap": 60,
+        }
+        if is_stacked:
+            options["overlap"] = 100
+        if has_labels and (one.labels or not is_stacked):
+            options["data_labels"] = _labels(one, is_stacked, label_above, label_format)
+        chart.add_series(options)
+    chart.set_y_axis({"reverse": True, "num_font": _font(9), "line": {"color": GREY}})
+    chart.set_x_axis(
+        {**_value_axis(axis_title, label_format), "label_position": "high", "min": None}
+    )
+    return _finish(chart, title)
+
+
+def _labels(one: Series, is_stacked: bool, above: float, number_format: str) -> dict[str, Any]:
+    colour = one.label_colour if is_stacked else INK
+    labels: dict[str, Any] = {
+        "value": True,
+        "num_format": number_format,
+        "font": {**_font(8), "color": colour},
+    }
+    if is_stacked:
+        labels["position"] = "center"
+        labels["custom"] = [
+            None if abs(value) >= above else {"delete": True} for value in one.labels
+        ]
+    return labels
+
+
+def stacked_columns_and_line(
+    book: SafeBook,
+    title: str,
+    categories: CellRange,
+    columns: Sequence[Series],
+    line: Series,
+    axis_title: str,
+    n_point: int,
+) -> Chart:
+    """Columns stacked by period (below 0 where a store charges), a line over them, one axis."""
+    chart = book.new_chart("column", "stacked")
+    for one in columns:
+        chart.add_series(
+            {
+                "name": one.name,
+                "categories": categories,
+                "values": one.values,
+                "fill": {"color": one.colour},
+                "border": {"none": True},
+                "gap": 10,
+                "overlap": 100,
+            }
+        )
+    over = book.new_chart("line")
+    over.add_series(_line_options(line, categories))
+    chart.combine(over)
+    return _finish_over_time(chart, title, axis_title, n_point)
+
+
+def columns_over_time(
+    book: SafeBook, title: str, categories: CellRange, one: Series, axis_title: str, n_point: int
+) -> Chart:
+    """One series of columns over the periods."""
+    chart = book.new_chart("column")
+    chart.add_series(
+        {
+            "name": one.name,
+            "categories": categories,
+            "values": one.values,
+            "fill": {"color": one.colour},
+            "border": {"none": True},
+            "gap": 10,
+        }
+    )
+    chart.set_legend({"none": True})
+    return _finish_over_time(chart, title, axis_title, n_point, has_legend=False)
+
+
+def lines_over_time(
+    book: SafeBook,
+    title: str,
+    categories: CellRange,
+    series: Sequence[Series],
+    axis_title: str,
+    n_point: int,
+    axis_max: float | None = None,
+    number_format: str = "#,##0",
+) -> Chart:
+    """Lines over the periods."""
+    chart = book.new_chart("line")
+    for one in series:
+        chart.add_series(_line_options(one, categories))
+    return _finish_over_time(
+        chart, title, axis_title, n_point, axis_max=axis_max, number_format=number_format
+    )
+
+
+def lines_over_numbers(
+    book: SafeBook,
+    title: str,
+    x_values: CellRange,
+    series: Sequence[Series],
+    x_title: str,
+    y_title: str,
+    y_range: tuple[float, float],
+) -> Chart:
+    """Straight lines over a numeric axis; ``y_range`` because automatic axes cut such lines."""
+    chart = book.new_chart("scatter", "straight")
+    for one in series:
+        chart.add_series({**_line_options(one, x_values), "marker": {"type": "none"}})
+    chart.set_x_axis({**_value_axis(x_title, "#,##0"), "min": 0, "major_gridlines": {}})
+    low, high = y_range
+    chart.set_y_axis({**_value_axis(y_title, "#,##0"), "min": low, "max": high})
+    return _finish(chart, title)
+
+
+def _line_options(one: Series, categories: CellRange) -> dict[str, Any]:
+    line = {"color": one.colour, "width": one.width_pt, "dash_type": one.dash}
+    return {
+        "name": one.name,
+        "categories": categories,
+        "values": one.values,
+        "line": line,
+        "marker": {"type": "none"},
+    }
+
+
+def _font(size: float, is_bold: bool = False) -> dict[str, Any]:
+    return {"name": FONT, "size": size, "bold": is_bold, "color": INK}
+
+
+def _value_axis(title: str, number_format: str) -> dict[str, Any]:
+    return {
+        "name": title,
+        "name_font": _font(9),
+        "num_font": _font(9),
+        "num_format": number_format,
+        "major_gridlines": {"visible": True, "line": {"color": GRID_GREY, "width": 0.5}},
+        "line": {"color": GREY},
+    }
+
+
+def _finish_over_time(
+    chart: Chart,
+    title: str,
+    axis_title: str,
+    n_point: int,
+    axis_max: float | None = None,
+    number_format: str = "#,##0",
+    has_legend: bool = True,
+) -> Chart:
+    """Axes of charts over the periods: a dozen time labels at most, below the plot."""
+    step = max(1, -(-n_point // MAX_TICK_LABELS))
+    chart.set_x_axis(
+        {
+            "name": "Start of period",
+            "name_font": _font(9),
+            "num_font": {**_font(8), "rotation": -45},
+            "interval_unit": step,
+            "interval_tick": step,
+            "label_position": "low",
+            "line": {"color": GREY},
+            "text_axis": True,
+        }
+    )
+    axis = _value_axis(axis_title, number_format)
+    if axis_max is not None:
+        axis.update({"min": 0, "max": axis_max})
+    chart.set_y_axis(axis)
+    return _finish(chart, title, has_legend)
+
+
+def _finish(chart: Chart, title: str, has_legend: bool = True) -> Chart:
+    chart.set_title({"name": title, "name_font": _font(11, is_bold=True), "overlay": False})
+    if has_legend:
+        chart.set_legend({"position": "bottom", "font": _font(9)})
+    chart.set_chartarea({"border": {"color": GRID_GREY}})
+    return chart

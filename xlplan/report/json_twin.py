@@ -1,0 +1,157 @@
+"""The JSON twin: the same results for programs and tests, under stable keys.
+
+Money is per year in the study's currency unless the key says capital. A number that is not known
+is ``null``; there is no NaN. Lists of results that a run does not compute are empty.
+"""
+
+from __future__ import annotations
+
+import json
+import math
+from pathlib import Path
+from typing import Any
+
+from xlplan.base.units import pct_from_frac
+from xlplan.compare.study_result import StudyResult
+from xlplan.evaluate.results import PlanResult
+from xlplan.report.target import replace_whole
+
+SCHEMA = 1
+COST_PARTS = (
+    "investment",
+    "fixed_om",
+    "energy",
+    "fuel",
+    "demand",
+    "repair",
+    "interruption",
+    "normal_shedding",
+    "surplus",
+    "end_of_window",
+)
+
+
+def json_document(result: StudyResult) -> dict[str, Any]:
+    """The whole document, ready for ``json.dumps``."""
+    return {
+        "schema": SCHEMA,
+        "study": result.study_name,
+        "status": result.status,
+        "method": result.method,
+        "seed": int(result.seed),
+        "fingerprint": result.fingerprint,
+        "recommended": result.recommended,
+        "alternatives": [_alternative(plan) for plan in result.plans],
+        "method_reason": result.method_reason,
+        "hardening": [],
+        "repair_time": [],
+        "budget": [],
+        "sensitivities": [],
+        "voltages": [],
+        "value_of_outage_planning": _number(result.value_of_outage_planning),
+        "scenarios": int(result.scenarios),
+        "findings": [
+            {
+                "level": finding.level.value,
+                "sheet": finding.sheet,
+                "cell": finding.cell,
+                "key": finding.key,
+                "value": finding.value,
+                "message": f"{finding.message} {finding.hint}".strip(),
+            }
+            for finding in result.findings
+        ],
+        "seconds": {
+            "read": _number(result.read_seconds),
+            "solve": _number(result.solve_seconds),
+            "write": _number(result.write_seconds),
+        },
+    }
+
+
+def write_json(result: StudyResult, path: Path) -> None:
+    """Writes the document whole or not at all; a file of that name is replaced.
+
+    Raises ResultFileError if the folder does not take it.
+    """
+    text = json.dumps(json_document(result), indent=2, ensure_ascii=False, allow_nan=False)
+    replace_whole(path, text + "\n")
+
+
+def _number(value: float | None) -> float | None:
+    """A finite number as a plain float; ``null`` otherwise."""
+    if value is None or not math.isfinite(value):
+        return None
+    return float(value)
+
+
+def _pair(interval: tuple[float, float]) -> list[float | None]:
+    return [_number(interval[0]), _number(interval[1])]
+
+
+def _alternative(plan: PlanResult) -> dict[str, Any]:
+    costs, indices, risk = plan.costs, plan.indices, plan.risk
+    gap = None if plan.gap_frac is None else pct_from_frac(plan.gap_frac)
+    return {
+        "name": plan.name,
+        "kind": plan.kind,
+        "annual_cost": {
+            "total": _number(costs.total),
+            **{part: _number(getattr(costs, part)) for part in COST_PARTS},
+        },
+        "capital_cost": _number(plan.capital_cost),
+        "lower_bound": _number(plan.lower_bound),
+        "cost_interval": _pair(plan.cost_interval),
+        "gap_pct": _number(gap),
+        "purchases": [
+            {
+                "asset": asset.asset,
+                "type": asset.kind,
+                "kw": _number(asset.kw),
+                "kwh": _number(asset.kwh),
+                "bought": bool(asset.is_bought),
+            }
+            for asset in plan.purchases
+        ],
+        "reliability": {
+            "eens_kwh_per_year": _number(indices.eens_kwh),
+            "saifi": _number(indices.saifi),
+            "maifi": _number(indices.maifi),
+            "saidi_h": _number(indices.saidi_h),
+            "caidi_h": _number(indices.caidi_h),
+            "asai": _number(indices.asai),
+        },
+        "windows": [
+            {
+                "window": window.window,
+                "expected_cost": _number(window.expected_cost),
+                "expected_events": _number(window.expected_events),
+                "eens_kwh": _number(window.eens_kwh),
+            }
+            for window in plan.windows
+        ],
+        "buses": [
+            {
+                "bus": bus.bus,
+                "eens_kwh_per_year": _number(bus.eens_kwh),
+                "interruptions_per_year": _number(bus.interruptions),
+                "outage_h_per_year": _number(bus.outage_h),
+            }
+            for bus in plan.buses
+        ],
+        "classes": [
+            {"customer_class": one.customer_class, "eens_kwh_per_year": _number(one.eens_kwh)}
+            for one in plan.classes
+        ],
+        "bound_upper": _number(plan.bound_upper),
+        "risk": {
+            "mean": _number(risk.mean),
+            "p50": _number(risk.p50),
+            "p95": _number(risk.p95),
+            "cvar95": _number(risk.cvar95),
+        },
+        "against_existing": {
+            "difference": _number(plan.difference),
+            "interval": _pair(plan.difference_interval),
+        },
+    }

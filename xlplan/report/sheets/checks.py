@@ -1,0 +1,219 @@
+"""Checks: every reconciliation with its live formula, and one overall line.
+
+First those of the run (the study's, then each plan's), then those of this workbook: its own sums
+against what the run found. A word in capitals says what a difference means: FAIL, a fault of the
+run; LOOK, for the planner to judge; CHANGED, a figure was altered after the run.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+from xlplan.compare.study_result import StudyResult
+from xlplan.evaluate.results import CheckLine
+from xlplan.report.grid import Cell, Formula, Grid
+from xlplan.report.money import baseline
+from xlplan.report.safe_book import SafeBook
+from xlplan.report.sheets.alternatives import AlternativesCells
+from xlplan.report.sheets.reliability import ReliabilityCells
+from xlplan.report.tables import CHECK_LINES, CHECKS
+
+PASS, FAIL, LOOK, CHANGED = "PASS", "FAIL", "LOOK", "CHANGED"
+ALL_PASS = "PASS: all checks agree"
+SOME_LOOK = "LOOK: no check fails, some are for you to judge"
+SOME_FAIL = "FAIL: some checks do not agree"
+OVERALL_ROW, OVERALL_COL = 2, 1
+
+CENT = 0.005
+"""Half a cent: money that is equal to a cent."""
+
+RELATIVE = 1e-6
+"""Sums of energy: far above rounding of sums, far below what a reader could see."""
+
+
+@dataclass(frozen=True)
+class ChecksCells:
+    """The overall line: its address for other sheets, and its words."""
+
+    overall: str
+    words: str
+
+
+@dataclass(frozen=True)
+class _Line:
+    about: str
+    name: str
+    what: str
+    left: Cell
+    right: Cell
+    tolerance: float
+    otherwise: str
+
+
+def write(
+    book: SafeBook,
+    result: StudyResult,
+    alternatives: AlternativesCells,
+    reliability: ReliabilityCells,
+) -> ChecksCells:
+    """Writes the sheet."""
+    sheet = book.sheet(CHECKS)
+    sheet.head(
+        "Do the numbers agree with each other?",
+        "Each row sets two figures that should agree side by side. FAIL: a fault of the run. LOOK: "
+        "for you to judge. CHANGED: a figure of this workbook was altered after the run.",
+    )
+    lines = [_run_line("Study", line) for line in result.checks]
+    lines += [_run_line(plan.name, line) for plan in result.plans for line in plan.checks]
+    lines += _money_lines(result, alternatives) + _energy_lines(result, reliability)
+    grid = Grid(CHECKS, OVERALL_ROW + 2, CHECK_LINES, len(lines))
+    rows = [_row(line, grid, i) for i, line in enumerate(lines)]
+    grid.write(sheet, rows, heading_lines=3)
+    outcomes = grid.span("outcome")
+    words = _overall([_value(row["outcome"]) for row in rows])
+    text = (
+        f'=IF(COUNTIF({outcomes},"{FAIL}")>0,"{SOME_FAIL}",'
+        f'IF(COUNTIF({outcomes},"{PASS}")=ROWS({outcomes}),"{ALL_PASS}","{SOME_LOOK}"))'
+    )
+    sheet.text(OVERALL_ROW, 0, "Overall", "status")
+    sheet.formula(OVERALL_ROW, OVERALL_COL, text, words, "status")
+    sheet.status_fill(OVERALL_ROW, OVERALL_COL, OVERALL_ROW, OVERALL_COL)
+    col = grid.col("outcome")
+    sheet.status_fill(grid.row(0), col, grid.row(len(lines) - 1), col)
+    sheet.widths([24, 46, 62, 17, 17, 13, 13, 12, 11])
+    sheet.freeze(grid.top + 1, 2)
+    sheet.print_setup(grid.below - 1, len(CHECK_LINES) - 1, heading_row=grid.top)
+    return ChecksCells(f"'{CHECKS}'!$B${OVERALL_ROW + 1}", words)
+
+
+def _value(cell: Cell) -> str:
+    return str(cell.value if isinstance(cell, Formula) else cell)
+
+
+def _overall(outcomes: list[str]) -> str:
+    if FAIL in outcomes:
+        return SOME_FAIL
+    return ALL_PASS if all(outcome == PASS for outcome in outcomes) else SOME_LOOK
+
+
+def _run_line(about: str, line: CheckLine) -> _Line:
+    otherwise = LOOK if line.is_warning else FAIL
+    return _Line(about, line.name, line.what, line.left, line.right, line.tolerance, otherwise)
+
+
+def _row(line: _Line, grid: Grid, i: int) -> dict[str, Cell]:
+    """One check; a figure that is not finite cannot agree with anything."""
+    row: dict[str, Cell] = {
+        "about": line.about,
+        "name": line.name,
+        "what": line.what,
+        "left": line.left,
+        "right": line.right,
+        "tolerance": line.tolerance,
+        "otherwise": line.otherwise,
+    }
+    left, right = _number(line.left), _number(line.right)
+    if not all(math.isfinite(number) for number in (left, right, line.tolerance)):
+        return {**row, "difference": None, "outcome": line.otherwise}
+    left_cell, right_cell = grid.here(i, "left"), grid.here(i, "right")
+    test = f"ABS({left_cell}-{right_cell})<={grid.here(i, 'tolerance')}"
+    agrees = abs(left - right) <= line.tolerance
+    return {
+        **row,
+        "difference": Formula(f"={left_cell}-{right_cell}", left - right),
+        "outcome": Formula(
+            f'=IF({test},"{PASS}",{grid.here(i, "otherwise")})',
+            PASS if agrees else line.otherwise,
+        ),
+    }
+
+
+def _number(cell: Cell) -> float:
+    if isinstance(cell, Formula):
+        return float(cell.value)
+    return float("nan") if cell is None else float(cell)
+
+
+def _money_lines(result: StudyResult, cells: AlternativesCells) -> list[_Line]:
+    """Totals of this workbook against the run, and parts against totals."""
+    lines = []
+    for i, plan in enumerate(result.plans):
+        total = Formula(f"={cells.away('total', i)}", plan.costs.total)
+        lines.append(
+            _Line(
+                plan.name,
+                "Total of the Alternatives sheet",
+                "Total yearly cost by the formulas, and as the run found it",
+                total,
+                plan.costs.total,
+                CENT,
+                CHANGED,
+            )
+        )
+        parts = (
+            f"=SUM({cells.away('investment', i)},{cells.away('fixed_om', i)},"
+            + ",".join(cells.away(key, i) for key in ("energy", "fuel", "demand", "repair"))
+            + f",{cells.away('surplus', i)},{cells.away('end_of_window', i)},"
+            f"{cells.away('interruption', i)},{cells.away('normal_shedding', i)})"
+        )
+        lines.append(
+            _Line(
+                plan.name,
+                "Sum of the ten cost parts",
+                "All cost parts one by one, and the total by way of the subtotals",
+                Formula(parts, plan.costs.total),
+                total,
+                CENT,
+                FAIL,
+            )
+        )
+        capital = Formula(f"={cells.away('net', i)}", plan.capital_cost)
+        lines.append(
+            _Line(
+                plan.name,
+                "Capital after grants",
+                "Capital by the formulas of the Plan sheet, and as the run found it",
+                capital,
+                plan.capital_cost,
+                CENT,
+                CHANGED,
+            )
+        )
+    return lines
+
+
+def _energy_lines(result: StudyResult, cells: ReliabilityCells) -> list[_Line]:
+    """Energy not supplied by bus, class and window, each against the index."""
+    base, best = baseline(result), result.plan(result.recommended)
+    lines = []
+    first = 0
+    for side, plan in (("base", base), ("plan", best)):
+        if side == "plan" and plan.name == base.name:
+            continue
+        i_plan = [one.name for one in result.plans].index(plan.name)
+        eens = plan.indices.eens_kwh
+        index = Formula(f"={cells.indices.away(2 * i_plan, 'eens')}", eens)
+        n_window = len(plan.windows)
+        sums = (
+            ("bus", cells.buses, f"eens_{side}", 0, len(plan.buses), plan.buses),
+            ("customer class", cells.classes, f"eens_{side}", 0, len(plan.classes), plan.classes),
+            ("window", cells.windows, "eens_year", first, n_window, plan.windows),
+        )
+        for word, grid, key, start, n, records in sums:
+            if n == 0:
+                continue
+            value = sum(r.eens_kwh * getattr(r, "occurrences_per_year", 1.0) for r in records)
+            lines.append(
+                _Line(
+                    plan.name,
+                    f"Energy not supplied by {word}",
+                    f"Sum over every {word} (kWh/year), and the index EENS",
+                    Formula(f"=SUM({grid.span_away(key, start, n)})", value),
+                    index,
+                    max(CENT, RELATIVE * abs(eens)),
+                    FAIL,
+                )
+            )
+        first += n_window
+    return lines

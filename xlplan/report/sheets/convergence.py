@@ -1,0 +1,125 @@
+"""Convergence: how far the solver got, and what each of its numbers means."""
+
+from __future__ import annotations
+
+import math
+
+from xlplan.compare.study_result import StudyResult
+from xlplan.evaluate.results import ConvergenceRow, PlanResult
+from xlplan.report import charts
+from xlplan.report.grid import Cell, Grid
+from xlplan.report.looks import BLACK, BLUE, VERMILION
+from xlplan.report.safe_book import SafeBook
+from xlplan.report.tables import CONVERGENCE, METHODS, PASSES
+
+MEANINGS = (
+    "Lower bound: no plan on offer costs less a year than this; it is proven, not sampled.",
+    "Cost of following the plan: what the plan is expected to cost when it is run without knowing "
+    "when something will fail. Where it is sampled it is a statistical figure with a 95 % "
+    "interval: in about 19 of 20 runs with other seeds the interval would hold the true cost.",
+    "Gap: upper end of that interval less the lower bound, as a share of the cost; what a better "
+    "plan could at most still save. It is in part statistical where the cost is.",
+    "A run that was stopped gives its best plan with the gap it had; nothing is rounded in its "
+    "favour.",
+)
+
+
+def write(book: SafeBook, result: StudyResult) -> None:
+    """Writes the sheet."""
+    sheet = book.sheet(CONVERGENCE)
+    best = result.plan(result.recommended)
+    target = f"target {result.gap_target_frac:.2%}".replace("%", " %")
+    sheet.head("How far the solver got", f"Status: {result.status}; {target}; seed {result.seed}.")
+    row = 3
+    for meaning in MEANINGS:
+        sheet.paragraph(row, 0, 9, meaning, 150)
+        row += 1
+    row += 1
+    sheet.text(row, 0, "Alternatives", "section")
+    methods = Grid(CONVERGENCE, row + 1, METHODS, len(result.plans))
+    marked = [i for i, plan in enumerate(result.plans) if plan.name == best.name]
+    methods.write(sheet, [_method_row(plan) for plan in result.plans], marked, heading_lines=3)
+    sheet.text(methods.below, 0, f"Why this method: {result.method_reason}", "note")
+    row = methods.below + 2
+    passes = Grid(CONVERGENCE, row + 1, PASSES, len(best.convergence))
+    sheet.text(row, 0, f"Passes of the solver: {best.name}", "section")
+    passes.write(sheet, [_pass_row(one) for one in best.convergence], heading_lines=3)
+    _write_chart(book, best, passes, passes.below + 1)
+    sheet.widths([26, 17, 17, 17, 17, 10, 15, 13, 30, 12])
+    sheet.freeze(2, 0)
+    sheet.print_setup(passes.below + 21, len(METHODS) - 1)
+
+
+def _method_row(plan: PlanResult) -> dict[str, Cell]:
+    counted = (
+        "every path counted" if plan.is_enumerated else f"{plan.n_sample:,} sampled continuations"
+    )
+    return {
+        "name": plan.name,
+        "bound": plan.lower_bound,
+        "cost": plan.costs.total,
+        "low": plan.cost_interval[0],
+        "high": plan.cost_interval[1],
+        "gap": plan.gap_frac,
+        "status": plan.status,
+        "method": plan.method,
+        "counted": counted,
+        "seconds": plan.solve_seconds,
+    }
+
+
+def _known(number: float) -> Cell:
+    """A number, or a blank where a pass has none (text would be drawn as 0)."""
+    return number if math.isfinite(number) else ""
+
+
+def _pass_row(one: ConvergenceRow) -> dict[str, Cell]:
+    return {
+        "seconds": one.seconds,
+        "bound": _known(one.lower_bound),
+        "estimate": _known(one.estimate),
+        "upper": _known(one.upper_end),
+        "gap": _known(one.gap_frac),
+        "note": one.note,
+    }
+
+
+def _write_chart(book: SafeBook, best: PlanResult, passes: Grid, row: int) -> None:
+    """Bound and cost against solving time; the axis holds what came within sight of the end."""
+    if len(best.convergence) < 2:
+        return
+    known = [
+        number
+        for one in best.convergence
+        for number in (one.lower_bound, one.estimate, one.upper_end)
+        if math.isfinite(number)
+    ]
+    if not known:
+        return
+    low, high = _axis_range(min(known), max(known))
+    series = [
+        charts.Series(passes.chart_name("upper"), passes.chart_values("upper"), VERMILION, (), dash="dash"),
+        charts.Series(passes.chart_name("estimate"), passes.chart_values("estimate"), BLACK),
+        charts.Series(passes.chart_name("bound"), passes.chart_values("bound"), BLUE, (), width_pt=3),
+    ]
+    chart = charts.lines_over_numbers(
+        book,
+        "Lower bound and cost of following the plan, by solving time",
+        passes.chart_values("seconds"),
+        series,
+        "Solving time (s)",
+        book.words("Yearly cost ({money}/year)"),
+        (low, high),
+    )
+    alt = (
+        "Lines against solving time: the lower bound rising, the cost of following the plan and "
+        "the upper end of its interval coming down towards it."
+    )
+    book.sheet(CONVERGENCE).chart(row, 0, chart, 1000, 20 * charts.PIXELS_PER_ROW - 20, alt)
+
+
+def _axis_range(low: float, high: float) -> tuple[float, float]:
+    """Round ends of an axis that holds all values."""
+    span = max(high - low, abs(high) * 1e-3, 1.0)
+    step = 10.0 ** math.floor(math.log10(span))
+    return math.floor(low / step) * step, math.ceil(high / step) * step

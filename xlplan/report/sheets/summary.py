@@ -1,0 +1,202 @@
+"""Summary: the page for the board, on one landscape sheet.
+
+The finding is a sentence made from the run's numbers by rule; the figures are references to the
+sheets that hold them, so that nothing is calculated twice.
+"""
+
+from __future__ import annotations
+
+from xlplan.compare.study_result import StudyResult
+from xlplan.evaluate.results import PlanResult, Purchase
+from xlplan.report import charts, wording
+from xlplan.report.grid import Cell, Formula, Grid
+from xlplan.report.looks import BLACK, BLUE, NAVY, ORANGE, SKY, VERMILION
+from xlplan.report.safe_book import SafeBook, SafeSheet
+from xlplan.report.sheets.alternatives import AlternativesCells
+from xlplan.report.sheets.cautions import CAUTION_TEXTS
+from xlplan.report.sheets.checks import ChecksCells
+from xlplan.report.sheets.reliability import ReliabilityCells
+from xlplan.report.tables import CAUTIONS, PLAN, SUMMARY, SUMMARY_PLANS
+
+WIDTHS = (25, 13, 14, 14, 13, 13, 14, 13, 13, 13, 13, 13, 16, 13)
+LAST_COL = len(WIDTHS) - 1
+CHART_ROWS = 17
+MAX_BOUGHT = 10
+LEFT_LAST_COL = 5
+RIGHT_COL = 7
+SEGMENTS = (
+    ("upkeep", NAVY, "#FFFFFF"),
+    ("supply", BLUE, "#FFFFFF"),
+    ("other", SKY, BLACK),
+    ("customers", ORANGE, BLACK),
+)
+
+
+def write(
+    book: SafeBook,
+    result: StudyResult,
+    alternatives: AlternativesCells,
+    reliability: ReliabilityCells,
+    checks: ChecksCells,
+) -> None:
+    """Writes the sheet."""
+    sheet = book.sheet(SUMMARY)
+    sheet.widths(WIDTHS)
+    sheet.paragraph(0, 0, LAST_COL, wording.headline(result), 115, "title")
+    sheet.paragraph(1, 0, LAST_COL, wording.consequence(result), 200, "text", "bold")
+    sheet.paragraph(2, 0, LAST_COL, wording.basis(result), 200, "subtitle")
+    grid = Grid(SUMMARY, 4, SUMMARY_PLANS, len(result.plans))
+    rows = [
+        _row(plan, i, grid, alternatives, reliability) for i, plan in enumerate(result.plans)
+    ]
+    marked = [i for i, plan in enumerate(result.plans) if plan.name == result.recommended]
+    grid.write(sheet, rows, marked=marked, heading_lines=5)
+    row = _charts(book, sheet, result, grid, grid.below + 1)
+    left = _purchases(sheet, result, row)
+    right = _uncertain(sheet, result, row)
+    row = max(left, right) + 1
+    sheet.text(row, 0, "Do the numbers agree?", "status")
+    sheet.formula(row, 1, f"={checks.overall}", checks.words, "status")
+    sheet.status_fill(row, 1, row, 1)
+    cautions = f"{len(CAUTION_TEXTS)} cautions apply: read the Cautions sheet before using this"
+    sheet.link(row, RIGHT_COL, CAUTIONS, cautions)
+    note = (
+        "The sentences state what the run found; the table follows the other sheets when figures "
+        "there are changed. Costs are real and before tax."
+    )
+    sheet.text(row + 1, 0, note, "note")
+    sheet.print_setup(row + 1, LAST_COL, is_one_page=True)
+
+
+def _row(
+    plan: PlanResult,
+    i: int,
+    grid: Grid,
+    alternatives: AlternativesCells,
+    reliability: ReliabilityCells,
+) -> dict[str, Cell]:
+    costs = plan.costs
+
+    def from_statement(value: float, *keys: str) -> Formula:
+        return Formula("=" + "+".join(alternatives.away(key, i) for key in keys), value)
+
+    def from_indices(value: float, key: str, offset: int = 0) -> Formula:
+        return Formula(f"={reliability.indices.away(2 * i + offset, key)}", value)
+
+    supply = costs.energy + costs.fuel + costs.demand
+    other = costs.repair + costs.surplus + costs.end_of_window
+    parts = [grid.here(i, key) for key in ("upkeep", "supply", "other")]
+    low, high = plan.difference_interval
+    base_total_gap = alternatives.away("difference", i)
+    return {
+        "name": plan.name,
+        "capital": from_statement(plan.capital_cost, "net"),
+        "upkeep": from_statement(costs.investment + costs.fixed_om, "investment", "fixed_om"),
+        "supply": from_statement(supply, "energy", "fuel", "demand"),
+        "other": from_statement(other, "repair", "surplus", "end_of_window"),
+        "utility": Formula(f"={'+'.join(parts)}", costs.utility),
+        "customers": from_statement(costs.customers, "customers"),
+        "total": Formula(f"={grid.here(i, 'utility')}+{grid.here(i, 'customers')}", costs.total),
+        "difference": Formula(f"={base_total_gap}", 0.0),
+        "low": from_statement(low, "difference_low"),
+        "high": from_statement(high, "difference_high"),
+        "outage_h": from_indices(plan.indices.saidi_h, "saidi"),
+        "outage_fair_h": from_indices(plan.indices_fair.saidi_h, "saidi", 1),
+        "eens": from_indices(plan.indices.eens_kwh, "eens"),
+    }
+
+
+def _charts(book: SafeBook, sheet: SafeSheet, result: StudyResult, grid: Grid, row: int) -> int:
+    """Yearly cost in stacked segments, and outage hours; next free row."""
+    largest = max(abs(plan.costs.total) for plan in result.plans)
+    values = {
+        "upkeep": [p.costs.investment + p.costs.fixed_om for p in result.plans],
+        "supply": [p.costs.energy + p.costs.fuel + p.costs.demand for p in result.plans],
+        "other": [p.costs.repair + p.costs.surplus + p.costs.end_of_window for p in result.plans],
+        "customers": [p.costs.customers for p in result.plans],
+    }
+    cost = charts.bars(
+        book,
+        "Yearly cost: the utility's own parts (blue), then what customers bear (orange)",
+        grid.chart_values("name"),
+        [
+            charts.Series(
+                grid.chart_name(key),
+                grid.chart_values(key),
+                colour,
+                labels=tuple(values[key]),
+                label_colour=label_colour,
+            )
+            for key, colour, label_colour in SEGMENTS
+        ],
+        book.words("Yearly cost ({money}/year)"),
+        is_stacked=True,
+        label_above=0.09 * largest,
+    )
+    height = CHART_ROWS * charts.PIXELS_PER_ROW - 10
+    alt = (
+        "Stacked bars: yearly cost of each alternative, in investment and upkeep; energy, fuel "
+        "and demand; repairs and other; and customers' outage cost."
+    )
+    sheet.chart(row, 0, cost, 760, height, alt)
+    hours = charts.bars(
+        book,
+        "Outage hours per customer in a year",
+        grid.chart_values("name"),
+        [
+            charts.Series(
+                grid.chart_name("outage_h"), grid.chart_values("outage_h"), VERMILION
+            ),
+            charts.Series(
+                grid.chart_name("outage_fair_h"), grid.chart_values("outage_fair_h"), BLUE
+            ),
+        ],
+        "Outage hours per customer (h/year)",
+        label_format="0.00",
+    )
+    alt = (
+        "Bars: outage hours per customer and year of each alternative, all outages, and without "
+        "storms and loss of bulk supply."
+    )
+    sheet.chart(row, RIGHT_COL, hours, 640, height, alt)
+    return row + CHART_ROWS
+
+
+def _purchases(sheet: SafeSheet, result: StudyResult, row: int) -> int:
+    """What to buy, dearest first; next free row."""
+    best = result.plan(result.recommended)
+    bought = sorted((a for a in best.purchases if a.is_bought), key=lambda a: -a.capital_net)
+    sheet.text(row, 0, f"What to buy: {best.name}", "section")
+    row += 1
+    if not bought:
+        sheet.text(row, 0, "Nothing.", "text")
+        return row + 1
+    for asset in bought[:MAX_BOUGHT]:
+        sheet.paragraph(row, 0, LEFT_LAST_COL, _asset_words(asset, result.currency), 95)
+        row += 1
+    if len(bought) > MAX_BOUGHT:
+        sheet.text(row, 0, f"and {len(bought) - MAX_BOUGHT} more on the Plan sheet")
+        row += 1
+    sheet.link(row, 0, PLAN, "Sizes, costs and formulas: Plan sheet")
+    return row + 1
+
+
+def _asset_words(asset: Purchase, currency: str) -> str:
+    """One purchase in words, with its size and capital."""
+    capital = f"capital {wording.money_words(asset.capital_net, currency)} after grants"
+    if asset.kind == "hardening":
+        return f"•  {asset.asset}: hardening of {asset.place}; {capital}"
+    size = f"{asset.kw:,.0f} kW"
+    if asset.kind == "storage":
+        size += f", {asset.kwh:,.0f} kWh"
+    return f"•  {asset.asset}: {asset.kind} at {asset.place}, {size}; {capital}"
+
+
+def _uncertain(sheet: SafeSheet, result: StudyResult, row: int) -> int:
+    """What is uncertain; next free row."""
+    sheet.text(row, RIGHT_COL, "What is uncertain", "section")
+    row += 1
+    for sentence in wording.uncertainties(result):
+        sheet.paragraph(row, RIGHT_COL, LAST_COL, f"•  {sentence}", 112)
+        row += 1
+    return row

@@ -1,0 +1,772 @@
+"""One family's linear program kept warm: members, states and capacities change, the basis stays.
+
+Enters: a state, capacities, the cuts of the children. Leaves: ``NodeOutcome``, and cuts of the
+node's own value. Three things are left out of the program at first and added where the solution
+violates them: lazy rows, the cuts of the children, and the lifting of a gated exit's cuts.
+
+Capacities are fixed here, so a child's cut ``theta >= a + g s + h c`` is the row
+``theta - g s >= a + h c`` whose right side moves with ``c``. Exits that have the same child in
+all members keep their rows for ever; the others have a few slots whose coefficients are rewritten
+when the member changes, for deleting a row that is in the basis would make the next solve cold.
+
+A *gated* exit (model.md section 2) has, for a gate at 0 or 1, the cuts of the right child alone;
+each is lifted, ``cut of child - B gate`` or ``cut of other child - B' (1 - gate)``, when its row is
+made, so that it holds at the other value of the gate too.
+"""
+
+from __future__ import annotations
+
+import logging
+from collections import Counter
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import sparse
+
+from xlplan.model.value_graph import Member, ValueGraph
+from xlplan.solve.cuts import (
+    CutBatch,
+    CutPool,
+    DualBound,
+    ExitMultipliers,
+    MemberChange,
+    lift_amount,
+    member_change,
+)
+from xlplan.solve.highs import FEASIBILITY_TOLERANCE, KeptModel
+from xlplan.solve.result import SolveResult
+from xlplan.solve.tables import GraphTables, MemberCache, clip_state
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
+_LOG = logging.getLogger(__name__)
+
+MAX_ROUNDS = 60
+"""Rounds of adding violated rows; what is left then only makes the value a little too low."""
+
+CUT_TOLERANCE = 1e-9
+"""Relative violation below which a child's cut is not added, for float rounding."""
+
+DUAL_TOLERANCE = 1e-6
+"""Relative difference of a cut and the solver's objective at the same point that makes us re-solve."""
+
+FACE_TOLERANCE = 1e-7
+"""Reduced cost, relative to the largest cost, above which a column stays at its bound on the face."""
+
+FIRST_SLOTS = 3
+"""Slots for the cuts of a child that changes with the member; more are added when needed."""
+
+NESTED_SHARE = 0.25
+"""A family whose members differ from the one before in less than this share is walked along."""
+
+
+@dataclass(frozen=True)
+class NodeOutcome:
+    """One solved node.
+
+    value : true scale, own cost included; cost : own cost without the exits, true scale
+    y (n_col,), theta (n_exit,), out_states (n_exit, n_state) clipped into their domain
+    """
+
+    value: float
+    cost: float
+    y: FloatArray
+    theta: FloatArray
+    out_states: FloatArray
+    pi: FloatArray
+    exits: ExitMultipliers
+    exit_group: IntArray
+    """(n,) group of each cut in ``exits``, -1 where it is lifted."""
+
+
+@dataclass
+class _CutRows:
+    """Rows of the kept model that hold cuts of children; arrays grow by appending."""
+
+    row: IntArray
+    exit: IntArray
+    intercept: FloatArray
+    state_slope: FloatArray
+    capacity_slope: FloatArray
+    group: IntArray
+
+    def append(self, other: _CutRows) -> None:
+        """Puts rows behind."""
+        for name in vars(self):
+            setattr(self, name, np.concatenate([getattr(self, name), getattr(other, name)]))
+
+
+def family_changes(cache: MemberCache, i_family: int, n_member: int) -> list[MemberChange] | None:
+    """Differences from member to member where they are few, else None."""
+    if n_member < 2:
+        return None
+    first = cache.get(i_family, 0)
+    size = len(first.cost) + len(first.row_lower)
+    changes: list[MemberChange] = []
+    total = 0
+    before = first
+    for i_member in range(1, n_member):
+        now = cache.get(i_family, i_member)
+        change = member_change(now, before)
+        total += len(change.rows) + len(change.columns)
+        if total > NESTED_SHARE * size * (n_member - 1):
+            return None
+        changes.append(change)
+        before = now
+    return changes
+
+
+class NodeModel:
+    """A family's program in HiGHS, and the cut rows of its children."""
+
+    def __init__(
+        self,
+        graph: ValueGraph,
+        tables: GraphTables,
+        cache: MemberCache,
+        pools: list[CutPool],
+        i_family: int,
+        bound: DualBound,
+    ) -> None:
+        family = graph.families[i_family]
+        program = family.program
+        self.graph, self.tables, self.cache, self.pools = graph, tables, cache, pools
+        self.i_family, self.family, self.table = i_family, family, tables.families[i_family]
+        self.bound = bound
+        self.n_col, self.n_exit = program.n_col, len(family.exit_gate)
+        self.n_state = self.table.n_state
+        self.counts: Counter[str] = Counter()
+        self._matrix = sparse.csr_array(
+            (program.value.copy(), program.index, program.start),
+            shape=(program.n_row, program.n_col),
+        )
+        loaded = np.flatnonzero(~program.is_lazy)
+        part = self._matrix[loaded]
+        n_all = self.n_col + self.n_exit
+        self._program_rows = loaded  # program row of the model's first rows, in order
+        self._model_rows = np.arange(len(loaded))
+        self._row_place = np.full(program.n_row, -1, dtype=np.int64)
+        self._row_place[loaded] = np.arange(len(loaded))
+        self._lower = np.concatenate([program.col_lower, self.table.theta_lower])
+        self._upper = np.concatenate([program.col_upper, np.full(self.n_exit, np.inf)])
+        self._cost = np.zeros(n_all)
+        self._row_lower, self._row_upper = program.row_lower.copy(), program.row_upper.copy()
+        self._model = KeptModel(
+            family.name,
+            self._cost,
+            self._lower,
+            self._upper,
+            self._row_lower[loaded],
+            self._row_upper[loaded],
+            part.indptr,
+            part.indices,
+            part.data,
+        )
+        self._member_index = -1
+        self._member: Member | None = None
+        self._capacity = np.full(len(graph.capacity_lower), np.nan)
+        n_capacity = len(graph.capacity_lower)
+        self._cuts = _CutRows(
+            row=np.zeros(0, dtype=np.int64),
+            exit=np.zeros(0, dtype=np.int64),
+            intercept=np.zeros(0),
+            state_slope=np.zeros((0, self.n_state)),
+            capacity_slope=np.zeros((0, n_capacity)),
+            group=np.zeros(0, dtype=np.int64),
+        )
+        self._known: set[tuple[int, int, int, int]] = set()
+        self._is_gated = np.array([bool(g) for g in family.exit_gate], dtype=bool)
+        self._gate = np.zeros(self.n_exit)
+        out = np.sort(family.out_columns, axis=1)
+        # Whether an exit hands on one column as two components of the state.
+        self._has_repeats = bool((out[:, 1:] == out[:, :-1]).any()) if out.size else False
+        self._targets = self._find_targets() if self.table.is_fixed else []
+        self._slots: dict[int, list[int]] = {}
+        self._slot_members: dict[tuple[int, int, int], list[int]] = {}
+        self._last_out = np.zeros((self.n_exit, self.n_state))
+        self._lifts: dict[tuple[int, int, int], float] = {}
+
+    @property
+    def seconds_in_solver(self) -> float:
+        """Wall time spent inside HiGHS."""
+        return self._model.seconds
+
+    def all_counts(self) -> Counter[str]:
+        """Events counted here and in the kept model."""
+        return self.counts + self._model.counts
+
+    # -- solving -------------------------------------------------------------------------------
+
+    def solve(
+        self,
+        i_member: int,
+        state: FloatArray,
+        capacity: FloatArray,
+        cut_tolerance: float = 0.0,
+        second_cost: FloatArray | None = None,
+    ) -> NodeOutcome:
+        """Value of one member at one point, with the cuts that the pools hold now.
+
+        Parameters
+        ----------
+        i_member : int
+        state : array, shape (n_state,)
+        capacity : array, shape (n_capacity,)
+        cut_tolerance : float, by how much the value may be too low because small violations of
+            the children's cuts are left
+        second_cost : array, shape (n_col,), minimised among the optimal points; None: any of them
+
+        Returns
+        -------
+        NodeOutcome
+
+        Raises SolverFailureError where HiGHS finds no optimum.
+        """
+        self._place(i_member, state, capacity)
+        assert self._member is not None
+        result = self._model.run()
+        for _ in range(MAX_ROUNDS):
+            y = result.col_value[: self.n_col]
+            n_new = self._add_lazy_rows(y)
+            n_new += self._add_cuts(result, capacity, cut_tolerance)
+            if not n_new:
+                break
+            result = self._model.run()
+        else:
+            self.counts["row rounds used up"] += 1
+        if second_cost is not None:
+            primal = self._second(result, second_cost)
+        else:
+            primal = result.col_value
+        return self._outcome(result, primal, capacity)
+
+    def _place(self, i_member: int, state: FloatArray, capacity: FloatArray) -> None:
+        """Brings the kept model to a member, a state and capacities."""
+        member = self.cache.get(self.i_family, i_member)
+        lower, upper = self._lower.copy(), self._upper.copy()
+        lower[: self.n_col], upper[: self.n_col] = member.col_lower, member.col_upper
+        columns = self.family.capacity_columns
+        held = columns >= 0
+        lower[columns[held]] = upper[columns[held]] = capacity[held]
+        given = member.in_columns >= 0
+        lower[member.in_columns[given]] = upper[member.in_columns[given]] = state[given]
+        moved = np.flatnonzero((lower != self._lower) | (upper != self._upper))
+        self._model.set_col_bounds(moved, lower[moved], upper[moved])
+        self._lower, self._upper = lower, upper
+        is_new_member = i_member != self._member_index
+        if is_new_member:
+            cost = np.concatenate([member.cost, member.exit_weight])
+            moved = np.flatnonzero(cost != self._cost)
+            self._model.set_costs(moved, cost[moved])
+            self._cost = cost
+            rows = self._program_rows
+            is_moved = (member.row_lower[rows] != self._row_lower[rows]) | (
+                member.row_upper[rows] != self._row_upper[rows]
+            )
+            self._model.set_row_bounds(
+                self._model_rows[is_moved],
+                member.row_lower[rows[is_moved]],
+                member.row_upper[rows[is_moved]],
+            )
+            self._row_lower, self._row_upper = member.row_lower, member.row_upper
+            self._patch(member)
+        if not np.array_equal(capacity, self._capacity):
+            self._capacity = capacity.copy()
+            for e in np.flatnonzero(self._is_gated):
+                self._gate[e] = capacity[list(self.family.exit_gate[e])].sum()
+            cuts = self._cuts
+            sides = cuts.intercept + cuts.capacity_slope @ capacity
+            self._model.set_row_bounds(cuts.row, sides, np.full(len(sides), np.inf))
+        self._member, self._member_index = member, i_member
+        if is_new_member and not self.table.is_fixed:
+            self._fill_slots(member, capacity)
+
+    def _patch(self, member: Member) -> None:
+        """Matrix entries that differ between members."""
+        patch = self.family.patch
+        for i in np.flatnonzero(self._matrix.data[patch] != member.patch_value):
+            place = self._row_place[self.bound.patch_row[i]]
+            if place >= 0:
+                self._model.set_row_coefficients(
+                    int(place), self.bound.patch_column[i : i + 1], member.patch_value[i : i + 1]
+                )
+        self._matrix.data[patch] = member.patch_value
+
+    def _add_lazy_rows(self, y: FloatArray) -> int:
+        """Adds lazy rows that ``y`` violates; their number."""
+        if len(self._program_rows) == self._matrix.shape[0]:
+            return 0
+        activity = self._matrix @ y
+        low, high = self._row_lower, self._row_upper
+        with np.errstate(invalid="ignore"):
+            excess = np.maximum(low - activity, activity - high)
+            scale = 1.0 + np.where(low > activity, np.abs(low), np.abs(high))
+        is_violated = (self._row_place < 0) & (excess > FEASIBILITY_TOLERANCE * scale)
+        rows = np.flatnonzero(is_violated)
+        if len(rows):
+            part = self._matrix[rows]
+            places = self._model.n_row + np.arange(len(rows))
+            self._model.add_rows(low[rows], high[rows], part.indptr, part.indices, part.data)
+            self._row_place[rows] = places
+            self._program_rows = np.concatenate([self._program_rows, rows])
+            self._model_rows = np.concatenate([self._model_rows, places])
+            self.counts["lazy row"] += len(rows)
+        return len(rows)
+
+    # -- cuts of the children ------------------------------------------------------------------
+
+    def _find_targets(self) -> list[tuple[int, bool, IntArray, IntArray, IntArray]]:
+        """Groups exits by child and state, so that a child's cuts are evaluated once.
+
+        Returns (child family, whether it is the gated child, exits, target of each exit, map from
+        the child's members to a target); a target is one child node asked at one state.
+        """
+        found: dict[tuple[int, bool, int], tuple[list[int], list[int], dict[int, int]]] = {}
+        layers: dict[tuple[int, bool, int], int] = {}
+        seen: dict[tuple[object, ...], tuple[int, bool, int]] = {}
+        for is_gated, table in ((False, self.table.child), (True, self.table.child_if_gated)):
+            for e in range(self.n_exit):
+                i_child, i_member = int(table[e, 0]), int(table[e, 1])
+                if i_member < 0:
+                    continue
+                columns = tuple(self.family.out_columns[e].tolist())
+                full = (i_child, i_member, is_gated, columns)
+                if full not in seen:
+                    depth = layers.get((i_child, is_gated, i_member), 0)
+                    layers[i_child, is_gated, i_member] = depth + 1
+                    seen[full] = (i_child, is_gated, depth)
+                exits, places, members = found.setdefault(seen[full], ([], [], {}))
+                members.setdefault(i_member, len(members))
+                exits.append(e)
+                places.append(members[i_member])
+        groups = []
+        for (i_child, is_gated, _), (exits, places, members) in found.items():
+            to_target = np.full(self.graph.families[i_child].n_member, -1, dtype=np.int64)
+            for i_member, place in members.items():
+                to_target[i_member] = place
+            groups.append((i_child, is_gated, np.array(exits), np.array(places), to_target))
+        return groups
+
+    def _add_cuts(self, result: SolveResult, capacity: FloatArray, tolerance: float) -> int:
+        """Adds the highest violated cut of every exit; their number."""
+        if not self.n_exit:
+            return 0
+        assert self._member is not None
+        weight = self._member.exit_weight
+        total = weight.sum()
+        if total <= 0.0:
+            return 0
+        y, theta = result.col_value[: self.n_col], result.col_value[self.n_col :]
+        allowed = np.maximum(
+            tolerance * self._member.scale / total, CUT_TOLERANCE * (1.0 + np.abs(theta))
+        )
+        states = y[self.family.out_columns]
+        if self.table.is_fixed:
+            chosen = self._violated_fixed(states, theta, weight, allowed, capacity)
+        else:
+            chosen = self._violated_varying(states, theta, weight, allowed, capacity)
+        if not chosen:
+            return 0
+        fresh = [item for item in chosen if item not in self._known]
+        if self.table.is_fixed:
+            self._known.update(fresh)
+            self._append_rows(fresh, capacity)
+            return len(fresh)
+        return self._use_slots(chosen, result, capacity)
+
+    def _violated_fixed(
+        self,
+        states: FloatArray,
+        theta: FloatArray,
+        weight: FloatArray,
+        allowed: FloatArray,
+        capacity: FloatArray,
+    ) -> list[tuple[int, int, int, int]]:
+        """(exit, child family, position in its pool, 1 if of the gated child) to add."""
+        best = np.full(self.n_exit, -np.inf)
+        choice: list[tuple[int, int, int] | None] = [None] * self.n_exit
+        for i_child, is_gated, exits, places, to_target in self._targets:
+            pool = self.pools[i_child]
+            active = weight[exits] > 0.0
+            if is_gated:
+                active = active & (self._gate[exits] > 0.0)
+            else:
+                active = active & (self._gate[exits] < 1.0)
+            if not pool.n or not active.any():
+                continue
+            n_target = int(places.max()) + 1
+            wanted = np.zeros(n_target, dtype=bool)
+            wanted[places[active]] = True
+            target_state = np.zeros((n_target, self.n_state))
+            target_state[places] = states[exits]
+            target = to_target[pool.member]
+            here = np.flatnonzero((target >= 0) & wanted[target])
+            if not len(here):
+                continue
+            target = target[here]
+            value = pool.level(capacity)[here] + np.einsum(
+                "ij,ij->i", pool.state_slope[here], target_state[target]
+            )
+            top = np.full(n_target, -np.inf)
+            np.maximum.at(top, target, value)
+            is_top = np.flatnonzero(value == top[target])
+            position = np.full(n_target, -1, dtype=np.int64)
+            position[target[is_top][::-1]] = here[is_top][::-1]  # the oldest at ties
+            for e, place in zip(exits[active], places[active], strict=True):
+                if position[place] < 0 or top[place] <= theta[e] + allowed[e]:
+                    continue
+                reach = top[place]
+                if 0.0 < self._gate[e] < 1.0:
+                    share = self._gate[e] if not is_gated else 1.0 - self._gate[e]
+                    lift = self._lift(int(e), i_child, int(position[place]), is_gated)
+                    reach -= lift * share
+                if reach > theta[e] + allowed[e] and reach > best[e]:
+                    best[e] = reach
+                    choice[e] = (i_child, int(position[place]), int(is_gated))
+        return [(e, *found) for e, found in enumerate(choice) if found is not None]
+
+    def _lift(self, e: int, i_child: int, position: int, is_gated: bool) -> float:
+        """``B`` of a cut of an exit's child against the cuts of its other child."""
+        key = (e, position, int(is_gated))
+        if key not in self._lifts:
+            assert self._member is not None
+            other = (
+                self._member.exit_child[e] if is_gated else self._member.exit_child_if_gated[e]
+            )
+            pool, below = self.pools[i_child], self.pools[int(other[0])]
+            places = below.positions(int(other[1]))
+            floor = self.tables.families[int(other[0])].value_lower[int(other[1])]
+            n_capacity = len(self._capacity)
+            self._lifts[key] = lift_amount(
+                float(pool.intercept[position]),
+                pool.state_slope[position],
+                pool.capacity_slope[position],
+                np.concatenate([below.intercept[places], [floor]]),
+                np.vstack([below.state_slope[places], np.zeros((1, self.n_state))]),
+                np.vstack([below.capacity_slope[places], np.zeros((1, n_capacity))]),
+                self.table.box,
+                self.family.exit_gate[e],
+                gate_is_one=not is_gated,
+            )
+        return self._lifts[key]
+
+    def _cut_rows(self, chosen: list[tuple[int, int, int, int]]) -> _CutRows:
+        """Chosen cuts, lifted where the exit is gated; ``row`` is left to the caller."""
+        n, n_capacity = len(chosen), len(self._capacity)
+        rows = _CutRows(
+            row=np.zeros(n, dtype=np.int64),
+            exit=np.array([c[0] for c in chosen], dtype=np.int64),
+            intercept=np.zeros(n),
+            state_slope=np.zeros((n, self.n_state)),
+            capacity_slope=np.zeros((n, n_capacity)),
+            group=np.full(n, -1, dtype=np.int64),
+        )
+        for i, (e, i_child, position, is_gated) in enumerate(chosen):
+            pool = self.pools[i_child]
+            rows.intercept[i] = pool.intercept[position]
+            rows.state_slope[i] = pool.state_slope[position]
+            rows.capacity_slope[i] = pool.capacity_slope[position]
+            rows.group[i] = pool.group[position]
+            if self._is_gated[e]:
+                lift = self._lift(e, i_child, position, bool(is_gated))
+                gate = list(self.family.exit_gate[e])
+                rows.group[i] = -1
+                if is_gated:  # cut - B' (1 - gate)
+                    rows.intercept[i] -= lift
+                    rows.capacity_slope[i, gate] += lift
+                else:  # cut - B gate
+                    rows.capacity_slope[i, gate] -= lift
+        return rows
+
+    def _append_rows(self, chosen: list[tuple[int, int, int, int]], capacity: FloatArray) -> None:
+        """Rows ``theta - g s >= a + h c`` at the end of the model."""
+        if not chosen:
+            return
+        rows = self._cut_rows(chosen)
+        n = len(chosen)
+        columns = np.hstack([self.family.out_columns[rows.exit], (self.n_col + rows.exit)[:, None]])
+        values = np.hstack([-rows.state_slope, np.ones((n, 1))])
+        kept = values != 0.0
+        start = np.concatenate([[0], np.cumsum(kept.sum(axis=1))])
+        rows.row[:] = self._model.n_row + np.arange(n)
+        index, value = columns[kept], values[kept]
+        if self._has_repeats:
+            index, value, start = _merge_repeats(columns, values)
+        self._model.add_rows(
+            rows.intercept + rows.capacity_slope @ capacity,
+            np.full(n, np.inf),
+            start,
+            index,
+            value,
+        )
+        self._cuts.append(rows)
+        self.counts["cut row"] += n
+
+    # -- slots: children that change with the member -------------------------------------------
+
+    def _fill_slots(self, member: Member, capacity: FloatArray) -> None:
+        """Puts the new child's cuts into the slots: those used last time, or the best guess."""
+        for e in range(self.n_exit):
+            i_child, i_member = member.exit_child[e].tolist()
+            slots = self._slots.setdefault(e, [])
+            positions: list[int] = []
+            if member.exit_weight[e] > 0.0 and i_member >= 0:
+                positions = list(self._slot_members.get((e, i_child, i_member), []))
+                pool = self.pools[i_child]
+                places = pool.positions(i_member)
+                if not positions and places:
+                    level = pool.level(capacity)[places]
+                    value = level + pool.state_slope[places] @ self._last_out[e]
+                    positions = [places[int(np.argmax(value))]]
+            if not positions:
+                rows = self._cuts.row[slots]
+                self._cuts.group[slots] = -2
+                self._free_slots(rows)
+                self._cuts.intercept[slots] = -np.inf
+                continue
+            while len(slots) < min(len(positions), 8):
+                slots.append(len(self._cuts.row))
+                self._append_rows([(e, i_child, positions[len(slots) - 1], 0)], capacity)
+            # Slots that have nothing to hold repeat the first cut: a free row in the basis of
+            # the solver would cost more iterations than a double one.
+            for i, slot in enumerate(slots):
+                self._write_slot(slot, e, i_child, positions[i if i < len(positions) else 0])
+            self._set_slot_sides(slots, capacity)
+
+    def _free_slots(self, rows: IntArray) -> None:
+        self._model.set_row_bounds(
+            rows, np.full(len(rows), -np.inf), np.full(len(rows), np.inf)
+        )
+
+    def _write_slot(self, slot: int, e: int, i_child: int, position: int) -> None:
+        """Overwrites one slot with one cut; its side is set by ``_set_slot_sides``."""
+        new = self._cut_rows([(e, i_child, position, 0)])
+        old = self._cuts.state_slope[slot]
+        columns = self.family.out_columns[e]
+        moved = new.state_slope[0] != old
+        if moved.any():
+            if self._has_repeats:
+                merged, inverse = np.unique(columns, return_inverse=True)
+                total = np.bincount(inverse, weights=new.state_slope[0])
+                self._model.set_row_coefficients(int(self._cuts.row[slot]), merged, -total)
+            else:
+                self._model.set_row_coefficients(
+                    int(self._cuts.row[slot]), columns[moved], -new.state_slope[0][moved]
+                )
+        self._cuts.intercept[slot] = new.intercept[0]
+        self._cuts.state_slope[slot] = new.state_slope[0]
+        self._cuts.capacity_slope[slot] = new.capacity_slope[0]
+        self._cuts.group[slot] = new.group[0]
+
+    def _set_slot_sides(self, slots: list[int], capacity: FloatArray) -> None:
+        cuts = self._cuts
+        sides = cuts.intercept[slots] + cuts.capacity_slope[slots] @ capacity
+        self._model.set_row_bounds(cuts.row[slots], sides, np.full(len(slots), np.inf))
+
+    def _violated_varying(
+        self,
+        states: FloatArray,
+        theta: FloatArray,
+        weight: FloatArray,
+        allowed: FloatArray,
+        capacity: FloatArray,
+    ) -> list[tuple[int, int, int, int]]:
+        """Like ``_violated_fixed`` for children that change with the member."""
+        assert self._member is not None
+        chosen = []
+        for e in np.flatnonzero(weight > 0.0):
+            i_child, i_member = self._member.exit_child[e].tolist()
+            if self._is_gated[e]:
+                raise NotImplementedError("a gated exit whose children differ between members")
+            pool = self.pools[i_child]
+            places = pool.positions(i_member)
+            if not places:
+                continue
+            value = pool.level(capacity)[places] + pool.state_slope[places] @ states[e]
+            top = int(np.argmax(value))
+            if value[top] > theta[e] + allowed[e]:
+                chosen.append((int(e), i_child, places[top], 0))
+        return chosen
+
+    def _use_slots(
+        self,
+        chosen: list[tuple[int, int, int, int]],
+        result: SolveResult,
+        capacity: FloatArray,
+    ) -> int:
+        """Writes violated cuts into slots that are not tight, or into new ones."""
+        assert self._member is not None
+        n_used = 0
+        for e, i_child, position, _ in chosen:
+            slots = self._slots[e]
+            group = int(self.pools[i_child].group[position])
+            if any(self._cuts.group[slot] == group for slot in slots):
+                continue  # it is there: what is left is the solver's tolerance
+            duals = result.row_dual[self._cuts.row[slots]] if slots else np.zeros(0)
+            counts = Counter(self._cuts.group[slots].tolist())
+            idle = [
+                slot
+                for slot, dual in zip(slots, duals, strict=True)
+                if dual <= 0.0 and counts[int(self._cuts.group[slot])] > 1
+            ]
+            loose = [
+                slot
+                for slot, dual in zip(slots, duals, strict=True)
+                if dual <= 0.0 and slot not in idle
+            ]
+            # One cut per component of the state can be tight at once, beside the first ones.
+            free = idle or (loose if len(slots) >= FIRST_SLOTS + self.n_state else [])
+            if free:
+                self._write_slot(free[0], e, i_child, position)
+                self._set_slot_sides([free[0]], capacity)
+            else:
+                slots.append(len(self._cuts.row))
+                self._append_rows([(e, i_child, position, 0)], capacity)
+            n_used += 1
+        return n_used
+
+    def _remember_slots(self, result: SolveResult) -> None:
+        """Keeps which cuts were tight, for the next time that this child comes."""
+        assert self._member is not None
+        for e, slots in self._slots.items():
+            if not slots or self._member.exit_weight[e] <= 0.0:
+                continue
+            i_child, i_member = self._member.exit_child[e].tolist()
+            duals = result.row_dual[self._cuts.row[slots]]
+            pool = self.pools[i_child]
+            tight = [
+                pool.position_of(i_member, int(self._cuts.group[slot]))
+                for slot, dual in zip(slots, duals, strict=True)
+                if dual > 0.0
+            ]
+            if tight:
+                self._slot_members[e, i_child, i_member] = sorted(set(tight))
+
+    # -- what comes out ------------------------------------------------------------------------
+
+    def _outcome(
+        self, result: SolveResult, primal: FloatArray, capacity: FloatArray
+    ) -> NodeOutcome:
+        assert self._member is not None
+        member = self._member
+        y, theta = primal[: self.n_col], primal[self.n_col :]
+        pi = np.zeros(len(self._row_lower))
+        pi[self._program_rows] = result.row_dual[self._model_rows]
+        cuts = self._cuts
+        cut_pi = np.maximum(result.row_dual[cuts.row], 0.0)
+        used = np.flatnonzero((cut_pi > 0.0) & (member.exit_weight[cuts.exit] > 0.0))
+        if not self.table.is_fixed:
+            used = used[cuts.group[used] != -2]
+            self._remember_slots(result)
+        states = y[self.family.out_columns].reshape(self.n_exit, self.n_state)
+        self._last_out = states
+        box = self.table.box
+        low = box.state_lower_matrix @ capacity
+        high = np.maximum(box.state_upper_matrix @ capacity, low)
+        return NodeOutcome(
+            value=(result.objective + member.offset) / member.scale,
+            cost=float(member.cost @ y + member.offset) / member.scale,
+            y=y,
+            theta=theta,
+            out_states=np.clip(states, low, high),
+            pi=pi,
+            exits=ExitMultipliers(
+                exit=cuts.exit[used],
+                pi=cut_pi[used],
+                intercept=cuts.intercept[used],
+                state_slope=cuts.state_slope[used],
+                capacity_slope=cuts.capacity_slope[used],
+            ),
+            exit_group=cuts.group[used],
+        )
+
+    def cut_from(self, outcome: NodeOutcome, i_member: int, group: int) -> CutBatch:
+        """The cut of the solved member alone."""
+        member = self.cache.get(self.i_family, i_member)
+        return self.bound.cut(member, outcome.pi, outcome.exits, i_member, group)
+
+    def shared_cut(self, outcome: NodeOutcome, i_member: int, group: int) -> CutBatch | None:
+        """Cut of another member from the same multipliers; None where it would be useless.
+
+        The multipliers of children's cuts go to the same-numbered cuts of the other's children.
+        """
+        member = self.cache.get(self.i_family, i_member)
+        exits = outcome.exits
+        if not self.table.is_fixed and len(exits.exit):
+            mapped = ExitMultipliers(
+                exits.exit,
+                exits.pi,
+                exits.intercept.copy(),
+                exits.state_slope.copy(),
+                exits.capacity_slope.copy(),
+            )
+            for i, (e, number) in enumerate(zip(exits.exit, outcome.exit_group, strict=True)):
+                i_child, i_child_member = member.exit_child[e].tolist()
+                if i_child_member < 0 or member.exit_weight[e] <= 0.0:
+                    return None
+                pool = self.pools[i_child]
+                position = pool.position_of(i_child_member, int(number))
+                if position < 0:
+                    return None
+                mapped.intercept[i] = pool.intercept[position]
+                mapped.state_slope[i] = pool.state_slope[position]
+                mapped.capacity_slope[i] = pool.capacity_slope[position]
+            exits = mapped
+        return self.bound.cut(member, outcome.pi, exits, i_member, group)
+
+    def forget_basis(self) -> None:
+        """The next solve starts cold."""
+        self._model.forget_basis()
+
+    def _second(self, result: SolveResult, second_cost: FloatArray) -> FloatArray:
+        """Primal point that is best by a second cost among the optimal ones.
+
+        Columns with a reduced cost and rows with a multiplier stay at their sides: that is the
+        optimal face. Only bounds and costs change, so the model is as before afterwards.
+        """
+        n_all = self.n_col + self.n_exit
+        size = max(1.0, float(np.abs(self._cost).max(initial=0.0))) * FACE_TOLERANCE
+        value = np.clip(result.col_value, self._lower, self._upper)
+        columns = np.flatnonzero(np.abs(result.col_dual) > size)
+        rows = np.flatnonzero(np.abs(result.row_dual) > size)
+        low, high = self._model_sides()
+        dual = result.row_dual[rows]
+        side = np.where(dual > 0.0, low[rows], high[rows])
+        rows, side = rows[np.isfinite(side)], side[np.isfinite(side)]
+        everything = np.arange(n_all)
+        self._model.set_col_bounds(columns, value[columns], value[columns])
+        self._model.set_row_bounds(rows, side, side)
+        self._model.set_costs(everything, np.concatenate([second_cost, np.zeros(self.n_exit)]))
+        again = self._model.run()
+        self._model.set_costs(everything, self._cost)
+        self._model.set_row_bounds(rows, low[rows], high[rows])
+        self._model.set_col_bounds(columns, self._lower[columns], self._upper[columns])
+        self.counts["second objective"] += 1
+        return again.col_value
+
+    def _model_sides(self) -> tuple[FloatArray, FloatArray]:
+        """Sides of every row of the kept model, in its order."""
+        low = np.full(self._model.n_row, -np.inf)
+        high = np.full(self._model.n_row, np.inf)
+        low[self._model_rows] = self._row_lower[self._program_rows]
+        high[self._model_rows] = self._row_upper[self._program_rows]
+        low[self._cuts.row] = (
+            self._cuts.intercept + self._cuts.capacity_slope @ self._capacity
+        )
+        return low, high
+
+
+def _merge_repeats(
+    columns: IntArray, values: FloatArray
+) -> tuple[IntArray, FloatArray, IntArray]:
+    """Rows in which a column may occur twice, as index, value, start with the sums."""
+    index, value, start = [], [], [0]
+    for row, numbers in zip(columns, values, strict=True):
+        merged, inverse = np.unique(row, return_inverse=True)
+        total = np.bincount(inverse, weights=numbers)
+        index.append(merged[total != 0.0])
+        value.append(total[total != 0.0])
+        start.append(start[-1] + len(index[-1]))
+    return np.concatenate(index), np.concatenate(value), np.array(start)

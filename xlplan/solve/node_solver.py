@@ -1,0 +1,220 @@
+"""Requests for nodes in, solutions and cuts out: what one process does.
+
+``NodeSolver`` owns the kept models of the families that it is asked for, and its copies of the cut
+pools. A model's history depends on its own requests alone, so the numbers are the same whichever
+process holds it.
+"""
+
+from __future__ import annotations
+
+import logging
+from collections import Counter
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from xlplan.model.value_graph import ValueGraph
+from xlplan.solve.cuts import CutBatch, CutPool, DualBound, MemberChange
+from xlplan.solve.highs import SolverFailureError
+from xlplan.solve.node import DUAL_TOLERANCE, NodeModel, NodeOutcome, family_changes
+from xlplan.solve.tables import GraphTables, MemberCache, clip_state
+
+FloatArray = NDArray[np.float64]
+
+_LOG = logging.getLogger(__name__)
+
+SHARE_MARGIN = 1e-3
+"""A cut shared with another member is kept where it beats the known value by this share."""
+
+
+@dataclass(frozen=True)
+class NodeRequest:
+    """One node to be solved.
+
+    state : (n_state,), clipped into its domain before use; capacity : (n_capacity,)
+    second_cost : (n_col,), minimised among the optimal points, or None
+    replica : which of the family's kept models to use; each has its own history
+    group : number of the cuts made, -1 for no cuts
+    share : other members with the state at which a shared cut must beat what is known
+    cut_tolerance : how much too low the value may be for want of the children's last cuts
+    wants_primal : whether ``y`` is handed back
+    """
+
+    family: int
+    member: int
+    state: FloatArray
+    capacity: FloatArray
+    second_cost: FloatArray | None = None
+    replica: int = 0
+    group: int = -1
+    share: tuple[tuple[int, FloatArray], ...] = ()
+    cut_tolerance: float = 0.0
+    wants_primal: bool = False
+
+
+@dataclass(frozen=True)
+class NodeSolution:
+    """What a request gives.
+
+    value : cost from here on as the cuts know it; cost : the node's own part of it; both in true
+    scale. theta (n_exit,), out_states (n_exit, n_state). has_failed: the solver found nothing;
+    value is then the best known bound, and the arrays are empty.
+    """
+
+    value: float
+    cost: float
+    theta: FloatArray
+    out_states: FloatArray
+    y: FloatArray | None
+    measured: object
+    cuts: tuple[CutBatch, ...]
+    has_failed: bool = False
+
+
+Measure = Callable[[NodeRequest, FloatArray, FloatArray], object]
+"""Called with the request, the primal point ``y`` and ``theta``; must be picklable."""
+
+
+class NodeSolver:
+    """Kept models, members and pools of one process."""
+
+    def __init__(self, graph: ValueGraph, tables: GraphTables, cache: MemberCache | None = None):
+        self.graph, self.tables = graph, tables
+        self.cache = cache or MemberCache(graph.families)
+        self.pools = new_pools(graph, tables)
+        self.counts: Counter[str] = Counter()
+        self._models: dict[tuple[int, int], NodeModel] = {}
+        self._bounds: dict[int, DualBound] = {}
+        self._changes: dict[int, list[MemberChange] | None] = {}
+
+    def add_cuts(self, batches: Sequence[CutBatch]) -> None:
+        """Cuts made elsewhere."""
+        for batch in batches:
+            self.pools[batch.family].add(batch)
+
+    def bound(self, i_family: int) -> DualBound:
+        """The family's maker of cuts."""
+        if i_family not in self._bounds:
+            self._bounds[i_family] = DualBound(
+                i_family,
+                self.graph.families[i_family],
+                self.graph.capacity_lower,
+                self.graph.capacity_upper,
+                self.tables.families[i_family].theta_lower,
+            )
+        return self._bounds[i_family]
+
+    def changes(self, i_family: int) -> list[MemberChange] | None:
+        """Differences from member to member, None where there is too much of them."""
+        if i_family not in self._changes:
+            family = self.graph.families[i_family]
+            is_plain = self.tables.families[i_family].is_fixed and not len(family.patch)
+            self._changes[i_family] = (
+                family_changes(self.cache, i_family, family.n_member) if is_plain else None
+            )
+        return self._changes[i_family]
+
+    def model(self, i_family: int, replica: int) -> NodeModel:
+        """One kept model, made when first asked for."""
+        key = (i_family, replica)
+        if key not in self._models:
+            self._models[key] = NodeModel(
+                self.graph, self.tables, self.cache, self.pools, i_family, self.bound(i_family)
+            )
+        return self._models[key]
+
+    def solve(self, request: NodeRequest, measure: Measure | None = None) -> NodeSolution:
+        """One node. The pools are left as they are: new cuts come back in the solution."""
+        i_family, i_member = request.family, request.member
+        model = self.model(i_family, request.replica)
+        state = clip_state(self.tables.families[i_family], request.state, request.capacity)
+        try:
+            outcome = model.solve(
+                i_member, state, request.capacity, request.cut_tolerance, request.second_cost
+            )
+            cuts = self._checked_cuts(model, outcome, request, state)
+        except SolverFailureError as failure:
+            _LOG.warning("member %d: %s", i_member, failure)
+            return self._failed(request, state)
+        measured = measure(request, outcome.y, outcome.theta) if measure is not None else None
+        return NodeSolution(
+            value=outcome.value,
+            cost=outcome.cost,
+            theta=outcome.theta,
+            out_states=outcome.out_states,
+            y=outcome.y if request.wants_primal else None,
+            measured=measured,
+            cuts=cuts,
+        )
+
+    def _checked_cuts(
+        self, model: NodeModel, outcome: NodeOutcome, request: NodeRequest, state: FloatArray
+    ) -> tuple[CutBatch, ...]:
+        """Cuts of the node and of others by sharing; a cut far off the objective is counted."""
+        if request.group < 0:
+            return ()
+        changes = self.changes(request.family)
+        if changes is None:
+            cut = model.cut_from(outcome, request.member, request.group)
+        else:
+            cut = model.bound.cuts_along(
+                self.cache.get(request.family, request.member),
+                request.member,
+                changes[request.member :],
+                outcome.pi,
+                outcome.exits,
+                request.group,
+            )
+        reached = cut.take(np.arange(1)).values(state[None, :], request.capacity)[0]
+        if abs(reached - outcome.value) > DUAL_TOLERANCE * (1.0 + abs(outcome.value)):
+            self.counts["cut not tight"] += 1
+            _LOG.debug(
+                "%s, member %d: cut gives %r, the solver %r",
+                model.family.name, request.member, reached, outcome.value,
+            )  # fmt: skip
+            model.forget_basis()
+        batches = [cut]
+        for i_member, at in request.share:
+            shared = model.shared_cut(outcome, i_member, request.group)
+            if shared is None:
+                continue
+            known = self.pools[request.family].value(i_member, at, request.capacity)
+            reached = shared.values(at[None, :], request.capacity)[0]
+            if reached > known + SHARE_MARGIN * (abs(known) if np.isfinite(known) else 0.0):
+                batches.append(shared)
+        return tuple(batches)
+
+    def _failed(self, request: NodeRequest, state: FloatArray) -> NodeSolution:
+        self.counts["failed node"] += 1
+        known = self.pools[request.family].value(request.member, state, request.capacity)
+        lower = self.tables.families[request.family].value_lower[request.member]
+        return NodeSolution(
+            value=max(known, float(lower)),
+            cost=float("nan"),
+            theta=np.zeros(0),
+            out_states=np.zeros((0, len(state))),
+            y=None,
+            measured=None,
+            cuts=(),
+            has_failed=True,
+        )
+
+    def all_counts(self) -> dict[str, float]:
+        """Events and seconds since the process began."""
+        total: Counter[str] = Counter(self.counts)
+        seconds = 0.0
+        for model in self._models.values():
+            total.update(model.all_counts())
+            seconds += model.seconds_in_solver
+        return {**{name: float(n) for name, n in total.items()}, "seconds in solver": seconds}
+
+
+def new_pools(graph: ValueGraph, tables: GraphTables) -> list[CutPool]:
+    """Empty pools, one per family."""
+    n_capacity = len(graph.capacity_lower)
+    return [
+        CutPool(i, family.n_member, tables.families[i].n_state, n_capacity)
+        for i, family in enumerate(graph.families)
+    ]
