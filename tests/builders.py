@@ -113,7 +113,7 @@ FEATURES = (
 ALWAYS_DRAWN = frozenset({"breaker", "repair outlasting the window"})
 """Present in every random study: the source's breaker; failures strike in the last period too."""
 
-MAX_TREE_NODES = 450
+MAX_TREE_PERIODS = 600
 """Periods in the whole scenario tree of a random study, by an estimate that merges nothing."""
 
 
@@ -391,6 +391,7 @@ class _Draw:
             raise ValueError(f"unknown features: {sorted(features - set(FEATURES))}")
         drawn = {name for name in FEATURES if self.rng.random() < 0.45}
         self.asked_periods = n_period
+        self.is_drawn = features is None
         self.period_h = float(self.rng.choice([0.5, 1.0]))
         if features is None:
             drawn |= {self.pick(["storage", "generator", "hardening"])}  # something to decide
@@ -741,41 +742,67 @@ class _Draw:
         return tuple(measures)
 
     def _keep_failures_few(self) -> None:
-        """Takes the outage class off lines, and periods off windows, until the tree is tiny.
+        """Cuts periods, failing lines and drawn features until the whole tree is tiny.
 
-        Hardened lines keep their class. The estimate counts every component as a scenario.
+        Hardened lines keep their class, and what was asked for is kept.
         """
-        hardened = {line for measure in self.measures for line in measure.lines}
-        n_window = 2 if self.has("several windows") else 1
-        longest = 4 if n_window == 2 else 6
-        n_period = self.asked_periods or int(self.rng.integers(3, longest + 1))
-        repair_periods = int(self.rng.integers(1, 4))
-        while True:
-            failing = [
-                line.line for line in self.lines if line.outage_class and not line.normally_open
-            ]
-            spare = [line for line in failing if line not in hardened]
-            n_scenario = len(failing) + len(hardened) * len(self.measures)
-            n_scenario += sum(unit.outage_class is not None for unit in self.storage)
-            n_scenario += sum(unit.outage_class is not None for unit in self.generators)
-            n_scenario += self.bulk is not None
-            n_scenario *= 1 + sum(unit.start_failure_frac > 0 for unit in self.generators)
-            if self.has("three-point repair"):
-                repairs = [math.ceil(0.5 * repair_periods), repair_periods, 2 * repair_periods]
-            else:
-                repairs = [repair_periods]
-            n_node = n_window * tree_nodes(n_period, n_scenario, repairs)
-            if n_node <= MAX_TREE_NODES:
-                break
-            if n_period > 3 and self.asked_periods is None:
-                n_period -= 1
-            elif len(failing) > 1 and spare:
-                self._without_failures(spare[-1])
-            elif repair_periods > 1:
-                repair_periods -= 1
-            else:
-                break
-        self.n_period, self.n_window, self.repair_periods = n_period, n_window, repair_periods
+        self.n_window = 2 if self.has("several windows") else 1
+        self.n_period = self.asked_periods or int(self.rng.integers(3, 9 - 2 * self.n_window))
+        self.repair_periods = int(self.rng.integers(1, 4))
+        self.repair_multiplier = self.uniform(1.2, 2.0, 1) if self.has("repair multiplier") else 1.0
+        while self._tree_periods() > MAX_TREE_PERIODS and self._cut_something():
+            pass
+
+    def _tree_periods(self) -> int:
+        """Estimated periods of the whole tree; every component counts as a scenario."""
+        failing = self._failing_lines()
+        hardened = [line for line in failing if line in self._hardened_lines()]
+        plain = len(failing) - len(hardened) + (self.bulk is not None)
+        plain += sum(unit.outage_class is not None for unit in (*self.storage, *self.generators))
+        copies = 1 + sum(unit.start_failure_frac > 0 for unit in self.generators)
+        slices = len(self.measures) * len(hardened)
+        longest = math.ceil(self.repair_periods * self.repair_multiplier)
+        repairs = [longest]
+        if self.has("three-point repair"):
+            repairs = [math.ceil(0.5 * longest), longest, 2 * longest]
+        return self.n_window * tree_periods(
+            self.n_period, copies * (plain + len(hardened) + slices), repairs, copies * slices
+        )
+
+    def _cut_something(self) -> bool:
+        """One step towards a smaller tree; False where nothing is left to cut."""
+        failing = self._failing_lines()
+        spare = [line for line in failing if line not in self._hardened_lines()]
+        may_shorten = self.asked_periods is None
+        if self.n_period > 4 and may_shorten:
+            self.n_period -= 1
+        elif len(failing) > 2 and spare:
+            self._without_failures(spare[-1])
+        elif self.repair_periods > 1 and self.has("three-point repair"):
+            self.repair_periods -= 1
+        elif self.n_period > 3 and may_shorten:
+            self.n_period -= 1
+        elif len(self.measures) > 1 and self.is_drawn and self.chance(0.6):
+            self.measures = self.measures[:1]
+        elif self.repair_periods > 1:
+            self.repair_periods -= 1
+        elif len(failing) > 1 and spare:
+            self._without_failures(spare[-1])
+        elif self.is_drawn and any(unit.start_failure_frac > 0 for unit in self.generators):
+            self.generators = tuple(replace(u, start_failure_frac=0.0) for u in self.generators)
+        elif len(self.measures) > 1 and self.is_drawn:
+            self.measures = self.measures[:1]
+        elif self.has("three-point repair") and self.is_drawn:
+            self.features = self.features - {"three-point repair"}
+        else:
+            return False
+        return True
+
+    def _failing_lines(self) -> list[str]:
+        return [line.line for line in self.lines if line.outage_class and not line.normally_open]
+
+    def _hardened_lines(self) -> set[str]:
+        return {line for measure in self.measures for line in measure.lines}
 
     def _without_failures(self, name: str) -> None:
         self.lines = tuple(
@@ -801,7 +828,7 @@ class _Draw:
             if last and self.has("failure multiplier"):
                 window = replace(window, failure_multiplier=self.uniform(1.5, 3.0, 1))
             if last and self.has("repair multiplier"):
-                window = replace(window, repair_multiplier=self.uniform(1.2, 2.0, 1))
+                window = replace(window, repair_multiplier=self.repair_multiplier)
             if last and self.has("start charge by window"):
                 floor = max(unit.min_soc_frac for unit in self.storage)
                 window = replace(
@@ -941,23 +968,23 @@ class _Draw:
         )
 
 
-def tree_nodes(n_period: int, n_scenario: int, repairs: list[int]) -> int:
-    """Periods in the whole scenario tree if every one of the scenarios may strike in every period.
+def tree_periods(n_period: int, n_scenario: int, repairs: list[int], n_avoided: int = 0) -> int:
+    """Periods in the whole scenario tree if every scenario may strike in every period.
 
-    ``N(u) = T - u + scenarios * sum_k sum_repairs (repair + N(k + 1 + repair))``.
+    ``N(u) = T - u + scenarios * sum_k sum_repairs (repair + N(k + 1 + repair))``, and for every
+    failure that a measure avoids, ``N(k + 1)`` for each repair time besides.
 
-    >>> tree_nodes(2, 1, [1])  # 2 periods; a failure in each, 1 period long, none after it
+    >>> tree_periods(2, 1, [1])  # 2 periods; a failure in each, 1 period long, none after it
     4
     """
-    nodes = [0] * (n_period + 1)
+    size = [0] * (n_period + 2)
     for u in range(n_period - 1, -1, -1):
-        after = sum(
-            repair + (nodes[k + 1 + repair] if k + 1 + repair < n_period else 0)
-            for k in range(u, n_period)
-            for repair in repairs
-        )
-        nodes[u] = n_period - u + n_scenario * after
-    return nodes[0]
+        size[u] = n_period - u
+        for k in range(u, n_period):
+            for repair in repairs:
+                after = size[min(k + 1 + repair, n_period)]
+                size[u] += n_scenario * (repair + after) + n_avoided * size[k + 1]
+    return size[0]
 
 
 def feature_names(study: Study) -> set[str]:

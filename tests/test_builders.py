@@ -11,7 +11,7 @@ from tests.builders import (
     feature_names,
     random_study,
     small_study,
-    tree_nodes,
+    tree_periods,
 )
 from xlplan.study.study import Study
 from xlplan.study.windows import build_window_series
@@ -108,10 +108,10 @@ def test_unknown_feature_is_refused() -> None:
         random_study(1, features={"teleport"})
 
 
-def test_tree_nodes_by_hand() -> None:
+def test_tree_periods_by_hand() -> None:
     # T = 3, two scenarios of one period. N(3) = 0, N(2) = 1 + 2*1 = 3,
     # N(1) = 2 + 2*(1 + N(3) + 1) = 6, N(0) = 3 + 2*((1 + N(2)) + (1 + N(3)) + 1) = 15.
-    assert tree_nodes(3, 2, [1]) == 15
+    assert tree_periods(3, 2, [1]) == 15
 
 
 def test_small_study_changes_settings_and_fields() -> None:

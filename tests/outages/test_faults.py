@@ -170,8 +170,10 @@ def test_a_supply_that_shares_the_bulk_supply_helps_in_a_fault_but_not_without_i
 
 
 def test_units_in_the_dead_section_are_dead():
-    study = town(generators=(make_generator("GB", "B"), make_generator("GC", "C")),
-                 storage=(make_storage("ED", "D"),))
+    study = town(
+        generators=(make_generator("GB", "B"), make_generator("GC", "C")),
+        storage=(make_storage("ED", "D"),),
+    )
     _, (isolation, repair) = fault_on(study, "M2")
     assert isolation.generator_live.tolist() == [False, False]
     assert repair.generator_live.tolist() == [False, True]
@@ -199,8 +201,10 @@ def test_bulk_supply_failure():
 
 
 def test_a_failed_unit_leaves_nothing_dead():
-    study = town(generators=(make_generator("G1", "B"), make_generator("G2", "C")),
-                 storage=(make_storage("E1", "B"),))
+    study = town(
+        generators=(make_generator("G1", "B"), make_generator("G2", "C")),
+        storage=(make_storage("E1", "B"),),
+    )
     feeder = build_feeder(study)
     sections = build_sections(feeder)
     (stage,) = failed_unit_stages(study, feeder, sections, 4, generator=1)

@@ -17,8 +17,9 @@ def cut(study: Study) -> tuple[Sections, dict[str, str]]:
     """Sections, and the label of the section of every bus and line by name."""
     feeder = build_feeder(study)
     sections = build_sections(feeder)
-    of = {b: sections.labels[s] for b, s in zip(feeder.bus_ids, sections.section_of_bus)}
-    of |= {x: sections.labels[s] for x, s in zip(feeder.line_ids, sections.section_of_line)}
+    names = (*feeder.bus_ids, *feeder.line_ids)
+    section_of = (*sections.section_of_bus, *sections.section_of_line)
+    of = {name: sections.labels[i] for name, i in zip(names, section_of, strict=True)}
     return sections, of
 
 

@@ -119,8 +119,9 @@ def test_no_delay_where_a_source_feeds_the_unit():
 def test_tanks_refill_where_the_bulk_supply_is_live_and_the_delay_is_over():
     def refills(line, supplies=(), bus="A", delay_h=2.0):
         unit = make_generator("G", bus, refill_delay_h=delay_h)
-        return flags(service_of(town(supplies=supplies, generators=(unit,)), line)[1],
-                     "generator_refills")
+        return flags(
+            service_of(town(supplies=supplies, generators=(unit,)), line)[1], "generator_refills"
+        )
 
     assert refills("M2") == [False, False, True, True]  # A stays on the source; 2 h delay
     assert refills("M2", delay_h=0.0) == [True] * 4

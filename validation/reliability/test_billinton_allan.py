@@ -7,6 +7,16 @@ from pathlib import Path
 
 import pytest
 
+from tests.builders import (
+    make_bus,
+    make_line,
+    make_load,
+    make_outage_class,
+    make_profiles,
+    make_supply,
+    make_window,
+    small_study,
+)
 from validation.reliability.build_study import (
     CASES,
     Case,
@@ -15,6 +25,9 @@ from validation.reliability.build_study import (
     study_tables,
 )
 from xlplan.cli import main
+from xlplan.network.feeder import build_feeder
+from xlplan.outages.window_model import build_window_models
+from xlplan.study.study import Device, Study
 from xlplan.workbook.template import write_study_workbook
 
 SWITCHING_H = 0.5
@@ -95,6 +108,58 @@ def test_sums_give_the_published_indices(case: Case) -> None:
     for point, expected in by_point.items():
         assert sums[point] == pytest.approx(expected, rel=1e-9)
     assert indices(case) == pytest.approx(published(case), rel=TOLERANCE_PRINTED)
+
+
+def study_records(case: Case) -> Study:
+    """The tables as records, without a workbook: hours of half-hour periods, rates per km."""
+    tables = study_tables(case)
+    return small_study(
+        period_h=0.5,
+        buses=tuple(make_bus(str(row["bus"])) for row in tables["Buses"]),
+        loads=tuple(make_load(str(row["load"]), str(row["bus"])) for row in tables["Loads"]),
+        lines=tuple(
+            make_line(
+                str(row["line"]),
+                str(row["from_bus"]),
+                str(row["to_bus"]),
+                length=row["length"],
+                from_device=Device(str(row["from_device"])),
+                outage_class=row["outage_class"],
+            )
+            for row in tables["Lines"]
+        ),
+        supplies=tuple(
+            make_supply(str(row["supply"]), str(row["bus"])) for row in tables["Neighbour supplies"]
+        ),
+        outage_classes=tuple(
+            make_outage_class(
+                str(row["outage_class"]),
+                0.0,
+                failures_per_length_year=row["failures_per_length_year"],
+                repair_h=row["repair_hours"],
+                switching_h=SWITCHING_H,
+            )
+            for row in tables["Outage assumptions"]
+        ),
+        profiles=make_profiles(48),
+        windows=(make_window("day", 48, occurrences_per_year=365.0),),
+    )
+
+
+@pytest.mark.parametrize("case", CASES, ids=lambda case: f"case {case.number}")
+def test_stages_give_the_sums(case: Case) -> None:
+    """Sections, isolation, repair and back-feed leave each load point dead as long as summed."""
+    study = study_records(case)
+    feeder = build_feeder(study)
+    scenarios = build_window_models(study, feeder)[0].scenarios
+    for point, expected in load_point_sums(case).items():
+        bus = feeder.bus_ids.index(point)
+        failures = hours = 0.0
+        for scenario in scenarios:
+            n_dead = sum(not period.bus_live[bus] for period in scenario.service)
+            failures += float(scenario.rate_per_year[0]) * (n_dead > 0)
+            hours += float(scenario.rate_per_year[0]) * n_dead * study.settings.period_h
+        assert (failures, hours) == pytest.approx(expected, rel=1e-9)
 
 
 @pytest.mark.parametrize(

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable
+from itertools import pairwise
 
 Point = tuple[float, float]
 
@@ -41,7 +42,7 @@ def points_below_hull(points: Iterable[Point]) -> tuple[Point, ...]:
     hull = upper_hull(points)
     below = []
     for z, b in points:
-        for (z0, b0), (z1, b1) in zip(hull, hull[1:], strict=False):
+        for (z0, b0), (z1, b1) in pairwise(hull):
             if z0 <= z <= z1 and b < b0 + (b1 - b0) * (z - z0) / (z1 - z0) - TOLERANCE:
                 below.append((z, b))
                 break

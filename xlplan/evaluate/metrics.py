@@ -3,7 +3,8 @@
 Every entry adds up over periods and events, so its expectation is a weighted sum. Entries: cost
 parts of running a window, interruption cost on each load's own clock, energy burnt in the relaxed
 area of the loss curves, energy shed in normal service; and per load energy not supplied,
-interruptions (sustained and momentary, in shares of its customers) and interrupted hours.
+interruptions (sustained and momentary, in shares of its customers), interrupted hours and the
+interruption cost.
 
 Shares follow IEEE 1366 where they are 0 or 1: an event counts the largest share of the load shed,
 interruptions of up to five minutes count apart as momentary. Isolation counts with its true
@@ -54,7 +55,7 @@ SINGLE = (
 COST_PARTS = SINGLE[:7]
 """Entries that add up to the cost of running a window."""
 
-PER_LOAD = ("ens_kwh", "sustained", "momentary", "hours")
+PER_LOAD = ("ens_kwh", "sustained", "momentary", "hours", "cost")
 """Entries with one number per load."""
 
 
@@ -227,14 +228,15 @@ def event_metrics(
     shed = dispatch.shed_kw
     missed = shed * context.keep * dt
     clock = np.arange(scenario.n_period) * dt
-    first_moment = float(shed.max(axis=0) * context.keep @ context.first_moment)
-    price = context.event_price(clock)
-    out[slots.single("interruption")] = float((missed * price).sum()) + first_moment
+    first_moment = shed.max(axis=0) * context.keep * context.first_moment
+    by_load = (missed * context.event_price(clock)).sum(axis=0) + first_moment
+    out[slots.single("interruption")] = by_load.sum()
+    out[slots.per_load("cost")] = by_load
     load = series.load_kw[rows]
     share = np.divide(shed, load, out=np.zeros_like(shed), where=load > 0.0)
     share = np.where(share < SHARE_TOLERANCE, 0.0, np.minimum(share, 1.0))
     own = context.event_price(_own_clock(share > 0.0) * dt)
-    out[slots.single("interruption_own_clock")] = float((missed * own).sum()) + first_moment
+    out[slots.single("interruption_own_clock")] = float((missed * own).sum() + first_moment.sum())
     out[slots.per_load("ens_kwh")] = missed.sum(axis=0)
     sustained, momentary, hours = count_interruptions(
         share, dt, scenario.n_isolation, scenario.switching_h

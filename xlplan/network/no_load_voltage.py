@@ -37,22 +37,6 @@ class StageLike(Protocol):
     def source_live(self) -> bool: ...
     @property
     def closed_supplies(self) -> tuple[int, ...]: ...
-    @property
-    def islands(self) -> tuple[tuple[int, ...], ...]: ...
-
-
-class IslandLike(Protocol):
-    """The buses of an island that something forms."""
-
-    @property
-    def buses(self) -> tuple[int, ...]: ...
-
-
-class PeriodLike(Protocol):
-    """The islands formed in one period."""
-
-    @property
-    def islands(self) -> tuple[IslandLike, ...]: ...
 
 
 class ScenarioLike(Protocol):
@@ -62,8 +46,6 @@ class ScenarioLike(Protocol):
     def name(self) -> str: ...
     @property
     def stages(self) -> tuple[StageLike, ...]: ...
-    @property
-    def service(self) -> tuple[PeriodLike, ...]: ...
 
 
 def no_load_v_sq(feeder: Feeder, tree: RadialTree, root_v_sq: float) -> FloatArray:
@@ -89,10 +71,10 @@ def check_no_load_voltage(
 ) -> list[Finding]:
     """Faults where the voltage with nothing flowing leaves a band, in service or in an event.
 
-    Parts fed by a source hold the source's voltage there; a normal feeder has to fit both bands,
-    since the source feeds all of it in some events too. In an island the level is free, so only
-    the ratio of its highest to its lowest voltage has to fit the band of outage events; islands
-    that nothing forms are dead and have none.
+    Parts fed by a source hold the source's voltage there. The normal feeder has to fit both bands,
+    since in some events the source feeds all of it. In an island the level is free and only the
+    ratio of its highest to its lowest voltage counts; an island is a piece of the normal feeder
+    (no tie is closed into it), so it fits wherever the normal feeder does, at the same level.
 
     Parameters
     ----------
@@ -111,9 +93,8 @@ def check_no_load_voltage(
     for window, scenarios in scenarios_by_window.items():
         for scenario in scenarios:
             when = f'in "{scenario.name}" ({window})'
-            formed = {island.buses for period in scenario.service for island in period.islands}
             for stage in scenario.stages:
-                check.stage(stage, formed, when)
+                check.stage(stage, when)
     return list(check.found.values())
 
 
@@ -126,25 +107,17 @@ class _Check:
         self.found: dict[tuple[str, str, bool], Finding] = {}
         self._seen: set[tuple[object, ...]] = set()
 
-    def stage(self, stage: StageLike, formed: set[tuple[int, ...]], when: str) -> None:
-        """One stage: what its sources feed, and its islands."""
+    def stage(self, stage: StageLike, when: str) -> None:
+        """One stage: what its sources feed."""
         feeder = self.feeder
         sources = [int(feeder.supply_bus[i]) for i in stage.closed_supplies]
         if stage.source_live and stage.bus_live[feeder.source]:
             sources.append(feeder.source)
-        lines = stage.line_live.tobytes()
-        if self._is_new(lines, tuple(sources)):
+        key = (stage.line_live.tobytes(), tuple(sources))
+        if key not in self._seen:
+            self._seen.add(key)
             tree = radial_tree(feeder, stage.line_live, sources)
             self.fed_part(tree, is_event=True, when=when)
-        for island in stage.islands:
-            if island in formed and self._is_new(lines, island):
-                self.island(stage.line_live, island, when)
-
-    def _is_new(self, *key: object) -> bool:
-        """True the first time."""
-        is_new = key not in self._seen
-        self._seen.add(key)
-        return is_new
 
     def fed_part(self, tree: RadialTree, is_event: bool, when: str) -> None:
         """Buses fed from a source stay inside the band."""
@@ -163,24 +136,6 @@ class _Check:
                 f"with nothing flowing, bus {self.feeder.bus_ids[i_bus]} has {v_pu[i_bus]:.4f} "
                 f"p.u. {when}, outside the limits for {band}, {low:g} to {high:g} p.u.",
             )
-
-    def island(self, line_live: BoolArray, island: tuple[int, ...], when: str) -> None:
-        """The highest voltage of an island over its lowest fits the band."""
-        feeder, settings = self.feeder, self.study.settings
-        tree = radial_tree(feeder, line_live, [island[0]])
-        v_pu = np.sqrt(no_load_v_sq(feeder, tree, 1.0))[list(island)]
-        ratio = float(v_pu.max() / v_pu.min())
-        if ratio <= settings.vmax_event_pu / settings.vmin_event_pu + VOLTAGE_TOLERANCE_PU:
-            return
-        high, low = island[int(v_pu.argmax())], island[int(v_pu.argmin())]
-        self._add(
-            radial_tree(feeder, line_live, [low]).path_lines(high),
-            True,
-            f"with nothing flowing, bus {feeder.bus_ids[high]} is "
-            f"{pct_from_frac(ratio - 1.0):.1f} % above bus {feeder.bus_ids[low]} of the same "
-            f"island {when}: no voltage of the island puts both between "
-            f"{settings.vmin_event_pu:g} and {settings.vmax_event_pu:g} p.u.",
-        )
 
     def _add(self, path: tuple[int, ...], is_event: bool, message: str) -> None:
         """One finding per place and band, at what sets the voltage: the last boost on the way."""

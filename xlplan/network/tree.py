@@ -90,17 +90,27 @@ def radial_tree(feeder: Feeder, line_live: BoolArray, roots: Iterable[int]) -> R
 
 
 def connected_parts(feeder: Feeder, line_live: BoolArray, bus_live: BoolArray) -> IntArray:
-    """Connected part of each live bus over live lines.
+    """Connected part of each live bus over live lines, which join live buses only.
 
     Returns
     -------
     array, shape (n_bus,): parts numbered from 0 by their first bus, -1 where the bus is dead
     """
+    # Union-find, the lower bus as head of a group.
+    head = list(range(feeder.n_bus))
+
+    def head_of(i_bus: int) -> int:
+        while head[i_bus] != i_bus:
+            head[i_bus] = head[head[i_bus]]
+            i_bus = head[i_bus]
+        return i_bus
+
+    ends = zip(feeder.from_bus[line_live].tolist(), feeder.to_bus[line_live].tolist(), strict=True)
+    for i_bus, j_bus in ends:
+        first, second = sorted((head_of(i_bus), head_of(j_bus)))
+        head[second] = first
+    heads = np.array([head_of(i_bus) for i_bus in range(feeder.n_bus)], dtype=np.int64)
     part = np.full(feeder.n_bus, -1, dtype=np.int64)
-    n_part = 0
-    for i_bus in range(feeder.n_bus):
-        if bus_live[i_bus] and part[i_bus] < 0:
-            members = radial_tree(feeder, line_live, [i_bus]).order
-            part[list(members)] = n_part
-            n_part += 1
+    live = np.flatnonzero(bus_live)
+    part[live] = np.unique(heads[live], return_inverse=True)[1]
     return part

@@ -8,6 +8,7 @@ those that act: whole periods of isolation and of the event, and the true switch
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, replace
 
@@ -132,6 +133,7 @@ class _EventBuilder:
         self.study = study
         self.feeder = feeder
         self.sections = sections
+        self._topologies: dict[tuple[str, int], tuple[Stage, ...]] = {}
         self._cache: dict[
             tuple[object, ...], tuple[tuple[Stage, ...], tuple[ServicePeriod, ...]]
         ] = {}
@@ -202,18 +204,31 @@ class _EventBuilder:
             place = int(self.sections.section_of_line[component.position])
         key = (component.kind, place, n_isolation, n_period)
         if key not in self._cache:
-            of = (self.study, self.feeder, self.sections)
-            if component.kind == LINE:
-                stages = isolation_and_repair(*of, place, n_isolation, n_period)
-            elif component.kind == BULK_SUPPLY:
-                stages = bulk_supply_stages(*of, n_isolation, n_period)
-            elif component.kind == GENERATOR:
-                stages = failed_unit_stages(*of, n_period, generator=place)
-            else:
-                stages = failed_unit_stages(*of, n_period, storage=place)
+            stages = self._topology(component.kind, place)
+            lasting = [n_isolation, n_period - n_isolation] if len(stages) == 2 else [n_period]
+            stages = tuple(
+                replace(stage, n_period=n)
+                for stage, n in zip(stages, lasting, strict=True)
+                if n > 0
+            )
             service = service_periods(self.study, self.feeder, stages, n_isolation)
             self._cache[key] = (stages, service)
         return self._cache[key]
+
+    def _topology(self, kind: str, place: int) -> tuple[Stage, ...]:
+        """Isolation and repair, or a failed unit's one stage, of one period each."""
+        if (kind, place) not in self._topologies:
+            of = (self.study, self.feeder, self.sections)
+            if kind == LINE:
+                stages = isolation_and_repair(*of, place, 1, 2)
+            elif kind == BULK_SUPPLY:
+                stages = bulk_supply_stages(*of, 1, 2)
+            elif kind == GENERATOR:
+                stages = failed_unit_stages(*of, 1, generator=place)
+            else:
+                stages = failed_unit_stages(*of, 1, storage=place)
+            self._topologies[kind, place] = stages
+        return self._topologies[kind, place]
 
     def _hardening(self, component: Component) -> tuple[tuple[int, float], ...]:
         """(measure, share of failures avoided) of a line, ascending by share."""
@@ -323,12 +338,12 @@ def _joined_causes(events: list[_Event]) -> tuple[Cause, ...]:
 
 def _with_unique_names(scenarios: list[Scenario]) -> tuple[Scenario, ...]:
     """Names that differ: where needed, the causes are named, and a number added."""
-    names = [scenario.name for scenario in scenarios]
+    count = Counter(scenario.name for scenario in scenarios)
     result: list[Scenario] = []
     taken: set[str] = set()
     for scenario in scenarios:
         name = scenario.name
-        if names.count(name) > 1:
+        if count[name] > 1:
             idents = [cause.ident for cause in scenario.causes]
             listed = ", ".join(idents[:3]) + (" and others" if len(idents) > 3 else "")
             name = f"{name} ({listed})"

@@ -50,6 +50,7 @@ class Sections:
     edges : devices of closed lines
     parent_edge, parent_section : (n_section,), towards the source, -1 at the source's section and
         where no closed line leads (an open tie's own section)
+    order : the sections that closed lines lead to, each after its parent
     """
 
     section_of_bus: IntArray
@@ -58,6 +59,7 @@ class Sections:
     edges: tuple[SectionEdge, ...]
     parent_edge: IntArray
     parent_section: IntArray
+    order: tuple[int, ...]
 
     @property
     def n_section(self) -> int:
@@ -76,12 +78,10 @@ class Sections:
         """(n_section,), True for the section and all that hangs below it."""
         is_beyond = np.zeros(self.n_section, dtype=bool)
         is_beyond[i_section] = True
-        for other in range(self.n_section):
-            climbed = [other]
-            while climbed[-1] >= 0 and not is_beyond[climbed[-1]]:
-                climbed.append(int(self.parent_section[climbed[-1]]))
-            if climbed[-1] >= 0:
-                is_beyond[climbed] = True
+        for other in self.order:
+            parent = int(self.parent_section[other])
+            if parent >= 0 and is_beyond[parent]:
+                is_beyond[other] = True
         return is_beyond
 
 
@@ -126,7 +126,7 @@ def build_sections(feeder: Feeder) -> Sections:
             section_of_line[i_line] = section_of_bus[end[i_line]]
     edges = _build_edges(feeder, section_of_bus, section_of_line)
     n_section = len(heads) + len(own_line)
-    parent_edge, parent_section = _hang_from_source(
+    parent_edge, parent_section, order = _hang_from_source(
         edges, n_section, int(section_of_bus[feeder.source])
     )
     depth = _bus_depth(feeder)
@@ -143,6 +143,7 @@ def build_sections(feeder: Feeder) -> Sections:
         edges=edges,
         parent_edge=parent_edge,
         parent_section=parent_section,
+        order=order,
     )
 
 
@@ -179,8 +180,8 @@ def _build_edges(
 
 def _hang_from_source(
     edges: tuple[SectionEdge, ...], n_section: int, root: int
-) -> tuple[IntArray, IntArray]:
-    """Parent edge and parent section of each section, by walking away from the source."""
+) -> tuple[IntArray, IntArray, tuple[int, ...]]:
+    """Parent edge and section of each section and their order, walking away from the source."""
     touching: list[list[tuple[int, int]]] = [[] for _ in range(n_section)]
     for i_edge, edge in enumerate(edges):
         touching[edge.bus_section].append((i_edge, edge.line_section))
@@ -194,7 +195,7 @@ def _hang_from_source(
                 reached.add(other)
                 parent_edge[other], parent_section[other] = i_edge, i_section
                 order.append(other)
-    return parent_edge, parent_section
+    return parent_edge, parent_section, tuple(order)
 
 
 def _bus_depth(feeder: Feeder) -> IntArray:

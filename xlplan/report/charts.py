@@ -74,6 +74,33 @@ def bars(
     return _finish(chart, title)
 
 
+def columns(
+    book: SafeBook,
+    title: str,
+    categories: CellRange,
+    series: Sequence[Series],
+    category_title: str,
+    axis_title: str,
+) -> Chart:
+    """Columns side by side from 0, for names without room for bars."""
+    chart = book.new_chart("column")
+    for one in series:
+        chart.add_series(
+            {
+                "name": one.name,
+                "categories": categories,
+                "values": one.values,
+                "fill": {"color": one.colour},
+                "border": {"color": INK, "width": 0.5},
+                "gap": 60,
+            }
+        )
+    axis = {"name": category_title, "name_font": _font(9), "num_font": _font(8)}
+    chart.set_x_axis({**axis, "line": {"color": GREY}})
+    chart.set_y_axis({**_value_axis(axis_title, "#,##0.0"), "min": 0})
+    return _finish(chart, title)
+
+
 def _labels(one: Series, is_stacked: bool, above: float, number_format: str) -> dict[str, Any]:
     colour = one.label_colour if is_stacked else INK
     labels: dict[str, Any] = {
@@ -108,7 +135,7 @@ def stacked_columns_and_line(
                 "values": one.values,
                 "fill": {"color": one.colour},
                 "border": {"none": True},
-                "gap": 10,
+                "gap": 0,
                 "overlap": 100,
             }
         )
@@ -130,7 +157,7 @@ def columns_over_time(
             "values": one.values,
             "fill": {"color": one.colour},
             "border": {"none": True},
-            "gap": 10,
+            "gap": 0,
         }
     )
     chart.set_legend({"none": True})
@@ -220,6 +247,7 @@ def _finish_over_time(
             "interval_unit": step,
             "interval_tick": step,
             "label_position": "low",
+            "major_tick_mark": "none",
             "line": {"color": GREY},
             "text_axis": True,
         }

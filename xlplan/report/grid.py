@@ -14,6 +14,12 @@ from xlsxwriter.utility import xl_rowcol_to_cell
 
 from xlplan.report.safe_book import ABSENT, SafeSheet
 
+LEFT_LOOKS = ("text", "wrap", "status", "any")
+HEADING_CHARS, BODY_CHARS = 1.0, 1.08
+"""Characters of bold and of plain Arial that fit in one unit of column width (measured)."""
+
+LINE_POINTS = 13.0
+
 
 @dataclass(frozen=True)
 class Formula:
@@ -96,24 +102,47 @@ class Grid:
         sheet: SafeSheet,
         rows: Sequence[Mapping[str, Cell]],
         marked: Sequence[int] = (),
-        heading_lines: int = 2,
     ) -> None:
-        """Writes headings and rows; rows in ``marked`` are set off."""
+        """Writes headings and rows; rows in ``marked`` are set off.
+
+        The widths of the sheet's columns must be set before: row heights follow from them.
+        """
         if len(rows) != self.n_row:
             raise ValueError(f"{len(rows)} rows for a table of {self.n_row}")
-        numeric = [not column.look.startswith(("text", "wrap", "status")) for column in self.columns]
+        lines = 1
         for i, column in enumerate(self.columns):
             title = sheet.book.words(column.title)
-            look = "heading_right" if numeric[i] else "heading"
-            sheet.text(self.top, self.left + i, title, look)
-        sheet.height(self.top, 13.5 * heading_lines + 3)
+            is_text = column.look in LEFT_LOOKS
+            sheet.text(self.top, self.left + i, title, "heading" if is_text else "heading_right")
+            room = HEADING_CHARS * sheet.width(self.left + i) - (0 if is_text else 1)
+            lines = max(lines, lines_needed(title, room))
+        sheet.height(self.top, LINE_POINTS * lines + 4)
         if not rows:
             sheet.text(self.row(0), self.left, "none", "note")
         for i_row, row in enumerate(rows):
             extra = ("plan",) if i_row in marked else ()
+            lines = 1
             for i, column in enumerate(self.columns):
                 looks = (column.look, *(("input",) if column.is_input else ()), *extra)
-                write_cell(sheet, self.row(i_row), self.left + i, row[column.key], *looks)
+                cell = row[column.key]
+                write_cell(sheet, self.row(i_row), self.left + i, cell, *looks)
+                if column.look == "wrap" and isinstance(cell, str):
+                    room = BODY_CHARS * sheet.width(self.left + i)
+                    lines = max(lines, lines_needed(cell, room))
+            if lines > 1:
+                sheet.height(self.row(i_row), LINE_POINTS * lines + 3)
+
+
+def lines_needed(text: str, room: float) -> int:
+    """Lines that wrapped text takes where ``room`` characters fit on one."""
+    lines, used = 1, 0.0
+    for word in text.split():
+        if used and used + 1 + len(word) > room:
+            lines, used = lines + 1, 0.0
+        used += len(word) + (1 if used else 0)
+        while used > room > 0:
+            lines, used = lines + 1, used - room
+    return lines
 
 
 def write_cell(sheet: SafeSheet, row: int, col: int, cell: Cell, *looks: str) -> None:

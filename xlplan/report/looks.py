@@ -14,6 +14,7 @@ VERMILION = "#D55E00"
 GREEN = "#009E73"
 ORANGE = "#E69F00"
 SKY = "#56B4E9"
+PURPLE = "#CC79A7"
 NAVY = "#0B3954"
 BLACK = "#000000"
 INK = "#1B2B34"
@@ -25,7 +26,7 @@ INPUT_FONT = "#0000FF"
 OK_FILL, OK_FONT = "#D9F0E6", "#00543C"
 LOOK_FILL, LOOK_FONT = "#FFD8B0", "#7A3E00"
 
-SERIES_COLOURS = (BLUE, ORANGE, NAVY, SKY, VERMILION, GREEN)
+SERIES_COLOURS = (BLUE, ORANGE, VERMILION, SKY, GREEN, PURPLE)
 """Up to six series, neighbours apart in lightness."""
 
 FONT = "Arial"
@@ -33,6 +34,11 @@ FONT = "Arial"
 Properties = dict[str, Any]
 
 _NUMBER: Properties = {"align": "right", "valign": "top"}
+
+PAD = "_W"
+"""At the end of a number format: room as wide as a W, so that columns do not touch. Cell indents
+would do the same, but LibreOffice ignores them for some numbers."""
+
 _TEXT: Properties = {"align": "left", "valign": "top"}
 
 LOOKS: dict[str, Properties] = {
@@ -58,34 +64,38 @@ LOOKS: dict[str, Properties] = {
         "text_wrap": True,
         "valign": "bottom",
         "align": "right",
+        "indent": 1,
     },
     "text": _TEXT,
     "wrap": {**_TEXT, "text_wrap": True},
     "note": {**_TEXT, "font_color": GREY, "italic": True},
+    "remark": {**_TEXT, "font_color": GREY, "italic": True, "indent": 1},
     "link": {**_TEXT, "font_color": BLUE, "underline": 1},
     "status": {**_TEXT, "bold": True},
     "absent": {**_NUMBER, "font_color": GREY, "italic": True},
     "money": _NUMBER,
     "change": _NUMBER,
-    "price": {**_NUMBER, "num_format": "#,##0.00"},
-    "power": {**_NUMBER, "num_format": "#,##0.0"},
-    "energy": {**_NUMBER, "num_format": "#,##0.0"},
-    "whole": {**_NUMBER, "num_format": "#,##0"},
-    "index": {**_NUMBER, "num_format": "0.000"},
-    "share": {**_NUMBER, "num_format": "0.000000"},
-    "hours": {**_NUMBER, "num_format": "#,##0.00"},
-    "years": {**_NUMBER, "num_format": "#,##0.0"},
-    "percent": {**_NUMBER, "num_format": "0.00%"},
-    "factor": {**_NUMBER, "num_format": "0.00000"},
-    "small": {**_NUMBER, "num_format": "0.0000"},
-    "any": {**_NUMBER, "num_format": "General"},
-    "exact": {**_NUMBER, "num_format": "#,##0.000###"},
+    "price": {**_NUMBER, "num_format": f"#,##0.00{PAD}"},
+    "power": {**_NUMBER, "num_format": f"#,##0.0{PAD}"},
+    "energy": {**_NUMBER, "num_format": f"#,##0.0{PAD}"},
+    "whole": {**_NUMBER, "num_format": f"#,##0{PAD}"},
+    "index": {**_NUMBER, "num_format": f"0.000{PAD}"},
+    "share": {**_NUMBER, "num_format": f"0.000000{PAD}"},
+    "hours": {**_NUMBER, "num_format": f"#,##0.00{PAD}"},
+    "years": {**_NUMBER, "num_format": f"#,##0.0{PAD}"},
+    "percent": {**_NUMBER, "num_format": f"0.00%{PAD}"},
+    "factor": {**_NUMBER, "num_format": f"0.00000{PAD}"},
+    "small": {**_NUMBER, "num_format": f"0.0000{PAD}"},
+    "any": {**_TEXT, "num_format": "General"},
+    "exact": {**_NUMBER, "num_format": f"#,##0.000{PAD}"},
+    "margin": {**_NUMBER, "num_format": f"[=0]0{PAD};[<0.001]0.0E+00{PAD};#,##0.000{PAD}"},
 }
 
 MODIFIERS: dict[str, Properties] = {
     "bold": {"bold": True},
     "total": {"bold": True, "top": 1, "top_color": INK},
     "input": {"font_color": INPUT_FONT, "bg_color": INPUT_FILL},
+    "indent": {"indent": 1},
     "plan": {"bold": True, "bg_color": "#EEF4F8"},
 }
 

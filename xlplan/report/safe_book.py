@@ -19,6 +19,7 @@ from typing import Any
 import xlsxwriter
 from xlsxwriter.chart import Chart
 from xlsxwriter.format import Format
+from xlsxwriter.utility import xl_rowcol_to_cell
 from xlsxwriter.worksheet import Worksheet
 
 from xlplan.report.looks import (
@@ -29,6 +30,7 @@ from xlplan.report.looks import (
     MODIFIERS,
     OK_FILL,
     OK_FONT,
+    PAD,
     money_format,
 )
 
@@ -36,6 +38,7 @@ MAX_TEXT = 32_767
 """Characters in a cell (Excel specifications and limits)."""
 
 A4 = 9
+MAX_FOOTER = 255
 ABSENT = "not computed"
 
 
@@ -56,6 +59,7 @@ class SafeSheet:
         self.book = book
         self.name = name
         self._sheet = sheet
+        self._widths: dict[int, float] = {}
 
     def text(self, row: int, col: int, text: str, *looks: str) -> None:
         """Text as text, whatever it begins with; beyond what a cell holds it is cut visibly."""
@@ -99,7 +103,8 @@ class SafeSheet:
             self._sheet.merge_range(row, first_col, row, last_col, "", look),
             f"paragraph in {self.name} row {row}",
         )
-        self._sheet.write_string(row, first_col, text[:MAX_TEXT], look)
+        code = self._sheet.write_string(row, first_col, text[:MAX_TEXT], look)
+        ensure(code, f"paragraph in {self.name} row {row}")
         points = 1.3 * (look.font_size or 10)
         self.height(row, points * max(1, math.ceil(len(text) / chars)) + 3)
 
@@ -119,38 +124,54 @@ class SafeSheet:
         """Width of each column, in characters."""
         for i, width in enumerate(widths):
             ensure(self._sheet.set_column(first_col + i, first_col + i, width), "column width")
+            self._widths[first_col + i] = width
+
+    def width(self, col: int) -> float:
+        """Width of a column set before, in characters; the standard one otherwise."""
+        return self._widths.get(col, 8.43)
+
+    def pixels(self, first_col: int, last_col: int) -> int:
+        """Width of several columns on a screen: 7 pixels a character and 5 around it (Arial 10)."""
+        return round(sum(7 * self.width(col) + 5 for col in range(first_col, last_col + 1)))
 
     def height(self, row: int, points: float) -> None:
         """Height of a row."""
         ensure(self._sheet.set_row(row, points), "row height")
+
+    def page_break(self, row: int) -> None:
+        """Starts a new printed page at a row, where the reader's program heeds it."""
+        ensure(self._sheet.set_h_pagebreaks([row]), "page break")
 
     def freeze(self, row: int, col: int) -> None:
         """Keeps the rows above and the columns left of a cell in sight."""
         self._sheet.freeze_panes(row, col)
 
     def chart(
-        self, row: int, col: int, chart: Chart, width: int, height: int, alt_text: str
+        self, row: int, left_px: int, chart: Chart, width: int, height: int, alt_text: str
     ) -> None:
-        """Puts a chart at a cell; size in pixels; ``alt_text`` is read out in its place."""
+        """Puts a chart at a row, pixels from the left; ``alt_text`` is read out in its place."""
         chart.set_size({"width": width, "height": height})
-        options = {"description": alt_text, "object_position": 2, "x_offset": 4, "y_offset": 4}
-        ensure(self._sheet.insert_chart(row, col, chart, options), f"chart in {self.name}")
+        options = {
+            "description": alt_text,
+            "object_position": 2,
+            "x_offset": left_px + 2,
+            "y_offset": 4,
+        }
+        ensure(self._sheet.insert_chart(row, 0, chart, options), f"chart in {self.name}")
 
-    def status_fill(self, first_row: int, first_col: int, last_row: int, last_col: int) -> None:
-        """Fills cells by the word they begin with: OK words one way, all others the other."""
+    def status_fill(self, first_row: int, last_row: int, col: int, last_col: int) -> None:
+        """Fills cells by the word that column ``col`` begins with: OK one way, others another."""
+        anchor = xl_rowcol_to_cell(first_row, col, False, True)
         fine = {"bg_color": OK_FILL, "font_color": OK_FONT}
         look = {"bg_color": LOOK_FILL, "font_color": LOOK_FONT}
         for words, colours in ((("PASS",), fine), (("FAIL", "LOOK", "CHANGED", "STOP"), look)):
             for word in words:
                 rule = {
-                    "type": "text",
-                    "criteria": "begins with",
-                    "value": word,
+                    "type": "formula",
+                    "criteria": f'=LEFT({anchor},{len(word)})="{word}"',
                     "format": self.book.raw_format(colours),
                 }
-                code = self._sheet.conditional_format(
-                    first_row, first_col, last_row, last_col, rule
-                )
+                code = self._sheet.conditional_format(first_row, col, last_row, last_col, rule)
                 ensure(code, f"status fill in {self.name}")
 
     def print_setup(
@@ -173,6 +194,8 @@ class SafeSheet:
         ensure(sheet.print_area(0, 0, last_row, last_col), "print area")
         if heading_row is not None:
             ensure(sheet.repeat_rows(heading_row), "repeated rows")
+        if len(self.book.footer) > MAX_FOOTER:
+            raise WorkbookFault("footer too long")
         ensure(sheet.set_footer(self.book.footer), "footer")
         if is_one_page:
             sheet.center_horizontally()
@@ -202,7 +225,7 @@ class SafeBook:
         self._money = money_format(largest_amount)
         self._formats: dict[object, Format] = {}
         self._sheets: dict[str, SafeSheet] = {}
-        note = footer_note[:100].replace("&", "&&")
+        note = footer_note[:80].replace("&", "&&")
         self.footer = f"&L&8{note}&C&8&A&R&8Page &P of &N"
         properties: dict[str, Any] = {"title": title[:200]}
         if created is not None:
@@ -242,9 +265,9 @@ class SafeBook:
             for name in names:
                 properties.update(LOOKS[name] if name in LOOKS else MODIFIERS[name])
                 if name == "money":
-                    properties["num_format"] = self._money
+                    properties["num_format"] = f"{self._money}{PAD}"
                 if name == "change":
-                    properties["num_format"] = f"+{self._money};-{self._money};0"
+                    properties["num_format"] = f"+{self._money}{PAD};-{self._money}{PAD};0{PAD}"
             if wrapped:
                 properties.update({"text_wrap": True, "valign": "top"})
             self._formats[key] = self._book.add_format(properties)

@@ -47,7 +47,9 @@ def temporary_beside(path: Path) -> Iterator[Path]:
         handle, name = tempfile.mkstemp(prefix=TEMP_PREFIX, suffix=path.suffix, dir=folder)
         os.close(handle)
     except OSError as error:
-        raise ResultFileError(f"Cannot write in the folder '{folder}': {error.strerror}.") from error
+        raise ResultFileError(
+            f"Cannot write in the folder '{folder}': {error.strerror}."
+        ) from error
     temporary = Path(name)
     try:
         yield temporary

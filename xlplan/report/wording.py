@@ -19,8 +19,10 @@ POISSON_WARNING_FRAC = 0.05
 
 def plan_words(plan: PlanResult) -> str:
     """How a sentence names a plan."""
-    return f"The {LEAST_COST[0].lower()}{LEAST_COST[1:]}" if plan.name == LEAST_COST else (
-        f"“{plan.name}”"
+    return (
+        f"The {LEAST_COST[0].lower()}{LEAST_COST[1:]}"
+        if plan.name == LEAST_COST
+        else (f"“{plan.name}”")
     )
 
 

@@ -22,14 +22,14 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import sparse
 
 from xlplan.model.value_graph import Family, Member
+from xlplan.solve.row_matrix import RowMatrix
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
-ROUNDING_SHIFT = 1e-10
+ROUNDING_SHIFT = 1e-12
 """Share of the sum of absolute terms by which a cut is lowered, for rounding in floats."""
 
 SMALL_SLOPE = 1e-9
@@ -122,9 +122,7 @@ class CutPool:
         """Appends cuts; a second one of the same member and group is ignored."""
         fresh = [
             i
-            for i, key in enumerate(
-                zip(batch.member.tolist(), batch.group.tolist(), strict=True)
-            )
+            for i, key in enumerate(zip(batch.member.tolist(), batch.group.tolist(), strict=True))
             if key not in self._by_group and np.isfinite(batch.intercept[i])
         ]
         if len(fresh) < len(batch):
@@ -281,9 +279,7 @@ class DualBound:
         program = family.program
         self.i_family = i_family
         self.family = family
-        self.matrix = sparse.csr_array(
-            (program.value, program.index, program.start), shape=(program.n_row, program.n_col)
-        )
+        self.matrix = RowMatrix(program)
         self.patch = family.patch
         self.patch_base = program.value[family.patch]
         self.patch_row = np.searchsorted(program.start, family.patch, side="right") - 1
@@ -380,7 +376,7 @@ class _Walk:
         used = np.flatnonzero(self.pi)
         self.d = self.cost.copy()
         if len(used):
-            self.d -= matrix[used].T @ self.pi[used]
+            self.d -= matrix.transposed_times(used, self.pi[used])
         if len(bound.patch):
             step = self.pi[bound.patch_row] * (member.patch_value - bound.patch_base)
             np.subtract.at(self.d, bound.patch_column, step)
@@ -449,11 +445,9 @@ class _Walk:
             self.pi[rows] = pi
             moved = step != 0.0
             if moved.any():
-                part = self.bound.matrix[rows[moved]]
-                np.subtract.at(
-                    self.d, part.indices, part.data * np.repeat(step[moved], np.diff(part.indptr))
-                )
-                touched.append(part.indices)
+                start, index, value = self.bound.matrix.take(rows[moved])
+                np.subtract.at(self.d, index, value * np.repeat(step[moved], np.diff(start)))
+                touched.append(index)
         if len(change.exits):
             self.weight[change.exits] = change.exit_weight
             touched.append(self.weighted_exits(change.exits))
@@ -465,9 +459,7 @@ class _Walk:
     def terms(self) -> _Terms:
         """Sums for the member the walk stands at."""
         bound = self.bound
-        columns = np.concatenate(
-            [self.in_columns[self.in_columns >= 0], bound._capacity_columns]
-        )
+        columns = np.concatenate([self.in_columns[self.in_columns >= 0], bound._capacity_columns])
         kept = self.col_term[columns]
         self.col_term[columns] = 0.0
         intercept = (

@@ -22,7 +22,6 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import sparse
 
 from xlplan.model.value_graph import Member, ValueGraph
 from xlplan.solve.cuts import (
@@ -36,7 +35,8 @@ from xlplan.solve.cuts import (
 )
 from xlplan.solve.highs import FEASIBILITY_TOLERANCE, KeptModel
 from xlplan.solve.result import SolveResult
-from xlplan.solve.tables import GraphTables, MemberCache, clip_state
+from xlplan.solve.row_matrix import RowMatrix
+from xlplan.solve.tables import GraphTables, MemberCache
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -50,10 +50,10 @@ CUT_TOLERANCE = 1e-9
 """Relative violation below which a child's cut is not added, for float rounding."""
 
 DUAL_TOLERANCE = 1e-6
-"""Relative difference of a cut and the solver's objective at the same point that makes us re-solve."""
+"""Relative difference of a cut and the solver's objective that makes us drop the basis."""
 
 FACE_TOLERANCE = 1e-7
-"""Reduced cost, relative to the largest cost, above which a column stays at its bound on the face."""
+"""Reduced cost, relative to the largest cost, that keeps a column at its bound on the face."""
 
 FIRST_SLOTS = 3
 """Slots for the cuts of a child that changes with the member; more are added when needed."""
@@ -138,12 +138,9 @@ class NodeModel:
         self.n_col, self.n_exit = program.n_col, len(family.exit_gate)
         self.n_state = self.table.n_state
         self.counts: Counter[str] = Counter()
-        self._matrix = sparse.csr_array(
-            (program.value.copy(), program.index, program.start),
-            shape=(program.n_row, program.n_col),
-        )
+        self._matrix = RowMatrix(program)
         loaded = np.flatnonzero(~program.is_lazy)
-        part = self._matrix[loaded]
+        start, index, value = self._matrix.take(loaded)
         n_all = self.n_col + self.n_exit
         self._program_rows = loaded  # program row of the model's first rows, in order
         self._model_rows = np.arange(len(loaded))
@@ -160,9 +157,9 @@ class NodeModel:
             self._upper,
             self._row_lower[loaded],
             self._row_upper[loaded],
-            part.indptr,
-            part.indices,
-            part.data,
+            start,
+            index,
+            value,
         )
         self._member_index = -1
         self._member: Member | None = None
@@ -236,10 +233,9 @@ class NodeModel:
             result = self._model.run()
         else:
             self.counts["row rounds used up"] += 1
+        primal = result.col_value
         if second_cost is not None:
             primal = self._second(result, second_cost)
-        else:
-            primal = result.col_value
         return self._outcome(result, primal, capacity)
 
     def _place(self, i_member: int, state: FloatArray, capacity: FloatArray) -> None:
@@ -286,19 +282,19 @@ class NodeModel:
     def _patch(self, member: Member) -> None:
         """Matrix entries that differ between members."""
         patch = self.family.patch
-        for i in np.flatnonzero(self._matrix.data[patch] != member.patch_value):
+        for i in np.flatnonzero(self._matrix.value[patch] != member.patch_value):
             place = self._row_place[self.bound.patch_row[i]]
             if place >= 0:
                 self._model.set_row_coefficients(
                     int(place), self.bound.patch_column[i : i + 1], member.patch_value[i : i + 1]
                 )
-        self._matrix.data[patch] = member.patch_value
+        self._matrix.value[patch] = member.patch_value
 
     def _add_lazy_rows(self, y: FloatArray) -> int:
         """Adds lazy rows that ``y`` violates; their number."""
-        if len(self._program_rows) == self._matrix.shape[0]:
+        if len(self._program_rows) == self._matrix.n_row:
             return 0
-        activity = self._matrix @ y
+        activity = self._matrix.times(y)
         low, high = self._row_lower, self._row_upper
         with np.errstate(invalid="ignore"):
             excess = np.maximum(low - activity, activity - high)
@@ -306,9 +302,9 @@ class NodeModel:
         is_violated = (self._row_place < 0) & (excess > FEASIBILITY_TOLERANCE * scale)
         rows = np.flatnonzero(is_violated)
         if len(rows):
-            part = self._matrix[rows]
+            start, index, value = self._matrix.take(rows)
             places = self._model.n_row + np.arange(len(rows))
-            self._model.add_rows(low[rows], high[rows], part.indptr, part.indices, part.data)
+            self._model.add_rows(low[rows], high[rows], start, index, value)
             self._row_place[rows] = places
             self._program_rows = np.concatenate([self._program_rows, rows])
             self._model_rows = np.concatenate([self._model_rows, places])
@@ -432,9 +428,7 @@ class NodeModel:
         key = (e, position, int(is_gated))
         if key not in self._lifts:
             assert self._member is not None
-            other = (
-                self._member.exit_child[e] if is_gated else self._member.exit_child_if_gated[e]
-            )
+            other = self._member.exit_child[e] if is_gated else self._member.exit_child_if_gated[e]
             pool, below = self.pools[i_child], self.pools[int(other[0])]
             places = below.positions(int(other[1]))
             floor = self.tables.families[int(other[0])].value_lower[int(other[1])]
@@ -536,9 +530,7 @@ class NodeModel:
             self._set_slot_sides(slots, capacity)
 
     def _free_slots(self, rows: IntArray) -> None:
-        self._model.set_row_bounds(
-            rows, np.full(len(rows), -np.inf), np.full(len(rows), np.inf)
-        )
+        self._model.set_row_bounds(rows, np.full(len(rows), -np.inf), np.full(len(rows), np.inf))
 
     def _write_slot(self, slot: int, e: int, i_child: int, position: int) -> None:
         """Overwrites one slot with one cut; its side is set by ``_set_slot_sides``."""
@@ -752,15 +744,11 @@ class NodeModel:
         high = np.full(self._model.n_row, np.inf)
         low[self._model_rows] = self._row_lower[self._program_rows]
         high[self._model_rows] = self._row_upper[self._program_rows]
-        low[self._cuts.row] = (
-            self._cuts.intercept + self._cuts.capacity_slope @ self._capacity
-        )
+        low[self._cuts.row] = self._cuts.intercept + self._cuts.capacity_slope @ self._capacity
         return low, high
 
 
-def _merge_repeats(
-    columns: IntArray, values: FloatArray
-) -> tuple[IntArray, FloatArray, IntArray]:
+def _merge_repeats(columns: IntArray, values: FloatArray) -> tuple[IntArray, FloatArray, IntArray]:
     """Rows in which a column may occur twice, as index, value, start with the sums."""
     index, value, start = [], [], [0]
     for row, numbers in zip(columns, values, strict=True):

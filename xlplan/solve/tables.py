@@ -19,7 +19,7 @@ FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
 CACHE_BYTES = 300_000_000
-"""Memory for members kept in one process; an amount, not a tolerance: results do not depend on it."""
+"""Memory for members kept in one process; results do not depend on it."""
 
 
 @dataclass(frozen=True)

@@ -216,9 +216,7 @@ class Workers:
                 self._executors[i] = None
 
 
-def _share_out(
-    weights: dict[tuple[int, int], float], n_worker: int
-) -> dict[tuple[int, int], int]:
+def _share_out(weights: dict[tuple[int, int], float], n_worker: int) -> dict[tuple[int, int], int]:
     """Gives each model to the worker that has least so far, heaviest first."""
     load = [0.0] * n_worker
     owner = {}

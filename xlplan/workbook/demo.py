@@ -182,7 +182,7 @@ def _generators() -> list[Row]:
         "running_cost_per_kwh": 0.34,
         "outage_only": "yes",
         "ramp_pct_per_minute": 5,
-        "start_delay_minutes": 10,
+        "start_delay_minutes": 15,
         "start_failure_pct": 3,
         "tank_hours": 20,
         "refill_delay_hours": 8,
@@ -212,7 +212,7 @@ def _generators() -> list[Row]:
         "life_years": 20,
         "running_cost_per_kwh": 0.24,
         "outage_only": "yes",
-        "start_delay_minutes": 5,
+        "start_delay_minutes": 15,
         "grid_forming": "yes",
     }
     return [diesel, solar, candidate]
@@ -285,10 +285,10 @@ def _outage_assumptions() -> list[Row]:
 def _hardening() -> list[Row]:
     return _table(
         "measure lines capital_cost grant_pct life_years fixed_om_per_year failures_avoided_pct",
-        ("Clear trees, main line", "L03, L04", 30000, None, 6, 1200, 35),
-        ("Covered wire, main line", "L04, L05", 190000, 25, 40, None, 70),
-        ("Clear trees, water works", "L08, L09", 22000, None, 6, 900, 40),
-        ("Stronger poles, care home", "L10, L11", 85000, 10, 40, None, 50),
+        ("Clear trees main line", "L03, L04", 30000, None, 6, 1200, 35),
+        ("Covered wire main line", "L04, L05", 190000, 25, 40, None, 70),
+        ("Clear trees water works", "L08, L09", 22000, None, 6, 900, 40),
+        ("Stronger poles care home", "L10, L11", 85000, 10, 40, None, 50),
     )
 
 
@@ -326,7 +326,7 @@ def _fixed_purchases() -> list[Row]:
     return _table(
         "alternative asset kw kwh buy",
         ("Care home first", "Care home battery", 300, 1500, "yes"),
-        ("Care home first", "Clear trees, water works", None, None, "yes"),
+        ("Care home first", "Clear trees water works", None, None, "yes"),
     )
 
 

@@ -1,4 +1,4 @@
-"""Between cells of the feeder's sheets: impedances, voltages, loads, classes of outage and customer.
+"""Between cells of the feeder's sheets: impedances, voltages, loads, customers, outages.
 
 Enters: a ``CheckedStudy`` with its names resolved. Leaves: findings. Whether the feeder is radial
 is for ``network`` to say, which has it as a graph.
@@ -10,6 +10,7 @@ from collections.abc import Iterator
 
 from xlplan.base.codes import Code
 from xlplan.base.errors import Finding
+from xlplan.base.hull import TOLERANCE
 from xlplan.base.units import hours_from_minutes
 from xlplan.workbook.checked_study import CheckedStudy, fault, note, warning
 from xlplan.workbook.field_checks import CheckedRow
@@ -182,7 +183,7 @@ def _interruption_costs(study: CheckedStudy) -> Iterator[Finding]:
         if costs[0] is None or costs[1] is None or price is None:
             continue
         first_hour = costs[1] - costs[0]
-        if 0 <= first_hour < price:
+        if 0 <= first_hour < price * (1.0 - TOLERANCE):
             yield warning(
                 row,
                 Code.SHEDDING_CHEAP,
@@ -198,9 +199,7 @@ def _outage_class_use(study: CheckedStudy) -> Iterator[Finding]:
     classes = study.by_id("Outage assumptions")
     for name, row in classes.items():
         if row.values.get("included") is False:
-            yield note(
-                row, Code.CLASS_LEFT_OUT, "included", f"failures of '{name}' are left out."
-            )
+            yield note(row, Code.CLASS_LEFT_OUT, "included", f"failures of '{name}' are left out.")
         repair, switching = row.number("repair_hours"), row.number("switching_minutes")
         # Isolation counts inside the repair time (model.md section 2).
         if repair is not None and switching is not None and "switching_minutes" in row.typed:

@@ -12,12 +12,25 @@ from dataclasses import dataclass, replace
 
 from xlplan.base.codes import Code
 from xlplan.base.errors import Finding, Level
+from xlplan.base.units import pct_from_frac
 from xlplan.schema.fields import Field, Kind, Sheet
 from xlplan.workbook.tables import Cell, Row, Table, finding_at
-from xlplan.workbook.values import read_value
+from xlplan.workbook.values import in_unit, read_value
 
 MOST_OF_A_KIND = 50
 """Faults of one kind that are listed for one column; more of them have one cause."""
+
+SMALL_PERCENT_KEYS = frozenset(
+    [
+        "gap_target_pct",
+        "start_failure_pct",
+        "boost_pct",
+        "risk_tail_pct",
+        "store_power_pct",
+        "terminal_power_pct",
+    ]
+)
+"""Percentages of which parts of one are ordinary."""
 
 
 @dataclass(frozen=True)
@@ -154,8 +167,7 @@ def _about_blank(cell: Cell, field: Field) -> Finding:
             "Add a row for it, with its value beside it.",
         )
     else:
-        unit = f" Give it in {field.unit}." if field.unit else ""
-        message, hint = f"'{field.title}' is blank, and a value is needed.{unit}", ""
+        message, hint = f"'{field.title}' is blank, and a value is needed.", in_unit(field)
     return finding_at(cell, Level.FAULT, Code.BLANK, field.key, message, hint)
 
 
@@ -173,13 +185,13 @@ def _out_of_bounds(cell: Cell, field: Field, value: float) -> Finding | None:
     for name, breaks, words in _BOUNDS:
         bound = getattr(field, name)
         if bound is not None and breaks(value, bound):
-            unit = f" Give it in {field.unit}." if field.unit else ""
             return finding_at(
                 cell,
                 Level.FAULT,
                 Code.OUT_OF_BOUNDS,
                 field.key,
-                f"{value:g} {words} {bound:g}.{unit}",
+                f"{value:.6g} {words} {bound:g}.",
+                in_unit(field),
             )
     return None
 
@@ -188,7 +200,7 @@ def _unlikely(cell: Cell, field: Field, value: float) -> Finding | None:
     below = field.likely_min is not None and value < field.likely_min
     above = field.likely_max is not None and value > field.likely_max
     if not (below or above):
-        return None
+        return _fraction_of_a_percent(cell, field, value)
     unit = f" {field.unit}" if field.unit else ""
     means = field.likely_text or "an unusual value"
     return finding_at(
@@ -201,14 +213,30 @@ def _unlikely(cell: Cell, field: Field, value: float) -> Finding | None:
     )
 
 
+def _fraction_of_a_percent(cell: Cell, field: Field, value: float) -> Finding | None:
+    """A plain 0.05 under a percent key means 0.05 %, which is seldom what was meant."""
+    if not field.key.endswith("_pct") or field.key in SMALL_PERCENT_KEYS:
+        return None
+    if cell.is_percent or not 0.0 < value < 1.0 or isinstance(cell.value, str):
+        return None
+    return finding_at(
+        cell,
+        Level.WARNING,
+        Code.UNLIKELY_VALUE,
+        field.key,
+        f"{value:g} would mean {value:g} %, less than one in a hundred.",
+        f"Type {pct_from_frac(value):g} if that share is meant.",
+    )
+
+
 def _shorten(findings: list[Finding]) -> list[Finding]:
     """Findings of one kind in one column, so many of them that the first few say it all.
 
     One note stands for all notes of its kind; of faults and warnings the first fifty are kept.
     """
     kept: list[Finding] = []
-    last: dict[tuple[str, str, str], int] = {}
-    count: dict[tuple[str, str, str], int] = {}
+    last: dict[tuple[Level, str, str], int] = {}
+    count: dict[tuple[Level, str, str], int] = {}
     for finding in findings:
         kind = (finding.level, finding.code, finding.key)
         count[kind] = count.get(kind, 0) + 1
@@ -216,7 +244,7 @@ def _shorten(findings: list[Finding]) -> list[Finding]:
             last[kind] = len(kept)
             kept.append(finding)
     for kind, position in last.items():
-        n_more = count[kind] - (1 if kind[0] == Level.NOTE else MOST_OF_A_KIND)
+        n_more = count[kind] - (1 if kind[0] is Level.NOTE else MOST_OF_A_KIND)
         if n_more > 0:
             others = f"{n_more} other cell{'s' if n_more > 1 else ''}"
             finding = kept[position]

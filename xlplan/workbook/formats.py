@@ -62,7 +62,7 @@ _EDGE = {"border": 1, "border_color": RULE}
 _TOP = {"valign": "top"}
 _WRAPPED = {"text_wrap": True, **_TOP}
 _INDENTED = {"align": "left", "indent": 1}
-_VALUE = {"indent": 1, **_EDGE, **_TOP}
+_VALUE = {**_EDGE, **_TOP}
 
 _PROPERTIES: dict[Role, dict[str, Any]] = {
     Role.TITLE: {"bold": True, "font_size": 15, "font_color": PINE},
@@ -86,14 +86,14 @@ _PROPERTIES: dict[Role, dict[str, Any]] = {
     },
     Role.HINT: {**_INDENTED, "italic": True, "font_size": 8, "font_color": FAINT_INK},
     Role.TEXT: {"num_format": TEXT_FORMAT, **_INDENTED},
-    Role.NUMBER: {"align": "right", "indent": 1},
+    Role.NUMBER: {"align": "right"},
     Role.TIME: {"num_format": TIME_FORMAT, **_INDENTED},
-    Role.VALUE_TEXT: {"num_format": TEXT_FORMAT, "align": "left", **_VALUE},
+    Role.VALUE_TEXT: {"num_format": TEXT_FORMAT, **_INDENTED, **_VALUE},
     Role.VALUE_NUMBER: {"align": "right", **_VALUE},
     Role.VALUE_NEEDED_TEXT: {
         "num_format": TEXT_FORMAT,
-        "align": "left",
         "bg_color": STRAW,
+        **_INDENTED,
         **_VALUE,
     },
     Role.VALUE_NEEDED_NUMBER: {"align": "right", "bg_color": STRAW, **_VALUE},

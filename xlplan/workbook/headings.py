@@ -7,7 +7,7 @@ units that differ.
 from __future__ import annotations
 
 import re
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable
 
 from xlplan.base.codes import Code
 from xlplan.base.errors import Finding, Level
@@ -15,17 +15,32 @@ from xlplan.schema.fields import Field, Sheet
 from xlplan.workbook.folding import alike, clean, fold, fold_heading
 from xlplan.workbook.tables import Cell, finding_at
 
-_UNIT_WORDS: Mapping[str, str] = {
-    **{word: word for word in "w kw mw gw wh kwh mwh va kva mva var kvar mvar v kv a ka".split()},
-    **{word: word for word in "ohm kohm mohm km m mi ft pu days weeks".split()},
-    **{"hours": "h", "hour": "h", "hrs": "h", "h": "h"},
-    **{"minutes": "min", "minute": "min", "mins": "min", "min": "min"},
-    **{"seconds": "s", "second": "s", "sec": "s"},
-    **{"mile": "mi", "miles": "mi", "feet": "ft", "metres": "m", "meters": "m"},
-    **{"years": "years", "year": "years", "months": "months", "cents": "cents"},
-    **{"percent": "%", "%": "%"},
+_UNITS = frozenset(
+    {
+        *("w", "kw", "mw", "gw", "wh", "kwh", "mwh", "va", "kva", "mva", "var", "kvar", "mvar"),
+        *("v", "kv", "a", "ka", "ohm", "kohm", "mohm", "pu", "%", "cents"),
+        *("km", "m", "mi", "ft", "s", "min", "h", "days", "weeks", "months", "years"),
+    }
+)
+"""Words in parentheses that are units beyond doubt."""
+_OTHER_SPELLINGS = {
+    "hours": "h",
+    "hour": "h",
+    "hrs": "h",
+    "minutes": "min",
+    "minute": "min",
+    "mins": "min",
+    "seconds": "s",
+    "second": "s",
+    "sec": "s",
+    "mile": "mi",
+    "miles": "mi",
+    "feet": "ft",
+    "metres": "m",
+    "meters": "m",
+    "year": "years",
+    "percent": "%",
 }
-"""Words in parentheses that are units beyond doubt, with one spelling for each unit."""
 
 
 def field_of_heading(text: str, fields: Iterable[Field]) -> Field | None:
@@ -96,7 +111,7 @@ def words_in_parentheses(heading: str) -> str:
 
 def _units_in(text: str) -> set[str]:
     words = re.findall(r"%|[^\W_]+", fold(text).replace("p.u.", "pu").replace("p.u", "pu"))
-    return {_UNIT_WORDS[word] for word in words if word in _UNIT_WORDS}
+    return {unit for word in words if (unit := _OTHER_SPELLINGS.get(word, word)) in _UNITS}
 
 
 def heading_match_count(texts: Iterable[str], schema: Sheet) -> int:

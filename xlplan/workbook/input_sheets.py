@@ -73,7 +73,7 @@ def write_settings_sheet(
     _demand_known(sheet, settings)
     writer.head(sheet.title, sheet.help)
     headings = ("Setting", "Value", "Unit", "Note", "Group")
-    for column, (width, heading) in enumerate(zip((36, 40, 24, 108, 12), headings, strict=True)):
+    for column, (width, heading) in enumerate(zip((36, 40, 31, 112, 12), headings, strict=True)):
         writer.width(column, width)
         role = Role.HEADING_NEEDED if heading == "Value" else Role.HEADING_OPTIONAL
         writer.text(HEADING_ROW, column, heading, role)
@@ -95,6 +95,7 @@ def write_settings_sheet(
     last_row = HEADING_ROW + len(sheet.fields)
     writer.worksheet.freeze_panes(FIRST_ROW, 1)
     writer.page(last_row, len(headings) - 1, HEADING_ROW, sheet.help)
+    writer.worksheet.fit_to_pages(1, 1)
 
 
 def write_table_sheet(
@@ -242,7 +243,7 @@ def _heading_lines(heading: str, width: float) -> int:
     """Lines that a bold heading takes when wrapped, with room for indent and filter button."""
     n_line, used = 1, 0.0
     for word in heading.split():
-        if used and used + 1 + len(word) > width - 4:
+        if used and used + 1 + len(word) > width - 3:
             n_line, used = n_line + 1, 0.0
         used += len(word) + 1
     return n_line

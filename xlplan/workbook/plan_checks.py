@@ -84,18 +84,7 @@ def _purchases(study: CheckedStudy) -> Iterator[Finding]:
         largest_kwh = asset.number("max_new_kwh") if sheet == "Storage" else 0.0
         yield from _above(row, "kwh", largest_kwh, "kWh")
         yield from _off_step(row, asset)
-        longest = asset.number("longest_hours") if sheet == "Storage" else None
         kw, kwh = row.number("kw"), row.number("kwh")
-        if longest is not None and kw is not None and kwh is not None:
-            if kwh > longest * kw * (1.0 + TOLERANCE):
-                yield fault(
-                    row,
-                    Code.PURCHASE_TOO_LARGE,
-                    "kwh",
-                    f"{kwh:g} kWh last longer at {kw:g} kW than the {longest:g} hours that "
-                    f"'{row.text('asset')}' allows.",
-                    "Buy less energy or more power.",
-                )
         if row.is_yes("buy") and not kw and not kwh and not row.faulty:
             yield warning(
                 row,
@@ -103,6 +92,18 @@ def _purchases(study: CheckedStudy) -> Iterator[Finding]:
                 "kw",
                 f"no size is given for '{row.text('asset')}': nothing is bought.",
                 "Give kW, and kWh for a store.",
+            )
+        longest = asset.number("longest_hours") if sheet == "Storage" else None
+        if longest is None or kw is None or kwh is None:
+            continue
+        if kwh > longest * kw * (1.0 + TOLERANCE):
+            yield fault(
+                row,
+                Code.PURCHASE_TOO_LARGE,
+                "kwh",
+                f"{kwh:g} kWh last longer at {kw:g} kW than the {longest:g} hours that "
+                f"'{row.text('asset')}' allows.",
+                "Buy less energy or more power.",
             )
 
 

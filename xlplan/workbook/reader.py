@@ -64,6 +64,11 @@ def read_workbook(path: Path) -> RawStudy:
             f"'{path}' cannot be read as a workbook ({type(error).__name__}). Open it in a "
             f"spreadsheet program and save it again as Excel Workbook (.xlsx)."
         ) from None
+    if not grids:
+        raise StudyFileError(
+            f"'{path}' holds no sheets that can be read. Open it in a spreadsheet program and "
+            f"save it again as Excel Workbook (.xlsx)."
+        )
     for warning in caught:
         _LOG.info("openpyxl on %s: %s", path.name, warning.message)
 

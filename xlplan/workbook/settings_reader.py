@@ -22,11 +22,10 @@ from xlplan.workbook.headings import (
 from xlplan.workbook.sheet_facts import SheetFacts
 from xlplan.workbook.sheet_reader import HEADING_ROWS, Grid, about_merges, about_no_header
 from xlplan.workbook.tables import Cell, Row, Table, finding_at
+from xlplan.workbook.values import is_blank
 
 
-def read_settings(
-    schema: Sheet, grid: Grid, facts: SheetFacts
-) -> tuple[Table, list[Finding]]:
+def read_settings(schema: Sheet, grid: Grid, facts: SheetFacts) -> tuple[Table, list[Finding]]:
     """The settings as one row whose cells lie below each other."""
     header_row, name_column, value_column, unit_column = _settings_columns(grid)
     findings: list[Finding] = []
@@ -60,16 +59,14 @@ def read_settings(
     findings += about_merges(
         grid.sheet, facts, min(numbers), max(numbers), {name_column, value_column}
     )
-    row = Row(grid.sheet, 0, cells, {key: column for key in cells})
+    row = Row(grid.sheet, 0, cells, dict.fromkeys(cells, column))
     return Table(schema.name, grid.sheet, header_row or 1, {}, (row,)), findings
 
 
 def _settings_columns(grid: Grid) -> tuple[int, int, int, int]:
     """Heading row (0: none), columns of name, value and unit."""
     for number in sorted(row for row in grid.rows if row <= HEADING_ROWS):
-        headings = {
-            fold_heading(cell.typed): column for column, cell in grid.rows[number].items()
-        }
+        headings = {fold_heading(cell.typed): column for column, cell in grid.rows[number].items()}
         if "value" in headings:
             value = headings["value"]
             name = headings.get("setting", max(value - 1, 1))

@@ -17,7 +17,7 @@ from openpyxl.utils.cell import coordinate_from_string, range_boundaries
 from xlplan.base.codes import Code
 from xlplan.base.errors import Finding, Level
 from xlplan.schema.fields import Field, Sheet
-from xlplan.workbook.folding import clean, fold, fold_heading
+from xlplan.workbook.folding import clean, fold
 from xlplan.workbook.headings import (
     field_of_heading,
     heading_match_count,

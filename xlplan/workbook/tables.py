@@ -6,10 +6,14 @@ sheet are one ``Row`` whose cells lie below each other.
 
 from __future__ import annotations
 
+import re
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 
 from xlplan.base.errors import Finding, Level, Origin
+
+_LITERAL = re.compile(r'"[^"]*"|\\.')
+"""Parts of a number format that are shown as they stand and scale nothing, such as 0"%"."""
 
 
 @dataclass(frozen=True)
@@ -36,7 +40,7 @@ class Cell:
     @property
     def is_percent(self) -> bool:
         """True if the cell is shown as a percentage: 5 % is stored as 0.05."""
-        return "%" in self.number_format
+        return "%" in _LITERAL.sub("", self.number_format)
 
 
 @dataclass(frozen=True)

@@ -26,7 +26,7 @@ from xlplan.workbook.profile_rows import (
 )
 
 YEAR_TOLERANCE_FRAC = 0.03
-"""How far the windows' hours may be from a year before it is said: a leap day and a storm or two."""
+"""How far the windows' hours may be from a year before it is said: a storm or two."""
 
 WHOLE_TOLERANCE = 1e-6
 """Periods closer than this to a whole number are whole."""
@@ -261,9 +261,10 @@ def _charging_efficiency(study: CheckedStudy, unit: CheckedRow) -> float:
     shares = []
     for row in study.rows("Storage curves"):
         store, terminal = row.number("store_power_pct"), row.number("terminal_power_pct")
-        if row.text("curve") == curve and store is not None and terminal is not None:
-            if store < 0 and terminal <= store:
-                shares.append(store / terminal)
+        if row.text("curve") != curve or store is None or terminal is None:
+            continue
+        if store < 0 and terminal <= store:
+            shares.append(store / terminal)
     if shares:
         return min(shares)
     round_trip = unit.number("round_trip_efficiency_pct")
@@ -315,12 +316,14 @@ def _substation(
     allowance = 1.0 + frac_from_pct(settings.number("loss_allowance_pct") or 0.0)
     worst = (0.0, "")
     for row, stretch in stretches:
+        shapes = [_values(profiles, load.text("load_profile"), stretch) for load in loads]
+        if any(shape is None for shape in shapes):
+            continue
         total = [0.0] * (stretch.stop - stretch.start)
         scale = allowance * (row.number("load_multiplier") or 0.0)
-        for load in loads:
-            shape = _values(profiles, load.text("load_profile"), stretch) or []
+        for load, shape in zip(loads, shapes, strict=True):
             peak_kw = (load.number("peak_kw") or 0.0) * scale
-            total = [kw + peak_kw * value for kw, value in zip(total, shape, strict=False)]
+            total = [kw + peak_kw * value for kw, value in zip(total, shape or (), strict=True)]
         worst = max(worst, (max(total), str(row.text("window"))))
     if worst[0] > limit:
         yield warning(

@@ -1,4 +1,4 @@
-"""What kind of file is it? Settled before openpyxl sees it, whose own errors tell a planner nothing.
+"""What kind of file is it? Settled before openpyxl sees it, whose errors tell a planner nothing.
 
 Enters: a path. Leaves: the file's bytes and notes, or an error with one plain line. The order:
 lock file, folder, size, first bytes, directory of the zip, content types, sizes, XML entities.
@@ -106,9 +106,7 @@ def _look_inside(path: Path, content: bytes) -> list[Finding]:
     return _notes(path, types, infos)
 
 
-def _check_kind(
-    path: Path, archive: zipfile.ZipFile, infos: dict[str, zipfile.ZipInfo]
-) -> None:
+def _check_kind(path: Path, archive: zipfile.ZipFile, infos: dict[str, zipfile.ZipInfo]) -> None:
     """OpenDocument, binary workbooks and strict workbooks are zips as well."""
     if "mimetype" in infos and "[Content_Types].xml" not in infos:
         raise StudyFileError(f"'{path}' is an OpenDocument file (.ods). {_SAVE_AS}")
@@ -122,12 +120,12 @@ def _check_kind(
     if b"spreadsheetml" not in types and b"ms-excel" not in types:
         raise StudyFileError(f"'{path}' is an Office file, but not a workbook. {_SAVE_AS}")
     book = infos.get("xl/workbook.xml")
-    if book is not None and book.file_size < RATIO_FROM_BYTES:
-        if b"purl.oclc.org" in archive.read(book):
-            raise StudyFileError(
-                f"'{path}' is a Strict Open XML workbook. Save it as Excel Workbook (.xlsx), "
-                f"not as Strict Open XML."
-            )
+    is_readable = book is not None and book.file_size < RATIO_FROM_BYTES
+    if is_readable and b"purl.oclc.org" in archive.read("xl/workbook.xml"):
+        raise StudyFileError(
+            f"'{path}' is a Strict Open XML workbook. Save it as Excel Workbook (.xlsx), "
+            f"not as Strict Open XML."
+        )
 
 
 def _check_sizes(path: Path, infos: dict[str, zipfile.ZipInfo]) -> None:

@@ -20,21 +20,27 @@ from xlplan.base.units import frac_from_pct, pct_from_frac
 from xlplan.schema.fields import Field, Kind
 from xlplan.workbook.folding import ZERO_WIDTH, clean, did_you_mean, fold
 from xlplan.workbook.tables import Cell, finding_at
+from xlplan.workbook.text_numbers import PLAIN_NUMBER, parse_number
 
 EXCEL_ERRORS = frozenset(
-    "#N/A #DIV/0! #REF! #VALUE! #NAME? #NUM! #NULL! #SPILL! #CALC! #GETTING_DATA".split()
+    [
+        "#N/A",
+        "#DIV/0!",
+        "#REF!",
+        "#VALUE!",
+        "#NAME?",
+        "#NUM!",
+        "#NULL!",
+        "#SPILL!",
+        "#CALC!",
+        "#GETTING_DATA",
+    ]
 )
 WORDS_FOR_BLANK = frozenset({"-", "--", "\u2013", "\u2014", "n/a", "na"})
 """Read as blank, with a note, in an optional cell that does not hold names."""
 WORDS_FOR_YES = frozenset({"yes", "y", "true", "1"})
 WORDS_FOR_NO = frozenset({"no", "n", "false", "0"})
 
-_PLAIN = re.compile(r"[+-]?(?:[0-9]+(?:\.[0-9]*)?|\.[0-9]+)(?:[eE][+-]?[0-9]+)?")
-_GROUPED = re.compile(r"[+-]?[1-9][0-9]{0,2}(?:,[0-9]{3})+(?:\.[0-9]+)?")
-_SPACED = re.compile(r"[+-]?[1-9][0-9]{0,2}(?: [0-9]{3})+(?:\.[0-9]+)?")
-_COMMA = re.compile(r"[+-]?[0-9]{1,3}(?:\.?[0-9]{3})*,[0-9]+|[+-]?[0-9]+,[0-9]+")
-_DOT_GROUPED = re.compile(r"[+-]?[1-9][0-9]{0,2}(?:\.[0-9]{3}){2,}")
-_LEADING_NUMBER = re.compile(r"\W{0,2}[0-9]")
 _ISO_DATE = re.compile(r"[0-9]{4}-[0-9]{2}-[0-9]{2}(?:[ T][0-9]{1,2}:[0-9]{2}(?::[0-9]{2})?)?")
 _CLOCK = re.compile(r"([0-9]{1,2}):([0-9]{2})(?::([0-9]{2}))?")
 
@@ -129,8 +135,15 @@ def _ask_for(field: Field) -> str:
     if field.kind is Kind.CHOICE:
         return f"Give one of: {', '.join(field.choices)}."
     if field.unit:
-        return f"Give it in {field.unit}."
+        return in_unit(field)
     return "Give a number." if field.kind in (Kind.NUMBER, Kind.INTEGER) else "Give it."
+
+
+def in_unit(field: Field) -> str:
+    """The sentence that asks for a field's unit: "Give it in km." or "Give it per kWh."."""
+    if not field.unit:
+        return ""
+    return f"Give it {'' if field.unit.startswith('per ') else 'in '}{field.unit}."
 
 
 # Numbers
@@ -172,54 +185,20 @@ def _read_plain_number(cell: Cell, field: Field, value: float) -> Reading:
 
 def _read_text_number(cell: Cell, field: Field, text: str) -> Reading:
     """A number stored as text, if there is only one way to read it."""
-    tidy = clean(text).replace("\u2212", "-")
-    is_percent = tidy.endswith("%")
-    if is_percent:
-        tidy = tidy[:-1].rstrip()
-    for pattern, drop in ((_PLAIN, ""), (_GROUPED, ","), (_SPACED, " ")):
-        # A single comma before three digits, as in 1,250, is a decimal comma to half the world.
-        if pattern.fullmatch(tidy) and not _is_ambiguous(tidy):
-            number = float(tidy.replace(drop, "") if drop else tidy)
-            break
-    else:
-        return _fault(cell, field, *_why_no_number(text, tidy, field))
-    if not math.isfinite(number):
-        return _fault(cell, field, Code.NOT_A_NUMBER, f"'{text}' is too large.", _ask_for(field))
-    if is_percent and not field.key.endswith("_pct"):
+    parsed = parse_number(text)
+    if parsed.number is None:
+        hint = _ask_for(field)
+        if parsed.code is Code.AMBIGUOUS_NUMBER:
+            hint = "Type it as a number, not as text."
+        elif parsed.has_more_than_a_number:
+            unit = f" ({field.unit})" if field.unit else ""
+            hint = f"Give one number alone; the unit stands in the heading{unit}."
+        return _fault(cell, field, parsed.code, parsed.problem, hint)
+    number = parsed.number
+    if parsed.is_percent and not field.key.endswith("_pct"):
         number = frac_from_pct(number)
     message = f"the text '{text}' is read as the number {number:.12g}."
     return Reading(number, (_note(cell, field, Code.TEXT_NUMBER, message),))
-
-
-def _is_ambiguous(tidy: str) -> bool:
-    return bool(re.fullmatch(r"[+-]?[0-9]{1,3},[0-9]{3}", tidy))
-
-
-def _why_no_number(text: str, tidy: str, field: Field) -> tuple[Code, str, str]:
-    """Code, message and hint for a text that is no number, or more than one."""
-    if _COMMA.fullmatch(tidy) or _DOT_GROUPED.fullmatch(tidy):
-        as_comma = tidy.replace(".", "").replace(",", ".")
-        as_dot = tidy.replace(",", "")
-        readings = f"{as_comma} or {as_dot}" if _PLAIN.fullmatch(as_dot) else as_comma
-        return (
-            Code.AMBIGUOUS_NUMBER,
-            f"the text '{text}' can be read in more than one way ({readings}?).",
-            "Type it as a number, not as text.",
-        )
-    if any(ch.isdigit() and not ch.isascii() for ch in tidy):
-        return (
-            Code.NOT_A_NUMBER,
-            f"'{text}' is not written in the digits 0 to 9.",
-            "Type it again as a number.",
-        )
-    if _LEADING_NUMBER.match(tidy):
-        unit = f" ({field.unit})" if field.unit else ""
-        return (
-            Code.NOT_A_NUMBER,
-            f"'{text}' is not a plain number.",
-            f"Give one number alone; the unit stands in the heading{unit}.",
-        )
-    return Code.NOT_A_NUMBER, f"'{text}' is not a number.", _ask_for(field)
 
 
 def _read_integer(cell: Cell, field: Field) -> Reading:
@@ -358,7 +337,7 @@ def _read_text_time(cell: Cell, field: Field, text: str) -> Reading:
             return Reading(dt.time(hour, minute, second), (note,))
     except ValueError:
         return _not_a_time(cell, field, "is no date or time of any day")
-    if _PLAIN.fullmatch(text):
+    if PLAIN_NUMBER.fullmatch(text):
         return Reading(float(text), (note,))
     return _not_a_time(cell, field, "is not a date, a time or a number")
 

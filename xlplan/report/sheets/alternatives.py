@@ -13,7 +13,7 @@ from xlsxwriter.utility import xl_rowcol_to_cell
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import PlanResult
 from xlplan.report import money
-from xlplan.report.grid import Cell, Formula, write_cell
+from xlplan.report.grid import HEADING_CHARS, LINE_POINTS, Cell, Formula, lines_needed, write_cell
 from xlplan.report.safe_book import SafeBook
 from xlplan.report.sheets.plan import DISCOUNT_RATE, PlanCells
 from xlplan.report.tables import ALTERNATIVES, STATEMENT
@@ -21,6 +21,7 @@ from xlplan.report.tables import ALTERNATIVES, STATEMENT
 STUDY_LIFE = "study_life_years"
 RATE_ROW, LIFE_ROW, HEAD_ROW = 3, 4, 6
 FIRST_PLAN_COL = 2
+PLAN_WIDTH = 18
 NUMBER_PARTS = (
     "energy",
     "fuel",
@@ -65,11 +66,13 @@ def write(book: SafeBook, result: StudyResult, plan_cells: PlanCells) -> Alterna
     cells, last_row = _place()
     note_col = FIRST_PLAN_COL + len(result.plans)
     for i, plan in enumerate(result.plans):
-        mark = "  (least cost)" if plan.name == result.recommended != "Least-cost plan" else ""
-        sheet.text(HEAD_ROW, FIRST_PLAN_COL + i, plan.name + mark, "heading_right")
-    for col, title in ((0, "Figure"), (1, "Unit"), (note_col, "What it is")):
+        sheet.text(HEAD_ROW, FIRST_PLAN_COL + i, plan.name, "heading_right")
+    for col, title in ((0, "Figure"), (1, "Unit")):
         sheet.text(HEAD_ROW, col, title, "heading")
-    sheet.height(HEAD_ROW, 30)
+    sheet.text(HEAD_ROW, note_col, "What it is", "heading", "indent")
+    room = HEADING_CHARS * PLAN_WIDTH - 1
+    lines_of_names = max(lines_needed(plan.name, room) for plan in result.plans)
+    sheet.height(HEAD_ROW, LINE_POINTS * lines_of_names + 4)
     content = [
         {**_cost_cells(plan, i, cells, plan_cells), **_worth_cells(result, plan, i, cells)}
         for i, plan in enumerate(result.plans)
@@ -83,8 +86,8 @@ def write(book: SafeBook, result: StudyResult, plan_cells: PlanCells) -> Alterna
             sheet.text(row, 1, book.words(unit), "subtitle", *extra)
             for i, by_key in enumerate(content):
                 write_cell(sheet, row, FIRST_PLAN_COL + i, by_key[key], look, *extra)
-            sheet.text(row, note_col, note, "note", *(("total",) if extra == ("total",) else ()))
-    sheet.widths([40, 15] + [17] * len(result.plans) + [92])
+            sheet.text(row, note_col, note, "remark")
+    sheet.widths([40, 15] + [PLAN_WIDTH] * len(result.plans) + [92])
     sheet.freeze(HEAD_ROW + 1, FIRST_PLAN_COL)
     sheet.print_setup(last_row, note_col)
     return cells
@@ -96,10 +99,10 @@ def _write_assumptions(book: SafeBook, result: StudyResult) -> None:
     rate, years = result.real_discount_rate_frac, money.STUDY_LIFE_YEARS
     sheet.text(RATE_ROW, 0, "Real discount rate (per year)")
     sheet.number(RATE_ROW, 1, rate, "percent", "input")
-    sheet.text(RATE_ROW, 2, "As given in the study", "note")
+    sheet.text(RATE_ROW, 2, "As given in the study", "remark")
     sheet.text(LIFE_ROW, 0, "Years that present values cover")
     sheet.number(LIFE_ROW, 1, years, "years", "input")
-    sheet.text(LIFE_ROW, 2, "Common practice; not an input of the study", "note")
+    sheet.text(LIFE_ROW, 2, "Common practice; not an input of the study", "remark")
     book.define_name(DISCOUNT_RATE, ALTERNATIVES, f"$B${RATE_ROW + 1}")
     book.define_name(STUDY_LIFE, ALTERNATIVES, f"$B${LIFE_ROW + 1}")
 

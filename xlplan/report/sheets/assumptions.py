@@ -21,14 +21,15 @@ def write(book: SafeBook, result: StudyResult) -> None:
         "About the run, what was noticed in the study workbook, and every input used, defaults "
         "included. Copies of values: changing them here changes nothing.",
     )
+    sheet.widths([30, 26, 40, 26, 46, 16, 34])
     facts = run_facts(result)
-    sheet.text(2, 0, "Run", "section")
-    grid = Grid(ASSUMPTIONS, 3, RUN_FACTS, len(facts))
+    sheet.text(3, 0, "Run", "section")
+    grid = Grid(ASSUMPTIONS, 4, RUN_FACTS, len(facts))
     sheet.text(grid.top, 0, RUN_FACTS[0].title, "heading")
     sheet.paragraph(grid.top, 1, 6, RUN_FACTS[1].title, 100, "heading")
     for i, (title, value) in enumerate(facts):
-        sheet.text(grid.row(i), 0, title, "wrap")
-        sheet.paragraph(grid.row(i), 1, 6, value, 130)
+        sheet.text(grid.row(i), 0, title)
+        sheet.paragraph(grid.row(i), 1, 6, value, 190)
     findings = Grid(ASSUMPTIONS, grid.below + 2, FINDINGS, len(result.findings))
     sheet.text(findings.top - 1, 0, "Noticed in the study workbook", "section")
     findings.write(
@@ -43,12 +44,10 @@ def write(book: SafeBook, result: StudyResult) -> None:
             }
             for finding in result.findings
         ],
-        heading_lines=1,
     )
     inputs = Grid(ASSUMPTIONS, findings.below + 2, INPUTS, len(result.inputs))
     sheet.text(inputs.top - 1, 0, "Every input used", "section")
-    inputs.write(sheet, [_input_row(echo) for echo in result.inputs], heading_lines=1)
-    sheet.widths([24, 26, 40, 20, 46, 16, 34])
+    inputs.write(sheet, [_input_row(echo) for echo in result.inputs])
     sheet.freeze(2, 0)
     sheet.print_setup(inputs.below - 1, len(INPUTS) - 1)
 

@@ -131,6 +131,7 @@ def write(book: SafeBook) -> None:
         f"{len(CAUTION_TEXTS)} cautions. All of them defer to local codes, the interconnection "
         "authority having jurisdiction, and licensed engineering review.",
     )
+    sheet.widths([6, 30, 90, 42])
     grid = Grid(CAUTIONS, 3, CAUTION_LINES, len(CAUTION_TEXTS))
     grid.write(
         sheet,
@@ -138,12 +139,6 @@ def write(book: SafeBook) -> None:
             {"number": float(i + 1), "topic": topic, "caution": caution, "decides": decides}
             for i, (topic, caution, decides) in enumerate(CAUTION_TEXTS)
         ],
-        heading_lines=1,
     )
-    chars_per_line = 88
-    for i, (_, caution, decides) in enumerate(CAUTION_TEXTS):
-        lines = max(-(-len(caution) // chars_per_line), -(-len(decides) // 40))
-        sheet.height(grid.row(i), 13.5 * lines + 4)
-    sheet.widths([5, 30, 90, 42])
     sheet.freeze(4, 0)
-    sheet.print_setup(grid.below - 1, len(CAUTION_LINES) - 1, heading_row=grid.top)
+    sheet.print_setup(grid.below - 1, len(CAUTION_LINES) - 1, is_one_page=True)

@@ -23,7 +23,7 @@ PASS, FAIL, LOOK, CHANGED = "PASS", "FAIL", "LOOK", "CHANGED"
 ALL_PASS = "PASS: all checks agree"
 SOME_LOOK = "LOOK: no check fails, some are for you to judge"
 SOME_FAIL = "FAIL: some checks do not agree"
-OVERALL_ROW, OVERALL_COL = 2, 1
+OVERALL_ROW, OVERALL_COL = 3, 1
 
 CENT = 0.005
 """Half a cent: money that is equal to a cent."""
@@ -64,12 +64,13 @@ def write(
         "Each row sets two figures that should agree side by side. FAIL: a fault of the run. LOOK: "
         "for you to judge. CHANGED: a figure of this workbook was altered after the run.",
     )
+    sheet.widths([24, 40, 62, 19, 19, 13, 13, 13, 12])
     lines = [_run_line("Study", line) for line in result.checks]
     lines += [_run_line(plan.name, line) for plan in result.plans for line in plan.checks]
     lines += _money_lines(result, alternatives) + _energy_lines(result, reliability)
     grid = Grid(CHECKS, OVERALL_ROW + 2, CHECK_LINES, len(lines))
     rows = [_row(line, grid, i) for i, line in enumerate(lines)]
-    grid.write(sheet, rows, heading_lines=3)
+    grid.write(sheet, rows)
     outcomes = grid.span("outcome")
     words = _overall([_value(row["outcome"]) for row in rows])
     text = (
@@ -78,10 +79,9 @@ def write(
     )
     sheet.text(OVERALL_ROW, 0, "Overall", "status")
     sheet.formula(OVERALL_ROW, OVERALL_COL, text, words, "status")
-    sheet.status_fill(OVERALL_ROW, OVERALL_COL, OVERALL_ROW, OVERALL_COL)
+    sheet.status_fill(OVERALL_ROW, OVERALL_ROW, OVERALL_COL, OVERALL_COL)
     col = grid.col("outcome")
-    sheet.status_fill(grid.row(0), col, grid.row(len(lines) - 1), col)
-    sheet.widths([24, 46, 62, 17, 17, 13, 13, 12, 11])
+    sheet.status_fill(grid.row(0), grid.row(len(lines) - 1), col, col)
     sheet.freeze(grid.top + 1, 2)
     sheet.print_setup(grid.below - 1, len(CHECK_LINES) - 1, heading_row=grid.top)
     return ChecksCells(f"'{CHECKS}'!$B${OVERALL_ROW + 1}", words)
@@ -121,7 +121,7 @@ def _row(line: _Line, grid: Grid, i: int) -> dict[str, Cell]:
     agrees = abs(left - right) <= line.tolerance
     return {
         **row,
-        "difference": Formula(f"={left_cell}-{right_cell}", left - right),
+        "difference": Formula(f"=ABS({left_cell}-{right_cell})", abs(left - right)),
         "outcome": Formula(
             f'=IF({test},"{PASS}",{grid.here(i, "otherwise")})',
             PASS if agrees else line.otherwise,
@@ -164,6 +164,17 @@ def _money_lines(result: StudyResult, cells: AlternativesCells) -> list[_Line]:
                 "All cost parts one by one, and the total by way of the subtotals",
                 Formula(parts, plan.costs.total),
                 total,
+                CENT,
+                FAIL,
+            )
+        )
+        lines.append(
+            _Line(
+                plan.name,
+                "Difference to the existing feeder",
+                "Difference taken path by path, and the difference of the two totals",
+                plan.difference,
+                plan.costs.total - baseline(result).costs.total,
                 CENT,
                 FAIL,
             )

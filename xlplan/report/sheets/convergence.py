@@ -12,6 +12,9 @@ from xlplan.report.looks import BLACK, BLUE, VERMILION
 from xlplan.report.safe_book import SafeBook
 from xlplan.report.tables import CONVERGENCE, METHODS, PASSES
 
+WIDTHS = (26, 17, 17, 17, 17, 15, 15, 13, 30, 12)
+CHART_ROWS = 19
+
 MEANINGS = (
     "Lower bound: no plan on offer costs less a year than this; it is proven, not sampled.",
     "Cost of following the plan: what the plan is expected to cost when it is run without knowing "
@@ -30,24 +33,25 @@ def write(book: SafeBook, result: StudyResult) -> None:
     best = result.plan(result.recommended)
     target = f"target {result.gap_target_frac:.2%}".replace("%", " %")
     sheet.head("How far the solver got", f"Status: {result.status}; {target}; seed {result.seed}.")
+    sheet.widths(WIDTHS)
     row = 3
     for meaning in MEANINGS:
-        sheet.paragraph(row, 0, 9, meaning, 150)
+        sheet.paragraph(row, 0, len(WIDTHS) - 1, meaning, 205)
         row += 1
-    row += 1
+    chart_row = row + 1
+    row += 2 + (CHART_ROWS if len(best.convergence) > 1 else 0)
     sheet.text(row, 0, "Alternatives", "section")
     methods = Grid(CONVERGENCE, row + 1, METHODS, len(result.plans))
     marked = [i for i, plan in enumerate(result.plans) if plan.name == best.name]
-    methods.write(sheet, [_method_row(plan) for plan in result.plans], marked, heading_lines=3)
+    methods.write(sheet, [_method_row(plan) for plan in result.plans], marked)
     sheet.text(methods.below, 0, f"Why this method: {result.method_reason}", "note")
     row = methods.below + 2
     passes = Grid(CONVERGENCE, row + 1, PASSES, len(best.convergence))
     sheet.text(row, 0, f"Passes of the solver: {best.name}", "section")
-    passes.write(sheet, [_pass_row(one) for one in best.convergence], heading_lines=3)
-    _write_chart(book, best, passes, passes.below + 1)
-    sheet.widths([26, 17, 17, 17, 17, 10, 15, 13, 30, 12])
+    passes.write(sheet, [_pass_row(one) for one in best.convergence])
+    _write_chart(book, best, passes, chart_row)
     sheet.freeze(2, 0)
-    sheet.print_setup(passes.below + 21, len(METHODS) - 1)
+    sheet.print_setup(passes.below, len(METHODS) - 1)
 
 
 def _method_row(plan: PlanResult) -> dict[str, Cell]:
@@ -88,9 +92,11 @@ def _write_chart(book: SafeBook, best: PlanResult, passes: Grid, row: int) -> No
     """Bound and cost against solving time; the axis holds what came within sight of the end."""
     if len(best.convergence) < 2:
         return
+    # The first bounds are far off and would flatten the rest of the picture.
+    seen = best.convergence[len(best.convergence) // 4 :]
     known = [
         number
-        for one in best.convergence
+        for one in seen
         for number in (one.lower_bound, one.estimate, one.upper_end)
         if math.isfinite(number)
     ]
@@ -98,9 +104,13 @@ def _write_chart(book: SafeBook, best: PlanResult, passes: Grid, row: int) -> No
         return
     low, high = _axis_range(min(known), max(known))
     series = [
-        charts.Series(passes.chart_name("upper"), passes.chart_values("upper"), VERMILION, (), dash="dash"),
+        charts.Series(
+            passes.chart_name("upper"), passes.chart_values("upper"), VERMILION, (), dash="dash"
+        ),
         charts.Series(passes.chart_name("estimate"), passes.chart_values("estimate"), BLACK),
-        charts.Series(passes.chart_name("bound"), passes.chart_values("bound"), BLUE, (), width_pt=3),
+        charts.Series(
+            passes.chart_name("bound"), passes.chart_values("bound"), BLUE, (), width_pt=3
+        ),
     ]
     chart = charts.lines_over_numbers(
         book,
@@ -108,14 +118,16 @@ def _write_chart(book: SafeBook, best: PlanResult, passes: Grid, row: int) -> No
         passes.chart_values("seconds"),
         series,
         "Solving time (s)",
-        book.words("Yearly cost ({money}/year)"),
+        book.words("Yearly cost ({money}/year), axis not from 0"),
         (low, high),
     )
     alt = (
         "Lines against solving time: the lower bound rising, the cost of following the plan and "
         "the upper end of its interval coming down towards it."
     )
-    book.sheet(CONVERGENCE).chart(row, 0, chart, 1000, 20 * charts.PIXELS_PER_ROW - 20, alt)
+    book.sheet(CONVERGENCE).chart(
+        row, 0, chart, 1150, (CHART_ROWS - 1) * charts.PIXELS_PER_ROW, alt
+    )
 
 
 def _axis_range(low: float, high: float) -> tuple[float, float]:

@@ -6,7 +6,11 @@ For each trace: three charts, then (below all charts) its numbers by period. Sou
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+from dataclasses import dataclass
+
 import numpy as np
+from numpy.typing import NDArray
 
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import Trace
@@ -20,9 +24,22 @@ MAX_CHARTED = 6
 """Series a chart holds; smaller sources share one column "Other sources"."""
 
 CHART_ROWS = 19
-CHART_WIDTH, NARROW_WIDTH = 620, 400
+MAX_CHART_PX = 1600
 DASHES = ("solid", "dash", "round_dot", "long_dash", "dash_dot", "square_dot")
 OTHER = "Other sources (kW)"
+
+
+@dataclass(frozen=True)
+class _Placed:
+    """One trace with its table, and what its charts show."""
+
+    trace: Trace
+    grid: Grid
+    sources: tuple[str, ...]
+    """Names of the sources charted, in the order and colours of all traces."""
+    rest: tuple[str, ...]
+    has_other: bool
+    capacity: dict[str, float]
 
 
 def write(book: SafeBook, result: StudyResult) -> None:
@@ -38,61 +55,85 @@ def write(book: SafeBook, result: StudyResult) -> None:
         sheet.text(3, 0, "The run kept no trace of operation.", "note")
         sheet.print_setup(3, 12)
         return
-    layouts = []
-    row = 3
+    order = _order(best.traces)
+    tops, row = [], 3
     for trace in best.traces:
-        notes = [trace.description, *trace.closings]
-        layouts.append((row, notes))
-        row += 1 + len(notes) + CHART_ROWS + 1
-    last_col = 0
-    for (top, notes), trace in zip(layouts, best.traces, strict=True):
-        sheet.text(top, 0, trace.title, "section")
-        for i, note in enumerate(notes):
+        tops.append(row)
+        row += 1 + len(_notes(trace)) + CHART_ROWS + 1
+    first_numbers, placed = row, []
+    for trace in best.traces:
+        one = _place(trace, order, row + 1 + (1 if _capacity(trace) else 0))
+        placed.append(one)
+        row = one.grid.below + 1
+    last_col = max(12, *(len(one.grid.columns) - 1 for one in placed))
+    sheet.widths([17, 11] + [13] * (last_col - 1))
+    for top, one in zip(tops, placed, strict=True):
+        sheet.text(top, 0, one.trace.title, "section")
+        for i, note in enumerate(_notes(one.trace)):
             sheet.text(top + 1 + i, 0, note)
-        sheet.text(row, 0, f"Numbers: {trace.title}", "section")
-        grid, sources, stores, row = _write_numbers(sheet, trace, row + 1)
-        last_col = max(last_col, grid.left + len(grid.columns) - 1)
-        _write_charts(book, sheet, trace, grid, top + 1 + len(notes), sources, stores)
-        row += 1
-    sheet.widths([17, 11] + [13] * max(last_col - 1, 12))
+        _write_numbers(sheet, one)
+        _write_charts(book, sheet, one, order, top + 1 + len(_notes(one.trace)))
+    sheet.page_break(first_numbers)
     sheet.freeze(2, 0)
-    sheet.print_setup(row, max(last_col, 12))
+    sheet.print_setup(row, last_col)
 
 
-def _is_used(values: np.ndarray) -> bool:
+def _notes(trace: Trace) -> list[str]:
+    return [note for note in (trace.description, *trace.closings) if note]
+
+
+def _is_used(values: NDArray[np.float64]) -> bool:
     """True if a series differs from 0 by more than rounding."""
     rounding_kw = 1e-6
     return bool(values.size) and bool(np.abs(values).max() > rounding_kw)
 
 
-def _write_numbers(
-    sheet: SafeSheet, trace: Trace, top: int
-) -> tuple[Grid, list[str], list[str], int]:
-    """Table of one trace; keys of the columns that the charts show, and the next free row."""
-    ordered = sorted(trace.sources, key=lambda name: -float(np.abs(trace.sources[name]).sum()))
-    used = [name for name in ordered if _is_used(trace.sources[name])]
-    charted = used if len(used) <= MAX_CHARTED else used[: MAX_CHARTED - 1]
-    rest = [name for name in ordered if name not in charted]
-    has_other = len(used) > MAX_CHARTED
+def _order(traces: Sequence[Trace]) -> list[str]:
+    """All sources, the largest over all traces first, so that a colour keeps its meaning."""
+    size: dict[str, float] = {}
+    for trace in traces:
+        for name, values in trace.sources.items():
+            size[name] = size.get(name, 0.0) + float(np.abs(values).sum())
+    return sorted(size, key=lambda name: -size[name])
+
+
+def _capacity(trace: Trace) -> dict[str, float]:
+    """Energy capacity of the stores that have any."""
+    known = ((name, trace.energy_capacity_kwh.get(name, 0.0)) for name in trace.energy_kwh)
+    return {name: kwh for name, kwh in known if kwh > 0.0}
+
+
+def _place(trace: Trace, order: list[str], top: int) -> _Placed:
+    """Columns and place of one trace's table."""
+    own = [name for name in order if name in trace.sources]
+    used = [name for name in order if name in own and _is_used(trace.sources[name])]
+    fits = len(order) <= MAX_CHARTED
+    colourful = order if fits else order[: MAX_CHARTED - 1]
+    sources = tuple(name for name in used if name in colourful)
+    rest = tuple(name for name in own if name not in sources)
+    has_other = any(name in used for name in rest)
+    capacity = _capacity(trace)
     columns = list(TRACE_HEAD)
-    columns += [Column(f"source {name}", f"{name} (kW)", "power") for name in charted]
+    columns += [Column(f"source {name}", f"{name} (kW)", "power") for name in sources]
     if has_other:
         columns.append(Column("other", OTHER, "power"))
     columns += [Column(f"source {name}", f"{name} (kW)", "power") for name in rest]
-    capacity = {
-        name: trace.energy_capacity_kwh.get(name, 0.0)
-        for name in trace.energy_kwh
-        if trace.energy_capacity_kwh.get(name, 0.0) > 0.0
-    }
     columns += [Column(f"energy {name}", f"{name}, stored (kWh)", "energy") for name in capacity]
     columns += [Column(f"soc {name}", f"{name}, state of charge", "percent") for name in capacity]
-    n_row = len(trace.times)
-    if capacity:
-        sheet.text(top, 0, "Energy capacity (kWh)", "text")
-        top += 1
-    grid = Grid(OPERATION, top, tuple(columns), n_row)
-    for name, kwh in capacity.items():
-        sheet.number(top - 1, grid.col(f"energy {name}"), kwh, "energy", "input")
+    grid = Grid(OPERATION, top, tuple(columns), len(trace.times))
+    return _Placed(trace, grid, sources, rest, has_other, capacity)
+
+
+def _write_numbers(sheet: SafeSheet, one: _Placed) -> None:
+    """Table of one trace; states of charge and the other sources' sum are formulas."""
+    trace, grid = one.trace, one.grid
+    above = grid.top - 1
+    if one.capacity:
+        sheet.text(above, 0, "Energy capacity (kWh)")
+        for name, kwh in one.capacity.items():
+            sheet.number(above, grid.col(f"energy {name}"), kwh, "energy", "input")
+        above -= 1
+    sheet.text(above, 0, f"Numbers: {trace.title}", "section")
 
     def row(i: int) -> dict[str, Cell]:
         cells: dict[str, Cell] = {
@@ -102,36 +143,27 @@ def _write_numbers(
             "served": float(trace.served_kw[i]),
             "unserved": float(trace.unserved_kw[i]),
         }
-        for name in ordered:
+        for name in (*one.sources, *one.rest):
             cells[f"source {name}"] = float(trace.sources[name][i])
-        if has_other:
-            first, last = grid.here(i, f"source {rest[0]}"), grid.here(i, f"source {rest[-1]}")
-            value = float(sum(trace.sources[name][i] for name in rest))
+        if one.has_other:
+            first, last = (grid.here(i, f"source {one.rest[k]}") for k in (0, -1))
+            value = float(sum(trace.sources[name][i] for name in one.rest))
             cells["other"] = Formula(f"=SUM({first}:{last})", value)
-        for name, kwh in capacity.items():
+        for name, kwh in one.capacity.items():
             stored = float(trace.energy_kwh[name][i])
             cells[f"energy {name}"] = stored
-            column = grid.fixed(-2, f"energy {name}")
-            share = f"={grid.here(i, f'energy {name}')}/{column}"
+            share = f"={grid.here(i, f'energy {name}')}/{grid.fixed(-2, f'energy {name}')}"
             cells[f"soc {name}"] = Formula(share, stored / kwh)
         return cells
 
-    grid.write(sheet, [row(i) for i in range(n_row)], heading_lines=3)
-    sources = [f"source {name}" for name in charted] + (["other"] if has_other else [])
-    stores = sorted(capacity, key=lambda name: -capacity[name])[:MAX_CHARTED]
-    return grid, sources, [f"soc {name}" for name in stores], grid.below
+    grid.write(sheet, [row(i) for i in range(grid.n_row)])
 
 
 def _write_charts(
-    book: SafeBook,
-    sheet: SafeSheet,
-    trace: Trace,
-    grid: Grid,
-    row: int,
-    sources: list[str],
-    stores: list[str],
+    book: SafeBook, sheet: SafeSheet, one: _Placed, order: list[str], row: int
 ) -> None:
-    """Supply by source with the load; unserved load; state of charge."""
+    """Supply by source with the load; unserved load, if any; state of charge, if any."""
+    trace, grid = one.trace, one.grid
     times, n_point = grid.chart_values("time"), grid.n_row
     height = (CHART_ROWS - 1) * charts.PIXELS_PER_ROW
 
@@ -139,37 +171,50 @@ def _write_charts(
         name, values = grid.chart_name(key), grid.chart_values(key)
         return charts.Series(name, values, colour, dash=dash, width_pt=width_pt)
 
-    supply = charts.stacked_columns_and_line(
-        book,
-        "Load and where it is served from",
-        times,
-        [series(key, SERIES_COLOURS[i]) for i, key in enumerate(sources)],
-        series("load", BLACK, width_pt=1.5),
-        "Power (kW)",
-        n_point,
-    )
-    alt = f"{trace.title}: columns of power by source stacked by period, a line for the load."
-    sheet.chart(row, 0, supply, CHART_WIDTH, height, alt)
-    unserved = charts.columns_over_time(
-        book,
-        "Load left unserved",
-        times,
-        series("unserved", VERMILION),
-        "Unserved (kW)",
-        n_point,
-    )
-    alt = f"{trace.title}: columns of unserved load by period."
-    sheet.chart(row, 7, unserved, NARROW_WIDTH, height, alt)
-    if stores:
-        charge = charts.lines_over_time(
-            book,
-            "State of charge of each store",
-            times,
-            [series(key, SERIES_COLOURS[i], DASHES[i]) for i, key in enumerate(stores)],
-            "State of charge (%)",
-            n_point,
-            axis_max=1.0,
-            number_format="0%",
+    columns = [series(f"source {n}", SERIES_COLOURS[order.index(n)]) for n in one.sources]
+    if one.has_other:
+        columns.append(series("other", SERIES_COLOURS[-1]))
+    load = series("load", BLACK, width_pt=1.5)
+    drawn = []
+    if columns:
+        title = "Load, and where it is served from"
+        drawn.append(
+            (
+                charts.stacked_columns_and_line(
+                    book, title, times, columns, load, "Power (kW)", n_point
+                ),
+                "columns of power by source stacked by period, and a line for the load.",
+            )
         )
-        alt = f"{trace.title}: lines of the state of charge of each store by period."
-        sheet.chart(row, 11, charge, NARROW_WIDTH, height, alt)
+    if _is_used(trace.unserved_kw):
+        title, bad = "Load left unserved", series("unserved", VERMILION)
+        drawn.append(
+            (
+                charts.columns_over_time(book, title, times, bad, "Unserved (kW)", n_point),
+                "columns of unserved load by period.",
+            )
+        )
+    largest = sorted(one.capacity, key=lambda name: -one.capacity[name])[:MAX_CHARTED]
+    if largest:
+        lines = [
+            series(f"soc {name}", SERIES_COLOURS[i], DASHES[i]) for i, name in enumerate(largest)
+        ]
+        drawn.append(
+            (
+                charts.lines_over_time(
+                    book,
+                    "State of charge at the end of each period",
+                    times,
+                    lines,
+                    "State of charge (%)",
+                    n_point,
+                    axis_max=1.0,
+                    number_format="0%",
+                ),
+                "lines of the state of charge of each store by period.",
+            )
+        )
+    total = min(MAX_CHART_PX, sheet.pixels(0, max(12, len(grid.columns) - 1)))
+    width = total // max(2, len(drawn))
+    for i, (chart, words) in enumerate(drawn):
+        sheet.chart(row, i * width, chart, width - 10, height, f"{trace.title}: {words}"[:250])

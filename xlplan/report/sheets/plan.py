@@ -40,6 +40,7 @@ def write(book: SafeBook, result: StudyResult) -> PlanCells:
         "Blue figures on a pale fill were given or found by the run; black ones are formulas that "
         "follow them. Changing a figure moves the totals; it does not search for a new plan.",
     )
+    sheet.widths(WIDTHS)
     shown = [plan for plan in result.plans if buys_anything(plan)]
     assets = baseline(result).purchases or result.plans[-1].purchases
     totals = Grid(PLAN, 4, PLAN_TOTALS, len(result.plans))
@@ -59,16 +60,15 @@ def write(book: SafeBook, result: StudyResult) -> PlanCells:
         for i, plan in enumerate(result.plans)
     ]
     best = [i for i, plan in enumerate(result.plans) if plan.name == result.recommended]
-    totals.write(sheet, total_rows, marked=best, heading_lines=3)
+    totals.write(sheet, total_rows, marked=best)
 
     sheet.text(prices.top - 1, 0, "Prices and lives, as given in the study", "section")
-    prices.write(sheet, [_price_row(a, prices, i) for i, a in enumerate(assets)], heading_lines=4)
+    prices.write(sheet, [_price_row(a, prices, i) for i, a in enumerate(assets)])
 
     sheet.text(bought.top - 1, 0, "Purchases by alternative", "section")
     marked = [i for i, row in enumerate(rows) if row["is_bought"] == "yes"]
-    bought.write(sheet, rows, marked=marked, heading_lines=3)
+    bought.write(sheet, rows, marked=marked)
     sheet.text(bought.below + 1, 0, NOTE, "note")
-    sheet.widths(WIDTHS)
     sheet.freeze(2, 1)
     sheet.print_setup(bought.below + 1, len(PURCHASES) - 1)
     return PlanCells(totals)

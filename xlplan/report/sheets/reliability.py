@@ -34,7 +34,10 @@ NO_SECTION = "(nothing dead)"
 MAX_CAUSES = 400
 """Causes listed one by one for each plan; the rest, the least harmful, share one row."""
 
-WIDTHS = (26, 30, 15, 15, 15, 15, 15, 15, 15, 15, 15)
+CHART_ROWS = 16
+MAX_BUSES_CHARTED = 60
+
+WIDTHS = (26, 39, 15, 15, 15, 15, 15, 15, 15, 15, 15)
 
 
 @dataclass(frozen=True)
@@ -56,14 +59,14 @@ def write(book: SafeBook, result: StudyResult) -> ReliabilityCells:
         "Expected values per year by IEEE 1366 (customer interruptions count the largest share of "
         f"load shed at once). Tables further down: existing feeder and plan ({best.name}).",
     )
-    indices = _indices(sheet, result, 3)
+    sheet.widths(WIDTHS)
+    indices = _indices(sheet, result, 3 + CHART_ROWS)
     row = _history(sheet, result, indices.below)
     windows = _windows(sheet, [base, best], row + 2)
     classes = _classes(sheet, base, best, windows.below + 2)
-    row = _chart(book, sheet, classes, classes.below + 1)
-    buses = _buses(sheet, base, best, row + 2)
+    buses = _buses(sheet, base, best, classes.below + 2)
+    _charts(book, sheet, classes, buses)
     row = _causes(sheet, base, best, buses.below + 2)
-    sheet.widths(WIDTHS)
     sheet.freeze(2, 1)
     sheet.print_setup(row, len(CLASSES) - 1)
     return ReliabilityCells(indices, windows, classes, buses)
@@ -91,7 +94,7 @@ def _indices(sheet: SafeSheet, result: StudyResult, top: int) -> Grid:
         rows.append(row(plan.name, ALL_OUTAGES, plan.indices))
         rows.append(row(plan.name, FAIR_OUTAGES, plan.indices_fair))
     marked = [i for i, line in enumerate(rows) if line["name"] == result.recommended]
-    grid.write(sheet, rows, marked=marked, heading_lines=4)
+    grid.write(sheet, rows, marked=marked)
     return grid
 
 
@@ -122,7 +125,7 @@ def _history(sheet: SafeSheet, result: StudyResult, below: int) -> int:
         )
     grid.write(sheet, rows)
     col = grid.col("verdict")
-    sheet.status_fill(grid.row(0), col, grid.row(len(lines) - 1), col)
+    sheet.status_fill(grid.row(0), grid.row(len(lines) - 1), col, col + 1)
     return grid.below
 
 
@@ -148,7 +151,7 @@ def _windows(sheet: SafeSheet, plans: Sequence[PlanResult], top: int) -> Grid:
                 "customer_h": window.customer_hours,
             }
         )
-    grid.write(sheet, rows, heading_lines=4)
+    grid.write(sheet, rows)
     return grid
 
 
@@ -177,35 +180,43 @@ def _classes(sheet: SafeSheet, base: PlanResult, best: PlanResult, top: int) -> 
         }
         for one, other in zip(base.classes, best.classes, strict=True)
     ]
-    grid.write(sheet, rows, heading_lines=3)
+    grid.write(sheet, rows)
     return grid
 
 
-def _chart(book: SafeBook, sheet: SafeSheet, classes: Grid, row: int) -> int:
-    """Energy not supplied by class, existing feeder beside plan; next free row."""
-    if not classes.n_row:
-        return row
-    series = [
-        charts.Series(classes.chart_name("eens_base"), classes.chart_values("eens_base"), VERMILION),
-        charts.Series(classes.chart_name("eens_plan"), classes.chart_values("eens_plan"), BLUE),
-    ]
-    chart = charts.bars(
-        book,
-        "Energy not supplied by customer class, existing feeder and plan",
-        classes.chart_values("name"),
-        series,
-        "Energy not supplied (kWh/year)",
-    )
-    n_line = 16
-    sheet.chart(
-        row,
-        0,
-        chart,
-        900,
-        n_line * charts.PIXELS_PER_ROW,
-        "Bars: energy not supplied a year for each customer class, existing feeder and plan.",
-    )
-    return row + n_line
+def _charts(book: SafeBook, sheet: SafeSheet, classes: Grid, buses: Grid) -> None:
+    """Energy not supplied by class, outage time by bus: existing feeder beside plan."""
+
+    def pair(grid: Grid, key: str) -> list[charts.Series]:
+        sides = ((f"{key}_base", VERMILION), (f"{key}_plan", BLUE))
+        return [
+            charts.Series(grid.chart_name(one), grid.chart_values(one), colour)
+            for one, colour in sides
+        ]
+
+    total = sheet.pixels(0, len(WIDTHS) - 1)
+    height, half = (CHART_ROWS - 1) * charts.PIXELS_PER_ROW, total // 2 - 10
+    if classes.n_row:
+        chart = charts.bars(
+            book,
+            "Energy not supplied by customer class",
+            classes.chart_values("name"),
+            pair(classes, "eens"),
+            "Energy not supplied (kWh/year)",
+        )
+        alt = "Bars: energy not supplied a year by customer class, existing feeder and plan."
+        sheet.chart(3, 0, chart, half, height, alt)
+    if 0 < buses.n_row <= MAX_BUSES_CHARTED:
+        chart = charts.columns(
+            book,
+            "Outage time by bus",
+            buses.chart_values("name"),
+            pair(buses, "outage"),
+            "Bus",
+            "Outage time (h/year)",
+        )
+        alt = "Columns: outage hours a year at each bus, existing feeder and plan."
+        sheet.chart(3, half + 15, chart, half, height, alt)
 
 
 def _buses(sheet: SafeSheet, base: PlanResult, best: PlanResult, top: int) -> Grid:
@@ -226,7 +237,7 @@ def _buses(sheet: SafeSheet, base: PlanResult, best: PlanResult, top: int) -> Gr
         }
         for one, other in zip(base.buses, best.buses, strict=True)
     ]
-    grid.write(sheet, rows, heading_lines=3)
+    grid.write(sheet, rows)
     return grid
 
 
@@ -250,9 +261,9 @@ def _causes(sheet: SafeSheet, base: PlanResult, best: PlanResult, top: int) -> i
                     causes, key, first[plan.name], len(block), sections.here(i, "name"), sum(chosen)
                 )
         rows.append(row)
-    sections.write(sheet, rows, heading_lines=4)
+    sections.write(sheet, rows)
     sheet.text(causes.top - 1, 0, "By cause, the most harmful first", "section")
-    causes.write(sheet, [row for plan in plans for row in listed[plan.name]], heading_lines=3)
+    causes.write(sheet, [row for plan in plans for row in listed[plan.name]])
     return causes.below
 
 

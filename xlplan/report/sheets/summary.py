@@ -11,6 +11,7 @@ from xlplan.evaluate.results import PlanResult, Purchase
 from xlplan.report import charts, wording
 from xlplan.report.grid import Cell, Formula, Grid
 from xlplan.report.looks import BLACK, BLUE, NAVY, ORANGE, SKY, VERMILION
+from xlplan.report.money import baseline
 from xlplan.report.safe_book import SafeBook, SafeSheet
 from xlplan.report.sheets.alternatives import AlternativesCells
 from xlplan.report.sheets.cautions import CAUTION_TEXTS
@@ -20,7 +21,7 @@ from xlplan.report.tables import CAUTIONS, PLAN, SUMMARY, SUMMARY_PLANS
 
 WIDTHS = (25, 13, 14, 14, 13, 13, 14, 13, 13, 13, 13, 13, 16, 13)
 LAST_COL = len(WIDTHS) - 1
-CHART_ROWS = 17
+CHART_ROWS = 22
 MAX_BOUGHT = 10
 LEFT_LAST_COL = 5
 RIGHT_COL = 7
@@ -43,21 +44,22 @@ def write(
     sheet = book.sheet(SUMMARY)
     sheet.widths(WIDTHS)
     sheet.paragraph(0, 0, LAST_COL, wording.headline(result), 115, "title")
-    sheet.paragraph(1, 0, LAST_COL, wording.consequence(result), 200, "text", "bold")
-    sheet.paragraph(2, 0, LAST_COL, wording.basis(result), 200, "subtitle")
+    sheet.paragraph(1, 0, LAST_COL, wording.consequence(result), 222, "text", "bold")
+    sheet.paragraph(2, 0, LAST_COL, wording.basis(result), 222, "subtitle")
     grid = Grid(SUMMARY, 4, SUMMARY_PLANS, len(result.plans))
     rows = [
-        _row(plan, i, grid, alternatives, reliability) for i, plan in enumerate(result.plans)
+        _row(plan, baseline(result), i, grid, alternatives, reliability)
+        for i, plan in enumerate(result.plans)
     ]
     marked = [i for i, plan in enumerate(result.plans) if plan.name == result.recommended]
-    grid.write(sheet, rows, marked=marked, heading_lines=5)
+    grid.write(sheet, rows, marked=marked)
     row = _charts(book, sheet, result, grid, grid.below + 1)
     left = _purchases(sheet, result, row)
     right = _uncertain(sheet, result, row)
     row = max(left, right) + 1
     sheet.text(row, 0, "Do the numbers agree?", "status")
     sheet.formula(row, 1, f"={checks.overall}", checks.words, "status")
-    sheet.status_fill(row, 1, row, 1)
+    sheet.status_fill(row, row, 1, 4)
     cautions = f"{len(CAUTION_TEXTS)} cautions apply: read the Cautions sheet before using this"
     sheet.link(row, RIGHT_COL, CAUTIONS, cautions)
     note = (
@@ -70,6 +72,7 @@ def write(
 
 def _row(
     plan: PlanResult,
+    base: PlanResult,
     i: int,
     grid: Grid,
     alternatives: AlternativesCells,
@@ -87,7 +90,6 @@ def _row(
     other = costs.repair + costs.surplus + costs.end_of_window
     parts = [grid.here(i, key) for key in ("upkeep", "supply", "other")]
     low, high = plan.difference_interval
-    base_total_gap = alternatives.away("difference", i)
     return {
         "name": plan.name,
         "capital": from_statement(plan.capital_cost, "net"),
@@ -97,7 +99,7 @@ def _row(
         "utility": Formula(f"={'+'.join(parts)}", costs.utility),
         "customers": from_statement(costs.customers, "customers"),
         "total": Formula(f"={grid.here(i, 'utility')}+{grid.here(i, 'customers')}", costs.total),
-        "difference": Formula(f"={base_total_gap}", 0.0),
+        "difference": from_statement(costs.total - base.costs.total, "difference"),
         "low": from_statement(low, "difference_low"),
         "high": from_statement(high, "difference_high"),
         "outage_h": from_indices(plan.indices.saidi_h, "saidi"),
@@ -133,20 +135,20 @@ def _charts(book: SafeBook, sheet: SafeSheet, result: StudyResult, grid: Grid, r
         is_stacked=True,
         label_above=0.09 * largest,
     )
+    total = sheet.pixels(0, LAST_COL)
+    left = total * 54 // 100
     height = CHART_ROWS * charts.PIXELS_PER_ROW - 10
     alt = (
         "Stacked bars: yearly cost of each alternative, in investment and upkeep; energy, fuel "
         "and demand; repairs and other; and customers' outage cost."
     )
-    sheet.chart(row, 0, cost, 760, height, alt)
+    sheet.chart(row, 0, cost, left, height, alt)
     hours = charts.bars(
         book,
         "Outage hours per customer in a year",
         grid.chart_values("name"),
         [
-            charts.Series(
-                grid.chart_name("outage_h"), grid.chart_values("outage_h"), VERMILION
-            ),
+            charts.Series(grid.chart_name("outage_h"), grid.chart_values("outage_h"), VERMILION),
             charts.Series(
                 grid.chart_name("outage_fair_h"), grid.chart_values("outage_fair_h"), BLUE
             ),
@@ -158,7 +160,7 @@ def _charts(book: SafeBook, sheet: SafeSheet, result: StudyResult, grid: Grid, r
         "Bars: outage hours per customer and year of each alternative, all outages, and without "
         "storms and loss of bulk supply."
     )
-    sheet.chart(row, RIGHT_COL, hours, 640, height, alt)
+    sheet.chart(row, left + 12, hours, total - left - 18, height, alt)
     return row + CHART_ROWS
 
 
@@ -186,9 +188,9 @@ def _asset_words(asset: Purchase, currency: str) -> str:
     capital = f"capital {wording.money_words(asset.capital_net, currency)} after grants"
     if asset.kind == "hardening":
         return f"•  {asset.asset}: hardening of {asset.place}; {capital}"
-    size = f"{asset.kw:,.0f} kW"
+    size = f"{asset.kw:,.1f} kW"
     if asset.kind == "storage":
-        size += f", {asset.kwh:,.0f} kWh"
+        size += f", {asset.kwh:,.1f} kWh"
     return f"•  {asset.asset}: {asset.kind} at {asset.place}, {size}; {capital}"
 
 

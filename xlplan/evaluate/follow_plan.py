@@ -1,0 +1,466 @@
+"""What it costs to follow a plan, and what else happens: exact for first failures, then sampled.
+
+A plan is followed from the start of a window until something fails; the event is then run by its
+own program, and after the repair the rest of the window is planned anew. With thinned chances
+(hardening bought) ``f_k p_kw`` of a first real failure, the expectation of every metric is
+
+    sum_k S_k plan_k + S_T end + sum_kw f_k p_kw (event_kw + J_{k+1+tau}(s'))
+
+The events of the first plan are solved one by one, all of them. For the continuation ``J`` the same
+numbers serve a second time: if every later event and plan were like those of the first plan, the
+expectation would follow from the chances of being in service (``Clock.occupancy``); that is the
+*base*. What is left is the difference that the state after an event makes (a store not yet full,
+say). It is 0 where nothing has a memory, and is sampled along random histories, pathwise against
+the base, with the cuts of ``V`` as control variate; on small trees every history is enumerated.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+from typing import Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+
+from xlplan.base.rng import stream
+from xlplan.evaluate.meters import PlanReading, read_solution
+from xlplan.evaluate.metrics import COST_PARTS, Slots
+from xlplan.model.study_graph import StudyGraph
+from xlplan.model.tree_size import count_window
+from xlplan.outages.clock import Clock
+from xlplan.outages.window_model import WindowModel
+from xlplan.solve.node_solver import NodeRequest, NodeSolution
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
+ENUMERATION_LIMIT = 3000
+"""Histories of a window are enumerated up to this many nodes: some seconds of solving."""
+
+NORMAL_95 = 1.959964
+"""Two-sided 95 % point of the normal distribution."""
+
+MOST_FAILURES = 60
+"""A history is cut off after this many failures in one window; the chance is below rounding."""
+
+
+class NodeService(Protocol):
+    """Whoever solves nodes: the engine."""
+
+    def solve_nodes(
+        self, requests: Sequence[NodeRequest], measure: Callable[..., object] | None = None
+    ) -> list[NodeSolution]:
+        """Solves nodes; each solution carries what ``measure`` read."""
+
+
+Guide = Callable[[int, int, FloatArray], float]
+"""(window, member, state) -> value of the cuts of ``V`` there."""
+
+
+@dataclass(frozen=True)
+class WindowFollow:
+    """One window, per occurrence, in the metrics of ``Slots``.
+
+    plan : PlanReading of the first plan; ``events`` (n_period, n_scenario, n_slot)
+    first_chance : (n_period, n_scenario), chance of a first real failure
+    in_service : (n_period + 1,); ``event_count`` (n_period, n_scenario), expected real failures
+    base, correction : (n_slot,); their sum is the expectation
+    sample_cost : (n_sample,), cost correction of each history (mean: the cost's correction)
+    expected_cost, standard_error : float, per occurrence
+    solver_plan_cost, solver_event_cost : what the programs say of the same operation, the plan
+        weighted by ``clock_plan``; None where the method has no such programs
+    """
+
+    clock: Clock
+    plan: PlanReading
+    events: FloatArray
+    first_chance: FloatArray
+    in_service: FloatArray
+    event_count: FloatArray
+    base: FloatArray
+    correction: FloatArray
+    sample_cost: FloatArray
+    expected_cost: float
+    standard_error: float
+    clock_plan: FloatArray
+    solver_plan_cost: float | None
+    solver_event_cost: float | None
+
+    @property
+    def metrics(self) -> FloatArray:
+        """Expected metrics of one occurrence, (n_slot,)."""
+        return self.base + self.correction
+
+    @property
+    def expected_events(self) -> float:
+        """Expected number of real failures in one occurrence."""
+        return float(self.event_count.sum())
+
+
+@dataclass(frozen=True)
+class FollowResult:
+    """Cost of running all windows for a year, with its 95 % interval."""
+
+    windows: tuple[WindowFollow, ...]
+    occurrences: FloatArray
+    slots: Slots
+    is_enumerated: bool
+    n_sample: int
+
+    @property
+    def running_cost(self) -> float:
+        """Expected cost of all windows, per year."""
+        costs = np.array([window.expected_cost for window in self.windows])
+        return float(self.occurrences @ costs)
+
+    @property
+    def half_width(self) -> float:
+        """Half of the 95 % interval of ``running_cost``."""
+        errors = self.occurrences * np.array([w.standard_error for w in self.windows])
+        return NORMAL_95 * float(np.sqrt(np.square(errors).sum()))
+
+    def difference_half_width(self, other: FollowResult) -> float:
+        """Half of the 95 % interval of the difference of two costs, on the same histories."""
+        variance = 0.0
+        for n, mine, theirs in zip(
+            self.occurrences, self.windows, other.windows, strict=True
+        ):
+            if len(mine.sample_cost) == len(theirs.sample_cost) and len(mine.sample_cost) > 1:
+                paired = mine.sample_cost - theirs.sample_cost
+                variance += n**2 * float(paired.var(ddof=1)) / len(paired)
+            else:
+                variance += n**2 * (mine.standard_error**2 + theirs.standard_error**2)
+        return NORMAL_95 * float(np.sqrt(variance))
+
+
+@dataclass(frozen=True)
+class Follower:
+    """Follows plans of one graph at given capacities.
+
+    ``breaks_ties_by_energy``: among equal optima the plan with the most stored energy summed over
+    the periods (the plan ignoring outages, model.md section 6).
+    """
+
+    graph: StudyGraph
+    windows: tuple[WindowModel, ...]
+    service: NodeService
+    guide: Guide
+    breaks_ties_by_energy: bool = False
+
+    def follow(self, capacity: FloatArray, n_sample: int, seed: int) -> FollowResult:
+        """Cost and metrics of following the plan.
+
+        Parameters
+        ----------
+        capacity : array, shape (n_capacity,), in service
+        n_sample : int, least number of sampled histories over all windows
+        seed : int
+
+        Returns
+        -------
+        FollowResult
+        """
+        counts = [count_window(window).n_node for window in self.windows]
+        enumerates = max(counts) <= ENUMERATION_LIMIT
+        shares = allocate(self.windows, n_sample)
+        plans = self._first_plans(capacity)
+        results = []
+        for i, window in enumerate(self.windows):
+            results.append(
+                self._follow_window(i, window, capacity, plans[i], enumerates, shares[i], seed)
+            )
+        return FollowResult(
+            windows=tuple(results),
+            occurrences=np.array([w.series.occurrences_per_year for w in self.windows]),
+            slots=Slots(len(self.graph.models[0].study.loads)),
+            is_enumerated=enumerates,
+            n_sample=0 if enumerates else sum(len(r.sample_cost) for r in results),
+        )
+
+    def _first_plans(self, capacity: FloatArray) -> list[NodeSolution]:
+        requests = []
+        for i, root in enumerate(self.graph.graph.roots):
+            state = root.state_matrix @ capacity + root.state_offset
+            requests.append(self.plan_request(i, 0, state, capacity))
+        return self.service.solve_nodes(requests, read_solution)
+
+    def plan_request(
+        self, i_window: int, member: int, state: FloatArray, capacity: FloatArray
+    ) -> NodeRequest:
+        """Asks for the plan of a window from a period on."""
+        family = self.graph.plan_family(i_window)
+        second = None
+        if self.breaks_ties_by_energy:
+            second = np.zeros(family.program.n_col)
+            energy = family.columns["energy_kwh"][member:]
+            np.add.at(second, energy[energy >= 0], -1.0)
+        return NodeRequest(self.graph.windows[i_window].plan, member, state, capacity, second)
+
+    def event_request(
+        self, i_window: int, w: int, k: int, state: FloatArray, capacity: FloatArray
+    ) -> NodeRequest:
+        """Asks for the event of scenario ``w`` whose failure strikes in period ``k``."""
+        family = self.graph.windows[i_window].events[w]
+        return NodeRequest(family, k, state, capacity)
+
+    def _follow_window(
+        self,
+        i_window: int,
+        window: WindowModel,
+        capacity: FloatArray,
+        plan_solution: NodeSolution,
+        enumerates: bool,
+        n_sample: int,
+        seed: int,
+    ) -> WindowFollow:
+        layout = self.graph.layout
+        slots = Slots(len(self.graph.models[0].study.loads))
+        hardened = capacity[layout.hardening(0) : layout.hardening(0) + layout.n_measure]
+        clock = window.clock.thinned(avoided_shares(window, hardened))
+        plan = plan_solution.measured
+        assert isinstance(plan, PlanReading)
+        n_period, n_scenario = window.series.n_period, len(window.scenarios)
+        first = clock.survival[:-1, None] * clock.failure_chance[:, None] * clock.scenario_chance
+        pairs = np.argwhere(first > 0.0)
+        requests = [
+            self.event_request(i_window, int(w), int(k), plan.states[k], capacity)
+            for k, w in pairs
+        ]
+        solutions = self.service.solve_nodes(requests, read_solution)
+        events = np.zeros((n_period, n_scenario, slots.n_slot))
+        after = np.zeros((n_period, n_scenario, layout.n_state))
+        solver_event_cost = 0.0
+        for (k, w), solution in zip(pairs, solutions, strict=True):
+            events[k, w] = solution.measured
+            after[k, w] = solution.out_states[0]
+            solver_event_cost += float(first[k, w]) * solution.cost
+        in_service, count = clock.occupancy()
+        base = in_service @ plan.metrics + np.tensordot(count, events, axes=2)
+        history = _History(
+            self, i_window, window, clock, plan, events, after, first, capacity, slots
+        )
+        if enumerates:
+            correction, samples = history.enumerate(), np.zeros(0)
+        else:
+            correction, samples = history.sample(n_sample, seed)
+        n = len(samples)
+        error = float(samples.std(ddof=1) / np.sqrt(n)) if n > 1 else 0.0
+        return WindowFollow(
+            clock=clock,
+            plan=plan,
+            events=events,
+            first_chance=first,
+            in_service=in_service,
+            event_count=count,
+            base=base,
+            correction=correction,
+            sample_cost=samples,
+            expected_cost=float(slots.cost(base + correction)),
+            standard_error=error,
+            clock_plan=self.graph.plan_family(i_window).survival,
+            solver_plan_cost=plan_solution.cost,
+            solver_event_cost=solver_event_cost,
+        )
+
+
+def avoided_shares(window: WindowModel, hardened: FloatArray) -> FloatArray:
+    """Share of each scenario's failures that the measures bought avoid, (n_scenario,)."""
+    return np.array(
+        [
+            max((share for m, share in scenario.hardening if hardened[m] > 0.5), default=0.0)
+            for scenario in window.scenarios
+        ]
+    )
+
+
+def allocate(windows: Sequence[WindowModel], n_sample: int) -> list[int]:
+    """Histories per window: by how often a repair ends within it and what hangs on it."""
+    size = []
+    for window in windows:
+        clock = window.clock
+        first = clock.survival[:-1] * clock.failure_chance
+        size.append(
+            window.series.occurrences_per_year
+            * float(first.sum())
+            * float(window.series.load_kw.sum())
+            * window.series.period_h
+        )
+    total = sum(size)
+    least = max(10, n_sample // (5 * len(windows)))
+    return [max(least, round(n_sample * s / total)) if total > 0 else 0 for s in size]
+
+
+@dataclass(frozen=True)
+class _History:
+    """Histories after a first event, as differences from the base."""
+
+    follower: Follower
+    i_window: int
+    window: WindowModel
+    clock: Clock
+    plan: PlanReading
+    events: FloatArray
+    after: FloatArray
+    first: FloatArray
+    capacity: FloatArray
+    slots: Slots
+
+    def _tau(self) -> IntArray:
+        return np.array([s.n_period for s in self.window.scenarios], dtype=np.int64)
+
+    def _plans(self, at: list[tuple[int, FloatArray]]) -> list[PlanReading]:
+        follower = self.follower
+        requests = [
+            follower.plan_request(self.i_window, u, state, self.capacity) for u, state in at
+        ]
+        solutions = follower.service.solve_nodes(requests, read_solution)
+        readings = []
+        for solution in solutions:
+            assert isinstance(solution.measured, PlanReading)
+            readings.append(solution.measured)
+        return readings
+
+    def _plan_difference(self, u: int, reading: PlanReading) -> FloatArray:
+        """Expected metrics of the plan from ``u`` until a failure, less those of the first plan."""
+        return self.clock.survival_from(u) @ (reading.metrics - self.plan.metrics[u:])
+
+    def _event_solutions(self, at: list[tuple[int, int, FloatArray]]) -> list[NodeSolution]:
+        follower = self.follower
+        requests = [
+            follower.event_request(self.i_window, w, k, state, self.capacity)
+            for k, w, state in at
+        ]
+        return follower.service.solve_nodes(requests, read_solution)
+
+    def enumerate(self) -> FloatArray:
+        """Exact correction, (n_slot,)."""
+        total = np.zeros(self.slots.n_slot)
+        tau, n_period = self._tau(), self.window.series.n_period
+        level = [
+            (int(k + 1 + tau[w]), self.after[k, w], float(self.first[k, w]))
+            for k, w in np.argwhere(self.first > 0.0)
+            if k + 1 + tau[w] < n_period
+        ]
+        while level:
+            readings = self._plans([(u, state) for u, state, _ in level])
+            at, weights = [], []
+            for (u, _, weight), reading in zip(level, readings, strict=True):
+                total += weight * self._plan_difference(u, reading)
+                chance = self.clock.first_failure_from(u)[:, None] * self.clock.scenario_chance[u:]
+                for i, w in np.argwhere(chance > 0.0):
+                    at.append((u + int(i), int(w), reading.states[i]))
+                    weights.append(weight * float(chance[i, w]))
+            solutions = self._event_solutions(at)
+            level = []
+            for (k, w, _), weight, solution in zip(at, weights, solutions, strict=True):
+                total += weight * (np.asarray(solution.measured) - self.events[k, w])
+                if k + 1 + tau[w] < n_period:
+                    level.append((int(k + 1 + tau[w]), solution.out_states[0], weight))
+        return total
+
+    def sample(self, n_sample: int, seed: int) -> tuple[FloatArray, FloatArray]:
+        """Correction by random histories, and the cost correction of each."""
+        tau, n_period = self._tau(), self.window.series.n_period
+        # Scenario by scenario, so that equal steps through the list reach each in proportion.
+        pairs = [
+            (int(k), int(w))
+            for w, k in np.argwhere(self.first.T > 0.0)
+            if k + 1 + tau[w] < n_period
+        ]
+        if not pairs or n_sample < 1:
+            return np.zeros(self.slots.n_slot), np.zeros(0)
+        chance = np.array([self.first[k, w] for k, w in pairs])
+        random = stream(seed, "continuations", self.window.series.window)
+        draws = random.random((n_sample, 2 * MOST_FAILURES + 1))
+        steps = (np.arange(n_sample) + draws[:, 0]) / n_sample
+        chosen = np.searchsorted(np.cumsum(chance) / chance.sum(), steps).clip(0, len(pairs) - 1)
+        difference = np.zeros((n_sample, self.slots.n_slot))
+        level = []
+        for i, pair in enumerate(chosen):
+            k, w = pairs[pair]
+            level.append((i, k + 1 + int(tau[w]), self.after[k, w], 1.0))
+        guide = self._guide(pairs)
+        for depth in range(MOST_FAILURES):
+            if not level:
+                break
+            level = self._advance(level, depth, draws, difference, tau)
+        weight = float(chance.sum())
+        control = guide[chosen]
+        exact = float(chance @ guide)
+        cost = weight * self.slots.cost(difference)
+        # The control variate may be subtracted with any coefficient; the best one is regressed.
+        spread = float(control.var()) * weight
+        beta = float(np.cov(cost, control)[0, 1]) / (spread / weight) if spread > 0.0 else 0.0
+        samples = cost - beta * (control - exact / weight)
+        correction = weight * difference.mean(axis=0)
+        self._share_out(correction, weight * difference, control, float(samples.mean()))
+        return correction, samples
+
+    def _guide(self, pairs: list[tuple[int, int]]) -> FloatArray:
+        """What the cuts of ``V`` say of the state after each event, against the first plan's."""
+        tau = self._tau()
+        known: dict[int, float] = {}
+        values = np.zeros(len(pairs))
+        for i, (k, w) in enumerate(pairs):
+            u = k + 1 + int(tau[w])
+            if u not in known:
+                known[u] = self.follower.guide(self.i_window, u, self.plan.states[u - 1])
+            values[i] = self.follower.guide(self.i_window, u, self.after[k, w]) - known[u]
+        return values
+
+    def _advance(
+        self,
+        level: list[tuple[int, int, FloatArray, float]],
+        depth: int,
+        draws: FloatArray,
+        difference: FloatArray,
+        tau: IntArray,
+    ) -> list[tuple[int, int, FloatArray, float]]:
+        """One plan and one failure further in every history that goes on.
+
+        The first failure after the first event is forced and weighted by its chance, later ones
+        strike by chance.
+        """
+        readings = self._plans([(u, state) for _, u, state, _ in level])
+        at, heads = [], []
+        for (i, u, _, weight), reading in zip(level, readings, strict=True):
+            difference[i] += weight * self._plan_difference(u, reading)
+            survival = self.clock.survival_from(u)
+            fails = 1.0 - survival[-1]
+            if fails <= 0.0:
+                continue
+            draw = draws[i, 2 * depth + 1]
+            if depth == 0:
+                weight, draw = weight * fails, draw * fails
+            if draw >= fails:
+                continue
+            k = u + int(np.searchsorted(1.0 - survival[1:], draw, side="right"))
+            k = min(k, self.window.series.n_period - 1)
+            shares = np.cumsum(self.clock.scenario_chance[k])
+            w = int(np.searchsorted(shares, draws[i, 2 * depth + 2] * shares[-1], side="right"))
+            w = min(w, len(shares) - 1)
+            at.append((k, w, reading.states[k - u]))
+            heads.append((i, weight))
+        further = []
+        for (k, w, _), (i, weight), solution in zip(
+            at, heads, self._event_solutions(at), strict=True
+        ):
+            difference[i] += weight * (np.asarray(solution.measured) - self.events[k, w])
+            u = k + 1 + int(tau[w])
+            if u < self.window.series.n_period:
+                further.append((i, u, solution.out_states[0], weight))
+        return further
+
+    def _share_out(
+        self, correction: FloatArray, samples: FloatArray, control: FloatArray, cost: float
+    ) -> None:
+        """Moves the cost parts so that they add up to the cost with the control variate."""
+        n_part = len(COST_PARTS)
+        gap = cost - float(correction[:n_part].sum())
+        spread = control - control.mean()
+        share = samples[:, :n_part].T @ spread
+        if abs(share.sum()) < 1e-9 * max(1.0, float(np.abs(share).sum())):
+            share = np.zeros(n_part)
+            share[0] = 1.0
+        correction[:n_part] += gap * share / share.sum()

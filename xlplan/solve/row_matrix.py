@@ -1,0 +1,52 @@
+"""A sparse matrix by rows in NumPy: the three products that cuts and checks need."""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from xlplan.model.linear_program import LinearProgram
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
+
+class RowMatrix:
+    """Rows of a program. ``value`` is a copy and may be changed, the pattern is shared.
+
+    >>> program = LinearProgram(*[np.zeros(2)] * 3, *[np.zeros(1)] * 2, np.array([0, 2]),
+    ...     np.array([0, 1]), np.array([3.0, 4.0]), np.zeros(2, bool), np.zeros(1, bool))
+    >>> RowMatrix(program).times(np.array([1.0, 10.0])).tolist()
+    [43.0]
+    """
+
+    def __init__(self, program: LinearProgram) -> None:
+        self.n_row, self.n_col = program.n_row, program.n_col
+        self.start, self.index = program.start, program.index
+        self.value = program.value.copy()
+        self._row = np.repeat(np.arange(self.n_row), np.diff(program.start))
+
+    def times(self, y: FloatArray) -> FloatArray:
+        """``A y``, (n_row,)."""
+        # Sums row by row: a running sum over all entries would lose digits.
+        return np.bincount(self._row, self.value * y[self.index], self.n_row)
+
+    def entries(self, rows: IntArray) -> IntArray:
+        """Positions of the entries of some rows, row after row."""
+        counts = self.start[rows + 1] - self.start[rows]
+        places = np.repeat(self.start[rows] - np.cumsum(counts) + counts, counts)
+        return places + np.arange(len(places))
+
+    def transposed_times(self, rows: IntArray, pi: FloatArray) -> FloatArray:
+        """``A[rows]' pi``, (n_col,), for multipliers of some rows, (len(rows),)."""
+        entries = self.entries(rows)
+        counts = self.start[rows + 1] - self.start[rows]
+        weights = self.value[entries] * np.repeat(pi, counts)
+        return np.bincount(self.index[entries], weights, self.n_col)
+
+    def take(self, rows: IntArray) -> tuple[IntArray, IntArray, FloatArray]:
+        """Some rows as start, index, value."""
+        entries = self.entries(rows)
+        counts = self.start[rows + 1] - self.start[rows]
+        start = np.concatenate([[0], np.cumsum(counts)])
+        return start, self.index[entries], self.value[entries]
