@@ -97,7 +97,7 @@ def area(width, height):
     assert not parameter_faults(ast.parse(source.replace("depth", "height")))
 
 
-@pytest.mark.parametrize("module", [*MODULES, "tests.builders", "tests.test_docs"])
+@pytest.mark.parametrize("module", [*MODULES, "tests.builders", "tests.random_studies", "tests.test_docs"])
 def test_examples_in_docstrings_run(module: str) -> None:
     assert doctest.testmod(importlib.import_module(module)).failed == 0
 

@@ -479,3 +479,16 @@ def test_voltages_of_an_island_may_float_but_not_spread() -> None:
         )
         found = kinds(audit(study, service, Dispatch(**d), is_event=True))
         assert found == (set() if is_fine else {"voltages spread beyond the band"})
+
+
+def test_two_sources_in_one_part_hold_one_voltage_only() -> None:
+    """A neighbour supply closed on the fed feeder: B cannot have the source's voltage."""
+    service = replace(normal(), supply_closed=np.array([True]))
+    found = kinds(audit(study_with_units(), service, normal_dispatch(), is_event=True))
+    assert found == {"voltage of a source"}
+
+
+def test_dead_line_carries_no_kvar() -> None:
+    dispatch = with_value(island_dispatch(), "line_kvar", (0, AB), 1.0)
+    found = kinds(audit(study_with_units(), island_at_b(), dispatch, is_event=True))
+    assert found == {"kvar of a dead line"}

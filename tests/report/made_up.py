@@ -88,8 +88,8 @@ def purchases(bought: dict[str, tuple[float, float]], rate: float) -> tuple[Purc
 
 
 def trace(title: str, n_period: int, outage: tuple[int, int] | None) -> Trace:
-    """Quarter-hours of a smooth day, with an outage between two periods."""
-    hours = np.arange(n_period) * 0.25
+    """Hours of a smooth day, with an outage between two periods."""
+    hours = np.arange(n_period) * 1.0
     load = 1500.0 + 700.0 * np.sin((hours - 8.0) / 24.0 * 2.0 * np.pi)
     store = 200.0 * np.sin((hours - 12.0) / 24.0 * 4.0 * np.pi)
     other = -0.4 * store
@@ -111,7 +111,7 @@ def trace(title: str, n_period: int, outage: tuple[int, int] | None) -> Trace:
         "GEN-B09": engine,
         "Tie to West": np.zeros(n_period),
     }
-    energy = 1500.0 - np.cumsum(store) * 0.05
+    energy = 1500.0 - np.cumsum(store) * 0.2
     return Trace(
         title=title,
         description="Invented curves.",
@@ -219,8 +219,8 @@ def made_up_plan(
         burnt_kwh=120.0,
         normal_shed_kwh=0.0,
         traces=(
-            trace("A normal day", 96, None),
-            trace("Worst outage event: line L4 in the storm window", 192, (60, 92)),
+            trace("A normal day", 24, None),
+            trace("Worst outage event: line L4 in the storm window", 48, (15, 23)),
         ),
         checks=(
             CheckLine(

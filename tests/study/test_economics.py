@@ -9,10 +9,7 @@ from xlplan.base.units import frac_from_pct
 from xlplan.study.economics import capital_recovery_factor, present_value_factor
 
 TABLE = (
-    Path(__file__).parents[2]
-    / "validation"
-    / "economics"
-    / "capital_recovery_handbook_values.csv"
+    Path(__file__).parents[2] / "validation" / "economics" / "capital_recovery_handbook_values.csv"
 )
 
 
@@ -27,7 +24,9 @@ def handbook_rows() -> list[tuple[float, float, float]]:
 
 @pytest.mark.parametrize(("rate_pct", "years", "printed"), handbook_rows())
 def test_capital_recovery_is_the_handbook_value(rate_pct, years, printed):
-    assert capital_recovery_factor(frac_from_pct(rate_pct), years) == pytest.approx(printed, abs=5e-6)
+    assert capital_recovery_factor(frac_from_pct(rate_pct), years) == pytest.approx(
+        printed, abs=5e-6
+    )
 
 
 def test_payments_repay_the_loan_year_by_year():

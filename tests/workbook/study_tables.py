@@ -104,7 +104,23 @@ TABLES: Mapping[str, tuple[tuple[str, ...], tuple[tuple[object, ...], ...]]] = {
             *("outage_class", "start_delay_minutes"),  # N, O
         ),
         (
-            ("Diesel", "B2", "dispatchable", None, 100, 200, 100, 800, 0.3, 1, 24, 10, "yes", "Unit", 5),
+            (
+                "Diesel",
+                "B2",
+                "dispatchable",
+                None,
+                100,
+                200,
+                100,
+                800,
+                0.3,
+                1,
+                24,
+                10,
+                "yes",
+                "Unit",
+                5,
+            ),
             ("Roof", "B1", "solar", "sun", 50, *[None] * 7, "no", None, None),
         ),
     ),
@@ -160,7 +176,10 @@ TABLES: Mapping[str, tuple[tuple[str, ...], tuple[tuple[object, ...], ...]]] = {
     ),
     "Alternatives": (
         ("alternative", "description", "kind", "budget", "ignores_outages"),
-        (("Half", "half the money", "optimise", 250000, "no"), ("Ours", None, "fixed", 300000, "no")),
+        (
+            ("Half", "half the money", "optimise", 250000, "no"),
+            ("Ours", None, "fixed", 300000, "no"),
+        ),
     ),
     "Fixed purchases": (
         ("alternative", "asset", "kw", "kwh", "buy"),

@@ -61,7 +61,9 @@ def test_a_plain_number_as_text_is_read_with_a_note(typed: str, number: float) -
     assert reading.findings[0].value == typed
 
 
-@pytest.mark.parametrize("typed", ["1.250,5", "1,25", "1,250", "1.250.000", "1,2500", "0,5", "-3,7"])
+@pytest.mark.parametrize(
+    "typed", ["1.250,5", "1,25", "1,250", "1.250.000", "1,2500", "0,5", "-3,7"]
+)
 def test_a_text_with_two_readings_is_a_fault(typed: str) -> None:
     reading = read(typed)
     assert reading.value is None

@@ -15,7 +15,6 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from xlplan.base.units import v_sq_drop_per_kw
 from xlplan.evaluate.audit_units import audit_generators, audit_island, audit_storage
 from xlplan.evaluate.violations import (
     TOLERANCE_V_SQ_PU,
@@ -27,6 +26,7 @@ from xlplan.evaluate.violations import (
 )
 from xlplan.model.dispatch import Dispatch
 from xlplan.network.feeder import Feeder
+from xlplan.network.linear_flow import flows_and_voltages
 from xlplan.network.tree import radial_tree
 from xlplan.outages.records import ServicePeriod
 from xlplan.study.study import LoadControl, Study
@@ -224,119 +224,81 @@ def _audit_network(
 ) -> None:
     """Balance of every connected part, ratings of its lines, voltages of its buses.
 
-    A part's flows follow from the injections by summing what lies beyond each line. Its voltages
-    are ``scale * v_root + shift`` with the root's free in an island and that of the source at
-    sources, so that each bus allows an interval of root voltages; all intervals must meet.
+    The squared voltages of a part are ``scale * v_root + shift``: what they are with the root at 0
+    is the shift, what a root at 1 adds is the scale.
     """
     live = service.line_live & service.bus_live[feeder.from_bus] & service.bus_live[feeder.to_bus]
     sources = [feeder.source] if service.source_live else []
     sources += [int(feeder.supply_bus[n]) for n in np.flatnonzero(service.supply_closed)]
     unseen = set(np.flatnonzero(service.bus_live).tolist())
-    in_tree = np.zeros(feeder.n_line, dtype=bool)
+    parts: list[list[int]] = []
+    is_walked = np.zeros(feeder.n_line, dtype=bool)
     for bus in [*sources, *range(feeder.n_bus)]:
         if bus not in unseen:
             continue
         tree = radial_tree(feeder, live, [bus])
         unseen -= set(tree.order)
         where = f"part of {feeder.bus_ids[bus]}"
-        # The feeder stays radial.
-        findings.at_most("loop", where, float(tree.has_loop), 0.0)
         # What goes in comes out: no losses within a part.
         members = list(tree.order)
         findings.equal("kW not balanced", where, injections.kw[members].sum(), 0.0)
         findings.equal("kvar not balanced", where, injections.kvar[members].sum(), 0.0)
-        beyond_kw, beyond_kvar = injections.kw.copy(), injections.kvar.copy()
-        flow_kw, flow_kvar = np.zeros(feeder.n_line), np.zeros(feeder.n_line)
-        for child in reversed(members[1:]):
-            line, parent = int(tree.parent_line[child]), int(tree.parent_bus[child])
-            sign = 1.0 if int(feeder.from_bus[line]) == parent else -1.0
-            flow_kw[line], flow_kvar[line] = -sign * beyond_kw[child], -sign * beyond_kvar[child]
-            beyond_kw[parent] += beyond_kw[child]
-            beyond_kvar[parent] += beyond_kvar[child]
-            in_tree[line] = True
-            name = feeder.line_ids[line]
+        # The feeder stays radial; flows in a loop are not settled by the injections.
+        findings.at_most("loop", where, float(tree.has_loop), 0.0)
+        if not tree.has_loop:
+            parts.append(members)
+            is_walked[tree.parent_line[members[1:]]] = True
+    drawn = (-injections.kw, -injections.kvar)
+    shift = flows_and_voltages(feeder, live, {part[0]: 0.0 for part in parts}, *drawn)
+    scale_and_shift = flows_and_voltages(feeder, live, {part[0]: 1.0 for part in parts}, *drawn)
+    scale = scale_and_shift.v_sq_pu - shift.v_sq_pu
+    for line, name in enumerate(feeder.line_ids):
+        kw, kvar = float(shift.flow_kw[line]), float(shift.flow_kvar[line])
+        if is_walked[line]:
             # Lines keep within the circle of their rating.
-            size = math.hypot(flow_kw[line], flow_kvar[line])
+            size = math.hypot(kw, kvar)
             findings.at_most("kVA above the rating", name, size, feeder.rating_kva[line])
-            findings.equal("kW reported", name, dispatch.line_kw[i, line], flow_kw[line])
-            findings.equal("kvar reported", name, dispatch.line_kvar[i, line], flow_kvar[line])
-        held = [source for source in sources if source in set(members)]
-        _audit_voltages(
-            findings, feeder, tree.parent_line, members, held, flow_kw, flow_kvar, band_pu
-        )
-        _compare_voltages(
-            findings, feeder, tree.parent_line, members, held, flow_kw, flow_kvar, dispatch, i
-        )
-    for line in np.flatnonzero(~in_tree).tolist():
-        # A line that is open, dead or cut off carries nothing.
-        findings.equal("kW of a dead line", feeder.line_ids[line], dispatch.line_kw[i, line], 0.0)
-
-
-def _affine_voltages(
-    feeder: Feeder,
-    parent_line: IntArray,
-    members: list[int],
-    flow_kw: FloatArray,
-    flow_kvar: FloatArray,
-) -> tuple[FloatArray, FloatArray]:
-    """(scale, shift) of each bus: squared voltage = scale * that of the root + shift."""
-    scale, shift = np.ones(feeder.n_bus), np.zeros(feeder.n_bus)
-    for bus in members[1:]:
-        line = int(parent_line[bus])
-        drop = flow_kw[line] * v_sq_drop_per_kw(float(feeder.r_ohm[line]), feeder.base_kv)
-        drop += flow_kvar[line] * v_sq_drop_per_kw(float(feeder.x_ohm[line]), feeder.base_kv)
-        boost = (1.0 + float(feeder.boost_frac[line])) ** 2
-        i, j = int(feeder.from_bus[line]), int(feeder.to_bus[line])
-        if j == bus:  # v_j = boost * v_i - drop
-            scale[bus], shift[bus] = boost * scale[i], boost * shift[i] - drop
-        else:  # v_i = (v_j + drop) / boost
-            scale[bus], shift[bus] = scale[j] / boost, (shift[j] + drop) / boost
-    return scale, shift
+            findings.equal("kW reported", name, dispatch.line_kw[i, line], kw)
+            findings.equal("kvar reported", name, dispatch.line_kvar[i, line], kvar)
+        elif not live[line]:
+            # A line that is open or dead carries nothing.
+            findings.equal("kW of a dead line", name, dispatch.line_kw[i, line], 0.0)
+            findings.equal("kvar of a dead line", name, dispatch.line_kvar[i, line], 0.0)
+    for members in parts:
+        held = [source for source in sources if source in members]
+        reported = dispatch.v_sq_pu[i]
+        _audit_voltages(findings, feeder, members, held, scale, shift.v_sq_pu, reported, band_pu)
 
 
 def _audit_voltages(
     findings: Findings,
     feeder: Feeder,
-    parent_line: IntArray,
     members: list[int],
     held: list[int],
-    flow_kw: FloatArray,
-    flow_kvar: FloatArray,
+    scale: FloatArray,
+    shift: FloatArray,
+    reported: FloatArray,
     band_pu: tuple[float, float],
 ) -> None:
-    """Voltages within the band for some voltage of the root, that of the source where held."""
-    scale, shift = _affine_voltages(feeder, parent_line, members, flow_kw, flow_kvar)
+    """Voltages of one part within the band, and reported as they follow from the injections.
+
+    Sources hold theirs. An island's root is free: each bus allows an interval of root voltages, and
+    all intervals must meet.
+    """
     low, high = band_pu[0] ** 2, band_pu[1] ** 2
-    if held:
-        root = feeder.source_v_sq_pu
-        for bus in members:
-            name, v_sq = feeder.bus_ids[bus], scale[bus] * root + shift[bus]
+    root = feeder.source_v_sq_pu if held else float(reported[members[0]])
+    for bus in members:
+        name, v_sq = feeder.bus_ids[bus], float(scale[bus] * root + shift[bus])
+        findings.equal("voltage reported", name, reported[bus], v_sq, TOLERANCE_V_SQ_PU)
+        if held:
             findings.at_least("voltage below the band", name, v_sq, low, TOLERANCE_V_SQ_PU)
             findings.at_most("voltage above the band", name, v_sq, high, TOLERANCE_V_SQ_PU)
-            if bus in held:
-                findings.equal("voltage of a source", name, v_sq, root, TOLERANCE_V_SQ_PU)
-        return
-    lowest = max((low - shift[bus]) / scale[bus] for bus in members)
-    highest = min((high - shift[bus]) / scale[bus] for bus in members)
-    where = "island of " + feeder.bus_ids[members[0]]
-    findings.at_most("voltages spread beyond the band", where, lowest, highest, TOLERANCE_V_SQ_PU)
-
-
-def _compare_voltages(
-    findings: Findings,
-    feeder: Feeder,
-    parent_line: IntArray,
-    members: list[int],
-    held: list[int],
-    flow_kw: FloatArray,
-    flow_kvar: FloatArray,
-    dispatch: Dispatch,
-    i: int,
-) -> None:
-    """Reported voltages are those that follow from the injections."""
-    scale, shift = _affine_voltages(feeder, parent_line, members, flow_kw, flow_kvar)
-    root = feeder.source_v_sq_pu if held else float(dispatch.v_sq_pu[i, members[0]])
-    for bus in members:
-        v_sq = scale[bus] * root + shift[bus]
-        reported = float(dispatch.v_sq_pu[i, bus])
-        findings.equal("voltage reported", feeder.bus_ids[bus], reported, v_sq, TOLERANCE_V_SQ_PU)
+        if bus in held:
+            findings.equal("voltage of a source", name, v_sq, root, TOLERANCE_V_SQ_PU)
+    if not held:
+        lowest = max((low - shift[bus]) / scale[bus] for bus in members)
+        highest = min((high - shift[bus]) / scale[bus] for bus in members)
+        where = "island of " + feeder.bus_ids[members[0]]
+        findings.at_most(
+            "voltages spread beyond the band", where, lowest, highest, TOLERANCE_V_SQ_PU
+        )

@@ -17,7 +17,7 @@ the base, with the cuts of ``V`` as control variate; on small trees every histor
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Protocol
 
 import numpy as np
@@ -217,7 +217,8 @@ class Follower:
         layout = self.graph.layout
         slots = Slots(len(self.graph.models[0].study.loads))
         hardened = capacity[layout.hardening(0) : layout.hardening(0) + layout.n_measure]
-        clock = window.clock.thinned(avoided_shares(window, hardened))
+        avoided = avoided_shares(window, hardened)
+        clock = window.clock.thinned(avoided)
         plan = plan_solution.measured
         assert isinstance(plan, PlanReading)
         n_period, n_scenario = window.series.n_period, len(window.scenarios)
@@ -236,9 +237,18 @@ class Follower:
             after[k, w] = solution.out_states[0]
             solver_event_cost += float(first[k, w]) * solution.cost
         in_service, count = clock.occupancy()
-        base = in_service @ plan.metrics + np.tensordot(count, events, axes=2)
+        base = expected_metrics(clock, plan.metrics, events)
+        charged = self.graph.models[0].study.settings.demand_charge_per_kw_year > 0.0
+        if avoided.any() and charged and window.series.counts_for_demand:
+            # Only the first plan is held to the demand limit: after an avoided failure the model
+            # plans anew without it, so that moment counts as an event that lasts no time.
+            arrivals = _with_avoided(window.clock, avoided)
+            events_seen = np.concatenate([events, np.zeros((n_period, 1, slots.n_slot))], axis=1)
+            after_seen = np.concatenate([after, plan.states[:, None, :]], axis=1)
+        else:
+            arrivals, events_seen, after_seen = clock, events, after
         history = _History(
-            self, i_window, window, clock, plan, events, after, first, capacity, slots
+            self, i_window, window, arrivals, plan, events_seen, after_seen, capacity, slots
         )
         if enumerates:
             correction, samples = history.enumerate(), np.zeros(0)
@@ -264,6 +274,29 @@ class Follower:
         )
 
 
+def expected_metrics(clock: Clock, plan: FloatArray, events: FloatArray) -> FloatArray:
+    """Expected metrics of one occurrence if every plan and event is like those of the first plan.
+
+    Parameters
+    ----------
+    clock : Clock of real failures
+    plan : array, shape (n_period + 1, n_slot), by period, then the end of the window
+    events : array, shape (n_period, n_scenario, n_slot)
+
+    Returns
+    -------
+    array, shape (n_slot,)
+    """
+    in_service, count = clock.occupancy()
+    reached = in_service.copy()
+    # An event that comes back just at the end has the end of the window in it already.
+    for w, tau in enumerate(clock.event_periods):
+        if tau < clock.n_period:
+            reached[-1] -= count[clock.n_period - 1 - tau, w]
+    total: FloatArray = reached @ plan + np.tensordot(count, events, axes=2)
+    return total
+
+
 def avoided_shares(window: WindowModel, hardened: FloatArray) -> FloatArray:
     """Share of each scenario's failures that the measures bought avoid, (n_scenario,)."""
     return np.array(
@@ -271,6 +304,21 @@ def avoided_shares(window: WindowModel, hardened: FloatArray) -> FloatArray:
             max((share for m, share in scenario.hardening if hardened[m] > 0.5), default=0.0)
             for scenario in window.scenarios
         ]
+    )
+
+
+def _with_avoided(clock: Clock, avoided: FloatArray) -> Clock:
+    """Potential failures with the avoided ones as one more scenario, of no length."""
+    real = clock.scenario_chance * (1.0 - avoided)
+    nothing = (clock.scenario_chance * avoided).sum(axis=1, keepdims=True)
+    rate = clock.rate_per_year
+    return replace(
+        clock,
+        rate_per_year=np.hstack(
+            [rate * (1.0 - avoided), (rate * avoided).sum(axis=1, keepdims=True)]
+        ),
+        scenario_chance=np.hstack([real, nothing]),
+        event_periods=np.append(clock.event_periods, 0),
     )
 
 
@@ -302,12 +350,24 @@ class _History:
     plan: PlanReading
     events: FloatArray
     after: FloatArray
-    first: FloatArray
     capacity: FloatArray
     slots: Slots
 
-    def _tau(self) -> IntArray:
-        return np.array([s.n_period for s in self.window.scenarios], dtype=np.int64)
+    @property
+    def first(self) -> FloatArray:
+        """Chance of each first arrival, (n_period, n_scenario)."""
+        clock = self.clock
+        return clock.survival[:-1, None] * clock.failure_chance[:, None] * clock.scenario_chance
+
+    def _back(self, k: int, w: int) -> int | None:
+        """Period from which the rest of the window is planned after an event; None if none is.
+
+        After an avoided failure in the last period only the end of the window is left; after a
+        real event that reaches the end, the event has it in itself.
+        """
+        u = k + 1 + int(self.clock.event_periods[w])
+        last = self.window.series.n_period - (w < len(self.window.scenarios))
+        return u if u <= last else None
 
     def _plans(self, at: list[tuple[int, FloatArray]]) -> list[PlanReading]:
         follower = self.follower
@@ -325,22 +385,37 @@ class _History:
         """Expected metrics of the plan from ``u`` until a failure, less those of the first plan."""
         return self.clock.survival_from(u) @ (reading.metrics - self.plan.metrics[u:])
 
-    def _event_solutions(self, at: list[tuple[int, int, FloatArray]]) -> list[NodeSolution]:
-        follower = self.follower
+    def _after_events(
+        self, at: list[tuple[int, int, FloatArray]]
+    ) -> list[tuple[FloatArray, FloatArray]]:
+        """Metrics of events less those of the first plan's, and the state after each.
+
+        An avoided failure (beyond the last scenario) changes nothing.
+        """
+        follower, n_scenario = self.follower, len(self.window.scenarios)
+        real = [(k, w, state) for k, w, state in at if w < n_scenario]
         requests = [
             follower.event_request(self.i_window, w, k, state, self.capacity)
-            for k, w, state in at
+            for k, w, state in real
         ]
-        return follower.service.solve_nodes(requests, read_solution)
+        solutions = iter(follower.service.solve_nodes(requests, read_solution))
+        found = []
+        for k, w, state in at:
+            if w >= n_scenario:
+                found.append((np.zeros(self.slots.n_slot), state))
+            else:
+                solution = next(solutions)
+                difference = np.asarray(solution.measured) - self.events[k, w]
+                found.append((difference, solution.out_states[0]))
+        return found
 
     def enumerate(self) -> FloatArray:
         """Exact correction, (n_slot,)."""
         total = np.zeros(self.slots.n_slot)
-        tau, n_period = self._tau(), self.window.series.n_period
         level = [
-            (int(k + 1 + tau[w]), self.after[k, w], float(self.first[k, w]))
+            (u, self.after[k, w], float(self.first[k, w]))
             for k, w in np.argwhere(self.first > 0.0)
-            if k + 1 + tau[w] < n_period
+            if (u := self._back(int(k), int(w))) is not None
         ]
         while level:
             readings = self._plans([(u, state) for u, state, _ in level])
@@ -351,22 +426,22 @@ class _History:
                 for i, w in np.argwhere(chance > 0.0):
                     at.append((u + int(i), int(w), reading.states[i]))
                     weights.append(weight * float(chance[i, w]))
-            solutions = self._event_solutions(at)
             level = []
-            for (k, w, _), weight, solution in zip(at, weights, solutions, strict=True):
-                total += weight * (np.asarray(solution.measured) - self.events[k, w])
-                if k + 1 + tau[w] < n_period:
-                    level.append((int(k + 1 + tau[w]), solution.out_states[0], weight))
+            for (k, w, _), weight, (difference, state) in zip(
+                at, weights, self._after_events(at), strict=True
+            ):
+                total += weight * difference
+                if (back := self._back(k, w)) is not None:
+                    level.append((back, state, weight))
         return total
 
     def sample(self, n_sample: int, seed: int) -> tuple[FloatArray, FloatArray]:
         """Correction by random histories, and the cost correction of each."""
-        tau, n_period = self._tau(), self.window.series.n_period
         # Scenario by scenario, so that equal steps through the list reach each in proportion.
         pairs = [
             (int(k), int(w))
             for w, k in np.argwhere(self.first.T > 0.0)
-            if k + 1 + tau[w] < n_period
+            if self._back(int(k), int(w)) is not None
         ]
         if not pairs or n_sample < 1:
             return np.zeros(self.slots.n_slot), np.zeros(0)
@@ -379,12 +454,14 @@ class _History:
         level = []
         for i, pair in enumerate(chosen):
             k, w = pairs[pair]
-            level.append((i, k + 1 + int(tau[w]), self.after[k, w], 1.0))
+            u = self._back(k, w)
+            assert u is not None
+            level.append((i, u, self.after[k, w], 1.0))
         guide = self._guide(pairs)
         for depth in range(MOST_FAILURES):
             if not level:
                 break
-            level = self._advance(level, depth, draws, difference, tau)
+            level = self._advance(level, depth, draws, difference)
         weight = float(chance.sum())
         control = guide[chosen]
         exact = float(chance @ guide)
@@ -399,11 +476,11 @@ class _History:
 
     def _guide(self, pairs: list[tuple[int, int]]) -> FloatArray:
         """What the cuts of ``V`` say of the state after each event, against the first plan's."""
-        tau = self._tau()
         known: dict[int, float] = {}
         values = np.zeros(len(pairs))
         for i, (k, w) in enumerate(pairs):
-            u = k + 1 + int(tau[w])
+            u = self._back(k, w)
+            assert u is not None
             if u not in known:
                 known[u] = self.follower.guide(self.i_window, u, self.plan.states[u - 1])
             values[i] = self.follower.guide(self.i_window, u, self.after[k, w]) - known[u]
@@ -415,7 +492,6 @@ class _History:
         depth: int,
         draws: FloatArray,
         difference: FloatArray,
-        tau: IntArray,
     ) -> list[tuple[int, int, FloatArray, float]]:
         """One plan and one failure further in every history that goes on.
 
@@ -443,13 +519,13 @@ class _History:
             at.append((k, w, reading.states[k - u]))
             heads.append((i, weight))
         further = []
-        for (k, w, _), (i, weight), solution in zip(
-            at, heads, self._event_solutions(at), strict=True
+        for (k, w, _), (i, weight), (extra, state) in zip(
+            at, heads, self._after_events(at), strict=True
         ):
-            difference[i] += weight * (np.asarray(solution.measured) - self.events[k, w])
-            u = k + 1 + int(tau[w])
-            if u < self.window.series.n_period:
-                further.append((i, u, solution.out_states[0], weight))
+            difference[i] += weight * extra
+            u = self._back(k, w)
+            if u is not None:
+                further.append((i, u, state, weight))
         return further
 
     def _share_out(

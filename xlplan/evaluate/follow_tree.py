@@ -7,7 +7,12 @@ from collections.abc import Sequence
 import numpy as np
 from numpy.typing import NDArray
 
-from xlplan.evaluate.follow_plan import FollowResult, WindowFollow, avoided_shares
+from xlplan.evaluate.follow_plan import (
+    FollowResult,
+    WindowFollow,
+    avoided_shares,
+    expected_metrics,
+)
 from xlplan.evaluate.meters import PlanReading
 from xlplan.evaluate.metrics import (
     Slots,
@@ -114,7 +119,7 @@ def _window(
     plan = PlanReading(np.vstack([readings[root], end]), np.zeros((n_period, 0)))
     first = clock.survival[:-1, None] * clock.failure_chance[:, None] * clock.scenario_chance
     in_service, count = clock.occupancy()
-    base = in_service @ plan.metrics + np.tensordot(count, events, axes=2)
+    base = expected_metrics(clock, plan.metrics, events)
     return WindowFollow(
         clock=clock,
         plan=plan,

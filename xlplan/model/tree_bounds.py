@@ -125,15 +125,19 @@ def _most_sold(study: Study, window: WindowModel) -> FloatArray:
     units = np.array([unit.existing_kw + unit.max_new_kw for unit in study.generators])
     stores = sum(unit.existing_kw + unit.max_new_kw for unit in study.storage)
     kw = np.minimum(series.availability @ units + stores, study.settings.substation_limit_kva)
-    return series.export_price_per_kwh * series.period_h * kw
+    sale: FloatArray = series.export_price_per_kwh * series.period_h * kw
+    return sale
 
 
 def _normal_shed_cost(study: Study, window: WindowModel) -> FloatArray:
     """Cost of shedding everything in normal service, by period."""
     class_of = {record.customer_class: record for record in study.customer_classes}
-    price = np.array([normal_service_price_per_kwh(class_of[load.customer_class]) for load in study.loads])
+    price = np.array(
+        [normal_service_price_per_kwh(class_of[load.customer_class]) for load in study.loads]
+    )
     sold_kw = window.series.load_kw / (1.0 + study.settings.loss_allowance_frac)
-    return sold_kw @ price * window.series.period_h
+    cost: FloatArray = sold_kw @ price * window.series.period_h
+    return cost
 
 
 def _largest_end_cost(study: Study, window: WindowModel) -> float:

@@ -7,90 +7,23 @@ this module, in ``subproblem.py`` and what that uses; agreement of the two is a 
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
 from math import cos, pi, sin
 
 import pulp
+from pulp import LpAffineExpression as Expression
 
 from xlplan.base.units import v_sq_drop_per_kw
+from xlplan.model.tree_columns import Case, OperatedPeriod, PlantState, idle_period
 from xlplan.model.tree_purchases import Capacity
 from xlplan.network.feeder import Feeder
 from xlplan.outages.damage import normal_service_price_per_kwh, price_per_kwh
-from xlplan.outages.records import Island, ServicePeriod
+from xlplan.outages.records import Island
 from xlplan.outages.sections import build_sections
 from xlplan.study.study import LoadControl, Study, Technology
 from xlplan.study.windows import WindowSeries
 
-Expression = pulp.LpAffineExpression
-
 N_SIDE = 12
 """Sides of the polygon inside the circle of a rating; its corners lie on the axes."""
-
-
-@dataclass(frozen=True)
-class PlantState:
-    """What one period hands to the next.
-
-    ``generator_kw``: previous output, None where free (start of a window), 0 where it was dead.
-    ``fuel_kwh``: None where there is no tank.
-    """
-
-    energy_kwh: tuple[Expression, ...]
-    generator_kw: tuple[Expression | None, ...]
-    fuel_kwh: tuple[Expression | None, ...]
-
-
-@dataclass(frozen=True)
-class Case:
-    """Which period: a unique name for its columns, the row of the window it reads, service."""
-
-    name: str
-    row: int
-    service: ServicePeriod
-    is_event: bool
-
-
-def nothing(n_item: int) -> list[Expression]:
-    """Zeros, one per asset: stays so for what cannot run."""
-    return [Expression() for _ in range(n_item)]
-
-
-@dataclass
-class OperatedPeriod:
-    """Columns of one period, one expression per asset (0 where it cannot run), and its cost.
-
-    The names are those of ``dispatch.Dispatch``. ``fuel_kwh`` and ``v_sq_pu`` are None where there
-    is no tank and where the bus is dead. ``cost`` leaves out what is charged per event.
-    """
-
-    import_kw: Expression
-    export_kw: Expression
-    source_kvar: Expression
-    supply_kw: list[Expression]
-    supply_kvar: list[Expression]
-    generator_kw: list[Expression]
-    generator_kvar: list[Expression]
-    storage_kw: list[Expression]
-    storage_draw_kw: list[Expression]
-    storage_kvar: list[Expression]
-    energy_kwh: list[Expression]
-    fuel_kwh: list[Expression | None]
-    trip_kw: list[Expression]
-    shed_kw: list[Expression]
-    surplus_kw: list[Expression]
-    capacitor_kvar: list[Expression]
-    line_kw: list[Expression]
-    line_kvar: list[Expression]
-    v_sq_pu: list[Expression | None]
-    cost: Expression = field(default_factory=Expression)
-
-    def state(self) -> PlantState:
-        """State at the end of the period; a unit that stood still has a previous output of 0."""
-        return PlantState(
-            energy_kwh=tuple(self.energy_kwh),
-            generator_kw=tuple(self.generator_kw),
-            fuel_kwh=tuple(self.fuel_kwh),
-        )
 
 
 class PeriodEquations:
@@ -124,9 +57,7 @@ class PeriodEquations:
         """Stores at their start charge, tanks full, previous output free."""
         soc = self.start_soc_frac
         return PlantState(
-            energy_kwh=tuple(
-                soc[i] * kwh for i, kwh in enumerate(self.capacity.storage_kwh)
-            ),
+            energy_kwh=tuple(soc[i] * kwh for i, kwh in enumerate(self.capacity.storage_kwh)),
             generator_kw=tuple(None for _ in self.study.generators),
             fuel_kwh=tuple(self._tank_kwh(i) for i in range(len(self.study.generators))),
         )
@@ -143,7 +74,7 @@ class PeriodEquations:
         -------
         OperatedPeriod
         """
-        period = self._idle_period(before)
+        period = idle_period(self.study, self.feeder, before)
         self._add_source(case, period)
         self._add_supplies(case, period)
         for i in range(len(self.study.generators)):
@@ -236,9 +167,7 @@ class PeriodEquations:
             refill_kwh = unit.refill_frac_per_h * self.series.period_h * tank_kwh
             self._row(fuel <= fuel_before - burnt_kwh + refill_kwh, f"fuel_{name}")
 
-    def _add_storage(
-        self, case: Case, period: OperatedPeriod, before: PlantState, i: int
-    ) -> None:
+    def _add_storage(self, case: Case, period: OperatedPeriod, before: PlantState, i: int) -> None:
         """Charge and discharge of one store under its loss curve."""
         unit, name = self.study.storage[i], f"storage_{i}_{case.name}"
         kw, kwh = self.capacity.storage_kw[i], self.capacity.storage_kwh[i]
@@ -255,9 +184,7 @@ class PeriodEquations:
         self._row(draw <= unit.curve[-1][0] * kw, f"most_draw_{name}")
         for j, (slope, share) in enumerate(unit.edges):
             self._row(terminal <= slope * draw + share * kw, f"curve_{j}_{name}")
-        self._row(
-            energy == before.energy_kwh[i] - self.series.period_h * draw, f"energy_{name}"
-        )
+        self._row(energy == before.energy_kwh[i] - self.series.period_h * draw, f"energy_{name}")
         self._row(energy >= unit.min_soc_frac * kwh, f"lowest_charge_{name}")
         self._row(energy <= kwh, f"full_{name}")
 
@@ -377,9 +304,7 @@ class PeriodEquations:
                 elif bus in island.buses:
                     following_output.append(output[i])
         rated_kw = pulp.lpSum(forming_kw)
-        self._row(
-            pulp.lpSum(following_output) <= settings.island_ratio * rated_kw, f"ratio_{name}"
-        )
+        self._row(pulp.lpSum(following_output) <= settings.island_ratio * rated_kw, f"ratio_{name}")
         served = pulp.lpSum(
             self.load_kw[case.row][i] - period.shed_kw[i]
             for i, bus in enumerate(self.feeder.load_bus)
@@ -409,32 +334,6 @@ class PeriodEquations:
 
     # ---- small parts ------------------------------------------------------------------------
 
-    def _idle_period(self, before: PlantState) -> OperatedPeriod:
-        """Everything at 0, before the rules add columns."""
-        n_generator, n_storage = len(self.study.generators), len(self.study.storage)
-        n_supply, n_bus = len(self.study.supplies), self.feeder.n_bus
-        return OperatedPeriod(
-            import_kw=Expression(),
-            export_kw=Expression(),
-            source_kvar=Expression(),
-            supply_kw=nothing(n_supply),
-            supply_kvar=nothing(n_supply),
-            generator_kw=nothing(n_generator),
-            generator_kvar=nothing(n_generator),
-            storage_kw=nothing(n_storage),
-            storage_draw_kw=nothing(n_storage),
-            storage_kvar=nothing(n_storage),
-            energy_kwh=list(before.energy_kwh),
-            fuel_kwh=list(before.fuel_kwh),
-            trip_kw=nothing(n_generator),
-            shed_kw=nothing(len(self.study.loads)),
-            surplus_kw=nothing(n_bus),
-            capacitor_kvar=nothing(n_bus),
-            line_kw=nothing(self.feeder.n_line),
-            line_kvar=nothing(self.feeder.n_line),
-            v_sq_pu=[None] * n_bus,
-        )
-
     def _source_feeds(self, case: Case) -> bool:
         """Whether the source is live, and its bus."""
         return bool(case.service.source_live and case.service.bus_live[self.feeder.source])
@@ -459,10 +358,8 @@ class PeriodEquations:
             )
 
     def _column(self, name: str, low: float | None = None, high: float | None = None) -> Expression:
-        """A new column; registered at once so that it has a value even if no row uses it."""
-        variable = pulp.LpVariable(name, low, high)
-        self.problem.addVariable(variable)
-        return Expression(variable)
+        """A new column."""
+        return Expression(self.problem.add_variable(name, low, high))
 
     def _row(self, constraint: pulp.LpConstraint, name: str) -> None:
         """A new row."""

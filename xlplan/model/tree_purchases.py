@@ -9,12 +9,11 @@ from dataclasses import dataclass
 
 import numpy as np
 import pulp
+from pulp import LpAffineExpression as Expression
 
 from xlplan.model.dispatch import FloatArray, Purchases
 from xlplan.study.economics import capital_recovery_factor
 from xlplan.study.study import Generator, Storage, Study
-
-Expression = pulp.LpAffineExpression
 
 
 @dataclass(frozen=True)
@@ -46,13 +45,30 @@ class PurchaseColumns:
             storage_kw=_values(self.storage_kw),
             storage_kwh=_values(self.storage_kwh),
             is_hardened=_values(self.hardened) > 0.5,
-            demand_kw=max(0.0, float(pulp.value(self.demand_kw))),
+            demand_kw=max(0.0, value_of(Expression(self.demand_kw))),
         )
+
+
+def value_of(expression: Expression) -> float:
+    """Value after solving.
+
+    A column that no row and no cost uses never reaches the solver: any value within its bounds
+    will do, so it takes the one nearest to 0.
+    """
+    total = float(expression.constant)
+    for variable, coefficient in expression.items():
+        value = variable.varValue
+        if value is None:
+            low = float("-inf") if variable.lowBound is None else variable.lowBound
+            high = float("inf") if variable.upBound is None else variable.upBound
+            value = min(max(0.0, low), high)
+        total += coefficient * value
+    return total
 
 
 def _values(expressions: tuple[Expression, ...]) -> FloatArray:
     """Values of expressions, not below 0."""
-    return np.array([max(0.0, pulp.value(item)) for item in expressions], dtype=float)
+    return np.array([max(0.0, value_of(item)) for item in expressions], dtype=float)
 
 
 def add_purchases(problem: pulp.LpProblem, study: Study) -> PurchaseColumns:
@@ -78,7 +94,7 @@ def add_purchases(problem: pulp.LpProblem, study: Study) -> PurchaseColumns:
         bought.yearly.append(unit.fixed_om_per_kw * kw)
     for i, store in enumerate(study.storage):
         kw = _power(problem, store, f"storage_{i}")
-        kwh = Expression(pulp.LpVariable(f"storage_{i}_new_kwh", 0, store.max_new_kwh))
+        kwh = Expression(problem.add_variable(f"storage_{i}_new_kwh", 0, store.max_new_kwh))
         limits = {"kw": (kw, store.max_new_kw), "kwh": (kwh, store.max_new_kwh)}
         site = _site(problem, store, f"storage_{i}", limits)
         if store.longest_h is not None:
@@ -91,22 +107,23 @@ def add_purchases(problem: pulp.LpProblem, study: Study) -> PurchaseColumns:
         )
         bought.yearly.append(store.fixed_om_per_kw * kw)
     for i, measure in enumerate(study.measures):
-        h = Expression(pulp.LpVariable(f"hardened_{i}", cat=pulp.LpBinary))
+        h = Expression(problem.add_variable(f"hardened_{i}", cat=pulp.LpBinary))
         bought.hardened.append(h)
         bought.add_cost(measure.capital_cost * h, measure.grant_frac, rate, measure.life_years)
         bought.yearly.append(measure.fixed_om * h)
     _add_exclusive_measures(problem, study, bought.hardened)
-    columns = bought.columns(study)
+    columns = bought.columns(problem, study)
     if study.settings.capital_budget is not None:
         problem += columns.capital <= study.settings.capital_budget, "budget"
     return columns
 
 
-def fix_purchases(study: Study, fixed: Purchases) -> PurchaseColumns:
+def fix_purchases(problem: pulp.LpProblem, study: Study, fixed: Purchases) -> PurchaseColumns:
     """The same columns where ``x`` is given; only ``D`` is left to decide.
 
     Parameters
     ----------
+    problem : LpProblem, gets the column of ``D``
     study : Study
     fixed : Purchases; a site is paid for where anything is bought on it
 
@@ -133,7 +150,7 @@ def fix_purchases(study: Study, fixed: Purchases) -> PurchaseColumns:
         bought.hardened.append(h)
         bought.add_cost(measure.capital_cost * h, measure.grant_frac, rate, measure.life_years)
         bought.yearly.append(measure.fixed_om * h)
-    return bought.columns(study)
+    return bought.columns(problem, study)
 
 
 class _Bought:
@@ -155,15 +172,17 @@ class _Bought:
         self.capital.append(net)
         self.yearly.append(capital_recovery_factor(rate_frac, life_years) * net)
 
-    def columns(self, study: Study) -> PurchaseColumns:
+    def columns(self, problem: pulp.LpProblem, study: Study) -> PurchaseColumns:
         """Frozen, with existing capacity added to what is new."""
         capacity = Capacity(
-            tuple(u.existing_kw + x for u, x in zip(study.generators, self.generator_kw)),
-            tuple(u.existing_kw + x for u, x in zip(study.storage, self.storage_kw)),
-            tuple(u.existing_kwh + x for u, x in zip(study.storage, self.storage_kwh)),
+            tuple(
+                u.existing_kw + x for u, x in zip(study.generators, self.generator_kw, strict=True)
+            ),
+            tuple(u.existing_kw + x for u, x in zip(study.storage, self.storage_kw, strict=True)),
+            tuple(u.existing_kwh + x for u, x in zip(study.storage, self.storage_kwh, strict=True)),
         )
         # Imports cannot exceed the substation limit, so neither need D.
-        demand_kw = pulp.LpVariable("demand_kw", 0, study.settings.substation_limit_kva)
+        demand_kw = problem.add_variable("demand_kw", 0, study.settings.substation_limit_kva)
         return PurchaseColumns(
             generator_kw=tuple(self.generator_kw),
             storage_kw=tuple(self.storage_kw),
@@ -178,9 +197,9 @@ class _Bought:
 
 def _power(problem: pulp.LpProblem, unit: Generator | Storage, name: str) -> Expression:
     """New kW of one unit, in whole steps where it comes in steps."""
-    kw = pulp.LpVariable(f"{name}_new_kw", 0, unit.max_new_kw)
+    kw = problem.add_variable(f"{name}_new_kw", 0, unit.max_new_kw)
     if unit.step_kw is not None:
-        n_step = pulp.LpVariable(f"{name}_steps", 0, cat=pulp.LpInteger)
+        n_step = problem.add_variable(f"{name}_steps", 0, cat=pulp.LpInteger)
         problem += kw == unit.step_kw * n_step, f"{name}_in_steps"
     return Expression(kw)
 
@@ -194,7 +213,7 @@ def _site(
     """1 where anything is bought on a site that costs money; 0 without a column elsewhere."""
     if unit.capital_site_cost <= 0:
         return Expression()
-    is_used = pulp.LpVariable(f"{name}_site", cat=pulp.LpBinary)
+    is_used = problem.add_variable(f"{name}_site", cat=pulp.LpBinary)
     for what, (amount, most) in limits.items():
         problem += amount <= most * is_used, f"{name}_site_{what}"
     return Expression(is_used)
@@ -205,8 +224,6 @@ def _add_exclusive_measures(
 ) -> None:
     """At most one measure on each line."""
     for line in study.lines:
-        on_line = [
-            h for m, h in zip(study.measures, hardened, strict=True) if line.line in m.lines
-        ]
+        on_line = [h for m, h in zip(study.measures, hardened, strict=True) if line.line in m.lines]
         if len(on_line) > 1:
             problem += pulp.lpSum(on_line) <= 1, f"one_measure_on_{line.line}"

@@ -5,10 +5,11 @@ from __future__ import annotations
 from dataclasses import fields
 
 import numpy as np
-import pulp
+from pulp import LpAffineExpression as Expression
 
 from xlplan.model.dispatch import BoolArray, Dispatch, FloatArray, TreeSegment
-from xlplan.model.tree_period import OperatedPeriod
+from xlplan.model.tree_columns import OperatedPeriod
+from xlplan.model.tree_purchases import value_of
 from xlplan.model.whole_tree import Gate, TreeNode, WholeTree
 
 
@@ -63,13 +64,11 @@ def read_dispatch(periods: list[OperatedPeriod]) -> Dispatch:
     return Dispatch(**columns)
 
 
-def _value(expression: pulp.LpAffineExpression | None) -> float:
+def _value(expression: Expression | None) -> float:
     """Value of an expression; nan where there is none."""
-    return float("nan") if expression is None else float(expression.value())
+    return float("nan") if expression is None else value_of(expression)
 
 
 def _hold(gates: tuple[Gate, ...], is_hardened: BoolArray) -> bool:
     """Whether the measures bought are such that a branch with these gates is followed."""
-    return all(
-        any(is_hardened[i] for i in gate.measures) == gate.is_avoided for gate in gates
-    )
+    return all(any(is_hardened[i] for i in gate.measures) == gate.is_avoided for gate in gates)

@@ -12,6 +12,12 @@ from dataclasses import dataclass
 
 from xlplan.outages.records import Scenario
 from xlplan.outages.window_model import WindowModel
+from xlplan.study.study import Study
+
+MAX_COLUMNS = 50_000
+"""Most columns for which the whole tree is chosen by itself. Built through PuLP at that size the
+tree takes some seconds and one linear program some ten; with measures or sites the integer search
+solves several, and it grows fast from there (measured on one core)."""
 
 SMALLEST_SHARE = 1e-12
 """Shares of failures below this are rounding of differences like ``1 - 0.7 - 0.3``."""
@@ -25,9 +31,7 @@ class TreeSize:
     n_period_copies: int
 
     def __add__(self, other: TreeSize) -> TreeSize:
-        return TreeSize(
-            self.n_node + other.n_node, self.n_period_copies + other.n_period_copies
-        )
+        return TreeSize(self.n_node + other.n_node, self.n_period_copies + other.n_period_copies)
 
 
 NOTHING = TreeSize(0, 0)
@@ -83,6 +87,57 @@ def count_nodes(windows: Sequence[WindowModel]) -> TreeSize:
     for window in windows:
         total += count_window(window)
     return total
+
+
+@dataclass(frozen=True)
+class TreeFit:
+    """Whether the whole tree is small enough to be chosen by itself, and why, in words."""
+
+    size: TreeSize
+    n_column: int
+    fits: bool
+    reason: str
+
+
+def judge_size(study: Study, windows: Sequence[WindowModel]) -> TreeFit:
+    """Size of the whole tree against what can be solved at once.
+
+    Parameters
+    ----------
+    study : Study
+    windows : WindowModel of each window
+
+    Returns
+    -------
+    TreeFit
+    """
+    size = count_nodes(windows)
+    n_column = size.n_period_copies * columns_per_period(study)
+    counted = f"{_in_words(size.n_node)} nodes and about {_in_words(n_column)} columns"
+    if n_column <= MAX_COLUMNS:
+        reason = f"the whole tree is small: {counted} (limit {MAX_COLUMNS:,})"
+    else:
+        reason = f"the whole tree is too large: {counted} (limit {MAX_COLUMNS:,})"
+    return TreeFit(size, n_column, n_column <= MAX_COLUMNS, reason)
+
+
+def columns_per_period(study: Study) -> int:
+    """Columns of one period with everything live: the most that a period copy adds."""
+    return (
+        3
+        + 2 * len(study.buses)
+        + sum(bus.capacitor_kvar > 0 for bus in study.buses)
+        + 2 * len(study.lines)
+        + 2 * len(study.loads)
+        + 2 * len(study.supplies)
+        + 4 * len(study.generators)
+        + 4 * len(study.storage)
+    )
+
+
+def _in_words(count: int) -> str:
+    """A count with separators, or its power of ten where nobody would read the digits."""
+    return f"{count:,}" if count < 10**9 else f"10^{len(str(count)) - 1}"
 
 
 def count_window(window: WindowModel) -> TreeSize:

@@ -22,10 +22,12 @@ from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
 
 import pulp
+from pulp import LpAffineExpression as Expression
 
 from xlplan.model.dispatch import Purchases, SegmentKind
 from xlplan.model.tree_bounds import ValueBounds, bound_values
-from xlplan.model.tree_period import Case, OperatedPeriod, PeriodEquations, PlantState
+from xlplan.model.tree_columns import Case, OperatedPeriod, PlantState
+from xlplan.model.tree_period import PeriodEquations
 from xlplan.model.tree_purchases import PurchaseColumns, add_purchases, fix_purchases
 from xlplan.model.tree_size import Slice, hardening_slices
 from xlplan.network.feeder import Feeder
@@ -33,8 +35,6 @@ from xlplan.outages.damage import first_moment_cost
 from xlplan.outages.records import Scenario
 from xlplan.outages.window_model import WindowModel
 from xlplan.study.study import Study
-
-Expression = pulp.LpAffineExpression
 
 
 class Account:
@@ -133,8 +133,7 @@ def build_whole_tree(
     if fixed_x is None:
         purchases = add_purchases(problem, study)
     else:
-        purchases = fix_purchases(study, fixed_x)
-    problem.addVariable(purchases.demand_kw)
+        purchases = fix_purchases(problem, study, fixed_x)
     account = Account()
     account.add(purchases.yearly_cost, 1.0)
     account.add(Expression(purchases.demand_kw), study.settings.demand_charge_per_kw_year)
@@ -169,9 +168,7 @@ class _WindowTree:
         self.fixed_x = fixed_x
         self.nodes = nodes
         self.n_period = window.series.n_period
-        self.equations = PeriodEquations(
-            problem, study, feeder, window.series, purchases.capacity
-        )
+        self.equations = PeriodEquations(problem, study, feeder, window.series, purchases.capacity)
         self.slices = [hardening_slices(scenario) for scenario in window.scenarios]
         needs_bounds = fixed_x is None and any(scenario.hardening for scenario in window.scenarios)
         self.bounds: ValueBounds | None = bound_values(study, window) if needs_bounds else None
@@ -274,7 +271,9 @@ class _WindowTree:
         struck, spared = Account(), Account()
         gate = Gate(part.avoided_by, is_avoided=False)
         gates = (*arrival.gates, gate)
-        self._add_event(k, i_scenario, state, replace(arrival, account=struck, weight=1.0, gates=gates))
+        self._add_event(
+            k, i_scenario, state, replace(arrival, account=struck, weight=1.0, gates=gates)
+        )
         gates = (*arrival.gates, replace(gate, is_avoided=True))
         self._add_no_event(
             k, state, replace(arrival, account=spared, weight=1.0, gates=gates), parent, passed
@@ -282,7 +281,7 @@ class _WindowTree:
         scenario = self.window.scenarios[i_scenario]
         lift_struck, lift_spared, low = self._lifts(scenario, i_scenario, k)
         name = f"theta_n{arrival.i_parent}k{k}s{i_scenario}m{part.avoided_by[0]}"
-        theta = pulp.LpVariable(name, low)
+        theta = self.problem.add_variable(name, low)
         hardened = pulp.lpSum(self.purchases.hardened[i] for i in part.avoided_by)
         self.problem += theta >= struck.expression() - lift_struck * hardened, f"struck_{name}"
         self.problem += (
@@ -313,7 +312,7 @@ class _WindowTree:
             price = first_moment_cost(customers)
             if price <= 0.0:
                 continue
-            largest = pulp.LpVariable(f"largest_shed_kw_{i}_{name}", 0)
+            largest = self.problem.add_variable(f"largest_shed_kw_{i}_{name}", 0)
             for j, period in enumerate(periods):
                 self.problem += (
                     largest >= self.equations.sold_per_shed * period.shed_kw[i],

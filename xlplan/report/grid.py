@@ -15,7 +15,7 @@ from xlsxwriter.utility import xl_rowcol_to_cell
 from xlplan.report.safe_book import ABSENT, SafeSheet
 
 LEFT_LOOKS = ("text", "wrap", "status", "any")
-HEADING_CHARS, BODY_CHARS = 1.0, 1.08
+HEADING_CHARS, BODY_CHARS = 1.0, 1.2
 """Characters of bold and of plain Arial that fit in one unit of column width (measured)."""
 
 LINE_POINTS = 13.0
@@ -23,7 +23,7 @@ LINE_POINTS = 13.0
 
 @dataclass(frozen=True)
 class Formula:
-    """A live formula and the value it gives."""
+    """A live formula and the value it gives; where that is not finite the cell says so instead."""
 
     text: str
     value: float | str
@@ -133,6 +133,10 @@ class Grid:
                 sheet.height(self.row(i_row), LINE_POINTS * lines + 3)
 
 
+def _is_known(value: float | str) -> bool:
+    return isinstance(value, str) or math.isfinite(value)
+
+
 def lines_needed(text: str, room: float) -> int:
     """Lines that wrapped text takes where ``room`` characters fit on one."""
     lines, used = 1, 0.0
@@ -147,11 +151,13 @@ def lines_needed(text: str, room: float) -> int:
 
 def write_cell(sheet: SafeSheet, row: int, col: int, cell: Cell, *looks: str) -> None:
     """One cell of any kind."""
+    if isinstance(cell, Formula) and not _is_known(cell.value):
+        cell = None
     if isinstance(cell, Formula):
         sheet.formula(row, col, cell.text, cell.value, *looks)
     elif isinstance(cell, str):
         sheet.text(row, col, cell, *looks)
-    elif cell is None or not math.isfinite(cell):
+    elif cell is None or not _is_known(cell):
         sheet.text(row, col, ABSENT, "absent", *looks[1:])
     else:
         sheet.number(row, col, cell, *looks)

@@ -72,7 +72,7 @@ LOOKS: dict[str, Properties] = {
     "remark": {**_TEXT, "font_color": GREY, "italic": True, "indent": 1},
     "link": {**_TEXT, "font_color": BLUE, "underline": 1},
     "status": {**_TEXT, "bold": True},
-    "absent": {**_NUMBER, "font_color": GREY, "italic": True},
+    "absent": {**_NUMBER, "indent": 1, "font_color": GREY, "italic": True},
     "money": _NUMBER,
     "change": _NUMBER,
     "price": {**_NUMBER, "num_format": f"#,##0.00{PAD}"},

@@ -7,11 +7,12 @@ those of the formulas, in words beside each of them.
 from __future__ import annotations
 
 from xlplan.compare.study_result import StudyResult
-from xlplan.evaluate.results import PlanResult
+from xlplan.evaluate.results import PlanResult, Purchase
 
 STUDY_LIFE_YEARS = 20.0
 """Years over which the present value is taken (common practice); a cell of its own to change."""
 
+HARDENING = "hardening"
 NO_PAYBACK = "does not pay back"
 NOTHING_BOUGHT = "nothing bought"
 
@@ -21,6 +22,24 @@ def annuity_factor(rate_frac: float, years: float) -> float:
     if rate_frac == 0.0:
         return years
     return float((1.0 - (1.0 + rate_frac) ** -years) / rate_frac)
+
+
+def formula_net_capital(asset: Purchase) -> float:
+    """Capital after the grant as the Plan sheet's formulas find it from prices and sizes."""
+    if not asset.is_bought:
+        return 0.0
+    energy = asset.kwh * asset.capital_per_kwh
+    gross = asset.capital_site + asset.kw * asset.capital_per_kw + energy
+    return gross * (1.0 - asset.grant_frac)
+
+
+def formula_yearly(asset: Purchase, rate_frac: float) -> float:
+    """Yearly investment and fixed O&M as the Plan sheet's formulas find them."""
+    if not asset.is_bought:
+        return 0.0
+    factor = 1.0 / annuity_factor(rate_frac, asset.life_years)
+    units = 1.0 if asset.kind == HARDENING else asset.kw
+    return formula_net_capital(asset) * factor + units * asset.fixed_om_rate
 
 
 def saving(base: float, base_investment: float, total: float, investment: float) -> float:

@@ -13,6 +13,9 @@ from xlplan.evaluate.results import PlanResult
 from xlplan.report.money import baseline, buys_anything, money_words
 
 GAP_REACHED = "gap reached"
+SHED_SHOWN_KWH = 0.5
+"""Below this a year's shedding in normal service would read as 0 kWh."""
+
 POISSON_WARNING_FRAC = 0.05
 """Above this share the one-at-a-time rule hides too many events (model.md section 2)."""
 
@@ -164,9 +167,10 @@ def _warnings(result: StudyResult, best: PlanResult) -> list[str]:
             said.append(
                 f"Window {window.window}: failures overlap often, and one-at-a-time hides them."
             )
-    if best.normal_shed_kwh > 0.5:
+    if best.normal_shed_kwh > SHED_SHOWN_KWH:
         said.append(
-            f"Planning violation: {best.normal_shed_kwh:,.0f} kWh a year are shed in normal service."
+            f"Planning violation: {best.normal_shed_kwh:,.0f} kWh a year are shed in normal "
+            "service."
         )
     if best.numerical_events:
         said.append(f"The solver met {best.numerical_events} numerically difficult problems.")

@@ -160,8 +160,8 @@ class Engine:
         Parameters
         ----------
         requests : sequence of NodeRequest; their replicas are chosen here
-        measure : picklable, called where the node is solved with the request, ``y`` and
-            ``theta``; what it returns is ``NodeSolution.measured``
+        measure : picklable, called where the node is solved with the family, the member and
+            ``y``; what it returns is ``NodeSolution.measured``
         should_stop : asked now and then; what is not solved by then is None
 
         Returns

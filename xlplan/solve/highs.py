@@ -57,7 +57,7 @@ class _QuietHighs(highspy.Highs):  # type: ignore[misc]
         self.setOptionValue("output_flag", False)
 
 
-def _new_highs(**options: object) -> highspy.Highs:
+def new_highs(**options: object) -> highspy.Highs:
     """HiGHS object without output, on one thread."""
     highs = _QuietHighs()
     # One value of threads per process: mixing them makes later runs fail silently.
@@ -105,7 +105,7 @@ class KeptModel:
         self.name = name
         self.counts: Counter[str] = Counter()
         self.seconds = 0.0
-        self._highs = _new_highs(solver="simplex", simplex_strategy=1, presolve="off")
+        self._highs = new_highs(solver="simplex", simplex_strategy=1, presolve="off")
         n_col, n_row = len(cost), len(row_lower)
         status = self._highs.passModel(
             n_col,
@@ -295,7 +295,7 @@ def solve_program(
         options = {"mip_rel_gap": float(gap_frac), "mip_abs_gap": 1e-9}
     if time_limit_s is not None:
         options["time_limit"] = max(float(time_limit_s), 1e-3)
-    highs = _new_highs(**options)
+    highs = new_highs(**options)
     status = highs.passModel(
         program.n_col,
         program.n_row,

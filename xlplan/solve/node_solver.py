@@ -15,7 +15,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from xlplan.model.value_graph import ValueGraph
+from xlplan.model.value_graph import Family, ValueGraph
 from xlplan.solve.cuts import CutBatch, CutPool, DualBound, MemberChange
 from xlplan.solve.highs import SolverFailureError
 from xlplan.solve.node import DUAL_TOLERANCE, NodeModel, NodeOutcome, family_changes
@@ -73,8 +73,8 @@ class NodeSolution:
     has_failed: bool = False
 
 
-Measure = Callable[[NodeRequest, FloatArray, FloatArray], object]
-"""Called with the request, the primal point ``y`` and ``theta``; must be picklable."""
+Measure = Callable[[Family, int, FloatArray], object]
+"""Called with the family, the member and the primal point ``y``; must be picklable."""
 
 
 class NodeSolver:
@@ -138,7 +138,8 @@ class NodeSolver:
         except SolverFailureError as failure:
             _LOG.warning("member %d: %s", i_member, failure)
             return self._failed(request, state)
-        measured = measure(request, outcome.y, outcome.theta) if measure is not None else None
+        family = self.graph.families[i_family]
+        measured = measure(family, i_member, outcome.y) if measure is not None else None
         return NodeSolution(
             value=outcome.value,
             cost=outcome.cost,

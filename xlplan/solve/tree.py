@@ -15,6 +15,7 @@ import pulp
 from xlplan.model.dispatch import Purchases, TreeSegment
 from xlplan.model.tree_reading import read_segments
 from xlplan.model.whole_tree import WholeTree
+from xlplan.solve.highs import new_highs
 
 GAP_FRAC = 1e-6
 """Default gap of the integer search: a reference has to be closer than what is held against it."""
@@ -102,12 +103,21 @@ def solve_tree(
     )
 
 
+class _QuietHighsOfPulp(pulp.HiGHS):  # type: ignore[misc]
+    """PuLP's own way to HiGHS, with our HiGHS object: no banner, one thread, checked options."""
+
+    def createAndConfigureSolver(self, lp: pulp.LpProblem) -> None:
+        options = {"mip_rel_gap": self.gapRel}
+        if self.timeLimit is not None:
+            options["time_limit"] = float(self.timeLimit)
+        lp.solverModel = new_highs(**options)
+
+
 def _run(
     problem: pulp.LpProblem, time_limit_s: float | None, gap_frac: float
 ) -> tuple[TreeTermination, str, float]:
     """One run of the solver: why it stopped, its word for it, the bound without the offset."""
-    solver = pulp.HiGHS(msg=False, threads=1, timeLimit=time_limit_s, gapRel=gap_frac)
-    problem.solve(solver)
+    problem.solve(_QuietHighsOfPulp(timeLimit=time_limit_s, gapRel=gap_frac))
     highs = problem.solverModel
     raw_status = highs.modelStatusToString(highs.getModelStatus())
     info = highs.getInfo()

@@ -230,8 +230,8 @@ def _curve(rows: list[CheckedRow]) -> Iterator[Finding]:
                 row,
                 Code.CURVE_NOT_CONCAVE,
                 "terminal_power_pct",
-                "the curve bends the wrong way here: a store could not gain by working harder.",
-                "The straight line between its neighbours is used (the curve's upper hull).",
+                "this point lies below the line between its neighbours: the curve is not concave.",
+                "That line is used instead (the curve's upper hull).",
             )
 
 

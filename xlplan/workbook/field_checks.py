@@ -20,6 +20,10 @@ from xlplan.workbook.values import in_unit, read_value
 MOST_OF_A_KIND = 50
 """Faults of one kind that are listed for one column; more of them have one cause."""
 
+LARGEST_NUMBER = 1e12
+SMALLEST_POSITIVE = 1e-9
+"""Numbers beyond these stand in no study, and would overflow in a product or a quotient."""
+
 SMALL_PERCENT_KEYS = frozenset(
     [
         "gap_target_pct",
@@ -182,6 +186,12 @@ _BOUNDS: tuple[tuple[str, _Breaks, str], ...] = (
 
 
 def _out_of_bounds(cell: Cell, field: Field, value: float) -> Finding | None:
+    if abs(value) > LARGEST_NUMBER or (
+        field.exclusive_minimum == 0 and 0 < value < SMALLEST_POSITIVE
+    ):
+        size = "large" if abs(value) > LARGEST_NUMBER else "near to 0"
+        message = f"{value:g} is too {size} to be meant."
+        return finding_at(cell, Level.FAULT, Code.OUT_OF_BOUNDS, field.key, message, in_unit(field))
     for name, breaks, words in _BOUNDS:
         bound = getattr(field, name)
         if bound is not None and breaks(value, bound):
@@ -202,13 +212,13 @@ def _unlikely(cell: Cell, field: Field, value: float) -> Finding | None:
     if not (below or above):
         return _fraction_of_a_percent(cell, field, value)
     unit = f" {field.unit}" if field.unit else ""
-    means = field.likely_text or "an unusual value"
+    means = (field.likely_text or "an unusual value").removesuffix(".")
     return finding_at(
         cell,
         Level.WARNING,
         Code.UNLIKELY_VALUE,
         field.key,
-        f"{value:g}{unit} would mean {means}.",
+        f"{value:.6g}{unit} would mean {means}.",
         "It is used as it stands.",
     )
 

@@ -46,6 +46,9 @@ def resolve_names(study: CheckedStudy) -> tuple[CheckedStudy, list[Finding]]:
     tables = {}
     for sheet, table in study.tables.items():
         fields = [f for f in table.schema.fields if _is_reference(f)]
+        if not fields:
+            tables[sheet] = table
+            continue
         rows = []
         for row in table.rows:
             resolved, found = _resolve_row(row, fields, names, profiles)

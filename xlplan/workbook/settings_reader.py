@@ -20,7 +20,13 @@ from xlplan.workbook.headings import (
     words_in_parentheses,
 )
 from xlplan.workbook.sheet_facts import SheetFacts
-from xlplan.workbook.sheet_reader import HEADING_ROWS, Grid, about_merges, about_no_header
+from xlplan.workbook.sheet_reader import (
+    HEADING_ROWS,
+    Grid,
+    about_hidden_rows,
+    about_merges,
+    about_no_header,
+)
 from xlplan.workbook.tables import Cell, Row, Table, finding_at
 from xlplan.workbook.values import is_blank
 
@@ -59,6 +65,7 @@ def read_settings(schema: Sheet, grid: Grid, facts: SheetFacts) -> tuple[Table, 
     findings += about_merges(
         grid.sheet, facts, min(numbers), max(numbers), {name_column, value_column}
     )
+    findings += about_hidden_rows(grid.sheet, facts, numbers)
     row = Row(grid.sheet, 0, cells, dict.fromkeys(cells, column))
     return Table(schema.name, grid.sheet, header_row or 1, {}, (row,)), findings
 

@@ -79,7 +79,8 @@ def read_sheet(schema: Sheet, grid: Grid, facts: SheetFacts) -> tuple[Table, lis
     findings += _about_missing_columns(schema, grid, header_row, columns, bool(rows))
     last_row = max((row.number for row in rows), default=header_row)
     findings += about_merges(grid.sheet, facts, header_row, last_row, set(columns.values()))
-    findings += _about_hidden(grid.sheet, facts, rows, column_of)
+    findings += about_hidden_rows(grid.sheet, facts, [row.number for row in rows])
+    findings += _about_hidden_columns(grid.sheet, facts, rows, column_of)
     return Table(schema.name, grid.sheet, header_row, column_of, rows), findings
 
 
@@ -327,34 +328,40 @@ def about_merges(
     return findings
 
 
-def _about_hidden(
+def about_hidden_rows(sheet: str, facts: SheetFacts, numbers: list[int]) -> list[Finding]:
+    """A note about hidden or filtered rows, whose values are used all the same."""
+    hidden = [number for number in numbers if number in facts.hidden_rows]
+    if not hidden:
+        return []
+    how_many = "1 hidden or filtered row was"
+    if len(hidden) > 1:
+        how_many = f"{len(hidden)} hidden or filtered rows were"
+    return [
+        _sheet_finding(
+            Level.NOTE,
+            Code.HIDDEN_ROWS,
+            sheet,
+            f"A{hidden[0]}",
+            f"{how_many} used.",
+            "Delete rows that are not to count.",
+        )
+    ]
+
+
+def _about_hidden_columns(
     sheet: str, facts: SheetFacts, rows: tuple[Row, ...], column_of: dict[str, str]
 ) -> list[Finding]:
-    """Notes about hidden rows and columns, whose values are used all the same."""
-    findings = []
-    hidden = [row.number for row in rows if row.number in facts.hidden_rows]
-    if hidden:
-        findings.append(
-            _sheet_finding(
-                Level.NOTE,
-                Code.HIDDEN_ROWS,
-                sheet,
-                f"A{hidden[0]}",
-                f"{len(hidden)} hidden or filtered row{'s were' if len(hidden) > 1 else ' was'} "
-                f"used.",
-                "Delete rows that are not to count.",
-            )
+    """Notes about hidden columns, whose values are used all the same."""
+    last = max((row.number for row in rows), default=1)
+    return [
+        _sheet_finding(
+            Level.NOTE,
+            Code.HIDDEN_COLUMN,
+            sheet,
+            f"{letter}{last}",
+            "this column is hidden. Its values are used.",
+            key=key,
         )
-    for key, letter in column_of.items():
-        if column_index_from_string(letter) in facts.hidden_columns:
-            findings.append(
-                _sheet_finding(
-                    Level.NOTE,
-                    Code.HIDDEN_COLUMN,
-                    sheet,
-                    f"{letter}{max((row.number for row in rows), default=1)}",
-                    "this column is hidden. Its values are used.",
-                    key=key,
-                )
-            )
-    return findings
+        for key, letter in column_of.items()
+        if column_index_from_string(letter) in facts.hidden_columns
+    ]

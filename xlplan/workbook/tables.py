@@ -6,6 +6,7 @@ sheet are one ``Row`` whose cells lie below each other.
 
 from __future__ import annotations
 
+import datetime as dt
 import re
 from collections.abc import Mapping
 from dataclasses import dataclass, field
@@ -35,6 +36,9 @@ class Cell:
     @property
     def typed(self) -> str:
         """The value as text, for messages."""
+        if isinstance(self.value, dt.datetime):
+            is_whole_minute = self.value.second == self.value.microsecond == 0
+            return self.value.isoformat(" ", "minutes" if is_whole_minute else "auto")
         return "" if self.value is None else str(self.value)
 
     @property

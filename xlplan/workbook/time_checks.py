@@ -97,7 +97,7 @@ def _window(
     n_period = round(exact)
     if abs(exact - n_period) > WHOLE_TOLERANCE or n_period < 1:
         message = f"{hours:g} hours are {exact:.6g} periods, not a whole number of them."
-        hint = f"A period is {period_h:g} hours (Settings)."
+        hint = f"A period is {minutes_from_hours(period_h):g} minutes (Settings)."
         return [fault(row, Code.NOT_WHOLE_PERIODS, "hours", message, hint)], None
     start = profiles.row_at(row.values.get("starts_at"))
     if start is None:

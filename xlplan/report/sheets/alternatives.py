@@ -16,7 +16,8 @@ from xlplan.report import money
 from xlplan.report.grid import HEADING_CHARS, LINE_POINTS, Cell, Formula, lines_needed, write_cell
 from xlplan.report.safe_book import SafeBook
 from xlplan.report.sheets.plan import DISCOUNT_RATE, PlanCells
-from xlplan.report.tables import ALTERNATIVES, STATEMENT
+from xlplan.report.statement import STATEMENT
+from xlplan.report.tables import ALTERNATIVES
 
 STUDY_LIFE = "study_life_years"
 RATE_ROW, LIFE_ROW, HEAD_ROW = 3, 4, 6
@@ -77,17 +78,17 @@ def write(book: SafeBook, result: StudyResult, plan_cells: PlanCells) -> Alterna
         {**_cost_cells(plan, i, cells, plan_cells), **_worth_cells(result, plan, i, cells)}
         for i, plan in enumerate(result.plans)
     ]
-    for block, lines in STATEMENT:
-        sheet.text(cells.row_of[block], 0, block, "section")
-        for key, label, unit, look, modifier, note in lines:
-            row = cells.row_of[key]
-            extra = (modifier,) if modifier else ()
-            sheet.text(row, 0, label, "text", *extra)
-            sheet.text(row, 1, book.words(unit), "subtitle", *extra)
+    for block in STATEMENT:
+        sheet.text(cells.row_of[block.title], 0, block.title, "section")
+        for line in block.lines:
+            row = cells.row_of[line.key]
+            extra = (line.modifier,) if line.modifier else ()
+            sheet.text(row, 0, line.label, "text", *extra)
+            sheet.text(row, 1, book.words(line.unit), "subtitle", *extra)
             for i, by_key in enumerate(content):
-                write_cell(sheet, row, FIRST_PLAN_COL + i, by_key[key], look, *extra)
-            sheet.text(row, note_col, note, "remark")
-    sheet.widths([40, 15] + [PLAN_WIDTH] * len(result.plans) + [92])
+                write_cell(sheet, row, FIRST_PLAN_COL + i, by_key[line.key], line.look, *extra)
+            sheet.text(row, note_col, line.note, "remark")
+    sheet.widths([40, max(15, len(result.currency) + 7)] + [PLAN_WIDTH] * len(result.plans) + [92])
     sheet.freeze(HEAD_ROW + 1, FIRST_PLAN_COL)
     sheet.print_setup(last_row, note_col)
     return cells
@@ -111,11 +112,11 @@ def _place() -> tuple[AlternativesCells, int]:
     """Row of every block and figure, and the last row."""
     row_of: dict[str, int] = {}
     row = HEAD_ROW + 1
-    for block, lines in STATEMENT:
-        row_of[block] = row
-        for line in lines:
+    for block in STATEMENT:
+        row_of[block.title] = row
+        for line in block.lines:
             row += 1
-            row_of[line[0]] = row
+            row_of[line.key] = row
         row += 2
     return AlternativesCells(row_of), row - 2
 

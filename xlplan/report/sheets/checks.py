@@ -11,9 +11,9 @@ import math
 from dataclasses import dataclass
 
 from xlplan.compare.study_result import StudyResult
-from xlplan.evaluate.results import CheckLine
+from xlplan.evaluate.results import CheckLine, PlanResult
 from xlplan.report.grid import Cell, Formula, Grid
-from xlplan.report.money import baseline
+from xlplan.report.money import baseline, formula_net_capital, formula_yearly
 from xlplan.report.safe_book import SafeBook
 from xlplan.report.sheets.alternatives import AlternativesCells
 from xlplan.report.sheets.reliability import ReliabilityCells
@@ -139,16 +139,17 @@ def _money_lines(result: StudyResult, cells: AlternativesCells) -> list[_Line]:
     """Totals of this workbook against the run, and parts against totals."""
     lines = []
     for i, plan in enumerate(result.plans):
+        off_yearly, off_capital = _formula_errors(plan, result.real_discount_rate_frac)
         total = Formula(f"={cells.away('total', i)}", plan.costs.total)
         lines.append(
             _Line(
                 plan.name,
                 "Total of the Alternatives sheet",
                 "Total yearly cost by the formulas, and as the run found it",
-                total,
+                Formula(total.text, plan.costs.total + off_yearly),
                 plan.costs.total,
                 CENT,
-                CHANGED,
+                FAIL if abs(off_yearly) > CENT else CHANGED,
             )
         )
         parts = (
@@ -179,7 +180,7 @@ def _money_lines(result: StudyResult, cells: AlternativesCells) -> list[_Line]:
                 FAIL,
             )
         )
-        capital = Formula(f"={cells.away('net', i)}", plan.capital_cost)
+        capital = Formula(f"={cells.away('net', i)}", plan.capital_cost + off_capital)
         lines.append(
             _Line(
                 plan.name,
@@ -188,10 +189,24 @@ def _money_lines(result: StudyResult, cells: AlternativesCells) -> list[_Line]:
                 capital,
                 plan.capital_cost,
                 CENT,
-                CHANGED,
+                FAIL if abs(off_capital) > CENT else CHANGED,
             )
         )
     return lines
+
+
+def _formula_errors(plan: PlanResult, rate_frac: float) -> tuple[float, float]:
+    """By how much formulas from prices miss what the run found: yearly cost, capital.
+
+    Without this the stored results of the checks would compare the run's numbers with themselves.
+    """
+    assets = plan.purchases
+    yearly = sum(
+        formula_yearly(asset, rate_frac) - asset.investment - asset.fixed_om for asset in assets
+    )
+    capital = sum(formula_net_capital(asset) - asset.capital_net for asset in assets)
+    fixed_om = sum(asset.fixed_om for asset in assets) - plan.costs.fixed_om
+    return yearly + fixed_om, capital
 
 
 def _energy_lines(result: StudyResult, cells: ReliabilityCells) -> list[_Line]:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 
+from xlplan.base.units import pct_from_frac
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import ConvergenceRow, PlanResult
 from xlplan.report import charts
@@ -31,7 +32,7 @@ def write(book: SafeBook, result: StudyResult) -> None:
     """Writes the sheet."""
     sheet = book.sheet(CONVERGENCE)
     best = result.plan(result.recommended)
-    target = f"target {result.gap_target_frac:.2%}".replace("%", " %")
+    target = f"target {pct_from_frac(result.gap_target_frac):.2f} %"
     sheet.head("How far the solver got", f"Status: {result.status}; {target}; seed {result.seed}.")
     sheet.widths(WIDTHS)
     row = 3

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import PlanResult, Purchase
 from xlplan.report.grid import Cell, Formula, Grid
-from xlplan.report.money import baseline, buys_anything
+from xlplan.report.money import buys_anything
 from xlplan.report.safe_book import SafeBook
 from xlplan.report.tables import PLAN, PLAN_TOTALS, PRICES, PURCHASES
 
@@ -42,7 +42,13 @@ def write(book: SafeBook, result: StudyResult) -> PlanCells:
     )
     sheet.widths(WIDTHS)
     shown = [plan for plan in result.plans if buys_anything(plan)]
-    assets = baseline(result).purchases or result.plans[-1].purchases
+    # Prices are the study's, the same in every plan; the first mention of an asset counts.
+    by_name: dict[str, Purchase] = {}
+    for plan in result.plans:
+        for asset in plan.purchases:
+            by_name.setdefault(asset.asset, asset)
+    assets = list(by_name.values())
+    price_row = {asset.asset: i for i, asset in enumerate(assets)}
     totals = Grid(PLAN, 4, PLAN_TOTALS, len(result.plans))
     prices = Grid(PLAN, totals.below + 2, PRICES, len(assets))
     n_row = sum(len(plan.purchases) for plan in shown)
@@ -53,8 +59,9 @@ def write(book: SafeBook, result: StudyResult) -> PlanCells:
     rows: list[dict[str, Cell]] = []
     for plan in shown:
         first_row[plan.name] = len(rows)
-        for i_asset, asset in enumerate(plan.purchases):
-            rows.append(_purchase_row(plan, asset, bought, len(rows), prices, i_asset))
+        for asset in plan.purchases:
+            i_price = price_row[asset.asset]
+            rows.append(_purchase_row(plan, asset, bought, len(rows), prices, i_price))
     total_rows = [
         _total_row(plan, i, totals, bought, first_row.get(plan.name))
         for i, plan in enumerate(result.plans)

@@ -5,6 +5,7 @@ The detail sets the existing feeder beside the recommended plan; "plan" in a hea
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
@@ -109,7 +110,8 @@ def _history(sheet: SafeSheet, result: StudyResult, below: int) -> int:
     for i, line in enumerate(lines):
         left, right, allowed = (grid.here(i, key) for key in ("study", "record", "tolerance"))
         ratio: Cell = None
-        if line.right != 0.0:
+        is_known = math.isfinite(line.left) and math.isfinite(line.right)
+        if is_known and line.right != 0.0:
             ratio = Formula(f"={left}/{right}", line.left / line.right)
         verdict = f'=IF(ABS({left}-{right})<={allowed},"{CLOSE}","{STOP}")'
         rows.append(
@@ -120,7 +122,7 @@ def _history(sheet: SafeSheet, result: StudyResult, below: int) -> int:
                 "record": line.right,
                 "tolerance": line.tolerance,
                 "ratio": ratio,
-                "verdict": Formula(verdict, CLOSE if line.passes else STOP),
+                "verdict": (Formula(verdict, CLOSE if line.passes else STOP) if is_known else STOP),
             }
         )
     grid.write(sheet, rows)
@@ -306,7 +308,7 @@ def _cause_row(name: str, cause: CauseResult) -> dict[str, Cell]:
         word
         for word, holds in (
             ("storm", cause.is_storm),
-            ("loss of bulk supply", cause.is_bulk_supply),
+            ("bulk supply", cause.is_bulk_supply),
         )
         if holds
     ]

@@ -11,7 +11,7 @@ from xlplan.evaluate.results import PlanResult, Purchase
 from xlplan.report import charts, wording
 from xlplan.report.grid import Cell, Formula, Grid
 from xlplan.report.looks import BLACK, BLUE, NAVY, ORANGE, SKY, VERMILION
-from xlplan.report.money import baseline
+from xlplan.report.money import baseline, money_words
 from xlplan.report.safe_book import SafeBook, SafeSheet
 from xlplan.report.sheets.alternatives import AlternativesCells
 from xlplan.report.sheets.cautions import CAUTION_TEXTS
@@ -19,9 +19,10 @@ from xlplan.report.sheets.checks import ChecksCells
 from xlplan.report.sheets.reliability import ReliabilityCells
 from xlplan.report.tables import CAUTIONS, PLAN, SUMMARY, SUMMARY_PLANS
 
-WIDTHS = (25, 13, 14, 14, 13, 13, 14, 13, 13, 13, 13, 13, 16, 13)
+WIDTHS = (31, 13, 14, 14, 13, 13, 14, 13, 13, 13, 13, 13, 16, 13)
 LAST_COL = len(WIDTHS) - 1
-CHART_ROWS = 22
+CHART_ROWS, ROWS_PER_BAR = 22, 2
+LEFT_CHART_SHARE = 0.54
 MAX_BOUGHT = 10
 LEFT_LAST_COL = 5
 RIGHT_COL = 7
@@ -43,7 +44,9 @@ def write(
     """Writes the sheet."""
     sheet = book.sheet(SUMMARY)
     sheet.widths(WIDTHS)
-    sheet.paragraph(0, 0, LAST_COL, wording.headline(result), 115, "title")
+    # The space before a percent sign must not end a line.
+    headline = wording.headline(result).replace(" %", "\u00a0%")
+    sheet.paragraph(0, 0, LAST_COL, headline, 118, "title")
     sheet.paragraph(1, 0, LAST_COL, wording.consequence(result), 222, "text", "bold")
     sheet.paragraph(2, 0, LAST_COL, wording.basis(result), 222, "subtitle")
     grid = Grid(SUMMARY, 4, SUMMARY_PLANS, len(result.plans))
@@ -136,8 +139,9 @@ def _charts(book: SafeBook, sheet: SafeSheet, result: StudyResult, grid: Grid, r
         label_above=0.09 * largest,
     )
     total = sheet.pixels(0, LAST_COL)
-    left = total * 54 // 100
-    height = CHART_ROWS * charts.PIXELS_PER_ROW - 10
+    left = round(LEFT_CHART_SHARE * total)
+    n_row = max(CHART_ROWS, 4 + ROWS_PER_BAR * len(result.plans))
+    height = n_row * charts.PIXELS_PER_ROW - 10
     alt = (
         "Stacked bars: yearly cost of each alternative, in investment and upkeep; energy, fuel "
         "and demand; repairs and other; and customers' outage cost."
@@ -161,7 +165,7 @@ def _charts(book: SafeBook, sheet: SafeSheet, result: StudyResult, grid: Grid, r
         "storms and loss of bulk supply."
     )
     sheet.chart(row, left + 12, hours, total - left - 18, height, alt)
-    return row + CHART_ROWS
+    return row + n_row
 
 
 def _purchases(sheet: SafeSheet, result: StudyResult, row: int) -> int:
@@ -185,7 +189,7 @@ def _purchases(sheet: SafeSheet, result: StudyResult, row: int) -> int:
 
 def _asset_words(asset: Purchase, currency: str) -> str:
     """One purchase in words, with its size and capital."""
-    capital = f"capital {wording.money_words(asset.capital_net, currency)} after grants"
+    capital = f"capital {money_words(asset.capital_net, currency)} after grants"
     if asset.kind == "hardening":
         return f"•  {asset.asset}: hardening of {asset.place}; {capital}"
     size = f"{asset.kw:,.1f} kW"

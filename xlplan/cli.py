@@ -1,0 +1,390 @@
+"""The command line: arguments, exit status and printing; no logic.
+
+Exit status 0: done; 2: the study cannot be used as it is; 3: stopped with a plan whose gap misses
+the target; 1: anything else, with one plain line.
+"""
+
+from __future__ import annotations
+
+import argparse
+import contextlib
+import io
+import json
+import logging
+import os
+import signal
+import sys
+import traceback
+from collections.abc import Iterator, Sequence
+from pathlib import Path
+from types import FrameType
+from typing import NoReturn
+
+from rich.console import Console
+from rich.status import Status
+
+import xlplan
+from xlplan.base.errors import Finding, Level, PathError, StudyError, XlplanError
+from xlplan.base.units import frac_from_pct, hours_from_minutes, pct_from_frac
+from xlplan.compare.standing import Progress
+from xlplan.compare.study_result import StudyResult
+from xlplan.pipeline import Overrides, check_target, read_study, solve_study, write_answer
+from xlplan.workbook.template import write_template
+
+DONE, FAILED, UNUSABLE, STOPPED = 0, 1, 2, 3
+
+_LOG = logging.getLogger("xlplan")
+
+
+class _Parser(argparse.ArgumentParser):
+    """Says one plain line on wrong arguments, with the status of "anything else"."""
+
+    def error(self, message: str) -> NoReturn:
+        self.exit(FAILED, f"xlplan: {message}. '{self.prog} --help' lists what there is.\n")
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Runs one command.
+
+    Parameters
+    ----------
+    arguments : words after the program's name; those of the process by default
+
+    Returns
+    -------
+    int, exit status
+    """
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):
+            stream.reconfigure(errors="replace")
+    options = build_parser().parse_args(arguments)
+    try:
+        with _logged(getattr(options, "log", None)):
+            return int(options.run(options))
+    except StudyError as error:
+        print_findings(error.findings)
+        print(f"xlplan: {error}", file=sys.stderr)
+        return error.exit_status
+    except XlplanError as error:
+        print(f"xlplan: {error}", file=sys.stderr)
+        return error.exit_status
+    except KeyboardInterrupt:
+        print("xlplan: stopped before there was a plan.", file=sys.stderr)
+        return FAILED
+    except Exception as error:  # A fault of our own: one plain line, the rest to the log.
+        _LOG.error("%s", traceback.format_exc())
+        detail = f"{type(error).__name__}: {error}".splitlines()[0]
+        print(
+            f"xlplan: something went wrong inside the program ({detail}). "
+            "Run again with --log FILE and keep the file for a report.",
+            file=sys.stderr,
+        )
+        return FAILED
+
+
+def build_parser() -> argparse.ArgumentParser:
+    """The commands and their options."""
+    parser = _Parser(
+        prog="xlplan",
+        description="Resilience plans for radial distribution feeders, from workbook to workbook.",
+    )
+    parser.add_argument("--version", action="version", version=f"xlplan {xlplan.__version__}")
+    commands = parser.add_subparsers(title="commands", metavar="COMMAND", required=True)
+
+    template = commands.add_parser("template", help="write a blank study, or the demo study")
+    template.add_argument("out", type=Path, metavar="OUT.xlsx")
+    template.add_argument("--demo", action="store_true", help="fill in the demo study")
+    template.set_defaults(run=_template)
+
+    check = commands.add_parser("check", help="list everything wrong or unlikely in a study")
+    check.add_argument("study", type=Path, metavar="STUDY.xlsx")
+    check.add_argument("--json", type=Path, metavar="FILE", help="write the findings as JSON")
+    check.set_defaults(run=_check)
+
+    solve = commands.add_parser("solve", help="check a study, solve it, write the results")
+    solve.add_argument("study", type=Path, metavar="STUDY.xlsx")
+    solve.add_argument("-o", "--output", type=Path, metavar="RESULTS.xlsx")
+    solve.add_argument("--json", type=Path, metavar="FILE", help="write the results as JSON too")
+    solve.add_argument("--method", choices=("auto", "tree", "decomposed"), default="auto")
+    solve.add_argument("--gap", type=_positive, metavar="PCT", help="target gap in percent")
+    solve.add_argument(
+        "--time-limit", type=_positive, metavar="MIN", help="minutes for each alternative"
+    )
+    solve.add_argument("--workers", type=_count, metavar="N", help="processes to use")
+    solve.add_argument("--seed", type=_whole, metavar="N", help="seed of the random numbers")
+    solve.add_argument(
+        "--plan-only", action="store_true", help="leave out the study's own alternatives"
+    )
+    solve.add_argument("--force", action="store_true", help="replace results that are there")
+    solve.add_argument("--quiet", action="store_true", help="print the results' path only")
+    solve.add_argument("--log", type=Path, metavar="FILE", help="write a log of the run")
+    solve.set_defaults(run=_solve)
+    return parser
+
+
+def _positive(text: str) -> float:
+    value = float(text)
+    if not 0.0 < value < float("inf"):
+        raise argparse.ArgumentTypeError(f"{text} is not above 0")
+    return value
+
+
+def _count(text: str) -> int:
+    value = int(text)
+    if value < 1:
+        raise argparse.ArgumentTypeError(f"{text} is not at least 1")
+    return value
+
+
+def _whole(text: str) -> int:
+    value = int(text)
+    if value < 0:
+        raise argparse.ArgumentTypeError(f"{text} is below 0")
+    return value
+
+
+# -- commands ----------------------------------------------------------------------------------
+
+
+def _template(options: argparse.Namespace) -> int:
+    out: Path = options.out
+    if out.suffix.lower() != ".xlsx":
+        raise PathError(f"'{out}' should end in .xlsx.")
+    if out.exists():
+        raise PathError(f"'{out}' is there already; choose another name. Nothing was changed.")
+    write_template(out, with_demo=options.demo)
+    print(out)
+    return DONE
+
+
+def _check(options: argparse.Namespace) -> int:
+    checked = read_study(options.study)
+    print_findings(checked.findings)
+    counts = count_findings(checked.findings)
+    print(counts if checked.findings else f"{counts} The study can be solved.")
+    if options.json is not None:
+        _same_file(options.json, options.study)
+        document = {
+            "schema": 1,
+            "study": str(options.study),
+            "fingerprint": checked.raw.fingerprint,
+            "findings": [finding_record(finding) for finding in checked.findings],
+        }
+        _write_text(options.json, json.dumps(document, indent=1, ensure_ascii=False))
+    return DONE if checked.is_usable else UNUSABLE
+
+
+def _solve(options: argparse.Namespace) -> int:
+    study: Path = options.study
+    output = options.output or study.with_name(f"{study.stem}-results.xlsx")
+    check_target(output, study)
+    if options.json is not None:
+        _same_file(options.json, study)
+        check_target(options.json, study)
+    overrides = Overrides(
+        method=options.method,
+        gap_frac=None if options.gap is None else frac_from_pct(options.gap),
+        time_limit_h=None if options.time_limit is None else hours_from_minutes(options.time_limit),
+        seed=options.seed,
+        workers=options.workers,
+        plan_only=options.plan_only,
+    )
+    with _Interrupt() as interrupt, _Display(options.quiet) as display:
+        result = solve_study(
+            study, overrides, _cores(), display.show, should_stop=lambda: interrupt.is_asked
+        )
+        display.show(Progress("", "writing"))
+        written = write_answer(result, study, output, options.json, options.force)
+    if not options.quiet:
+        print_findings([f for f in result.findings if f.level is not Level.NOTE])
+        print_summary(result)
+        if written != output:
+            print(f"'{output}' is there already, so the results have another name:")
+    print(written)
+    return DONE if result.status == "gap reached" else STOPPED
+
+
+def _cores() -> int:
+    if hasattr(os, "sched_getaffinity"):
+        return len(os.sched_getaffinity(0))
+    return os.cpu_count() or 1
+
+
+def _same_file(target: Path, study: Path) -> None:
+    if target.resolve() == study.resolve():
+        raise PathError(f"'{target}' is the study itself; it is never written to.")
+
+
+def _write_text(path: Path, text: str) -> None:
+    try:
+        path.write_text(text + "\n", encoding="utf-8")
+    except OSError as error:
+        raise PathError(f"'{path}' cannot be written: {error.strerror}.") from error
+
+
+# -- printing ----------------------------------------------------------------------------------
+
+LEVELS = ((Level.FAULT, "Faults"), (Level.WARNING, "Warnings"), (Level.NOTE, "Notes"))
+
+
+def print_findings(findings: Sequence[Finding]) -> None:
+    """Findings by level, in the order of the workbook, wrapped to the terminal."""
+    console = Console(soft_wrap=not sys.stdout.isatty(), highlight=False, markup=False)
+    for level, heading in LEVELS:
+        chosen = [finding for finding in findings if finding.level is level]
+        if chosen:
+            console.print(f"{heading}:")
+            for finding in chosen:
+                console.print("  " + finding.text())
+
+
+def count_findings(findings: Sequence[Finding]) -> str:
+    """How many of each level, in a sentence."""
+    parts = []
+    for level, _ in LEVELS:
+        n = sum(finding.level is level for finding in findings)
+        parts.append(f"{n} {level}{'' if n == 1 else 's'}")
+    return ", ".join(parts) + "."
+
+
+def finding_record(finding: Finding) -> dict[str, str]:
+    """A finding for the JSON file."""
+    return {
+        "level": str(finding.level),
+        "code": str(finding.code),
+        "sheet": finding.sheet,
+        "cell": finding.cell,
+        "key": finding.key,
+        "value": finding.value,
+        "message": finding.message,
+        "hint": finding.hint,
+    }
+
+
+def print_summary(result: StudyResult) -> None:
+    """The plan in a few lines."""
+    best = result.plan(result.recommended)
+    money = result.currency
+    print(f"{result.study_name}: {best.name}")
+    print(f"  yearly cost       {best.costs.total:,.0f} {money}")
+    low, high = best.cost_interval
+    if best.is_enumerated:
+        print("                    every history counted, no sampling")
+    else:
+        print(f"                    95 % interval {low:,.0f} to {high:,.0f}")
+    if best.lower_bound is not None and best.gap_frac is not None:
+        print(f"  lower bound       {best.lower_bound:,.0f}")
+        print(
+            f"  gap               {pct_from_frac(best.gap_frac):.2f} % "
+            f"(target {pct_from_frac(result.gap_target_frac):g} %): {result.status}"
+        )
+    print(f"  capital           {best.capital_cost:,.0f} {money}")
+    for purchase in best.purchases:
+        if purchase.is_bought:
+            size = {
+                "storage": f"{purchase.kw:,.0f} kW, {purchase.kwh:,.0f} kWh",
+                "generator": f"{purchase.kw:,.0f} kW",
+                "hardening": purchase.place,
+            }[purchase.kind]
+            print(f"  buy               {purchase.asset}: {size}")
+    if not any(purchase.is_bought for purchase in best.purchases):
+        print("  buy               nothing")
+    for plan in result.plans:
+        index = plan.indices
+        print(
+            f"  {plan.name + ':':<27} {plan.costs.total:>14,.0f} {money} a year, "
+            f"{index.eens_kwh:,.0f} kWh unserved, SAIDI {index.saidi_h:.2f} h"
+        )
+    failed = [
+        check
+        for plan in result.plans
+        for check in plan.checks
+        if not check.passes and not check.is_warning
+    ]
+    print(f"  checks            {'all pass' if not failed else f'{len(failed)} FAIL'}")
+
+
+class _Display:
+    """One line of progress on a terminal; nothing when piped or quiet."""
+
+    def __init__(self, is_quiet: bool) -> None:
+        self._status: Status | None = None
+        if not is_quiet and sys.stderr.isatty():
+            self._status = Console(stderr=True).status("starting")
+
+    def __enter__(self) -> _Display:
+        if self._status is not None:
+            self._status.start()
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        if self._status is not None:
+            self._status.stop()
+
+    def show(self, progress: Progress) -> None:
+        """Shows a step."""
+        text = progress_text(progress)
+        _LOG.info("%s", text)
+        if self._status is not None:
+            self._status.update(text)
+
+
+def progress_text(progress: Progress) -> str:
+    """A step in words."""
+    parts = [f"{progress.alternative}: {progress.step}" if progress.alternative else progress.step]
+    if progress.lower_bound is not None:
+        parts.append(f"bound {progress.lower_bound:,.0f}")
+    if progress.cost is not None:
+        parts.append(f"cost {progress.cost:,.0f}")
+    if progress.gap_frac is not None:
+        parts.append(f"gap {pct_from_frac(progress.gap_frac):.2f} %")
+    if progress.seconds_left is not None:
+        minutes, seconds = divmod(int(progress.seconds_left), 60)
+        parts.append(f"{minutes}:{seconds:02d} left to the limit")
+    return ", ".join(parts)
+
+
+class _Interrupt:
+    """Ctrl-C once: finish with the best plan so far; twice: stop at once."""
+
+    def __init__(self) -> None:
+        self.is_asked = False
+        self._before: object = None
+
+    def __enter__(self) -> _Interrupt:
+        with contextlib.suppress(ValueError):  # Not in the main thread: leave signals alone.
+            self._before = signal.signal(signal.SIGINT, self._handle)
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        if self._before is not None:
+            signal.signal(signal.SIGINT, self._before)  # type: ignore[arg-type]
+
+    def _handle(self, signum: int, frame: FrameType | None) -> None:
+        if self.is_asked:
+            raise KeyboardInterrupt
+        self.is_asked = True
+        print("\nStopping: finishing with the best plan so far.", file=sys.stderr)
+
+
+@contextlib.contextmanager
+def _logged(path: Path | None) -> Iterator[None]:
+    """Writes the program's log to a file while a command runs."""
+    if path is None:
+        yield
+        return
+    try:
+        handler = logging.FileHandler(path, mode="w", encoding="utf-8")
+    except OSError as error:
+        raise PathError(f"'{path}' cannot be written: {error.strerror}.") from error
+    handler.setFormatter(logging.Formatter("%(asctime)s %(levelname)s %(name)s: %(message)s"))
+    root = logging.getLogger()
+    level = root.level
+    root.addHandler(handler)
+    root.setLevel(logging.DEBUG)
+    try:
+        yield
+    finally:
+        root.setLevel(level)
+        root.removeHandler(handler)
+        handler.close()

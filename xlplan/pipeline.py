@@ -1,0 +1,218 @@
+"""One study from workbook to answer, one readable line per step."""
+
+from __future__ import annotations
+
+import datetime
+import time
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+from pathlib import Path
+
+from xlplan.base.codes import Code
+from xlplan.base.errors import Finding, Level, StudyError
+from xlplan.compare.assemble import assemble
+from xlplan.compare.standing import Progress, SolveOptions, StandingAlternatives
+from xlplan.compare.study_result import StudyResult
+from xlplan.network.feeder import Feeder, build_feeder
+from xlplan.network.topology import check_no_load_voltage, check_radial
+from xlplan.outages.checks import check_islands, check_rounded_times
+from xlplan.outages.window_model import WindowModel, build_window_models
+from xlplan.report.json_twin import write_json
+from xlplan.report.writer import check_target, write_results
+from xlplan.study.build import check_and_build
+from xlplan.study.study import Study
+from xlplan.workbook.reader import read_workbook
+from xlplan.workbook.tables import RawStudy
+
+
+@dataclass(frozen=True)
+class CheckedInput:
+    """A study as read: everything found, and the study itself where nothing is at fault."""
+
+    raw: RawStudy
+    findings: tuple[Finding, ...]
+    study: Study | None
+    feeder: Feeder | None
+    windows: tuple[WindowModel, ...]
+
+    @property
+    def is_usable(self) -> bool:
+        """True if there is no fault."""
+        return not any(finding.level is Level.FAULT for finding in self.findings)
+
+
+def read_study(path: Path) -> CheckedInput:
+    """Reads and checks a study workbook; all findings in one pass.
+
+    Parameters
+    ----------
+    path : Path
+
+    Returns
+    -------
+    CheckedInput
+
+    Raises PathError or StudyFileError for what cannot be read at all.
+    """
+    raw = read_workbook(path)
+    study, findings = check_and_build(raw)
+    if study is None:
+        return CheckedInput(raw, tuple(findings), None, None, ())
+    findings += check_radial(study)
+    if any(finding.level is Level.FAULT for finding in findings):
+        return CheckedInput(raw, tuple(findings), None, None, ())
+    feeder = build_feeder(study)
+    windows = build_window_models(study, feeder)
+    scenarios = {
+        record.window: window.scenarios
+        for record, window in zip(study.windows, windows, strict=True)
+    }
+    findings += check_no_load_voltage(study, feeder, scenarios)
+    findings += check_rounded_times(study)
+    findings += check_islands(study, feeder, scenarios)
+    return CheckedInput(raw, tuple(findings), study, feeder, windows)
+
+
+@dataclass(frozen=True)
+class Overrides:
+    """What the command line sets instead of the study's settings; None: as the study says."""
+
+    method: str = "auto"
+    gap_frac: float | None = None
+    time_limit_h: float | None = None
+    seed: int | None = None
+    workers: int | None = None
+    plan_only: bool = False
+
+
+def solve_options(study: Study, overrides: Overrides, workers: int) -> SolveOptions:
+    """Options in force."""
+    settings = study.settings
+
+    def pick(value: float | None, setting: float) -> float:
+        return setting if value is None else value
+
+    return SolveOptions(
+        method=overrides.method,
+        gap_target_frac=pick(overrides.gap_frac, settings.gap_target_frac),
+        time_limit_h=pick(overrides.time_limit_h, settings.time_limit_h),
+        samples=settings.samples,
+        seed=settings.random_seed if overrides.seed is None else overrides.seed,
+        workers=workers,
+    )
+
+
+def solve_study(
+    path: Path,
+    overrides: Overrides,
+    cores: int = 1,
+    on_progress: Callable[[Progress], None] | None = None,
+    should_stop: Callable[[], bool] | None = None,
+) -> StudyResult:
+    """Reads, checks and solves a study.
+
+    Parameters
+    ----------
+    path : Path
+    overrides : Overrides
+    cores : int, processes to use where ``overrides`` names no number
+    on_progress : told about every step
+    should_stop : asked now and then; True ends the search with the best plan so far
+
+    Returns
+    -------
+    StudyResult
+
+    Raises StudyError with every finding if the study cannot be used as it is.
+    """
+    begin = time.monotonic()
+    started_at = datetime.datetime.now().strftime("%Y-%m-%d %H:%M")
+    tell = on_progress or (lambda _: None)
+    tell(Progress("", "reading"))
+    checked = read_study(path)
+    if not checked.is_usable or checked.study is None or checked.feeder is None:
+        raise StudyError("The study cannot be used as it is.", checked.findings)
+    findings = list(checked.findings)
+    if checked.study.alternatives and not overrides.plan_only:
+        findings.append(_unsolved_alternatives(checked.study))
+    read = time.monotonic()
+    workers = overrides.workers or useful_workers(checked.windows, cores)
+    options = solve_options(checked.study, overrides, workers)
+    solver = StandingAlternatives(
+        checked.study, checked.feeder, checked.windows, options, on_progress, should_stop
+    )
+    try:
+        plans = solver.solve()
+    finally:
+        solver.close()
+    return assemble(
+        checked.study,
+        checked.raw,
+        checked.windows,
+        options,
+        plans,
+        findings,
+        started_at,
+        read - begin,
+        time.monotonic() - read,
+    )
+
+
+FEW_SUBPROBLEMS = 2000
+"""With fewer subproblems per pass, starting further processes takes longer than it saves."""
+
+
+def useful_workers(windows: tuple[WindowModel, ...], cores: int) -> int:
+    """Processes worth starting."""
+    work = sum(window.series.n_period * len(window.scenarios) for window in windows)
+    return 1 if work < FEW_SUBPROBLEMS else cores
+
+
+def _unsolved_alternatives(study: Study) -> Finding:
+    """Says what this version leaves out."""
+    first = study.alternatives[0].origin
+    return Finding(
+        level=Level.NOTE,
+        code=Code.NOT_USED,
+        sheet=first.sheet,
+        cell=first.cell("alternative"),
+        key="alternative",
+        value=study.alternatives[0].alternative,
+        message="Alternatives of your own, device changes and sensitivities are checked, but this "
+        "version solves the three standing alternatives only.",
+    )
+
+
+def write_answer(
+    result: StudyResult, study_path: Path, results_path: Path, json_path: Path | None, force: bool
+) -> Path:
+    """Writes the results workbook and the JSON twin.
+
+    Parameters
+    ----------
+    result : StudyResult
+    study_path : Path, never written to
+    results_path : Path asked for
+    json_path : Path or None
+    force : bool, replace a results workbook that is there
+
+    Returns
+    -------
+    Path of the workbook written: the next free name where the one asked for is taken
+    """
+    begin = time.monotonic()
+    written = write_results(result, results_path, force, study_path)
+    result = replace(result, write_seconds=time.monotonic() - begin)
+    if json_path is not None:
+        write_json(result, json_path)
+    return written
+
+
+__all__ = [
+    "CheckedInput",
+    "Overrides",
+    "check_target",
+    "read_study",
+    "solve_study",
+    "write_answer",
+]
