@@ -13,6 +13,11 @@ from tests.builders import (
     small_study,
     tree_periods,
 )
+from xlplan.base.errors import Level
+from xlplan.network.feeder import build_feeder
+from xlplan.network.no_load_voltage import check_no_load_voltage
+from xlplan.network.topology import check_radial
+from xlplan.outages.window_model import build_window_models
 from xlplan.study.study import Study
 from xlplan.study.windows import build_window_series
 
@@ -67,6 +72,21 @@ def test_random_study_is_valid(seed: int) -> None:
     assert set(by_line) <= names
     classes = {c.outage_class for c in study.outage_classes}
     assert {line.outage_class for line in study.lines} - {None} <= classes
+
+
+@pytest.mark.parametrize("seed", SEEDS)
+def test_checks_of_the_feeder_find_no_fault(seed: int) -> None:
+    """Radial, and no-load voltages inside both bands in every stage of every scenario."""
+    study = random_study(seed)
+    feeder = build_feeder(study)
+    windows = build_window_models(study, feeder)
+    scenarios = {
+        record.window: window.scenarios
+        for record, window in zip(study.windows, windows, strict=True)
+    }
+    assert all(window.scenarios for window in windows)
+    found = check_radial(study) + check_no_load_voltage(study, feeder, scenarios)
+    assert not [finding for finding in found if finding.level is Level.FAULT]
 
 
 def test_seeds_use_every_feature_together() -> None:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import argparse
 import ast
 import doctest
 import importlib
@@ -9,6 +10,8 @@ import re
 from pathlib import Path
 
 import pytest
+
+from xlplan.cli import build_parser
 
 ROOT = Path(__file__).resolve().parent.parent
 FILES = sorted((ROOT / "xlplan").rglob("*.py"))
@@ -97,7 +100,9 @@ def area(width, height):
     assert not parameter_faults(ast.parse(source.replace("depth", "height")))
 
 
-@pytest.mark.parametrize("module", [*MODULES, "tests.builders", "tests.random_studies", "tests.test_docs"])
+@pytest.mark.parametrize(
+    "module", [*MODULES, "tests.builders", "tests.random_studies", "tests.test_docs"]
+)
 def test_examples_in_docstrings_run(module: str) -> None:
     assert doctest.testmod(importlib.import_module(module)).failed == 0
 
@@ -119,6 +124,36 @@ def test_readme_names_no_module_and_starts_with_two_commands() -> None:
     assert "xlplan solve demo.xlsx" in commands[0]
     assert "pytest" in commands[1]
     assert not re.search(r"\w+\.py\b|xlplan\.\w+", re.sub(r"xlplan\.xlsx", "", text))
+
+
+def test_readme_mentions_only_options_that_exist() -> None:
+    text = (ROOT / "README.md").read_text("utf-8")
+    parser = build_parser()
+    known = {option for action in _actions(parser) for option in action.option_strings}
+    mentioned = set(re.findall(r"(?<![-\w])--[a-z][a-z-]*", text))
+    assert mentioned
+    assert mentioned <= known, mentioned - known
+
+
+def _actions(parser: argparse.ArgumentParser) -> list[argparse.Action]:
+    """Options of a parser and of all its commands."""
+    actions = list(parser._actions)
+    for action in parser._actions:
+        if isinstance(action, argparse._SubParsersAction):
+            for command in action.choices.values():
+                actions += _actions(command)
+    return actions
+
+
+def test_files_named_for_developers_exist() -> None:
+    text = (ROOT / "DEVELOPERS.md").read_text("utf-8")
+    named = {name for name in re.findall(r"`([\w/.]+\.py)`", text) if "*" not in name}
+    all_files = [
+        f.relative_to(ROOT).as_posix() for f in ROOT.rglob("*.py") if ".venv" not in f.parts
+    ]
+    missing = [name for name in named if not any(f"/{f}".endswith(f"/{name}") for f in all_files)]
+    assert named
+    assert not missing, missing
 
 
 def test_every_module_says_what_it_is() -> None:

@@ -42,7 +42,6 @@ OWNERS = {
         "workbook/*reader.py",
         "workbook/sheet_facts.py",
         "workbook/triage.py",
-        "workbook/marking.py",
     ),
     "defusedxml": ("workbook/*",),
     "jsonschema": ("schema/*", "workbook/*"),

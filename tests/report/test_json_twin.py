@@ -86,7 +86,8 @@ def test_keys_are_those_of_the_contract(result: StudyResult) -> None:
 
 def test_values(result: StudyResult) -> None:
     document = json_document(result)
-    assert document["schema"] == 1 and document["study"] == "=1+1"
+    assert document["schema"] == 1
+    assert document["study"] == "=1+1"
     best = document["alternatives"][2]
     assert best["name"] == document["recommended"] == "Least-cost plan"
     assert best["gap_pct"] == pytest.approx(0.8)
@@ -94,11 +95,14 @@ def test_values(result: StudyResult) -> None:
     assert sum(parts) == pytest.approx(best["annual_cost"]["total"], abs=0.005)
     bought = {one["asset"]: one for one in best["purchases"]}
     assert len(bought) == 5
-    assert bought["BAT-NORTH"]["bought"] is True and bought["BAT-NORTH"]["kwh"] == 1261.5
-    assert bought["BAT-SOUTH"]["bought"] is False and bought["BAT-SOUTH"]["kw"] == 0.0
+    assert bought["BAT-NORTH"]["bought"] is True
+    assert bought["BAT-NORTH"]["kwh"] == 1261.5
+    assert bought["BAT-SOUTH"]["bought"] is False
+    assert bought["BAT-SOUTH"]["kw"] == 0.0
     assert {one["type"] for one in best["purchases"]} == {"storage", "generator", "hardening"}
     naive = document["alternatives"][1]
-    assert naive["lower_bound"] is None and naive["gap_pct"] is None
+    assert naive["lower_bound"] is None
+    assert naive["gap_pct"] is None
     assert document["hardening"] == document["voltages"] == []
 
 
@@ -109,9 +113,11 @@ def test_numbers_that_are_not_known_are_null(result: StudyResult, tmp_path: Path
     odd = dataclasses.replace(result, plans=(*result.plans[:2], plan))
     write_json(odd, tmp_path / "out.json")
     text = (tmp_path / "out.json").read_text(encoding="utf-8")
-    assert "NaN" not in text and "Infinity" not in text
+    assert "NaN" not in text
+    assert "Infinity" not in text
     read = json.loads(text)["alternatives"][2]
-    assert read["gap_pct"] is None and read["cost_interval"] == [1.0, None]
+    assert read["gap_pct"] is None
+    assert read["cost_interval"] == [1.0, None]
 
 
 def test_replaces_in_one_step(

@@ -114,7 +114,8 @@ def test_a_wrong_stored_value_would_be_seen(
     books: dict[str, Path], recalculated: dict[str, Any]
 ) -> None:
     found = differences(books["planted"], recalculated["planted"])
-    assert len(found) == 1 and "999" in found[0]
+    assert len(found) == 1
+    assert "999" in found[0]
 
 
 def test_no_interest(books: dict[str, Path], recalculated: dict[str, Any]) -> None:

@@ -72,10 +72,13 @@ def test_sheets_are_these_and_no_others(workbook_path: Path) -> None:
     assert formulas.sheetnames == SHEETS
     assert all(sheet.sheet_state == "visible" for sheet in formulas)
     for sheet in formulas:
-        assert sheet["A1"].value and sheet["A2"].value
-        assert sheet.print_area and sheet.page_setup.paperSize
+        assert sheet["A1"].value
+        assert sheet["A2"].value
+        assert sheet.print_area
+        assert sheet.page_setup.paperSize
         assert sheet.sheet_properties.pageSetUpPr.fitToPage
-        assert sheet.page_setup.orientation == "landscape" and sheet.oddFooter.right.text
+        assert sheet.page_setup.orientation == "landscape"
+        assert sheet.oddFooter.right.text
     # The format leaves out a height of one page; 0 is as many as it takes.
     assert formulas["Summary"].page_setup.fitToHeight in (None, 1)
     assert formulas["Operation"].page_setup.fitToHeight == 0
@@ -105,13 +108,15 @@ def test_user_text_is_never_a_formula(workbook_path: Path) -> None:
                     seen += 1
                     assert cell.data_type == "s", f"{sheet.title}!{cell.coordinate}"
                 if cell.hyperlink is not None:
-                    assert cell.hyperlink.location and not cell.hyperlink.target
+                    assert cell.hyperlink.location
+                    assert not cell.hyperlink.target
     assert seen > 10
     with zipfile.ZipFile(workbook_path) as package:
         charts = [n for n in package.namelist() if n.startswith("xl/charts/chart")]
         for name in charts:
             found = re.findall(r"<c:f>(.*?)</c:f>", package.read(name).decode())
-            assert found and all("1+1" not in formula for formula in found)
+            assert found
+            assert all("1+1" not in formula for formula in found)
 
 
 def test_parts_totals_and_twin_agree(workbook_path: Path, result: StudyResult) -> None:
@@ -176,8 +181,10 @@ def test_plan_sheet(workbook_path: Path) -> None:
     plan = values["Plan"]
     totals = table(plan, "Alternative")
     best = totals[2]
-    assert best["Storage power (kW)"] == 420.5 and best["Storage energy (kWh)"] == 1261.5
-    assert best["Generation (kW)"] == 250.0 and best["Hardening measures (number)"] == 1
+    assert best["Storage power (kW)"] == 420.5
+    assert best["Storage energy (kWh)"] == 1261.5
+    assert best["Generation (kW)"] == 250.0
+    assert best["Hardening measures (number)"] == 1
     assert totals[3]["Device changes: capital (crowns)"] == pytest.approx(18_000.0)
     assert totals[0]["Capital after grants (crowns)"] == 0
     factors = {
@@ -191,7 +198,8 @@ def test_plan_sheet(workbook_path: Path) -> None:
 def test_checks_pass_and_fail(workbook_path: Path, tmp_path: Path, result: StudyResult) -> None:
     _, values = read(workbook_path)
     rows = table(values["Checks"], "About")
-    assert {row["Result"] for row in rows} == {"PASS"} and len(rows) > 25
+    assert {row["Result"] for row in rows} == {"PASS"}
+    assert len(rows) > 25
     assert values["Checks"]["B4"].value == "PASS: all checks agree"
     # A bus whose unserved energy is wrong, and history beyond its tolerance.
     best = result.plans[2]
@@ -224,10 +232,19 @@ def test_checks_pass_and_fail(workbook_path: Path, tmp_path: Path, result: Study
     }
     assert outcome["Least-cost plan", "Total of the Alternatives sheet"] == "FAIL"
     assert outcome["Least-cost plan", "Capital after grants"] == "PASS"
+    # A total outside its own interval.
+    off = dataclasses.replace(best, cost_interval=(best.costs.total + 1e4, best.costs.total + 2e4))
+    outside = dataclasses.replace(result, plans=(*result.plans[:2], off, result.plans[3]))
+    _, values = read(write_results(outside, tmp_path / "i.xlsx", False, tmp_path / "s.xlsx"))
+    rows = table(values["Checks"], "About")
+    assert [(r["About"], r["Check"]) for r in rows if r["Result"] == "FAIL"] == [
+        ("Least-cost plan", "Total lies in its 95 % interval")
+    ]
     nan = dataclasses.replace(result, checks=(dataclasses.replace(history, left=float("nan")),))
     _, values = read(write_results(nan, tmp_path / "n.xlsx", False, tmp_path / "s.xlsx"))
     row = table(values["Checks"], "About")[0]
-    assert row["First figure"] == "not computed" and row["Result"] == "LOOK"
+    assert row["First figure"] == "not computed"
+    assert row["Result"] == "LOOK"
 
 
 def test_sections_add_up(workbook_path: Path, result: StudyResult) -> None:

@@ -97,6 +97,7 @@ ONE_CHANGE = [
     ("Storage curves!C4", 101, FAULT, Code.CURVE_GAINS, "Storage curves!C4"),
     ("Storage curves!C2", -90, FAULT, Code.CURVE_GAINS, "Storage curves!C2"),
     ("Storage curves!B2", 92, FAULT, Code.CURVE_ONE_SIDED, "Storage curves!B2"),
+    ("Storage curves!C3", -2, FAULT, Code.CURVE_ORIGIN, "Storage curves!C3"),
     ("Storage curves!B4", 50, FAULT, Code.ROW_TWICE, "Storage curves!B4"),
     ("Outage assumptions!D2", 0, FAULT, Code.OUT_OF_BOUNDS, "Outage assumptions!D2"),
     ("Outage assumptions!C2", 400, WARNING, Code.UNLIKELY_VALUE, "Outage assumptions!C2"),
@@ -246,6 +247,16 @@ def test_every_fault_of_several_is_found_in_one_pass() -> None:
         ("source voltage", "Settings!B5"),
         ("not whole periods", "Windows!D2"),
     }
+
+
+def test_very_many_unknown_names_are_cut_short_and_counted() -> None:
+    raw = raw_study()
+    for _ in range(70):
+        raw = with_copied_row(raw, "Neighbour supplies", 2, bus="nowhere")
+    _, findings = check_and_build(raw)
+    unknown = [finding for finding in findings if finding.code == Code.UNKNOWN_NAME]
+    assert len(unknown) == 50
+    assert "20 other cells" in unknown[-1].message
 
 
 def test_findings_come_in_workbook_order() -> None:

@@ -201,7 +201,11 @@ SHAPES = [
     (_two_sheets, FAULT, "sheet twice", "Lines!"),
     (_set("Profiles", F1="day"), NOTE, "column ignored", "Profiles!F1"),
     (_set("Profiles", F1="Day", F2=1), FAULT, "heading twice", "Profiles!F1"),
-    (_set("Profiles", G5=1), FAULT, "profile without name", "Profiles!G1"),
+    (_set("Profiles", F5=1), FAULT, "profile without name", "Profiles!F1"),
+    (_set("Profiles", G1="sums", G5=1), NOTE, "column ignored", "Profiles!G1"),
+    (_set("Profiles", F1="=A1", F5=1), FAULT, "formula not calculated", "Profiles!F1"),
+    (_set("Lines", D1="#REF!"), FAULT, "excel error", "Lines!D1"),
+    (_set("Loads", C2="Homes\nof us"), FAULT, "unknown name", "Loads!C2"),
     (_set("Profiles", F1="half", F2=1), FAULT, "blank", "Profiles!F3"),
     (_set("Lines", D2="#N/A"), FAULT, "excel error", "Lines!D2"),
     (_set("Lines", D2="2.0"), NOTE, "text number", "Lines!D2"),
@@ -225,7 +229,7 @@ def test_shapes(tmp_path: Path, change: object, level: Level, code: str, cell: s
     study, findings = check_file(tmp_path, change)  # type: ignore[arg-type]
     assert (code, cell) in places(findings, level)
     assert (study is None) == bool(places(findings, FAULT))
-    assert all(f.sheet and f.message for f in findings)
+    assert all(f.sheet and f.message and "\n" not in f.text() for f in findings)
 
 
 def test_merged_cells_beside_or_above_the_table_are_left_alone(tmp_path: Path) -> None:

@@ -301,7 +301,9 @@ class StandingAlternatives:
         attach_meters(graph, self.windows)
         with Engine(graph.graph, self.options.seed, self.options.workers) as engine:
             found = engine.run(
-                BLIND_GAP, deadline=started + limit_s * (1.0 - RESERVE), should_stop=self.should_stop
+                BLIND_GAP,
+                deadline=started + limit_s * (1.0 - RESERVE),
+                should_stop=self.should_stop,
             )
             if not found.has_plan:
                 raise NoPlanError(f"Stopped before there was a plan for '{name}'.")

@@ -123,9 +123,7 @@ class FollowResult:
     def difference_half_width(self, other: FollowResult) -> float:
         """Half of the 95 % interval of the difference of two costs, on the same histories."""
         variance = 0.0
-        for n, mine, theirs in zip(
-            self.occurrences, self.windows, other.windows, strict=True
-        ):
+        for n, mine, theirs in zip(self.occurrences, self.windows, other.windows, strict=True):
             if len(mine.sample_cost) == len(theirs.sample_cost) and len(mine.sample_cost) > 1:
                 paired = mine.sample_cost - theirs.sample_cost
                 variance += n**2 * float(paired.var(ddof=1)) / len(paired)
@@ -225,8 +223,7 @@ class Follower:
         first = clock.survival[:-1, None] * clock.failure_chance[:, None] * clock.scenario_chance
         pairs = np.argwhere(first > 0.0)
         requests = [
-            self.event_request(i_window, int(w), int(k), plan.states[k], capacity)
-            for k, w in pairs
+            self.event_request(i_window, int(w), int(k), plan.states[k], capacity) for k, w in pairs
         ]
         solutions = self.service.solve_nodes(requests, read_solution)
         events = np.zeros((n_period, n_scenario, slots.n_slot))

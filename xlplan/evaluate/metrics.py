@@ -220,9 +220,7 @@ def event_metrics(
         normal_supply = series.price_per_kwh[rows] * load * dt
         out[slots.single("energy")] -= normal_supply[beyond].sum()
     if period[-1] + 1 >= n_window:
-        out[slots.single("end_of_window")] = end_cost(
-            context, dispatch.energy_kwh[-1], storage_kwh
-        )
+        out[slots.single("end_of_window")] = end_cost(context, dispatch.energy_kwh[-1], storage_kwh)
     out[slots.single("burnt_kwh")] = burnt_kw(context, dispatch, storage_kw).sum() * dt
     out[slots.single("repair")] = scenario.repair_cost[failure_period]
     shed = dispatch.shed_kw

@@ -153,9 +153,7 @@ def audit_operation(
         else:
             service = list(window.scenarios[item.i_scenario].service)
             start = item.failure_period + 1
-            before = state_after(
-                plans[item.i_window].dispatch, item.failure_period, window.normal
-            )
+            before = state_after(plans[item.i_window].dispatch, item.failure_period, window.normal)
         found += audit_dispatch(
             study,
             feeder,
@@ -211,5 +209,3 @@ def tree_operation(
     traces = make_traces(study, windows, feeder, operated, storage_kwh)
     violations = [v for _, v in audit_tree(study, feeder, windows, bought, segments)]
     return traces, (audit_line(violations, len(segments)),)
-
-

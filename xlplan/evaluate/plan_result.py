@@ -142,9 +142,7 @@ def build_plan_result(
     return replace(result, checks=(*checks, *audit))
 
 
-def _without_storms_and_bulk(
-    windows: Sequence[WindowModel], follow: FollowResult
-) -> FloatArray:
+def _without_storms_and_bulk(windows: Sequence[WindowModel], follow: FollowResult) -> FloatArray:
     """Yearly metrics without storm windows and without loss of the bulk supply."""
     total = np.zeros(follow.slots.n_slot)
     for window, result, n in zip(windows, follow.windows, follow.occurrences, strict=True):
@@ -324,7 +322,9 @@ def plan_checks(
             costs.interruption,
             float(
                 follow.occurrences
-                @ np.array([w.metrics[slots.single("interruption_own_clock")] for w in follow.windows])
+                @ np.array(
+                    [w.metrics[slots.single("interruption_own_clock")] for w in follow.windows]
+                )
             ),
             0.05 * max(1.0, abs(costs.interruption)),
             is_warning=True,

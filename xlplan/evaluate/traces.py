@@ -98,7 +98,9 @@ def describe_stages(study: Study, feeder: Feeder, scenario: Scenario) -> tuple[s
         if ties:
             parts.append("closed: " + ", ".join(ties))
         for island in stage.islands:
-            parts.append("cut off from every supply: " + ", ".join(feeder.bus_ids[i] for i in island))
+            parts.append(
+                "cut off from every supply: " + ", ".join(feeder.bus_ids[i] for i in island)
+            )
         if not parts:
             parts.append("everything is supplied")
         lines.append(f"{stage.name} ({stage.n_period} periods): " + "; ".join(parts))

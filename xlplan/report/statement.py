@@ -214,4 +214,35 @@ STATEMENT = (
             ),
         ),
     ),
+    Block(
+        "Behind the figures",
+        (
+            Line(
+                "demand_kw",
+                "Grid purchase that the demand charge is on",
+                "Highest of the first plans of the windows that count for demand",
+                unit="kW",
+                look="power",
+            ),
+            Line(
+                "shed_kwh",
+                "Energy shed in normal service",
+                "A planning violation where above 0: the feeder cannot carry its load",
+                unit="kWh/year",
+                look="energy",
+            ),
+            Line(
+                "burnt_kwh",
+                "Energy burnt in the loss curves",
+                "Stored energy thrown away by the relaxed loss curves; should be small",
+                unit="kWh/year",
+                look="energy",
+            ),
+            Line(
+                "own_clock",
+                "Interruption cost on each load's own clock",
+                "Priced from each load group's own start, not from the start of the outage event",
+            ),
+        ),
+    ),
 )

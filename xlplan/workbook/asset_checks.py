@@ -211,6 +211,15 @@ def _curve(rows: list[CheckedRow]) -> Iterator[Finding]:
                 "the curve must go through 0 and 0.",
                 "Give 0 here, or delete the row: standing losses are left out.",
             )
+        elif store > 0 and terminal < 0:
+            is_physical = False
+            yield fault(
+                row,
+                Code.CURVE_ORIGIN,
+                "terminal_power_pct",
+                f"{store:g} drawn from the store would take {-terminal:g} at the terminal.",
+                "Give what comes out, 0 or more: standing losses are left out.",
+            )
     for sign, what in ((1, "discharging (above 0)"), (-1, "charging (below 0)")):
         if not any(store * sign > 0 for store, _ in points):
             is_physical = False

@@ -12,7 +12,7 @@ from xlplan.base.errors import Finding
 from xlplan.workbook.asset_checks import check_assets
 from xlplan.workbook.checked_study import CheckedStudy
 from xlplan.workbook.feeder_checks import check_feeder
-from xlplan.workbook.field_checks import CheckedTable
+from xlplan.workbook.field_checks import CheckedTable, shorten
 from xlplan.workbook.names import resolve_names
 from xlplan.workbook.plan_checks import check_plans
 from xlplan.workbook.time_checks import check_times
@@ -34,4 +34,4 @@ def check_across(tables: Mapping[str, CheckedTable]) -> tuple[CheckedStudy, list
     findings += check_assets(study)
     findings += check_times(study)
     findings += check_plans(study)
-    return study, findings
+    return study, shorten(findings)

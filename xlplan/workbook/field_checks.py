@@ -112,7 +112,7 @@ def check_table(table: Table, schema: Sheet) -> tuple[CheckedTable, list[Finding
                 "At least one is needed.",
             )
         )
-    return CheckedTable(table, schema, tuple(rows)), _shorten(findings)
+    return CheckedTable(table, schema, tuple(rows)), shorten(findings, n_note=1)
 
 
 def _check_row(row: Row, fields: list[Field]) -> tuple[CheckedRow, list[Finding]]:
@@ -239,22 +239,30 @@ def _fraction_of_a_percent(cell: Cell, field: Field, value: float) -> Finding | 
     )
 
 
-def _shorten(findings: list[Finding]) -> list[Finding]:
-    """Findings of one kind in one column, so many of them that the first few say it all.
+def shorten(findings: list[Finding], n_note: int = MOST_OF_A_KIND) -> list[Finding]:
+    """Findings without the many that say the same of one column.
 
-    One note stands for all notes of its kind; of faults and warnings the first fifty are kept.
+    Parameters
+    ----------
+    findings : list of Finding
+    n_note : how many notes of one kind about one column are kept; of faults and warnings
+        ``MOST_OF_A_KIND`` are
+
+    Returns
+    -------
+    list of Finding; the last of a kind that is kept says how many more there are
     """
     kept: list[Finding] = []
-    last: dict[tuple[Level, str, str], int] = {}
-    count: dict[tuple[Level, str, str], int] = {}
+    last: dict[tuple[str, Level, str, str], int] = {}
+    count: dict[tuple[str, Level, str, str], int] = {}
     for finding in findings:
-        kind = (finding.level, finding.code, finding.key)
+        kind = (finding.sheet, finding.level, finding.code, finding.key)
         count[kind] = count.get(kind, 0) + 1
-        if count[kind] <= (1 if finding.level is Level.NOTE else MOST_OF_A_KIND):
+        if count[kind] <= (n_note if finding.level is Level.NOTE else MOST_OF_A_KIND):
             last[kind] = len(kept)
             kept.append(finding)
     for kind, position in last.items():
-        n_more = count[kind] - (1 if kind[0] is Level.NOTE else MOST_OF_A_KIND)
+        n_more = count[kind] - (n_note if kind[1] is Level.NOTE else MOST_OF_A_KIND)
         if n_more > 0:
             others = f"{n_more} other cell{'s' if n_more > 1 else ''}"
             finding = kept[position]

@@ -6,6 +6,7 @@ spelling of the row they mean, and findings. Names are compared folded (``foldin
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Iterator, Mapping
 from dataclasses import replace
 
@@ -14,7 +15,7 @@ from xlplan.base.errors import Finding
 from xlplan.base.names import EXISTING, IGNORING_OUTAGES, LEAST_COST
 from xlplan.schema.fields import Field, Kind
 from xlplan.workbook.checked_study import CheckedStudy, fault, note, warning
-from xlplan.workbook.field_checks import CheckedRow, CheckedTable
+from xlplan.workbook.field_checks import MOST_OF_A_KIND, CheckedRow, CheckedTable
 from xlplan.workbook.folding import did_you_mean, fold
 
 ASSET_SHEETS = ("Generators", "Storage", "Hardening")
@@ -50,8 +51,9 @@ def resolve_names(study: CheckedStudy) -> tuple[CheckedStudy, list[Finding]]:
             tables[sheet] = table
             continue
         rows = []
+        n_unknown: Counter[str] = Counter()
         for row in table.rows:
-            resolved, found = _resolve_row(row, fields, names, profiles)
+            resolved, found = _resolve_row(row, fields, names, profiles, n_unknown)
             rows.append(resolved)
             findings += found
         tables[sheet] = replace(table, rows=tuple(rows))
@@ -92,6 +94,7 @@ def _resolve_row(
     fields: list[Field],
     names: Mapping[str, Mapping[str, str]],
     profiles: Mapping[str, str],
+    n_unknown: Counter[str],
 ) -> tuple[CheckedRow, list[Finding]]:
     values, faulty = dict(row.values), set(row.faulty)
     findings: list[Finding] = []
@@ -105,7 +108,11 @@ def _resolve_row(
         for part in parts:
             name = known.get(fold(part))
             if name is None:
-                findings.append(_about_unknown(row, field, part, list(known.values())))
+                n_unknown[field.key] += 1
+                # So many have one cause, and comparing each with every name would take long.
+                has_few = n_unknown[field.key] <= MOST_OF_A_KIND
+                offered = list(known.values()) if has_few else []
+                findings.append(_about_unknown(row, field, part, offered))
                 faulty.add(field.key)
                 continue
             if name != part:

@@ -123,6 +123,9 @@ def _match_columns(
     columns: dict[str, int] = {}
     others: list[tuple[int, Cell]] = []
     for column, cell in sorted(grid.rows[header_row].items()):
+        if cell.is_uncalculated or cell.is_error:
+            findings.append(_about_unreadable_heading(cell))
+            continue
         found = field_of_heading(cell.typed, schema.fields)
         if found is None:
             others.append((column, cell))
@@ -151,6 +154,14 @@ def _match_columns(
     return columns
 
 
+def _about_unreadable_heading(cell: Cell) -> Finding:
+    code = Code.FORMULA_NOT_CALCULATED if cell.is_uncalculated else Code.EXCEL_ERROR
+    what = "a formula that was never calculated" if cell.is_uncalculated else cell.typed
+    return finding_at(
+        cell, Level.FAULT, code, "", f"this heading holds {what}.", "Type the heading as text."
+    )
+
+
 def _about_double(cell: Cell, key: str, first_column: int, header_row: int) -> Finding:
     first = f"{get_column_letter(first_column)}{header_row}"
     return finding_at(
@@ -171,15 +182,34 @@ def _profile_columns(
     columns: dict[str, int],
     findings: list[Finding],
 ) -> dict[str, int]:
-    """Columns under headings of the user's own that hold at least one number."""
+    """Columns under headings of the user's own, next to the others, that hold any number.
+
+    A column without a heading ends the table; what stands beyond it is the user's own.
+    """
     profiles: dict[str, int] = {}
     spelling: dict[str, str] = {}
-    named = {column for column, _ in others} | set(columns.values())
+    named = {column for column, cell in others if not is_blank(cell)} | set(columns.values())
+    first = last = columns.get("time", min(named, default=1))
+    while first - 1 in named:
+        first -= 1
+    while last + 1 in named:
+        last += 1
     below = [number for number in grid.rows if number > header_row]
     assert schema.other_columns is not None
     for column, cell in others:
         name = clean(cell.typed)
-        if not _has_number(grid, below, column, schema.other_columns):
+        if not first <= column <= last:
+            if not is_blank(cell):
+                findings.append(
+                    finding_at(
+                        cell,
+                        Level.NOTE,
+                        Code.COLUMN_IGNORED,
+                        "",
+                        f"'{name}' stands apart from the table and is not used as a profile.",
+                    )
+                )
+        elif not _has_number(grid, below, column, schema.other_columns):
             findings.append(
                 finding_at(
                     cell,
@@ -190,8 +220,8 @@ def _profile_columns(
                 )
             )
         elif fold(name) in spelling:
-            first = profiles[spelling[fold(name)]]
-            findings.append(_about_double(cell, name, first, header_row))
+            other = profiles[spelling[fold(name)]]
+            findings.append(_about_double(cell, name, other, header_row))
         else:
             profiles[name] = column
             spelling[fold(name)] = name
@@ -200,7 +230,8 @@ def _profile_columns(
             column
             for number in below
             for column, cell in grid.rows[number].items()
-            if column not in named and read_value(cell, schema.other_columns).value is not None
+            if column in (first - 1, last + 1)
+            and read_value(cell, schema.other_columns).value is not None
         }
     )
     for column in nameless:

@@ -16,6 +16,12 @@ from xlplan.base.errors import Finding, Level, Origin
 _LITERAL = re.compile(r'"[^"]*"|\\.')
 """Parts of a number format that are shown as they stand and scale nothing, such as 0"%"."""
 
+_CONTROL = re.compile(r"[\x00-\x1f\x7f-\x9f\u2028\u2029]+")
+"""Line breaks, and codes that would move a terminal's cursor."""
+
+LONGEST_MESSAGE = 400
+"""A cell may hold 32767 characters; this is enough of them to recognise it."""
+
 
 @dataclass(frozen=True)
 class Cell:
@@ -107,5 +113,19 @@ class RawStudy:
 def finding_at(
     cell: Cell, level: Level, code: str, key: str, message: str, hint: str = ""
 ) -> Finding:
-    """A finding about one cell."""
-    return Finding(level, code, cell.sheet, cell.address, key, cell.typed, message, hint)
+    """A finding about one cell; what was typed there never breaks its one line."""
+    return Finding(
+        level,
+        code,
+        cell.sheet,
+        cell.address,
+        key,
+        cell.typed,
+        _one_line(message),
+        _one_line(hint),
+    )
+
+
+def _one_line(text: str) -> str:
+    line = _CONTROL.sub(" ", text)
+    return line if len(line) <= LONGEST_MESSAGE else f"{line[:LONGEST_MESSAGE]}..."

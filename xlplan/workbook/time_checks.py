@@ -9,6 +9,7 @@ from collections.abc import Iterator
 
 from xlplan.base.codes import Code
 from xlplan.base.errors import Finding
+from xlplan.base.hull import upper_hull
 from xlplan.base.units import (
     HOURS_PER_YEAR,
     frac_from_pct,
@@ -18,6 +19,7 @@ from xlplan.base.units import (
 )
 from xlplan.workbook.checked_study import CheckedStudy, fault, warning
 from xlplan.workbook.field_checks import CheckedRow
+from xlplan.workbook.folding import fold
 from xlplan.workbook.profile_rows import (
     TIME_TOLERANCE_H,
     ProfileRows,
@@ -257,14 +259,15 @@ def _stored_energy_price(
 
 def _charging_efficiency(study: CheckedStudy, unit: CheckedRow) -> float:
     """Share of the energy taken in that is stored, at the worst charging point."""
-    curve = unit.text("curve")
-    shares = []
+    name = unit.text("curve")
+    points = [(0.0, 0.0)]
     for row in study.rows("Storage curves"):
         store, terminal = row.number("store_power_pct"), row.number("terminal_power_pct")
-        if row.text("curve") != curve or store is None or terminal is None:
+        if name is None or fold(row.text("curve") or "") != fold(name):
             continue
-        if store < 0 and terminal <= store:
-            shares.append(store / terminal)
+        if store is not None and terminal is not None and terminal <= store:
+            points.append((store, terminal))
+    shares = [store / terminal for store, terminal in upper_hull(points) if store < 0]
     if shares:
         return min(shares)
     round_trip = unit.number("round_trip_efficiency_pct")

@@ -29,7 +29,7 @@ CENT = 0.005
 """Half a cent: money that is equal to a cent."""
 
 RELATIVE = 1e-6
-"""Sums of energy: far above rounding of sums, far below what a reader could see."""
+"""Share by which sums may differ: far above rounding, far below what a reader could see."""
 
 
 @dataclass(frozen=True)
@@ -79,7 +79,7 @@ def write(
     )
     sheet.text(OVERALL_ROW, 0, "Overall", "status")
     sheet.formula(OVERALL_ROW, OVERALL_COL, text, words, "status")
-    sheet.status_fill(OVERALL_ROW, OVERALL_ROW, OVERALL_COL, OVERALL_COL)
+    sheet.status_fill(OVERALL_ROW, OVERALL_ROW, OVERALL_COL, OVERALL_COL + 1)
     col = grid.col("outcome")
     sheet.status_fill(grid.row(0), grid.row(len(lines) - 1), col, col)
     sheet.freeze(grid.top + 1, 2)
@@ -177,6 +177,19 @@ def _money_lines(result: StudyResult, cells: AlternativesCells) -> list[_Line]:
                 plan.difference,
                 plan.costs.total - baseline(result).costs.total,
                 CENT,
+                FAIL,
+            )
+        )
+        low, high = plan.cost_interval
+        rounding = max(CENT, RELATIVE * abs(plan.costs.total))
+        lines.append(
+            _Line(
+                plan.name,
+                "Total lies in its 95 % interval",
+                "Sum of the cost parts, and the middle of the interval; allowed: half its width",
+                plan.costs.total,
+                (low + high) / 2.0,
+                (high - low) / 2.0 + rounding,
                 FAIL,
             )
         )
