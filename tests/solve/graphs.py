@@ -265,9 +265,7 @@ def air_conditioner_graph() -> ValueGraph:
     normal = builder.add_column(
         "normal", 0.0, float(rows["normal capacity"]), float(rows["normal cost"])
     )
-    overtime = builder.add_column(
-        "overtime", 0.0, 1000.0, float(rows["overtime cost (unlimited)"])
-    )
+    overtime = builder.add_column("overtime", 0.0, 1000.0, float(rows["overtime cost (unlimited)"]))
     builder.add_row(
         "stock", [(before, 1.0), (normal, 1.0), (overtime, 1.0), (after, -1.0)], 0.0, 0.0
     )
@@ -278,9 +276,7 @@ def air_conditioner_graph() -> ValueGraph:
         demands = [float(rows["demand month 1"])] if t == 0 else later
         exits = [] if t == 2 else [(0.5, (t + 1, i), None) for i in range(2)]
         members = [
-            make_member(
-                program, [before], exits, row_lower=np.array([d]), row_upper=np.array([d])
-            )
+            make_member(program, [before], exits, row_lower=np.array([d]), row_upper=np.array([d]))
             for d in demands
         ]
         families.append(family(f"month {t}", program, members, [-1], [[after]] * len(exits)))
@@ -301,6 +297,7 @@ def gate_graph(price_of_measure: float, damage: float = 10.0, chance: float = 0.
 
     Without it: ``chance * damage``; with it: its price, and the other child, whose value is 1.
     """
+
     def constant(name: str, value: float) -> ListFamily:
         builder = ProgramBuilder()
         builder.add_column("before", 0.0, 1.0)
@@ -369,17 +366,13 @@ def random_tree_graph(seed: int, n_stage: int = 4, n_branch: int = 2) -> ValueGr
                 )
             )
         outs = [after] * len(exits)
-        families.append(
-            family(f"stage {t}", program, members, [kwh, kw, -1], outs)
-        )
+        families.append(family(f"stage {t}", program, members, [kwh, kw, -1], outs))
     first = ProgramBuilder()
     first.add_column("kwh", 0.0, 10.0, 0.8)
     first.add_column("kw", 0.0, 10.0, 1.5)
     first.add_column("fixed", 0.0, 1.0, 4.0, is_integer=True)
     first.add_row("site", [(1, 1.0), (2, -10.0)], upper=0.0)
-    order = [
-        (t, i) for t in reversed(range(n_stage)) for i in range(len(families[t].members))
-    ]
+    order = [(t, i) for t in reversed(range(n_stage)) for i in range(len(families[t].members))]
     upper = np.array([[1.0, 0.0, 0.0], [0.0, 1.0, 0.0]])
     return graph(
         families,

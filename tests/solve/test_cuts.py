@@ -142,9 +142,7 @@ def test_lazy_rows_give_the_same_as_all_rows():
         whole = scipy.optimize.milp(
             member.cost,
             bounds=scipy.optimize.Bounds(low, high),
-            constraints=scipy.optimize.LinearConstraint(
-                matrix, member.row_lower, member.row_upper
-            ),
+            constraints=scipy.optimize.LinearConstraint(matrix, member.row_lower, member.row_upper),
         )
         assert outcome.value == pytest.approx(whole.fun, rel=1e-7, abs=1e-7)
         n_lazy_needed += int((matrix @ outcome.y > member.row_upper - 1e-7)[program.is_lazy].any())

@@ -294,7 +294,7 @@ class DualBound:
             group: int) -> CutBatch:  # fmt: skip
         """Cut of one member from multipliers ``pi`` of the program's rows, (n_row,)."""
         walk = _Walk(self, member, pi, exits)
-        return self._finish([walk.terms()], [i_member], group)
+        return self._finish([walk.terms()], [i_member], group, walk.size)
 
     def cuts_along(
         self,
@@ -314,9 +314,9 @@ class DualBound:
         for change in changes:
             walk.move(change)
             terms.append(walk.terms())
-        return self._finish(terms, list(range(i_member, i_member + len(terms))), group)
+        return self._finish(terms, list(range(i_member, i_member + len(terms))), group, walk.size)
 
-    def _finish(self, terms: list[_Terms], members: list[int], group: int) -> CutBatch:
+    def _finish(self, terms: list[_Terms], members: list[int], group: int, size: float) -> CutBatch:
         """Scales, moves small slopes into the intercept, lowers for rounding."""
         scale = np.array([t.scale for t in terms])
         intercept = np.array([t.intercept for t in terms])
@@ -324,7 +324,7 @@ class DualBound:
         capacity_slope = np.array([t.capacity_slope for t in terms])
         state_lower = np.array([t.state_lower for t in terms])
         state_upper = np.array([t.state_upper for t in terms])
-        shift = ROUNDING_SHIFT * max(t.size for t in terms)
+        shift = ROUNDING_SHIFT * size
         for slope, lower, upper in (
             (state_slope, state_lower, state_upper),
             (capacity_slope, self.capacity_lower, self.capacity_upper),
@@ -355,7 +355,6 @@ class _Terms:
     state_lower: FloatArray
     state_upper: FloatArray
     scale: float
-    size: float
 
 
 class _Walk:
@@ -371,14 +370,19 @@ class _Walk:
         self.col_lower, self.col_upper = member.col_lower.copy(), member.col_upper.copy()
         self.weight = member.exit_weight.copy()
         self.in_columns, self.offset, self.scale = member.in_columns, member.offset, member.scale
-        self.pi = _usable(pi, member.row_lower, member.row_upper)
-        self.row_term = _row_terms(self.pi, member.row_lower, member.row_upper)
-        used = np.flatnonzero(self.pi)
+        # Most lazy rows have no multiplier: only the others are kept.
+        self.rows = np.flatnonzero(pi)
+        self.pi = _usable(pi[self.rows], member.row_lower[self.rows], member.row_upper[self.rows])
+        self.row_term = _row_terms(
+            self.pi, member.row_lower[self.rows], member.row_upper[self.rows]
+        )
         self.d = self.cost.copy()
-        if len(used):
-            self.d -= matrix.transposed_times(used, self.pi[used])
+        if len(self.rows):
+            self.d -= matrix.transposed_times(self.rows, self.pi)
         if len(bound.patch):
-            step = self.pi[bound.patch_row] * (member.patch_value - bound.patch_base)
+            full = np.zeros(len(pi))
+            full[self.rows] = self.pi
+            step = full[bound.patch_row] * (member.patch_value - bound.patch_base)
             np.subtract.at(self.d, bound.patch_column, step)
         # Cuts of the children, ordered by exit so that one exit is one slice.
         order = np.argsort(exits.exit, kind="stable")
@@ -394,6 +398,11 @@ class _Walk:
         self.capacity_part = np.zeros((n_exit, self.cut_capacity.shape[1]))
         self.weighted_exits(np.arange(n_exit))
         self.col_term = _col_terms(self.d, self.col_lower, self.col_upper)
+        # Later members have fewer terms: the first one's size bounds the rounding of them all.
+        self.size = abs(self.offset) + sum(
+            float(np.abs(term).sum())
+            for term in (self.row_term, self.col_term, self.cut_term, self.theta_term)
+        )
 
     def weighted_exits(self, exits: IntArray) -> IntArray:
         """Scales the multipliers of some exits to their weights; the columns that this moves."""
@@ -437,12 +446,16 @@ class _Walk:
             self.cost[change.columns] = change.cost
             self.col_lower[change.columns] = change.col_lower
             self.col_upper[change.columns] = change.col_upper
-        rows = change.rows
-        if len(rows):
-            pi = _usable(self.pi_given[rows], change.row_lower, change.row_upper)
-            step = pi - self.pi[rows]
-            self.row_term[rows] = _row_terms(pi, change.row_lower, change.row_upper)
-            self.pi[rows] = pi
+        has_pi = self.pi_given[change.rows] != 0.0
+        if has_pi.any():
+            rows, low, high = (
+                part[has_pi] for part in (change.rows, change.row_lower, change.row_upper)
+            )
+            places = np.searchsorted(self.rows, rows)
+            pi = _usable(self.pi_given[rows], low, high)
+            step = pi - self.pi[places]
+            self.row_term[places] = _row_terms(pi, low, high)
+            self.pi[places] = pi
             moved = step != 0.0
             if moved.any():
                 start, index, value = self.bound.matrix.take(rows[moved])
@@ -469,10 +482,6 @@ class _Walk:
             + self.cut_term.sum()
             + self.theta_term.sum()
         )
-        size = abs(self.offset) + sum(
-            float(np.abs(term).sum())
-            for term in (self.row_term, self.col_term, self.cut_term, self.theta_term)
-        )
         self.col_term[columns] = kept
         is_given = self.in_columns >= 0
         held = np.where(is_given, self.in_columns, 0)
@@ -485,7 +494,6 @@ class _Walk:
             state_lower=np.where(is_given, self.col_lower[held], 0.0),
             state_upper=np.where(is_given, self.col_upper[held], 0.0),
             scale=self.scale,
-            size=size,
         )
 
 

@@ -27,7 +27,7 @@ from numpy.typing import NDArray
 from xlplan.base.rng import stream
 from xlplan.model.value_graph import ValueGraph
 from xlplan.solve.first_stage import FirstStage, FirstStagePlan, capacities_of, state_of
-from xlplan.solve.follow import Follower, Following, RootPoint
+from xlplan.solve.follow import Follower, Following, RootPoint, Sampled, Term
 from xlplan.solve.node_solver import Measure, NodeRequest, NodeSolution, new_pools
 from xlplan.solve.result import (
     CostEstimate,
@@ -291,6 +291,7 @@ class _Run:
         self.n_sample = self.options.n_sample_first
         self.rng = stream(engine.seed, "chains")
         self.n_since_full = 0
+        self._terms: list[list[Term]] = []
         self.n_solve = 0
         self.n_cut = 0
 
@@ -438,6 +439,7 @@ class _Run:
         if self.is_enumerating:
             found = engine._follower.enumerate(points, solve, request, first.cost)
         else:
+            chained = self._chain(points, request) if is_partial else None
             selected = [self._select(p, is_partial) for p in points]
             shares = [
                 self._neighbours(p, s) if is_partial else {}
@@ -452,7 +454,7 @@ class _Run:
             found = engine._follower.follow(
                 points,
                 selected,
-                self.n_sample,
+                0 if is_partial else self.n_sample,
                 solve,
                 request,
                 first_request,
@@ -460,10 +462,42 @@ class _Run:
                 self.rng,
                 is_partial,
             )
+            self._terms = found.terms
+            if chained is not None:
+                found.sampled_part = chained.total
+                found.n_solve += chained.n_solve
             self._learn(points, selected, found)
         self.n_solve += found.n_solve
         self.n_since_full = self.n_since_full + 1 if is_partial else 0
         return found
+
+    def _chain(
+        self,
+        points: list[RootPoint],
+        request: Callable[[tuple[int, int], FloatArray, FloatArray], NodeRequest],
+    ) -> Sampled | None:
+        """Draws chains from the last pass's events; their cuts serve this pass's events.
+
+        Nothing is measured here, so cuts go into the pools at once.
+        """
+        if not any(self._terms):
+            return None
+        engine = self.engine
+
+        def solve(requests: Sequence[NodeRequest]) -> list[NodeSolution | None]:
+            solutions = engine.solve_batch(requests, self.clock)
+            self.n_cut += engine.add_cuts(solutions)
+            return solutions
+
+        return engine._follower.sample(
+            [p.i_root for p in points],
+            [p.capacity for p in points],
+            self._terms,
+            self.n_sample,
+            solve,
+            request,
+            self.rng,
+        )
 
     def _event_tolerance(self, points: list[RootPoint]) -> float:
         """By how much an event's value may be too low."""
@@ -501,7 +535,7 @@ class _Run:
         for j in np.flatnonzero(~selected):
             i_family, i_member = child[j].tolist()
             left.setdefault(i_family, {})[i_member] = point.solution.out_states[index[j]]
-        reach = self.options.stride - 1
+        reach = self.options.stride // 2
         shares = {}
         for j in np.flatnonzero(selected):
             i_family, i_member = child[j].tolist()

@@ -34,6 +34,9 @@ IntArray = NDArray[np.int64]
 ROULETTE = 0.05
 """Chains whose weight has fallen below this share of their start go on by chance, unbiased."""
 
+FAN = 8
+"""Exits solved below a sampled node with many of them: events are cheap beside the plan itself."""
+
 MAX_DEPTH = 400
 """Steps of one chain; a graph with longer paths than this is cut off and counted."""
 
@@ -67,6 +70,28 @@ class Exits:
         return len(self.index)
 
 
+@dataclass(frozen=True)
+class Term:
+    """An exit to be followed by sampling: its part of the root's value, child, state, theta."""
+
+    weight: float
+    child: tuple[int, int]
+    state: FloatArray
+    theta: float
+
+
+@dataclass(frozen=True)
+class _Step:
+    """One node of a chain: chain j of root i, what its difference counts, and what goes on."""
+
+    i: int
+    j: int
+    start: float
+    weight: float
+    onward: float
+    term: Term
+
+
 @dataclass
 class Following:
     """What a pass found out.
@@ -78,6 +103,7 @@ class Following:
     errors: list[FloatArray]
     cuts: list[CutBatch] = field(default_factory=list)
     estimate: CostEstimate | None = None
+    terms: list[list[Term]] = field(default_factory=list)
     expanded_part: float = 0.0
     sampled_part: float = 0.0
     half_width: float = 0.0
@@ -85,14 +111,43 @@ class Following:
 
 
 @dataclass
-class _Term:
-    """An exit to be followed by sampling: share of the root's value, child, state, theta."""
+class Sampled:
+    """What chains found: their sums per root, and the cuts made on the way."""
 
-    weight: float
-    child: tuple[int, int]
-    state: FloatArray
-    theta: float
-    seen: int = 0
+    sums: list[FloatArray]
+    weights: list[float] = field(default_factory=list)
+    cuts: list[CutBatch] = field(default_factory=list)
+    n_solve: int = 0
+    n_left: int = 0
+
+    @property
+    def n_chain(self) -> int:
+        """Chains drawn."""
+        return sum(len(s) for s in self.sums)
+
+    @property
+    def means(self) -> list[float]:
+        """Mean of each root's chains."""
+        return [float(s.mean()) if len(s) else 0.0 for s in self.sums]
+
+    @property
+    def total(self) -> float:
+        """Weighted mean over all roots."""
+        return sum(w * m for w, m in zip(self.weights, self.means, strict=True))
+
+    @property
+    def half_width(self) -> float:
+        """Half of the 95 % interval of ``total``; degrees of freedom after Welch (1947)."""
+        parts = [
+            (w * w * float(s.var(ddof=1)) / len(s), len(s) - 1)
+            for w, s in zip(self.weights, self.sums, strict=True)
+            if len(s) > 1
+        ]
+        variance = sum(v for v, _ in parts)
+        if variance <= 0.0:
+            return 0.0
+        freedom = variance**2 / sum(v * v / f for v, f in parts)
+        return student_factor(freedom) * float(np.sqrt(variance))
 
 
 class Follower:
@@ -225,7 +280,7 @@ class Follower:
         """
         found = Following(errors=[np.full(len(p.solution.theta), np.nan) for p in points])
         places: list[tuple[int, int]] = []
-        terms: list[list[_Term]] = [[] for _ in points]
+        terms: list[list[Term]] = [[] for _ in points]
         for i, point in enumerate(points):
             for j in range(len(point.exits)):
                 child = (int(point.exits.child[j, 0]), int(point.exits.child[j, 1]))
@@ -233,15 +288,8 @@ class Follower:
                     if selected[i][j]:
                         places.append((i, j))
                 else:
-                    e = int(point.exits.index[j])
-                    terms[i].append(
-                        _Term(
-                            float(point.exits.weight[j]),
-                            child,
-                            point.solution.out_states[e],
-                            float(point.solution.theta[e]),
-                        )
-                    )
+                    weight = float(point.exits.weight[j])
+                    terms[i].append(_term(point.exits, point.solution, j, weight))
         # One kept model after the other, each in the order of its members: nearby states follow.
         places.sort(key=lambda p: (*points[p[0]].exits.child[p[1]].tolist(), p))
         requests = []
@@ -268,108 +316,150 @@ class Follower:
             self.graph.roots[p.i_root].weight * float(np.nansum(error))
             for p, error in zip(points, found.errors, strict=True)
         )
-        means, variances, n_left = self._sample(points, terms, n_sample, solve, request, rng, found)
-        weights = [self.graph.roots[p.i_root].weight for p in points]
-        found.sampled_part = sum(w * m for w, m in zip(weights, means, strict=True))
-        spread = float(np.sqrt(sum(w * w * v for w, v in zip(weights, variances, strict=True))))
-        found.half_width = _student(max(n_sample, 2)) * spread
+        found.terms = terms
+        sampled = self.sample([p.i_root for p in points], [p.capacity for p in points], terms,
+                              n_sample, solve, request, rng)  # fmt: skip
+        found.n_solve += sampled.n_solve
+        found.cuts += sampled.cuts
+        found.sampled_part, found.half_width = sampled.total, sampled.half_width
         if not is_partial:
-            by_root = [value + mean for value, mean in zip(by_root, means, strict=True)]
+            by_root = [value + mean for value, mean in zip(by_root, sampled.means, strict=True)]
+            weights = [self.graph.roots[p.i_root].weight for p in points]
             mean = first_stage_cost + sum(w * v for w, v in zip(weights, by_root, strict=True))
             found.estimate = CostEstimate(
-                mean=mean,
-                low=mean - found.half_width,
-                high=mean + found.half_width,
+                mean=float(mean),
+                low=float(mean - found.half_width),
+                high=float(mean + found.half_width),
                 is_statistical=any(terms),
-                n_sample=n_sample,
-                by_root=tuple(by_root),
-                n_unmeasured=n_unmeasured + n_left,
+                n_sample=sampled.n_chain,
+                by_root=tuple(float(v) for v in by_root),
+                n_unmeasured=n_unmeasured + sampled.n_left,
             )
         return found
 
     def _terms_below(
         self, node: tuple[int, int], solution: NodeSolution, weight: float, capacity: FloatArray
-    ) -> list[_Term]:
+    ) -> list[Term]:
         exits = self.exits(node[0], node[1], capacity)
         return [
-            _Term(
-                weight * float(w),
-                (int(child[0]), int(child[1])),
-                solution.out_states[e],
-                float(solution.theta[e]),
-            )
-            for e, w, child in zip(exits.index, exits.weight, exits.child, strict=True)
+            _term(exits, solution, j, weight * float(exits.weight[j])) for j in range(len(exits))
         ]
 
-    def _sample(
+    def sample(
         self,
-        points: Sequence[RootPoint],
-        terms: list[list[_Term]],
+        roots: Sequence[int],
+        capacities: Sequence[FloatArray],
+        terms: Sequence[Sequence[Term]],
         n_sample: int,
         solve: SolveBatch,
         request: Callable[[tuple[int, int], FloatArray, FloatArray], NodeRequest],
         rng: np.random.Generator,
-        found: Following,
-    ) -> tuple[list[float], list[float], int]:
-        """Mean and variance of the mean of what lies below the terms, per root."""
+    ) -> Sampled:
+        """Follows chains drawn from terms.
+
+        A chain starts at a term drawn by weight. Where a node has several exits, a few of them
+        are solved, spread evenly over all in their order (a systematic sample), and the chain goes
+        on from one of these.
+
+        Parameters
+        ----------
+        roots, capacities : root of each list of terms, and its capacities
+        terms : what is to be followed, per root
+        n_sample : chains over all roots, at least 2 for each root; 0 for none
+        solve, request, rng : as in ``follow``
+
+        Returns
+        -------
+        Sampled
+        """
         weights = [
-            self.graph.roots[p.i_root].weight * sum(t.weight for t in below)
-            for p, below in zip(points, terms, strict=True)
+            self.graph.roots[r].weight * sum(t.weight for t in below)
+            for r, below in zip(roots, terms, strict=True)
         ]
-        total = sum(weights)
-        n_left = 0
-        chains: list[tuple[int, int, float, float, _Term]] = []
-        sums: list[FloatArray] = []
+        found = Sampled(sums=[])
+        front: list[_Step] = []
         for i, below in enumerate(terms):
-            share = weights[i] / total if total > 0.0 else 0.0
-            n = max(2, int(np.ceil(n_sample * share))) if below and share > 0.0 else 0
-            sums.append(np.zeros(n))
-            if not n:
-                continue
-            chance = np.array([t.weight for t in below])
-            whole = float(chance.sum())
-            for j, pick in enumerate(rng.choice(len(below), size=n, p=chance / whole)):
-                chains.append((i, j, whole, whole, below[int(pick)]))
+            share = weights[i] / sum(weights) if weights[i] > 0.0 else 0.0
+            n = max(2, int(np.ceil(n_sample * share))) if n_sample and share > 0.0 else 0
+            found.sums.append(np.zeros(n))
+            if n:
+                chance = np.array([t.weight for t in below])
+                whole = float(chance.sum())
+                for j, pick in enumerate(rng.choice(len(below), size=n, p=chance / whole)):
+                    front.append(_Step(i, j, whole, whole, whole, below[int(pick)]))
         for _ in range(MAX_DEPTH):
-            if not chains:
+            if not front:
                 break
-            chains.sort(key=lambda c: (c[4].child, c[0], c[1]))
+            front.sort(key=lambda step: (step.term.child, step.i, step.j))
             solutions = solve(
-                [request(c[4].child, c[4].state, points[c[0]].capacity) for c in chains]
+                [request(step.term.child, step.term.state, capacities[step.i]) for step in front]
             )
-            going = []
-            for (i, j, start, weight, term), solution in zip(chains, solutions, strict=True):
+            going: list[_Step] = []
+            for step, solution in zip(front, solutions, strict=True):
+                value = found.sums[step.i]
                 if solution is None or solution.has_failed:
-                    sums[i][j] += weight * (self.upper(term.child) - term.theta)
-                    n_left += 1
+                    upper = max(step.weight, step.onward) * self.upper(step.term.child)
+                    value[step.j] += upper - step.weight * step.term.theta
+                    found.n_left += 1
                     continue
                 found.n_solve += 1
                 found.cuts += solution.cuts
-                sums[i][j] += weight * (solution.value - term.theta)
-                below = self._terms_below(term.child, solution, 1.0, points[i].capacity)
-                if not below:
-                    continue
-                chance = np.array([t.weight for t in below])
-                whole = float(chance.sum())
-                weight *= whole
-                chance_to_go = min(1.0, weight / (ROULETTE * start))
-                if chance_to_go < 1.0 and rng.random() >= chance_to_go:
-                    continue
-                pick = int(rng.choice(len(below), p=chance / whole)) if len(below) > 1 else 0
-                going.append((i, j, start, weight / chance_to_go, below[pick]))
-            chains = going
-        means = [float(s.mean()) if len(s) else 0.0 for s in sums]
-        variances = [float(s.var(ddof=1)) / len(s) if len(s) > 1 else 0.0 for s in sums]
-        return means, variances, n_left
+                value[step.j] += step.weight * (solution.value - step.term.theta)
+                if step.onward > 0.0:
+                    going += self._onward(step, solution, capacities[step.i], rng)
+            front = going
+        found.weights = [self.graph.roots[r].weight for r in roots]
+        return found
+
+    def _onward(
+        self, step: _Step, solution: NodeSolution, capacity: FloatArray, rng: np.random.Generator
+    ) -> list[_Step]:
+        """Draws the next steps of a chain below a solved node."""
+        exits = self.exits(step.term.child[0], step.term.child[1], capacity)
+        if not len(exits):
+            return []
+        whole = float(exits.weight.sum())
+        n = 1 if len(exits) == 1 else FAN
+        reached = np.cumsum(exits.weight) / whole
+        picks = np.searchsorted(reached, (np.arange(n) + rng.random()) / n)
+        picks = np.minimum(picks, len(exits) - 1)
+        weight = step.onward * whole
+        chance_to_go = min(1.0, weight / (ROULETTE * step.start))
+        goes = int(rng.integers(n))
+        if chance_to_go < 1.0 and rng.random() >= chance_to_go:
+            goes = -1
+        return [
+            _Step(
+                step.i,
+                step.j,
+                step.start,
+                weight / n,
+                weight / chance_to_go if k == goes else 0.0,
+                _term(exits, solution, int(pick), 1.0),
+            )
+            for k, pick in enumerate(picks)
+        ]
 
 
-def _student(n: int) -> float:
-    """Half width of a 95 % interval in standard errors, for n draws.
+def _term(exits: Exits, solution: NodeSolution, j: int, weight: float) -> Term:
+    e = int(exits.index[j])
+    child = (int(exits.child[j, 0]), int(exits.child[j, 1]))
+    return Term(weight, child, solution.out_states[e], float(solution.theta[e]))
 
-    Series of Student's t in 1 / (n - 1) to second order (Fisher and Cornish 1960, recalled).
 
-    >>> round(_student(11), 2)  # tables give 2.23 for 10 degrees of freedom
+def student_factor(freedom: float) -> float:
+    """Half width of a 95 % interval in standard errors, for some degrees of freedom.
+
+    Expansion of Student's t in 1 / freedom to third order (Abramowitz and Stegun 1964, 26.7.5,
+    recalled); for fewer than 2 degrees of freedom it falls short, so 12.7 (1 degree) is used.
+
+    >>> round(student_factor(10), 2)  # tables give 2.23
     2.23
     """
-    f, z = n - 1, 1.959964
-    return float(z + (z**3 + z) / (4 * f) + (5 * z**5 + 16 * z**3 + 3 * z) / (96 * f * f))
+    if freedom < 2.0:
+        return 12.706
+    z = 1.959964
+    first = (z**3 + z) / 4
+    second = (5 * z**5 + 16 * z**3 + 3 * z) / 96
+    third = (3 * z**7 + 19 * z**5 + 17 * z**3 - 15 * z) / 384
+    return float(z + first / freedom + second / freedom**2 + third / freedom**3)
