@@ -10,6 +10,7 @@ from pathlib import Path
 
 from xlplan.base.codes import Code
 from xlplan.base.errors import Finding, Level, StudyError
+from xlplan.base.units import pct_from_frac
 from xlplan.compare.assemble import assemble
 from xlplan.compare.standing import Progress, SolveOptions, StandingAlternatives
 from xlplan.compare.study_result import StudyResult
@@ -70,6 +71,8 @@ def read_study(path: Path) -> CheckedInput:
     findings += check_no_load_voltage(study, feeder, scenarios)
     findings += check_rounded_times(study)
     findings += check_islands(study, feeder, scenarios)
+    if study.settings.risk_weight_frac > 0.0:
+        findings.append(_unused_risk_weight(study))
     return CheckedInput(raw, tuple(findings), study, feeder, windows)
 
 
@@ -166,6 +169,21 @@ def useful_workers(windows: tuple[WindowModel, ...], cores: int) -> int:
     """Processes worth starting."""
     work = sum(window.series.n_period * len(window.scenarios) for window in windows)
     return 1 if work < FEW_SUBPROBLEMS else cores
+
+
+def _unused_risk_weight(study: Study) -> Finding:
+    """Says that plans minimise the expected cost, whatever the weight."""
+    origin = study.settings.origin_of.get("risk_weight_pct")
+    return Finding(
+        level=Level.WARNING,
+        code=Code.NOT_USED,
+        sheet="Settings" if origin is None else origin.sheet,
+        cell="" if origin is None else origin.cell("risk_weight_pct"),
+        key="risk_weight_pct",
+        value=f"{pct_from_frac(study.settings.risk_weight_frac):g}",
+        message="This version minimises the expected cost; the weight on risk has no effect.",
+        hint="The results show the risk of each plan.",
+    )
 
 
 def _unsolved_alternatives(study: Study) -> Finding:

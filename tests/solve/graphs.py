@@ -223,7 +223,7 @@ def capacity_expansion_graph() -> ValueGraph:
     rules = {r[0]: r[1] for r in read_table("sp_capacity_expansion_problem52_rules.csv")}
     chances = [float(v.split()[0]) for v in rules["scenario probabilities"].split("/")]
     penalty = 1e6
-    shares = [float(r[1].split("/")[0]) / float((r[1].split("/") + ["1"])[1]) for r in modes]
+    shares = [float(r[1].split("/")[0]) / float([*r[1].split("/"), "1"][1]) for r in modes]
     top = 20000.0
     builder = ProgramBuilder()
     plants = [builder.add_column(f"plant {i}", 0.0, top) for i in range(4)]

@@ -27,7 +27,7 @@ from xlplan.evaluate.purchases import price_purchases, read_purchases
 from xlplan.evaluate.results import ConvergenceRow, PlanResult
 from xlplan.model.dispatch import Purchases
 from xlplan.model.study_graph import StudyGraph, build_study_graph
-from xlplan.model.tree_size import count_nodes
+from xlplan.model.tree_size import TreeFit, judge_size
 from xlplan.model.whole_tree import build_whole_tree
 from xlplan.network.feeder import Feeder
 from xlplan.outages.window_model import WindowModel
@@ -40,13 +40,9 @@ FloatArray = NDArray[np.float64]
 
 _LOG = logging.getLogger(__name__)
 
-TREE_LIMIT = 3000
-"""``auto`` takes the whole tree up to this many period copies: it is then built and solved within
-seconds, and exact. Beyond it the decomposition is faster on every study that was tried."""
-
-TREE_REFUSAL = 60_000
-"""A whole tree beyond this many period copies is not built even if asked for: it would take
-gigabytes and hours."""
+TREE_REFUSAL = 1_000_000
+"""A whole tree beyond this many columns is not built even if asked for: it would take gigabytes
+and hours."""
 
 INNER_TARGET = 0.6
 """Share of the target at which the decomposition stops by its own estimate; the rest is left to the
@@ -114,10 +110,8 @@ class StandingAlternatives:
         self.options = options
         self.on_progress = on_progress or (lambda _: None)
         self.should_stop = should_stop or (lambda: False)
-        size = count_nodes(windows)
-        self.method, self.method_reason = choose_method(
-            options.method, size.n_node, size.n_period_copies
-        )
+        fit = judge_size(study, windows)
+        self.method, self.method_reason = choose_method(options.method, fit)
         self.graph = build_study_graph(study, feeder, windows)
         attach_meters(self.graph, windows)
         self.engine = Engine(self.graph.graph, options.seed, options.workers)
@@ -376,28 +370,21 @@ MOST_SAMPLES = 5000
 """Continuations beyond this cost more time than their interval is worth."""
 
 
-def choose_method(asked: str, n_node: int, n_period_copies: int) -> tuple[str, str]:
+def choose_method(asked: str, fit: TreeFit) -> tuple[str, str]:
     """Method and the reason for it, in one sentence.
 
     Raises NoPlanError where the whole tree is asked for and cannot be built.
     """
-    size = f"{n_node:,} nodes ({n_period_copies:,} periods in all)"
     if asked == "tree":
-        if n_period_copies > TREE_REFUSAL:
+        if fit.n_column > TREE_REFUSAL:
             raise NoPlanError(
-                f"The whole scenario tree has {size}, too many to solve in one piece "
-                f"(limit {TREE_REFUSAL:,} periods). Use --method decomposed."
+                f"The whole tree cannot be built: {fit.reason}, and {TREE_REFUSAL:,} at the very "
+                "most. Use --method decomposed."
             )
-        return "tree", f"The whole tree was asked for; it has {size}."
+        return "tree", f"The whole tree was asked for; {fit.reason}."
     if asked == "decomposed":
-        return "decomposed", f"The decomposition was asked for; the whole tree has {size}."
-    if n_period_copies <= TREE_LIMIT:
-        return "tree", f"The whole tree has only {size}, so it is solved exactly in one piece."
-    return (
-        "decomposed",
-        f"The whole tree has {size}, more than the {TREE_LIMIT:,} periods that are solved in "
-        "one piece.",
-    )
+        return "decomposed", f"The decomposition was asked for; {fit.reason}."
+    return ("tree" if fit.fits else "decomposed"), f"{fit.reason[0].upper()}{fit.reason[1:]}."
 
 
 def fixed_demand(found: Purchases, fixed: Purchases | None) -> Purchases:

@@ -22,6 +22,7 @@ from xlplan.evaluate.metrics import (
     event_metrics,
     plan_metrics,
 )
+from xlplan.evaluate.pro_rata import share_pro_rata
 from xlplan.model.dispatch import Purchases, SegmentKind, TreeSegment
 from xlplan.network.feeder import Feeder
 from xlplan.outages.window_model import WindowModel
@@ -83,8 +84,9 @@ def _read(
     assert segment.i_scenario is not None
     scenario = window.scenarios[segment.i_scenario]
     failed_in = segment.start_period - 1
+    dispatch = share_pro_rata(context, scenario, failed_in, segment.dispatch)
     return event_metrics(
-        context, scenario, failed_in, segment.dispatch, generator_kw, storage_kw, storage_kwh
+        context, scenario, failed_in, dispatch, generator_kw, storage_kw, storage_kwh
     )
 
 

@@ -18,6 +18,7 @@ from xlplan.evaluate.metrics import (
     event_metrics,
     plan_metrics,
 )
+from xlplan.evaluate.pro_rata import share_pro_rata, sheds_live_load
 from xlplan.evaluate.unpack import event_dispatch, plan_dispatch
 from xlplan.model.dispatch import Dispatch
 from xlplan.model.period import FeederModel
@@ -77,8 +78,9 @@ class EventMeter:
     scenario: Scenario
 
     def dispatch(self, family: EventFamily, member: int, y: FloatArray) -> Dispatch:
-        """Operation, with flows and voltages."""
-        return event_dispatch(self.model, family, member, y)
+        """Operation, with flows and voltages; shares pro rata where the optimum leaves them open."""
+        dispatch = event_dispatch(self.model, family, member, y)
+        return share_pro_rata(self.context, self.scenario, member, dispatch)
 
     def __call__(self, family: EventFamily, member: int, y: FloatArray) -> FloatArray:
         """Metrics, shape (n_slot,)."""
@@ -86,6 +88,8 @@ class EventMeter:
         capacity = y[family.capacity_columns]
         kw, kwh = _storage(layout.n_generator, layout.n_storage, capacity)
         dispatch = event_dispatch(self.model, family, member, y, with_network=False)
+        if sheds_live_load(self.scenario, dispatch, self.model.feeder.load_bus):
+            dispatch = self.dispatch(family, member, y)
         generator_kw = capacity[: layout.n_generator]
         return event_metrics(self.context, self.scenario, member, dispatch, generator_kw, kw, kwh)
 

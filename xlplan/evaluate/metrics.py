@@ -27,6 +27,7 @@ from xlplan.outages.damage import (
     price_per_kwh,
 )
 from xlplan.outages.records import Scenario
+from xlplan.outages.sections import build_sections
 from xlplan.study.study import Study, Technology
 from xlplan.study.windows import WindowSeries
 
@@ -94,6 +95,7 @@ class WindowContext:
     slots: Slots
     normal_price: FloatArray
     first_moment: FloatArray
+    section_of_load: NDArray[np.int64]
     keep: float
     """Share of what is shed that customers miss: 1 / (1 + loss allowance)."""
 
@@ -118,6 +120,7 @@ def build_context(study: Study, feeder: Feeder, series: WindowSeries) -> WindowC
         slots=Slots(len(study.loads)),
         normal_price=np.array([normal_service_price_per_kwh(c) for c in of_load]),
         first_moment=np.array([first_moment_cost(c) for c in of_load]),
+        section_of_load=build_sections(feeder).section_of_bus[feeder.load_bus],
         keep=1.0 / (1.0 + study.settings.loss_allowance_frac),
     )
 

@@ -14,7 +14,7 @@ from xlplan.outages.records import Scenario
 from xlplan.outages.window_model import WindowModel
 from xlplan.study.study import Study
 
-MAX_COLUMNS = 50_000
+MAX_COLUMNS = 30_000
 """Most columns for which the whole tree is chosen by itself. Built through PuLP at that size the
 tree takes some seconds and one linear program some ten; with measures or sites the integer search
 solves several, and it grows fast from there (measured on one core)."""
@@ -113,11 +113,11 @@ def judge_size(study: Study, windows: Sequence[WindowModel]) -> TreeFit:
     """
     size = count_nodes(windows)
     n_column = size.n_period_copies * columns_per_period(study)
-    counted = f"{_in_words(size.n_node)} nodes and about {_in_words(n_column)} columns"
+    counted = f"{_in_words(size.n_node)} nodes, about {_in_words(n_column)} columns"
     if n_column <= MAX_COLUMNS:
-        reason = f"the whole tree is small: {counted} (limit {MAX_COLUMNS:,})"
+        reason = f"the whole tree fits in one program ({counted}; limit {MAX_COLUMNS:,})"
     else:
-        reason = f"the whole tree is too large: {counted} (limit {MAX_COLUMNS:,})"
+        reason = f"the whole tree is too large for one program ({counted}; limit {MAX_COLUMNS:,})"
     return TreeFit(size, n_column, n_column <= MAX_COLUMNS, reason)
 
 
