@@ -261,7 +261,8 @@ def build_plan_family(
         columns = add_period(
             builder, numbers, model, normal, capacities, previous, k, weight, is_event=False
         )
-        if model.series.counts_for_demand and columns.import_kw >= 0:
+        is_charged = model.study.settings.demand_charge_per_kw_year > 0.0
+        if is_charged and model.series.counts_for_demand and columns.import_kw >= 0:
             terms = [(columns.import_kw, 1.0), (int(capacities[model.layout.demand_kw]), -1.0)]
             first_plan_rows.append(builder.add_row(f"demand [{k}]", terms, upper=0.0))
         periods.append(columns)

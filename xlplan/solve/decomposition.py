@@ -52,6 +52,12 @@ _LOG = logging.getLogger(__name__)
 
 Progress = Callable[[IterationRecord], None]
 
+POOR_AGREEMENT = 0.1
+"""First stage and roots this far apart have hardly met yet."""
+
+LEAST_TURNS = 10
+"""Turns of first stage and roots that a stopped run still makes while they are that far apart."""
+
 
 @dataclass(frozen=True)
 class EngineOptions:
@@ -325,7 +331,7 @@ class _Run:
     def _agree(self, is_first: bool) -> list[RootPoint]:
         """First stage and roots in turn until they agree."""
         points: list[RootPoint] = []
-        for _ in range(self.options.n_inner):
+        for i_turn in range(self.options.n_inner):
             first = self._decide()
             self.current = first
             self.lower_bound = max(self.lower_bound, first.bound)
@@ -336,7 +342,12 @@ class _Run:
                 self.lower_bound = max(self.lower_bound, first.cost + float(weights @ values))
                 break
             apart = first.cost + float(weights @ values) - first.bound
-            if apart <= self._inner_tolerance(first, is_first) or self.clock.should_stop():
+            if apart <= self._inner_tolerance(first, is_first):
+                break
+            # Stopped or not, a plan that first stage and roots see quite differently is no plan
+            # worth following: a few more turns are cheap against following it.
+            is_poor = apart > POOR_AGREEMENT * max(abs(first.bound), 1e-9) and i_turn < LEAST_TURNS
+            if self.clock.should_stop() and not is_poor:
                 break
         return points
 

@@ -235,7 +235,12 @@ class NodeModel:
             self.counts["row rounds used up"] += 1
         primal = result.col_value
         if second_cost is not None:
-            primal = self._second(result, second_cost)
+            for _ in range(MAX_ROUNDS):
+                primal = self._second(result, second_cost)
+                # The second point may break rows that the first one did not need.
+                if not self._add_lazy_rows(primal[: self.n_col]):
+                    break
+                result = self._model.run()
         return self._outcome(result, primal, capacity)
 
     def _place(self, i_member: int, state: FloatArray, capacity: FloatArray) -> None:
