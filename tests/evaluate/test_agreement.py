@@ -69,7 +69,8 @@ def audited_violations(solved: Solved) -> list[str]:
         solution = solved.engine.solve_nodes([request], read_dispatch)[0]
         plan = solution.measured
         series = window.series
-        demand = bought.demand_kw if series.counts_for_demand else None
+        charged = study.settings.demand_charge_per_kw_year > 0.0 and series.counts_for_demand
+        demand = bought.demand_kw if charged else None
         normal = [window.normal] * series.n_period
         before = start_of_window(study, capacities, series.start_soc_frac)
         broken += audit_dispatch(

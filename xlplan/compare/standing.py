@@ -21,7 +21,12 @@ from xlplan.base.names import EXISTING, IGNORING_OUTAGES, LEAST_COST
 from xlplan.evaluate.follow_plan import Follower, FollowResult
 from xlplan.evaluate.follow_tree import follow_tree
 from xlplan.evaluate.meters import attach_meters
-from xlplan.evaluate.operation import audit_operation, plan_traces, tree_operation
+from xlplan.evaluate.operation import (
+    audit_operation,
+    plan_traces,
+    tree_operation,
+    with_peak_purchase,
+)
 from xlplan.evaluate.plan_result import PlanFacts, build_plan_result
 from xlplan.evaluate.purchases import price_purchases, read_purchases
 from xlplan.evaluate.results import ConvergenceRow, PlanResult
@@ -190,9 +195,11 @@ class StandingAlternatives:
             solve_seconds=solution.seconds,
             tree_cost=solution.objective,
         )
-        traces, audit = tree_operation(
+        traces, audit, dispatches = tree_operation(
             study, self.feeder, self.windows, bought, solution.segments, follow
         )
+        bought = with_peak_purchase(study, self.windows, bought, dispatches)
+        facts = replace(facts, bought=bought)
         seed = self.options.seed
         result = build_plan_result(study, self.windows, follow, facts, traces, audit, seed)
         return SolvedPlan(self._with_status(result), follow)
@@ -332,7 +339,9 @@ class StandingAlternatives:
         if facts.name == IGNORING_OUTAGES:
             follower = replace(follower, breaks_ties_by_energy=True)
         traces, dispatches = plan_traces(self.study, follower, follow, capacity)
-        audit = audit_operation(self.study, self.feeder, self.windows, facts.bought, dispatches)
+        bought = with_peak_purchase(self.study, self.windows, facts.bought, dispatches)
+        facts = replace(facts, bought=bought)
+        audit = audit_operation(self.study, self.feeder, self.windows, bought, dispatches)
         result = build_plan_result(
             self.study, self.windows, follow, facts, traces, audit, self.options.seed
         )

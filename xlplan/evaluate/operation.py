@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -129,6 +129,26 @@ def make_traces(
     return tuple(traces)
 
 
+def with_peak_purchase(
+    study: Study,
+    windows: Sequence[WindowModel],
+    bought: Purchases,
+    operated: Sequence[Operated],
+) -> Purchases:
+    """Purchases with the highest purchase of the first plans as the demand, where none is charged.
+
+    Without a demand charge the model leaves the demand limit out, so that its value says nothing.
+    """
+    if study.settings.demand_charge_per_kw_year > 0.0:
+        return bought
+    highest = [
+        float(item.dispatch.import_kw.max())
+        for item in operated
+        if item.i_scenario is None and windows[item.i_window].series.counts_for_demand
+    ]
+    return replace(bought, demand_kw=max(highest, default=0.0))
+
+
 def audit_operation(
     study: Study,
     feeder: Feeder,
@@ -188,7 +208,7 @@ def tree_operation(
     bought: Purchases,
     segments: Sequence[TreeSegment],
     follow: FollowResult,
-) -> tuple[tuple[Trace, ...], tuple[CheckLine, ...]]:
+) -> tuple[tuple[Trace, ...], tuple[CheckLine, ...], list[Operated]]:
     """The same of a whole tree: charts, and every node under audit."""
     operated = [
         Operated(s.i_window, None, -1, s.dispatch)
@@ -208,4 +228,4 @@ def tree_operation(
     storage_kwh = np.array([s.existing_kwh for s in study.storage]) + bought.storage_kwh
     traces = make_traces(study, windows, feeder, operated, storage_kwh)
     violations = [v for _, v in audit_tree(study, feeder, windows, bought, segments)]
-    return traces, (audit_line(violations, len(segments)),)
+    return traces, (audit_line(violations, len(segments)),), operated
