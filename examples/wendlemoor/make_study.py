@@ -16,13 +16,18 @@ REMARK = "A small worked example. The village, its feeder and every figure are i
 
 Rows = list[dict[str, object]]
 
-HOURS = 12
-"""One winter window, from seven in the morning to seven in the evening."""
+HOURS = 24
+"""One winter day, from midnight."""
 
-LOAD_SHARE = (0.7, 0.85, 0.8, 0.75, 0.7, 0.7, 0.7, 0.7, 0.75, 0.85, 1.0, 0.95)
+LOAD_SHARE = (
+    (0.45, 0.4, 0.4, 0.4, 0.45, 0.55)
+    + (0.65, 0.8, 0.85, 0.8, 0.75, 0.7)
+    + (0.7, 0.7, 0.7, 0.75, 0.85, 0.95)
+    + (1.0, 1.0, 0.9, 0.75, 0.6, 0.5)
+)
 """Share of the peak in each hour; common practice has such a morning hump and evening peak."""
 
-SUN_SHARE = (0.0, 0.0, 0.1, 0.25, 0.4, 0.45, 0.45, 0.35, 0.2, 0.05, 0.0, 0.0)
+SUN_SHARE = (0.0,) * 8 + (0.05, 0.2, 0.35, 0.45, 0.45, 0.35, 0.2, 0.05) + (0.0,) * 8
 
 
 def settings() -> dict[str, object]:
@@ -103,8 +108,8 @@ def tables() -> dict[str, Rows]:
                 "max_new_kw": 300,
                 "max_new_kwh": 1200,
                 "longest_hours": 6,
-                "capital_cost_per_kw": 250,
-                "capital_cost_per_kwh": 180,
+                "capital_cost_per_kw": 120,
+                "capital_cost_per_kwh": 70,
                 "site_cost": 0,
                 "fixed_om_per_kw_year": 4,
                 "life_years": 15,
@@ -140,13 +145,13 @@ def tables() -> dict[str, Rows]:
             _customer_class("Works", "no", (5, 25, 80, 150, 15)),
         ],
         "Profiles": [
-            {"time": 7 + k, "village": LOAD_SHARE[k], "sun": SUN_SHARE[k]} for k in range(HOURS)
+            {"time": k, "village": LOAD_SHARE[k], "sun": SUN_SHARE[k]} for k in range(HOURS)
         ],
         "Windows": [
             {
-                "window": "Half a day",
-                "occurrences_per_year": 730,
-                "starts_at": 7,
+                "window": "Winter day",
+                "occurrences_per_year": 365,
+                "starts_at": 0,
                 "hours": HOURS,
                 "counts_for_demand": "yes",
                 "storm": "no",

@@ -74,7 +74,17 @@ def audited_violations(solved: Solved) -> list[str]:
         normal = [window.normal] * series.n_period
         before = start_of_window(study, capacities, series.start_soc_frac)
         broken += audit_dispatch(
-            study, feeder, section_of_bus, series, normal, plan, capacities, before, 0, False, demand
+            study,
+            feeder,
+            section_of_bus,
+            series,
+            normal,
+            plan,
+            capacities,
+            before,
+            0,
+            False,
+            demand,
         )
         family = solved.graph.plan_family(i)
         after = {int(k): solution.out_states[e] for e, k in enumerate(family.exit_period)}
@@ -135,9 +145,7 @@ def test_both_methods_give_the_same_cost_and_feasible_plans(seed: int) -> None:
 
 
 @pytest.mark.parametrize("seed", [1, 4, 7, 12, 18])
-def test_sampled_cost_covers_the_enumerated_one(
-    seed: int, monkeypatch: pytest.MonkeyPatch
-) -> None:
+def test_sampled_cost_covers_the_enumerated_one(seed: int, monkeypatch: pytest.MonkeyPatch) -> None:
     solved = Solved(seed)
     capacity = solved.found.capacities[0]
     exact = solved.follower().follow(capacity, 10, 1)

@@ -25,7 +25,9 @@ class ExtensiveForm:
         self.row_low: list[float] = []
         self.row_high: list[float] = []
         self.offset = 0.0
-        self._copy_rows(stage, np.arange(stage.n_col), stage.value, stage.row_lower, stage.row_upper)
+        self._copy_rows(
+            stage, np.arange(stage.n_col), stage.value, stage.row_lower, stage.row_upper
+        )
         self.n_node = 0
         for root in graph.roots:
             links = []
