@@ -1,4 +1,4 @@
-"""A solved whole tree read as a ``FollowResult``: every node counted with its weight, no sampling."""
+"""A solved whole tree read as a ``FollowResult``: every node counted with its weight."""
 
 from __future__ import annotations
 

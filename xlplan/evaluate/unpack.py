@@ -1,4 +1,4 @@
-"""Solutions of plan and event programs back to named arrays: the inverse of ``model.subproblem``."""
+"""Solutions of plan and event programs back to named arrays: inverts ``model.subproblem``."""
 
 from __future__ import annotations
 

@@ -1,4 +1,4 @@
-"""Where each purchase stands in the capacity vector, and each store of the past in the state vector.
+"""Where each purchase stands in the capacity vector, each memory of the past in the state vector.
 
 Capacities (in service: existing plus bought), in this order: generator kW, storage kW, storage kWh,
 hardening (0 or 1), demand limit ``D`` in kW. State, in this order: energy of each store (kWh),

@@ -62,7 +62,7 @@ class LinearProgram:
         assert len(self.index) == len(self.value)
         assert self.n_col == len(self.col_lower) == len(self.col_upper) == len(self.is_integer)
         assert self.n_row == len(self.row_upper) == len(self.is_lazy)
-        assert not len(self.index) or (0 <= self.index.min() and self.index.max() < self.n_col)
+        assert not len(self.index) or (self.index.min() >= 0 and self.index.max() < self.n_col)
         assert np.isfinite(self.value).all() and np.isfinite(self.cost).all()
         assert (self.col_lower <= self.col_upper).all() and (self.row_lower <= self.row_upper).all()
 
