@@ -53,6 +53,10 @@ INNER_TARGET = 0.6
 """Share of the target at which the decomposition stops by its own estimate; the rest is left to the
 interval of the evaluation that is reported."""
 
+EXISTING_TARGET = 0.2
+"""The same for the existing feeder, against which every saving is counted: how much better it could
+still be run must be small beside the difference."""
+
 RESERVE = 0.25
 """Share of a time limit kept for following the plan."""
 
@@ -209,7 +213,8 @@ class StandingAlternatives:
         limit_s = self.options.time_limit_h * SECONDS_PER_HOUR
         deadline = started + limit_s * (1.0 - RESERVE)
         target = self.options.gap_target_frac
-        inner, samples = INNER_TARGET * target, self.options.samples
+        inner = (EXISTING_TARGET if name == EXISTING else INNER_TARGET) * target
+        samples = self.options.samples
         rows: list[ConvergenceRow] = []
         bound = -math.inf
         while True:

@@ -138,9 +138,9 @@ class SafeSheet:
         """Height of a row."""
         ensure(self._sheet.set_row(row, points), "row height")
 
-    def page_break(self, row: int) -> None:
-        """Starts a new printed page at a row, where the reader's program heeds it."""
-        ensure(self._sheet.set_h_pagebreaks([row]), "page break")
+    def page_breaks(self, rows: list[int]) -> None:
+        """Starts a new printed page at each row, where the reader's program heeds it."""
+        ensure(self._sheet.set_h_pagebreaks(rows), "page break")
 
     def freeze(self, row: int, col: int) -> None:
         """Keeps the rows above and the columns left of a cell in sight."""

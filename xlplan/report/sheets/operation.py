@@ -73,7 +73,8 @@ def write(book: SafeBook, result: StudyResult) -> None:
             sheet.text(top + 1 + i, 0, note)
         _write_numbers(sheet, one)
         _write_charts(book, sheet, one, order, top + 1 + len(_notes(one.trace)))
-    sheet.page_break(first_numbers)
+    # Charts of one stretch stay together on a page.
+    sheet.page_breaks([*tops[1:], first_numbers])
     sheet.freeze(2, 0)
     sheet.print_setup(row, last_col)
 
