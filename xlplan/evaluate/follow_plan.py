@@ -23,6 +23,7 @@ from typing import Protocol
 import numpy as np
 from numpy.typing import NDArray
 
+from xlplan.base.errors import NoPlanError
 from xlplan.base.rng import stream
 from xlplan.evaluate.meters import PlanReading, read_solution
 from xlplan.evaluate.metrics import COST_PARTS, Slots
@@ -50,7 +51,7 @@ class NodeService(Protocol):
 
     def solve_nodes(
         self, requests: Sequence[NodeRequest], measure: Callable[..., object] | None = None
-    ) -> list[NodeSolution]:
+    ) -> Sequence[NodeSolution | None]:
         """Solves nodes; each solution carries what ``measure`` read."""
 
 
@@ -181,7 +182,24 @@ class Follower:
         for i, root in enumerate(self.graph.graph.roots):
             state = root.state_matrix @ capacity + root.state_offset
             requests.append(self.plan_request(i, 0, state, capacity))
-        return self.service.solve_nodes(requests, read_solution)
+        return self.solve(requests, read_solution)
+
+    def solve(
+        self, requests: Sequence[NodeRequest], measure: Callable[..., object]
+    ) -> list[NodeSolution]:
+        """Solves nodes, all of them; raises NoPlanError naming one that cannot be solved."""
+        solutions = []
+        for request, solution in zip(
+            requests, self.service.solve_nodes(requests, measure), strict=True
+        ):
+            if solution is None or solution.has_failed:
+                name = self.graph.graph.families[request.family].name
+                raise NoPlanError(
+                    f"The program of '{name}' from period {request.member} on could not be solved, "
+                    "so the plan's cost is not known. The log (--log) names the model file."
+                )
+            solutions.append(solution)
+        return solutions
 
     def plan_request(
         self, i_window: int, member: int, state: FloatArray, capacity: FloatArray
@@ -225,12 +243,12 @@ class Follower:
         requests = [
             self.event_request(i_window, int(w), int(k), plan.states[k], capacity) for k, w in pairs
         ]
-        solutions = self.service.solve_nodes(requests, read_solution)
+        solutions = self.solve(requests, read_solution)
         events = np.zeros((n_period, n_scenario, slots.n_slot))
         after = np.zeros((n_period, n_scenario, layout.n_state))
         solver_event_cost = 0.0
         for (k, w), solution in zip(pairs, solutions, strict=True):
-            events[k, w] = solution.measured
+            events[k, w] = np.asarray(solution.measured)
             after[k, w] = solution.out_states[0]
             solver_event_cost += float(first[k, w]) * solution.cost
         in_service, count = clock.occupancy()
@@ -371,7 +389,7 @@ class _History:
         requests = [
             follower.plan_request(self.i_window, u, state, self.capacity) for u, state in at
         ]
-        solutions = follower.service.solve_nodes(requests, read_solution)
+        solutions = follower.solve(requests, read_solution)
         readings = []
         for solution in solutions:
             assert isinstance(solution.measured, PlanReading)
@@ -395,7 +413,7 @@ class _History:
             follower.event_request(self.i_window, w, k, state, self.capacity)
             for k, w, state in real
         ]
-        solutions = iter(follower.service.solve_nodes(requests, read_solution))
+        solutions = iter(follower.solve(requests, read_solution))
         found = []
         for k, w, state in at:
             if w >= n_scenario:

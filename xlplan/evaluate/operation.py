@@ -76,7 +76,7 @@ def plan_traces(
         else:
             state = follow.windows[i_window].plan.states[k]
             request = follower.event_request(i_window, i_scenario, k, state, capacity)
-        solution = follower.service.solve_nodes([request], read_dispatch)[0]
+        solution = follower.solve([request], read_dispatch)[0]
         dispatch = solution.measured
         assert isinstance(dispatch, Dispatch)
         operated.append(Operated(i_window, i_scenario, k, dispatch))
