@@ -59,6 +59,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
             stream.reconfigure(errors="replace")
     options = build_parser().parse_args(arguments)
     try:
+        _check_paths(options)
         with _logged(getattr(options, "log", None)):
             return int(options.run(options))
     except StudyError as error:
@@ -163,7 +164,6 @@ def _check(options: argparse.Namespace) -> int:
     counts = count_findings(checked.findings)
     print(counts if checked.findings else f"{counts} The study can be solved.")
     if options.json is not None:
-        _same_file(options.json, options.study)
         document = {
             "schema": 1,
             "study": str(options.study),
@@ -179,7 +179,6 @@ def _solve(options: argparse.Namespace) -> int:
     output = options.output or study.with_name(f"{study.stem}-results.xlsx")
     check_target(output, study)
     if options.json is not None:
-        _same_file(options.json, study)
         check_target(options.json, study)
     overrides = Overrides(
         method=options.method,
@@ -210,9 +209,30 @@ def _cores() -> int:
     return os.cpu_count() or 1
 
 
-def _same_file(target: Path, study: Path) -> None:
-    if target.resolve() == study.resolve():
-        raise PathError(f"'{target}' is the study itself; it is never written to.")
+def _check_paths(options: argparse.Namespace) -> None:
+    """Raises PathError for a study that is a folder, or two files to write under one name.
+
+    Called before the log is opened: opening it empties whatever it names.
+    """
+    study: Path | None = getattr(options, "study", None)
+    if study is None:
+        return
+    if study.is_dir():
+        raise PathError(f"'{study}' is a folder; give the name of a study.")
+    named = [getattr(options, name, None) for name in ("output", "json", "log")]
+    targets = [path for path in named if path is not None]
+    for i, target in enumerate(targets):
+        if _is_same_file(target, study):
+            raise PathError(f"'{target}' is the study itself; it is never written to.")
+        if any(_is_same_file(target, other) for other in targets[:i]):
+            raise PathError(f"'{target}' is named for two different files; give each its own.")
+
+
+def _is_same_file(one: Path, other: Path) -> bool:
+    """True if two paths lead to one file, by whatever name or link."""
+    if one.resolve() == other.resolve():
+        return True
+    return one.exists() and other.exists() and one.samefile(other)
 
 
 def _write_text(path: Path, text: str) -> None:

@@ -77,7 +77,7 @@ def tables() -> dict[str, Rows]:
         "Lines": [
             _line("Moor line", "Moor end", "Ford", 6, "breaker", "none"),
             _line("Village lateral", "Ford", "Green", 3, "switch", "none"),
-            _line("Hall line", "Green", "Hall", 1, "none", "none"),
+            _line("Hall line", "Green", "Hall", 1, "switch", "none"),
             _line("Quarry line", "Ford", "Quarry", 2, "fuse", "none"),
         ],
         "Conductors": [
@@ -101,8 +101,8 @@ def tables() -> dict[str, Rows]:
         ],
         "Storage": [
             {
-                "storage": "Green battery",
-                "bus": "Green",
+                "storage": "Hall battery",
+                "bus": "Hall",
                 "existing_kw": 0,
                 "existing_kwh": 0,
                 "max_new_kw": 300,
@@ -110,7 +110,7 @@ def tables() -> dict[str, Rows]:
                 "longest_hours": 6,
                 "capital_cost_per_kw": 120,
                 "capital_cost_per_kwh": 70,
-                "site_cost": 0,
+                "site_cost": 5000,
                 "fixed_om_per_kw_year": 4,
                 "life_years": 15,
                 "round_trip_efficiency_pct": 85,

@@ -21,7 +21,10 @@ def solver(seed: int, **options: object) -> StandingAlternatives:
     feeder = build_feeder(study)
     windows = build_window_models(study, feeder)
     return StandingAlternatives(
-        study, feeder, windows, SolveOptions(**{"method": "decomposed", **options})  # type: ignore[arg-type]
+        study,
+        feeder,
+        windows,
+        SolveOptions(**{"method": "decomposed", **options}),  # type: ignore[arg-type]
     )
 
 

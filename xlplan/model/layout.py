@@ -74,11 +74,7 @@ class Layout:
 
     def fuel_state(self, i_generator: int) -> int:
         """Position of a tank's fuel."""
-        return (
-            self.n_storage
-            + len(self.ramp_generators)
-            + self.tank_generators.index(i_generator)
-        )
+        return self.n_storage + len(self.ramp_generators) + self.tank_generators.index(i_generator)
 
 
 def largest_flow_kw(study: Study, all_series: Sequence[WindowSeries]) -> float:

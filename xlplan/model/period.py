@@ -453,13 +453,9 @@ def _add_islands(
         loads = [i for i, bus in enumerate(feeder.load_bus) if int(bus) in buses]
         for i_group, group in enumerate(model.loads.groups):
             if columns.group_kw[i_group] >= 0:
-                share = sum(
-                    s for i, s in zip(group.loads, group.share, strict=True) if i in loads
-                )
+                share = sum(s for i, s in zip(group.loads, group.share, strict=True) if i in loads)
                 terms.append((int(columns.group_kw[i_group]), headroom * share))
-        terms += [
-            (int(columns.remote_kw[i]), headroom) for i in loads if columns.remote_kw[i] >= 0
-        ]
+        terms += [(int(columns.remote_kw[i]), headroom) for i in loads if columns.remote_kw[i] >= 0]
         row = builder.add_row(f"headroom {name}", terms)
         total = model.series.load_kw[:, loads].sum(axis=1)
         numbers.put("row_lower", row, headroom * total - fixed_kw, offset)

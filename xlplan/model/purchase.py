@@ -81,7 +81,9 @@ def build_first_stage(study: Study, layout: Layout) -> FirstStage:
 
     def add_steps(name: str, kw: int, step: float | None, most: float) -> None:
         if step is not None:
-            count = builder.add_column(f"steps {name}", 0.0, np.floor(most / step + 1e-9), 0.0, True)
+            count = builder.add_column(
+                f"steps {name}", 0.0, np.floor(most / step + 1e-9), 0.0, True
+            )
             builder.add_row(f"steps {name}", [(kw, 1.0), (count, -step)], 0.0, 0.0)
 
     generator_kw, generator_site = [], []
@@ -101,7 +103,9 @@ def build_first_stage(study: Study, layout: Layout) -> FirstStage:
         )
         site = add_site(unit.generator, unit.capital_site_cost, net, factor)
         if site >= 0:
-            builder.add_row(f"site {unit.generator}", [(kw, 1.0), (site, -unit.max_new_kw)], -INF, 0)
+            builder.add_row(
+                f"site {unit.generator}", [(kw, 1.0), (site, -unit.max_new_kw)], -INF, 0
+            )
         add_steps(unit.generator, kw, unit.step_kw, unit.max_new_kw)
         matrix.append((layout.generator_kw(i), kw))
         generator_kw.append(kw)

@@ -282,9 +282,9 @@ def build_plan_family(
         program=builder.build(),
         n_member=n_period + 1,
         capacity_columns=capacities,
-        out_columns=np.array(
-            [states[k + 1] for k, *_ in exits], dtype=np.int64
-        ).reshape(len(exits), model.layout.n_state),
+        out_columns=np.array([states[k + 1] for k, *_ in exits], dtype=np.int64).reshape(
+            len(exits), model.layout.n_state
+        ),
         exit_gate=tuple(gate for *_, gate in exits),
         patch=np.zeros(0, dtype=np.int64),
         is_expanded=False,
