@@ -29,6 +29,7 @@ from xlplan.base.units import frac_from_pct, hours_from_minutes, pct_from_frac
 from xlplan.compare.standing import Progress
 from xlplan.compare.study_result import StudyResult
 from xlplan.pipeline import Overrides, check_target, read_study, solve_study, write_answer
+from xlplan.report.target import replace_whole
 from xlplan.workbook.template import write_template
 
 DONE, FAILED, UNUSABLE, STOPPED = 0, 1, 2, 3
@@ -170,7 +171,7 @@ def _check(options: argparse.Namespace) -> int:
             "fingerprint": checked.raw.fingerprint,
             "findings": [finding_record(finding) for finding in checked.findings],
         }
-        _write_text(options.json, json.dumps(document, indent=1, ensure_ascii=False))
+        replace_whole(options.json, json.dumps(document, indent=1, ensure_ascii=False) + "\n")
     return DONE if checked.is_usable else UNUSABLE
 
 
@@ -233,13 +234,6 @@ def _is_same_file(one: Path, other: Path) -> bool:
     if one.resolve() == other.resolve():
         return True
     return one.exists() and other.exists() and one.samefile(other)
-
-
-def _write_text(path: Path, text: str) -> None:
-    try:
-        path.write_text(text + "\n", encoding="utf-8")
-    except OSError as error:
-        raise PathError(f"'{path}' cannot be written: {error.strerror}.") from error
 
 
 # -- printing ----------------------------------------------------------------------------------

@@ -282,7 +282,7 @@ class StandingAlternatives:
             method_reason=self.method_reason,
             convergence=tuple(rows),
             solve_seconds=spent + time.monotonic() - started,
-            numerical_events=int(found.counts.get("fallback", 0)),
+            numerical_events=int(sum(found.counts.get(name, 0) for name in DIFFICULTIES)),
         )
         return self._evaluated(facts, follow, self.graph, self.engine, found)
 
@@ -409,6 +409,9 @@ class StandingAlternatives:
 
 
 SECONDS_PER_HOUR = 3600.0
+
+DIFFICULTIES = ("fallback cold restart", "failed", "cut not tight", "row rounds used up")
+"""Counted events of the engine that say that the solver had trouble with a program."""
 
 CENT = 0.01
 """Plans whose costs differ by less are equal."""
