@@ -11,7 +11,8 @@ from tests.solve.graphs import gate_graph, random_tree_graph
 from xlplan.solve.cuts import CutBatch, CutPool, DomainBox, ExitMultipliers, lift_amount
 from xlplan.solve.decomposition import Engine
 from xlplan.solve.node_solver import NodeRequest, NodeSolver
-from xlplan.solve.tables import MemberCache, gather_tables
+from xlplan.solve.member_cache import MemberCache
+from xlplan.solve.tables import gather_tables
 
 
 class _NodeForm(ExtensiveForm):
@@ -79,7 +80,7 @@ def test_multipliers_of_one_member_serve_another():
     solver = NodeSolver(graph, tables)
     state, capacity = np.array([1.0, 0.5]), np.array([4.0, 3.0, 1.0])
     outcome = solver.model(1, 0).solve(0, state, capacity)
-    cut = solver.model(1, 0).shared_cut(outcome, 1, 1)
+    cut = solver.model(1, 0).shared_cuts(outcome, np.array([1]), 1)
     assert cut.member.tolist() == [1]
     rng = np.random.default_rng(3)
     for _ in range(10):

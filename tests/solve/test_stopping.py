@@ -66,6 +66,6 @@ def test_relative_gap(upper, lower, gap):
 
 def test_values_that_do_not_exist_cannot_be_read():
     result = SolveResult(Termination.INFEASIBLE, False, False, "Infeasible", 0.0)
-    for name in ("objective", "bound", "gap_frac", "col_value", "row_dual", "col_dual"):
+    for name in ("objective", "bound", "gap_frac", "col_value", "row_dual"):
         with pytest.raises(MissingValueError):
             getattr(result, name)

@@ -4,7 +4,9 @@
                                                col_lower <=   y <= col_upper
 
 Enters: rows and columns with names. Leaves: ``LinearProgram``. ``is_lazy`` marks rows that a
-solver may leave out until they are violated; they belong to the program all the same.
+solver may leave out until they are violated; they belong to the program all the same. *Folds* name
+columns that equality rows determine (a flow by the balance of the bus behind it): a solver may
+work without them.
 """
 
 from __future__ import annotations
@@ -20,6 +22,25 @@ IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
 
 INF = float("inf")
+
+
+@dataclass(frozen=True)
+class Folds:
+    """Columns that may be worked out from the others, block by block.
+
+    ``row[i]`` determines ``column[i]``: within the block ``start[b]:start[b + 1]`` the square
+    matrix of these rows and columns has an inverse, whatever the member. Such a row is an equality
+    wherever its column counts, and such a column has no cost. Rows of a block at ``stage`` 0 hold
+    no column of another block, those at stage 1 may hold columns of blocks at stage 0.
+    """
+
+    row: IntArray = field(default_factory=lambda: np.zeros(0, dtype=np.int64))
+    column: IntArray = field(default_factory=lambda: np.zeros(0, dtype=np.int64))
+    start: IntArray = field(default_factory=lambda: np.zeros(1, dtype=np.int64))
+    stage: IntArray = field(default_factory=lambda: np.zeros(0, dtype=np.int64))
+
+    def __len__(self) -> int:
+        return len(self.row)
 
 
 @dataclass(frozen=True)
@@ -39,6 +60,7 @@ class LinearProgram:
     offset: float = 0.0
     col_names: tuple[str, ...] = ()
     row_names: tuple[str, ...] = ()
+    folds: Folds = field(default_factory=Folds)
 
     @property
     def n_col(self) -> int:
@@ -65,6 +87,10 @@ class LinearProgram:
         assert not len(self.index) or (self.index.min() >= 0 and self.index.max() < self.n_col)
         assert np.isfinite(self.value).all() and np.isfinite(self.cost).all()
         assert (self.col_lower <= self.col_upper).all() and (self.row_lower <= self.row_upper).all()
+        folds = self.folds
+        assert len(folds.row) == len(folds.column) == folds.start[-1]
+        assert len(np.unique(folds.row)) == len(np.unique(folds.column)) == len(folds)
+        assert not self.cost[folds.column].any() and not self.is_lazy[folds.row].any()
 
 
 @dataclass
@@ -83,6 +109,7 @@ class ProgramBuilder:
     start: list[int] = field(default_factory=lambda: [0])
     index: list[int] = field(default_factory=list)
     value: list[float] = field(default_factory=list)
+    folds: list[tuple[int, list[int], list[int]]] = field(default_factory=list)
 
     def add_column(
         self,
@@ -123,8 +150,14 @@ class ProgramBuilder:
         self.is_lazy.append(is_lazy)
         return len(self.row_lower) - 1
 
+    def add_fold(self, stage: int, rows: Sequence[int], columns: Sequence[int]) -> None:
+        """Says that some equality rows determine as many columns, see ``Folds``."""
+        if len(rows):
+            self.folds.append((stage, [int(r) for r in rows], [int(c) for c in columns]))
+
     def build(self, offset: float = 0.0) -> LinearProgram:
         """The program as arrays."""
+        counts = [len(rows) for _, rows, _ in self.folds]
         return LinearProgram(
             cost=np.array(self.cost, dtype=float),
             col_lower=np.array(self.col_lower, dtype=float),
@@ -139,4 +172,10 @@ class ProgramBuilder:
             offset=offset,
             col_names=tuple(self.col_names),
             row_names=tuple(self.row_names),
+            folds=Folds(
+                row=np.array([r for _, rows, _ in self.folds for r in rows], dtype=np.int64),
+                column=np.array([c for *_, columns in self.folds for c in columns], dtype=np.int64),
+                start=np.concatenate([[0], np.cumsum(counts)]).astype(np.int64),
+                stage=np.array([stage for stage, *_ in self.folds], dtype=np.int64),
+            ),
         )

@@ -2,8 +2,10 @@
 
 A *terminal* is what a device or load offers to the network: a bus, terms in kW and terms in kvar.
 The block adds one flow pair per live line, one squared voltage per live bus, and the rows of
-linearised DistFlow (Baran and Wu 1989, losses dropped). Nothing outside knows how power gets from
-one terminal to another, so another network model can take this one's place.
+linearised DistFlow (Baran and Wu 1989, losses dropped), and says which of its columns follow from
+the others on a radial part, so that a solver can fold the network into the injections. Nothing
+outside knows how power gets from one terminal to another, so another network model can take this
+one's place.
 """
 
 from __future__ import annotations
@@ -11,6 +13,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from xlplan.base.units import v_sq_drop_per_kw
 from xlplan.model.linear_program import ProgramBuilder
@@ -25,6 +28,7 @@ V_SCALE = 1000.0
 above the 1e-9 under which the solver drops a coefficient."""
 
 Terms = list[tuple[int, float]]
+IntArray = NDArray[np.int64]
 
 
 @dataclass
@@ -99,6 +103,7 @@ def add_network(
     flow_kw = np.full(n_line, -1)
     flow_kvar = np.full(n_line, -1)
     v_sq = np.full(n_bus, -1)
+    voltage_row = np.full(n_line, -1)
     kw_terms: dict[int, Terms] = {}
     kvar_terms: dict[int, Terms] = {}
     low, high = V_SCALE * band_pu[0] ** 2, V_SCALE * band_pu[1] ** 2
@@ -128,7 +133,7 @@ def add_network(
         drop_x = V_SCALE * v_sq_drop_per_kw(float(feeder.x_ohm[line]), feeder.base_kv)
         boost = (1.0 + float(feeder.boost_frac[line])) ** 2
         terms = [(v_sq[j], 1.0), (v_sq[i], -boost), (p, drop_r), (q, drop_x)]
-        builder.add_row(f"voltage {name}", terms, 0.0, 0.0)
+        voltage_row[line] = builder.add_row(f"voltage {name}", terms, 0.0, 0.0)
         if np.isfinite(rating):
             add_polygon(builder, f"rating {name}", [(p, 1.0)], [(q, 1.0)], rating)
     kw_row = np.full(n_bus, -1)
@@ -137,4 +142,48 @@ def add_network(
         name = f"{feeder.bus_ids[bus]} {tag}"
         kw_row[bus] = builder.add_row(f"kW balance {name}", kw_terms[bus], 0.0, 0.0)
         kvar_row[bus] = builder.add_row(f"kvar balance {name}", kvar_terms[bus], 0.0, 0.0)
+    below = _lines_below(feeder, np.flatnonzero(flow_kw >= 0), voltage_sources)
+    buses, lines = [bus for bus, _ in below], [line for _, line in below]
+    builder.add_fold(0, kw_row[buses], flow_kw[lines])
+    builder.add_fold(0, kvar_row[buses], flow_kvar[lines])
+    builder.add_fold(1, voltage_row[lines], v_sq[buses])
     return NetworkColumns(flow_kw, flow_kvar, v_sq, kw_row, kvar_row)
+
+
+def _lines_below(
+    feeder: Feeder, lines: IntArray, voltage_sources: list[int]
+) -> list[tuple[int, int]]:
+    """(bus, line that feeds it) of every bus that hangs on another in a radial connected part.
+
+    The flow on that line follows from the balance of the bus, the bus's voltage from the line's
+    drop. A part with a loop is left out.
+    """
+    at_bus: dict[int, list[int]] = {}
+    for line in lines.tolist():
+        for bus in (int(feeder.from_bus[line]), int(feeder.to_bus[line])):
+            at_bus.setdefault(bus, []).append(line)
+    found: list[tuple[int, int]] = []
+    seen: set[int] = set()
+    for root in [*voltage_sources, *at_bus]:
+        if root in seen:
+            continue
+        seen.add(root)
+        part: list[tuple[int, int]] = []
+        is_radial = True
+        waiting = [(root, -1)]
+        while waiting:
+            bus, feeding = waiting.pop()
+            for line in at_bus.get(bus, ()):
+                if line == feeding:
+                    continue
+                ends = int(feeder.from_bus[line]), int(feeder.to_bus[line])
+                other = ends[1] if ends[0] == bus else ends[0]
+                if other in seen:
+                    is_radial = False
+                    continue
+                seen.add(other)
+                part.append((other, line))
+                waiting.append((other, line))
+        if is_radial:
+            found += part
+    return found

@@ -22,7 +22,7 @@ from xlplan.model.layout import state_domain
 from xlplan.model.linear_program import INF, LinearProgram, ProgramBuilder
 from xlplan.model.numbers import MEMBER, FixedNumbers, ShiftingNumbers, ShiftTable
 from xlplan.model.period import FeederModel, Previous, add_capacities, add_period
-from xlplan.model.value_graph import Family, Member
+from xlplan.model.value_graph import Family, Member, Nest
 from xlplan.outages.clock import Clock
 from xlplan.outages.records import Scenario, ServicePeriod
 from xlplan.study.study import Technology
@@ -126,6 +126,7 @@ class PlanFamily(Family):
     value_upper: FloatArray
     columns: dict[str, IntArray]
     end_columns: IntArray
+    nest: Nest | None = None
     meter: object = None
     """Set by evaluation: reads a solution where it was solved."""
 
@@ -310,6 +311,13 @@ def build_plan_family(
         value_upper=value_upper,
         columns=stack(periods),
         end_columns=end,
+        nest=Nest(
+            row_last=np.where(
+                np.isin(np.arange(len(row_period)), first_plan_rows), 0, np.array(row_period)
+            ),
+            col_last=np.array(col_period),
+            exit_last=np.array([k for k, *_ in exits], dtype=np.int64),
+        ),
     )
 
 

@@ -66,6 +66,24 @@ class Member:
     value_upper: float
 
 
+@dataclass(frozen=True)
+class Nest:
+    """Says that each member of a family is the one before without some rows, columns and exits.
+
+    A row becomes free, a column is held at one value and has no cost, an exit loses its weight, and
+    stays so. While a column counts, so does every row and exit that holds it, rows that count in
+    member 0 alone excepted; when it no longer counts it is in no row that does, unless it holds the
+    incoming state of that member. Then the terms of a cut are sums over what is left, and one set
+    of multipliers gives the cuts of all later members at the cost of a few.
+
+    row_last (n_row,), col_last (n_col,), exit_last (n_exit,) : last member in which each counts
+    """
+
+    row_last: IntArray
+    col_last: IntArray
+    exit_last: IntArray
+
+
 class Family:
     """One constraint matrix and its members. Subclasses must be picklable.
 
@@ -85,6 +103,7 @@ class Family:
     patch : (n_patch,), positions in ``program.value`` that vary by member; mostly empty
     is_expanded : True if the cost of following a plan expands the exits that lead to this family
         over all of them (outage events: cheap), False if it samples them
+    nest : Nest, or None where the members differ in other ways
     """
 
     name: str
@@ -95,6 +114,7 @@ class Family:
     exit_gate: tuple[tuple[int, ...], ...]
     patch: IntArray
     is_expanded: bool
+    nest: Nest | None = None
 
     def member(self, i_member: int) -> Member:
         """Numbers of one member."""

@@ -17,13 +17,13 @@ weight of the exit; then the value at the exit needs no upper bound.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
 from xlplan.model.value_graph import Family, Member
+from xlplan.solve.member_cache import MemberCache
 from xlplan.solve.row_matrix import RowMatrix
 
 FloatArray = NDArray[np.float64]
@@ -35,8 +35,11 @@ ROUNDING_SHIFT = 1e-12
 SMALL_SLOPE = 1e-9
 """Slopes below this share of the largest term are moved into the intercept (scaling)."""
 
-SAME_NUMBER = 1e-13
-"""Relative difference below which two members are taken to have the same number."""
+TABLE_BYTES = 16_000_000
+"""A family's table of members beyond this size is not kept."""
+
+MANY_EXITS = 8
+"""Cuts of a family with more exits than this are made member by member."""
 
 SNAP_WEIGHT = 1e-6
 """Multipliers of an exit whose sum is this close to the weight are scaled up to it."""
@@ -210,54 +213,130 @@ class ExitMultipliers:
     capacity_slope: FloatArray
 
 
-@dataclass(frozen=True)
-class MemberChange:
-    """What differs between a member and the one before it: positions and new numbers."""
+class MemberTable:
+    """What differs between the members of a family, as arrays over the members.
 
-    rows: IntArray
-    row_lower: FloatArray
-    row_upper: FloatArray
-    columns: IntArray
+    Only positions that differ somewhere are stacked; the others are those of member 0. A table that
+    would be large is not kept: what is asked for is then gathered anew.
+
+    has_same_inputs : whether every member holds its incoming state in the same columns
+    """
+
+    def __init__(self, cache: MemberCache, i_family: int, family: Family) -> None:
+        self._cache, self._i_family = cache, i_family
+        self.first = first = cache.get(i_family, 0)
+        columns = np.zeros(len(first.cost), dtype=bool)
+        rows = np.zeros(len(first.row_lower), dtype=bool)
+        self.has_same_inputs = True
+        for i_member in range(1, family.n_member):
+            member = cache.get(i_family, i_member)
+            columns |= member.cost != first.cost
+            columns |= member.col_lower != first.col_lower
+            columns |= member.col_upper != first.col_upper
+            rows |= member.row_lower != first.row_lower
+            rows |= member.row_upper != first.row_upper
+            if not np.array_equal(member.in_columns, first.in_columns):
+                self.has_same_inputs = False
+        columns[family.program.index[family.patch]] = True
+        columns[family.out_columns.ravel()] = True
+        self.columns, self.rows = np.flatnonzero(columns), np.flatnonzero(rows)
+        size = 8 * family.n_member * (3 * len(self.columns) + 2 * len(self.rows))
+        self._whole: _Numbers | None = None
+        if size <= TABLE_BYTES:
+            self._whole = self._gather(np.arange(family.n_member))
+
+    def numbers(self, members: IntArray) -> _Numbers:
+        """Numbers of some members, in their order."""
+        if self._whole is None:
+            return self._gather(members)
+        return _Numbers(*(part[members] for part in vars(self._whole).values()))
+
+    def _gather(self, members: IntArray) -> _Numbers:
+        taken = [self._cache.get(self._i_family, m) for m in members.tolist()]
+        return _Numbers(
+            cost=np.array([m.cost[self.columns] for m in taken]),
+            col_lower=np.array([m.col_lower[self.columns] for m in taken]),
+            col_upper=np.array([m.col_upper[self.columns] for m in taken]),
+            row_lower=np.array([m.row_lower[self.rows] for m in taken]),
+            row_upper=np.array([m.row_upper[self.rows] for m in taken]),
+            patch_value=np.array([m.patch_value for m in taken]),
+            exit_weight=np.array([m.exit_weight for m in taken]),
+            offset=np.array([m.offset for m in taken]),
+            scale=np.array([m.scale for m in taken]),
+        )
+
+
+@dataclass(frozen=True)
+class _Numbers:
+    """Numbers of n members: (n, number of positions that differ), and (n,) for the last two."""
+
     cost: FloatArray
     col_lower: FloatArray
     col_upper: FloatArray
-    exits: IntArray
+    row_lower: FloatArray
+    row_upper: FloatArray
+    patch_value: FloatArray
     exit_weight: FloatArray
-    in_columns: IntArray
-    offset: float
-    scale: float
+    offset: FloatArray
+    scale: FloatArray
 
 
-def _differs(new: FloatArray, old: FloatArray) -> NDArray[np.bool_]:
-    """Where two vectors differ by more than rounding; equal infinities do not."""
-    with np.errstate(invalid="ignore"):
-        return (new != old) & ~(np.abs(new - old) <= SAME_NUMBER * np.abs(old))
+@dataclass(frozen=True)
+class _NestTable:
+    """Entries that the sums of a nested family need (``Nest``).
+
+    entry, entry_row, entry_place : position in the matrix, row, and place in the flattened
+        (n_member, n_state) incoming state, of entries in rows that count for that member; the same
+        for capacities, whose place is their position among those that have a column
+    """
+
+    entry: IntArray
+    entry_row: IntArray
+    entry_place: IntArray
+    capacity_entry: IntArray
+    capacity_row: IntArray
+    capacity_place: IntArray
+    first_only: IntArray
+    state_lower: FloatArray
+    state_upper: FloatArray
+    offset: FloatArray
+    scale: FloatArray
 
 
-def member_change(new: Member, old: Member) -> MemberChange:
-    """Differences of two members of a family."""
-    rows = np.flatnonzero(
-        _differs(new.row_lower, old.row_lower) | _differs(new.row_upper, old.row_upper)
-    )
-    columns = np.flatnonzero(
-        _differs(new.cost, old.cost)
-        | _differs(new.col_lower, old.col_lower)
-        | _differs(new.col_upper, old.col_upper)
-    )
-    exits = np.flatnonzero(_differs(new.exit_weight, old.exit_weight))
-    return MemberChange(
-        rows=rows,
-        row_lower=new.row_lower[rows],
-        row_upper=new.row_upper[rows],
-        columns=columns,
-        cost=new.cost[columns],
-        col_lower=new.col_lower[columns],
-        col_upper=new.col_upper[columns],
-        exits=exits,
-        exit_weight=new.exit_weight[exits],
-        in_columns=new.in_columns,
-        offset=new.offset,
-        scale=new.scale,
+def _nest_table(cache: MemberCache, i_family: int, family: Family) -> _NestTable | None:
+    """Lists those entries; None where two members hold their state in the same column."""
+    nest, program = family.nest, family.program
+    if nest is None or len(family.patch) or family.n_member < 2:
+        return None
+    members = [cache.get(i_family, m) for m in range(family.n_member)]
+    later = np.array([m.in_columns for m in members[1:]])
+    expected = np.arange(later.shape[0])[:, None]  # member u holds it in columns of u - 1
+    if (later < 0).any() or (nest.col_last[later] != expected).any():
+        return None
+    if len(np.unique(later)) != later.size:
+        return None
+    row = np.repeat(np.arange(program.n_row), np.diff(program.start))
+    n_state = later.shape[1]
+    place = np.full(program.n_col, -1, dtype=np.int64)
+    place[later.ravel()] = n_state + np.arange(later.size)
+    entry_place = place[program.index]
+    here = (entry_place >= 0) & (nest.row_last[row] >= entry_place // max(n_state, 1))
+    held = family.capacity_columns[family.capacity_columns >= 0]
+    of_capacity = np.full(program.n_col, -1, dtype=np.int64)
+    of_capacity[held] = np.arange(len(held))
+    caps = of_capacity[program.index] >= 0
+    return _NestTable(
+        entry=np.flatnonzero(here),
+        entry_row=row[here],
+        entry_place=entry_place[here],
+        capacity_entry=np.flatnonzero(caps),
+        capacity_row=row[caps],
+        capacity_place=of_capacity[program.index[caps]],
+        first_only=np.flatnonzero(nest.row_last == 0),
+        state_lower=np.array([m.col_lower[np.maximum(m.in_columns, 0)] for m in members]),
+        state_upper=np.array([m.col_upper[np.maximum(m.in_columns, 0)] for m in members]),
+        offset=np.array([m.offset for m in members]),
+        scale=np.array([m.scale for m in members]),
     )
 
 
@@ -275,6 +354,7 @@ class DualBound:
         capacity_lower: FloatArray,
         capacity_upper: FloatArray,
         theta_lower: FloatArray,
+        cache: MemberCache,
     ) -> None:
         program = family.program
         self.i_family = i_family
@@ -289,41 +369,233 @@ class DualBound:
         self.capacity_upper = capacity_upper
         self._has_column = family.capacity_columns >= 0
         self._capacity_columns = family.capacity_columns[self._has_column]
+        self._cache = cache
+        self._nest = _nest_table(cache, i_family, family)
+        self._table: MemberTable | None = None
+
+    @property
+    def is_nested(self) -> bool:
+        """Whether ``nested_cuts`` may be asked for."""
+        return self._nest is not None
 
     def cut(self, member: Member, pi: FloatArray, exits: ExitMultipliers, i_member: int,
             group: int) -> CutBatch:  # fmt: skip
         """Cut of one member from multipliers ``pi`` of the program's rows, (n_row,)."""
-        walk = _Walk(self, member, pi, exits)
-        return self._finish([walk.terms()], [i_member], group, walk.size)
+        parts = _Sum(self, member, pi, exits)
+        return self._finish([parts.terms()], [i_member], group, parts.size)
 
-    def cuts_along(
-        self,
-        member: Member,
-        i_member: int,
-        changes: Sequence[MemberChange],
-        pi: FloatArray,
-        exits: ExitMultipliers,
-        group: int,
+    def nested_cuts(
+        self, member: Member, i_member: int, pi: FloatArray, exits: ExitMultipliers, group: int
     ) -> CutBatch:
-        """Cuts of one member and of those that follow it by ``changes``, from one ``pi``.
+        """Cuts of one member and of all later ones of a nested family, from one ``pi``.
 
-        Only what changes from member to member is worked out anew; the family has no patch.
+        What a later member has is the sum over the rows, columns and exits that are left.
         """
-        walk = _Walk(self, member, pi, exits)
-        terms = [walk.terms()]
-        for change in changes:
-            walk.move(change)
-            terms.append(walk.terms())
-        return self._finish(terms, list(range(i_member, i_member + len(terms))), group, walk.size)
+        parts = _Sum(self, member, pi, exits)
+        first = parts.terms()
+        nest, table = self.family.nest, self._nest
+        assert nest is not None
+        assert table is not None
+        n = self.family.n_member
+        later = np.arange(i_member + 1, n)
+        if not len(later):
+            return self._finish([first], [i_member], group, parts.size)
+        full = np.zeros(len(pi))
+        full[parts.rows] = parts.pi
+        d, col_term = parts.d, parts.col_term
+        if i_member == 0 and full[table.first_only].any():
+            rows = table.first_only
+            d = d + self.matrix.transposed_times(rows, full[rows])
+            col_term = _col_terms(d, parts.col_lower, parts.col_upper)
+            full[rows] = 0.0
+        col_term = col_term.copy()
+        col_term[self._capacity_columns] = 0.0
+
+        def left(last: IntArray, term: FloatArray) -> FloatArray:
+            """Sum of what still counts, by member, (n_member,)."""
+            total = np.bincount(np.clip(last, -1, n - 1) + 1, term, n + 1)
+            suffix: FloatArray = np.cumsum(total[::-1])[::-1][1:]
+            return suffix
+
+        intercept = table.offset + left(nest.col_last, col_term)
+        row_last = nest.row_last[parts.rows]
+        row_term = np.where(row_last > 0, parts.row_term, 0.0)
+        intercept += left(row_last, row_term)
+        intercept += left(nest.exit_last, parts.cut_term + parts.theta_term)
+        n_capacity = parts.capacity_part.shape[1]
+        exit_last = np.clip(nest.exit_last, -1, n - 1) + 1
+        by_exit = np.zeros((n + 1, n_capacity))
+        np.add.at(by_exit, exit_last[parts.used], parts.capacity_part[parts.used])
+        entry = self.matrix.value[table.capacity_entry] * full[table.capacity_row]
+        last = np.clip(nest.row_last[table.capacity_row], -1, n - 1) + 1
+        n_held = len(self._capacity_columns)
+        by_row = np.bincount(table.capacity_place * (n + 1) + last, entry, n_held * (n + 1))
+        by_exit[:, self._has_column] -= by_row.reshape(n_held, n + 1).T
+        capacity_slope = np.cumsum(by_exit[::-1], axis=0)[::-1][1:]
+        n_state = table.state_lower.shape[1]
+        entry = self.matrix.value[table.entry] * full[table.entry_row]
+        state_slope = -np.bincount(table.entry_place, entry, n * n_state).reshape(n, n_state)
+        return self._assembled(
+            np.arange(i_member, n),
+            np.concatenate([[first.intercept], intercept[later]]),
+            np.vstack([first.state_slope[None, :], state_slope[later]]),
+            np.vstack([first.capacity_slope[None, :], capacity_slope[later]]),
+            np.vstack([first.state_lower[None, :], table.state_lower[later]]),
+            np.vstack([first.state_upper[None, :], table.state_upper[later]]),
+            table.scale[i_member:],
+            group,
+            parts.size,
+        )
+
+    def cuts_of(
+        self, members: IntArray, pi: FloatArray, cuts: SharedMultipliers, group: int
+    ) -> CutBatch | None:
+        """Cuts of several members from the same ``pi``, each with its own children's cuts.
+
+        Parameters
+        ----------
+        members : array, shape (n,)
+        pi : array, shape (n_row,)
+        cuts : SharedMultipliers
+        group : int
+
+        Returns
+        -------
+        CutBatch of n cuts; None where the family is not fit for it (many exits, other inputs)
+        """
+        if len(self.family.exit_gate) > MANY_EXITS:
+            return None
+        if self._table is None:
+            self._table = MemberTable(self._cache, self.i_family, self.family)
+        table = self._table
+        if not table.has_same_inputs:
+            return None
+        now, first = table.numbers(members), table.first
+        n = len(members)
+        rows = np.flatnonzero(pi)
+        multiplier = pi[rows]
+        differs = np.isin(rows, table.rows, assume_unique=True)
+        low, high = first.row_lower[rows], first.row_upper[rows]
+        usable = _usable(multiplier, low, high)
+        usable[differs] = multiplier[differs]
+        place = np.searchsorted(table.rows, rows[differs])
+        side = np.where(multiplier[differs] > 0.0, now.row_lower[:, place], now.row_upper[:, place])
+        if not np.isfinite(side).all():
+            return None
+        row_const = _row_terms(usable[~differs], low[~differs], high[~differs])
+        row_vary = side * multiplier[differs]
+        d = first.cost - self.matrix_of(first).transposed_times(rows, usable)
+        columns = table.columns
+        at_column = np.full(len(d), -1, dtype=np.int64)
+        at_column[columns] = np.arange(len(columns))
+        d_vary = now.cost + (d[columns] - first.cost[columns])
+        if len(self.patch):
+            full = np.zeros(len(pi))
+            full[rows] = usable
+            step = full[self.patch_row] * (now.patch_value - first.patch_value)
+            np.subtract.at(d_vary, (slice(None), at_column[self.patch_column]), step)
+        # Children's cuts: scaled down where they weigh more than the exit does.
+        weight = now.exit_weight
+        n_exit = weight.shape[1]
+        total = np.bincount(cuts.exit, cuts.pi, n_exit)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            ratio = np.where(total > 0.0, weight / np.where(total > 0.0, total, 1.0), 0.0)
+        factor = np.where(ratio < 1.0 + SNAP_WEIGHT, ratio, 1.0)
+        rest = np.maximum(weight - factor * total, 0.0)
+        exit_term = rest * self.theta_lower
+        capacity_slope = np.zeros((n, len(self.capacity_lower)))
+        cut_term = np.zeros((n, len(cuts.exit)))
+        for i, e in enumerate(cuts.exit.tolist()):
+            share = factor[:, e] * cuts.pi[i]
+            cut_term[:, i] = share * cuts.intercept[:, i]
+            capacity_slope += share[:, None] * cuts.capacity_slope[:, i]
+            places = at_column[self.family.out_columns[e]]
+            np.add.at(d_vary, (slice(None), places), share[:, None] * cuts.state_slope[:, i])
+        given = first.in_columns >= 0
+        into = np.where(given, first.in_columns, 0)
+        apart = np.zeros(len(d), dtype=bool)
+        apart[into[given]] = True
+        apart[self._capacity_columns] = True
+        const = ~apart
+        const[columns] = False
+        col_const = _col_terms(d[const], first.col_lower[const], first.col_upper[const])
+        inside = ~apart[columns]
+        col_vary = _col_terms(d_vary[:, inside], now.col_lower[:, inside], now.col_upper[:, inside])
+        intercept = (
+            now.offset
+            + float(row_const.sum())
+            + float(col_const.sum())
+            + row_vary.sum(axis=1)
+            + col_vary.sum(axis=1)
+            + cut_term.sum(axis=1)
+            + exit_term.sum(axis=1)
+        )
+        size = float(
+            np.abs(now.offset).max()
+            + np.abs(row_const).sum()
+            + np.abs(col_const).sum()
+            + np.abs(row_vary).sum(axis=1).max()
+            + np.abs(col_vary).sum(axis=1).max()
+            + np.abs(cut_term).sum(axis=1).max()
+            + np.abs(exit_term).sum(axis=1).max()
+        )
+
+        def by_member(wanted: IntArray, same: FloatArray, vary: FloatArray) -> FloatArray:
+            """Numbers of some columns, (n, n_wanted), where some of them differ by member."""
+            found = np.tile(same[wanted], (n, 1))
+            place = at_column[wanted]
+            found[:, place >= 0] = vary[:, place[place >= 0]]
+            return found
+
+        state_slope = np.where(given, by_member(into, d, d_vary), 0.0)
+        capacity_slope[:, self._has_column] += by_member(self._capacity_columns, d, d_vary)
+        lower = by_member(into, first.col_lower, now.col_lower)
+        upper = by_member(into, first.col_upper, now.col_upper)
+        return self._assembled(
+            members,
+            intercept,
+            state_slope,
+            capacity_slope,
+            np.where(given, lower, 0.0),
+            np.where(given, upper, 0.0),
+            now.scale,
+            group,
+            size,
+        )
+
+    def matrix_of(self, member: Member) -> RowMatrix:
+        """The matrix with one member's patch written into it."""
+        if len(self.patch):
+            self.matrix.value[self.patch] = member.patch_value
+            self.patch_base = member.patch_value
+        return self.matrix
 
     def _finish(self, terms: list[_Terms], members: list[int], group: int, size: float) -> CutBatch:
+        return self._assembled(
+            np.array(members, dtype=np.int64),
+            np.array([t.intercept for t in terms]),
+            np.array([t.state_slope for t in terms]),
+            np.array([t.capacity_slope for t in terms]),
+            np.array([t.state_lower for t in terms]),
+            np.array([t.state_upper for t in terms]),
+            np.array([t.scale for t in terms]),
+            group,
+            size,
+        )
+
+    def _assembled(
+        self,
+        members: IntArray,
+        intercept: FloatArray,
+        state_slope: FloatArray,
+        capacity_slope: FloatArray,
+        state_lower: FloatArray,
+        state_upper: FloatArray,
+        scale: FloatArray,
+        group: int,
+        size: float,
+    ) -> CutBatch:
         """Scales, moves small slopes into the intercept, lowers for rounding."""
-        scale = np.array([t.scale for t in terms])
-        intercept = np.array([t.intercept for t in terms])
-        state_slope = np.array([t.state_slope for t in terms])
-        capacity_slope = np.array([t.capacity_slope for t in terms])
-        state_lower = np.array([t.state_lower for t in terms])
-        state_upper = np.array([t.state_upper for t in terms])
         shift = ROUNDING_SHIFT * size
         for slope, lower, upper in (
             (state_slope, state_lower, state_upper),
@@ -332,17 +604,33 @@ class DualBound:
             if slope.size:
                 largest = np.abs(slope).max(axis=1, initial=0.0, keepdims=True)
                 is_small = (slope != 0.0) & (np.abs(slope) < SMALL_SLOPE * largest)
-                moved = np.where(is_small, np.minimum(slope * lower, slope * upper), 0.0)
-                intercept += moved.sum(axis=1)
-                slope[is_small] = 0.0
+                if is_small.any():
+                    moved = np.where(is_small, np.minimum(slope * lower, slope * upper), 0.0)
+                    intercept = intercept + moved.sum(axis=1)
+                    slope[is_small] = 0.0
         return CutBatch(
             self.i_family,
-            np.array(members, dtype=np.int64),
+            members,
             (intercept - shift) / scale,
             state_slope / scale[:, None],
             capacity_slope / scale[:, None],
             np.full(len(members), group, dtype=np.int64),
         )
+
+
+@dataclass(frozen=True)
+class SharedMultipliers:
+    """Multipliers of children's cuts that serve several members, each with its own cuts.
+
+    exit, pi : (n_cut,); intercept (n, n_cut), state_slope (n, n_cut, n_state), capacity_slope
+    (n, n_cut, n_capacity) of the cut that takes the same place for each of n members
+    """
+
+    exit: IntArray
+    pi: FloatArray
+    intercept: FloatArray
+    state_slope: FloatArray
+    capacity_slope: FloatArray
 
 
 @dataclass(frozen=True)
@@ -357,18 +645,16 @@ class _Terms:
     scale: float
 
 
-class _Walk:
-    """Terms of the weak-duality sum, moved from member to member."""
+class _Sum:
+    """Terms of the weak-duality sum of one member."""
 
     def __init__(
         self, bound: DualBound, member: Member, pi: FloatArray, exits: ExitMultipliers
     ) -> None:
         self.bound = bound
         matrix = bound.matrix
-        self.pi_given = pi
-        self.cost = member.cost.copy()
-        self.col_lower, self.col_upper = member.col_lower.copy(), member.col_upper.copy()
-        self.weight = member.exit_weight.copy()
+        self.col_lower, self.col_upper = member.col_lower, member.col_upper
+        self.weight = member.exit_weight
         self.in_columns, self.offset, self.scale = member.in_columns, member.offset, member.scale
         # Most lazy rows have no multiplier: only the others are kept.
         self.rows = np.flatnonzero(pi)
@@ -376,7 +662,7 @@ class _Walk:
         self.row_term = _row_terms(
             self.pi, member.row_lower[self.rows], member.row_upper[self.rows]
         )
-        self.d = self.cost.copy()
+        self.d = member.cost.copy()
         if len(self.rows):
             self.d -= matrix.transposed_times(self.rows, self.pi)
         if len(bound.patch):
@@ -384,93 +670,36 @@ class _Walk:
             full[self.rows] = self.pi
             step = full[bound.patch_row] * (member.patch_value - bound.patch_base)
             np.subtract.at(self.d, bound.patch_column, step)
-        # Cuts of the children, ordered by exit so that one exit is one slice.
-        order = np.argsort(exits.exit, kind="stable")
-        self.cut_exit, self.cut_pi = exits.exit[order], exits.pi[order]
-        self.cut_intercept = exits.intercept[order]
-        self.cut_slope, self.cut_capacity = exits.state_slope[order], exits.capacity_slope[order]
-        n_exit = len(self.weight)
-        self.begin = np.searchsorted(self.cut_exit, np.arange(n_exit + 1))
-        self.pi_sum = np.bincount(self.cut_exit, weights=self.cut_pi, minlength=n_exit)
-        self.factor = np.zeros(n_exit)
-        self.cut_term = np.zeros(n_exit)
-        self.theta_term = np.zeros(n_exit)
-        self.capacity_part = np.zeros((n_exit, self.cut_capacity.shape[1]))
-        self.weighted_exits(np.arange(n_exit))
+        self.cut_exit, self.cut_pi = exits.exit, exits.pi
+        self.cut_intercept = exits.intercept
+        self.cut_slope, self.cut_capacity = exits.state_slope, exits.capacity_slope
+        self.capacity_part = np.zeros((len(self.weight), self.cut_capacity.shape[1]))
+        self._weigh_exits()
         self.col_term = _col_terms(self.d, self.col_lower, self.col_upper)
-        # Later members have fewer terms: the first one's size bounds the rounding of them all.
+        # Later members of a nest have fewer terms: this bounds the rounding of them all.
         self.size = abs(self.offset) + sum(
             float(np.abs(term).sum())
             for term in (self.row_term, self.col_term, self.cut_term, self.theta_term)
         )
 
-    def weighted_exits(self, exits: IntArray) -> IntArray:
-        """Scales the multipliers of some exits to their weights; the columns that this moves."""
-        weight, total = self.weight[exits], self.pi_sum[exits]
+    def _weigh_exits(self) -> None:
+        """Scales the multipliers of every exit to its weight, and adds the cuts' slopes."""
+        n_exit = len(self.weight)
+        total = np.bincount(self.cut_exit, weights=self.cut_pi, minlength=n_exit)
         with np.errstate(divide="ignore", invalid="ignore"):
-            ratio = np.where(total > 0.0, weight / np.where(total > 0.0, total, 1.0), 0.0)
+            ratio = np.where(total > 0.0, self.weight / np.where(total > 0.0, total, 1.0), 0.0)
         factor = np.where(ratio < 1.0 + SNAP_WEIGHT, ratio, 1.0)
-        rest = np.maximum(weight - factor * total, 0.0)
-        lower = self.bound.theta_lower[exits]
-        self.theta_term[exits] = np.where(rest > 0.0, rest * lower, 0.0)
-        change = factor - self.factor[exits]
-        self.factor[exits] = factor
-        moved = exits[(change != 0.0) & (total > 0.0)]
-        if not len(moved):
-            return np.zeros(0, dtype=np.int64)
-        # All cuts of the moved exits as one index array.
-        counts = self.begin[moved + 1] - self.begin[moved]
-        which = np.repeat(self.begin[moved] - np.cumsum(counts) + counts, counts)
-        which += np.arange(len(which))
-        factors = np.zeros(len(self.factor))
-        factors[exits] = change
-        step = self.cut_pi[which] * factors[self.cut_exit[which]]
-        out = self.bound.family.out_columns[self.cut_exit[which]]
-        np.add.at(self.d, out, step[:, None] * self.cut_slope[which])
-        np.add.at(self.cut_term, self.cut_exit[which], step * self.cut_intercept[which])
-        np.add.at(
-            self.capacity_part, self.cut_exit[which], step[:, None] * self.cut_capacity[which]
-        )
-        zero = moved[factor[np.searchsorted(exits, moved)] == 0.0]
-        self.cut_term[zero] = 0.0  # no rounding left behind
-        self.capacity_part[zero] = 0.0
-        return out.ravel()
-
-    def move(self, change: MemberChange) -> None:
-        """Goes on to the next member."""
-        touched = [change.columns]
-        self.offset, self.scale = change.offset, change.scale
-        self.in_columns = change.in_columns
-        if len(change.columns):
-            self.d[change.columns] += change.cost - self.cost[change.columns]
-            self.cost[change.columns] = change.cost
-            self.col_lower[change.columns] = change.col_lower
-            self.col_upper[change.columns] = change.col_upper
-        has_pi = self.pi_given[change.rows] != 0.0
-        if has_pi.any():
-            rows, low, high = (
-                part[has_pi] for part in (change.rows, change.row_lower, change.row_upper)
-            )
-            places = np.searchsorted(self.rows, rows)
-            pi = _usable(self.pi_given[rows], low, high)
-            step = pi - self.pi[places]
-            self.row_term[places] = _row_terms(pi, low, high)
-            self.pi[places] = pi
-            moved = step != 0.0
-            if moved.any():
-                start, index, value = self.bound.matrix.take(rows[moved])
-                np.subtract.at(self.d, index, value * np.repeat(step[moved], np.diff(start)))
-                touched.append(index)
-        if len(change.exits):
-            self.weight[change.exits] = change.exit_weight
-            touched.append(self.weighted_exits(change.exits))
-        columns = np.concatenate(touched)
-        self.col_term[columns] = _col_terms(
-            self.d[columns], self.col_lower[columns], self.col_upper[columns]
-        )
+        rest = np.maximum(self.weight - factor * total, 0.0)
+        self.theta_term = np.where(rest > 0.0, rest * self.bound.theta_lower, 0.0)
+        step = self.cut_pi * factor[self.cut_exit]
+        out = self.bound.family.out_columns[self.cut_exit]
+        np.add.at(self.d, out, step[:, None] * self.cut_slope)
+        self.cut_term = np.bincount(self.cut_exit, step * self.cut_intercept, n_exit)
+        self.used = np.unique(self.cut_exit)
+        np.add.at(self.capacity_part, self.cut_exit, step[:, None] * self.cut_capacity)
 
     def terms(self) -> _Terms:
-        """Sums for the member the walk stands at."""
+        """Its sums."""
         bound = self.bound
         columns = np.concatenate([self.in_columns[self.in_columns >= 0], bound._capacity_columns])
         kept = self.col_term[columns]

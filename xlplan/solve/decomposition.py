@@ -28,7 +28,8 @@ from xlplan.base.rng import stream
 from xlplan.model.value_graph import ValueGraph
 from xlplan.solve.first_stage import FirstStage, FirstStagePlan, capacities_of, state_of
 from xlplan.solve.follow import Follower, Following, RootPoint, Sampled, Term
-from xlplan.solve.node_solver import Measure, NodeRequest, NodeSolution, new_pools
+from xlplan.solve.member_cache import MemberCache
+from xlplan.solve.node_solver import Measure, NodeRequest, NodeSolution, Share, new_pools
 from xlplan.solve.result import (
     CostEstimate,
     DecompositionResult,
@@ -42,7 +43,7 @@ from xlplan.solve.stopping import (
     is_relaxation_settled,
     must_measure_now,
 )
-from xlplan.solve.tables import MemberCache, gather_tables
+from xlplan.solve.tables import gather_tables
 from xlplan.solve.workers import Workers
 
 FloatArray = NDArray[np.float64]
@@ -453,14 +454,14 @@ class _Run:
             chained = self._chain(points, request) if is_partial else None
             selected = [self._select(p, is_partial) for p in points]
             shares = [
-                self._neighbours(p, s) if is_partial else {}
+                self._left_out(p, s) if is_partial else {}
                 for p, s in zip(points, selected, strict=True)
             ]
 
             def first_request(point: RootPoint, j: int, child: tuple[int, int]) -> NodeRequest:
                 e = int(point.exits.index[j])
                 made = request(child, point.solution.out_states[e], point.capacity)
-                return replace(made, share=shares[point.i_root].get(child, ()))
+                return replace(made, share=shares[point.i_root].get(child[0]))
 
             found = engine._follower.follow(
                 points,
@@ -537,22 +538,17 @@ class _Run:
             chosen[large[error[large] > 0.0]] = True
         return chosen
 
-    def _neighbours(
-        self, point: RootPoint, selected: BoolArray
-    ) -> dict[tuple[int, int], tuple[tuple[int, FloatArray], ...]]:
-        """Members of the same family near each selected one that are left out of this pass."""
+    def _left_out(self, point: RootPoint, selected: BoolArray) -> dict[int, Share]:
+        """By family: members that this pass leaves out, their states and what is known of them."""
         child, index = point.exits.child, point.exits.index
-        left: dict[int, dict[int, FloatArray]] = {}
-        for j in np.flatnonzero(~selected):
-            i_family, i_member = child[j].tolist()
-            left.setdefault(i_family, {})[i_member] = point.solution.out_states[index[j]]
-        reach = self.options.stride // 2
         shares = {}
-        for j in np.flatnonzero(selected):
-            i_family, i_member = child[j].tolist()
-            near = left.get(i_family, {})
-            shares[i_family, i_member] = tuple(
-                (m, near[m]) for m in range(i_member - reach, i_member + reach + 1) if m in near
+        for i_family in np.unique(child[:, 0]).tolist():
+            left = np.flatnonzero(~selected & (child[:, 0] == i_family))
+            # A family may be reached by several exits of one period: one state will do.
+            members, first = np.unique(child[left, 1], return_index=True)
+            places = index[left[first]]
+            shares[i_family] = Share(
+                members, point.solution.out_states[places], point.solution.theta[places]
             )
         return shares
 

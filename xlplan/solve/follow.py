@@ -24,9 +24,10 @@ from numpy.typing import NDArray
 
 from xlplan.model.value_graph import ValueGraph
 from xlplan.solve.cuts import CutBatch
+from xlplan.solve.member_cache import MemberCache
 from xlplan.solve.node_solver import NodeRequest, NodeSolution
 from xlplan.solve.result import CostEstimate
-from xlplan.solve.tables import GraphTables, MemberCache
+from xlplan.solve.tables import GraphTables
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]

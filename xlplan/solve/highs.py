@@ -87,7 +87,7 @@ class SolverFailureError(RuntimeError):
 class KeptModel:
     """A linear program kept in HiGHS: bounds, costs and rows change, the basis stays.
 
-    ``counts`` collects solves, simplex iterations, seconds and fallbacks.
+    ``counts`` collects solves and fallbacks, ``seconds`` the time inside HiGHS.
     """
 
     def __init__(
@@ -217,11 +217,13 @@ class KeptModel:
         begin = time.perf_counter()
         run_status = self._highs.run()
         result = _read_result(self._highs, run_status, False, begin)
-        info = self._highs.getInfo()
         self.counts["solve"] += 1
-        self.counts["simplex iteration"] += max(int(info.simplex_iteration_count), 0)
         self.seconds += result.seconds
         return result
+
+    def column_duals(self) -> FloatArray:
+        """Reduced costs of the last run, which was optimal."""
+        return np.asarray(self._highs.getSolution().col_dual)
 
     def save(self) -> Path | None:
         """Writes the model to a file of the temporary folder; None where that fails."""
@@ -244,13 +246,14 @@ def _read_result(
     if run_status == highspy.HighsStatus.kError:
         termination = Termination.ERROR
     solution = highs.getSolution()
-    info = highs.getInfo()
     is_optimal = termination is Termination.OPTIMAL
-    is_feasible = info.primal_solution_status == highspy.SolutionStatus.kSolutionStatusFeasible
-    has_incumbent = is_optimal or (is_mip and solution.value_valid and is_feasible)
+    has_incumbent, bound = is_optimal, float("nan")
+    if is_mip:
+        info = highs.getInfo()
+        is_feasible = info.primal_solution_status == highspy.SolutionStatus.kSolutionStatusFeasible
+        has_incumbent = is_optimal or (solution.value_valid and is_feasible)
     has_dual = is_optimal and not is_mip and solution.dual_valid
     objective = float(highs.getObjectiveValue()) if has_incumbent else float("nan")
-    bound = float("nan")
     if is_mip and termination is not Termination.ERROR:
         bound = float(info.mip_dual_bound)
     elif is_optimal:
@@ -266,7 +269,6 @@ def _read_result(
         # Attribute access builds a list of the whole vector, hence once each.
         col_value_or_none=np.asarray(solution.col_value) if has_incumbent else None,
         row_dual_or_none=np.asarray(solution.row_dual) if has_dual else None,
-        col_dual_or_none=np.asarray(solution.col_dual) if has_dual else None,
     )
 
 

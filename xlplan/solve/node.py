@@ -1,8 +1,9 @@
 """One family's linear program kept warm: members, states and capacities change, the basis stays.
 
 Enters: a state, capacities, the cuts of the children. Leaves: ``NodeOutcome``, and cuts of the
-node's own value. Three things are left out of the program at first and added where the solution
-violates them: lazy rows, the cuts of the children, and the lifting of a gated exit's cuts.
+node's own value. Folded columns are left out of the program (``folding.py``). Three things are left
+out at first and added where the solution violates them: lazy rows and the bounds of folded columns,
+the cuts of the children, and the lifting of a gated exit's cuts.
 
 Capacities are fixed here, so a child's cut ``theta >= a + g s + h c`` is the row
 ``theta - g s >= a + h c`` whose right side moves with ``c``. Exits that have the same child in
@@ -29,14 +30,15 @@ from xlplan.solve.cuts import (
     CutPool,
     DualBound,
     ExitMultipliers,
-    MemberChange,
+    SharedMultipliers,
     lift_amount,
-    member_change,
 )
+from xlplan.solve.folding import Expanded, Folding
 from xlplan.solve.highs import FEASIBILITY_TOLERANCE, KeptModel
+from xlplan.solve.member_cache import MemberCache
 from xlplan.solve.result import SolveResult
 from xlplan.solve.row_matrix import RowMatrix
-from xlplan.solve.tables import GraphTables, MemberCache
+from xlplan.solve.tables import GraphTables
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -57,9 +59,6 @@ FACE_TOLERANCE = 1e-7
 
 FIRST_SLOTS = 3
 """Slots for the cuts of a child that changes with the member; more are added when needed."""
-
-NESTED_SHARE = 0.25
-"""A family whose members differ from the one before in less than this share is walked along."""
 
 
 @dataclass(frozen=True)
@@ -98,24 +97,38 @@ class _CutRows:
             setattr(self, name, np.concatenate([getattr(self, name), getattr(other, name)]))
 
 
-def family_changes(cache: MemberCache, i_family: int, n_member: int) -> list[MemberChange] | None:
-    """Differences from member to member where they are few, else None."""
-    if n_member < 2:
-        return None
-    first = cache.get(i_family, 0)
-    size = len(first.cost) + len(first.row_lower)
-    changes: list[MemberChange] = []
-    total = 0
-    before = first
-    for i_member in range(1, n_member):
-        now = cache.get(i_family, i_member)
-        change = member_change(now, before)
-        total += len(change.rows) + len(change.columns)
-        if total > NESTED_SHARE * size * (n_member - 1):
-            return None
-        changes.append(change)
-        before = now
-    return changes
+class _ProgramRows:
+    """Which program rows, and bounds of folded columns, are in the model, and where.
+
+    program (n,) program row or -1; bounded (n,) fold whose column's bound it is, or -1; place (n,)
+    row of the model; ``multiple`` times fold row ``multiple_fold`` is part of the
+    ``multiple_row``-th of them; of_program, of_bound: the way back, -1 where not in the model.
+    """
+
+    def __init__(self, n_row: int, n_fold: int, rows: IntArray, expanded: Expanded) -> None:
+        self.program = self.bounded = self.place = np.zeros(0, dtype=np.int64)
+        self.multiple_row = self.multiple_fold = np.zeros(0, dtype=np.int64)
+        self.multiple = np.zeros(0)
+        self.of_program = np.full(n_row, -1, dtype=np.int64)
+        self.of_bound = np.full(n_fold, -1, dtype=np.int64)
+        none = np.full(len(rows), -1, dtype=np.int64)
+        self.append(rows, none, np.arange(len(rows)), expanded)
+
+    def __len__(self) -> int:
+        return len(self.program)
+
+    def append(self, rows: IntArray, folds: IntArray, places: IntArray, expanded: Expanded) -> None:
+        """Puts rows behind."""
+        new = len(self) + np.arange(len(rows))
+        self.of_program[rows[rows >= 0]] = new[rows >= 0]
+        self.of_bound[folds[folds >= 0]] = new[folds >= 0]
+        self.program = np.concatenate([self.program, rows])
+        self.bounded = np.concatenate([self.bounded, folds])
+        self.place = np.concatenate([self.place, places])
+        counts = np.diff(expanded.fold_start)
+        self.multiple_row = np.concatenate([self.multiple_row, np.repeat(new, counts)])
+        self.multiple_fold = np.concatenate([self.multiple_fold, expanded.fold])
+        self.multiple = np.concatenate([self.multiple, expanded.multiple])
 
 
 class NodeModel:
@@ -139,28 +152,43 @@ class NodeModel:
         self.n_state = self.table.n_state
         self.counts: Counter[str] = Counter()
         self._matrix = RowMatrix(program)
-        loaded = np.flatnonzero(~program.is_lazy)
-        start, index, value = self._matrix.take(loaded)
-        n_all = self.n_col + self.n_exit
-        self._program_rows = loaded  # program row of the model's first rows, in order
-        self._model_rows = np.arange(len(loaded))
-        self._row_place = np.full(program.n_row, -1, dtype=np.int64)
-        self._row_place[loaded] = np.arange(len(loaded))
-        self._lower = np.concatenate([program.col_lower, self.table.theta_lower])
-        self._upper = np.concatenate([program.col_upper, np.full(self.n_exit, np.inf)])
-        self._cost = np.zeros(n_all)
-        self._row_lower, self._row_upper = program.row_lower.copy(), program.row_upper.copy()
+        self._folding = Folding(program, self._matrix)
+        kept = self._folding.kept
+        self.n_kept = len(kept)
+        # Column of the model that holds each program column; exits stand behind the kept ones.
+        self._column_place = np.full(self.n_col, -1, dtype=np.int64)
+        self._column_place[kept] = np.arange(self.n_kept)
+        self._lower = np.concatenate([program.col_lower[kept], self.table.theta_lower])
+        self._upper = np.concatenate([program.col_upper[kept], np.full(self.n_exit, np.inf)])
+        self._cost = np.zeros(self.n_kept + self.n_exit)
+        self._fold_side = np.zeros(len(self._folding))
+        self._is_fold_free = np.zeros(len(self._folding), dtype=bool)
+        is_fold_row = np.zeros(program.n_row, dtype=bool)
+        is_fold_row[self._folding.row] = True
+        loaded = np.flatnonzero(~program.is_lazy & ~is_fold_row)
+        first = self._folding.expand_rows(loaded)
+        self._rows = _ProgramRows(program.n_row, len(self._folding), loaded, first)
+        self._lazy = np.flatnonzero(program.is_lazy)
+        self._lazy_entries = self._matrix.entries(self._lazy)
+        self._lazy_index = program.index[self._lazy_entries]
+        self._lazy_value = program.value[self._lazy_entries]
+        self._lazy_of_entry = np.repeat(
+            np.arange(len(self._lazy)), np.diff(program.start)[self._lazy]
+        )
+        self._row_lower, self._row_upper = program.row_lower, program.row_upper
+        self._low, self._high = program.row_lower[loaded], program.row_upper[loaded]
         self._model = KeptModel(
             family.name,
             self._cost,
             self._lower,
             self._upper,
-            self._row_lower[loaded],
-            self._row_upper[loaded],
-            start,
-            index,
-            value,
+            self._low,
+            self._high,
+            first.start,
+            self._column_place[first.index],
+            first.value,
         )
+        self._out_places = self._column_place[family.out_columns]
         self._member_index = -1
         self._member: Member | None = None
         self._capacity = np.full(len(graph.capacity_lower), np.nan)
@@ -173,6 +201,8 @@ class NodeModel:
             capacity_slope=np.zeros((0, n_capacity)),
             group=np.zeros(0, dtype=np.int64),
         )
+        self._has_capacity = family.capacity_columns >= 0
+        self._capacity_columns = family.capacity_columns[self._has_capacity]
         self._known: set[tuple[int, int, int, int]] = set()
         self._is_gated = np.array([bool(g) for g in family.exit_gate], dtype=bool)
         self._gate = np.zeros(self.n_exit)
@@ -225,7 +255,7 @@ class NodeModel:
         assert self._member is not None
         result = self._model.run()
         for _ in range(MAX_ROUNDS):
-            y = result.col_value[: self.n_col]
+            y = self._point(result.col_value)
             n_new = self._add_lazy_rows(y)
             n_new += self._add_cuts(result, capacity, cut_tolerance)
             if not n_new:
@@ -233,45 +263,53 @@ class NodeModel:
             result = self._model.run()
         else:
             self.counts["row rounds used up"] += 1
-        primal = result.col_value
+            y = self._point(result.col_value)
         if second_cost is not None:
             for _ in range(MAX_ROUNDS):
-                primal = self._second(result, second_cost)
+                y = self._point(self._second(result, second_cost))
                 # The second point may break rows that the first one did not need.
-                if not self._add_lazy_rows(primal[: self.n_col]):
+                if not self._add_lazy_rows(y):
                     break
                 result = self._model.run()
-        return self._outcome(result, primal, capacity)
+        return self._outcome(result, y, capacity)
+
+    def _point(self, primal: FloatArray) -> FloatArray:
+        """``y`` of the program, (n_col,), from the model's columns."""
+        y = np.empty(self.n_col)
+        y[self._folding.kept] = primal[: self.n_kept]
+        if len(self._folding):
+            self._folding.complete(y, self._fold_side)
+        return y
 
     def _place(self, i_member: int, state: FloatArray, capacity: FloatArray) -> None:
         """Brings the kept model to a member, a state and capacities."""
         member = self.cache.get(self.i_family, i_member)
+        kept = self._folding.kept
         lower, upper = self._lower.copy(), self._upper.copy()
-        lower[: self.n_col], upper[: self.n_col] = member.col_lower, member.col_upper
-        columns = self.family.capacity_columns
-        held = columns >= 0
-        lower[columns[held]] = upper[columns[held]] = capacity[held]
+        lower[: self.n_kept], upper[: self.n_kept] = member.col_lower[kept], member.col_upper[kept]
+        columns = self._column_place[self._capacity_columns]
+        lower[columns] = upper[columns] = capacity[self._has_capacity]
         given = member.in_columns >= 0
-        lower[member.in_columns[given]] = upper[member.in_columns[given]] = state[given]
+        columns = self._column_place[member.in_columns[given]]
+        lower[columns] = upper[columns] = state[given]
         moved = np.flatnonzero((lower != self._lower) | (upper != self._upper))
         self._model.set_col_bounds(moved, lower[moved], upper[moved])
         self._lower, self._upper = lower, upper
         is_new_member = i_member != self._member_index
         if is_new_member:
-            cost = np.concatenate([member.cost, member.exit_weight])
+            cost = np.concatenate([member.cost[kept], member.exit_weight])
             moved = np.flatnonzero(cost != self._cost)
             self._model.set_costs(moved, cost[moved])
             self._cost = cost
-            rows = self._program_rows
-            is_moved = (member.row_lower[rows] != self._row_lower[rows]) | (
-                member.row_upper[rows] != self._row_upper[rows]
-            )
-            self._model.set_row_bounds(
-                self._model_rows[is_moved],
-                member.row_lower[rows[is_moved]],
-                member.row_upper[rows[is_moved]],
-            )
             self._row_lower, self._row_upper = member.row_lower, member.row_upper
+            if len(self._folding):
+                side = member.row_lower[self._folding.row]
+                self._is_fold_free = ~np.isfinite(side)
+                self._fold_side = np.where(self._is_fold_free, 0.0, side)
+            low, high = self._sides(member)
+            moved = np.flatnonzero((low != self._low) | (high != self._high))
+            self._model.set_row_bounds(self._rows.place[moved], low[moved], high[moved])
+            self._low, self._high = low, high
             self._patch(member)
         if not np.array_equal(capacity, self._capacity):
             self._capacity = capacity.copy()
@@ -284,36 +322,83 @@ class NodeModel:
         if is_new_member and not self.table.is_fixed:
             self._fill_slots(member, capacity)
 
+    def _sides(self, member: Member, begin: int = 0) -> tuple[FloatArray, FloatArray]:
+        """Sides of the program's rows in the model from the ``begin``-th on."""
+        rows, folding = self._rows, self._folding
+        is_bound = rows.program[begin:] < 0
+        program = np.maximum(rows.program[begin:], 0)
+        low, high = member.row_lower[program], member.row_upper[program]
+        if is_bound.any():
+            folds = rows.bounded[begin:][is_bound]
+            columns = folding.column[folds]
+            free = self._is_fold_free[folds]
+            low[is_bound] = np.where(free, -np.inf, member.col_lower[columns])
+            high[is_bound] = np.where(free, np.inf, member.col_upper[columns])
+        here = rows.multiple_row >= begin
+        if here.any():
+            at = rows.multiple_row[here] - begin
+            fold = rows.multiple_fold[here]
+            shift = np.bincount(at, rows.multiple[here] * self._fold_side[fold], len(low))
+            lost = self._is_fold_free[fold]
+            if lost.any() and (np.isfinite(low[at[lost]]) | np.isfinite(high[at[lost]])).any():
+                raise ValueError(f"{self.family.name}: a folded column counts without its row")
+            low, high = low + shift, high + shift
+        return low, high
+
     def _patch(self, member: Member) -> None:
         """Matrix entries that differ between members."""
         patch = self.family.patch
-        for i in np.flatnonzero(self._matrix.value[patch] != member.patch_value):
-            place = self._row_place[self.bound.patch_row[i]]
-            if place >= 0:
+        changed = np.flatnonzero(self._matrix.value[patch] != member.patch_value)
+        if not len(changed):
+            return
+        for i in changed:
+            row = self._rows.of_program[self.bound.patch_row[i]]
+            if row >= 0:
                 self._model.set_row_coefficients(
-                    int(place), self.bound.patch_column[i : i + 1], member.patch_value[i : i + 1]
+                    int(self._rows.place[row]),
+                    self._column_place[self.bound.patch_column[i : i + 1]],
+                    member.patch_value[i : i + 1],
                 )
         self._matrix.value[patch] = member.patch_value
+        self._lazy_value = self._matrix.value[self._lazy_entries]
 
     def _add_lazy_rows(self, y: FloatArray) -> int:
-        """Adds lazy rows that ``y`` violates; their number."""
-        if len(self._program_rows) == self._matrix.n_row:
-            return 0
-        activity = self._matrix.times(y)
-        low, high = self._row_lower, self._row_upper
-        with np.errstate(invalid="ignore"):
-            excess = np.maximum(low - activity, activity - high)
-            scale = 1.0 + np.where(low > activity, np.abs(low), np.abs(high))
-        is_violated = (self._row_place < 0) & (excess > FEASIBILITY_TOLERANCE * scale)
-        rows = np.flatnonzero(is_violated)
-        if len(rows):
-            start, index, value = self._matrix.take(rows)
-            places = self._model.n_row + np.arange(len(rows))
-            self._model.add_rows(low[rows], high[rows], start, index, value)
-            self._row_place[rows] = places
-            self._program_rows = np.concatenate([self._program_rows, rows])
-            self._model_rows = np.concatenate([self._model_rows, places])
-            self.counts["lazy row"] += len(rows)
+        """Adds lazy rows and bounds of folded columns that ``y`` violates; their number."""
+        n_new = 0
+        assert self._member is not None
+        if len(self._lazy):
+            activity = np.bincount(
+                self._lazy_of_entry, self._lazy_value * y[self._lazy_index], len(self._lazy)
+            )
+            violated = _violated(activity, self._row_lower[self._lazy], self._row_upper[self._lazy])
+            violated &= self._rows.of_program[self._lazy] < 0
+            rows = self._lazy[violated]
+            if len(rows):
+                n_new += self._append_program_rows(rows, np.full(len(rows), -1, dtype=np.int64))
+        if len(self._folding):
+            columns = self._folding.column
+            member = self._member
+            violated = _violated(y[columns], member.col_lower[columns], member.col_upper[columns])
+            violated &= (self._rows.of_bound < 0) & ~self._is_fold_free
+            folds = np.flatnonzero(violated)
+            if len(folds):
+                n_new += self._append_program_rows(np.full(len(folds), -1, dtype=np.int64), folds)
+        self.counts["lazy row"] += n_new
+        return n_new
+
+    def _append_program_rows(self, rows: IntArray, folds: IntArray) -> int:
+        """Adds program rows, or bounds of folded columns where ``rows`` is -1; their number."""
+        assert self._member is not None
+        if folds[0] >= 0:
+            expanded = self._folding.expand_columns(folds)
+        else:
+            expanded = self._folding.expand_rows(rows)
+        begin = len(self._rows)
+        self._rows.append(rows, folds, self._model.n_row + np.arange(len(rows)), expanded)
+        low, high = self._sides(self._member, begin)
+        self._low, self._high = np.concatenate([self._low, low]), np.concatenate([self._high, high])
+        places = self._column_place[expanded.index]
+        self._model.add_rows(low, high, expanded.start, places, expanded.value)
         return len(rows)
 
     # -- cuts of the children ------------------------------------------------------------------
@@ -359,11 +444,11 @@ class NodeModel:
         total = weight.sum()
         if total <= 0.0:
             return 0
-        y, theta = result.col_value[: self.n_col], result.col_value[self.n_col :]
+        theta = result.col_value[self.n_kept :]
         allowed = np.maximum(
             tolerance * self._member.scale / total, CUT_TOLERANCE * (1.0 + np.abs(theta))
         )
-        states = y[self.family.out_columns]
+        states = result.col_value[self._out_places]
         if self.table.is_fixed:
             chosen = self._violated_fixed(states, theta, weight, allowed, capacity)
         else:
@@ -485,7 +570,7 @@ class NodeModel:
             return
         rows = self._cut_rows(chosen)
         n = len(chosen)
-        columns = np.hstack([self.family.out_columns[rows.exit], (self.n_col + rows.exit)[:, None]])
+        columns = np.hstack([self._out_places[rows.exit], (self.n_kept + rows.exit)[:, None]])
         values = np.hstack([-rows.state_slope, np.ones((n, 1))])
         kept = values != 0.0
         start = np.concatenate([[0], np.cumsum(kept.sum(axis=1))])
@@ -541,7 +626,7 @@ class NodeModel:
         """Overwrites one slot with one cut; its side is set by ``_set_slot_sides``."""
         new = self._cut_rows([(e, i_child, position, 0)])
         old = self._cuts.state_slope[slot]
-        columns = self.family.out_columns[e]
+        columns = self._out_places[e]
         moved = new.state_slope[0] != old
         if moved.any():
             if self._has_repeats:
@@ -643,14 +728,18 @@ class NodeModel:
 
     # -- what comes out ------------------------------------------------------------------------
 
-    def _outcome(
-        self, result: SolveResult, primal: FloatArray, capacity: FloatArray
-    ) -> NodeOutcome:
+    def _outcome(self, result: SolveResult, y: FloatArray, capacity: FloatArray) -> NodeOutcome:
         assert self._member is not None
-        member = self._member
-        y, theta = primal[: self.n_col], primal[self.n_col :]
+        member, rows = self._member, self._rows
+        theta = result.col_value[self.n_kept :]
         pi = np.zeros(len(self._row_lower))
-        pi[self._program_rows] = result.row_dual[self._model_rows]
+        dual = result.row_dual[rows.place]
+        is_row = rows.program >= 0
+        pi[rows.program[is_row]] = dual[is_row]
+        if len(self._folding):
+            pi[self._folding.row] = np.bincount(
+                rows.multiple_fold, rows.multiple * dual[rows.multiple_row], len(self._folding)
+            )
         cuts = self._cuts
         cut_pi = np.maximum(result.row_dual[cuts.row], 0.0)
         used = np.flatnonzero((cut_pi > 0.0) & (member.exit_weight[cuts.exit] > 0.0))
@@ -680,38 +769,56 @@ class NodeModel:
         )
 
     def cut_from(self, outcome: NodeOutcome, i_member: int, group: int) -> CutBatch:
-        """The cut of the solved member alone."""
+        """The cut of the solved member, first, and of later ones of a nested family."""
         member = self.cache.get(self.i_family, i_member)
+        if self.bound.is_nested:
+            return self.bound.nested_cuts(member, i_member, outcome.pi, outcome.exits, group)
+        cuts = SharedMultipliers(
+            outcome.exits.exit,
+            outcome.exits.pi,
+            outcome.exits.intercept[None],
+            outcome.exits.state_slope[None],
+            outcome.exits.capacity_slope[None],
+        )
+        found = self.bound.cuts_of(np.array([i_member]), outcome.pi, cuts, group)
+        if found is not None:
+            return found
         return self.bound.cut(member, outcome.pi, outcome.exits, i_member, group)
 
-    def shared_cut(self, outcome: NodeOutcome, i_member: int, group: int) -> CutBatch | None:
-        """Cut of another member from the same multipliers; None where it would be useless.
+    def shared_cuts(self, outcome: NodeOutcome, members: IntArray, group: int) -> CutBatch | None:
+        """Cuts of other members from the same multipliers; None where there are none.
 
-        The multipliers of children's cuts go to the same-numbered cuts of the other's children.
+        The multipliers of children's cuts go to the same-numbered cuts of the other's children;
+        members that have none of that number are left out.
         """
-        member = self.cache.get(self.i_family, i_member)
         exits = outcome.exits
-        if not self.table.is_fixed and len(exits.exit):
-            mapped = ExitMultipliers(
-                exits.exit,
-                exits.pi,
-                exits.intercept.copy(),
-                exits.state_slope.copy(),
-                exits.capacity_slope.copy(),
-            )
-            for i, (e, number) in enumerate(zip(exits.exit, outcome.exit_group, strict=True)):
-                i_child, i_child_member = member.exit_child[e].tolist()
-                if i_child_member < 0 or member.exit_weight[e] <= 0.0:
-                    return None
-                pool = self.pools[i_child]
-                position = pool.position_of(i_child_member, int(number))
-                if position < 0:
-                    return None
-                mapped.intercept[i] = pool.intercept[position]
-                mapped.state_slope[i] = pool.state_slope[position]
-                mapped.capacity_slope[i] = pool.capacity_slope[position]
-            exits = mapped
-        return self.bound.cut(member, outcome.pi, exits, i_member, group)
+        n_cut = len(exits.exit)
+        kept = np.ones(len(members), dtype=bool)
+        intercept = np.tile(exits.intercept, (len(members), 1))
+        state_slope = np.tile(exits.state_slope, (len(members), 1, 1))
+        capacity_slope = np.tile(exits.capacity_slope, (len(members), 1, 1))
+        if not self.table.is_fixed:
+            for i in range(n_cut):
+                e, number = int(exits.exit[i]), int(outcome.exit_group[i])
+                for j, i_member in enumerate(members.tolist()):
+                    member = self.cache.get(self.i_family, i_member)
+                    i_child, i_child_member = member.exit_child[e].tolist()
+                    if i_child_member < 0 or member.exit_weight[e] <= 0.0:
+                        continue  # no child: the multiplier is scaled to nothing
+                    pool = self.pools[i_child]
+                    position = pool.position_of(i_child_member, number)
+                    if position < 0:
+                        kept[j] = False
+                        continue
+                    intercept[j, i] = pool.intercept[position]
+                    state_slope[j, i] = pool.state_slope[position]
+                    capacity_slope[j, i] = pool.capacity_slope[position]
+        if not kept.any():
+            return None
+        cuts = SharedMultipliers(
+            exits.exit, exits.pi, intercept[kept], state_slope[kept], capacity_slope[kept]
+        )
+        return self.bound.cuts_of(members[kept], outcome.pi, cuts, group)
 
     def forget_basis(self) -> None:
         """The next solve starts cold."""
@@ -723,19 +830,22 @@ class NodeModel:
         Columns with a reduced cost and rows with a multiplier stay at their sides: that is the
         optimal face. Only bounds and costs change, so the model is as before afterwards.
         """
-        n_all = self.n_col + self.n_exit
+        n_all = self.n_kept + self.n_exit
+        if second_cost[self._folding.column].any():
+            raise ValueError("a folded column has a second cost")
         size = max(1.0, float(np.abs(self._cost).max(initial=0.0))) * FACE_TOLERANCE
         value = np.clip(result.col_value, self._lower, self._upper)
-        columns = np.flatnonzero(np.abs(result.col_dual) > size)
+        columns = np.flatnonzero(np.abs(self._model.column_duals()) > size)
         rows = np.flatnonzero(np.abs(result.row_dual) > size)
         low, high = self._model_sides()
         dual = result.row_dual[rows]
         side = np.where(dual > 0.0, low[rows], high[rows])
         rows, side = rows[np.isfinite(side)], side[np.isfinite(side)]
         everything = np.arange(n_all)
+        kept_cost = second_cost[self._folding.kept]
         self._model.set_col_bounds(columns, value[columns], value[columns])
         self._model.set_row_bounds(rows, side, side)
-        self._model.set_costs(everything, np.concatenate([second_cost, np.zeros(self.n_exit)]))
+        self._model.set_costs(everything, np.concatenate([kept_cost, np.zeros(self.n_exit)]))
         again = self._model.run()
         self._model.set_costs(everything, self._cost)
         self._model.set_row_bounds(rows, low[rows], high[rows])
@@ -747,10 +857,16 @@ class NodeModel:
         """Sides of every row of the kept model, in its order."""
         low = np.full(self._model.n_row, -np.inf)
         high = np.full(self._model.n_row, np.inf)
-        low[self._model_rows] = self._row_lower[self._program_rows]
-        high[self._model_rows] = self._row_upper[self._program_rows]
+        low[self._rows.place], high[self._rows.place] = self._low, self._high
         low[self._cuts.row] = self._cuts.intercept + self._cuts.capacity_slope @ self._capacity
         return low, high
+
+
+def _violated(activity: FloatArray, low: FloatArray, high: FloatArray) -> NDArray[np.bool_]:
+    """Where an activity is outside its sides by more than the solver's tolerance."""
+    slack = FEASIBILITY_TOLERANCE * (1.0 + np.abs(activity))
+    found: NDArray[np.bool_] = (activity < low - slack) | (activity > high + slack)
+    return found
 
 
 def _merge_repeats(columns: IntArray, values: FloatArray) -> tuple[IntArray, FloatArray, IntArray]:

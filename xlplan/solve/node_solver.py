@@ -16,17 +16,31 @@ import numpy as np
 from numpy.typing import NDArray
 
 from xlplan.model.value_graph import Family, ValueGraph
-from xlplan.solve.cuts import CutBatch, CutPool, DualBound, MemberChange
+from xlplan.solve.cuts import CutBatch, CutPool, DualBound
 from xlplan.solve.highs import SolverFailureError
-from xlplan.solve.node import DUAL_TOLERANCE, NodeModel, NodeOutcome, family_changes
-from xlplan.solve.tables import GraphTables, MemberCache, clip_state
+from xlplan.solve.member_cache import MemberCache
+from xlplan.solve.node import DUAL_TOLERANCE, NodeModel, NodeOutcome
+from xlplan.solve.tables import GraphTables, clip_state
 
 FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
 
 _LOG = logging.getLogger(__name__)
 
 SHARE_MARGIN = 1e-3
 """A cut shared with another member is kept where it beats the known value by this share."""
+
+
+@dataclass(frozen=True)
+class Share:
+    """Other members (n,), ascending, with a state of each (n, n_state) and what is known there.
+
+    A shared cut is kept where it beats the known value (n,) at that state.
+    """
+
+    members: IntArray
+    states: FloatArray
+    known: FloatArray
 
 
 @dataclass(frozen=True)
@@ -37,7 +51,7 @@ class NodeRequest:
     second_cost : (n_col,), minimised among the optimal points, or None
     replica : which of the family's kept models to use; each has its own history
     group : number of the cuts made, -1 for no cuts
-    share : other members with the state at which a shared cut must beat what is known
+    share : other members for which the same multipliers are tried, or None
     cut_tolerance : how much too low the value may be for want of the children's last cuts
     wants_primal : whether ``y`` is handed back
     """
@@ -49,7 +63,7 @@ class NodeRequest:
     second_cost: FloatArray | None = None
     replica: int = 0
     group: int = -1
-    share: tuple[tuple[int, FloatArray], ...] = ()
+    share: Share | None = None
     cut_tolerance: float = 0.0
     wants_primal: bool = False
 
@@ -87,7 +101,6 @@ class NodeSolver:
         self.counts: Counter[str] = Counter()
         self._models: dict[tuple[int, int], NodeModel] = {}
         self._bounds: dict[int, DualBound] = {}
-        self._changes: dict[int, list[MemberChange] | None] = {}
 
     def add_cuts(self, batches: Sequence[CutBatch]) -> None:
         """Cuts made elsewhere."""
@@ -103,18 +116,9 @@ class NodeSolver:
                 self.graph.capacity_lower,
                 self.graph.capacity_upper,
                 self.tables.families[i_family].theta_lower,
+                self.cache,
             )
         return self._bounds[i_family]
-
-    def changes(self, i_family: int) -> list[MemberChange] | None:
-        """Differences from member to member, None where there is too much of them."""
-        if i_family not in self._changes:
-            family = self.graph.families[i_family]
-            is_plain = self.tables.families[i_family].is_fixed and not len(family.patch)
-            self._changes[i_family] = (
-                family_changes(self.cache, i_family, family.n_member) if is_plain else None
-            )
-        return self._changes[i_family]
 
     def model(self, i_family: int, replica: int) -> NodeModel:
         """One kept model, made when first asked for."""
@@ -156,18 +160,7 @@ class NodeSolver:
         """Cuts of the node and of others by sharing; a cut far off the objective is counted."""
         if request.group < 0:
             return ()
-        changes = self.changes(request.family)
-        if changes is None:
-            cut = model.cut_from(outcome, request.member, request.group)
-        else:
-            cut = model.bound.cuts_along(
-                self.cache.get(request.family, request.member),
-                request.member,
-                changes[request.member :],
-                outcome.pi,
-                outcome.exits,
-                request.group,
-            )
+        cut = model.cut_from(outcome, request.member, request.group)
         reached = cut.take(np.arange(1)).values(state[None, :], request.capacity)[0]
         if abs(reached - outcome.value) > DUAL_TOLERANCE * (1.0 + abs(outcome.value)):
             self.counts["cut not tight"] += 1
@@ -176,16 +169,17 @@ class NodeSolver:
                 model.family.name, request.member, reached, outcome.value,
             )  # fmt: skip
             model.forget_basis()
-        batches = [cut]
-        for i_member, at in request.share:
-            shared = model.shared_cut(outcome, i_member, request.group)
-            if shared is None:
-                continue
-            known = self.pools[request.family].value(i_member, at, request.capacity)
-            reached = shared.values(at[None, :], request.capacity)[0]
-            if reached > known + SHARE_MARGIN * (abs(known) if np.isfinite(known) else 0.0):
-                batches.append(shared)
-        return tuple(batches)
+        share = request.share
+        if share is None or not len(share.members):
+            return (cut,)
+        shared = model.shared_cuts(outcome, share.members, request.group)
+        if shared is None:
+            return (cut,)
+        places = np.searchsorted(share.members, shared.member)
+        known = share.known[places]
+        gained = shared.values(share.states[places], request.capacity) - known
+        better = np.flatnonzero(gained > SHARE_MARGIN * np.abs(known))
+        return (cut, shared.take(better)) if len(better) else (cut,)
 
     def _failed(self, request: NodeRequest, state: FloatArray) -> NodeSolution:
         self.counts["failed node"] += 1

@@ -37,7 +37,7 @@ class SolveResult:
     """Outcome of one program.
 
     has_incumbent : there is a primal point (for a MILP at a limit: one that satisfies all rows)
-    has_dual : there are row and column duals (never for a MILP)
+    has_dual : there are row duals (never for a MILP)
     raw_status : the solver's own words
     seconds : wall time
     """
@@ -51,7 +51,6 @@ class SolveResult:
     bound_or_nan: float = float("nan")
     col_value_or_none: FloatArray | None = None
     row_dual_or_none: FloatArray | None = None
-    col_dual_or_none: FloatArray | None = None
 
     @property
     def objective(self) -> float:
@@ -85,13 +84,6 @@ class SolveResult:
         if not self.has_dual or self.row_dual_or_none is None:
             raise MissingValueError(f"no duals: {self.raw_status}")
         return self.row_dual_or_none
-
-    @property
-    def col_dual(self) -> FloatArray:
-        """Reduced costs, (n_col,)."""
-        if not self.has_dual or self.col_dual_or_none is None:
-            raise MissingValueError(f"no duals: {self.raw_status}")
-        return self.col_dual_or_none
 
 
 def relative_gap(upper: float, lower: float) -> float:

@@ -16,8 +16,9 @@ from concurrent.futures.process import BrokenProcessPool
 
 from xlplan.model.value_graph import ValueGraph
 from xlplan.solve.cuts import CutBatch, CutPool
+from xlplan.solve.member_cache import MemberCache
 from xlplan.solve.node_solver import Measure, NodeRequest, NodeSolution, NodeSolver
-from xlplan.solve.tables import GraphTables, MemberCache
+from xlplan.solve.tables import GraphTables
 
 _LOG = logging.getLogger(__name__)
 

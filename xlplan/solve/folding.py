@@ -1,0 +1,222 @@
+"""Works without the columns that equality rows determine (``LinearProgram.folds``).
+
+Let ``E`` be the folded columns, ``D`` the rows that determine them, ``K`` the other columns:
+
+    A_DE y_E + A_DK y_K = b_D      hence      y_E = W (b_D - A_DK y_K),   W = A_DE^-1
+
+A row that holds folded columns is replaced by itself plus multiples ``m`` of rows ``D`` in which
+they cancel (``a_E + m A_DE = 0``); its sides move by ``m b_D``, and the multipliers that a solver
+finds for it belong to the row itself and, times ``m``, to the rows ``D``. So a cut made from them
+is one of the unfolded program. A bound of a folded column becomes such a row when it is needed.
+
+The inverses are those of small blocks (one network in one period), equal blocks are inverted once.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from xlplan.model.linear_program import LinearProgram
+from xlplan.solve.row_matrix import RowMatrix
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
+NOTHING = 1e-13
+"""Entries of an inverse below this are rounding."""
+
+
+@dataclass(frozen=True)
+class Expanded:
+    """Rows in kept columns: each is a program row (or a column) plus multiples of rows ``D``.
+
+    start, index, value : the rows, in program columns
+    fold_start, fold, multiple : multiples of the ``fold``-th row ``D``
+    """
+
+    start: IntArray
+    index: IntArray
+    value: FloatArray
+    fold_start: IntArray
+    fold: IntArray
+    multiple: FloatArray
+
+
+class Folding:
+    """The folds of one program.
+
+    Attributes
+    ----------
+    kept : (n_kept,), program columns that are left
+    row, column : (n_fold,), rows ``D`` and columns ``E``, in pairs
+    """
+
+    def __init__(self, program: LinearProgram, matrix: RowMatrix) -> None:
+        folds = program.folds
+        self.row, self.column = folds.row, folds.column
+        self.n_col = program.n_col
+        self._matrix = matrix
+        is_folded = np.zeros(program.n_col, dtype=bool)
+        is_folded[self.column] = True
+        self.kept = np.flatnonzero(~is_folded)
+        self._fold_of_column = np.full(program.n_col, -1, dtype=np.int64)
+        self._fold_of_column[self.column] = np.arange(len(self.column))
+        stage = np.repeat(folds.stage, np.diff(folds.start))
+        self._is_late = stage > 0
+        self._inverse = _Inverse(folds.start, self._block_matrices(folds.start))
+        # Rows D without their own block: what is left when the inverse is applied.
+        self._early, self._late = np.flatnonzero(~self._is_late), np.flatnonzero(self._is_late)
+        self._rest = [self._rest_of(places) for places in (self._early, self._late)]
+
+    def __len__(self) -> int:
+        return len(self.row)
+
+    def _block_matrices(self, start: IntArray) -> list[FloatArray]:
+        """``A_DE`` of every block."""
+        block_of = np.repeat(np.arange(len(start) - 1), np.diff(start))
+        blocks = [np.zeros((n, n)) for n in np.diff(start)]
+        first, index, value = self._matrix.take(self.row)
+        place = np.repeat(np.arange(len(self.row)), np.diff(first))
+        other = self._fold_of_column[index]
+        inside = (other >= 0) & (block_of[place] == block_of[other])
+        for p, o, v in zip(place[inside], other[inside], value[inside], strict=True):
+            begin = start[block_of[p]]
+            blocks[block_of[p]][p - begin, o - begin] = v
+        return blocks
+
+    def _rest_of(self, places: IntArray) -> tuple[IntArray, IntArray, FloatArray]:
+        """Entries of some rows ``D`` outside their own block: (position in places, column, value).
+
+        Folded columns of an earlier stage are among them.
+        """
+        first, index, value = self._matrix.take(self.row[places])
+        place = np.repeat(np.arange(len(places)), np.diff(first))
+        other = self._fold_of_column[index]
+        own = (other >= 0) & (self._is_late[np.maximum(other, 0)] == self._is_late[places][place])
+        return place[~own], index[~own], value[~own]
+
+    def complete(self, y: FloatArray, side: FloatArray) -> None:
+        """Fills the folded columns of a point.
+
+        Parameters
+        ----------
+        y : array, shape (n_col,), kept columns given, folded ones overwritten
+        side : array, shape (n_fold,), ``b_D``
+        """
+        for places, (place, index, value) in zip((self._early, self._late), self._rest,
+                                                 strict=True):  # fmt: skip
+            if not len(places):
+                continue
+            left = side[places] - np.bincount(place, value * y[index], len(places))
+            y[self.column[places]] = self._inverse.times(places, left, len(self))
+
+    def expand_rows(self, rows: IntArray) -> Expanded:
+        """Program rows without their folded columns."""
+        start, index, value = self._matrix.take(rows)
+        if not len(self):
+            none = np.zeros(0, dtype=np.int64)
+            return Expanded(start, index, value, np.zeros(len(start), int), none, np.zeros(0))
+        return self._expand(
+            [
+                (index[a:b], value[a:b])
+                for a, b in zip(start[:-1].tolist(), start[1:].tolist(), strict=True)
+            ]
+        )
+
+    def expand_columns(self, folds: IntArray) -> Expanded:
+        """Folded columns, by their position among the folds, as rows of the kept ones."""
+        return self._expand([(self.column[f : f + 1], np.ones(1)) for f in folds.tolist()])
+
+    def _expand(self, rows: Sequence[tuple[IntArray, FloatArray]]) -> Expanded:
+        starts, indices, values = [0], [], []
+        fold_starts, folds, multiples = [0], [], []
+        for index, value in rows:
+            own, number = [], []
+            # Late columns first: cancelling them brings in early ones.
+            for is_late in (True, False):
+                fold = self._fold_of_column[index]
+                here = (fold >= 0) & (self._is_late[np.maximum(fold, 0)] == is_late)
+                if not here.any():
+                    continue
+                used, multiple = self._inverse.row_times(fold[here], -value[here])
+                own.append(used)
+                number.append(multiple)
+                first, more, entry = self._matrix.take(self.row[used])
+                entry = entry * np.repeat(multiple, np.diff(first))
+                index, inverse = np.unique(np.concatenate([index, more]), return_inverse=True)
+                value = np.bincount(inverse, np.concatenate([value, entry]), len(index))
+                gone = self._fold_of_column[index]
+                stays = (gone < 0) | (self._is_late[np.maximum(gone, 0)] != is_late)
+                stays &= np.abs(value) > NOTHING * np.abs(entry).max(initial=0.0)
+                index, value = index[stays], value[stays]
+            indices.append(index)
+            values.append(value)
+            starts.append(starts[-1] + len(index))
+            folds += own
+            multiples += number
+            fold_starts.append(fold_starts[-1] + sum(len(used) for used in own))
+        return Expanded(
+            np.array(starts),
+            _joined(indices, np.int64),
+            _joined(values, np.float64),
+            np.array(fold_starts),
+            _joined(folds, np.int64),
+            _joined(multiples, np.float64),
+        )
+
+
+def _joined(parts: Sequence[NDArray[np.generic]], kind: type) -> NDArray[np.generic]:
+    return np.concatenate(parts) if parts else np.zeros(0, dtype=kind)
+
+
+class _Inverse:
+    """Inverses of all blocks as one sparse matrix by rows (folded column, row ``D``)."""
+
+    def __init__(self, start: IntArray, blocks: Sequence[FloatArray]) -> None:
+        known: dict[bytes, tuple[IntArray, IntArray, FloatArray]] = {}
+        rows, columns, values = [], [], []
+        for begin, block in zip(start[:-1], blocks, strict=True):
+            key = block.tobytes()
+            if key not in known:
+                whole = np.linalg.inv(block)
+                r, c = np.nonzero(np.abs(whole) > NOTHING * np.abs(whole).max(initial=0.0))
+                known[key] = (r, c, whole[r, c])
+            r, c, v = known[key]
+            rows.append(r + begin)
+            columns.append(c + begin)
+            values.append(v)
+        self._row = np.asarray(_joined(rows, np.int64), dtype=np.int64)
+        self._column = np.asarray(_joined(columns, np.int64), dtype=np.int64)
+        self._value = np.asarray(_joined(values, np.float64), dtype=np.float64)
+        n = int(start[-1])
+        self._start = np.concatenate([[0], np.cumsum(np.bincount(self._row, minlength=n))])
+        self._parts: dict[int, tuple[IntArray, IntArray, FloatArray]] = {}
+
+    def times(self, places: IntArray, right: FloatArray, n: int) -> FloatArray:
+        """``W[places, places] @ right``; places are always one of two sets, early or late."""
+        key = int(places[0])
+        if key not in self._parts:
+            to = np.full(n, -1, dtype=np.int64)
+            to[places] = np.arange(len(places))
+            inside = to[self._row] >= 0
+            self._parts[key] = (
+                to[self._row[inside]], to[self._column[inside]], self._value[inside]
+            )  # fmt: skip
+        row, column, value = self._parts[key]
+        return np.bincount(row, value * right[column], len(places))
+
+    def row_times(self, places: IntArray, left: FloatArray) -> tuple[IntArray, FloatArray]:
+        """``left @ W[places]`` as positions and values."""
+        columns = [self._column[self._start[p] : self._start[p + 1]] for p in places]
+        values = [
+            x * self._value[self._start[p] : self._start[p + 1]]
+            for p, x in zip(places, left, strict=True)
+        ]
+        found, inverse = np.unique(np.concatenate(columns), return_inverse=True)
+        total = np.bincount(inverse, np.concatenate(values), len(found))
+        stays = total != 0.0
+        return found[stays], total[stays]
