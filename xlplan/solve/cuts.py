@@ -240,6 +240,22 @@ class MemberTable:
         columns[family.program.index[family.patch]] = True
         columns[family.out_columns.ravel()] = True
         self.columns, self.rows = np.flatnonzero(columns), np.flatnonzero(rows)
+        self.row_place = np.full(len(rows), -1, dtype=np.int64)
+        self.row_place[self.rows] = np.arange(len(self.rows))
+        self.column_place = np.full(len(columns), -1, dtype=np.int64)
+        self.column_place[self.columns] = np.arange(len(self.columns))
+        # Columns of the incoming state and of the capacities are in the slopes, not in the sums.
+        self.given = first.in_columns >= 0
+        self.into = np.where(self.given, first.in_columns, 0)
+        apart = np.zeros(len(columns), dtype=bool)
+        apart[self.into[self.given]] = True
+        apart[family.capacity_columns[family.capacity_columns >= 0]] = True
+        is_const = ~apart
+        is_const[self.columns] = False
+        self.const = np.flatnonzero(is_const)
+        self.const_lower = first.col_lower[self.const]
+        self.const_upper = first.col_upper[self.const]
+        self.inside = np.where(apart[self.columns], 0.0, 1.0)
         size = 8 * family.n_member * (3 * len(self.columns) + 2 * len(self.rows))
         self._whole: _Numbers | None = None
         if size <= TABLE_BYTES:
@@ -261,6 +277,7 @@ class MemberTable:
             row_upper=np.array([m.row_upper[self.rows] for m in taken]),
             patch_value=np.array([m.patch_value for m in taken]),
             exit_weight=np.array([m.exit_weight for m in taken]),
+            exit_child=np.array([m.exit_child for m in taken]),
             offset=np.array([m.offset for m in taken]),
             scale=np.array([m.scale for m in taken]),
         )
@@ -277,6 +294,7 @@ class _Numbers:
     row_upper: FloatArray
     patch_value: FloatArray
     exit_weight: FloatArray
+    exit_child: IntArray
     offset: FloatArray
     scale: FloatArray
 
@@ -463,31 +481,28 @@ class DualBound:
         -------
         CutBatch of n cuts; None where the family is not fit for it (many exits, other inputs)
         """
-        if len(self.family.exit_gate) > MANY_EXITS:
-            return None
-        if self._table is None:
-            self._table = MemberTable(self._cache, self.i_family, self.family)
-        table = self._table
-        if not table.has_same_inputs:
+        table = self.table
+        if table is None:
             return None
         now, first = table.numbers(members), table.first
         n = len(members)
         rows = np.flatnonzero(pi)
         multiplier = pi[rows]
-        differs = np.isin(rows, table.rows, assume_unique=True)
-        low, high = first.row_lower[rows], first.row_upper[rows]
-        usable = _usable(multiplier, low, high)
-        usable[differs] = multiplier[differs]
-        place = np.searchsorted(table.rows, rows[differs])
-        side = np.where(multiplier[differs] > 0.0, now.row_lower[:, place], now.row_upper[:, place])
+        place = table.row_place[rows]
+        differs = place >= 0
+        side = np.where(multiplier > 0.0, first.row_lower[rows], first.row_upper[rows])
+        usable = multiplier
+        if not np.isfinite(side[~differs]).all():
+            usable = np.where(differs | np.isfinite(side), multiplier, 0.0)
+            side = np.where(np.isfinite(side), side, 0.0)
+        row_const = usable[~differs] * side[~differs]
+        place, at = place[differs], multiplier[differs]
+        side = np.where(at > 0.0, now.row_lower[:, place], now.row_upper[:, place])
         if not np.isfinite(side).all():
             return None
-        row_const = _row_terms(usable[~differs], low[~differs], high[~differs])
-        row_vary = side * multiplier[differs]
+        row_vary = side * at
         d = first.cost - self.matrix_of(first).transposed_times(rows, usable)
-        columns = table.columns
-        at_column = np.full(len(d), -1, dtype=np.int64)
-        at_column[columns] = np.arange(len(columns))
+        columns, at_column = table.columns, table.column_place
         d_vary = now.cost + (d[columns] - first.cost[columns])
         if len(self.patch):
             full = np.zeros(len(pi))
@@ -511,16 +526,9 @@ class DualBound:
             capacity_slope += share[:, None] * cuts.capacity_slope[:, i]
             places = at_column[self.family.out_columns[e]]
             np.add.at(d_vary, (slice(None), places), share[:, None] * cuts.state_slope[:, i])
-        given = first.in_columns >= 0
-        into = np.where(given, first.in_columns, 0)
-        apart = np.zeros(len(d), dtype=bool)
-        apart[into[given]] = True
-        apart[self._capacity_columns] = True
-        const = ~apart
-        const[columns] = False
-        col_const = _col_terms(d[const], first.col_lower[const], first.col_upper[const])
-        inside = ~apart[columns]
-        col_vary = _col_terms(d_vary[:, inside], now.col_lower[:, inside], now.col_upper[:, inside])
+        given, into = table.given, table.into
+        col_const = _col_terms(d[table.const], table.const_lower, table.const_upper)
+        col_vary = _col_terms(d_vary, now.col_lower, now.col_upper) * table.inside
         intercept = (
             now.offset
             + float(row_const.sum())
@@ -562,6 +570,15 @@ class DualBound:
             group,
             size,
         )
+
+    @property
+    def table(self) -> MemberTable | None:
+        """What differs between the members; None where ``cuts_of`` cannot be used."""
+        if len(self.family.exit_gate) > MANY_EXITS:
+            return None
+        if self._table is None:
+            self._table = MemberTable(self._cache, self.i_family, self.family)
+        return self._table if self._table.has_same_inputs else None
 
     def matrix_of(self, member: Member) -> RowMatrix:
         """The matrix with one member's patch written into it."""

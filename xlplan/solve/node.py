@@ -306,6 +306,14 @@ class NodeModel:
                 side = member.row_lower[self._folding.row]
                 self._is_fold_free = ~np.isfinite(side)
                 self._fold_side = np.where(self._is_fold_free, 0.0, side)
+                columns = self._folding.column
+                self._fold_sides = _with_tolerance(
+                    np.where(self._is_fold_free, -np.inf, member.col_lower[columns]),
+                    np.where(self._is_fold_free, np.inf, member.col_upper[columns]),
+                )
+            self._lazy_sides = _with_tolerance(
+                member.row_lower[self._lazy], member.row_upper[self._lazy]
+            )
             low, high = self._sides(member)
             moved = np.flatnonzero((low != self._low) | (high != self._high))
             self._model.set_row_bounds(self._rows.place[moved], low[moved], high[moved])
@@ -365,22 +373,20 @@ class NodeModel:
     def _add_lazy_rows(self, y: FloatArray) -> int:
         """Adds lazy rows and bounds of folded columns that ``y`` violates; their number."""
         n_new = 0
-        assert self._member is not None
         if len(self._lazy):
             activity = np.bincount(
                 self._lazy_of_entry, self._lazy_value * y[self._lazy_index], len(self._lazy)
             )
-            violated = _violated(activity, self._row_lower[self._lazy], self._row_upper[self._lazy])
-            violated &= self._rows.of_program[self._lazy] < 0
-            rows = self._lazy[violated]
+            low, high = self._lazy_sides
+            rows = self._lazy[(activity > high) | (activity < low)]
+            rows = rows[self._rows.of_program[rows] < 0]
             if len(rows):
                 n_new += self._append_program_rows(rows, np.full(len(rows), -1, dtype=np.int64))
         if len(self._folding):
-            columns = self._folding.column
-            member = self._member
-            violated = _violated(y[columns], member.col_lower[columns], member.col_upper[columns])
-            violated &= (self._rows.of_bound < 0) & ~self._is_fold_free
-            folds = np.flatnonzero(violated)
+            value = y[self._folding.column]
+            low, high = self._fold_sides
+            folds = np.flatnonzero((value > high) | (value < low))
+            folds = folds[self._rows.of_bound[folds] < 0]
             if len(folds):
                 n_new += self._append_program_rows(np.full(len(folds), -1, dtype=np.int64), folds)
         self.counts["lazy row"] += n_new
@@ -791,28 +797,31 @@ class NodeModel:
         The multipliers of children's cuts go to the same-numbered cuts of the other's children;
         members that have none of that number are left out.
         """
-        exits = outcome.exits
+        exits, table = outcome.exits, self.bound.table
+        if table is None:
+            return None
         n_cut = len(exits.exit)
-        kept = np.ones(len(members), dtype=bool)
         intercept = np.tile(exits.intercept, (len(members), 1))
         state_slope = np.tile(exits.state_slope, (len(members), 1, 1))
         capacity_slope = np.tile(exits.capacity_slope, (len(members), 1, 1))
-        if not self.table.is_fixed:
+        kept = np.ones(len(members), dtype=bool)
+        if not self.table.is_fixed and n_cut:
+            now = table.numbers(members)
             for i in range(n_cut):
                 e, number = int(exits.exit[i]), int(outcome.exit_group[i])
-                for j, i_member in enumerate(members.tolist()):
-                    member = self.cache.get(self.i_family, i_member)
-                    i_child, i_child_member = member.exit_child[e].tolist()
-                    if i_child_member < 0 or member.exit_weight[e] <= 0.0:
-                        continue  # no child: the multiplier is scaled to nothing
+                # Without a child the multiplier is scaled to nothing.
+                has_child = (now.exit_child[:, e, 1] >= 0) & (now.exit_weight[:, e] > 0.0)
+                for i_child in np.unique(now.exit_child[has_child, e, 0]).tolist():
                     pool = self.pools[i_child]
-                    position = pool.position_of(i_child_member, number)
-                    if position < 0:
-                        kept[j] = False
-                        continue
-                    intercept[j, i] = pool.intercept[position]
-                    state_slope[j, i] = pool.state_slope[position]
-                    capacity_slope[j, i] = pool.capacity_slope[position]
+                    here = np.flatnonzero(has_child & (now.exit_child[:, e, 0] == i_child))
+                    position = np.array(
+                        [pool.position_of(m, number) for m in now.exit_child[here, e, 1].tolist()],
+                        dtype=np.int64,
+                    )
+                    kept[here[position < 0]] = False
+                    intercept[here, i] = pool.intercept[position]
+                    state_slope[here, i] = pool.state_slope[position]
+                    capacity_slope[here, i] = pool.capacity_slope[position]
         if not kept.any():
             return None
         cuts = SharedMultipliers(
@@ -862,11 +871,12 @@ class NodeModel:
         return low, high
 
 
-def _violated(activity: FloatArray, low: FloatArray, high: FloatArray) -> NDArray[np.bool_]:
-    """Where an activity is outside its sides by more than the solver's tolerance."""
-    slack = FEASIBILITY_TOLERANCE * (1.0 + np.abs(activity))
-    found: NDArray[np.bool_] = (activity < low - slack) | (activity > high + slack)
-    return found
+def _with_tolerance(low: FloatArray, high: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Sides beyond which the solver would see a violation."""
+    with np.errstate(invalid="ignore"):
+        wide_low = low - FEASIBILITY_TOLERANCE * (1.0 + np.abs(low))
+        wide_high = high + FEASIBILITY_TOLERANCE * (1.0 + np.abs(high))
+    return wide_low, wide_high
 
 
 def _merge_repeats(columns: IntArray, values: FloatArray) -> tuple[IntArray, FloatArray, IntArray]:
