@@ -150,6 +150,28 @@ class ProgramBuilder:
         self.is_lazy.append(is_lazy)
         return len(self.row_lower) - 1
 
+    def add_lazy_block(
+        self, names: Sequence[str], columns: Sequence[int], values: FloatArray, upper: FloatArray
+    ) -> None:
+        """Adds lazy rows ``values @ columns <= upper`` over the same columns, none of them twice.
+
+        Parameters
+        ----------
+        names : n names
+        columns : m positions
+        values : array, shape (n, m), none of them 0
+        upper : array, shape (n,)
+        """
+        n, m = values.shape
+        self.index += list(columns) * n
+        self.value += values.ravel().tolist()
+        begin = self.start[-1]
+        self.start += range(begin + m, begin + n * m + 1, m)
+        self.row_names += names
+        self.row_lower += [-INF] * n
+        self.row_upper += upper.tolist()
+        self.is_lazy += [True] * n
+
     def add_fold(self, stage: int, rows: Sequence[int], columns: Sequence[int]) -> None:
         """Says that some equality rows determine as many columns, see ``Folds``."""
         if len(rows):

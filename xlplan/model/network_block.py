@@ -23,6 +23,9 @@ from xlplan.outages.records import ServicePeriod
 N_CORNER = 12
 """Corners of the polygon inside the circle of a rating (model.md section 4)."""
 
+_ANGLE = (2.0 * np.arange(N_CORNER) + 1.0) * np.pi / N_CORNER
+_COS, _SIN = np.cos(_ANGLE), np.sin(_ANGLE)
+
 V_SCALE = 1000.0
 """Voltage columns hold 1000 times the squared p.u. voltage: impedances of 1e-4 ohm then stay well
 above the 1e-9 under which the solver drops a coefficient."""
@@ -61,15 +64,18 @@ def add_polygon(
 
     ``rating`` is a number, or terms where the rating is bought. The rows are lazy: few ever bind.
     """
-    shrink = np.cos(np.pi / N_CORNER)
-    for i in range(N_CORNER):
-        angle = (2 * i + 1) * np.pi / N_CORNER
-        terms = [(c, a * np.cos(angle)) for c, a in kw] + [(c, a * np.sin(angle)) for c, a in kvar]
-        if isinstance(rating, float):
-            builder.add_row(f"{name} polygon {i}", terms, upper=rating * shrink, is_lazy=True)
-        else:
-            terms += [(c, -a * shrink) for c, a in rating]
-            builder.add_row(f"{name} polygon {i}", terms, upper=0.0, is_lazy=True)
+    shrink = float(np.cos(np.pi / N_CORNER))
+    terms = [(c, a * _COS) for c, a in kw] + [(c, a * _SIN) for c, a in kvar]
+    upper = np.zeros(N_CORNER)
+    if isinstance(rating, float):
+        upper += rating * shrink
+    else:
+        terms += [(c, np.full(N_CORNER, -a * shrink)) for c, a in rating]
+    columns = [int(c) for c, _ in terms]
+    if len(set(columns)) != len(columns):
+        raise ValueError(f"{name}: a column occurs twice in a rating")
+    names = [f"{name} polygon {i}" for i in range(N_CORNER)]
+    builder.add_lazy_block(names, columns, np.array([a for _, a in terms]).T, upper)
 
 
 def add_network(

@@ -50,16 +50,14 @@ class FeederModel:
 
     def price_of_shed(self, clock_h: float, is_event: bool) -> FloatArray:
         """Cost of a kW of each load shed for one hour, (n_load,); losses are no energy missed."""
-        classes = {c.customer_class: c for c in self.study.customer_classes}
         keep = 1.0 / (1.0 + self.study.settings.loss_allowance_frac)
-        prices = []
-        for load in self.study.loads:
-            customer_class = classes[load.customer_class]
-            if is_event:
-                prices.append(price_per_kwh(customer_class, clock_h))
-            else:
-                prices.append(normal_service_price_per_kwh(customer_class))
-        return np.array(prices) * keep
+        prices = {
+            c.customer_class: float(
+                price_per_kwh(c, clock_h) if is_event else normal_service_price_per_kwh(c)
+            )
+            for c in self.study.customer_classes
+        }
+        return np.array([prices[load.customer_class] for load in self.study.loads]) * keep
 
     def first_moment_price(self) -> FloatArray:
         """Cost of the largest kW shed of each load in an event, (n_load,)."""

@@ -97,6 +97,11 @@ class CutPool:
         self._n_level = 0
 
     @property
+    def n_member(self) -> int:
+        """Members of the family."""
+        return len(self._positions)
+
+    @property
     def member(self) -> IntArray:
         """(n,) member that each cut belongs to."""
         return self._member[: self.n]

@@ -28,6 +28,7 @@ from xlplan.base.rng import stream
 from xlplan.model.value_graph import ValueGraph
 from xlplan.solve.first_stage import FirstStage, FirstStagePlan, capacities_of, state_of
 from xlplan.solve.follow import Follower, Following, RootPoint, Sampled, Term
+from xlplan.solve.inner_bound import inner_bound
 from xlplan.solve.member_cache import MemberCache
 from xlplan.solve.node_solver import Measure, NodeRequest, NodeSolution, Share, new_pools
 from xlplan.solve.result import (
@@ -37,6 +38,7 @@ from xlplan.solve.result import (
     StopReason,
     relative_gap,
 )
+from xlplan.solve.savepoint import Saved, Savepoint
 from xlplan.solve.stopping import (
     INNER_SHARE,
     Clock,
@@ -107,6 +109,8 @@ class Engine:
     seed : int, of the chains that are drawn
     workers : int, processes; 1 solves in this one
     options : EngineOptions
+    savepoint : Savepoint or None, where to keep what is learnt
+    resumes : bool, whether to go on from what the savepoint holds
 
     Use ``close`` or a ``with`` statement to end the processes.
     """
@@ -117,6 +121,8 @@ class Engine:
         seed: int,
         workers: int = 1,
         options: EngineOptions | None = None,
+        savepoint: Savepoint | None = None,
+        resumes: bool = False,
     ) -> None:
         self.graph, self.seed = graph, seed
         self.options = options or EngineOptions()
@@ -135,6 +141,14 @@ class Engine:
         self._n_path = self._follower.n_path(self.options.enumerate_up_to + 1)
         self._seconds_per_full: float = 0.0
         self._last_errors: list[FloatArray | None] = [None] * len(graph.roots)
+        self._savepoint = savepoint
+        self._saved: Saved | None = None
+        if savepoint is not None and resumes:
+            self._saved = savepoint.load(self.pools)
+            if self._saved is not None:
+                for batch in self._saved.cuts:
+                    self.pools[batch.family].add(batch)
+                self._n_group = self._saved.n_group
 
     def __enter__(self) -> Engine:
         return self
@@ -181,6 +195,38 @@ class Engine:
         """Counted events of all processes since the start."""
         return self._workers.counts()
 
+    def upper_bound(
+        self,
+        result: DecompositionResult,
+        most_solves: int,
+        should_stop: Callable[[], bool] | None = None,
+    ) -> tuple[float | None, str]:
+        """Deterministic bound from above of the cost at a result's decision.
+
+        Parameters
+        ----------
+        result : DecompositionResult of this engine, with a plan
+        most_solves : int, give up beforehand where more nodes would have to be solved
+        should_stop : asked now and then
+
+        Returns
+        -------
+        (bound, ""), or (None, why there is none)
+        """
+        states = [state_of(r, c) for r, c in zip(self.graph.roots, result.capacities, strict=True)]
+        found = inner_bound(
+            self.graph,
+            self._follower,
+            result.capacities,
+            states,
+            lambda requests: self.solve_nodes(requests, should_stop=should_stop),
+            most_solves,
+        )
+        if found.values is None:
+            return None, found.reason
+        total = sum(r.weight * v for r, v in zip(self.graph.roots, found.values, strict=True))
+        return result.first_stage_cost + total, ""
+
     # -- the run -------------------------------------------------------------------------------
 
     def run(
@@ -219,6 +265,8 @@ class Engine:
             enumerate_paths = self._n_path <= self.options.enumerate_up_to
         run = _Run(self, target_gap_frac, Clock(deadline, should_stop), on_progress)
         run.is_enumerating = enumerate_paths
+        if self._saved is not None and self._saved.is_integer_phase:
+            run.is_integer_phase = True
         try:
             reason = run.go()
         except KeyboardInterrupt:
@@ -315,6 +363,7 @@ class _Run:
             if not is_partial and found.estimate is not None:
                 self._measured(points, found, self.clock.seconds() - begin)
             self._record(found)
+            self._save()
             if self._is_reached():
                 return StopReason.GAP_REACHED
             if self.clock.should_stop():
@@ -328,6 +377,13 @@ class _Run:
                     _LOG.info("first stage in whole numbers from pass %d on", i_pass + 1)
         self._finish_with_integers()
         return StopReason.PASS_LIMIT
+
+    def _save(self) -> None:
+        """Keeps what is learnt where that is asked for and due."""
+        savepoint = self.engine._savepoint
+        if savepoint is not None and savepoint.is_due():
+            x = self.best.first.x if self.best is not None else None
+            savepoint.save(self.engine.pools, self.engine._n_group, self.is_integer_phase, x)
 
     def _agree(self, is_first: bool) -> list[RootPoint]:
         """First stage and roots in turn until they agree."""

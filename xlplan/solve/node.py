@@ -57,6 +57,12 @@ DUAL_TOLERANCE = 1e-6
 FACE_TOLERANCE = 1e-7
 """Reduced cost, relative to the largest cost, that keeps a column at its bound on the face."""
 
+FEW_ROWS = 40
+"""Up to so many violated rows are all added at once."""
+
+WORST_PART = 8
+"""Of more violated rows this part is added, the worst ones first."""
+
 FIRST_SLOTS = 3
 """Slots for the cuts of a child that changes with the member; more are added when needed."""
 
@@ -378,19 +384,37 @@ class NodeModel:
                 self._lazy_of_entry, self._lazy_value * y[self._lazy_index], len(self._lazy)
             )
             low, high = self._lazy_sides
-            rows = self._lazy[(activity > high) | (activity < low)]
-            rows = rows[self._rows.of_program[rows] < 0]
+            rows = self._worst(activity, low, high, self._rows.of_program[self._lazy])
             if len(rows):
+                rows = self._lazy[rows]
                 n_new += self._append_program_rows(rows, np.full(len(rows), -1, dtype=np.int64))
         if len(self._folding):
             value = y[self._folding.column]
             low, high = self._fold_sides
-            folds = np.flatnonzero((value > high) | (value < low))
-            folds = folds[self._rows.of_bound[folds] < 0]
+            folds = self._worst(value, low, high, self._rows.of_bound)
             if len(folds):
                 n_new += self._append_program_rows(np.full(len(folds), -1, dtype=np.int64), folds)
         self.counts["lazy row"] += n_new
         return n_new
+
+    @staticmethod
+    def _worst(
+        activity: FloatArray, low: FloatArray, high: FloatArray, place: IntArray
+    ) -> IntArray:
+        """The most violated rows that are not in the model yet.
+
+        Where many are violated most of them follow from the worst ones (the voltage at the end of
+        a line from that in its middle), and every row makes the later solves slower.
+        """
+        found = np.flatnonzero((activity > high) | (activity < low))
+        found = found[place[found] < 0]
+        if len(found) <= FEW_ROWS:
+            return found
+        by = np.maximum(activity[found] - high[found], low[found] - activity[found])
+        size = np.where(by == activity[found] - high[found], high[found], low[found])
+        order = np.argsort(-by / (1.0 + np.abs(size)), kind="stable")
+        worst: IntArray = np.sort(found[order[: max(FEW_ROWS, len(found) // WORST_PART)]])
+        return worst
 
     def _append_program_rows(self, rows: IntArray, folds: IntArray) -> int:
         """Adds program rows, or bounds of folded columns where ``rows`` is -1; their number."""
