@@ -104,7 +104,10 @@ class Savepoint:
         """What was saved for this key and graph; None where there is nothing of use."""
         try:
             # Never unpickled: the file may come from anywhere.
-            with np.load(self.path, allow_pickle=False) as data:
+            with (
+                self.path.open("rb") as handle,
+                np.load(handle, allow_pickle=False) as data,
+            ):
                 if str(data["key"]) != self.key or int(data["n_family"]) != len(pools):
                     self.found = Found.OTHER_STUDY
                     return None
