@@ -196,3 +196,11 @@ def test_a_worker_that_dies_is_replaced_and_its_work_repeated():
         found = engine.run(1e-6)
         assert engine.counts()["worker restart"] >= 1
     assert found.lower_bound == pytest.approx(alone.lower_bound, rel=2e-6)
+
+
+def test_a_run_beyond_its_memory_stops_with_a_plan():
+    with Engine(random_tree_graph(6), seed=1, memory_bytes=1) as engine:
+        result = engine.run(1e-9)
+    assert result.termination is StopReason.MEMORY_LIMIT
+    assert result.has_plan
+    assert result.lower_bound <= result.cost.high

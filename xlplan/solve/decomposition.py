@@ -29,7 +29,7 @@ from xlplan.model.value_graph import ValueGraph
 from xlplan.solve.first_stage import FirstStage, FirstStagePlan, capacities_of, state_of
 from xlplan.solve.follow import Follower, Following, RootPoint, Sampled, Term
 from xlplan.solve.inner_bound import inner_bound
-from xlplan.solve.member_cache import MemberCache
+from xlplan.solve.member_cache import CACHE_BYTES, MemberCache
 from xlplan.solve.node_solver import Measure, NodeRequest, NodeSolution, Share, new_pools
 from xlplan.solve.result import (
     CostEstimate,
@@ -54,6 +54,9 @@ BoolArray = NDArray[np.bool_]
 _LOG = logging.getLogger(__name__)
 
 Progress = Callable[[IterationRecord], None]
+
+CACHE_SHARE = 0.2
+"""Share of the memory allowed that all processes together may keep members in."""
 
 POOR_AGREEMENT = 0.1
 """First stage and roots this far apart have hardly met yet."""
@@ -111,6 +114,8 @@ class Engine:
     options : EngineOptions
     savepoint : Savepoint or None, where to keep what is learnt
     resumes : bool, whether to go on from what the savepoint holds
+    memory_bytes : int or None; a run that uses more, all processes together, stops with its best
+        plan
 
     Use ``close`` or a ``with`` statement to end the processes.
     """
@@ -123,10 +128,15 @@ class Engine:
         options: EngineOptions | None = None,
         savepoint: Savepoint | None = None,
         resumes: bool = False,
+        memory_bytes: int | None = None,
     ) -> None:
         self.graph, self.seed = graph, seed
         self.options = options or EngineOptions()
-        self._cache = MemberCache(graph.families)
+        self.memory_bytes = memory_bytes
+        cache_bytes = CACHE_BYTES
+        if memory_bytes is not None:
+            cache_bytes = min(CACHE_BYTES, int(CACHE_SHARE * memory_bytes / (workers + 1)))
+        self._cache = MemberCache(graph.families, cache_bytes)
         self.tables = gather_tables(graph, self._cache)
         self.pools = new_pools(graph, self.tables)
         self._first_stage = FirstStage(graph, self.tables)
@@ -193,7 +203,9 @@ class Engine:
 
     def counts(self) -> dict[str, float]:
         """Counted events of all processes since the start."""
-        return self._workers.counts()
+        counts = self._workers.counts()
+        counts.pop("resident bytes", None)  # no count of events
+        return counts
 
     def upper_bound(
         self,
@@ -369,6 +381,11 @@ class _Run:
             if self.clock.should_stop():
                 self._finish_with_integers()
                 return self.clock.reason()
+            limit = self.engine.memory_bytes
+            if limit is not None and self.engine._workers.resident_bytes() > limit:
+                _LOG.warning("more memory in use than allowed: stopping with the best plan")
+                self._finish_with_integers()
+                return StopReason.MEMORY_LIMIT
             if not self.is_integer_phase:
                 self.relaxed_bounds.append(self.lower_bound)
                 target_abs = 0.5 * self.target * max(abs(self.lower_bound), 1e-12)

@@ -15,7 +15,7 @@ class MemberCache:
 
     def __init__(self, families: tuple[Family, ...], limit_bytes: int = CACHE_BYTES) -> None:
         self._families = families
-        self._limit = limit_bytes
+        self.limit_bytes = limit_bytes
         self._members: OrderedDict[tuple[int, int], tuple[Member, int]] = OrderedDict()
         self._bytes = 0
 
@@ -29,6 +29,6 @@ class MemberCache:
         size = 8 * (3 * len(made.cost) + 2 * len(made.row_lower) + 5 * len(made.exit_weight))
         self._members[key] = (made, size)
         self._bytes += size
-        while self._bytes > self._limit and len(self._members) > 1:
+        while self._bytes > self.limit_bytes and len(self._members) > 1:
             self._bytes -= self._members.popitem(last=False)[1][1]
         return made

@@ -15,6 +15,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from xlplan.base.memory import resident_bytes
 from xlplan.model.value_graph import Family, ValueGraph
 from xlplan.solve.cuts import CutBatch, CutPool, DualBound
 from xlplan.solve.highs import SolverFailureError
@@ -203,7 +204,11 @@ class NodeSolver:
         for model in self._models.values():
             total.update(model.all_counts())
             seconds += model.seconds_in_solver
-        return {**{name: float(n) for name, n in total.items()}, "seconds in solver": seconds}
+        return {
+            **{name: float(n) for name, n in total.items()},
+            "seconds in solver": seconds,
+            "resident bytes": float(resident_bytes()),
+        }
 
 
 def new_pools(graph: ValueGraph, tables: GraphTables) -> list[CutPool]:

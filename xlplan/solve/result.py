@@ -109,6 +109,7 @@ class StopReason(StrEnum):
     TIME_LIMIT = "time limit"
     INTERRUPTED = "interrupted"
     PASS_LIMIT = "pass limit"
+    MEMORY_LIMIT = "memory limit"
 
 
 @dataclass(frozen=True)

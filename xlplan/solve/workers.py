@@ -14,6 +14,7 @@ from collections.abc import Callable, Sequence
 from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
 from concurrent.futures.process import BrokenProcessPool
 
+from xlplan.base.memory import resident_bytes
 from xlplan.model.value_graph import ValueGraph
 from xlplan.solve.cuts import CutBatch, CutPool
 from xlplan.solve.member_cache import MemberCache
@@ -31,11 +32,11 @@ POLL_S = 0.2
 _SOLVER: NodeSolver | None = None
 
 
-def _start_worker(graph: ValueGraph, tables: GraphTables) -> None:
+def _start_worker(graph: ValueGraph, tables: GraphTables, cache_bytes: int) -> None:
     """Runs once in every worker."""
     global _SOLVER
     signal.signal(signal.SIGINT, signal.SIG_IGN)  # the parent decides what Ctrl-C means
-    _SOLVER = NodeSolver(graph, tables)
+    _SOLVER = NodeSolver(graph, tables, MemberCache(graph.families, cache_bytes))
 
 
 def _solve_chunk(
@@ -77,7 +78,7 @@ class Workers:
         self._n_restart = 0
         if self.n_worker == 1:
             self._local = NodeSolver(graph, tables, cache)
-        self._is_closed = False
+        self._cache_bytes = cache.limit_bytes
 
     def owner(self, request: NodeRequest) -> int:
         """Worker that holds the request's model."""
@@ -193,7 +194,7 @@ class Workers:
                 # A forked child would share the parent's solver threads.
                 mp_context=multiprocessing.get_context("spawn"),
                 initializer=_start_worker,
-                initargs=(self.graph, self.tables),
+                initargs=(self.graph, self.tables, self._cache_bytes),
             )
         executor = self._executors[worker]
         assert executor is not None
@@ -208,6 +209,13 @@ class Workers:
         if self._n_restart:
             total["worker restart"] = float(self._n_restart)
         return total
+
+    def resident_bytes(self) -> int:
+        """Memory of this process and of all workers, as they last said."""
+        own = resident_bytes()
+        if self._local is not None:
+            return own
+        return own + int(sum(counts.get("resident bytes", 0.0) for counts in self._counts))
 
     def close(self) -> None:
         """Ends the processes."""

@@ -1,0 +1,134 @@
+"""Studies whose numbers lie many powers of ten apart are solved like any others."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+import pytest
+
+from tests.builders import (
+    change_study,
+    make_bus,
+    make_customer_class,
+    make_generator,
+    make_line,
+    make_load,
+    make_outage_class,
+    make_profiles,
+    make_storage,
+    make_window,
+    random_study,
+    small_study,
+)
+from xlplan.model.study_graph import build_study_graph
+from xlplan.model.whole_tree import build_whole_tree
+from xlplan.network.feeder import build_feeder
+from xlplan.outages.window_model import build_window_models
+from xlplan.solve.decomposition import Engine
+from xlplan.solve.tree import solve_tree
+from xlplan.study.study import Device
+
+
+def far_apart_study():
+    """1 kW beside 10 MW, 1e-4 ohm beside 5 ohm, 0.01 beside 1e5 per kWh."""
+    return small_study(
+        buses=(make_bus("S"), make_bus("A"), make_bus("B"), make_bus("C")),
+        loads=(
+            make_load("LA", "A", peak_kw=10_000.0, power_factor=0.95),
+            make_load("LB", "B", peak_kw=1.0, customer_class="ward", customers=1.0),
+            make_load("LC", "C", peak_kw=40.0, customer_class="pumps"),
+        ),
+        lines=(
+            make_line("SA", "S", "A", r_ohm=1e-4, x_ohm=1e-4, rating_kva=20_000.0),
+            make_line("AB", "A", "B", r_ohm=5.0, x_ohm=3.0, from_device=Device.FUSE,
+                      rating_kva=500.0),
+            make_line("AC", "A", "C", r_ohm=1e-4, x_ohm=0.2, from_device=Device.RECLOSER),
+        ),
+        generators=(make_generator("unit", "B", max_new_kw=5.0, ramp_frac_per_period=0.5),),
+        storage=(make_storage("battery", "A", max_new_kw=3000.0, max_new_kwh=12_000.0),
+                 make_storage("cell", "B", max_new_kw=1.0, max_new_kwh=2.0)),
+        outage_classes=(make_outage_class("overhead", 40.0, repair_h=2.0),),
+        customer_classes=(
+            make_customer_class("homes"),
+            make_customer_class("ward", is_critical=True, cost_0h_per_kw=1e3, cost_1h_per_kw=1e5,
+                                cost_4h_per_kw=4e5, cost_8h_per_kw=8e5, cost_after_8h_per_kwh=1e5),
+            make_customer_class("pumps", cost_1h_per_kw=0.02, cost_4h_per_kw=0.08,
+                                cost_8h_per_kw=0.16, cost_after_8h_per_kwh=0.02),
+        ),
+        profiles=make_profiles(6, flat=[1.0, 0.9, 0.8, 1.0, 0.7, 0.6]),
+        windows=(make_window(n_period=6),),
+        energy_price_per_kwh=0.01,
+        substation_limit_kva=30_000.0,
+    )  # fmt: skip
+
+
+def solved(study, gap=1e-3):
+    """(decomposition, tree) of a study."""
+    feeder = build_feeder(study)
+    windows = build_window_models(study, feeder)
+    graph = build_study_graph(study, feeder, windows).graph
+    with Engine(graph, seed=1) as engine:
+        found = engine.run(gap, enumerate_paths=True)
+        counts = engine.counts()
+    return found, solve_tree(build_whole_tree(study, feeder, windows)), counts
+
+
+def test_numbers_far_apart_give_the_same_by_both_methods():
+    found, tree, counts = solved(far_apart_study())
+    assert found.gap_frac <= 1e-3
+    assert found.cost.mean == pytest.approx(tree.objective, rel=1e-3)
+    assert found.lower_bound <= tree.objective * (1.0 + 1e-6)
+    assert counts.get("failed node", 0) == 0
+
+
+@pytest.mark.parametrize("factor", [1e-3, 1e3])
+@pytest.mark.parametrize("seed", [3, 8])
+def test_the_same_study_in_other_money_is_the_same_plan(seed, factor):
+    study = random_study(seed, n_period=3)
+    found, *_ = solved(study)
+    scaled = change_study(
+        study,
+        customer_classes=tuple(
+            replace(c, **{
+                name: getattr(c, name) * factor
+                for name in ("cost_0h_per_kw", "cost_1h_per_kw", "cost_4h_per_kw",
+                             "cost_8h_per_kw", "cost_after_8h_per_kwh")
+            })
+            for c in study.customer_classes
+        ),
+        generators=tuple(
+            replace(g, **{
+                name: getattr(g, name) * factor
+                for name in ("capital_cost_per_kw", "capital_site_cost", "fixed_om_per_kw",
+                             "running_cost_per_kwh")
+            })
+            for g in study.generators
+        ),
+        storage=tuple(
+            replace(s, **{
+                name: getattr(s, name) * factor
+                for name in ("capital_cost_per_kw", "capital_cost_per_kwh", "capital_site_cost",
+                             "fixed_om_per_kw")
+            })
+            for s in study.storage
+        ),
+        measures=tuple(
+            replace(m, capital_cost=m.capital_cost * factor, fixed_om=m.fixed_om * factor)
+            for m in study.measures
+        ),
+        outage_classes=tuple(
+            replace(o, repair_cost_per_failure=o.repair_cost_per_failure * factor)
+            for o in study.outage_classes
+        ),
+        **{
+            name: getattr(study.settings, name) * factor
+            for name in ("energy_price_per_kwh", "demand_charge_per_kw_year",
+                         "surplus_cost_per_kwh", "export_price_per_kwh", "capital_budget",
+                         "stored_energy_price_per_kwh")
+            if getattr(study.settings, name) is not None
+        },
+    )  # fmt: skip
+    other, *_ = solved(scaled)
+    assert other.cost.mean == pytest.approx(found.cost.mean * factor, rel=2e-3)
+    assert np.isfinite(other.lower_bound)
