@@ -35,7 +35,7 @@ ROUNDING_SHIFT = 1e-12
 SMALL_SLOPE = 1e-9
 """Slopes below this share of the largest term are moved into the intercept (scaling)."""
 
-TABLE_BYTES = 16_000_000
+TABLE_BYTES = 40_000_000
 """A family's table of members beyond this size is not kept."""
 
 MANY_EXITS = 8
@@ -264,7 +264,7 @@ class MemberTable:
         size = 8 * family.n_member * (3 * len(self.columns) + 2 * len(self.rows))
         self._whole: _Numbers | None = None
         if size <= TABLE_BYTES:
-            self._whole = self._gather(np.arange(family.n_member))
+            self._whole = self._gather(np.arange(family.n_member)).compact()
 
     def numbers(self, members: IntArray) -> _Numbers:
         """Numbers of some members, in their order."""
@@ -303,6 +303,19 @@ class _Numbers:
     offset: FloatArray
     scale: FloatArray
 
+    def compact(self) -> _Numbers:
+        """The same numbers, those that are equal for all members or on both sides kept once."""
+        parts = {
+            name: np.broadcast_to(part[0].copy(), part.shape)
+            if len(part) and (part == part[0]).all()
+            else part
+            for name, part in vars(self).items()
+        }
+        for one, other in (("row_lower", "row_upper"), ("col_lower", "col_upper")):
+            if np.array_equal(parts[one], parts[other]):
+                parts[other] = parts[one]
+        return _Numbers(**parts)
+
 
 @dataclass(frozen=True)
 class _NestTable:
@@ -331,8 +344,17 @@ def _nest_table(cache: MemberCache, i_family: int, family: Family) -> _NestTable
     nest, program = family.nest, family.program
     if nest is None or len(family.patch) or family.n_member < 2:
         return None
-    members = [cache.get(i_family, m) for m in range(family.n_member)]
-    later = np.array([m.in_columns for m in members[1:]])
+    # One after the other: all members of a long plan together would fill the memory.
+    in_columns, lower, upper, offset, scale = [], [], [], [], []
+    for i_member in range(family.n_member):
+        member = cache.get(i_family, i_member)
+        into = np.maximum(member.in_columns, 0)
+        in_columns.append(member.in_columns)
+        lower.append(member.col_lower[into])
+        upper.append(member.col_upper[into])
+        offset.append(member.offset)
+        scale.append(member.scale)
+    later = np.array(in_columns[1:])
     expected = np.arange(later.shape[0])[:, None]  # member u holds it in columns of u - 1
     if (later < 0).any() or (nest.col_last[later] != expected).any():
         return None
@@ -356,10 +378,10 @@ def _nest_table(cache: MemberCache, i_family: int, family: Family) -> _NestTable
         capacity_row=row[caps],
         capacity_place=of_capacity[program.index[caps]],
         first_only=np.flatnonzero(nest.row_last == 0),
-        state_lower=np.array([m.col_lower[np.maximum(m.in_columns, 0)] for m in members]),
-        state_upper=np.array([m.col_upper[np.maximum(m.in_columns, 0)] for m in members]),
-        offset=np.array([m.offset for m in members]),
-        scale=np.array([m.scale for m in members]),
+        state_lower=np.array(lower),
+        state_upper=np.array(upper),
+        offset=np.array(offset),
+        scale=np.array(scale),
     )
 
 
