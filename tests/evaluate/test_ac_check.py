@@ -22,7 +22,6 @@ from tests.builders import (
 )
 from xlplan.base.names import EXISTING
 from xlplan.compare.standing import SolveOptions, StandingAlternatives
-from xlplan.evaluate.ac_check import range_a
 from xlplan.network.feeder import build_feeder
 from xlplan.outages.window_model import build_window_models
 from xlplan.study.study import Study
@@ -231,8 +230,16 @@ def test_random_studies_balance(seed):
         assert one.loss_kwh >= -1e-6
 
 
-def test_range_a_has_a_row_for_low_and_one_for_medium_voltage():
-    # ANSI C84.1 Range A, service voltage: 114 to 126 V up to 600 V, 117 to 126 V above (on 120 V).
-    low, medium = range_a(0.48), range_a(12.47)
-    assert (low.low_pu, low.high_pu) == (pytest.approx(114 / 120), pytest.approx(126 / 120))
-    assert (medium.low_pu, medium.high_pu) == (pytest.approx(117 / 120), pytest.approx(126 / 120))
+def test_range_a_counts_at_the_service_voltage():
+    """ANSI C84.1 Range A: 114 to 126 V up to 600 V, 117 to 126 V above, on a base of 120 V."""
+    check = existing_plan(one_load(1700.0, 2.0)).ac
+    bus = next(b for b in check.buses if b.bus == "A" and not b.is_event)
+    assert bus.low_ac_pu == pytest.approx(ac_voltage(1700.0, 2.0))
+    assert 114 / 120 < bus.low_ac_pu < 117 / 120
+    assert not bus.is_outside_range_a
+    assert bus.is_outside_range_a_above_600_v
+    check = existing_plan(one_load(2400.0, 2.0)).ac
+    bus = next(b for b in check.buses if b.bus == "A" and not b.is_event)
+    assert bus.low_ac_pu == pytest.approx(ac_voltage(2400.0, 2.0))
+    assert bus.low_ac_pu < 114 / 120
+    assert check.outside_range_a() == (bus,)

@@ -158,14 +158,16 @@ def made_up_ac(low_pu: float = 0.981) -> AcCheck:
                     low_limit_pu=low_limit,
                     high_limit_pu=1.05,
                     breaks_limits=v_pu < low_limit,
-                    is_outside_range_a=v_pu < 0.975,
+                    is_outside_range_a=v_pu < 0.95,
+                    is_outside_range_a_above_600_v=v_pu < 0.975,
                     n_period=0 if is_dead else 24,
                     n_not_converged=0,
                 )
             )
     broken = low_pu < 0.95
     return AcCheck(
-        range_a=VoltageRange(0.975, 1.05, "service above 600 V"),
+        range_a=VoltageRange(0.95, 1.05, "service up to 600 V"),
+        range_a_above_600_v=VoltageRange(0.975, 1.05, "service above 600 V"),
         buses=tuple(buses),
         loadings=(
             AssetLoading(

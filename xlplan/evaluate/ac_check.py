@@ -52,17 +52,10 @@ VOLTAGE_TOLERANCE_PU = 5e-5
 LOADING_TOLERANCE = 5e-4
 """Half of a tenth of a percent, the last digit shown of a loading."""
 
-LOW_VOLTAGE_KV = 0.6
-"""ANSI C84.1 has one row of service voltages up to 600 V and one above."""
-
-RANGE_A_LOW_VOLTAGE = VoltageRange(0.95, 1.05, "service up to 600 V")
-RANGE_A_MEDIUM_VOLTAGE = VoltageRange(0.975, 1.05, "service above 600 V")
-"""ANSI C84.1 Table 1, Range A (recalled; see validation/trade_tables)."""
-
-
-def range_a(base_kv: float) -> VoltageRange:
-    """The row of ANSI C84.1 that holds for a feeder of this voltage."""
-    return RANGE_A_LOW_VOLTAGE if base_kv <= LOW_VOLTAGE_KV else RANGE_A_MEDIUM_VOLTAGE
+RANGE_A = VoltageRange(0.95, 1.05, "service up to 600 V")
+RANGE_A_ABOVE_600_V = VoltageRange(0.975, 1.05, "service above 600 V")
+"""ANSI C84.1 Table 1, Range A (recalled; see validation/trade_tables). Most customers are served up
+to 600 V, so that row decides; customers served at the feeder's own voltage are told apart."""
 
 
 def check_ac(
@@ -94,7 +87,8 @@ def check_ac(
             buses += _bus_voltages(study, feeder, chosen, is_event)
             loadings += _loadings(chosen, is_event)
     return AcCheck(
-        range_a=range_a(study.settings.base_kv),
+        range_a=RANGE_A,
+        range_a_above_600_v=RANGE_A_ABOVE_600_V,
         buses=tuple(buses),
         loadings=tuple(loadings),
         stretches=tuple(_stretch(study, s) for s in solved),
@@ -481,7 +475,6 @@ def _bus_voltages(
     ac = np.concatenate([s.ac_pu for s in solved])
     converged = np.concatenate([s.converged for s in solved])
     times = _times(solved)
-    served = range_a(settings.base_kv)
     found = []
     for i, name in enumerate(feeder.bus_ids):
         known = ac[:, i] if not np.isnan(ac[:, i]).all() else linear[:, i]
@@ -499,15 +492,21 @@ def _bus_voltages(
                 high_when=times[int(np.nanargmax(known))] if is_live.any() else "",
                 low_limit_pu=low_limit,
                 high_limit_pu=high_limit,
-                breaks_limits=low < low_limit - VOLTAGE_TOLERANCE_PU
-                or high > high_limit + VOLTAGE_TOLERANCE_PU,
-                is_outside_range_a=low < served.low_pu - VOLTAGE_TOLERANCE_PU
-                or high > served.high_pu + VOLTAGE_TOLERANCE_PU,
+                breaks_limits=_is_outside(low, high, low_limit, high_limit),
+                is_outside_range_a=_is_outside(low, high, RANGE_A.low_pu, RANGE_A.high_pu),
+                is_outside_range_a_above_600_v=_is_outside(
+                    low, high, RANGE_A_ABOVE_600_V.low_pu, RANGE_A_ABOVE_600_V.high_pu
+                ),
                 n_period=int(is_live.sum()),
                 n_not_converged=int((is_live & ~converged).sum()),
             )
         )
     return found
+
+
+def _is_outside(low: float, high: float, low_limit: float, high_limit: float) -> bool:
+    """False where nothing is known; what is not known is reported apart."""
+    return low < low_limit - VOLTAGE_TOLERANCE_PU or high > high_limit + VOLTAGE_TOLERANCE_PU
 
 
 def _times(solved: Sequence[_Solved]) -> list[str]:

@@ -38,6 +38,8 @@ class BusVoltage:
     high_limit_pu: float
     breaks_limits: bool
     is_outside_range_a: bool
+    """Of ANSI C84.1 for service up to 600 V."""
+    is_outside_range_a_above_600_v: bool
     n_period: int
     """Periods in which the bus is live."""
     n_not_converged: int
@@ -104,6 +106,7 @@ class AcCheck:
     """The whole check of one plan."""
 
     range_a: VoltageRange
+    range_a_above_600_v: VoltageRange
     buses: tuple[BusVoltage, ...]
     loadings: tuple[AssetLoading, ...]
     stretches: tuple[AcStretch, ...]

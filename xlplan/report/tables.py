@@ -250,7 +250,7 @@ AC_VOLTAGES = (
     Column("low_limit", "Study's lowest limit (p.u.)", "small"),
     Column("high_limit", "Study's highest limit (p.u.)", "small"),
     Column("verdict", "Within the limits", "status"),
-    Column("range_a", "ANSI C84.1 Range A", "text"),
+    Column("range_a", "ANSI C84.1 Range A", "wrap"),
     Column("unsolved", "Periods without AC solution", "whole"),
 )
 

@@ -237,7 +237,7 @@ def _share_words(loss: float, served: float, check: AcCheck) -> str:
 
 def _outside(sheet: SafeSheet, checked: list[tuple[PlanResult, AcCheck]], row: int) -> int:
     """Every bus outside Range A; next free row."""
-    limits = checked[0][1].range_a
+    limits, narrow = checked[0][1].range_a, checked[0][1].range_a_above_600_v
     sheet.text(
         row,
         0,
@@ -267,7 +267,9 @@ def _outside(sheet: SafeSheet, checked: list[tuple[PlanResult, AcCheck]], row: i
     )
     note = (
         "Range A is meant for normal operation; outage events are listed for information. The drop "
-        "of customers' transformers and service lines comes on top of what is shown."
+        "of customers' transformers and service lines comes on top of what is shown. Customers "
+        f"served above 600 V: {narrow.low_pu:g} to {narrow.high_pu:g} p.u.; buses outside of that "
+        "are marked in the next table."
     )
     sheet.text(grid.below, 0, note, "note")
     return grid.below + 1
@@ -322,9 +324,16 @@ def _voltage_row(grid: Grid, i: int, plan: PlanResult, bus: BusVoltage) -> dict[
         "high_ac": bus.high_ac_pu,
         "high_when": bus.high_when,
         "verdict": verdict,
-        "range_a": "outside" if bus.is_outside_range_a else "inside",
+        "range_a": _range_words(bus),
         "unsolved": float(bus.n_not_converged),
     }
+
+
+def _range_words(bus: BusVoltage) -> str:
+    """Inside or outside; customers served above 600 V have a narrower range."""
+    if bus.is_outside_range_a:
+        return "outside"
+    return "inside; outside above 600 V" if bus.is_outside_range_a_above_600_v else "inside"
 
 
 def _loadings(sheet: SafeSheet, checked: list[tuple[PlanResult, AcCheck]], row: int) -> int:
