@@ -100,7 +100,7 @@ def published(case: str, quantity: str) -> float:
 
 
 def write_study(path: Path) -> None:
-    """The feeder as a study: every branch starts with a fuse, no ties, flat loads, nothing to buy."""
+    """The feeder as a study: a fuse at every branch, no ties, flat loads, nothing to buy."""
     lines: list[dict[str, object]] = [
         {
             "line": f"{row['from_bus']}-{row['to_bus']}",
@@ -276,8 +276,8 @@ def compare() -> list[Comparison]:
             printed[worst],
             float(v_pu[worst]),
             1e-4,
-            "the last digit printed: printed profiles cut the fifth decimal at some buses and round "
-            "it at others",
+            "the last digit printed: printed profiles cut the fifth decimal at some buses and "
+            "round it at others",
             Origin.RECALLED,
             4,
         )

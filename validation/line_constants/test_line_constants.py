@@ -13,7 +13,7 @@ def test_figures() -> None:
 
 
 def test_what_a_balanced_model_leaves_out_is_not_small() -> None:
-    """Zero sequence is several times the positive one: unbalanced load drops more than is modelled."""
+    """Zero sequence is about twice the positive one or more: unbalanced load drops more."""
     for row in read_rows(HERE, "sequence_impedances.csv"):
         number = int(row["line"].split()[1])
         positive, zero = sequences(configuration(number))
