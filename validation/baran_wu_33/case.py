@@ -310,7 +310,7 @@ def compare() -> list[Comparison]:
                 1e-3,
                 "four and five decimals in the table of the independent calculation",
                 Origin.INDEPENDENT,
-                3,
+                2,
             )
         )
     existing = next(a for a in twin["alternatives"] if a["name"] == "Existing feeder")

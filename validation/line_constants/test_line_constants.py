@@ -8,7 +8,7 @@ from validation.line_constants.case import HERE, compare, configuration, sequenc
 
 def test_figures() -> None:
     found = compare()
-    assert len(found) == 16 + 2 + 4 + 3 * 15
+    assert len(found) == 16 + 2 + 4 + 3
     assert disagreements(found) == []
 
 
