@@ -366,7 +366,8 @@ def _loadings(sheet: SafeSheet, checked: list[tuple[PlanResult, AcCheck]], row: 
     note = (
         "Lines: AC current times the nominal voltage, since heating follows the current. Neighbour "
         "supplies: share of the spare power of the same period. Forming units: what holding the "
-        "voltage asks of them beyond their planned output is included."
+        "voltage asks of them beyond their planned output is included; it is not taken from their "
+        "stored energy or fuel."
     )
     sheet.text(grid.below, 0, note, "note")
     return grid.below
