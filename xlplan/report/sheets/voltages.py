@@ -41,7 +41,9 @@ MEANINGS = (
     "LOOK: a limit of the study is broken, or a period has no AC solution and the feeder may not "
     "be able to carry its load. The margins say by how much the study's voltage limits would have "
     "had to be tighter, or its loss allowance larger, to cover it: change them in Settings and "
-    "solve again.",
+    "solve again. AC voltages are compared with the study's own limits, so a study whose limits "
+    "were tightened on purpose may still say LOOK: read its lowest AC voltage against the true "
+    "limits then.",
 )
 
 
