@@ -67,7 +67,7 @@ def compare(one: RandomFeeder, scales: FloatArray) -> Compared:
 
 
 def scales_of_drops(one: RandomFeeder) -> FloatArray:
-    """Scales at which the largest linear drop is that of ``DROPS_PU``: squares are linear in load."""
+    """Scales at which the largest linear drop is that of ``DROPS_PU`` (squares are linear)."""
     live = np.ones(one.feeder.n_line, dtype=bool)
     unit = flows_and_voltages(one.feeder, live, {0: 1.0}, one.kw, one.kvar)
     per_scale = float((1.0 - unit.v_sq_pu).max())
