@@ -336,6 +336,36 @@ def test_workbook_holds_the_numbers_of_the_twin(answer):
         assert totals["Storage energy (kWh)"] == close(sum(p["kwh"] for p in storage))
 
 
+def test_voltages_of_the_workbook_are_those_of_the_twin(answer):
+    path, twin = answer
+    sheet = openpyxl.load_workbook(path, data_only=True)["Voltages"]
+    rows = [list(row) for row in sheet.iter_rows(values_only=True)]
+    head = next(row for row in rows if "Lowest, AC (p.u.)" in row)
+    found = {}
+    for row in rows[rows.index(head) + 1 :]:
+        if row[head.index("Within the limits")] is None and row[head.index("Bus")] is None:
+            break
+        record = dict(zip(head, row, strict=True))
+        found[record["Alternative"], record["Operation"], record["Bus"]] = record
+    plans = [EXISTING, IGNORING_OUTAGES, LEAST_COST]
+    keys = {(v["alternative"], v["operation"], v["bus"]) for v in twin["voltages"]}
+    assert {key[0] for key in keys} == set(plans)
+    assert {key[2] for key in keys} == {"S", "A", "B"}
+    assert set(found) == keys
+    for voltage in twin["voltages"]:
+        row = found[voltage["alternative"], voltage["operation"], voltage["bus"]]
+        if voltage["lowest_ac_pu"] is None:
+            assert voltage["periods"] == 0
+            assert row["When lowest"] == "without supply throughout"
+            continue
+        assert row["Lowest, linear (p.u.)"] == close(voltage["lowest_linear_pu"])
+        assert row["Lowest, AC (p.u.)"] == close(voltage["lowest_ac_pu"])
+        assert row["Highest, AC (p.u.)"] == close(voltage["highest_ac_pu"])
+        # Without a loss allowance linear voltages of a fed part are never below the AC ones.
+        assert voltage["lowest_linear_pu"] >= voltage["lowest_ac_pu"] - 1e-9
+        assert voltage["periods_not_converged"] == 0
+
+
 @pytest.mark.skipif(shutil.which("soffice") is None, reason="LibreOffice is not installed")
 def test_a_spreadsheet_program_finds_every_stored_value_again(answer, tmp_path):
     """With recalculation forced; tests/report proves that a wrong value would be seen."""

@@ -9,6 +9,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
+from tests.outages.histories import expectations
 from xlplan.base.units import HOURS_PER_YEAR
 from xlplan.outages.clock import Clock
 
@@ -16,38 +17,6 @@ from xlplan.outages.clock import Clock
 def rate_of_chance(chance: float, period_h: float = 1.0) -> float:
     """Yearly rate that strikes in one period with this chance."""
     return -math.log(1.0 - chance) * HOURS_PER_YEAR / period_h
-
-
-def every_history(q, p, tau):
-    """Every history of a window: (chance, failures as (period, scenario), periods in service).
-
-    Walked forwards, period by period, from the definition: in service, a failure may strike;
-    after one in k, periods k+1..k+tau are those of the event.
-    """
-    n_period = len(q)
-
-    def walk(k, chance, failures, in_service):
-        if k >= n_period:
-            yield chance, failures, in_service
-            return
-        served = [*in_service, k]
-        yield from walk(k + 1, chance * (1.0 - q[k]), failures, served)
-        for w, repair in enumerate(tau):
-            yield from walk(k + 1 + repair, chance * q[k] * p[k][w], [*failures, (k, w)], served)
-
-    yield from walk(0, 1.0, [], [])
-
-
-def expectations(q, p, tau):
-    """Chance of service by period and expected failures by period and scenario, by enumeration."""
-    service, events, total = np.zeros(len(q)), np.zeros(np.shape(p)), 0.0
-    for chance, failures, in_service in every_history(q, p, tau):
-        total += chance
-        service[in_service] += chance
-        for failure in failures:
-            events[failure] += chance
-    assert total == pytest.approx(1.0)
-    return service, events
 
 
 def test_survival_is_geometric_where_rates_are_constant():

@@ -13,6 +13,14 @@ import numpy as np
 from xlplan.base.errors import Finding, Level
 from xlplan.base.names import EXISTING, IGNORING_OUTAGES, LEAST_COST
 from xlplan.compare.study_result import InputEcho, StudyResult
+from xlplan.evaluate.ac_results import (
+    AcCheck,
+    AcStretch,
+    AssetLoading,
+    BusVoltage,
+    MarginAdvice,
+    VoltageRange,
+)
 from xlplan.evaluate.results import (
     BusResult,
     CauseResult,
@@ -129,6 +137,68 @@ def trace(title: str, n_period: int, outage: tuple[int, int] | None) -> Trace:
     )
 
 
+def made_up_ac(low_pu: float = 0.981) -> AcCheck:
+    """Voltages that fall along the buses to ``low_pu``; one bus is dead in the event."""
+    buses = []
+    for is_event, low_limit in ((False, 0.95), (True, 0.9)):
+        for i, bus in enumerate((*BUSES, "=1+1 bus")):
+            v_pu = 1.02 - (1.02 - low_pu) * i / len(BUSES)
+            is_dead = is_event and i == 3
+            v_pu = float("nan") if is_dead else v_pu
+            buses.append(
+                BusVoltage(
+                    bus=bus,
+                    is_event=is_event,
+                    low_linear_pu=v_pu + 0.002,
+                    low_ac_pu=v_pu,
+                    low_when="" if is_dead else "peak day: 1 d 19:00",
+                    high_linear_pu=v_pu + 0.011,
+                    high_ac_pu=v_pu + 0.01,
+                    high_when="" if is_dead else "ordinary day: 1 d 03:00",
+                    low_limit_pu=low_limit,
+                    high_limit_pu=1.05,
+                    breaks_limits=v_pu < low_limit,
+                    is_outside_range_a=v_pu < 0.95,
+                    is_outside_range_a_above_600_v=v_pu < 0.975,
+                    n_period=0 if is_dead else 24,
+                    n_not_converged=0,
+                )
+            )
+    broken = low_pu < 0.95
+    return AcCheck(
+        range_a=VoltageRange(0.95, 1.05, "service up to 600 V"),
+        range_a_above_600_v=VoltageRange(0.975, 1.05, "service above 600 V"),
+        buses=tuple(buses),
+        loadings=(
+            AssetLoading(
+                "=1+1 line", "line", False, 4000.0, "kVA", 0.61, 0.63, "peak day: x", False
+            ),
+            AssetLoading("S", "substation", True, 5000.0, "kVA", 0.4, 0.41, "storm: y", False),
+        ),
+        stretches=(
+            AcStretch(
+                "Normal service: ordinary day",
+                False,
+                300.0,
+                1,
+                24,
+                0,
+                30e3,
+                700.0,
+                600.0,
+                0.03,
+                9.0,
+            ),
+            AcStretch(
+                "Normal service: peak day", False, 60.0, 1, 24, 0, 40e3, 1200.0, 800.0, 0.04, 36.0
+            ),
+            AcStretch("Outage event: line L4", True, 2.5, 2, 8, 0, 4e3, 60.0, 80.0, 0.02, -1.8),
+        ),
+        advice=MarginAdvice(0.003 if broken else 0.0, 0.0, 0.0, 0.0, 0.0),
+        allowance_frac=0.02,
+    )
+
+
 def made_up_plan(
     name: str,
     kind: str,
@@ -235,6 +305,7 @@ def made_up_plan(
             ConvergenceRow(77.0, 0.995 * total, total, 1.003 * total, 0.008, "gap reached"),
         ),
         solve_seconds=77.0,
+        ac=made_up_ac(),
         difference=difference,
         difference_interval=(
             (0.0, 0.0) if base_total is None else (difference - 9_000.0, difference + 9_000.0)

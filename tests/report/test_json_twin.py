@@ -66,6 +66,25 @@ ALTERNATIVE: dict[str, Any] = {
 }
 
 
+VOLTAGE = {
+    "alternative",
+    "bus",
+    "operation",
+    "lowest_linear_pu",
+    "lowest_ac_pu",
+    "lowest_when",
+    "highest_linear_pu",
+    "highest_ac_pu",
+    "highest_when",
+    "lowest_limit_pu",
+    "highest_limit_pu",
+    "within_limits",
+    "outside_range_a",
+    "periods",
+    "periods_not_converged",
+}
+
+
 def test_keys_are_those_of_the_contract(result: StudyResult) -> None:
     document = json_document(result)
     assert set(document) == TOP
@@ -103,7 +122,22 @@ def test_values(result: StudyResult) -> None:
     naive = document["alternatives"][1]
     assert naive["lower_bound"] is None
     assert naive["gap_pct"] is None
-    assert document["hardening"] == document["voltages"] == []
+    assert document["hardening"] == []
+
+
+def test_voltages(result: StudyResult) -> None:
+    rows = json_document(result)["voltages"]
+    assert len(rows) == 4 * 2 * 15
+    assert all(set(row) == VOLTAGE for row in rows)
+    low = rows[14]
+    assert (low["alternative"], low["bus"]) == ("Existing feeder", "=1+1 bus")
+    assert low["operation"] == "normal service"
+    assert low["lowest_ac_pu"] == pytest.approx(0.981)
+    assert low["lowest_linear_pu"] == pytest.approx(0.983)
+    assert low["within_limits"] is True
+    dead = next(row for row in rows if row["bus"] == "B04" and row["operation"] != "normal service")
+    assert dead["lowest_ac_pu"] is None
+    assert dead["periods"] == 0
 
 
 def test_numbers_that_are_not_known_are_null(result: StudyResult, tmp_path: Path) -> None:

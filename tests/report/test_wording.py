@@ -20,6 +20,20 @@ def with_best(result: StudyResult, **changes: object) -> StudyResult:
     return dataclasses.replace(result, plans=plans)
 
 
+def test_an_unsolved_power_flow_is_said(result: StudyResult) -> None:
+    check = result.plan(LEAST_COST).ac
+    assert check is not None
+    stretch = dataclasses.replace(check.stretches[0], n_not_converged=5)
+    unsolved = dataclasses.replace(check, stretches=(stretch, *check.stretches[1:]))
+    words = " ".join(wording.uncertainties(with_best(result, ac=unsolved)))
+    assert "LOOK: in an AC power flow 5 of 56 periods have no solution" in words
+    assert "keep within limits" not in words
+    words = " ".join(wording.uncertainties(with_best(result, ac=None)))
+    assert "not checked by an AC power flow" in words
+    words = " ".join(wording.uncertainties(result))
+    assert "losses of normal service 2.5 % of load, loss allowance 2.0 %" in words
+
+
 def test_clear_saving(result: StudyResult) -> None:
     text = wording.headline(
         with_best(result, difference=-1234.4, difference_interval=(-2000.0, -500.0))

@@ -16,7 +16,7 @@ from xlplan.compare.study_result import StudyResult
 from xlplan.report.json_twin import json_document
 from xlplan.report.writer import write_results
 
-from .made_up import made_up_result
+from .made_up import made_up_ac, made_up_result
 
 SHEETS = [
     "Summary",
@@ -24,6 +24,7 @@ SHEETS = [
     "Plan",
     "Reliability",
     "Operation",
+    "Voltages",
     "Convergence",
     "Checks",
     "Assumptions",
@@ -262,23 +263,110 @@ def test_charts_say_what_they_show(workbook_path: Path) -> None:
         charts = [n for n in package.namelist() if n.startswith("xl/charts/chart")]
         texts = [package.read(name).decode() for name in charts]
     tags = re.findall(r"<xdr:cNvPr [^>]*>", frames)
-    assert len(tags) == len(charts) == 10
+    assert len(tags) == len(charts) == 11
     assert all(re.search(r'descr="[^"]{30,}"', tag) for tag in tags)
     for text in texts:
         titles = re.findall(r"<a:t>(.*?)</a:t>", text)
         assert len(titles) >= 2, titles
-        assert any(re.search(r"\((crowns/year|h/year|kWh/year|kW|%|s)\)", t) for t in titles), (
-            titles
-        )
+        assert any(
+            re.search(r"\((crowns/year|h/year|kWh/year|kW|%|s|p.u.)\)", t) for t in titles
+        ), titles
         assert text.count("<c:valAx>") <= 2
     assert sum('<c:crosses val="max"/>' in text for text in texts) == 0
+
+
+def test_voltages_sheet(workbook_path: Path, result: StudyResult) -> None:
+    _, values = read(workbook_path)
+    sheet = values["Voltages"]
+    rows = list(sheet.iter_rows(values_only=True))
+    starts = {row[:3]: i for i, row in enumerate(rows) if row[0] == "Alternative"}
+    # Buses outside Range A and buses of all alternatives begin alike; the latter come last.
+    assert len(starts) == 4
+
+    def block(*heading: str) -> list[dict[str, Any]]:
+        start = starts[("Alternative", *heading)]
+        found = []
+        for row in rows[start + 1 :]:
+            if row[0] not in {plan.name for plan in result.plans}:
+                break
+            found.append(dict(zip(rows[start], row, strict=True)))
+        return found
+
+    verdicts = block("AC power flow", "What was found")
+    assert {row["Alternative"]: row["AC power flow"] for row in verdicts} == {
+        plan.name: "PASS" for plan in result.plans
+    }
+    losses = {(row["Alternative"], row["Stretch"]): row for row in block("Operation", "Stretch")}
+    # 300 ordinary days and 60 peak days: 300 * 700 + 60 * 1200 of 300 * 30,000 + 60 * 40,000.
+    year = losses["Least-cost plan", "A year, as if nothing failed"]
+    assert year["AC losses (kWh)"] == pytest.approx(282_000.0)
+    assert year["AC losses (share of load)"] == pytest.approx(282_000.0 / 11_400_000.0)
+    assert year["Cost beyond the allowance (crowns)"] == pytest.approx(300 * 9.0 + 60 * 36.0)
+    assert year["Losses against the allowance"] == "0.47 % of load not covered"
+    head = next(h for h in starts if h[2] == "Bus" and "Lowest, linear (p.u.)" in rows[starts[h]])
+    by_bus = [
+        dict(zip(rows[starts[head]], row, strict=True))
+        for row in rows[starts[head] + 1 :]
+        if row[2] in ("=1+1 bus", "B04")
+    ]
+    first = next(row for row in by_bus if row["Bus"] == "=1+1 bus")
+    assert first["Alternative"] == "Least-cost plan"
+    assert first["Lowest, AC (p.u.)"] == pytest.approx(0.981)
+    assert first["AC less linear (p.u.)"] == pytest.approx(-0.002)
+    assert first["Within the limits"] == "PASS"
+    assert first["ANSI C84.1 Range A"] == "inside"
+    dead = next(r for r in by_bus if r["Bus"] == "B04" and r["Operation"] == "outage events")
+    assert dead["Lowest, AC (p.u.)"] in ("", None)
+    assert dead["When lowest"] == "without supply throughout"
+
+
+def test_a_plan_that_breaks_limits_is_not_called_fine(tmp_path: Path) -> None:
+    """Summary, Voltages and the twin say it; every bus outside Range A is named."""
+    full = made_up_result()
+    check = made_up_ac(0.93)
+    plans = tuple(
+        dataclasses.replace(plan, ac=check) if plan.name == "Least-cost plan" else plan
+        for plan in full.plans
+    )
+    result = dataclasses.replace(full, plans=plans)
+    _, values = read(write_results(result, tmp_path / "o.xlsx", False, tmp_path / "s.xlsx"))
+    shown = " ".join(str(c.value) for row in values["Summary"] for c in row if c.value)
+    assert "LOOK: in an AC power flow 4 buses leave the voltage limits" in shown
+    assert "a margin of 0.0030 p.u. would have covered it" in shown
+    rows = list(values["Voltages"].iter_rows(values_only=True))
+    assert any(row[:3] == ("Least-cost plan", "LOOK", "voltages in normal service") for row in rows)
+    start = next(i for i, row in enumerate(rows) if row[5] == "Range A (p.u.)")
+    listed = set()
+    for row in rows[start + 1 :]:
+        if row[0] != "Least-cost plan":
+            break
+        listed.add((row[1], row[2]))
+    expected = {
+        ("outage events" if b.is_event else "normal service", b.bus)
+        for b in check.buses
+        if b.low_ac_pu < 0.95
+    }
+    assert listed == expected
+    assert len(listed) == 8
+    marked = {row[2] for row in rows if row[13] == "inside; outside above 600 V"}
+    assert marked == {b.bus for b in check.buses if 0.95 <= b.low_ac_pu < 0.975}
+    twin = [row for row in json_document(result)["voltages"] if not row["within_limits"]]
+    assert {row["alternative"] for row in twin} == {"Least-cost plan"}
+    assert len(twin) == 4
 
 
 def test_bare_study_can_be_written(tmp_path: Path) -> None:
     """No assets, traces, history, classes, findings: sheets stay whole, nothing is invented."""
     full = made_up_result()
     bare = dataclasses.replace(
-        full.plans[0], purchases=(), traces=(), classes=(), causes=(), convergence=(), checks=()
+        full.plans[0],
+        purchases=(),
+        traces=(),
+        classes=(),
+        causes=(),
+        convergence=(),
+        checks=(),
+        ac=None,
     )
     best = dataclasses.replace(bare, name="Least-cost plan")
     result = dataclasses.replace(
@@ -287,6 +375,7 @@ def test_bare_study_can_be_written(tmp_path: Path) -> None:
     _, values = read(write_results(result, tmp_path / "o.xlsx", False, tmp_path / "s.xlsx"))
     assert values.sheetnames == SHEETS
     assert values["Operation"]["A4"].value == "The run kept no trace of operation."
+    assert values["Voltages"]["A4"].value == "LOOK: no plan was checked by an AC power flow."
 
 
 def test_recommended_may_be_the_existing_feeder(tmp_path: Path) -> None:

@@ -24,6 +24,7 @@ class Case:
     has_fuses: bool
     has_disconnects: bool
     has_back_feed: bool
+    has_lateral_switches: bool = False
 
 
 CASES = (
@@ -32,6 +33,9 @@ CASES = (
     Case(3, "3 fused laterals + disconnects in main (0.5 h)", True, True, False),
     Case(5, "5 as 3 + unrestricted back-feed (0.5 h)", True, True, True),
 )
+
+SWITCHED = Case(0, "as 3 but switches in place of the fuses", False, True, False, True)
+"""One tenth of case 4: what happens where a fuse does not clear."""
 
 HOURS_OF_ALL_WINDOWS = 8760
 """The windows of a year cover every hour of it."""
@@ -90,6 +94,7 @@ def study_tables(case: Case, window_h: int = 24) -> dict[str, Rows]:
     for row in laterals:
         point = row["load_point_fed"]
         device = "fuse" if case.has_fuses else "none"
+        device = "switch" if case.has_lateral_switches else device
         lines.append(_line(f"Lateral {row['section']}", tap_of[point], point, row, device))
     supplies: Rows = []
     if case.has_back_feed:

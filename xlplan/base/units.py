@@ -44,6 +44,11 @@ def v_sq_drop_per_kw(ohm: float, base_kv: float) -> float:
     return 2.0 * ohm / (1000.0 * base_kv * base_kv)
 
 
+def power_base_kva(base_kv: float) -> float:
+    """Power on which ohm are per unit: ``1000 kV^2`` kVA (kV line to line)."""
+    return 1000.0 * base_kv * base_kv
+
+
 def kva_from_ampere(ampere: float, base_kv: float) -> float:
     """Three-phase apparent power of a current at a line-to-line voltage: sqrt(3) kV A."""
     return math.sqrt(3.0) * base_kv * ampere

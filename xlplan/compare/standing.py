@@ -10,7 +10,7 @@ from __future__ import annotations
 import logging
 import math
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -18,10 +18,12 @@ from numpy.typing import NDArray
 
 from xlplan.base.errors import NoPlanError
 from xlplan.base.names import EXISTING, IGNORING_OUTAGES, LEAST_COST
+from xlplan.evaluate.ac_check import check_ac, check_lines
 from xlplan.evaluate.follow_plan import Follower, FollowResult
 from xlplan.evaluate.follow_tree import follow_tree
 from xlplan.evaluate.meters import attach_meters
 from xlplan.evaluate.operation import (
+    Operated,
     audit_operation,
     plan_traces,
     tree_operation,
@@ -227,6 +229,7 @@ class StandingAlternatives:
         facts = replace(facts, bought=bought)
         seed = self.options.seed
         result = build_plan_result(study, self.windows, follow, facts, traces, audit, seed)
+        result = self._with_ac(result, bought, dispatches)
         return SolvedPlan(self._with_status(result), follow, np.zeros(0))
 
     def _by_decomposition(
@@ -386,7 +389,15 @@ class StandingAlternatives:
         result = build_plan_result(
             self.study, self.windows, follow, facts, traces, audit, self.options.seed
         )
+        result = self._with_ac(result, bought, dispatches)
         return SolvedPlan(self._with_status(result), follow, found.x)
+
+    def _with_ac(
+        self, result: PlanResult, bought: Purchases, operated: Sequence[Operated]
+    ) -> PlanResult:
+        """The plan with its operation checked by nonlinear power flow."""
+        check = check_ac(self.study, self.feeder, self.windows, bought, operated)
+        return replace(result, ac=check, checks=(*result.checks, *check_lines(check)))
 
     def _follower(self, graph: StudyGraph, engine: Engine) -> Follower:
         def guide(i_window: int, member: int, state: FloatArray) -> float:

@@ -7,8 +7,9 @@ interruptions (sustained and momentary, in shares of its customers), interrupted
 interruption cost.
 
 Shares follow IEEE 1366 where they are 0 or 1: an event counts the largest share of the load shed,
-interruptions of up to five minutes count apart as momentary. Isolation counts with its true
-minutes for the loads that it alone interrupts. Shedding in normal service is in no index.
+interruptions of up to five minutes count apart as momentary, their minutes in no index. Isolation
+counts with its true minutes for the loads that it alone interrupts. Shedding in normal service is
+in no index.
 """
 
 from __future__ import annotations
@@ -270,7 +271,8 @@ def count_interruptions(
 
     Returns
     -------
-    sustained, momentary, hours : arrays, shape (n_load,)
+    sustained, momentary, hours : arrays, shape (n_load,); hours are those of sustained
+        interruptions, as SAIDI counts them (IEEE Std 1366)
     """
     largest = share.max(axis=0)
     hours = share.sum(axis=0) * period_h
@@ -286,6 +288,7 @@ def count_interruptions(
         hours = hours - restored * (n_isolation * period_h - switching_h)
         again = later.max(axis=0) if len(later) else np.zeros(n_load)
         short = np.maximum(isolated - again, 0.0) * (switching_h <= MOMENTARY_H)
+        hours = hours - short * switching_h
     lasting = (share > 0.0).sum(axis=0) * period_h <= MOMENTARY_H
     momentary = np.where(lasting, largest, short)
-    return largest - momentary, momentary, hours
+    return largest - momentary, momentary, np.where(lasting, 0.0, hours)

@@ -11,6 +11,8 @@ from dataclasses import dataclass, fields
 import numpy as np
 from numpy.typing import NDArray
 
+from xlplan.evaluate.ac_results import AcCheck
+
 FloatArray = NDArray[np.float64]
 
 
@@ -260,3 +262,5 @@ class PlanResult:
     difference: float = 0.0
     difference_interval: tuple[float, float] = (0.0, 0.0)
     """Yearly cost less that of the existing feeder, paired."""
+    ac: AcCheck | None = None
+    """Operation checked by nonlinear power flow."""

@@ -64,7 +64,7 @@ def trace_of(
     return Trace(
         title=title,
         description=description,
-        times=tuple(_label(study.profiles.times[window.start_row + int(r)]) for r in rows),
+        times=tuple(time_label(study.profiles.times[window.start_row + int(r)]) for r in rows),
         hours=np.arange(n_period) * series.period_h,
         load_kw=load,
         served_kw=load - unserved,
@@ -76,7 +76,7 @@ def trace_of(
     )
 
 
-def _label(time: object) -> str:
+def time_label(time: object) -> str:
     """How a profile's time is shown."""
     if isinstance(time, datetime.datetime):
         return time.strftime("%d %b %H:%M")

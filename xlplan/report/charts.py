@@ -202,6 +202,38 @@ def lines_over_numbers(
     return _finish(chart, title)
 
 
+def lines_over_names(
+    book: SafeBook,
+    title: str,
+    categories: CellRange,
+    series: Sequence[Series],
+    category_title: str,
+    axis_title: str,
+    n_point: int,
+    y_range: tuple[float, float],
+) -> Chart:
+    """Lines over names in a given order; ``y_range`` because the axis does not begin at 0."""
+    chart = book.new_chart("line")
+    for one in series:
+        chart.add_series(_line_options(one, categories))
+    step = max(1, -(-n_point // (3 * MAX_TICK_LABELS)))
+    chart.set_x_axis(
+        {
+            "name": category_title,
+            "name_font": _font(9),
+            "num_font": {**_font(8), "rotation": -45},
+            "interval_unit": step,
+            "interval_tick": step,
+            "label_position": "low",
+            "line": {"color": GREY},
+            "text_axis": True,
+        }
+    )
+    low, high = y_range
+    chart.set_y_axis({**_value_axis(axis_title, "0.00"), "min": low, "max": high})
+    return _finish(chart, title)
+
+
 def _line_options(one: Series, categories: CellRange) -> dict[str, Any]:
     line = {"color": one.colour, "width": one.width_pt, "dash_type": one.dash}
     return {

@@ -47,7 +47,7 @@ def json_document(result: StudyResult) -> dict[str, Any]:
         "repair_time": [],
         "budget": [],
         "sensitivities": [],
-        "voltages": [],
+        "voltages": [row for plan in result.plans for row in _voltages(plan)],
         "value_of_outage_planning": _number(result.value_of_outage_planning),
         "scenarios": int(result.scenarios),
         "findings": [
@@ -87,6 +87,30 @@ def _number(value: float | None) -> float | None:
 
 def _pair(interval: tuple[float, float]) -> list[float | None]:
     return [_number(interval[0]), _number(interval[1])]
+
+
+def _voltages(plan: PlanResult) -> list[dict[str, Any]]:
+    """One row per bus and kind of operation; null where a voltage is not known."""
+    return [
+        {
+            "alternative": plan.name,
+            "bus": bus.bus,
+            "operation": "outage events" if bus.is_event else "normal service",
+            "lowest_linear_pu": _number(bus.low_linear_pu),
+            "lowest_ac_pu": _number(bus.low_ac_pu),
+            "lowest_when": bus.low_when,
+            "highest_linear_pu": _number(bus.high_linear_pu),
+            "highest_ac_pu": _number(bus.high_ac_pu),
+            "highest_when": bus.high_when,
+            "lowest_limit_pu": _number(bus.low_limit_pu),
+            "highest_limit_pu": _number(bus.high_limit_pu),
+            "within_limits": not bus.breaks_limits,
+            "outside_range_a": bus.is_outside_range_a,
+            "periods": bus.n_period,
+            "periods_not_converged": bus.n_not_converged,
+        }
+        for bus in (plan.ac.buses if plan.ac is not None else ())
+    ]
 
 
 def _alternative(plan: PlanResult) -> dict[str, Any]:

@@ -12,6 +12,7 @@ ALTERNATIVES = "Alternatives"
 PLAN = "Plan"
 RELIABILITY = "Reliability"
 OPERATION = "Operation"
+VOLTAGES = "Voltages"
 CONVERGENCE = "Convergence"
 CHECKS = "Checks"
 ASSUMPTIONS = "Assumptions"
@@ -23,6 +24,7 @@ SHEET_ORDER = (
     PLAN,
     RELIABILITY,
     OPERATION,
+    VOLTAGES,
     CONVERGENCE,
     CHECKS,
     ASSUMPTIONS,
@@ -183,6 +185,86 @@ TRACE_HEAD = (
     Column("load", "Load (kW)", "power"),
     Column("served", "Served (kW)", "power"),
     Column("unserved", "Unserved (kW)", "power"),
+)
+
+AC_PLANS = (
+    Column("name", "Alternative", "wrap"),
+    Column("verdict", "AC power flow", "status"),
+    Column("about", "What was found", "wrap"),
+    Column("periods", "Periods solved or tried", "whole"),
+    Column("unsolved", "Periods without AC solution", "whole"),
+    Column("broken", "Buses beyond the limits, normal service", "whole"),
+    Column("lowest", "Lowest AC voltage in normal service", "wrap"),
+    Column("broken_event", "Buses beyond the limits, outage events", "whole"),
+    Column("loaded", "Assets beyond their rating", "whole"),
+    Column("outside", "Buses outside Range A, normal service", "whole"),
+    Column("margin_low", "Margin that would have covered it: lowest voltage (p.u.)", "small"),
+    Column("margin_high", "The same: highest voltage (p.u.)", "small"),
+    Column("margin_low_event", "The same, events: lowest (p.u.)", "small"),
+    Column("margin_high_event", "The same, events: highest (p.u.)", "small"),
+    Column("allowance", "Loss allowance that would have covered it", "percent"),
+)
+
+AC_LOSSES = (
+    Column("name", "Alternative", "wrap"),
+    Column("operation", "Operation", "wrap"),
+    Column("title", "Stretch", "wrap"),
+    Column("periods", "Periods", "whole"),
+    Column("unsolved", "Without AC solution", "whole"),
+    Column("occurrences", "Occurrences (per year)", "hours"),
+    Column("share_note", "Losses against the allowance", "wrap"),
+    Column("served", "Load served (kWh)", "energy"),
+    Column("loss", "AC losses (kWh)", "energy"),
+    Column("note", "Note", "wrap"),
+    Column("allowance", "Loss allowance (kWh)", "energy"),
+    Column("share", "AC losses (share of load)", "percent"),
+    Column("allowed", "Loss allowance (share of load)", "percent"),
+    Column("highest", "Highest losses of any period (share)", "percent"),
+    Column("cost", "Cost beyond the allowance ({money})", "price"),
+)
+
+AC_OUTSIDE = (
+    Column("name", "Alternative", "wrap"),
+    Column("operation", "Operation", "wrap"),
+    Column("bus", "Bus", "wrap"),
+    Column("low", "Lowest AC voltage (p.u.)", "small"),
+    Column("below", "Below Range A by (p.u.)", "small"),
+    Column("range", "Range A (p.u.)", "text"),
+    Column("low_when", "When lowest", "wrap"),
+    Column("high", "Highest AC voltage (p.u.)", "small"),
+    Column("above", "Above Range A by (p.u.)", "small"),
+    Column("high_when", "When highest", "wrap"),
+)
+
+AC_VOLTAGES = (
+    Column("name", "Alternative", "wrap"),
+    Column("operation", "Operation", "wrap"),
+    Column("bus", "Bus", "wrap"),
+    Column("low_linear", "Lowest, linear (p.u.)", "small"),
+    Column("low_ac", "Lowest, AC (p.u.)", "small"),
+    Column("error", "AC less linear (p.u.)", "small"),
+    Column("low_when", "When lowest", "wrap"),
+    Column("high_linear", "Highest, linear (p.u.)", "small"),
+    Column("high_ac", "Highest, AC (p.u.)", "small"),
+    Column("high_when", "When highest", "wrap"),
+    Column("low_limit", "Study's lowest limit (p.u.)", "small"),
+    Column("high_limit", "Study's highest limit (p.u.)", "small"),
+    Column("verdict", "Within the limits", "status"),
+    Column("range_a", "ANSI C84.1 Range A", "wrap"),
+    Column("unsolved", "Periods without AC solution", "whole"),
+)
+
+AC_LOADINGS = (
+    Column("name", "Alternative", "wrap"),
+    Column("operation", "Operation", "wrap"),
+    Column("asset", "Asset", "wrap"),
+    Column("rating", "Rating", "energy"),
+    Column("unit", "Unit", "text"),
+    Column("kind", "Kind", "wrap"),
+    Column("when", "When", "wrap"),
+    Column("linear", "Linear (share of rating)", "percent"),
+    Column("ac", "AC (share of rating)", "percent"),
+    Column("verdict", "Within the rating", "status"),
 )
 
 PASSES = (

@@ -136,8 +136,59 @@ def uncertainties(result: StudyResult) -> list[str]:
         f"Years differ: mean {money_words(best.risk.mean, currency)}; one year in twenty costs "
         f"more than {money_words(best.risk.p95, currency)} ({best.risk.n_year:,} simulated years)."
     )
+    said += _ac_words(result, best)
     said += _warnings(result, best)
     return said
+
+
+def _ac_words(result: StudyResult, best: PlanResult) -> list[str]:
+    """What the AC power flow says of the plan, and which other alternatives break limits."""
+    said = [_ac_verdict(best)]
+    others = [
+        plan.name
+        for plan in result.plans
+        if plan.name != best.name and plan.ac is not None and not plan.ac.holds
+    ]
+    if others:
+        said.append(f"Beyond limits in the AC power flow, or not solved: {'; '.join(others)}.")
+    return said
+
+
+def _ac_verdict(best: PlanResult) -> str:
+    """One sentence; a plan that breaks limits, or has no solution, is never called fine."""
+    check = best.ac
+    if check is None:
+        return "LOOK: voltages and loadings were not checked by an AC power flow."
+    if check.holds:
+        loss, allowance, served, _ = check.losses_per_year()
+        words = "Voltages and loadings keep within limits in an AC power flow"
+        if served > 0.0:
+            words += (
+                f"; losses of normal service {pct_from_frac(loss / served):.1f} % of load, loss "
+                f"allowance {pct_from_frac(allowance / served):.1f} %"
+            )
+        return f"{words} (Voltages sheet)."
+    broken, advice = [], check.advice
+    if check.n_not_converged:
+        broken.append(f"{check.n_not_converged:,} of {check.n_period:,} periods have no solution")
+    buses = {bus.bus for is_event in (False, True) for bus in check.broken_buses(is_event)}
+    if buses:
+        margin = max(
+            advice.low_normal_pu,
+            advice.high_normal_pu,
+            advice.low_event_pu,
+            advice.high_event_pu,
+        )
+        broken.append(
+            f"{len(buses)} buses leave the voltage limits (a margin of {margin:.4f} p.u. would "
+            "have covered it)"
+        )
+    if loaded := check.broken_loadings():
+        broken.append(
+            f"{len(loaded)} assets pass their rating (a loss allowance of "
+            f"{pct_from_frac(advice.allowance_frac):.1f} % would have covered it)"
+        )
+    return f"LOOK: in an AC power flow {'; '.join(broken)}: see the Voltages sheet."
 
 
 def _rivals(result: StudyResult, best: PlanResult) -> list[str]:

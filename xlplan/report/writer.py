@@ -1,7 +1,7 @@
 """The results workbook: sheets in their order, written whole or not at all.
 
-    Summary - Alternatives - Plan - Reliability - Operation - Convergence - Checks - Assumptions
-    - Cautions
+    Summary - Alternatives - Plan - Reliability - Operation - Voltages - Convergence - Checks
+    - Assumptions - Cautions
 
 Sheets are filled in the order in which they need each other's addresses: Plan first, Summary last.
 """
@@ -28,6 +28,7 @@ from xlplan.report.sheets import (
     plan,
     reliability,
     summary,
+    voltages,
 )
 from xlplan.report.tables import SHEET_ORDER
 from xlplan.report.target import check_folder, check_not_study, put_in_place, temporary_beside
@@ -97,6 +98,7 @@ def _fill(book: SafeBook, result: StudyResult) -> None:
     alternatives_cells = alternatives.write(book, result, plan_cells)
     reliability_cells = reliability.write(book, result)
     operation.write(book, result)
+    voltages.write(book, result)
     convergence.write(book, result)
     checks_cells = checks.write(book, result, alternatives_cells, reliability_cells)
     assumptions.write(book, result)
