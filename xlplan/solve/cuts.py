@@ -95,6 +95,8 @@ class CutPool:
         self._level_capacity: FloatArray | None = None
         self._level = np.zeros(64)
         self._n_level = 0
+        none = np.zeros(0, dtype=np.int64)
+        self._sorted, self._sorted_n = (none, none, none), 0
 
     @property
     def n_member(self) -> int:
@@ -187,6 +189,17 @@ class CutPool:
             self._level[part] = self._intercept[part] + self._capacity_slope[part] @ capacity
             self._n_level = self.n
         return self._level[: self.n]
+
+    def by_member(self) -> tuple[IntArray, IntArray, IntArray]:
+        """(order, start, members): cuts sorted by member, where each member's begin, who has any.
+
+        The oldest cut of a member comes first.
+        """
+        if self._sorted_n != self.n:
+            order = np.argsort(self.member, kind="stable")
+            members, start = np.unique(self.member[order], return_index=True)
+            self._sorted, self._sorted_n = (order, start, members), self.n
+        return self._sorted
 
     def value(self, member: int, state: FloatArray, capacity: FloatArray) -> float:
         """Highest cut of one member at one point, minus infinity where it has none."""

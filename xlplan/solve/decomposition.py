@@ -279,11 +279,14 @@ class Engine:
         run.is_enumerating = enumerate_paths
         if self._saved is not None and self._saved.is_integer_phase:
             run.is_integer_phase = True
+            self._saved = None  # its phase is that of the run that was stopped
         try:
             reason = run.go()
         except KeyboardInterrupt:
             run.clock.is_interrupted = True
             reason = StopReason.INTERRUPTED
+        if reason is not StopReason.GAP_REACHED:
+            run.save()
         return run.result(reason)
 
     # -- parts used by the run -----------------------------------------------------------------
@@ -375,7 +378,8 @@ class _Run:
             if not is_partial and found.estimate is not None:
                 self._measured(points, found, self.clock.seconds() - begin)
             self._record(found)
-            self._save()
+            if self.engine._savepoint is not None and self.engine._savepoint.is_due():
+                self.save()
             if self._is_reached():
                 return StopReason.GAP_REACHED
             if self.clock.should_stop():
@@ -395,12 +399,13 @@ class _Run:
         self._finish_with_integers()
         return StopReason.PASS_LIMIT
 
-    def _save(self) -> None:
-        """Keeps what is learnt where that is asked for and due."""
-        savepoint = self.engine._savepoint
-        if savepoint is not None and savepoint.is_due():
+    def save(self) -> None:
+        """Keeps what is learnt, where that is asked for."""
+        if self.engine._savepoint is not None:
             x = self.best.first.x if self.best is not None else None
-            savepoint.save(self.engine.pools, self.engine._n_group, self.is_integer_phase, x)
+            self.engine._savepoint.save(
+                self.engine.pools, self.engine._n_group, self.is_integer_phase, x
+            )
 
     def _agree(self, is_first: bool) -> list[RootPoint]:
         """First stage and roots in turn until they agree."""

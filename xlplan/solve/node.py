@@ -513,23 +513,20 @@ class NodeModel:
             if not pool.n or not active.any():
                 continue
             n_target = int(places.max()) + 1
-            wanted = np.zeros(n_target, dtype=bool)
-            wanted[places[active]] = True
             target_state = np.zeros((n_target, self.n_state))
             target_state[places] = states[exits]
-            target = to_target[pool.member]
-            here = np.flatnonzero((target >= 0) & wanted[target])
-            if not len(here):
-                continue
-            target = target[here]
-            value = pool.level(capacity)[here] + np.einsum(
-                "ij,ij->i", pool.state_slope[here], target_state[target]
-            )
+            order, start, members = pool.by_member()
+            target = to_target[members]
+            counts = np.diff(start, append=len(order))
+            at = np.repeat(target_state[np.maximum(target, 0)], counts, axis=0)
+            value = pool.level(capacity)[order] + np.einsum("ij,ij->i", pool.state_slope[order], at)
+            highest = np.maximum.reduceat(value, start)
+            is_top = np.flatnonzero(value == np.repeat(highest, counts))
+            first = order[is_top[np.searchsorted(is_top, start)]]  # the oldest at ties
             top = np.full(n_target, -np.inf)
-            np.maximum.at(top, target, value)
-            is_top = np.flatnonzero(value == top[target])
             position = np.full(n_target, -1, dtype=np.int64)
-            position[target[is_top][::-1]] = here[is_top][::-1]  # the oldest at ties
+            here = target >= 0
+            top[target[here]], position[target[here]] = highest[here], first[here]
             for e, place in zip(exits[active], places[active], strict=True):
                 if position[place] < 0 or top[place] <= theta[e] + allowed[e]:
                     continue

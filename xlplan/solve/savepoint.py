@@ -29,7 +29,7 @@ _LOG = logging.getLogger(__name__)
 FORMULATION = "1"
 """Raised whenever cuts of an earlier version would no longer hold."""
 
-LEAST_INTERVAL_S = 10.0
+LEAST_INTERVAL_S = 2.0
 """Seconds between two saves, at least."""
 
 SAVING_SHARE = 0.02
