@@ -291,7 +291,9 @@ def _interpolated(
     Parameters
     ----------
     points : array, shape (n_point, n_child, n), in unit terms
-    corner : array, shape (n_child, 2 ** n); centre (n_child, n); at_centre (n_child,)
+    corner : array, shape (n_child, 2 ** n)
+    centre : array, shape (n_child, n), in unit terms
+    at_centre : array, shape (n_child,)
 
     Returns
     -------
