@@ -17,7 +17,7 @@ weight of the exit; then the value at the exit needs no upper bound.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -79,6 +79,21 @@ class CutBatch:
         return self.intercept + state_part + self.capacity_slope @ capacity
 
 
+@dataclass(frozen=True)
+class SortedCuts:
+    """Cuts of a family sorted by member, the oldest of a member first.
+
+    order (n,) positions in the pool; start, members : where each member's cuts begin, of those that
+    have any; state_slope (n, n_state), level (n,) value without the state's part, both in order
+    """
+
+    order: IntArray
+    start: IntArray
+    members: IntArray
+    state_slope: FloatArray
+    level: FloatArray
+
+
 class CutPool:
     """Every cut of one family, never deleted, in the order in which they came."""
 
@@ -95,8 +110,8 @@ class CutPool:
         self._level_capacity: FloatArray | None = None
         self._level = np.zeros(64)
         self._n_level = 0
-        none = np.zeros(0, dtype=np.int64)
-        self._sorted, self._sorted_n = (none, none, none), 0
+        self._sorted: SortedCuts | None = None
+        self._sorted_capacity: FloatArray | None = None
 
     @property
     def n_member(self) -> int:
@@ -190,16 +205,22 @@ class CutPool:
             self._n_level = self.n
         return self._level[: self.n]
 
-    def by_member(self) -> tuple[IntArray, IntArray, IntArray]:
-        """(order, start, members): cuts sorted by member, where each member's begin, who has any.
-
-        The oldest cut of a member comes first.
-        """
-        if self._sorted_n != self.n:
+    def by_member(self, capacity: FloatArray) -> SortedCuts:
+        """Cuts sorted by member at some capacities; kept between calls."""
+        known = self._sorted
+        if known is None or len(known.order) != self.n:
             order = np.argsort(self.member, kind="stable")
             members, start = np.unique(self.member[order], return_index=True)
-            self._sorted, self._sorted_n = (order, start, members), self.n
-        return self._sorted
+            known = SortedCuts(order, start, members, self.state_slope[order], np.zeros(0))
+            self._sorted_capacity = None
+        is_known = self._sorted_capacity is not None and np.array_equal(
+            self._sorted_capacity, capacity
+        )
+        if not is_known:
+            known = replace(known, level=self.level(capacity)[known.order])
+            self._sorted_capacity = capacity.copy()
+        self._sorted = known
+        return known
 
     def value(self, member: int, state: FloatArray, capacity: FloatArray) -> float:
         """Highest cut of one member at one point, minus infinity where it has none."""

@@ -515,14 +515,27 @@ class NodeModel:
             n_target = int(places.max()) + 1
             target_state = np.zeros((n_target, self.n_state))
             target_state[places] = states[exits]
-            order, start, members = pool.by_member()
-            target = to_target[members]
-            counts = np.diff(start, append=len(order))
+            cuts = pool.by_member(capacity)
+            target = to_target[cuts.members]
+            wanted = np.zeros(n_target + 1, dtype=bool)
+            wanted[places[active]] = True
+            used = np.flatnonzero(wanted[target])
+            if not len(used):
+                continue
+            # What is wanted lies together: a plan from some period on needs the later ones.
+            begin = int(cuts.start[used[0]])
+            end = (
+                int(cuts.start[used[-1] + 1]) if used[-1] + 1 < len(cuts.start) else len(cuts.order)
+            )
+            start = cuts.start[used[0] : used[-1] + 1] - begin
+            target = target[used[0] : used[-1] + 1]
+            counts = np.diff(start, append=end - begin)
             at = np.repeat(target_state[np.maximum(target, 0)], counts, axis=0)
-            value = pool.level(capacity)[order] + np.einsum("ij,ij->i", pool.state_slope[order], at)
+            value = cuts.level[begin:end] + np.einsum("ij,ij->i", cuts.state_slope[begin:end], at)
             highest = np.maximum.reduceat(value, start)
             is_top = np.flatnonzero(value == np.repeat(highest, counts))
-            first = order[is_top[np.searchsorted(is_top, start)]]  # the oldest at ties
+            # The oldest at ties.
+            first = cuts.order[begin + is_top[np.searchsorted(is_top, start)]]
             top = np.full(n_target, -np.inf)
             position = np.full(n_target, -1, dtype=np.int64)
             here = target >= 0
