@@ -25,7 +25,7 @@ from xlplan.evaluate.results import (
 from xlplan.evaluate.risk import simulate_years
 from xlplan.model.dispatch import Purchases
 from xlplan.outages.window_model import WindowModel
-from xlplan.study.study import Study
+from xlplan.study.study import DeviceChange, Study
 
 FloatArray = NDArray[np.float64]
 
@@ -57,6 +57,8 @@ class PlanFacts:
     numerical_events: int = 0
     tree_cost: float | None = None
     """Optimum of the whole tree, where that is the method."""
+    device_changes: tuple[DeviceChange, ...] = ()
+    """Other devices of this alternative, which cost money."""
 
 
 def build_plan_result(
@@ -87,7 +89,7 @@ def build_plan_result(
     slots = follow.slots
     per_window = np.array([window.metrics for window in follow.windows])
     yearly = follow.occurrences @ per_window
-    purchases = price_purchases(study, facts.bought)
+    purchases = price_purchases(study, facts.bought, facts.device_changes)
     parts = {name: float(yearly[slots.single(name)]) for name in COST_PARTS}
     costs = CostParts(
         investment=sum(p.investment for p in purchases),
