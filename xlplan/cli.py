@@ -26,7 +26,7 @@ from rich.status import Status
 import xlplan
 from xlplan.base.errors import Finding, Level, PathError, StudyError, XlplanError
 from xlplan.base.units import frac_from_pct, hours_from_minutes, pct_from_frac
-from xlplan.compare.standing import Progress
+from xlplan.compare.plan_solver import Progress
 from xlplan.compare.study_result import StudyResult
 from xlplan.pipeline import Overrides, check_target, read_study, solve_study, write_answer
 from xlplan.report.target import replace_whole

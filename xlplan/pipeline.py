@@ -12,7 +12,11 @@ from xlplan.base.codes import Code
 from xlplan.base.errors import Finding, Level, StudyError
 from xlplan.base.units import pct_from_frac
 from xlplan.compare.assemble import assemble
-from xlplan.compare.standing import Progress, SolveOptions, StandingAlternatives
+from xlplan.compare.own import solve_own
+from xlplan.compare.pack import PackMaker, price_studies_of
+from xlplan.compare.pack_result import Pack
+from xlplan.compare.plan_solver import Progress, SolveOptions
+from xlplan.compare.standing import StandingAlternatives, against
 from xlplan.compare.study_result import StudyResult
 from xlplan.network.feeder import Feeder, build_feeder
 from xlplan.network.topology import check_no_load_voltage, check_radial
@@ -136,24 +140,37 @@ def solve_study(
     if not checked.is_usable or checked.study is None or checked.feeder is None:
         raise StudyError("The study cannot be used as it is.", checked.findings)
     findings = list(checked.findings)
-    if checked.study.alternatives and not overrides.plan_only:
-        findings.append(_unsolved_alternatives(checked.study))
     read = time.monotonic()
     workers = overrides.workers or useful_workers(checked.windows, cores)
     options = solve_options(checked.study, overrides, workers)
+    prices = () if overrides.plan_only else price_studies_of(checked.study)
     solver = StandingAlternatives(
-        checked.study, checked.feeder, checked.windows, options, on_progress, should_stop
+        checked.study,
+        checked.feeder,
+        checked.windows,
+        options,
+        on_progress,
+        should_stop,
+        price_studies=prices,
     )
-    try:
+    pack = Pack()
+    with solver:
         plans = solver.solve()
-    finally:
-        solver.close()
+        if not overrides.plan_only:
+            existing, _, best = plans
+            own = solve_own(solver)
+            plans += tuple(against(plan, existing) for plan in own.plans)
+            maker = PackMaker(solver, existing, best, own.plans)
+            pack = maker.make()
+            findings += [*own.findings, *maker.findings]
     return assemble(
         checked.study,
         checked.raw,
+        checked.feeder,
         checked.windows,
         options,
         plans,
+        pack,
         findings,
         started_at,
         read - begin,
@@ -183,21 +200,6 @@ def _unused_risk_weight(study: Study) -> Finding:
         value=f"{pct_from_frac(study.settings.risk_weight_frac):g}",
         message="This version minimises the expected cost; the weight on risk has no effect.",
         hint="The results show the risk of each plan.",
-    )
-
-
-def _unsolved_alternatives(study: Study) -> Finding:
-    """Says what this version leaves out."""
-    first = study.alternatives[0].origin
-    return Finding(
-        level=Level.NOTE,
-        code=Code.NOT_USED,
-        sheet=first.sheet,
-        cell=first.cell("alternative"),
-        key="alternative",
-        value=study.alternatives[0].alternative,
-        message="Alternatives of your own, device changes and sensitivities are checked, but this "
-        "version solves the three standing alternatives only.",
     )
 
 

@@ -56,6 +56,7 @@ class Code(StrEnum):
     NOT_A_TIME = "not a time"  # a value that is no date, time or number
     NOT_A_YEAR = "not a year"  # windows that do not make up a year
     NOT_CONNECTED = "not connected"  # a bus that the source does not reach
+    NOT_SOLVED = "not solved"  # an alternative without a result
     NOT_USED = "not used"  # a value that has no effect
     NOT_WHOLE_PERIODS = "not whole periods"  # a window that ends within a period
     NOT_WHOLE = "not whole"  # a whole number is needed

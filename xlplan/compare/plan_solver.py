@@ -29,7 +29,7 @@ from xlplan.evaluate.operation import (
     with_peak_purchase,
 )
 from xlplan.evaluate.plan_result import PlanFacts, build_plan_result
-from xlplan.evaluate.purchases import read_purchases
+from xlplan.evaluate.purchases import net_capital, price_purchases, read_purchases
 from xlplan.evaluate.results import CheckLine, ConvergenceRow, PlanResult, Trace
 from xlplan.model.dispatch import Purchases
 from xlplan.model.purchase import Choices
@@ -61,6 +61,9 @@ for while that is cheap, and the interval of the reported cost needs some of the
 GIVEN_TARGET = 0.2
 """The same where the purchases are given (the existing feeder among them, against which every saving
 is counted): how much better they could still be run must be small beside the difference."""
+
+BRIEF_TARGET = 0.5
+"""The same for the points of curves and sensitivities, which are searched once and followed."""
 
 RESERVE = 0.25
 """Share of a time limit kept for following the plan."""
@@ -207,6 +210,31 @@ class PlanSolver:
         limit_s = self.options.time_limit_h * SECONDS_PER_HOUR
         return limit_s if wish.limit_s is None else min(limit_s, wish.limit_s)
 
+    def repriced(self, plan: SolvedPlan, price_list: int) -> SolvedPlan:
+        """A plan's figures at other prices: what is bought and how it runs stay as they are."""
+        study = self.choices.price_studies[price_list]
+        result = plan.result
+        purchases = price_purchases(study, plan.bought, self.device_changes)
+        investment = sum(p.investment for p in purchases)
+        fixed_om = sum(p.fixed_om for p in purchases)
+        costs = replace(result.costs, investment=investment, fixed_om=fixed_om)
+        added = costs.total - result.costs.total
+        low, high = result.cost_interval
+        return replace(
+            plan,
+            result=replace(
+                result,
+                costs=costs,
+                purchases=purchases,
+                capital_cost=net_capital(purchases),
+                capital_gross=sum(p.capital_gross for p in purchases),
+                cost_interval=(low + added, high + added),
+                lower_bound=None,
+                bound_upper=None,
+                gap_frac=None,
+            ),
+        )
+
     # -- one plan ------------------------------------------------------------------------------
 
     def _by_tree(self, wish: Wish) -> SolvedPlan:
@@ -265,7 +293,8 @@ class PlanSolver:
         limit_s = self._limit_s(wish)
         deadline = started + limit_s * (1.0 - RESERVE)
         target = self.options.gap_target_frac
-        inner = (INNER_TARGET if wish.fixed is None else GIVEN_TARGET) * target
+        share = BRIEF_TARGET if wish.is_brief else INNER_TARGET
+        inner = (share if wish.fixed is None else GIVEN_TARGET) * target
         samples = self.options.samples
         rows: list[ConvergenceRow] = []
         spent = 0.0

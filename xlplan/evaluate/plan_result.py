@@ -22,7 +22,7 @@ from xlplan.evaluate.results import (
     Trace,
     WindowResult,
 )
-from xlplan.evaluate.risk import simulate_years
+from xlplan.evaluate.risk import simulate_years, worst_events
 from xlplan.model.dispatch import Purchases
 from xlplan.outages.window_model import WindowModel
 from xlplan.study.study import DeviceChange, Study
@@ -138,6 +138,7 @@ def build_plan_result(
         convergence=facts.convergence,
         solve_seconds=facts.solve_seconds,
         numerical_events=facts.numerical_events,
+        worst_events=worst_events(study, windows, follow),
         demand_windows=tuple(w.series.window for w in windows if w.series.counts_for_demand),
     )
     checks = plan_checks(study, windows, follow, facts, costs, cost, purchases, interval)

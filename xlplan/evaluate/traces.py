@@ -30,6 +30,7 @@ def trace_of(
     title: str,
     description: str,
     closings: tuple[str, ...] = (),
+    scenario: str = "",
 ) -> Trace:
     """Series of one stretch.
 
@@ -39,7 +40,7 @@ def trace_of(
     first_period : int, window period of the dispatch's first
     dispatch : Dispatch
     storage_kwh : array, shape (n_storage,), in service
-    title, description, closings : words for the sheet
+    title, description, closings, scenario : words for the sheet
 
     Returns
     -------
@@ -64,7 +65,7 @@ def trace_of(
     return Trace(
         title=title,
         description=description,
-        times=tuple(_label(study.profiles.times[window.start_row + int(r)]) for r in rows),
+        times=tuple(time_words(study.profiles.times[window.start_row + int(r)]) for r in rows),
         hours=np.arange(n_period) * series.period_h,
         load_kw=load,
         served_kw=load - unserved,
@@ -73,10 +74,12 @@ def trace_of(
         energy_kwh={study.storage[i].storage: dispatch.energy_kwh[:, i] for i in has_store},
         energy_capacity_kwh={study.storage[i].storage: float(storage_kwh[i]) for i in has_store},
         closings=closings,
+        window=window.window,
+        scenario=scenario,
     )
 
 
-def _label(time: object) -> str:
+def time_words(time: object) -> str:
     """How a profile's time is shown."""
     if isinstance(time, datetime.datetime):
         return time.strftime("%d %b %H:%M")
