@@ -265,3 +265,85 @@ def _finish(chart: Chart, title: str, has_legend: bool = True) -> Chart:
         chart.set_legend({"position": "bottom", "font": _font(9)})
     chart.set_chartarea({"border": {"color": GRID_GREY}})
     return chart
+
+
+@dataclass(frozen=True)
+class Stroke:
+    """Lines of a drawing in one style; blank rows lift the pen. ``name``: a fixed word of ours."""
+
+    name: str
+    x_values: CellRange
+    y_values: CellRange
+    colour: str
+    dash: str
+    width_pt: float
+
+
+@dataclass(frozen=True)
+class Dots:
+    """Points of a drawing with one marker; ``labels``: a cell formula a point, "" for none."""
+
+    name: str
+    x_values: CellRange
+    y_values: CellRange
+    colour: str
+    marker: str
+    labels: tuple[str, ...] = ()
+
+
+MARKER_SIZES = {"circle": 9, "diamond": 12, "x": 11}
+
+
+def drawing(
+    book: SafeBook,
+    title: str,
+    strokes: Sequence[Stroke],
+    dots: Sequence[Dots],
+    x_range: tuple[float, float],
+    y_range: tuple[float, float],
+) -> Chart:
+    """A drawing in the plane without axes: lines first, points over them."""
+    chart = book.new_chart("scatter", "straight")
+    for one in strokes:
+        chart.add_series(
+            {
+                "name": one.name,
+                "categories": one.x_values,
+                "values": one.y_values,
+                "line": {"color": one.colour, "width": one.width_pt, "dash_type": one.dash},
+                "marker": {"type": "none"},
+            }
+        )
+    for dot in dots:
+        options: dict[str, Any] = {
+            "name": dot.name,
+            "categories": dot.x_values,
+            "values": dot.y_values,
+            "line": {"none": True},
+            "marker": {
+                "type": dot.marker,
+                "size": MARKER_SIZES.get(dot.marker, 9),
+                "fill": {"color": dot.colour},
+                "border": {"color": INK if dot.marker != "x" else dot.colour, "width": 1.0},
+            },
+        }
+        if dot.labels:
+            options["data_labels"] = {
+                "value": True,
+                "position": "above",
+                "font": _font(9),
+                "custom": [{"value": text} if text else {"delete": True} for text in dot.labels],
+            }
+        chart.add_series(options)
+    for axis, (low, high) in ((chart.set_x_axis, x_range), (chart.set_y_axis, y_range)):
+        axis({"visible": False, "min": low, "max": high, "major_gridlines": {"visible": False}})
+    chart.show_blanks_as("gap")
+    return _finish(chart, title)
+
+
+def wide_range(values: Sequence[float], margin: float = 0.12) -> tuple[float, float]:
+    """Axis range that holds all values with a margin; automatic axes cut lines at the edge."""
+    low, high = min(values), max(values)
+    room = (high - low) * margin or max(abs(high) * margin, 1.0)
+    bottom = low - room
+    return (0.0 if low >= 0.0 > bottom else bottom), high + room

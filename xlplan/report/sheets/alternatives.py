@@ -10,11 +10,13 @@ from dataclasses import dataclass
 
 from xlsxwriter.utility import xl_rowcol_to_cell
 
+from xlplan.base.units import minutes_from_hours
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import PlanResult
 from xlplan.report import money
 from xlplan.report.grid import HEADING_CHARS, LINE_POINTS, Cell, Formula, lines_needed, write_cell
 from xlplan.report.safe_book import SafeBook
+from xlplan.report.sheets.reliability import ReliabilityCells
 from xlplan.report.sheets.plan import DISCOUNT_RATE, PlanCells
 from xlplan.report.statement import STATEMENT
 from xlplan.report.tables import ALTERNATIVES
@@ -55,7 +57,9 @@ class AlternativesCells:
         return f"'{ALTERNATIVES}'!{cell}"
 
 
-def write(book: SafeBook, result: StudyResult, plan_cells: PlanCells) -> AlternativesCells:
+def write(
+    book: SafeBook, result: StudyResult, plan_cells: PlanCells, reliability: ReliabilityCells
+) -> AlternativesCells:
     """Writes the sheet; Summary and Checks refer to its cells."""
     sheet = book.sheet(ALTERNATIVES)
     sheet.head(
@@ -75,7 +79,11 @@ def write(book: SafeBook, result: StudyResult, plan_cells: PlanCells) -> Alterna
     lines_of_names = max(lines_needed(plan.name, room) for plan in result.plans)
     sheet.height(HEAD_ROW, LINE_POINTS * lines_of_names + 4)
     content = [
-        {**_cost_cells(plan, i, cells, plan_cells), **_worth_cells(result, plan, i, cells)}
+        {
+            **_cost_cells(plan, i, cells, plan_cells),
+            **_worth_cells(result, plan, i, cells),
+            **_minute_cells(result, plan, i, cells, plan_cells, reliability),
+        }
         for i, plan in enumerate(result.plans)
     ]
     for block in STATEMENT:
@@ -196,6 +204,13 @@ def _worth_cells(
         "difference": less_base("total", difference),
         "difference_low": plan.difference_interval[0],
         "difference_high": plan.difference_interval[1],
+        "verdict": _verdict(cells, i, "difference", plan.difference_interval, plan.name, base.name),
+        "to_best": plan.difference_to_best,
+        "to_best_low": plan.difference_to_best_interval[0],
+        "to_best_high": plan.difference_to_best_interval[1],
+        "to_best_verdict": _verdict(
+            cells, i, "to_best", plan.difference_to_best_interval, plan.name, result.recommended
+        ),
         "extra_capital": less_base("net", extra_capital),
         "extra_investment": less_base("investment", extra_investment),
         "saving": saving_cell,
@@ -205,4 +220,63 @@ def _worth_cells(
         "ratio": ratio,
         "present_total": Formula(present, plan.costs.total * factor),
         "present_difference": less_base("present_total", difference * factor),
+    }
+
+
+def _verdict(
+    cells: AlternativesCells, i: int, key: str, span: tuple[float, float], name: str, other: str
+) -> Cell:
+    """Cheaper, dearer or undecided by the interval; nothing to say of a plan against itself."""
+    if name == other:
+        return "-"
+    low, high = cells.here(f"{key}_low", i), cells.here(f"{key}_high", i)
+    text = (
+        f'=IF({low}>0,"{money.DEARER}",IF({high}<0,"{money.CHEAPER}","{money.UNDECIDED}"))'
+    )
+    return Formula(text, money.verdict(span))
+
+
+def _minute_cells(
+    result: StudyResult,
+    plan: PlanResult,
+    i: int,
+    cells: AlternativesCells,
+    plan_cells: PlanCells,
+    reliability: ReliabilityCells,
+) -> dict[str, Cell]:
+    """Customer-minutes avoided and what one costs; totals as if there were no grants."""
+    base = money.baseline(result)
+    saved_h = base.indices.saidi_h - plan.indices.saidi_h
+    minutes = minutes_from_hours(saved_h) * result.customers
+    minutes_text = (
+        f"=({cells.base('saidi')}-{cells.here('saidi', i)})*{cells.here('customers_served', i)}*60"
+    )
+    extra = plan.costs.utility - base.costs.utility
+    per_minute: Cell = "none avoided"
+    if minutes > money.LEAST_MINUTES:
+        text = (
+            f"=({cells.here('utility', i)}-{cells.base('utility')})/{cells.here('minutes', i)}"
+        )
+        per_minute = Formula(text, extra / minutes)
+    gross = sum(a.capital_gross * a.crf for a in plan.purchases)
+    base_gross = sum(a.capital_gross * a.crf for a in base.purchases)
+    totals = plan_cells.totals
+    ratio: Cell = money.NOTHING_BOUGHT
+    if gross - base_gross > 0.0:
+        saved = money.saving(
+            base.costs.total, base.costs.investment, plan.costs.total, plan.costs.investment
+        )
+        less = f"({totals.away(i, 'investment_gross')}-{totals.away(0, 'investment_gross')})"
+        ratio = Formula(f"={cells.here('saving', i)}/{less}", saved / (gross - base_gross))
+    total_gross = (
+        f"={cells.here('total', i)}+{totals.away(i, 'investment_gross')}"
+        f"-{totals.away(i, 'investment')}"
+    )
+    return {
+        "customers_served": result.customers,
+        "saidi": Formula(f"={reliability.indices.away(2 * i, 'saidi')}", plan.indices.saidi_h),
+        "minutes": Formula(minutes_text, minutes),
+        "per_minute": per_minute,
+        "total_gross": Formula(total_gross, plan.costs.total + gross - plan.costs.investment),
+        "ratio_gross": ratio,
     }

@@ -19,10 +19,7 @@ from xlplan.report.tables import PLAN, PLAN_TOTALS, PRICES, PURCHASES
 DISCOUNT_RATE = "discount_rate"
 """Name of the cell that holds the real discount rate; it stands on the Alternatives sheet."""
 
-NOISE = 1e-6
-"""Money below which a remainder is rounding of sums, not a device change."""
-
-WIDTHS = (25, 18, 12, 12, 13, 13, 14, 14, 14, 14, 13, 13, 13)
+WIDTHS = (27, 18, 12, 12, 13, 13, 14, 14, 14, 14, 13, 13, 13)
 
 
 @dataclass(frozen=True)
@@ -30,6 +27,12 @@ class PlanCells:
     """Where the totals stand: row i belongs to plan i of the result."""
 
     totals: Grid
+    prices: Grid
+    price_row: dict[str, int]
+
+    def price(self, asset: str, key: str) -> str:
+        """Address of one figure of the price list, for other sheets."""
+        return self.prices.away(self.price_row[asset], key)
 
 
 def write(book: SafeBook, result: StudyResult) -> PlanCells:
@@ -78,7 +81,7 @@ def write(book: SafeBook, result: StudyResult) -> PlanCells:
     sheet.text(bought.below + 1, 0, NOTE, "note")
     sheet.freeze(2, 1)
     sheet.print_setup(bought.below + 1, len(PURCHASES) - 1)
-    return PlanCells(totals)
+    return PlanCells(totals, prices, price_row)
 
 
 NOTE = (
@@ -142,14 +145,14 @@ def _purchase_row(
 def _total_row(
     plan: PlanResult, i: int, totals: Grid, bought: Grid, first: int | None
 ) -> dict[str, Cell]:
-    """Sums over a plan's block of purchases, and what device changes add."""
+    """Sums over a plan's block of purchases, device changes among them."""
     assets = plan.purchases
     n = len(assets)
 
-    def block_sum(key: str, value: float, extra: str = "") -> Formula:
+    def block_sum(key: str, value: float) -> Formula:
         if first is None or n == 0:
-            return Formula(f"=0{'+' + extra if extra else ''}", value)
-        return Formula(f"=SUM({bought.span(key, first, n)}){'+' + extra if extra else ''}", value)
+            return Formula("=0", value)
+        return Formula(f"=SUM({bought.span(key, first, n)})", value)
 
     def sum_of_kind(kind: str, key: str) -> Formula:
         value = sum((getattr(a, key) for a in assets if a.kind == kind and a.is_bought), 0.0)
@@ -164,10 +167,16 @@ def _total_row(
     if first is not None and n:
         kinds, yes = bought.span("kind", first, n), bought.span("is_bought", first, n)
         count = Formula(f'=COUNTIFS({kinds},"hardening",{yes},"yes")', measures)
-    other_capital = _remainder(plan.capital_cost, [a.capital_net for a in assets])
-    other_yearly = _remainder(plan.costs.investment, [a.investment for a in assets])
-    gross = sum(a.capital_gross for a in assets) + other_capital
-    capital_cell, yearly_cell = totals.here(i, "other_capital"), totals.here(i, "other_yearly")
+    gross_yearly = sum(a.capital_gross * a.crf for a in assets)
+    devices = Formula("=0", 0.0)
+    if first is not None and n:
+        kinds, net = bought.span("kind", first, n), bought.span("net", first, n)
+        value = sum(a.capital_net for a in assets if a.kind == "device")
+        devices = Formula(f'=SUMIFS({net},{kinds},"device")', value)
+    before_grants = Formula("=0", gross_yearly)
+    if first is not None and n:
+        spans = f"{bought.span('gross', first, n)},{bought.span('crf', first, n)}"
+        before_grants = Formula(f"=SUMPRODUCT({spans})", gross_yearly)
     return {
         "name": plan.name,
         "place": plan.kind,
@@ -175,11 +184,11 @@ def _total_row(
         "storage_kwh": sum_of_kind("storage", "kwh"),
         "generator_kw": sum_of_kind("generator", "kw"),
         "measures": count,
-        "other_capital": other_capital,
-        "other_yearly": other_yearly,
-        "gross": block_sum("gross", gross, capital_cell),
-        "net": block_sum("net", plan.capital_cost, capital_cell),
-        "investment": block_sum("investment", plan.costs.investment, yearly_cell),
+        "devices": devices,
+        "gross": block_sum("gross", plan.capital_gross),
+        "net": block_sum("net", plan.capital_cost),
+        "investment_gross": before_grants,
+        "investment": block_sum("investment", plan.costs.investment),
         "fixed_om": block_sum("fixed_om", plan.costs.fixed_om),
         "yearly": Formula(
             f"={totals.here(i, 'investment')}+{totals.here(i, 'fixed_om')}",
@@ -187,8 +196,3 @@ def _total_row(
         ),
     }
 
-
-def _remainder(total: float, parts: list[float]) -> float:
-    """What no listed asset accounts for: the changed devices of an alternative."""
-    rest = total - sum(parts)
-    return 0.0 if abs(rest) < max(NOISE, 1e-12 * abs(total)) else rest
