@@ -141,8 +141,37 @@ def test_discount_rate_moves_the_totals(recalculated: dict[str, Any]) -> None:
     factor = sum(1.09**-year for year in range(1, 21))
     assert rows["Present value of the total yearly cost"][4] == pytest.approx(total * factor)
     checks = [row for row in values["Checks"].iter_rows(values_only=True) if row[8] == "CHANGED"]
-    # The three alternatives that buy something.
-    assert [row[1] for row in checks] == ["Total of the Alternatives sheet"] * 3
+    # The three alternatives that buy something; the plan's own total stands on Repair time, too.
+    names = [row[1] for row in checks]
+    assert names == ["Total of the Alternatives sheet"] * 3 + ["Repair times as given"]
     assert values["Checks"]["B4"].value.startswith("LOOK")
     # The workbook's own sums still agree.
     assert "FAIL" not in [row[8] for row in values["Checks"].iter_rows(values_only=True)]
+
+
+def test_discount_rate_moves_worth_and_ratios(recalculated: dict[str, Any]) -> None:
+    """Net value of a measure and the benefit-cost ratio at 9 %, by hand from prices and lives."""
+    values = recalculated["changed"]
+    rows = list(values["Line hardening"].iter_rows(values_only=True))
+    tree = next(row for row in rows if row[1] == "Tree wire, ridge")
+    # 88,000 less half of it as a grant, 40 years, 900 a year of O&M; worth 9,000 a year.
+    own = 44_000.0 * crf(40.0, 0.09) + 900.0
+    assert tree[6] == pytest.approx(own)
+    assert tree[10] == pytest.approx(9_000.0 - own)
+    assert tree[11] == pytest.approx(44_000.0 / (9_000.0 - 900.0))
+    assert tree[13] == "undecided"
+    plans = made_up_result().plans
+    life = {asset[0]: asset[9] for asset in ASSETS}
+    net = {"BAT-NORTH": 408_768.0, "GEN-B09": 155_000.0, "Tree wire, ridge": 44_000.0}
+    wanted = sum(amount * crf(life[name], 0.09) for name, amount in net.items())
+    saved = plans[0].costs.total - (plans[2].costs.total - plans[2].costs.investment)
+    rows = {row[0]: row for row in values["Alternatives"].iter_rows(values_only=True) if row[0]}
+    assert rows["Benefit-cost ratio"][4] == pytest.approx(saved / wanted)
+    # Device changes follow the rate as well: 18,000 over 25 years in the last alternative.
+    own_net = {
+        "BAT-NORTH": 0.8 * (40_000.0 + 800.0 * 310.0 + 3200.0 * 270.0),
+        "Cable, creek": 260e3,
+    }
+    wanted = sum(amount * crf(life[name], 0.09) for name, amount in own_net.items())
+    wanted += 18_000.0 * crf(25.0, 0.09)
+    assert rows["Investment"][5] == pytest.approx(wanted)

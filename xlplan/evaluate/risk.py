@@ -32,8 +32,8 @@ PERCENTS = (1.0, 5.0, 10.0, 25.0, 50.0, 75.0, 90.0, 95.0, 99.0)
 N_BIN = 20
 """Steps of a distribution: enough for its shape, few enough for a chart."""
 
-N_WORST, N_LOST = 10, 4
-"""Worst scenarios reported, and loads named in each."""
+N_LOST = 4
+"""Loads named of those that an event leaves unserved."""
 
 
 def simulate_years(result: FollowResult, fixed_cost: float, seed: int) -> Risk:
@@ -140,7 +140,7 @@ def _bins(values: FloatArray, weights: FloatArray) -> tuple[tuple[float, float, 
 
 
 def worst_events(
-    study: Study, windows: Sequence[WindowModel], follow: FollowResult, n_worst: int = N_WORST
+    study: Study, windows: Sequence[WindowModel], follow: FollowResult
 ) -> tuple[WorstEvent, ...]:
     """Scenarios by the most unserved energy that one event of theirs can leave.
 
@@ -148,7 +148,6 @@ def worst_events(
     ----------
     study, windows : what was followed
     follow : FollowResult
-    n_worst : int, how many
 
     Returns
     -------
@@ -184,7 +183,7 @@ def worst_events(
                     lost=_lost_words(study, by_load[k, w]),
                 )
             )
-    return tuple(sorted(found, key=lambda one: -one.eens_kwh)[:n_worst])
+    return tuple(sorted(found, key=lambda one: -one.eens_kwh))
 
 
 def _lost_words(study: Study, kwh: FloatArray) -> str:

@@ -85,6 +85,8 @@ def time_words(time: object) -> str:
         return time.strftime("%d %b %H:%M")
     if isinstance(time, datetime.time):
         return time.strftime("%H:%M")
+    if isinstance(time, float):
+        return f"{time:g}"
     return str(time)
 
 

@@ -16,6 +16,7 @@ HARDENING = "hardening"
 NO_PAYBACK = "does not pay back"
 NOTHING_BOUGHT = "nothing bought"
 CHEAPER, DEARER, UNDECIDED = "cheaper", "dearer", "undecided"
+HALF_CENT = 0.005
 LEAST_MINUTES = 0.5
 """Fewer avoided customer-minutes a year are rounding, not a result."""
 
@@ -56,9 +57,9 @@ def payback_years(extra_capital: float, yearly_saving: float) -> float | str:
 
 
 def verdict(difference_interval: tuple[float, float]) -> str:
-    """Cheaper or dearer where the whole interval says so, else undecided."""
+    """Cheaper or dearer where the whole interval says so, by half a cent or more, else undecided."""
     low, high = difference_interval
-    return DEARER if low > 0.0 else CHEAPER if high < 0.0 else UNDECIDED
+    return DEARER if low > HALF_CENT else CHEAPER if high < -HALF_CENT else UNDECIDED
 
 
 def money_words(amount: float, currency: str) -> str:

@@ -58,6 +58,20 @@ SUMMARY_PLANS = (
     Column("eens", "Energy not supplied (kWh/year)", "energy"),
 )
 
+SUMMARY_WORTH = (
+    Column("name", "Is it worth it", "wrap"),
+    Column("verdict", "Against the existing feeder", "verdict"),
+    Column("to_best", "Against the recommended one", "verdict"),
+    Column("payback", "Simple payback (years)", "years"),
+    Column("own_payback", "Payback on the utility's own money (years)", "years"),
+    Column("ratio", "Benefit-cost ratio", "hours"),
+    Column("ratio_gross", "Benefit-cost ratio before grants", "hours"),
+    Column("gross", "Capital before grants ({money})", "money"),
+    Column("present", "Present value against existing ({money})", "change"),
+    Column("minutes", "Customer-minutes avoided (per year)", "whole"),
+    Column("per_minute", "Cost per avoided customer-minute ({money})", "per_minute"),
+)
+
 PLAN_TOTALS = (
     Column("name", "Alternative", "wrap"),
     Column("place", "How it came about", "text"),
@@ -91,7 +105,7 @@ PRICES = (
 
 PURCHASES = (
     Column("name", "Alternative", "wrap"),
-    Column("asset", "Asset", "text"),
+    Column("asset", "Asset", "wrap"),
     Column("kind", "Kind", "text"),
     Column("is_bought", "Bought", "text"),
     Column("kw", "Power bought (kW)", "power", is_input=True),
@@ -316,13 +330,14 @@ SPREAD_STEPS = (
 )
 
 WORST_EVENTS = (
-    Column("rank", "No.", "whole"),
     Column("causes", "What fails", "wrap"),
-    Column("window", "Window", "text"),
+    Column("rank", "No.", "whole"),
+    Column("window", "Window", "wrap"),
     Column("begins", "Outage begins", "text"),
     Column("hours", "Lasts (h)", "hours"),
     Column("per_year", "Events of this kind (per year)", "small"),
     Column("eens", "Energy not supplied in this event (kWh)", "energy"),
+    Column("eens_base", "The same on the existing feeder, at its worst (kWh)", "energy"),
     Column("customers", "Customers interrupted (number)", "energy"),
     Column("cost", "Repair and interruption cost ({money})", "money"),
     Column("lost", "What was lost", "wrap"),

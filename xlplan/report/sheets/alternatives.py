@@ -6,7 +6,7 @@ numbers; investment and fixed O&M are taken from the Plan sheet; everything else
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field, replace
 
 from xlsxwriter.utility import xl_rowcol_to_cell
 
@@ -16,8 +16,8 @@ from xlplan.evaluate.results import PlanResult
 from xlplan.report import money
 from xlplan.report.grid import HEADING_CHARS, LINE_POINTS, Cell, Formula, lines_needed, write_cell
 from xlplan.report.safe_book import SafeBook
-from xlplan.report.sheets.reliability import ReliabilityCells
 from xlplan.report.sheets.plan import DISCOUNT_RATE, PlanCells
+from xlplan.report.sheets.reliability import ReliabilityCells
 from xlplan.report.statement import STATEMENT
 from xlplan.report.tables import ALTERNATIVES
 
@@ -42,6 +42,8 @@ class AlternativesCells:
     """Where each figure stands: ``here(key, i_plan)`` on the sheet, ``away`` for others."""
 
     row_of: dict[str, int]
+    content: list[dict[str, Cell]] = field(default_factory=list)
+    """What each plan's column holds, by key."""
 
     def here(self, key: str, i_plan: int) -> str:
         """Relative address on the sheet."""
@@ -99,7 +101,7 @@ def write(
     sheet.widths([40, max(15, len(result.currency) + 7)] + [PLAN_WIDTH] * len(result.plans) + [92])
     sheet.freeze(HEAD_ROW + 1, FIRST_PLAN_COL)
     sheet.print_setup(last_row, note_col)
-    return cells
+    return replace(cells, content=content)
 
 
 def _write_assumptions(book: SafeBook, result: StudyResult) -> None:
@@ -230,8 +232,10 @@ def _verdict(
     if name == other:
         return "-"
     low, high = cells.here(f"{key}_low", i), cells.here(f"{key}_high", i)
+    cent = money.HALF_CENT
     text = (
-        f'=IF({low}>0,"{money.DEARER}",IF({high}<0,"{money.CHEAPER}","{money.UNDECIDED}"))'
+        f'=IF({low}>{cent},"{money.DEARER}",'
+        f'IF({high}<-{cent},"{money.CHEAPER}","{money.UNDECIDED}"))'
     )
     return Formula(text, money.verdict(span))
 
@@ -254,9 +258,7 @@ def _minute_cells(
     extra = plan.costs.utility - base.costs.utility
     per_minute: Cell = "none avoided"
     if minutes > money.LEAST_MINUTES:
-        text = (
-            f"=({cells.here('utility', i)}-{cells.base('utility')})/{cells.here('minutes', i)}"
-        )
+        text = f"=({cells.here('utility', i)}-{cells.base('utility')})/{cells.here('minutes', i)}"
         per_minute = Formula(text, extra / minutes)
     gross = sum(a.capital_gross * a.crf for a in plan.purchases)
     base_gross = sum(a.capital_gross * a.crf for a in base.purchases)

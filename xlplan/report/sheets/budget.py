@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from xlplan.compare.pack_result import BudgetPoint
 from xlplan.compare.study_result import StudyResult
-from xlplan.report import charts, wording
+from xlplan.report import charts, pack_wording
 from xlplan.report.grid import Cell, Formula, Grid
 from xlplan.report.looks import BLUE, NAVY, ORANGE
 from xlplan.report.safe_book import SafeBook
@@ -30,7 +30,7 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
     if not points:
         say_absent(sheet, result, "assets for sale")
         return None
-    sheet.paragraph(3, 0, len(WIDTHS) - 1, wording.knee(result), 210, "text", "bold")
+    sheet.paragraph(3, 0, len(WIDTHS) - 1, pack_wording.knee(result), 210, "text", "bold")
     grid = Grid(BUDGET, CHART_TOP + CHART_ROWS + 2, BUDGET_POINTS, len(points))
     sheet.text(grid.top - 1, 0, "Points of the curve", "section")
     rows = [_row(result, point, grid, i) for i, point in enumerate(points)]
@@ -66,9 +66,7 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
             has_markers=True,
         )
         alt = f"{title}, from nothing to what would be spent without a limit."
-        sheet.chart(
-            CHART_TOP, left * 815, chart, 805, CHART_ROWS * charts.PIXELS_PER_ROW - 10, alt
-        )
+        sheet.chart(CHART_TOP, left * 815, chart, 805, CHART_ROWS * charts.PIXELS_PER_ROW - 10, alt)
     note = (
         "Intervals hold what sampling leaves open (95 %) and what the search leaves open. A plan "
         "found with less money is kept where a search with more found none better."
@@ -101,9 +99,7 @@ def _row(result: StudyResult, point: BudgetPoint, grid: Grid, i: int) -> dict[st
     return {
         "budget": point.budget,
         "spent": point.plan.capital_cost,
-        "total": Formula(
-            f"={grid.here(i, 'utility')}+{grid.here(i, 'customers')}", costs.total
-        ),
+        "total": Formula(f"={grid.here(i, 'utility')}+{grid.here(i, 'customers')}", costs.total),
         "utility": costs.utility,
         "customers": costs.customers,
         "eens": point.plan.indices.eens_kwh,
@@ -112,6 +108,6 @@ def _row(result: StudyResult, point: BudgetPoint, grid: Grid, i: int) -> dict[st
         "low": point.interval[0],
         "high": point.interval[1],
         "step": step,
-        "bought": wording.bought(point.plan),
+        "bought": pack_wording.bought(point.plan),
         "note": "; ".join(notes),
     }

@@ -15,9 +15,9 @@ from xlplan.report.looks import BLUE, GREY, ORANGE, VERMILION
 from xlplan.report.safe_book import SafeBook, SafeSheet
 from xlplan.report.tables import DRAWN_BUSES, FEEDER
 
-CHART_ROWS = 26
+CHART_ROWS = 32
 WIDTHS_HEAD = (22, 12, 12, 44)
-CHART_PX = 1150
+CHART_PX = 1180
 MOST_LABELS = 80
 """With more buses names would cover the drawing; the table has them."""
 
@@ -92,7 +92,8 @@ def write(book: SafeBook, result: StudyResult) -> None:
     sheet.text(lines.below + 1, 0, how, "note")
     sheet.page_breaks([*tops[1:], numbers_top])
     sheet.freeze(2, 0)
-    sheet.print_setup(lines.below + 1, 12)
+    # The columns that only feed the charts stay off the printed page.
+    sheet.print_setup(lines.below + 1, max(9, 3 + n_stage))
 
 
 def _bus_columns(drawing: FeederDrawing) -> tuple[Column, ...]:
@@ -144,6 +145,11 @@ def _write_lines(sheet: SafeSheet, drawing: FeederDrawing, grid: Grid) -> None:
     grid.write(sheet, rows)
 
 
+def _label(bus: str, address: str) -> str:
+    """The name itself, which every program shows; by address if it could pass for a formula."""
+    return f"={address}" if bus.startswith("=") else bus
+
+
 def _chart(
     book: SafeBook, drawing: FeederDrawing, buses: Grid, lines: Grid, i: int, title: str
 ) -> charts.Chart:
@@ -167,7 +173,7 @@ def _chart(
             )
         if look.word in used_buses:
             labels = tuple(
-                f"={buses.away(n, 'bus')}" if bus.states[i] == look.word else ""
+                _label(bus.bus, buses.away(n, "bus")) if bus.states[i] == look.word else ""
                 for n, bus in enumerate(drawing.buses)
             )
             dots.append(
@@ -181,4 +187,4 @@ def _chart(
                 )
             )
     xs, ys = [bus.x for bus in drawing.buses], [bus.y for bus in drawing.buses]
-    return charts.drawing(book, title, strokes, dots, charts.wide_range(xs), charts.wide_range(ys))
+    return charts.drawing(book, title, strokes, dots, charts.padded(xs), charts.padded(ys))

@@ -195,4 +195,3 @@ def _total_row(
             plan.costs.investment + plan.costs.fixed_om,
         ),
     }
-

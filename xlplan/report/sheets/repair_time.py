@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from xlplan.compare.pack_result import RepairPoint
 from xlplan.compare.study_result import StudyResult
-from xlplan.report import charts, wording
+from xlplan.report import charts, pack_wording
 from xlplan.report.grid import Cell, Formula, Grid
 from xlplan.report.looks import BLUE, ORANGE
 from xlplan.report.money import UNDECIDED
@@ -31,7 +31,7 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
     if not points:
         say_absent(sheet, result, "outages")
         return None
-    sheet.paragraph(3, 0, len(WIDTHS) - 1, wording.hour_faster(result), 200, "text", "bold")
+    sheet.paragraph(3, 0, len(WIDTHS) - 1, pack_wording.hour_faster(result), 200, "text", "bold")
     grid = Grid(REPAIR_TIME, CHART_TOP + CHART_ROWS + 2, REPAIR_POINTS, len(points))
     sheet.text(grid.top - 1, 0, "Repair times from half to double", "section")
     rows = [_row(point, grid, i) for i, point in enumerate(points)]
@@ -70,9 +70,7 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
             x_format="0.0",
         )
         alt = f"Two lines: {title[0].lower()}{title[1:]}; the plan kept and the plan made anew."
-        sheet.chart(
-            CHART_TOP, left * 745, chart, 735, CHART_ROWS * charts.PIXELS_PER_ROW - 10, alt
-        )
+        sheet.chart(CHART_TOP, left * 745, chart, 735, CHART_ROWS * charts.PIXELS_PER_ROW - 10, alt)
     notes = (
         "Repairs last whole periods: factors that round to the same number of periods give the "
         "same figures.",

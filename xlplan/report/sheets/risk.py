@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from xlplan.compare.study_result import StudyResult
-from xlplan.evaluate.results import EventSpread, PlanResult
+from xlplan.evaluate.results import EventSpread, PlanResult, WorstEvent
 from xlplan.report import charts
 from xlplan.report.grid import Cell, Column, Grid
 from xlplan.report.looks import BLUE, ORANGE, VERMILION
@@ -11,7 +11,8 @@ from xlplan.report.money import baseline
 from xlplan.report.safe_book import SafeBook, SafeSheet
 from xlplan.report.tables import RISK, SPREAD, SPREAD_STEPS, WORST_EVENTS
 
-WIDTHS = (26, 30, 15, 16, 15, 15, 15, 16, 17, 60)
+WIDTHS = (32, 12, 16, 16, 15, 15, 15, 16, 15, 16, 60)
+N_WORST = 10
 CHART_ROWS = 18
 
 
@@ -29,9 +30,10 @@ def write(book: SafeBook, result: StudyResult) -> None:
     grid = Grid(RISK, 4 + CHART_ROWS + 2, SPREAD, len(rows))
     sheet.text(grid.top - 1, 0, "Percentiles of a year and of one event", "section")
     grid.write(sheet, rows)
-    worst = Grid(RISK, grid.below + 3, WORST_EVENTS, len(best.worst_events))
+    shown = best.worst_events[:N_WORST]
+    worst = Grid(RISK, grid.below + 3, WORST_EVENTS, len(shown))
     sheet.text(worst.top - 1, 0, f"Worst scenarios: {best.name}", "section")
-    worst.write(sheet, [_worst_row(best, i) for i in range(len(best.worst_events))])
+    worst.write(sheet, [_worst_row(one, i, base) for i, one in enumerate(shown)])
     row = worst.below + 2
     steps = []
     for title, bins in (
@@ -104,8 +106,8 @@ def _figures(base: PlanResult, best: PlanResult) -> list[dict[str, Cell]]:
     return rows
 
 
-def _worst_row(best: PlanResult, i: int) -> dict[str, Cell]:
-    one = best.worst_events[i]
+def _worst_row(one: WorstEvent, i: int, base: PlanResult) -> dict[str, Cell]:
+    before = {(e.window, e.scenario): e.eens_kwh for e in base.worst_events}
     return {
         "rank": float(i + 1),
         "causes": one.causes,
@@ -114,6 +116,7 @@ def _worst_row(best: PlanResult, i: int) -> dict[str, Cell]:
         "hours": one.hours,
         "per_year": one.per_year,
         "eens": one.eens_kwh,
+        "eens_base": before.get((one.window, one.scenario)),
         "customers": one.customers,
         "cost": one.cost,
         "lost": one.lost,
@@ -124,7 +127,7 @@ def _charts(
     book: SafeBook, sheet: SafeSheet, result: StudyResult, grid: Grid, steps: list[Grid]
 ) -> None:
     n = grid.n_row - 2
-    width, height = 520, CHART_ROWS * charts.PIXELS_PER_ROW - 10
+    width, height = 560, CHART_ROWS * charts.PIXELS_PER_ROW - 10
     if n > 1:
         columns = {key: _middle(grid, key, n) for key in ("percent", "cost_base", "cost_plan")}
         plans = (baseline(result), result.plan(result.recommended))

@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 from xlplan.compare.pack_result import SensitivityCase
 from xlplan.compare.study_result import StudyResult
-from xlplan.report import charts, wording
+from xlplan.report import charts, pack_wording
 from xlplan.report.grid import Cell, Column, Formula, Grid
 from xlplan.report.looks import BLUE, ORANGE
 from xlplan.report.safe_book import SafeBook, SafeSheet
@@ -48,7 +48,7 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
         return None
     base = result.plan(result.pack.plan_name).costs.total
     pairs = sorted(_pairs(cases), key=lambda one: one.span(base)[0] - one.span(base)[1])
-    sheet.paragraph(3, 0, len(WIDTHS) - 1, wording.sensitivities(result), 230, "text", "bold")
+    sheet.paragraph(3, 0, len(WIDTHS) - 1, pack_wording.sensitivities(result), 230, "text", "bold")
     n_row = CHART_ROWS + ROWS_PER_BAR * len(pairs)
     base_row = CHART_TOP + n_row + 1
     sheet.text(base_row, 0, f"Yearly cost as given: {result.pack.plan_name}")
@@ -63,9 +63,7 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
         grid.chart_values("name"),
         [
             charts.Series(grid.chart_name("low_change"), grid.chart_values("low_change"), BLUE),
-            charts.Series(
-                grid.chart_name("high_change"), grid.chart_values("high_change"), ORANGE
-            ),
+            charts.Series(grid.chart_name("high_change"), grid.chart_values("high_change"), ORANGE),
         ],
         book.words("Change of the yearly cost ({money}/year)"),
         overlap=100,
@@ -73,6 +71,7 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
     alt = "Bars to both sides: change of the yearly cost at the low and high value of each row."
     sheet.chart(CHART_TOP, 0, chart, 1150, n_row * charts.PIXELS_PER_ROW - 10, alt)
     row = _regrets(sheet, result, grid.below + 2)
+    sheet.page_breaks([grid.below + 2])
     notes = (
         "The plan changes where another asset is bought or a size moves by more than 10 %. Kept "
         "plan no worse: the loss by keeping it is within its interval.",
