@@ -95,6 +95,7 @@ def solve_alternative(
         capital_budget=None if budget is None else max(0.0, budget - capital),
         fixed=fixed,
         ignores_outages=alternative.ignores_outages,
+        whole_budget=budget,
     )
     if not changes:
         return solver.solve_wish(wish), findings

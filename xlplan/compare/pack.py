@@ -220,8 +220,8 @@ class PackMaker:
         own = self.study.settings.capital_budget
         spent = self.best.result.capital_cost
         wide = self.best
-        if own is not None and spent > 0.9 * own:
-            # The budget may bind: what would be spent without one?
+        if own is not None:
+            # The budget may bind, also where not all of it is spent: what would be without one?
             wish = replace(self._wish("Plan without a budget"), capital_budget=None)
             wide = self.solver.solve_wish(wish)
             if wide.result.costs.total > self.best.result.costs.total:

@@ -122,6 +122,8 @@ class Wish:
     price_list: int = -1
     is_brief: bool = False
     limit_s: float | None = None
+    whole_budget: float | None = None
+    """Of purchases and device changes together; None: ``capital_budget`` and the changes."""
 
 
 class PlanSolver:
@@ -196,8 +198,10 @@ class PlanSolver:
         study = self.study
         if wish.price_list >= 0:
             study = self.choices.price_studies[wish.price_list]
-        budget = wish.capital_budget
-        return with_budget(study, None if budget is None else budget + self.device_capital)
+        budget = wish.whole_budget
+        if budget is None and wish.capital_budget is not None:
+            budget = wish.capital_budget + self.device_capital
+        return with_budget(study, budget)
 
     def _bounds(self, graph: StudyGraph, wish: Wish) -> tuple[FloatArray, FloatArray]:
         first_stage = graph.first_stage

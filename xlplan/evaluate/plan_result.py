@@ -316,6 +316,8 @@ def plan_checks(
                 max(0.0, sum(p.capital_net for p in purchases) - budget),
                 0.0,
                 max(CENT, ROUNDING * budget),
+                # Device changes are given, whatever they cost: for the planner to judge.
+                is_warning=bool(facts.device_changes),
             )
         )
     lines.append(

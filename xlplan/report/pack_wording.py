@@ -36,13 +36,18 @@ def knee(result: StudyResult) -> str:
             "No bend: no amount of money tried lowers the yearly cost by more than the interval of "
             "the saving."
         )
+    free = ""
+    if result.capital_budget is not None and result.capital_budget > last.budget:
+        free = (
+            f" The study's budget, {money_words(result.capital_budget, currency)}, does not bind."
+        )
     here = points[at]
     share = pct_from_frac(here.saving / last.saving)
     if at == len(points) - 1:
         return (
             f"No bend before the end: money goes on paying up to "
             f"{money_words(last.budget, currency)}, which saves "
-            f"{money_words(last.saving, currency)} a year."
+            f"{money_words(last.saving, currency)} a year.{free}"
         )
     rest = (last.saving - here.saving) / (last.budget - here.budget) * 1000.0
     first = here.saving / here.budget * 1000.0 if here.budget > 0.0 else 0.0
@@ -50,7 +55,7 @@ def knee(result: StudyResult) -> str:
         f"The curve bends at {money_words(here.budget, currency)}: that much money brings "
         f"{share:.0f} % of the saving of {money_words(last.budget, currency)}. Up to there each "
         f"1,000 {currency} of capital saves {money_words(first, currency)} a year, investment "
-        f"counted; beyond it {money_words(rest, currency)}."
+        f"counted; beyond it {money_words(rest, currency)}.{free}"
     )
 
 
