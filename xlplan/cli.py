@@ -115,7 +115,9 @@ def build_parser() -> argparse.ArgumentParser:
     solve.add_argument("--workers", type=_count, metavar="N", help="processes to use")
     solve.add_argument("--seed", type=_whole, metavar="N", help="seed of the random numbers")
     solve.add_argument(
-        "--plan-only", action="store_true", help="leave out the study's own alternatives"
+        "--plan-only",
+        action="store_true",
+        help="leave out the study's own alternatives, sensitivities and other comparisons",
     )
     solve.add_argument("--force", action="store_true", help="replace results that are there")
     solve.add_argument("--quiet", action="store_true", help="print the results' path only")

@@ -16,15 +16,16 @@ from xlplan.report.safe_book import SafeBook, SafeSheet
 from xlplan.report.tables import DRAWN_BUSES, FEEDER
 
 CHART_ROWS = 32
-WIDTHS_HEAD = (22, 12, 12, 44)
-CHART_PX = 1180
+WIDTHS_HEAD = (26, 14, 14, 60)
+MOST_PX = 1300
 MOST_LABELS = 80
 """With more buses names would cover the drawing; the table has them."""
 
 LINE_HEAD = (
     Column("line", "Line", "wrap"),
     Column("end", "End", "text"),
-    Column("x", "x", "hours"),
+    Column("x", "x (drawing units)", "hours"),
+    Column("kind", "Kind", "wrap"),
 )
 
 
@@ -61,7 +62,8 @@ def write(book: SafeBook, result: StudyResult) -> None:
         return
     n_stage = len(drawing.stages)
     n_look = n_stage * len(LOOKS)
-    sheet.widths([*WIDTHS_HEAD, *([13] * max(n_look, 8))])
+    sheet.widths([*WIDTHS_HEAD, *([16] * n_stage), *([13] * n_look)])
+    last_col = len(WIDTHS_HEAD) + n_stage - 1
     tops, row = [], 3
     for note in drawing.stage_notes:
         tops.append(row)
@@ -83,7 +85,8 @@ def write(book: SafeBook, result: StudyResult) -> None:
         )
         alt = f"Drawing of the feeder, {title}. Buses: {counts}."[:250]
         height = (CHART_ROWS - 1) * charts.PIXELS_PER_ROW
-        sheet.chart(top + 2, 0, chart, CHART_PX, height, alt)
+        width = min(MOST_PX, sheet.pixels(0, last_col)) - 10
+        sheet.chart(top + 2, 0, chart, width, height, alt)
     how = (
         "Places are computed: the study gives no x and y for every bus. Distances have no scale."
         if drawing.is_computed
@@ -93,7 +96,7 @@ def write(book: SafeBook, result: StudyResult) -> None:
     sheet.page_breaks([*tops[1:], numbers_top])
     sheet.freeze(2, 0)
     # The columns that only feed the charts stay off the printed page.
-    sheet.print_setup(lines.below + 1, max(9, 3 + n_stage))
+    sheet.print_setup(lines.below + 1, last_col)
 
 
 def _bus_columns(drawing: FeederDrawing) -> tuple[Column, ...]:
@@ -110,6 +113,8 @@ def _bus_columns(drawing: FeederDrawing) -> tuple[Column, ...]:
 
 def _line_columns(drawing: FeederDrawing) -> tuple[Column, ...]:
     columns = list(LINE_HEAD)
+    for i, stage in enumerate(drawing.stages):
+        columns.append(Column(f"state {i}", f"State: {stage}", "text"))
     for i in range(len(drawing.stages)):
         columns += [
             Column(f"y {i} {look.word}", f"y if {look.label} ({i + 1})", "hours") for look in LOOKS
@@ -138,8 +143,10 @@ def _write_lines(sheet: SafeSheet, drawing: FeederDrawing, grid: Grid) -> None:
             row: dict[str, Cell] = {column.key: "" for column in grid.columns}
             if end is not None:
                 x, y = place[end]
-                row.update({"line": line.line, "end": end, "x": x})
+                kind = "normally open tie" if line.is_open else "closed in normal service"
+                row.update({"line": line.line, "end": end, "x": x, "kind": kind})
                 for i, state in enumerate(line.states):
+                    row[f"state {i}"] = state
                     row[f"y {i} {state}"] = y
             rows.append(row)
     grid.write(sheet, rows)

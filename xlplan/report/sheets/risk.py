@@ -127,7 +127,8 @@ def _charts(
     book: SafeBook, sheet: SafeSheet, result: StudyResult, grid: Grid, steps: list[Grid]
 ) -> None:
     n = grid.n_row - 2
-    width, height = 560, CHART_ROWS * charts.PIXELS_PER_ROW - 10
+    width = sheet.pixels(0, len(WIDTHS) - 1) // 3 - 10
+    height = CHART_ROWS * charts.PIXELS_PER_ROW - 10
     if n > 1:
         columns = {key: _middle(grid, key, n) for key in ("percent", "cost_base", "cost_plan")}
         plans = (baseline(result), result.plan(result.recommended))
