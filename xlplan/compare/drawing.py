@@ -141,7 +141,7 @@ def _places(study: Study, feeder: Feeder, tree: RadialTree) -> tuple[FloatArray,
     for bus in tree.order:
         # The largest part goes straight on, the others below it.
         at = top[bus]
-        row[bus] = -at
+        row[bus] = 0.0 - at
         for child in sorted(children.get(bus, ()), key=lambda one: -size[one]):
             top[child] = at
             at += size[child]

@@ -292,7 +292,7 @@ def _finish(chart: Chart, title: str, has_legend: bool = True) -> Chart:
 
 @dataclass(frozen=True)
 class Stroke:
-    """Lines of a drawing in one style; blank rows lift the pen. ``name``: a fixed word of ours."""
+    """One stroke of a drawing. ``name``: a fixed word of ours; the legend shows it once."""
 
     name: str
     x_values: CellRange
@@ -364,7 +364,11 @@ def drawing(
     for axis, (low, high) in ((chart.set_x_axis, x_range), (chart.set_y_axis, y_range)):
         axis({"visible": False, "min": low, "max": high, "major_gridlines": {"visible": False}})
     chart.show_blanks_as("gap")
-    return _finish(chart, title)
+    names = [one.name for one in strokes]
+    again = [i for i, name in enumerate(names) if name in names[:i]]
+    chart = _finish(chart, title)
+    chart.set_legend({"position": "bottom", "font": _font(9), "delete_series": again})
+    return chart
 
 
 def wide_range(values: Sequence[float]) -> tuple[float, float]:

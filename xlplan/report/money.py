@@ -57,7 +57,7 @@ def payback_years(extra_capital: float, yearly_saving: float) -> float | str:
 
 
 def verdict(difference_interval: tuple[float, float]) -> str:
-    """Cheaper or dearer where the whole interval says so, by half a cent or more, else undecided."""
+    """Cheaper or dearer where the whole interval says so (beyond half a cent), else undecided."""
     low, high = difference_interval
     return DEARER if low > HALF_CENT else CHEAPER if high < -HALF_CENT else UNDECIDED
 

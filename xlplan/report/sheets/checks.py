@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from itertools import pairwise
 
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import CheckLine, PlanResult
@@ -304,7 +305,7 @@ def _pack_lines(
         )
         rises = [
             max(0.0, after.plan.costs.total - before.plan.costs.total)
-            for before, after in zip(points, points[1:], strict=False)
+            for before, after in pairwise(points)
         ]
         add(
             "Budget curve never rises",

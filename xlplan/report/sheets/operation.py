@@ -49,7 +49,8 @@ def write(book: SafeBook, result: StudyResult) -> None:
     sheet.head(
         "How the plan runs",
         f"{best.name}: load, sources, stored energy and unserved load by period; a normal day, "
-        "then the worst, the most frequent and the longest outage event. The numbers behind the charts follow below them.",
+        "then the worst, the most frequent and the longest outage event. The numbers behind the "
+        "charts follow below them.",
     )
     if not best.traces:
         sheet.text(3, 0, "The run kept no trace of operation.", "note")

@@ -92,10 +92,10 @@ def _pairs(cases: tuple[SensitivityCase, ...]) -> list[_Pair]:
     pairs: list[_Pair] = []
     for case in cases:
         last = pairs[-1] if pairs else None
-        if case.is_high and last is not None and last.high is None:
-            if last.parameter == case.parameter:
-                pairs[-1] = _Pair(case.parameter, last.low, case)
-                continue
+        is_second = case.is_high and last is not None and last.high is None
+        if is_second and last is not None and last.parameter == case.parameter:
+            pairs[-1] = _Pair(case.parameter, last.low, case)
+            continue
         low, high = (None, case) if case.is_high else (case, None)
         pairs.append(_Pair(case.parameter, low, high))
     return pairs
