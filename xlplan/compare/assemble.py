@@ -109,9 +109,9 @@ def cheapest(
     for plan in plans:
         within = capital_budget is None or plan.result.capital_cost <= capital_budget + CENT
         half = plan.follow.difference_half_width(best.follow)
-        if within and plan.result.costs.total < best.result.costs.total - half - CENT:
-            if plan.result.costs.total < found.result.costs.total:
-                found = plan
+        is_clear = plan.result.costs.total < best.result.costs.total - half - CENT
+        if within and is_clear and plan.result.costs.total < found.result.costs.total:
+            found = plan
     return found
 
 

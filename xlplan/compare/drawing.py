@@ -43,7 +43,9 @@ def draw_feeder(
     closed = ~feeder.normally_open
     tree = radial_tree(feeder, closed, [feeder.source])
     x, y, is_computed = _places(study, feeder, tree)
-    stages = [(NORMAL_SERVICE, "Everything is fed from the source; ties are open.", None)]
+    stages: list[tuple[str, str, Stage | None]] = [
+        (NORMAL_SERVICE, "Everything is fed from the source; ties are open.", None)
+    ]
     stages += _event_stages(plan, windows)
     bus_states = [_bus_states(feeder, stage) for _, _, stage in stages]
     line_states = [_line_states(feeder, stage) for _, _, stage in stages]

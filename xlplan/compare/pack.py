@@ -186,7 +186,7 @@ class PackMaker:
         bought = self.best.bought
         dropped = [j for j in rivals if bought.is_hardened[j]]
         only = _hardened(solver.nothing_bought(), {i: True})
-        bare = _hardened(bought, {j: False for j in (i, *dropped)})
+        bare = _hardened(bought, dict.fromkeys((i, *dropped), False))
         full = _hardened(bare, {i: True})
         alone = self._given(f"{measure.measure} alone", only)
         without = self._given(f"Plan without {measure.measure}", bare)
@@ -207,7 +207,7 @@ class PackMaker:
         )
 
     def _given(self, name: str, bought: Purchases) -> SolvedPlan:
-        """A plan with purchases given; the existing feeder and the plan itself are there already."""
+        """A plan with purchases given; the existing feeder and the plan itself are known."""
         for known in (self.existing, self.best):
             if _is_same(known.bought, bought):
                 return known

@@ -54,13 +54,13 @@ TREE_REFUSAL = 1_000_000
 and hours."""
 
 INNER_TARGET = 0.25
-"""Share of the target at which the decomposition stops by its own estimate. The target is a share of
-a cost that is mostly energy; alternatives differ by less, so the plan is brought closer than asked
-for while that is cheap, and the interval of the reported cost needs some of the rest."""
+"""Share of the target at which the decomposition stops by its own estimate. The target is a share
+of a cost that is mostly energy; alternatives differ by less, so the plan is brought closer than
+asked for while that is cheap, and the interval of the reported cost needs some of the rest."""
 
 GIVEN_TARGET = 0.2
-"""The same where the purchases are given (the existing feeder among them, against which every saving
-is counted): how much better they could still be run must be small beside the difference."""
+"""The same where the purchases are given (the existing feeder among them, against which every
+saving is counted): how much better they could still be run must be small beside the difference."""
 
 BRIEF_TARGET = 0.5
 """The same for the points of curves and sensitivities, which are searched once and followed."""

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 from xlplan.base.errors import Finding
 from xlplan.compare.pack_result import Pack
@@ -97,7 +97,7 @@ class StudyResult:
     read_seconds: float
     solve_seconds: float
     write_seconds: float = 0.0
-    pack: Pack = Pack()
+    pack: Pack = field(default_factory=Pack)
     feeder: FeederDrawing | None = None
 
     def plan(self, name: str) -> PlanResult:

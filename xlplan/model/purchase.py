@@ -184,7 +184,9 @@ def build_first_stage(study: Study, layout: Layout, choices: Choices | None = No
             builder.add_row(f"steps {name}", [(kw, 1.0), (count, -step)], 0.0, 0.0)
         return count
 
-    generator_kw, generator_site, generator_steps = [], [], []
+    generator_kw: list[int] = []
+    generator_site: list[int] = []
+    generator_steps: list[int] = []
     for i, unit in enumerate(study.generators):
         if unit.max_new_kw <= 0.0:
             for columns in (generator_kw, generator_site, generator_steps):
@@ -208,7 +210,10 @@ def build_first_stage(study: Study, layout: Layout, choices: Choices | None = No
         matrix.append((layout.generator_kw(i), kw))
         generator_kw.append(kw)
         generator_site.append(site)
-    storage_kw, storage_kwh, storage_site, storage_steps = [], [], [], []
+    storage_kw: list[int] = []
+    storage_kwh: list[int] = []
+    storage_site: list[int] = []
+    storage_steps: list[int] = []
     for i, store in enumerate(study.storage):
         if store.max_new_kw <= 0.0 and store.max_new_kwh <= 0.0:
             for columns in (storage_kw, storage_kwh, storage_site, storage_steps):

@@ -119,14 +119,6 @@ STATEMENT = (
                 look="change",
             ),
             Line(
-                "verdict",
-                "Verdict against the existing feeder",
-                "Undecided where 0 lies in the interval: such a difference is not ranked",
-                unit="",
-                look="verdict",
-                modifier="bold",
-            ),
-            Line(
                 "to_best",
                 "Against the recommended alternative",
                 "Above 0: dearer than the recommended alternative",
@@ -143,13 +135,6 @@ STATEMENT = (
                 "95 % interval of that: high",
                 "If 0 lies in the interval, the two cannot be told apart",
                 look="change",
-            ),
-            Line(
-                "to_best_verdict",
-                "Verdict against the recommended one",
-                "Dearer, cheaper or undecided, by the interval",
-                unit="",
-                look="verdict",
             ),
             Line(
                 "bound",
@@ -316,6 +301,26 @@ STATEMENT = (
                 "own_clock",
                 "Interruption cost on each load's own clock",
                 "Priced from each load group's own start, not from the start of the outage event",
+            ),
+        ),
+    ),
+    Block(
+        "Verdicts in words",
+        (
+            Line(
+                "verdict",
+                "Verdict against the existing feeder",
+                "Undecided where 0 lies in the interval: such a difference is not ranked",
+                unit="",
+                look="verdict",
+                modifier="bold",
+            ),
+            Line(
+                "to_best_verdict",
+                "Verdict against the recommended one",
+                "Dearer, cheaper or undecided, by the interval",
+                unit="",
+                look="verdict",
             ),
         ),
     ),

@@ -8,6 +8,8 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+from xlsxwriter.chart import Chart
+
 from xlplan.compare.study_result import DrawnLine, FeederDrawing, StudyResult
 from xlplan.report import charts
 from xlplan.report.grid import Cell, Column, Grid
@@ -244,7 +246,7 @@ def _chart(
     first_row: list[int],
     i: int,
     title: str,
-) -> charts.Chart:
+) -> Chart:
     """Lines by state, buses by state over them; names where there is room."""
     used_buses = {bus.states[i] for bus in drawing.buses}
     has_names = len(drawing.buses) <= MOST_LABELS

@@ -137,7 +137,8 @@ def _verdict(cases: list[SensitivityCase]) -> str:
 def _regrets(sheet: SafeSheet, result: StudyResult, row: int) -> int:
     """Costs of every alternative in every case, and their regrets in formulas; next free row."""
     names = [regret.name for regret in result.pack.regrets]
-    cases = [(AS_GIVEN, {r.name: r.base_total for r in result.pack.regrets}, None)]
+    as_given = {r.name: r.base_total for r in result.pack.regrets}
+    cases: list[tuple[str, dict[str, float], float | None]] = [(AS_GIVEN, as_given, None)]
     for case in result.pack.sensitivities:
         word = f"{case.parameter} {'high' if case.is_high else 'low'}"
         cases.append((word, dict(case.totals), case.anew.costs.total))
