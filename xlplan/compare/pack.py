@@ -280,32 +280,53 @@ class PackMaker:
             else:
                 name = f"Repair times x {factor:g}"
                 study = vary(self.study, REPAIR_TIMES, factor)
-                self._by_factor[factor] = self._in_case(name, study)
+                rows = [one for one in self.study.sensitivities if one.parameter == REPAIR_TIMES]
+                is_case = any(factor in (one.low, one.high) for one in rows)
+                self._by_factor[factor] = self._in_case(name, study, is_case)
         return self._by_factor[factor]
 
     def _kept_by_factor(self) -> dict[float, SolvedPlan]:
         return {factor: found[0] for factor, found in self._by_factor.items()}
 
-    def _in_case(self, name: str, study: Study) -> tuple[SolvedPlan, SolvedPlan, dict[str, float]]:
-        """Plan made anew, plan kept and the other alternatives where more than prices differs."""
+    def _in_case(
+        self, name: str, study: Study, with_others: bool = True
+    ) -> tuple[SolvedPlan, SolvedPlan, dict[str, float]]:
+        """Plan kept, plan made anew, costs of alternatives, where more than prices differs.
+
+        Alternatives that buy the same share a figure; that of the others is what their search
+        measures, since nothing but their cost is shown.
+        """
         feeder = build_feeder(study)
         windows = build_window_models(study, feeder)
-        base = self.solver
+        base, own_name = self.solver, self.best.result.name
         with PlanSolver(
             study, feeder, windows, base.options, base.on_progress, base.should_stop
         ) as solver:
             anew = solver.solve_wish(self._wish(f"{name}: made anew"))
-            given = {}
-            for other in (self.best, self.existing, *self._contenders()):
-                label = f"{name}: {other.result.name}"
-                given[other.result.name] = solver.solve_wish(self._wish(label, other.bought))
-        kept = given[self.best.result.name]
-        # What a plan with given purchases was found to cost is open to the search as well.
-        cheapest = min(given.values(), key=lambda plan: plan.result.costs.total)
-        if self._may_buy(cheapest) and cheapest.result.costs.total < anew.result.costs.total:
-            bound = anew.result.lower_bound
-            anew = replace(cheapest, result=replace(cheapest.result, lower_bound=bound))
-        return kept, anew, {key: plan.result.costs.total for key, plan in given.items()}
+            kept = solver.solve_wish(self._wish(f"{name}: {own_name}", self.best.bought))
+            anew = self._better(anew, kept)
+            totals = {own_name: kept.result.costs.total}
+            known = [(self.best.bought, kept.result.costs.total)]
+            for other in (self.existing, *self._contenders()) if with_others else ():
+                cost = next((c for bought, c in known if _is_same(bought, other.bought)), None)
+                if cost is None:
+                    wish = self._wish(f"{name}: {other.result.name}", other.bought)
+                    cost = solver.estimated_cost(wish)
+                    if cost < anew.result.costs.total:
+                        # Cheaper than what the search found: that is worth following.
+                        found = solver.solve_wish(wish)
+                        cost = found.result.costs.total
+                        anew = self._better(anew, found)
+                    known.append((other.bought, cost))
+                totals[other.result.name] = cost
+        return kept, anew, totals
+
+    def _better(self, anew: SolvedPlan, other: SolvedPlan) -> SolvedPlan:
+        """What other purchases were found to cost is open to the search: they serve if cheaper."""
+        if not self._may_buy(other) or other.result.costs.total >= anew.result.costs.total:
+            return anew
+        bound = anew.result.lower_bound
+        return replace(other, result=replace(other.result, lower_bound=bound))
 
     def _contenders(self) -> list[SolvedPlan]:
         """The user's alternatives whose purchases can be tried in every case."""
@@ -377,11 +398,9 @@ class PackMaker:
             plan.result.name: solver.repriced(plan, price)
             for plan in (self.best, self.existing, *self._contenders())
         }
+        for plan in given.values():
+            anew = self._better(anew, plan)
         kept = given[self.best.result.name]
-        cheapest = min(given.values(), key=lambda plan: plan.result.costs.total)
-        if self._may_buy(cheapest) and cheapest.result.costs.total < anew.result.costs.total:
-            bound = anew.result.lower_bound
-            anew = replace(cheapest, result=replace(cheapest.result, lower_bound=bound))
         return kept, anew, {key: plan.result.costs.total for key, plan in given.items()}
 
 

@@ -193,6 +193,23 @@ class PlanSolver:
             return self._by_tree(wish)
         return self._by_decomposition(wish)
 
+    def estimated_cost(self, wish: Wish) -> float:
+        """Yearly cost of a plan as its own search measures it, without following it anew.
+
+        A third to half of the work of ``solve_wish``, for figures of which only the cost is shown.
+        """
+        if wish.ignores_outages or self.method == "tree":
+            return self.solve_wish(wish).result.costs.total
+        started = time.monotonic()
+        limit_s = self._limit_s(wish)
+        bounds = self._bounds(self.graph, wish)
+        target = self.options.gap_target_frac
+        found = self._run(wish.name, target, started + limit_s, started + limit_s, bounds, [])
+        if found.cost.n_unmeasured > 0:
+            # Stopped before all was followed: what was not is charged far too much.
+            return self.solve_wish(wish).result.costs.total
+        return found.cost.mean + self.device_yearly
+
     def study_of(self, wish: Wish) -> Study:
         """The study at the wish's prices and budget."""
         study = self.study
