@@ -162,8 +162,18 @@ def made_up_pack(base: PlanResult, best: PlanResult, rate: float) -> Pack:
                 investment=net * crf(asset[9], rate),
                 fixed_om=asset[10],
                 is_in_plan=is_in_plan,
-                alone=Worth(1.4 * value, (1.3 * value, 1.5 * value), 410.0, 2e6, 2e6 - value),
-                in_plan=Worth(value, (-50.0, 2.0 * value), 300.0, 2e6, 2e6 - value),
+                alone=Worth(
+                    1.4 * value,
+                    0.4 * value,
+                    value,
+                    (1.3 * value, 1.5 * value),
+                    410.0,
+                    2e6,
+                    2e6 - value,
+                ),
+                in_plan=Worth(
+                    value, 100.0, value - 100.0, (-50.0, 2.0 * value), 300.0, 2e6, 2e6 - value
+                ),
                 without=() if is_in_plan else ("Tree wire, ridge",),
             )
         )

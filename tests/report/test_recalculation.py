@@ -157,9 +157,9 @@ def test_discount_rate_moves_worth_and_ratios(recalculated: dict[str, Any]) -> N
     # 88,000 less half of it as a grant, 40 years, 900 a year of O&M; worth 9,000 a year.
     own = 44_000.0 * crf(40.0, 0.09) + 900.0
     assert tree[6] == pytest.approx(own)
-    assert tree[10] == pytest.approx(9_000.0 - own)
-    assert tree[11] == pytest.approx(44_000.0 / (9_000.0 - 900.0))
-    assert tree[13] == "undecided"
+    assert tree[12] == pytest.approx(9_000.0 - own)
+    assert tree[13] == pytest.approx(44_000.0 / (9_000.0 - 900.0))
+    assert tree[15] == "undecided"
     plans = made_up_result().plans
     life = {asset[0]: asset[9] for asset in ASSETS}
     net = {"BAT-NORTH": 408_768.0, "GEN-B09": 155_000.0, "Tree wire, ridge": 44_000.0}

@@ -16,7 +16,7 @@ from typing import TypeVar
 import numpy as np
 
 from xlplan.base.codes import Code
-from xlplan.base.errors import Finding, Level, Origin, XlplanError
+from xlplan.base.errors import Finding, Level, NoPlanError, Origin, XlplanError
 from xlplan.compare.pack_result import (
     BudgetPoint,
     HardeningValue,
@@ -42,6 +42,9 @@ _Found = TypeVar("_Found")
 
 BUDGET_SHARES = (0.0, 0.1, 0.2, 0.35, 0.5, 0.65, 0.8, 1.0)
 """Points of the budget curve, as shares of what is spent without a limit; closer where it bends."""
+
+SHEETS_OF = {"line hardening": "Hardening", "repair times": "Outage assumptions"}
+"""Sheet that a piece rests on, for its finding; the others rest on Settings."""
 
 REPAIR_FACTORS = (0.5, 0.75, 1.0, 1.5, 2.0)
 SIZE_SHARE = 0.1
@@ -143,7 +146,7 @@ class PackMaker:
             Finding(
                 level=Level.WARNING,
                 code=Code.NOT_SOLVED,
-                sheet="" if origin is None else origin.sheet,
+                sheet=SHEETS_OF.get(what, "Settings") if origin is None else origin.sheet,
                 cell="" if origin is None else origin.cell("parameter"),
                 key="" if origin is None else "parameter",
                 value=what,
@@ -161,6 +164,13 @@ class PackMaker:
     def limit_s(self) -> float:
         """Seconds that a point may search: what the least-cost plan took."""
         return max(LEAST_SECONDS, self.best.result.solve_seconds)
+
+    def _solve(self, solver: PlanSolver, wish: Wish) -> SolvedPlan:
+        """The plan asked for; one that was stopped half-way is no point of a curve."""
+        plan = solver.solve_wish(wish)
+        if solver.should_stop():
+            raise NoPlanError("the run was stopped while it was worked on.")
+        return plan
 
     def _wish(self, name: str, fixed: Purchases | None = None) -> Wish:
         return Wish(
@@ -211,7 +221,7 @@ class PackMaker:
         for known in (self.existing, self.best):
             if _is_same(known.bought, bought):
                 return known
-        return self.solver.solve_wish(self._wish(name, bought))
+        return self._solve(self.solver, self._wish(name, bought))
 
     # -- budget --------------------------------------------------------------------------------
 
@@ -223,7 +233,7 @@ class PackMaker:
         if own is not None:
             # The budget may bind, also where not all of it is spent: what would be without one?
             wish = replace(self._wish("Plan without a budget"), capital_budget=None)
-            wide = self.solver.solve_wish(wish)
+            wide = self._solve(self.solver, wish)
             if wide.result.costs.total > self.best.result.costs.total:
                 wide = self.best
         most = max(wide.result.capital_cost, spent)
@@ -241,7 +251,7 @@ class PackMaker:
             found = known.get(budget)
             if found is None:
                 wish = replace(self._wish(f"Budget {budget:,.0f}"), capital_budget=budget)
-                found = self.solver.solve_wish(wish)
+                found = self._solve(self.solver, wish)
             if own is not None and budget >= own > 0.0 and budget < most:
                 found = min(found, self.best, key=lambda plan: plan.result.costs.total)
             is_carried = lead.result.costs.total < found.result.costs.total
@@ -302,8 +312,8 @@ class PackMaker:
         with PlanSolver(
             study, feeder, windows, base.options, base.on_progress, base.should_stop
         ) as solver:
-            anew = solver.solve_wish(self._wish(f"{name}: made anew"))
-            kept = solver.solve_wish(self._wish(f"{name}: {own_name}", self.best.bought))
+            anew = self._solve(solver, self._wish(f"{name}: made anew"))
+            kept = self._solve(solver, self._wish(f"{name}: {own_name}", self.best.bought))
             anew = self._better(anew, kept)
             totals = {own_name: kept.result.costs.total}
             known = [(self.best.bought, kept.result.costs.total)]
@@ -314,7 +324,7 @@ class PackMaker:
                     cost = solver.estimated_cost(wish)
                     if cost < anew.result.costs.total:
                         # Cheaper than what the search found: that is worth following.
-                        found = solver.solve_wish(wish)
+                        found = self._solve(solver, wish)
                         cost = found.result.costs.total
                         anew = self._better(anew, found)
                     known.append((other.bought, cost))
@@ -393,7 +403,7 @@ class PackMaker:
         """The same where only prices differ: operation stays, the engine's cuts serve."""
         solver = self.solver
         wish = replace(self._wish(f"{name}: made anew"), price_list=price)
-        anew = solver.solve_wish(wish)
+        anew = self._solve(solver, wish)
         given = {
             plan.result.name: solver.repriced(plan, price)
             for plan in (self.best, self.existing, *self._contenders())
@@ -426,8 +436,11 @@ def _is_same(first: Purchases, second: Purchases) -> bool:
 def _worth(without: SolvedPlan, with_it: SolvedPlan, own_cost: float) -> Worth:
     """Value before the yearly cost ``own_cost`` of what is added."""
     difference, (low, high) = optimum_difference(without, with_it)
+    before, after = without.result.costs, with_it.result.costs
     return Worth(
         value=difference + own_cost,
+        utility=before.utility - after.utility + own_cost,
+        customers=before.customers - after.customers,
         interval=(low + own_cost, high + own_cost),
         eens_saved_kwh=without.result.indices.eens_kwh - with_it.result.indices.eens_kwh,
         total_without=without.result.costs.total,

@@ -16,9 +16,11 @@ Interval = tuple[float, float]
 
 @dataclass(frozen=True)
 class Worth:
-    """What something is worth a year, before its own yearly cost."""
+    """What something is worth a year, before its own yearly cost; ``utility + customers``."""
 
     value: float
+    utility: float
+    customers: float
     interval: Interval
     eens_saved_kwh: float
     total_without: float

@@ -171,6 +171,8 @@ def _alternative(plan: PlanResult) -> dict[str, Any]:
 def _worth(worth: Worth, yearly_cost: float) -> dict[str, Any]:
     return {
         "value": _number(worth.value),
+        "utility_value": _number(worth.utility),
+        "customers_value": _number(worth.customers),
         "interval": _pair(worth.interval),
         "net_value": _number(worth.value - yearly_cost),
         "eens_saved_kwh_per_year": _number(worth.eens_saved_kwh),

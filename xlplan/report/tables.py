@@ -241,6 +241,8 @@ WORTH = (
     Column("is_bought", "In the plan", "text"),
     Column("capital", "Capital after grants ({money})", "money"),
     Column("yearly", "Its own yearly cost ({money}/year)", "money"),
+    Column("utility", "Worth to the utility, before its own cost ({money}/year)", "change"),
+    Column("customers", "Worth to customers ({money}/year)", "change"),
     Column("value", "Worth, before its own cost ({money}/year)", "change"),
     Column("low", "95 % interval: low ({money}/year)", "change"),
     Column("high", "95 % interval: high ({money}/year)", "change"),
@@ -298,6 +300,10 @@ SENSITIVITY_ROWS = (
     Column("low_plan", "What the best plan becomes at low", "wrap"),
     Column("high_plan", "What the best plan becomes at high", "wrap"),
     Column("verdict", "Does the plan change?", "status"),
+    Column("low_utility", "Best plan at low: utility's own ({money}/year)", "money"),
+    Column("low_customers", "Best plan at low: customers' ({money}/year)", "money"),
+    Column("high_utility", "Best plan at high: utility's own ({money}/year)", "money"),
+    Column("high_customers", "Best plan at high: customers' ({money}/year)", "money"),
 )
 
 REGRETS = (

@@ -65,7 +65,8 @@ def write(book: SafeBook, result: StudyResult) -> None:
     sheet.head(
         "The feeder, and what the outages shown do to it",
         "Round and solid: live. Diamond and dashed: cut off from every supply, an island if "
-        "something can form it. Cross and dotted: dead by the fault. Grey: open tie.",
+        "something can form it. Cross and dotted: dead by the fault. Grey: open tie. Outages of "
+        "the least-cost plan, on the feeder as it is.",
     )
     if drawing is None or not drawing.buses:
         sheet.text(3, 0, "The run kept no drawing.", "note")

@@ -15,7 +15,7 @@ from xlplan.report.sheets.absent import say_absent
 from xlplan.report.sheets.plan import PlanCells
 from xlplan.report.tables import HARDENING, WORTH
 
-WIDTHS = (9, 30, 26, 11, 9, 13, 13, 14, 14, 14, 14, 13, 13, 16)
+WIDTHS = (9, 30, 26, 11, 9, 13, 13, 15, 13, 14, 14, 14, 14, 13, 13, 16)
 WORTH_IT, NOT_WORTH_IT = "worth it", "not worth it"
 ROWS_PER_BAR = 2
 CHART_ROWS = 10
@@ -159,7 +159,9 @@ def _row(
         "is_bought": "yes" if row.is_in_plan else "no",
         "capital": Formula(capital, row.capital_net),
         "yearly": Formula(yearly, row.yearly_cost),
-        "value": worth.value,
+        "utility": worth.utility,
+        "customers": worth.customers,
+        "value": Formula(f"={grid.here(i, 'utility')}+{grid.here(i, 'customers')}", worth.value),
         "low": worth.interval[0],
         "high": worth.interval[1],
         "net": Formula(f"={here['value']}-{here['yearly']}", worth.value - row.yearly_cost),

@@ -13,7 +13,7 @@ from xlplan.report.safe_book import SafeBook, SafeSheet
 from xlplan.report.sheets.absent import say_absent
 from xlplan.report.tables import REGRETS, SENSITIVITIES, SENSITIVITY_ROWS
 
-WIDTHS = (30, 15, 15, 15, 15, 15, 15, 14, 15, 15, 34, 34, 24)
+WIDTHS = (30, 15, 15, 15, 15, 15, 15, 14, 15, 15, 34, 34, 22, 15, 15, 15, 15)
 CHART_ROWS, ROWS_PER_BAR = 9, 2
 CHART_TOP = 5
 AS_GIVEN = "as given"
@@ -107,14 +107,20 @@ def _row(pair: _Pair, grid: Grid, i: int, base: float, base_cell: str) -> dict[s
             return None
         return Formula(f"={grid.here(i, f'{side}_anew')}-{base_cell}", case.anew.costs.total - base)
 
+    def total(case: SensitivityCase | None, side: str) -> Cell:
+        if case is None:
+            return None
+        text = f"={grid.here(i, f'{side}_utility')}+{grid.here(i, f'{side}_customers')}"
+        return Formula(text, case.anew.costs.total)
+
     low, high = pair.span(base)
     reach = f"{grid.here(i, 'low_anew')},{grid.here(i, 'high_anew')},{base_cell}"
     return {
         "name": pair.parameter,
         "low_value": None if pair.low is None else pair.low.value,
         "high_value": None if pair.high is None else pair.high.value,
-        "low_anew": None if pair.low is None else pair.low.anew.costs.total,
-        "high_anew": None if pair.high is None else pair.high.anew.costs.total,
+        "low_anew": total(pair.low, "low"),
+        "high_anew": total(pair.high, "high"),
         "low_change": change(pair.low, "low"),
         "high_change": change(pair.high, "high"),
         "range": Formula(f"=MAX({reach})-MIN({reach})", high - low),
@@ -123,6 +129,10 @@ def _row(pair: _Pair, grid: Grid, i: int, base: float, base_cell: str) -> dict[s
         "low_plan": None if pair.low is None else pair.low.changes,
         "high_plan": None if pair.high is None else pair.high.changes,
         "verdict": _verdict([c for c in (pair.low, pair.high) if c is not None]),
+        "low_utility": None if pair.low is None else pair.low.anew.costs.utility,
+        "low_customers": None if pair.low is None else pair.low.anew.costs.customers,
+        "high_utility": None if pair.high is None else pair.high.anew.costs.utility,
+        "high_customers": None if pair.high is None else pair.high.anew.costs.customers,
     }
 
 
