@@ -57,8 +57,8 @@ class PriceColumns:
 class FirstStage:
     """The program, its map to capacities in service, and the meaning of its columns (-1: none).
 
-    ``capital_most``: capital that ``capital_limit`` (a share of it, 0 to 1) is counted in; the
-    column is -1 where the budget is a row of its own.
+    ``capital_limit``: column of the capital less grants that may be spent, ``capital_most`` at
+    most; -1 where the budget is a row of its own.
     """
 
     program: LinearProgram
@@ -96,8 +96,7 @@ class FirstStage:
         if price_list >= 0:
             limit, most = self.prices[price_list].limit, self.prices[price_list].capital_most
         if limit >= 0 and capital_budget is not None:
-            share = capital_budget / most if most > 0.0 else 1.0
-            upper[limit] = min(max(share, 0.0), 1.0)
+            upper[limit] = min(max(capital_budget, 0.0), most)
         for i, one in enumerate(self.prices):
             column = one.idle if i == price_list else one.added
             lower[column] = upper[column] = 0.0
@@ -259,10 +258,9 @@ def build_first_stage(study: Study, layout: Layout, choices: Choices | None = No
     matrix.append((layout.demand_kw, demand))
     limit, most_capital = -1, 0.0
     if choices is not None:
-        # A share of all that could be spent, so that the column is as small as the others.
         most_capital = sum(builder.col_upper[column] * capital for column, capital in budget)
-        limit = builder.add_column("share of capital", 0.0, 1.0)
-        builder.add_row("budget", [*budget, (limit, -most_capital)], upper=0.0)
+        limit = builder.add_column("capital that may be spent", 0.0, most_capital)
+        builder.add_row("budget", [*budget, (limit, -1.0)], upper=0.0)
     elif study.settings.capital_budget is not None:
         builder.add_row("budget", budget, upper=study.settings.capital_budget)
     prices = [
@@ -303,17 +301,16 @@ def _add_prices(builder: ProgramBuilder, other: FirstStage, n_own: int) -> Price
         raise ValueError("a price list has other assets for sale than the study")
     change = program.cost[:n_own] - np.array(builder.cost[:n_own])
     most = float(np.abs(change) @ np.array(builder.col_upper[:n_own]))
-    scale = most if most > 0.0 else 1.0
-    added = builder.add_column("added by a price list", -1.0, 1.0, scale)
-    idle = builder.add_column("not added by a price list", -1.0, 1.0)
-    limit = builder.add_column("share of capital at a price list", 0.0, 1.0)
+    added = builder.add_column("added by a price list", -most, most, 1.0)
+    idle = builder.add_column("not added by a price list", -most, most)
+    limit = builder.add_column("capital that may be spent at a price list", 0.0, other.capital_most)
     terms = [(int(i), float(change[i])) for i in np.flatnonzero(change)]
-    builder.add_row("price list", [*terms, (added, -scale), (idle, -scale)], 0.0, 0.0)
+    builder.add_row("price list", [*terms, (added, -1.0), (idle, -1.0)], 0.0, 0.0)
     last = slice(int(program.start[-2]), int(program.start[-1]))
     budget = [
         (int(i), float(value))
         for i, value in zip(program.index[last], program.value[last], strict=True)
         if i != other.capital_limit
     ]
-    builder.add_row("budget at a price list", [*budget, (limit, -other.capital_most)], upper=0.0)
+    builder.add_row("budget at a price list", [*budget, (limit, -1.0)], upper=0.0)
     return PriceColumns(added, idle, limit, other.capital_most)
