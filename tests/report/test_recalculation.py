@@ -36,13 +36,18 @@ PROFILE = """<?xml version="1.0" encoding="UTF-8"?>
 def books(workbook_path: Path, tmp_path_factory: pytest.TempPathFactory) -> dict[str, Path]:
     """The workbook, one with a wrong stored value, one at 0 %, one with the rate cell changed."""
     folder = tmp_path_factory.mktemp("books")
-    paths = {name: folder / f"{name}.xlsx" for name in ("planted", "zero", "changed")}
+    paths = {name: folder / f"{name}.xlsx" for name in ("planted", "zero", "changed", "dearer")}
     rewrite(
         workbook_path, paths["planted"], 2, r"(<f>SUM\([^<]*</f><v>)[^<]*(</v>)", r"\g<1>999\g<2>"
     )
     rewrite(
         workbook_path, paths["changed"], 2, r'(<c r="B4"[^>]*><v>)0\.04(</v>)', r"\g<1>0.09\g<2>"
     )
+    sheet = openpyxl.load_workbook(workbook_path)["Alternatives"]
+    label = "BAT-NORTH: capital per kWh"
+    row = next(cell.row for cell in sheet["A"] if cell.value == label)
+    cell = rf'(<c r="C{row}"[^>]*><v>)270(</v>)'
+    rewrite(workbook_path, paths["dearer"], 2, cell, r"\g<1>370\g<2>")
     write_results(made_up_result(rate=0.0), paths["zero"], False, folder / "study.xlsx")
     shutil.copy(workbook_path, folder / "plain.xlsx")
     return {**paths, "plain": folder / "plain.xlsx"}
@@ -175,3 +180,26 @@ def test_discount_rate_moves_worth_and_ratios(recalculated: dict[str, Any]) -> N
     wanted = sum(amount * crf(life[name], 0.09) for name, amount in own_net.items())
     wanted += 18_000.0 * crf(25.0, 0.09)
     assert rows["Investment"][5] == pytest.approx(wanted)
+
+
+def test_a_price_on_the_alternatives_sheet_moves_the_totals(recalculated: dict[str, Any]) -> None:
+    """100 a kWh more on 1261.5 kWh, less 20 % of grant, over 15 years at 4 %."""
+    values = recalculated["dearer"]
+    extra = 100.0 * 1261.5
+    more = 0.8 * extra * crf(15.0)
+    rows = {row[0]: row for row in values["Alternatives"].iter_rows(values_only=True) if row[0]}
+    plan = made_up_result().plans[2]
+    assert rows["Capital before grants"][4] == pytest.approx(plan.capital_gross + extra)
+    assert rows["Capital after grants"][4] == pytest.approx(plan.capital_cost + 0.8 * extra)
+    assert rows["Total yearly cost"][4] == pytest.approx(plan.costs.total + more)
+    factor = sum(1.04**-year for year in range(1, 21))
+    present = (plan.costs.total + more) * factor
+    assert rows["Present value of the total yearly cost"][4] == pytest.approx(present)
+    base = made_up_result().plans[0].costs.total
+    saving = base - (plan.costs.total - plan.costs.investment)
+    ratio = saving / (plan.costs.investment + more)
+    assert rows["Benefit-cost ratio"][4] == pytest.approx(ratio)
+    payback = (plan.capital_cost + 0.8 * extra) / saving
+    assert rows["Simple payback, customers included"][4] == pytest.approx(payback)
+    summary = {row[0]: row for row in values["Summary"].iter_rows(values_only=True) if row[0]}
+    assert ratio in [pytest.approx(v) for v in summary[plan.name] if isinstance(v, float)]

@@ -4,6 +4,9 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+HEAD_ROW = 6
+"""Row of the heading, on the Alternatives sheet."""
+
 YEARLY = "{money}/year"
 MONEY = "{money}"
 
@@ -325,3 +328,16 @@ STATEMENT = (
         ),
     ),
 )
+
+
+def statement_rows() -> tuple[dict[str, int], int]:
+    """Row of every block and figure, and the last row."""
+    row_of: dict[str, int] = {}
+    row = HEAD_ROW + 1
+    for block in STATEMENT:
+        row_of[block.title] = row
+        for line in block.lines:
+            row += 1
+            row_of[line.key] = row
+        row += 2
+    return row_of, row - 2

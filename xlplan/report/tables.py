@@ -94,12 +94,12 @@ PRICES = (
     Column("kind", "Kind", "text"),
     Column("max_kw", "Largest new power (kW)", "power"),
     Column("max_kwh", "Largest new energy (kWh)", "energy"),
-    Column("per_kw", "Capital per kW ({money}/kW)", "price", is_input=True),
-    Column("per_kwh", "Capital per kWh ({money}/kWh)", "price", is_input=True),
-    Column("site", "Site cost, or cost of the measure ({money})", "money", is_input=True),
-    Column("grant", "Grant (share of capital)", "percent", is_input=True),
-    Column("life", "Life (years)", "years", is_input=True),
-    Column("om_rate", "Fixed O&M ({money}/year per kW, or per measure)", "price", is_input=True),
+    Column("per_kw", "Capital per kW ({money}/kW)", "price"),
+    Column("per_kwh", "Capital per kWh ({money}/kWh)", "price"),
+    Column("site", "Site cost, or cost of the measure ({money})", "money"),
+    Column("grant", "Grant (share of capital)", "percent"),
+    Column("life", "Life (years)", "years"),
+    Column("om_rate", "Fixed O&M ({money}/year per kW, or per measure)", "price"),
     Column("crf", "Capital recovery factor (per year)", "factor"),
 )
 

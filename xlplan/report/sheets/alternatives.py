@@ -17,12 +17,13 @@ from xlplan.report import money
 from xlplan.report.grid import HEADING_CHARS, LINE_POINTS, Cell, Formula, lines_needed, write_cell
 from xlplan.report.safe_book import SafeBook
 from xlplan.report.sheets.plan import DISCOUNT_RATE, PlanCells
+from xlplan.report.sheets.price_list import write_prices
 from xlplan.report.sheets.reliability import ReliabilityCells
-from xlplan.report.statement import STATEMENT
+from xlplan.report.statement import HEAD_ROW, STATEMENT, statement_rows
 from xlplan.report.tables import ALTERNATIVES
 
 STUDY_LIFE = "study_life_years"
-RATE_ROW, LIFE_ROW, HEAD_ROW = 3, 4, 6
+RATE_ROW, LIFE_ROW = 3, 4
 FIRST_PLAN_COL = 2
 PLAN_WIDTH = 18
 NUMBER_PARTS = (
@@ -67,10 +68,11 @@ def write(
     sheet.head(
         "Alternatives side by side",
         "Yearly cost from its parts to totals, then capital, payback and present value, against "
-        "the existing feeder. Blue figures can be changed; formulas follow.",
+        "the existing feeder. Blue figures (rates, and prices at the end) can be changed.",
     )
     _write_assumptions(book, result)
-    cells, last_row = _place()
+    row_of, _ = statement_rows()
+    cells = AlternativesCells(row_of)
     note_col = FIRST_PLAN_COL + len(result.plans)
     for i, plan in enumerate(result.plans):
         sheet.text(HEAD_ROW, FIRST_PLAN_COL + i, plan.name, "heading_right")
@@ -100,7 +102,8 @@ def write(
             sheet.text(row, note_col, line.note, "remark")
     sheet.widths([40, max(15, len(result.currency) + 7)] + [PLAN_WIDTH] * len(result.plans) + [92])
     sheet.freeze(HEAD_ROW + 1, FIRST_PLAN_COL)
-    sheet.print_setup(last_row, note_col)
+    write_prices(sheet, plan_cells.price_list)
+    sheet.print_setup(plan_cells.price_list.below, note_col)
     return replace(cells, content=content)
 
 
@@ -116,19 +119,6 @@ def _write_assumptions(book: SafeBook, result: StudyResult) -> None:
     sheet.text(LIFE_ROW, 2, "Common practice; not an input of the study", "remark")
     book.define_name(DISCOUNT_RATE, ALTERNATIVES, f"$B${RATE_ROW + 1}")
     book.define_name(STUDY_LIFE, ALTERNATIVES, f"$B${LIFE_ROW + 1}")
-
-
-def _place() -> tuple[AlternativesCells, int]:
-    """Row of every block and figure, and the last row."""
-    row_of: dict[str, int] = {}
-    row = HEAD_ROW + 1
-    for block in STATEMENT:
-        row_of[block.title] = row
-        for line in block.lines:
-            row += 1
-            row_of[line.key] = row
-        row += 2
-    return AlternativesCells(row_of), row - 2
 
 
 def _cost_cells(

@@ -14,6 +14,8 @@ from xlplan.evaluate.results import PlanResult, Purchase
 from xlplan.report.grid import Cell, Formula, Grid
 from xlplan.report.money import buys_anything
 from xlplan.report.safe_book import SafeBook
+from xlplan.report.sheets.price_list import PriceList, place_prices
+from xlplan.report.statement import statement_rows
 from xlplan.report.tables import PLAN, PLAN_TOTALS, PRICES, PURCHASES
 
 DISCOUNT_RATE = "discount_rate"
@@ -29,6 +31,7 @@ class PlanCells:
     totals: Grid
     prices: Grid
     price_row: dict[str, int]
+    price_list: PriceList
 
     def price(self, asset: str, key: str) -> str:
         """Address of one figure of the price list, for other sheets."""
@@ -40,17 +43,14 @@ def write(book: SafeBook, result: StudyResult) -> PlanCells:
     sheet = book.sheet(PLAN)
     sheet.head(
         "What each alternative buys",
-        "Blue figures on a pale fill were given or found by the run; black ones are formulas that "
-        "follow them. Changing a figure moves the totals; it does not search for a new plan.",
+        "Blue figures on a pale fill were found by the run; black ones are formulas that follow "
+        "them and the prices on the Alternatives sheet. Changing a figure searches for no new plan.",
     )
     sheet.widths(WIDTHS)
     shown = [plan for plan in result.plans if buys_anything(plan)]
-    # Prices are the study's, the same in every plan; the first mention of an asset counts.
-    by_name: dict[str, Purchase] = {}
-    for plan in result.plans:
-        for asset in plan.purchases:
-            by_name.setdefault(asset.asset, asset)
-    assets = list(by_name.values())
+    # Prices are the study's, the same in every plan; they are typed on the Alternatives sheet.
+    price_list = place_prices(result, statement_rows()[1] + 2)
+    assets = price_list.assets
     price_row = {asset.asset: i for i, asset in enumerate(assets)}
     totals = Grid(PLAN, 4, PLAN_TOTALS, len(result.plans))
     prices = Grid(PLAN, totals.below + 2, PRICES, len(assets))
@@ -72,8 +72,8 @@ def write(book: SafeBook, result: StudyResult) -> PlanCells:
     best = [i for i, plan in enumerate(result.plans) if plan.name == result.recommended]
     totals.write(sheet, total_rows, marked=best)
 
-    sheet.text(prices.top - 1, 0, "Prices and lives, as given in the study", "section")
-    prices.write(sheet, [_price_row(a, prices, i) for i, a in enumerate(assets)])
+    sheet.text(prices.top - 1, 0, "Prices and lives, from the Alternatives sheet", "section")
+    prices.write(sheet, [_price_row(a, prices, i, price_list) for i, a in enumerate(assets)])
 
     sheet.text(bought.top - 1, 0, "Purchases by alternative", "section")
     marked = [i for i, row in enumerate(rows) if row["is_bought"] == "yes"]
@@ -81,7 +81,7 @@ def write(book: SafeBook, result: StudyResult) -> PlanCells:
     sheet.text(bought.below + 1, 0, NOTE, "note")
     sheet.freeze(2, 1)
     sheet.print_setup(bought.below + 1, len(PURCHASES) - 1)
-    return PlanCells(totals, prices, price_row)
+    return PlanCells(totals, prices, price_row, price_list)
 
 
 NOTE = (
@@ -90,20 +90,25 @@ NOTE = (
 )
 
 
-def _price_row(asset: Purchase, prices: Grid, i: int) -> dict[str, Cell]:
+def _price_row(asset: Purchase, prices: Grid, i: int, price_list: PriceList) -> dict[str, Cell]:
     """One asset that can be bought: its prices, and the factor of its own life."""
+
+    def figure(key: str, value: float) -> Cell:
+        place = price_list.away(asset.asset, key)
+        return value if place is None else Formula(f"={place}", value)
+
     return {
         "asset": asset.asset,
         "place": asset.place,
         "kind": asset.kind,
         "max_kw": asset.max_new_kw,
         "max_kwh": asset.max_new_kwh,
-        "per_kw": asset.capital_per_kw,
-        "per_kwh": asset.capital_per_kwh,
-        "site": asset.capital_site,
-        "grant": asset.grant_frac,
-        "life": asset.life_years,
-        "om_rate": asset.fixed_om_rate,
+        "per_kw": figure("per_kw", asset.capital_per_kw),
+        "per_kwh": figure("per_kwh", asset.capital_per_kwh),
+        "site": figure("site", asset.capital_site),
+        "grant": figure("grant", asset.grant_frac),
+        "life": figure("life", asset.life_years),
+        "om_rate": figure("om_rate", asset.fixed_om_rate),
         "crf": Formula(f"=-PMT({DISCOUNT_RATE},{prices.here(i, 'life')},1)", asset.crf),
     }
 
