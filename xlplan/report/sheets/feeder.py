@@ -17,7 +17,9 @@ from xlplan.report.looks import BLUE, GREY, ORANGE, VERMILION
 from xlplan.report.safe_book import SafeBook, SafeSheet
 from xlplan.report.tables import DRAWN_BUSES, FEEDER
 
-CHART_ROWS = 32
+MOST_ROWS = 31
+HEIGHT_SHARE = 0.57
+"""Height of a drawing over its width: with its heading it then fits a landscape page."""
 WIDTHS_HEAD = (26, 14, 14, 60)
 MOST_PX = 1300
 MOST_LABELS = 80
@@ -75,10 +77,12 @@ def write(book: SafeBook, result: StudyResult) -> None:
     n_stage = len(drawing.stages)
     sheet.widths([*WIDTHS_HEAD, *([16] * n_stage), *([13] * 3 * n_stage)])
     last_col = len(WIDTHS_HEAD) + n_stage - 1
+    width = min(MOST_PX, sheet.pixels(0, last_col)) - 10
+    n_row = min(MOST_ROWS, int(HEIGHT_SHARE * width / charts.PIXELS_PER_ROW))
     tops, row = [], 3
     for note in drawing.stage_notes:
         tops.append(row)
-        row += CHART_ROWS + (3 if note else 2)
+        row += n_row + (3 if note else 2)
     numbers_top = row
     buses = Grid(FEEDER, row + 1, _bus_columns(drawing), len(drawing.buses))
     lines = Grid(FEEDER, buses.below + 2, _line_columns(drawing), len(drawing.lines))
@@ -99,8 +103,7 @@ def write(book: SafeBook, result: StudyResult) -> None:
             f"{states.count(look.word)} {look.label}" for look in LOOKS[:3] if look.word in states
         )
         alt = f"Drawing of the feeder, {title}. Buses: {counts}."[:250]
-        height = (CHART_ROWS - 1) * charts.PIXELS_PER_ROW
-        width = min(MOST_PX, sheet.pixels(0, last_col)) - 10
+        height = (n_row - 1) * charts.PIXELS_PER_ROW
         sheet.chart(top + 2, 0, chart, width, height, alt)
     how = (
         "Places are computed: the study gives no x and y for every bus. Distances have no scale."

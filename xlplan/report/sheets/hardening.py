@@ -16,6 +16,7 @@ from xlplan.report.sheets.plan import PlanCells
 from xlplan.report.tables import HARDENING, WORTH
 
 WIDTHS = (9, 30, 26, 11, 9, 13, 13, 15, 13, 14, 14, 14, 14, 13, 13, 16)
+NOT_RANKED = "-"
 WORTH_IT, NOT_WORTH_IT = "worth it", "not worth it"
 ROWS_PER_BAR = 2
 CHART_ROWS = 10
@@ -121,9 +122,12 @@ def _table(
     sheet.text(grid.top - 1, 0, title, "section")
     nets = [_worth(row, is_in_plan).value - row.yearly_cost for row in rows]
     cells = []
+    is_clear = [worth_verdict(_worth(r, is_in_plan), r.yearly_cost) != UNDECIDED for r in rows]
     for i, row in enumerate(rows):
-        rank = 1 + sum(net > nets[i] for net in nets)
-        cells.append(_row(row, grid, i, plan_cells, is_in_plan, float(rank)))
+        # What cannot be told from nothing is not ranked.
+        rank = 1 + sum(net > nets[i] for net, clear in zip(nets, is_clear, strict=True) if clear)
+        shown: float | str = float(rank) if is_clear[i] else NOT_RANKED
+        cells.append(_row(row, grid, i, plan_cells, is_in_plan, shown))
     marked = [i for i, row in enumerate(rows) if row.is_in_plan]
     grid.write(sheet, cells, marked=marked)
     col = grid.col("verdict")
@@ -135,7 +139,12 @@ def _worth(row: HardeningValue, is_in_plan: bool) -> Worth:
 
 
 def _row(
-    row: HardeningValue, grid: Grid, i: int, plan_cells: PlanCells, is_in_plan: bool, rank: float
+    row: HardeningValue,
+    grid: Grid,
+    i: int,
+    plan_cells: PlanCells,
+    is_in_plan: bool,
+    rank: float | str,
 ) -> dict[str, Cell]:
     worth = _worth(row, is_in_plan)
     here = {key: grid.here(i, key) for key in ("capital", "yearly", "value", "low", "high", "net")}
@@ -152,7 +161,11 @@ def _row(
         f'IF({here["high"]}<{here["yearly"]},"{NOT_WORTH_IT}","{UNDECIDED}"))'
     )
     return {
-        "rank": Formula(f"=RANK({here['net']},{grid.span('net')})", rank),
+        "rank": Formula(
+            f'=IF({grid.here(i, "verdict")}="{UNDECIDED}","{NOT_RANKED}",1+COUNTIFS('
+            f'{grid.span("net")},">"&{here["net"]},{grid.span("verdict")},"<>{UNDECIDED}"))',
+            rank,
+        ),
         "name": row.measure,
         "lines": ", ".join(row.lines),
         "avoided": row.failures_avoided_frac,

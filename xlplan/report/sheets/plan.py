@@ -44,7 +44,7 @@ def write(book: SafeBook, result: StudyResult) -> PlanCells:
     sheet.head(
         "What each alternative buys",
         "Blue figures on a pale fill were found by the run; black ones are formulas that follow "
-        "them and the prices on the Alternatives sheet. Changing a figure searches for no new plan.",
+        "them and the prices on the Alternatives sheet. Changing one searches for no new plan.",
     )
     sheet.widths(WIDTHS)
     shown = [plan for plan in result.plans if buys_anything(plan)]

@@ -36,11 +36,17 @@ def write(book: SafeBook, result: StudyResult) -> None:
     worst.write(sheet, [_worst_row(one, i, base) for i, one in enumerate(shown)])
     row = worst.below + 2
     steps = []
+    risk = best.risk
     for title, bins in (
-        ("Year's cost of the plan: share of years", best.risk.cost_bins),
+        (book.words("Year's cost of the plan ({money}): share of years"), risk.cost_bins),
+        ("Year's unserved energy with the plan (kWh): share of years", risk.eens_bins),
+        (
+            book.words("Cost of one event ({money}): events per year"),
+            risk.event_cost.bins if risk.event_cost is not None else (),
+        ),
         (
             "Unserved energy of one event (kWh): events per year",
-            best.risk.event_eens.bins if best.risk.event_eens is not None else (),
+            risk.event_eens.bins if risk.event_eens is not None else (),
         ),
     ):
         sheet.text(row, 0, title, "section")
@@ -153,7 +159,7 @@ def _charts(
     for i, (one, title, axis, colour) in enumerate(
         (
             (steps[0], "Years by cost: the plan", "Share of years", BLUE),
-            (steps[1], "Events by unserved energy: the plan", "Events per year", ORANGE),
+            (steps[3], "Events by unserved energy: the plan", "Events per year", ORANGE),
         )
     ):
         if one.n_row < 1:
