@@ -306,7 +306,7 @@ class Stroke:
 class Dots:
     """Points of a drawing with one marker; ``labels``: a text a point, "" for none.
 
-    A text that begins with = is taken for the address of the cell that holds the label.
+    A text may not begin with =, which would make it a formula.
     """
 
     name: str

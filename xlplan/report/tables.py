@@ -300,6 +300,10 @@ SENSITIVITY_ROWS = (
     Column("low_plan", "What the best plan becomes at low", "wrap"),
     Column("high_plan", "What the best plan becomes at high", "wrap"),
     Column("verdict", "Does the plan change?", "status"),
+)
+
+SENSITIVITY_PARTS = (
+    Column("name", "Assumption", "wrap"),
     Column("low_utility", "Best plan at low: utility's own ({money}/year)", "money"),
     Column("low_customers", "Best plan at low: customers' ({money}/year)", "money"),
     Column("high_utility", "Best plan at high: utility's own ({money}/year)", "money"),

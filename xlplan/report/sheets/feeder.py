@@ -236,9 +236,9 @@ def _ways(lines: list[DrawnLine], goes_back: bool) -> list[tuple[str, ...]]:
     return ways
 
 
-def _label(bus: str, address: str) -> str:
-    """The name itself, which every program shows; by address if it could pass for a formula."""
-    return f"={address}" if bus.startswith("=") else bus
+def _label(bus: str) -> str:
+    """The name itself; a space before one that could pass for a formula."""
+    return f" {bus}" if bus.startswith("=") else bus
 
 
 def _chart(
@@ -271,8 +271,7 @@ def _chart(
                 )
         if look.word in used_buses:
             labels = tuple(
-                _label(bus.bus, buses.away(n, "bus")) if bus.states[i] == look.word else ""
-                for n, bus in enumerate(drawing.buses)
+                _label(bus.bus) if bus.states[i] == look.word else "" for bus in drawing.buses
             )
             dots.append(
                 charts.Dots(

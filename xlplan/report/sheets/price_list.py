@@ -21,28 +21,17 @@ SHEET_OF = {
     "device": "Device changes",
 }
 
+UNITS = ("storage", "generator")
 FIGURES = (
     # key, attribute, what it is, unit, look, kinds that have it
-    ("per_kw", "capital_per_kw", "capital per kW", "{money}/kW", "price", ("storage", "generator")),
+    ("per_kw", "capital_per_kw", "capital per kW", "{money}/kW", "price", UNITS),
     ("per_kwh", "capital_per_kwh", "capital per kWh", "{money}/kWh", "price", ("storage",)),
-    (
-        "site",
-        "capital_site",
-        "site cost, or cost of the measure",
-        "{money}",
-        "money",
-        tuple(SHEET_OF),
-    ),
-    ("grant", "grant_frac", "grant", "share of capital", "percent", tuple(SHEET_OF)),
+    ("site", "capital_site", "site cost", "{money}", "money", UNITS),
+    ("site", "capital_site", "cost", "{money}", "money", ("hardening", "device")),
+    ("grant", "grant_frac", "grant", "share of capital", "percent", (*UNITS, "hardening")),
     ("life", "life_years", "life", "years", "years", tuple(SHEET_OF)),
-    (
-        "om_rate",
-        "fixed_om_rate",
-        "fixed O&M per kW, or of the measure",
-        "{money}/year",
-        "price",
-        ("storage", "generator", "hardening"),
-    ),
+    ("om_rate", "fixed_om_rate", "fixed O&M", "{money}/year, kW", "price", UNITS),
+    ("om_rate", "fixed_om_rate", "fixed O&M", "{money}/year", "price", ("hardening",)),
 )
 
 
@@ -84,10 +73,10 @@ def write_prices(sheet: SafeSheet, prices: PriceList) -> None:
     title = "Prices and lives, as given in the study: change them, and the figures above follow"
     sheet.text(prices.top, 0, title, "section")
     for asset in prices.assets:
-        for key, attribute, label, unit, look, _ in FIGURES:
-            row = prices.row_of.get((asset.asset, key))
-            if row is None:
+        for key, attribute, label, unit, look, kinds in FIGURES:
+            if asset.kind not in kinds:
                 continue
+            row = prices.row_of[asset.asset, key]
             sheet.text(row, 0, f"{asset.asset}: {label}")
             sheet.text(row, 1, sheet.book.words(unit), "subtitle")
             sheet.number(row, VALUE_COL, getattr(asset, attribute), look, "input")

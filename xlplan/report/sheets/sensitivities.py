@@ -11,9 +11,9 @@ from xlplan.report.grid import Cell, Column, Formula, Grid
 from xlplan.report.looks import BLUE, ORANGE
 from xlplan.report.safe_book import SafeBook, SafeSheet
 from xlplan.report.sheets.absent import say_absent
-from xlplan.report.tables import REGRETS, SENSITIVITIES, SENSITIVITY_ROWS
+from xlplan.report.tables import REGRETS, SENSITIVITIES, SENSITIVITY_PARTS, SENSITIVITY_ROWS
 
-WIDTHS = (30, 15, 15, 15, 15, 15, 15, 14, 15, 15, 34, 34, 22, 15, 15, 15, 15)
+WIDTHS = (30, 15, 15, 15, 15, 15, 15, 14, 15, 15, 34, 34, 24)
 CHART_ROWS, ROWS_PER_BAR = 9, 2
 CHART_TOP = 5
 AS_GIVEN = "as given"
@@ -56,7 +56,10 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
     grid = Grid(SENSITIVITIES, base_row + 3, SENSITIVITY_ROWS, len(pairs))
     sheet.text(grid.top - 1, 0, "By assumption, the widest range first", "section")
     base_cell = f"$D${base_row + 1}"
-    grid.write(sheet, [_row(pair, grid, i, base, base_cell) for i, pair in enumerate(pairs)])
+    parts = Grid(SENSITIVITIES, grid.below + 2, SENSITIVITY_PARTS, len(pairs))
+    grid.write(sheet, [_row(pair, grid, parts, i, base, base_cell) for i, pair in enumerate(pairs)])
+    sheet.text(parts.top - 1, 0, "The same, the utility's own part and the customers'", "section")
+    parts.write(sheet, [_parts_row(pair) for pair in pairs])
     chart = charts.bars(
         book,
         "Yearly cost of the best plan against the study as given, sorted by range",
@@ -70,8 +73,8 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
     )
     alt = "Bars to both sides: change of the yearly cost at the low and high value of each row."
     sheet.chart(CHART_TOP, 0, chart, 1150, n_row * charts.PIXELS_PER_ROW - 10, alt)
-    row = _regrets(sheet, result, grid.below + 2)
-    sheet.page_breaks([grid.below + 2])
+    row = _regrets(sheet, result, parts.below + 2)
+    sheet.page_breaks([parts.below + 2])
     notes = (
         "The plan changes where another asset is bought or a size moves by more than 10 %. Kept "
         "plan no worse: the loss by keeping it is within its interval.",
@@ -101,7 +104,18 @@ def _pairs(cases: tuple[SensitivityCase, ...]) -> list[_Pair]:
     return pairs
 
 
-def _row(pair: _Pair, grid: Grid, i: int, base: float, base_cell: str) -> dict[str, Cell]:
+def _parts_row(pair: _Pair) -> dict[str, Cell]:
+    """The utility's own part and the customers' of the best plan, low and high."""
+    row: dict[str, Cell] = {"name": pair.parameter}
+    for side, case in (("low", pair.low), ("high", pair.high)):
+        row[f"{side}_utility"] = None if case is None else case.anew.costs.utility
+        row[f"{side}_customers"] = None if case is None else case.anew.costs.customers
+    return row
+
+
+def _row(
+    pair: _Pair, grid: Grid, parts: Grid, i: int, base: float, base_cell: str
+) -> dict[str, Cell]:
     def change(case: SensitivityCase | None, side: str) -> Cell:
         if case is None:
             return None
@@ -110,7 +124,7 @@ def _row(pair: _Pair, grid: Grid, i: int, base: float, base_cell: str) -> dict[s
     def total(case: SensitivityCase | None, side: str) -> Cell:
         if case is None:
             return None
-        text = f"={grid.here(i, f'{side}_utility')}+{grid.here(i, f'{side}_customers')}"
+        text = f"={parts.here(i, f'{side}_utility')}+{parts.here(i, f'{side}_customers')}"
         return Formula(text, case.anew.costs.total)
 
     low, high = pair.span(base)
@@ -129,10 +143,6 @@ def _row(pair: _Pair, grid: Grid, i: int, base: float, base_cell: str) -> dict[s
         "low_plan": None if pair.low is None else pair.low.changes,
         "high_plan": None if pair.high is None else pair.high.changes,
         "verdict": _verdict([c for c in (pair.low, pair.high) if c is not None]),
-        "low_utility": None if pair.low is None else pair.low.anew.costs.utility,
-        "low_customers": None if pair.low is None else pair.low.anew.costs.customers,
-        "high_utility": None if pair.high is None else pair.high.anew.costs.utility,
-        "high_customers": None if pair.high is None else pair.high.anew.costs.customers,
     }
 
 
