@@ -232,7 +232,10 @@ class PlanSolver:
         return limit_s if wish.limit_s is None else min(limit_s, wish.limit_s)
 
     def repriced(self, plan: SolvedPlan, price_list: int) -> SolvedPlan:
-        """A plan's figures at other prices: what is bought and how it runs stay as they are."""
+        """A plan's figures at other prices: what is bought and how it runs stay as they are.
+
+        Its bound is one for running these purchases; other purchases may cost less at these prices.
+        """
         study = self.choices.price_studies[price_list]
         result = plan.result
         purchases = price_purchases(study, plan.bought, self.device_changes)
@@ -241,6 +244,7 @@ class PlanSolver:
         costs = replace(result.costs, investment=investment, fixed_om=fixed_om)
         added = costs.total - result.costs.total
         low, high = result.cost_interval
+        bound = None if result.lower_bound is None else result.lower_bound + added
         return replace(
             plan,
             result=replace(
@@ -250,7 +254,7 @@ class PlanSolver:
                 capital_cost=net_capital(purchases),
                 capital_gross=sum(p.capital_gross for p in purchases),
                 cost_interval=(low + added, high + added),
-                lower_bound=None,
+                lower_bound=bound,
                 bound_upper=None,
                 gap_frac=None,
             ),
