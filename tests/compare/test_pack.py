@@ -313,3 +313,13 @@ def test_one_failure_loses_no_other_piece(study, monkeypatch):
     assert {f.value for f in maker.findings} == {"line hardening", "failure rates high"}
     (row,) = [f for f in maker.findings if f.value == "failure rates high"]
     assert row.key == "parameter"
+
+
+def test_a_budget_that_does_not_bind_leaves_the_curve_at_the_plan():
+    study = pack_study(capital_budget=1e6)
+    with solver(study) as one:
+        existing, _, best = one.solve()
+        points = PackMaker(one, existing, best).budget()
+    assert points[-1].plan == best.result
+    assert points[-1].budget == best.result.capital_cost
+    assert not any(point.is_study_budget for point in points)

@@ -234,7 +234,10 @@ class PackMaker:
             # The budget may bind, also where not all of it is spent: what would be without one?
             wish = replace(self._wish("Plan without a budget"), capital_budget=None)
             wide = self._solve(self.solver, wish)
-            if wide.result.costs.total > self.best.result.costs.total:
+            costs_more = wide.result.costs.total > self.best.result.costs.total
+            if costs_more or wide.result.capital_cost <= own:
+                # The budget does not bind: this was the same search again, and within its gap the
+                # curve ends at the plan that is recommended.
                 wide = self.best
         most = max(wide.result.capital_cost, spent)
         known = {0.0: self.existing, most: wide}
