@@ -46,6 +46,7 @@ def test_the_workbook_is_what_the_script_makes(script, tmp_path):
     assert cells(tmp_path / "made.xlsx") == cells(module.WORKBOOK)
 
 
+@pytest.mark.slow
 @pytest.mark.parametrize("script", SCRIPTS, ids=lambda s: s.parent.name)
 def test_the_example_solves(script, tmp_path):
     study = tmp_path / "study.xlsx"

@@ -676,3 +676,100 @@ def test_one_interrupt_keeps_the_plan(tmp_path):
     assert process.returncode == 3
     assert json.loads(twin.read_text(encoding="utf-8"))["status"] == "interrupted"
     assert (tmp_path / "study-results.xlsx").exists()
+
+
+# -- alternatives of the user's, and the comparison pack ------------------------------------------
+
+
+COMPARED: dict[str, list[dict[str, object]]] = {
+    "Alternatives": [
+        {"alternative": "Small money", "budget": 20_000},
+        {"alternative": "One battery", "kind": "fixed"},
+        {"alternative": "Recloser", "kind": "existing"},
+    ],
+    "Fixed purchases": [
+        {"alternative": "One battery", "asset": "battery", "kw": 50, "kwh": 100},
+    ],
+    "Device changes": [
+        {
+            "alternative": "Recloser",
+            "line": "L2",
+            "from_device": "recloser",
+            "capital_cost": 1000,
+            "life_years": 25,
+        }
+    ],
+    "Sensitivities": [
+        {"parameter": "storage cost", "low": 0.5, "high": 2},
+        {"parameter": "failure rates", "low": 0.5, "high": 2},
+    ],
+}
+
+
+@pytest.fixture(scope="module")
+def compared(tmp_path_factory: pytest.TempPathFactory) -> tuple[Path, dict[str, Any]]:
+    """The two villages with alternatives and sensitivities."""
+    study = write_study(tmp_path_factory.mktemp("compared") / "study.xlsx", 4, COMPARED)
+    twin = study.with_suffix(".json")
+    assert main(["solve", str(study), "--json", str(twin), "--quiet"]) == 0
+    return study.with_name("study-results.xlsx"), json.loads(twin.read_text(encoding="utf-8"))
+
+
+def test_own_alternatives_stand_in_the_twin(compared):
+    _, twin = compared
+    assert set(twin) == TOP_KEYS
+    names = [a["name"] for a in twin["alternatives"]]
+    assert names[3:] == ["Small money", "One battery", "Recloser"]
+    for plan in twin["alternatives"]:
+        assert set(plan) == PLAN_KEYS
+        cost = plan["annual_cost"]
+        assert cost["total"] == pytest.approx(sum(cost[p] for p in PARTS), abs=0.01)
+    assert plan_of(twin, "Small money")["capital_cost"] <= 20_000.01
+    # 50 kW at 100 and 100 kWh at 60.
+    assert plan_of(twin, "One battery")["capital_cost"] == pytest.approx(11_000.0)
+    recloser, existing = plan_of(twin, "Recloser"), plan_of(twin, EXISTING)
+    assert recloser["capital_cost"] == pytest.approx(1000.0)
+    yearly = 1000.0 * 0.05 / (1.0 - 1.05**-25)
+    assert recloser["annual_cost"]["investment"] == pytest.approx(yearly)
+    assert recloser["reliability"]["saifi"] <= existing["reliability"]["saifi"]
+    assert not [f for f in twin["findings"] if f["key"] == "alternative"]
+
+
+def test_pack_stands_in_the_twin(compared):
+    _, twin = compared
+    assert len(twin["budget"]) >= 8
+    totals = [point["annual_cost"] for point in twin["budget"]]
+    assert totals == sorted(totals, reverse=True)
+    assert totals[0] == pytest.approx(plan_of(twin, EXISTING)["annual_cost"]["total"])
+    assert [point["factor"] for point in twin["repair_time"]] == [0.5, 0.75, 1.0, 1.5, 2.0]
+    assert [row["measure"] for row in twin["hardening"]] == ["covered wire"]
+    sides = [(one["parameter"], one["side"]) for one in twin["sensitivities"]]
+    assert sides == [(p, s) for p in ("storage cost", "failure rates") for s in ("low", "high")]
+
+
+def test_pack_stands_in_the_workbook(compared):
+    """Every sheet has its table, with the figures of the twin, and all checks agree."""
+    path, twin = compared
+    book = openpyxl.load_workbook(path, data_only=True)
+    assert not [
+        cell.value
+        for sheet in book
+        for row in sheet.iter_rows()
+        for cell in row
+        if isinstance(cell.value, str) and cell.value.startswith("Not computed")
+    ]
+    words = [row[8] for row in book["Checks"].iter_rows(values_only=True)]
+    assert "FAIL" not in words
+    row = row_of(book["Line hardening"], 1)
+    assert row["Net value (EUR/year)"] == close(twin["hardening"][0]["in_plan"]["net_value"])
+    last = twin["budget"][-1]
+    rows = [r for r in book["Budget"].iter_rows(values_only=True) if r[0] == close(last["budget"])]
+    assert rows[0][2] == close(last["annual_cost"])
+
+
+def test_plan_only_leaves_the_pack_out(answer):
+    path, twin = answer
+    assert twin["hardening"] == twin["budget"] == twin["repair_time"] == twin["sensitivities"] == []
+    book = openpyxl.load_workbook(path, data_only=True)
+    for name in ("Line hardening", "Repair time", "Budget", "Sensitivities"):
+        assert "--plan-only" in book[name]["A4"].value

@@ -26,9 +26,16 @@ from rich.status import Status
 import xlplan
 from xlplan.base.errors import Finding, Level, PathError, StudyError, XlplanError
 from xlplan.base.units import frac_from_pct, hours_from_minutes, pct_from_frac
-from xlplan.compare.standing import Progress
+from xlplan.compare.plan_solver import Progress
 from xlplan.compare.study_result import StudyResult
-from xlplan.pipeline import Overrides, check_target, read_study, solve_study, write_answer
+from xlplan.pipeline import (
+    Overrides,
+    check_target,
+    read_study,
+    savepoint_path,
+    solve_study,
+    write_answer,
+)
 from xlplan.report.target import replace_whole
 from xlplan.workbook.template import write_template
 
@@ -115,9 +122,17 @@ def build_parser() -> argparse.ArgumentParser:
     solve.add_argument("--workers", type=_count, metavar="N", help="processes to use")
     solve.add_argument("--seed", type=_whole, metavar="N", help="seed of the random numbers")
     solve.add_argument(
-        "--plan-only", action="store_true", help="leave out the study's own alternatives"
+        "--plan-only",
+        action="store_true",
+        help="leave out the study's own alternatives, sensitivities and other comparisons",
     )
     solve.add_argument("--force", action="store_true", help="replace results that are there")
+    solve.add_argument(
+        "--resume", action="store_true", help="go on from a stopped run of the same study"
+    )
+    solve.add_argument(
+        "--memory", type=_positive, metavar="GIB", help="memory to use at most (default: half)"
+    )
     solve.add_argument("--quiet", action="store_true", help="print the results' path only")
     solve.add_argument("--log", type=Path, metavar="FILE", help="write a log of the run")
     solve.set_defaults(run=_solve)
@@ -188,10 +203,17 @@ def _solve(options: argparse.Namespace) -> int:
         seed=options.seed,
         workers=options.workers,
         plan_only=options.plan_only,
+        resume=options.resume,
+        memory_gib=options.memory,
     )
     with _Interrupt() as interrupt, _Display(options.quiet) as display:
         result = solve_study(
-            study, overrides, _cores(), display.show, should_stop=lambda: interrupt.is_asked
+            study,
+            overrides,
+            _cores(),
+            display.show,
+            should_stop=lambda: interrupt.is_asked,
+            results_path=output,
         )
         display.show(Progress("", "writing"))
         written = write_answer(result, study, output, options.json, options.force)
@@ -200,6 +222,8 @@ def _solve(options: argparse.Namespace) -> int:
         print_summary(result)
         if written != output:
             print(f"'{output}' is there already, so the results have another name:")
+        if result.status != "gap reached" and savepoint_path(output).exists():
+            print(f"Stopped before the target; run again with --resume to go on ({output.name}).")
     print(written)
     return DONE if result.status == "gap reached" else STOPPED
 

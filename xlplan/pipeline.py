@@ -8,11 +8,17 @@ from collections.abc import Callable
 from dataclasses import dataclass, replace
 from pathlib import Path
 
+import xlplan
 from xlplan.base.codes import Code
 from xlplan.base.errors import Finding, Level, StudyError
-from xlplan.base.units import pct_from_frac
+from xlplan.base.memory import DEFAULT_SHARE, machine_bytes
+from xlplan.base.units import BYTES_PER_GIB, pct_from_frac
 from xlplan.compare.assemble import assemble
-from xlplan.compare.standing import Progress, SolveOptions, StandingAlternatives
+from xlplan.compare.own import solve_own
+from xlplan.compare.pack import PackMaker, price_studies_of
+from xlplan.compare.pack_result import Pack
+from xlplan.compare.plan_solver import Progress, SolveOptions
+from xlplan.compare.standing import StandingAlternatives, against
 from xlplan.compare.study_result import StudyResult
 from xlplan.network.feeder import Feeder, build_feeder
 from xlplan.network.topology import check_no_load_voltage, check_radial
@@ -20,6 +26,7 @@ from xlplan.outages.checks import check_islands, check_rounded_times
 from xlplan.outages.window_model import WindowModel, build_window_models
 from xlplan.report.json_twin import write_json
 from xlplan.report.writer import check_target, write_results
+from xlplan.solve.savepoint import Found, Savepoint
 from xlplan.study.build import check_and_build
 from xlplan.study.study import Study
 from xlplan.workbook.reader import read_workbook
@@ -86,6 +93,8 @@ class Overrides:
     seed: int | None = None
     workers: int | None = None
     plan_only: bool = False
+    resume: bool = False
+    memory_gib: float | None = None
 
 
 def solve_options(study: Study, overrides: Overrides, workers: int) -> SolveOptions:
@@ -102,7 +111,21 @@ def solve_options(study: Study, overrides: Overrides, workers: int) -> SolveOpti
         samples=settings.samples,
         seed=settings.random_seed if overrides.seed is None else overrides.seed,
         workers=workers,
+        memory_bytes=allowed_memory(overrides.memory_gib),
     )
+
+
+def allowed_memory(asked_gib: float | None) -> int | None:
+    """Bytes that a run may use: what was asked for, or a share of the machine's; None: no limit."""
+    if asked_gib is not None:
+        return int(asked_gib * BYTES_PER_GIB)
+    machine = machine_bytes()
+    return None if machine is None else int(DEFAULT_SHARE * machine)
+
+
+def savepoint_path(results_path: Path) -> Path:
+    """File beside the results in which a run keeps what it has learnt."""
+    return results_path.with_name(f"{results_path.stem}.unfinished.npz")
 
 
 def solve_study(
@@ -111,6 +134,7 @@ def solve_study(
     cores: int = 1,
     on_progress: Callable[[Progress], None] | None = None,
     should_stop: Callable[[], bool] | None = None,
+    results_path: Path | None = None,
 ) -> StudyResult:
     """Reads, checks and solves a study.
 
@@ -121,6 +145,7 @@ def solve_study(
     cores : int, processes to use where ``overrides`` names no number
     on_progress : told about every step
     should_stop : asked now and then; True ends the search with the best plan so far
+    results_path : Path or None, beside which the run keeps what it learns until it is done
 
     Returns
     -------
@@ -136,28 +161,72 @@ def solve_study(
     if not checked.is_usable or checked.study is None or checked.feeder is None:
         raise StudyError("The study cannot be used as it is.", checked.findings)
     findings = list(checked.findings)
-    if checked.study.alternatives and not overrides.plan_only:
-        findings.append(_unsolved_alternatives(checked.study))
     read = time.monotonic()
     workers = overrides.workers or useful_workers(checked.windows, cores)
     options = solve_options(checked.study, overrides, workers)
+    savepoint = None
+    if results_path is not None:
+        savepoint = Savepoint(
+            savepoint_path(results_path), f"{xlplan.__version__} {checked.study.fingerprint}"
+        )
+    prices = () if overrides.plan_only else price_studies_of(checked.study)
     solver = StandingAlternatives(
-        checked.study, checked.feeder, checked.windows, options, on_progress, should_stop
+        checked.study,
+        checked.feeder,
+        checked.windows,
+        options,
+        on_progress,
+        should_stop,
+        price_studies=prices,
+        savepoint=savepoint,
+        resumes=overrides.resume,
     )
-    try:
+    if savepoint is not None and overrides.resume:
+        findings.append(_what_was_saved(savepoint, solver.method))
+    pack = Pack()
+    with solver:
         plans = solver.solve()
-    finally:
-        solver.close()
+        if not overrides.plan_only:
+            existing, _, best = plans
+            own = solve_own(solver)
+            plans += tuple(against(plan, existing) for plan in own.plans)
+            maker = PackMaker(solver, existing, best, own.plans)
+            pack = maker.make()
+            findings += [*own.findings, *maker.findings]
+    if savepoint is not None and plans[2].result.status == "gap reached":
+        savepoint.remove()
     return assemble(
         checked.study,
         checked.raw,
+        checked.feeder,
         checked.windows,
         options,
         plans,
+        pack,
         findings,
         started_at,
         read - begin,
         time.monotonic() - read,
+    )
+
+
+def _what_was_saved(savepoint: Savepoint, method: str) -> Finding:
+    """Says whether the run goes on from an earlier one."""
+    name = f"'{savepoint.path}'"
+    message, level = {
+        Found.MATCHING: (f"This run goes on from the work kept in {name}.", Level.NOTE),
+        Found.NOTHING: (f"There is no {name} to go on from: started afresh.", Level.NOTE),
+        Found.OTHER_STUDY: (
+            f"The work kept in {name} is of another study, or of this one before it was changed: "
+            "started afresh.",
+            Level.WARNING,
+        ),
+        Found.UNREADABLE: (f"{name} cannot be read: started afresh.", Level.WARNING),
+    }[savepoint.found]
+    if method == "tree":
+        message, level = "The whole tree is solved in one go: nothing to go on from.", Level.NOTE
+    return Finding(
+        level=level, code=Code.STOPPED_RUN, sheet="Run", cell="", key="", value="", message=message
     )
 
 
@@ -183,21 +252,6 @@ def _unused_risk_weight(study: Study) -> Finding:
         value=f"{pct_from_frac(study.settings.risk_weight_frac):g}",
         message="This version minimises the expected cost; the weight on risk has no effect.",
         hint="The results show the risk of each plan.",
-    )
-
-
-def _unsolved_alternatives(study: Study) -> Finding:
-    """Says what this version leaves out."""
-    first = study.alternatives[0].origin
-    return Finding(
-        level=Level.NOTE,
-        code=Code.NOT_USED,
-        sheet=first.sheet,
-        cell=first.cell("alternative"),
-        key="alternative",
-        value=study.alternatives[0].alternative,
-        message="Alternatives of your own, device changes and sensitivities are checked, but this "
-        "version solves the three standing alternatives only.",
     )
 
 

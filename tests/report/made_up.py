@@ -12,7 +12,23 @@ import numpy as np
 
 from xlplan.base.errors import Finding, Level
 from xlplan.base.names import EXISTING, IGNORING_OUTAGES, LEAST_COST
-from xlplan.compare.study_result import InputEcho, StudyResult
+from xlplan.compare.pack_result import (
+    BudgetPoint,
+    HardeningValue,
+    HourFaster,
+    Pack,
+    Regret,
+    RepairPoint,
+    SensitivityCase,
+    Worth,
+)
+from xlplan.compare.study_result import (
+    DrawnBus,
+    DrawnLine,
+    FeederDrawing,
+    InputEcho,
+    StudyResult,
+)
 from xlplan.evaluate.ac_results import (
     AcCheck,
     AcStretch,
@@ -28,12 +44,14 @@ from xlplan.evaluate.results import (
     ClassResult,
     ConvergenceRow,
     CostParts,
+    EventSpread,
     Indices,
     PlanResult,
     Purchase,
     Risk,
     Trace,
     WindowResult,
+    WorstEvent,
 )
 
 RATE = 0.04
@@ -93,6 +111,164 @@ def purchases(bought: dict[str, tuple[float, float]], rate: float) -> tuple[Purc
             )
         )
     return tuple(rows)
+
+
+def device(capital: float, rate: float) -> Purchase:
+    """A recloser that an alternative adds, with a life of 25 years."""
+    factor = crf(25.0, rate)
+    return Purchase(
+        asset="=L9: recloser at the from end",
+        kind="device",
+        place="L9",
+        kw=0.0,
+        kwh=0.0,
+        is_bought=True,
+        max_new_kw=0.0,
+        max_new_kwh=0.0,
+        capital_per_kw=0.0,
+        capital_per_kwh=0.0,
+        capital_site=capital,
+        grant_frac=0.0,
+        life_years=25.0,
+        crf=factor,
+        fixed_om_rate=0.0,
+        capital_gross=capital,
+        capital_net=capital,
+        investment=capital * factor,
+        fixed_om=0.0,
+    )
+
+
+def spread(scale: float) -> EventSpread:
+    """Figures of one event, rising evenly with the percentile."""
+    percents = (1.0, 5.0, 25.0, 50.0, 75.0, 95.0, 99.0)
+    return EventSpread(
+        mean=0.5 * scale,
+        cvar95=0.975 * scale,
+        largest=scale,
+        percentiles=tuple((p, scale * p / 100.0) for p in percents),
+        bins=tuple((0.1 * i * scale, 0.1 * (i + 1) * scale, 0.3) for i in range(10)),
+    )
+
+
+def made_up_pack(base: PlanResult, best: PlanResult, rate: float) -> Pack:
+    """Hardening, budget, repair time and sensitivities around two plans."""
+    prices = {a.asset: a for a in best.purchases}
+    hardening = []
+    for name, value, is_in_plan in (
+        ("Tree wire, ridge", 9_000.0, True),
+        ("Cable, creek", 900.0, False),
+    ):
+        asset = next(a for a in ASSETS if a[0] == name)
+        net = asset[7] * (1.0 - asset[8])
+        hardening.append(
+            HardeningValue(
+                measure=name,
+                lines=tuple(str(asset[2]).split(", ")),
+                failures_avoided_frac=0.6,
+                capital_net=net,
+                investment=net * crf(asset[9], rate),
+                fixed_om=asset[10],
+                is_in_plan=is_in_plan,
+                alone=Worth(
+                    1.4 * value,
+                    0.4 * value,
+                    value,
+                    (1.3 * value, 1.5 * value),
+                    410.0,
+                    2e6,
+                    2e6 - value,
+                ),
+                in_plan=Worth(
+                    value, 100.0, value - 100.0, (-50.0, 2.0 * value), 300.0, 2e6, 2e6 - value
+                ),
+                without=() if is_in_plan else ("Tree wire, ridge",),
+            )
+        )
+    assert set(prices) >= {row.measure for row in hardening}
+    points = []
+    for i in range(8):
+        budget = best.capital_cost * i / 7.0
+        plan = (
+            base
+            if i < 3
+            else best
+            if i == 7
+            else made_up_plan(
+                f"Budget {i}",
+                "optimise",
+                {"BAT-NORTH": (50.0 * i, 100.0 * i)},
+                1.0 - 0.08 * i,
+                rate,
+            )
+        )
+        saving = base.costs.total - plan.costs.total
+        is_carried = i in (1, 2)
+        points.append(
+            BudgetPoint(budget, plan, saving, (saving - 9e3, saving + 9e3), is_carried, i == 5)
+        )
+    repair = []
+    for factor in (0.5, 0.75, 1.0, 1.5, 2.0):
+        kept = best
+        if factor != 1.0:
+            bought = {a.asset: (a.kw, a.kwh) for a in best.purchases if a.is_bought}
+            kept = made_up_plan("Kept", "fixed", bought, 0.42 * factor, rate)
+        repair.append(RepairPoint(factor, 4.0 * factor, 12.0, kept, kept, 0.0, (-90.0, 80.0)))
+    cases = []
+    for parameter, values in (("=failure rates", (0.5, 2.0)), ("discount rate", (-2.0, 2.0))):
+        for is_high in (False, True):
+            value = values[is_high]
+            share = 0.42 * (value if value > 0.0 and value != 2.0 else 1.3)
+            bought = {"BAT-NORTH": (420.5, 1261.5)}
+            anew = made_up_plan("Anew", "optimise", bought, share, rate)
+            kept = made_up_plan("Kept", "fixed", {"BAT-NORTH": (500.0, 1261.5)}, share, rate)
+            loss = kept.costs.total - anew.costs.total
+            cases.append(
+                SensitivityCase(
+                    parameter=parameter,
+                    is_high=is_high,
+                    value=value,
+                    kept=kept,
+                    anew=anew,
+                    loss=loss,
+                    loss_interval=(loss - 10.0, loss + 10.0),
+                    does_change=is_high,
+                    changes="=no GEN-B09" if is_high else "the same plan",
+                    totals=((EXISTING, base.costs.total + value), (LEAST_COST, kept.costs.total)),
+                )
+            )
+    return Pack(
+        is_asked=True,
+        plan_name=LEAST_COST,
+        hardening=tuple(hardening),
+        budget=tuple(points),
+        knee=4,
+        repair_time=tuple(repair),
+        hour_faster=HourFaster(5_100.0, (4_000.0, 6_000.0), 0.75, 1.0),
+        sensitivities=tuple(cases),
+        regrets=(
+            Regret(LEAST_COST, best.costs.total, 10.0, "as given", 1.0),
+            Regret(EXISTING, base.costs.total, 90_000.0, "as given", 1.0),
+        ),
+    )
+
+
+def made_up_drawing() -> FeederDrawing:
+    """Four buses in a fork, in normal service and in one outage."""
+    buses = (
+        DrawnBus("=S", 0.0, 0.0, ("live", "live"), "source"),
+        DrawnBus("B01", 1.0, 0.0, ("live", "dead"), "load 180 kW"),
+        DrawnBus("B02", 2.0, 0.0, ("live", "island"), ""),
+        DrawnBus("B03", 2.0, -1.0, ("live", "live"), ""),
+    )
+    lines = (
+        DrawnLine("L1", "=S", "B01", False, ("live", "dead")),
+        DrawnLine("L2", "B01", "B02", False, ("live", "dead")),
+        DrawnLine("L3", "B01", "B03", False, ("live", "dead")),
+        DrawnLine("T1", "=S", "B03", True, ("open", "live")),
+    )
+    stages, notes = ("Normal service", "Worst: L1, repair"), ("All is fed.", "=B01 is dead.")
+    return FeederDrawing(buses, lines, stages, notes, True)
 
 
 def trace(title: str, n_period: int, outage: tuple[int, int] | None) -> Trace:
@@ -211,7 +387,9 @@ def made_up_plan(
 ) -> PlanResult:
     """One alternative; ``outage_share`` scales everything that outages cost."""
     assets = purchases(bought, rate)
-    investment = sum(a.investment for a in assets) + device_capital * crf(25.0, rate)
+    if device_capital > 0.0:
+        assets = (*assets, device(device_capital, rate))
+    investment = sum(a.investment for a in assets)
     costs = CostParts(
         investment=investment,
         fixed_om=sum(a.fixed_om for a in assets),
@@ -238,8 +416,8 @@ def made_up_plan(
         kind=kind,
         description="Invented.",
         costs=costs,
-        capital_cost=sum(a.capital_net for a in assets) + device_capital,
-        capital_gross=sum(a.capital_gross for a in assets) + device_capital,
+        capital_cost=sum(a.capital_net for a in assets),
+        capital_gross=sum(a.capital_gross for a in assets),
         lower_bound=None if gap_frac is None else total + half - gap_frac * total,
         cost_interval=(total - half, total + half),
         gap_frac=gap_frac,
@@ -284,7 +462,26 @@ def made_up_plan(
             for (w, _), share in zip(WINDOWS, window_shares, strict=True)
             for i in range(5)
         ),
-        risk=Risk(total, 0.98 * total, 1.21 * total, 1.34 * total, 2000),
+        risk=Risk(
+            total,
+            0.98 * total,
+            1.21 * total,
+            1.34 * total,
+            2000,
+            cost_percentiles=((5.0, 0.9 * total), (50.0, 0.98 * total), (95.0, 1.21 * total)),
+            eens_percentiles=((5.0, 0.0), (50.0, 0.8 * eens), (95.0, 3.0 * eens)),
+            eens_mean=eens,
+            eens_cvar95=3.5 * eens,
+            cost_bins=((0.9 * total, total, 0.7), (total, 1.4 * total, 0.3)),
+            event_cost=spread(50_000.0 * outage_share),
+            event_eens=spread(4_000.0 * outage_share),
+        ),
+        worst_events=tuple(
+            WorstEvent(
+                "storm", f"storm {i}", f"=L{i}", "14:00", 6.0, 0.2, 900.0 / i, 400.0, 7e3, "=B01"
+            )
+            for i in range(1, 13)
+        ),
         interruption_own_clock=costs.interruption * 0.99,
         burnt_kwh=120.0,
         normal_shed_kwh=0.0,
@@ -347,6 +544,17 @@ def made_up_result(rate: float = RATE, **changes: object) -> StudyResult:
         device_capital=18_000.0,
         base_total=total,
     )
+    base, naive, best, own = (
+        dataclasses.replace(
+            plan,
+            difference_to_best=plan.costs.total - best.costs.total,
+            difference_to_best_interval=(
+                plan.costs.total - best.costs.total - 5.0,
+                plan.costs.total - best.costs.total + 5.0,
+            ),
+        )
+        for plan in (base, naive, best, own)
+    )
     result = StudyResult(
         study_name="=1+1",
         prepared_by="@SUM(A1)",
@@ -390,5 +598,7 @@ def made_up_result(rate: float = RATE, **changes: object) -> StudyResult:
         read_seconds=1.5,
         solve_seconds=240.0,
         write_seconds=0.7,
+        pack=made_up_pack(base, best, rate),
+        feeder=made_up_drawing(),
     )
     return dataclasses.replace(result, **changes)  # type: ignore[arg-type]

@@ -10,6 +10,7 @@ from typing import Any
 import pytest
 
 from xlplan.base.errors import ResultFileError
+from xlplan.compare.pack_result import Pack
 from xlplan.compare.study_result import StudyResult
 from xlplan.report.json_twin import json_document, write_json
 
@@ -122,7 +123,6 @@ def test_values(result: StudyResult) -> None:
     naive = document["alternatives"][1]
     assert naive["lower_bound"] is None
     assert naive["gap_pct"] is None
-    assert document["hardening"] == []
 
 
 def test_voltages(result: StudyResult) -> None:
@@ -138,6 +138,26 @@ def test_voltages(result: StudyResult) -> None:
     dead = next(row for row in rows if row["bus"] == "B04" and row["operation"] != "normal service")
     assert dead["lowest_ac_pu"] is None
     assert dead["periods"] == 0
+
+
+def test_pack(result: StudyResult) -> None:
+    """The comparison pack: its lists, and no device change among the purchases."""
+    document = json_document(result)
+    ridge = document["hardening"][0]
+    assert ridge["measure"] == "Tree wire, ridge"
+    assert ridge["in_plan"]["value"] == 9_000.0
+    assert ridge["in_plan"]["net_value"] == pytest.approx(9_000.0 - ridge["yearly_cost"])
+    assert len(document["budget"]) == 8
+    assert document["budget"][0]["purchases"] == []
+    assert [point["factor"] for point in document["repair_time"]] == [0.5, 0.75, 1.0, 1.5, 2.0]
+    sides = [(one["parameter"], one["side"]) for one in document["sensitivities"]]
+    assert sides[:2] == [("=failure rates", "low"), ("=failure rates", "high")]
+    own = document["alternatives"][3]
+    assert {one["type"] for one in own["purchases"]} == {"storage", "generator", "hardening"}
+    assert own["capital_cost"] == pytest.approx(0.8 * (40e3 + 248e3 + 864e3) + 260e3 + 18e3)
+    empty = json_document(dataclasses.replace(result, pack=Pack()))
+    for key in ("hardening", "repair_time", "budget", "sensitivities"):
+        assert empty[key] == []
 
 
 def test_numbers_that_are_not_known_are_null(result: StudyResult, tmp_path: Path) -> None:

@@ -36,13 +36,18 @@ PROFILE = """<?xml version="1.0" encoding="UTF-8"?>
 def books(workbook_path: Path, tmp_path_factory: pytest.TempPathFactory) -> dict[str, Path]:
     """The workbook, one with a wrong stored value, one at 0 %, one with the rate cell changed."""
     folder = tmp_path_factory.mktemp("books")
-    paths = {name: folder / f"{name}.xlsx" for name in ("planted", "zero", "changed")}
+    paths = {name: folder / f"{name}.xlsx" for name in ("planted", "zero", "changed", "dearer")}
     rewrite(
         workbook_path, paths["planted"], 2, r"(<f>SUM\([^<]*</f><v>)[^<]*(</v>)", r"\g<1>999\g<2>"
     )
     rewrite(
         workbook_path, paths["changed"], 2, r'(<c r="B4"[^>]*><v>)0\.04(</v>)', r"\g<1>0.09\g<2>"
     )
+    sheet = openpyxl.load_workbook(workbook_path)["Alternatives"]
+    label = "BAT-NORTH: capital per kWh"
+    row = next(cell.row for cell in sheet["A"] if cell.value == label)
+    cell = rf'(<c r="C{row}"[^>]*><v>)270(</v>)'
+    rewrite(workbook_path, paths["dearer"], 2, cell, r"\g<1>370\g<2>")
     write_results(made_up_result(rate=0.0), paths["zero"], False, folder / "study.xlsx")
     shutil.copy(workbook_path, folder / "plain.xlsx")
     return {**paths, "plain": folder / "plain.xlsx"}
@@ -141,8 +146,60 @@ def test_discount_rate_moves_the_totals(recalculated: dict[str, Any]) -> None:
     factor = sum(1.09**-year for year in range(1, 21))
     assert rows["Present value of the total yearly cost"][4] == pytest.approx(total * factor)
     checks = [row for row in values["Checks"].iter_rows(values_only=True) if row[8] == "CHANGED"]
-    # The three alternatives that buy something.
-    assert [row[1] for row in checks] == ["Total of the Alternatives sheet"] * 3
+    # The three alternatives that buy something; the plan's own total stands on Repair time, too.
+    names = [row[1] for row in checks]
+    assert names == ["Total of the Alternatives sheet"] * 3 + ["Repair times as given"]
     assert values["Checks"]["B4"].value.startswith("LOOK")
     # The workbook's own sums still agree.
     assert "FAIL" not in [row[8] for row in values["Checks"].iter_rows(values_only=True)]
+
+
+def test_discount_rate_moves_worth_and_ratios(recalculated: dict[str, Any]) -> None:
+    """Net value of a measure and the benefit-cost ratio at 9 %, by hand from prices and lives."""
+    values = recalculated["changed"]
+    rows = list(values["Line hardening"].iter_rows(values_only=True))
+    tree = next(row for row in rows if row[1] == "Tree wire, ridge")
+    # 88,000 less half of it as a grant, 40 years, 900 a year of O&M; worth 9,000 a year.
+    own = 44_000.0 * crf(40.0, 0.09) + 900.0
+    assert tree[6] == pytest.approx(own)
+    assert tree[12] == pytest.approx(9_000.0 - own)
+    assert tree[13] == pytest.approx(44_000.0 / (9_000.0 - 900.0))
+    assert tree[15] == "undecided"
+    plans = made_up_result().plans
+    life = {asset[0]: asset[9] for asset in ASSETS}
+    net = {"BAT-NORTH": 408_768.0, "GEN-B09": 155_000.0, "Tree wire, ridge": 44_000.0}
+    wanted = sum(amount * crf(life[name], 0.09) for name, amount in net.items())
+    saved = plans[0].costs.total - (plans[2].costs.total - plans[2].costs.investment)
+    rows = {row[0]: row for row in values["Alternatives"].iter_rows(values_only=True) if row[0]}
+    assert rows["Benefit-cost ratio"][4] == pytest.approx(saved / wanted)
+    # Device changes follow the rate as well: 18,000 over 25 years in the last alternative.
+    own_net = {
+        "BAT-NORTH": 0.8 * (40_000.0 + 800.0 * 310.0 + 3200.0 * 270.0),
+        "Cable, creek": 260e3,
+    }
+    wanted = sum(amount * crf(life[name], 0.09) for name, amount in own_net.items())
+    wanted += 18_000.0 * crf(25.0, 0.09)
+    assert rows["Investment"][5] == pytest.approx(wanted)
+
+
+def test_a_price_on_the_alternatives_sheet_moves_the_totals(recalculated: dict[str, Any]) -> None:
+    """100 a kWh more on 1261.5 kWh, less 20 % of grant, over 15 years at 4 %."""
+    values = recalculated["dearer"]
+    extra = 100.0 * 1261.5
+    more = 0.8 * extra * crf(15.0)
+    rows = {row[0]: row for row in values["Alternatives"].iter_rows(values_only=True) if row[0]}
+    plan = made_up_result().plans[2]
+    assert rows["Capital before grants"][4] == pytest.approx(plan.capital_gross + extra)
+    assert rows["Capital after grants"][4] == pytest.approx(plan.capital_cost + 0.8 * extra)
+    assert rows["Total yearly cost"][4] == pytest.approx(plan.costs.total + more)
+    factor = sum(1.04**-year for year in range(1, 21))
+    present = (plan.costs.total + more) * factor
+    assert rows["Present value of the total yearly cost"][4] == pytest.approx(present)
+    base = made_up_result().plans[0].costs.total
+    saving = base - (plan.costs.total - plan.costs.investment)
+    ratio = saving / (plan.costs.investment + more)
+    assert rows["Benefit-cost ratio"][4] == pytest.approx(ratio)
+    payback = (plan.capital_cost + 0.8 * extra) / saving
+    assert rows["Simple payback, customers included"][4] == pytest.approx(payback)
+    summary = {row[0]: row for row in values["Summary"].iter_rows(values_only=True) if row[0]}
+    assert ratio in [pytest.approx(v) for v in summary[plan.name] if isinstance(v, float)]

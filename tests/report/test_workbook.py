@@ -12,6 +12,7 @@ from typing import Any
 import openpyxl
 import pytest
 
+from xlplan.compare.pack_result import Pack
 from xlplan.compare.study_result import StudyResult
 from xlplan.report.json_twin import json_document
 from xlplan.report.writer import write_results
@@ -22,9 +23,15 @@ SHEETS = [
     "Summary",
     "Alternatives",
     "Plan",
+    "Line hardening",
+    "Repair time",
+    "Budget",
+    "Sensitivities",
     "Reliability",
+    "Risk",
     "Operation",
     "Voltages",
+    "Feeder",
     "Convergence",
     "Checks",
     "Assumptions",
@@ -263,13 +270,18 @@ def test_charts_say_what_they_show(workbook_path: Path) -> None:
         charts = [n for n in package.namelist() if n.startswith("xl/charts/chart")]
         texts = [package.read(name).decode() for name in charts]
     tags = re.findall(r"<xdr:cNvPr [^>]*>", frames)
-    assert len(tags) == len(charts) == 11
+    assert len(tags) == len(charts) == 22
     assert all(re.search(r'descr="[^"]{30,}"', tag) for tag in tags)
     for text in texts:
         titles = re.findall(r"<a:t>(.*?)</a:t>", text)
+        if any("Normal service" in t or "Worst: L1" in t for t in titles):
+            # A drawing has no axes, and its names are texts of their own.
+            assert "B01" in titles
+            continue
         assert len(titles) >= 2, titles
         assert any(
-            re.search(r"\((crowns/year|h/year|kWh/year|kW|%|s|p.u.)\)", t) for t in titles
+            re.search(r"\((crowns/year|crowns|h/year|kWh/year|kWh|kW|%|s|p.u.)\)", t)
+            for t in titles
         ), titles
         assert text.count("<c:valAx>") <= 2
     assert sum('<c:crosses val="max"/>' in text for text in texts) == 0
@@ -372,10 +384,13 @@ def test_bare_study_can_be_written(tmp_path: Path) -> None:
     result = dataclasses.replace(
         full, plans=(bare, bare, best), checks=(), findings=(), inputs=(), started_at="today"
     )
+    result = dataclasses.replace(result, pack=Pack(), feeder=None)
     _, values = read(write_results(result, tmp_path / "o.xlsx", False, tmp_path / "s.xlsx"))
     assert values.sheetnames == SHEETS
     assert values["Operation"]["A4"].value == "The run kept no trace of operation."
     assert values["Voltages"]["A4"].value == "LOOK: no plan was checked by an AC power flow."
+    for name in ("Line hardening", "Repair time", "Budget", "Sensitivities"):
+        assert "--plan-only" in values[name]["A4"].value
 
 
 def test_recommended_may_be_the_existing_feeder(tmp_path: Path) -> None:

@@ -126,9 +126,7 @@ def test_upper_bound_does_not_depend_on_good_cuts():
         root_ = graph.roots[0]
         follower = engine._follower
         # No cut was ever made: the nodes think that nothing comes after.
-        found = inner_bound(
-            graph, follower, [x], [state_of(root_, x)], engine.solve_nodes, 10_000
-        )
+        found = inner_bound(graph, follower, [x], [state_of(root_, x)], engine.solve_nodes, 10_000)
         exact = engine.run(1e-8, fixed_x=x)
     assert exact.first_stage_cost + found.values[0] >= exact.lower_bound - 1e-7
 

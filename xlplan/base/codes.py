@@ -56,6 +56,7 @@ class Code(StrEnum):
     NOT_A_TIME = "not a time"  # a value that is no date, time or number
     NOT_A_YEAR = "not a year"  # windows that do not make up a year
     NOT_CONNECTED = "not connected"  # a bus that the source does not reach
+    NOT_SOLVED = "not solved"  # an alternative without a result
     NOT_USED = "not used"  # a value that has no effect
     NOT_WHOLE_PERIODS = "not whole periods"  # a window that ends within a period
     NOT_WHOLE = "not whole"  # a whole number is needed
@@ -98,6 +99,7 @@ class Code(StrEnum):
     START_BELOW_LOWEST = "start below lowest"  # a charge at the start below the lowest charge
     START_NOT_FOUND = "start not found"  # a window that starts at no time of Profiles
     STEP_TOO_LARGE = "step too large"  # a size step above the size limit
+    STOPPED_RUN = "stopped run"  # work of an earlier run that was stopped
     STORED_ENERGY_CHEAP = "stored energy cheap"  # a price at which it pays to drain the stores
     SWITCHING_LONG = "switching long"  # switching that outlasts the repair
     TEXT_NUMBER = "text number"  # a number stored as text

@@ -13,6 +13,8 @@ HOURS_PER_YEAR = 8760.0
 
 MINUTES_PER_HOUR = 60.0
 
+BYTES_PER_GIB = 1024.0**3
+
 
 def frac_from_pct(pct: float) -> float:
     """Fraction from percent."""

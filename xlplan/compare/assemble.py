@@ -5,14 +5,20 @@ from __future__ import annotations
 import importlib.metadata
 import platform
 from collections.abc import Sequence
+from dataclasses import replace
 
 import xlplan
 from xlplan.base.errors import Finding
 from xlplan.base.names import EXISTING, IGNORING_OUTAGES, LEAST_COST
+from xlplan.compare.drawing import draw_feeder
 from xlplan.compare.echo import echo_inputs
 from xlplan.compare.history import history_checks, peak_kw
-from xlplan.compare.standing import SolvedPlan, SolveOptions
+from xlplan.compare.pack_result import Pack
+from xlplan.compare.plan_solver import SolvedPlan, SolveOptions
+from xlplan.compare.standing import CENT
 from xlplan.compare.study_result import StudyResult
+from xlplan.evaluate.results import PlanResult
+from xlplan.network.feeder import Feeder
 from xlplan.outages.window_model import WindowModel
 from xlplan.study.study import Study
 from xlplan.workbook.tables import RawStudy
@@ -24,9 +30,11 @@ LIBRARIES = ("highspy", "pulp", "numpy", "pandas", "openpyxl", "xlsxwriter")
 def assemble(
     study: Study,
     raw: RawStudy,
+    feeder: Feeder,
     windows: Sequence[WindowModel],
     options: SolveOptions,
     plans: Sequence[SolvedPlan],
+    pack: Pack,
     findings: Sequence[Finding],
     started_at: str,
     read_seconds: float,
@@ -36,9 +44,10 @@ def assemble(
 
     Parameters
     ----------
-    study, raw, windows : what was solved, and as typed
+    study, raw, feeder, windows : what was solved, and as typed
     options : SolveOptions in force
     plans : sequence of SolvedPlan; the standing alternatives first
+    pack : Pack, what would change the least-cost plan
     findings : sequence of Finding, of reading and checking
     started_at : local time as text
     read_seconds, solve_seconds : float
@@ -51,6 +60,7 @@ def assemble(
     best, blind = by_name[LEAST_COST], by_name[IGNORING_OUTAGES]
     value = blind.result.costs.total - best.result.costs.total
     half = blind.follow.difference_half_width(best.follow)
+    recommended = cheapest(plans, best, study.settings.capital_budget).result.name
     versions = [("xlplan", xlplan.__version__), ("Python", platform.python_version())]
     versions += [(name, importlib.metadata.version(name)) for name in LIBRARIES]
     return StudyResult(
@@ -65,8 +75,10 @@ def assemble(
         method_reason=best.result.method_reason,
         status=best.result.status,
         gap_target_frac=options.gap_target_frac,
-        recommended=LEAST_COST,
-        plans=tuple(plan.result for plan in plans),
+        recommended=recommended,
+        plans=tuple(_against_recommended(plan, by_name[recommended]) for plan in plans),
+        pack=pack,
+        feeder=draw_feeder(study, feeder, windows, best.result),
         value_of_outage_planning=value,
         value_of_outage_planning_interval=(value - half, value + half),
         scenarios=sum(len(window.scenarios) for window in windows),
@@ -82,4 +94,33 @@ def assemble(
         started_at=started_at,
         read_seconds=read_seconds,
         solve_seconds=solve_seconds,
+    )
+
+
+def cheapest(
+    plans: Sequence[SolvedPlan], best: SolvedPlan, capital_budget: float | None
+) -> SolvedPlan:
+    """The least-cost plan, or an alternative of the user's that is cheaper beyond its interval.
+
+    Other devices are no part of the search, so an alternative that has some may cost less. One
+    that spends more than the study's budget is not recommended.
+    """
+    found = best
+    for plan in plans:
+        within = capital_budget is None or plan.result.capital_cost <= capital_budget + CENT
+        half = plan.follow.difference_half_width(best.follow)
+        is_clear = plan.result.costs.total < best.result.costs.total - half - CENT
+        if within and is_clear and plan.result.costs.total < found.result.costs.total:
+            found = plan
+    return found
+
+
+def _against_recommended(plan: SolvedPlan, best: SolvedPlan) -> PlanResult:
+    """The plan with its paired difference to the recommended one."""
+    difference = plan.result.costs.total - best.result.costs.total
+    half = 0.0 if plan is best else plan.follow.difference_half_width(best.follow)
+    return replace(
+        plan.result,
+        difference_to_best=difference,
+        difference_to_best_interval=(difference - half, difference + half),
     )

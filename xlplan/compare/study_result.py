@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 from xlplan.base.errors import Finding
+from xlplan.compare.pack_result import Pack
 from xlplan.evaluate.results import CheckLine, PlanResult
 
 
@@ -20,6 +21,43 @@ class InputEcho:
     value: object
     is_default: bool
     source: str
+
+
+@dataclass(frozen=True)
+class DrawnBus:
+    """A bus of the drawing: place in drawing units, and what happens to it in each outage shown.
+
+    ``state``: one word per stage shown: live, island or dead.
+    """
+
+    bus: str
+    x: float
+    y: float
+    states: tuple[str, ...]
+    note: str
+
+
+@dataclass(frozen=True)
+class DrawnLine:
+    """A line of the drawing, between two buses; ``states`` as for buses, or open."""
+
+    line: str
+    from_bus: str
+    to_bus: str
+    is_open: bool
+    states: tuple[str, ...]
+
+
+@dataclass(frozen=True)
+class FeederDrawing:
+    """The one-line drawing; ``stages``: title of each state shown, normal service first."""
+
+    buses: tuple[DrawnBus, ...]
+    lines: tuple[DrawnLine, ...]
+    stages: tuple[str, ...]
+    stage_notes: tuple[str, ...]
+    is_computed: bool
+    """True where the study gives no places and the layout is computed."""
 
 
 @dataclass(frozen=True)
@@ -59,6 +97,8 @@ class StudyResult:
     read_seconds: float
     solve_seconds: float
     write_seconds: float = 0.0
+    pack: Pack = field(default_factory=Pack)
+    feeder: FeederDrawing | None = None
 
     def plan(self, name: str) -> PlanResult:
         """The plan of that name; KeyError if there is none."""

@@ -1,8 +1,8 @@
-"""Operation to look at: a normal day and the worst outage event, as charts and under audit."""
+"""Operation to look at: a normal day and chosen outage events, as charts and under audit."""
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from xlplan.evaluate.audit import audit_dispatch
 from xlplan.evaluate.audit_tree import audit_tree
-from xlplan.evaluate.follow_plan import Follower, FollowResult
+from xlplan.evaluate.follow_plan import Follower, FollowResult, WindowFollow
 from xlplan.evaluate.meters import read_dispatch
 from xlplan.evaluate.results import CheckLine, Trace
 from xlplan.evaluate.traces import describe_stages, trace_of
@@ -30,6 +30,14 @@ from xlplan.study.study import Study
 FloatArray = NDArray[np.float64]
 
 
+EVENT_WORDS = {
+    "worst": "The possible first event with the most unserved energy.",
+    "most frequent": "The scenario that is expected most often, at its worst time.",
+    "longest": "The scenario whose repair takes longest, at its worst time.",
+}
+"""What each of the chosen events is."""
+
+
 @dataclass(frozen=True)
 class Operated:
     """A dispatch with its place: a plan (``i_scenario`` None) or an event that struck in ``k``."""
@@ -47,27 +55,72 @@ def normal_window(windows: Sequence[WindowModel]) -> int:
 
 def worst_event(follow: FollowResult) -> tuple[int, int, int] | None:
     """(window, scenario, period) of the possible first event with the most unserved energy."""
-    best: tuple[float, tuple[int, int, int]] | None = None
+    return _leading_event(follow, lambda window: np.zeros(window.first_chance.shape))
+
+
+def chosen_events(follow: FollowResult) -> dict[tuple[int, int, int], list[str]]:
+    """The worst, the most frequent and the longest event, as (window, scenario, period) -> words.
+
+    The most frequent and the longest are shown at the failure time at which they do most harm. One
+    event may be several of the three; empty where nothing can fail.
+    """
+    found: dict[tuple[int, int, int], list[str]] = {}
+
+    def add(event: tuple[int, int, int] | None, word: str) -> None:
+        if event is not None:
+            same = next((known for known in found if known[:2] == event[:2]), event)
+            found.setdefault(same, []).append(word)
+
+    occurrences = {id(w): n for w, n in zip(follow.windows, follow.occurrences, strict=True)}
+
+    def often(window: WindowFollow) -> FloatArray:
+        count = occurrences[id(window)] * window.event_count.sum(axis=0)
+        return np.broadcast_to(count, window.first_chance.shape)
+
+    def long(window: WindowFollow) -> FloatArray:
+        hours = window.clock.event_periods * window.clock.period_h
+        return np.broadcast_to(hours, window.first_chance.shape)
+
+    add(worst_event(follow), "worst")
+    add(_leading_event(follow, often), "most frequent")
+    add(_leading_event(follow, long), "longest")
+    return found
+
+
+def _leading_event(
+    follow: FollowResult, rank: Callable[[WindowFollow], FloatArray]
+) -> tuple[int, int, int] | None:
+    """The possible first event that ranks highest, the most unserved energy among equals."""
+    best: tuple[float, float] | None = None
+    found: tuple[int, int, int] | None = None
     for i_window, window in enumerate(follow.windows):
         ens = window.events[:, :, follow.slots.per_load("ens_kwh")].sum(axis=2)
-        ens = np.where(window.first_chance > 0.0, ens, -1.0)
-        if ens.size and ens.max() >= 0.0:
-            k, w = np.unravel_index(int(ens.argmax()), ens.shape)
-            if best is None or ens.max() > best[0] * (1.0 + 1e-9):
-                best = (float(ens.max()), (i_window, int(w), int(k)))
-    return None if best is None else best[1]
+        possible = window.first_chance > 0.0
+        if not possible.any():
+            continue
+        ranks = np.where(possible, rank(window), -1.0)
+        highest = float(ranks.max())
+        leading = np.where(ranks >= highest * (1.0 - 1e-9), ens, -1.0)
+        k, w = np.unravel_index(int(leading.argmax()), leading.shape)
+        key = (highest, float(leading.max()))
+        if (
+            best is None
+            or key[0] > best[0] * (1.0 + 1e-9)
+            or (key[0] >= best[0] * (1.0 - 1e-9) and key[1] > best[1] * (1.0 + 1e-9))
+        ):
+            best, found = key, (i_window, int(w), int(k))
+    return found
 
 
 def plan_traces(
     study: Study, follower: Follower, follow: FollowResult, capacity: FloatArray
 ) -> tuple[tuple[Trace, ...], list[Operated]]:
-    """Charts of a followed plan, and every window's plan and worst event for the audit."""
+    """Charts of a followed plan, and every window's plan and chosen event for the audit."""
     graph = follower.graph
     operated = []
-    worst = worst_event(follow)
+    chosen = chosen_events(follow)
     wanted: list[tuple[int, int | None, int]] = [(i, None, -1) for i in range(len(graph.windows))]
-    if worst is not None:
-        wanted.append(worst)
+    wanted += chosen
     for i_window, i_scenario, k in wanted:
         if i_scenario is None:
             root = graph.graph.roots[i_window]
@@ -83,7 +136,8 @@ def plan_traces(
     layout = graph.layout
     start = layout.storage_kwh(0)
     kwh = capacity[start : start + layout.n_storage]
-    traces = make_traces(study, follower.windows, graph.models[0].feeder, operated, kwh)
+    feeder = graph.models[0].feeder
+    traces = make_traces(study, follower.windows, feeder, operated, kwh, chosen)
     return traces, operated
 
 
@@ -93,8 +147,9 @@ def make_traces(
     feeder: Feeder,
     operated: Sequence[Operated],
     storage_kwh: FloatArray,
+    chosen: dict[tuple[int, int, int], list[str]],
 ) -> tuple[Trace, ...]:
-    """The normal day first, then the worst event."""
+    """The normal day first, then the chosen events."""
     traces = []
     normal = normal_window(windows)
     for item in operated:
@@ -108,10 +163,12 @@ def make_traces(
                 )
             continue
         scenario = windows[item.i_window].scenarios[item.i_scenario]
-        title = f"Worst outage event: {scenario.name} in {window.window}"
-        text = (
-            f"The possible first event with the most unserved energy. It strikes in the period "
-            f"before the first one shown; repair takes {scenario.repair_h:g} h."
+        words = chosen[item.i_window, item.i_scenario, item.failure_period]
+        name = " and ".join(words)
+        title = f"{name[0].upper()}{name[1:]} outage event: {scenario.name} in {window.window}"
+        text = " ".join(EVENT_WORDS[word] for word in words) + (
+            " It strikes in the period before the first one shown; repair takes "
+            f"{scenario.repair_h:g} h."
         )
         traces.append(
             trace_of(
@@ -124,6 +181,7 @@ def make_traces(
                 title,
                 text,
                 describe_stages(study, feeder, scenario),
+                scenario.name,
             )
         )
     return tuple(traces)
@@ -156,7 +214,7 @@ def audit_operation(
     bought: Purchases,
     operated: Sequence[Operated],
 ) -> tuple[CheckLine, ...]:
-    """Audit of the first plans and the worst event, as a check line."""
+    """Audit of the first plans and the chosen events, as a check line."""
     capacities = capacities_in_service(study, bought)
     section_of_bus = build_sections(feeder).section_of_bus
     found: list[Violation] = []
@@ -215,9 +273,8 @@ def tree_operation(
         for s in segments
         if s.kind is SegmentKind.PLAN and s.i_parent < 0
     ]
-    worst = worst_event(follow)
-    if worst is not None:
-        i_window, w, k = worst
+    chosen = chosen_events(follow)
+    for i_window, w, k in chosen:
         event = next(
             s
             for s in segments
@@ -226,6 +283,6 @@ def tree_operation(
         )
         operated.append(Operated(i_window, w, k, event.dispatch))
     storage_kwh = np.array([s.existing_kwh for s in study.storage]) + bought.storage_kwh
-    traces = make_traces(study, windows, feeder, operated, storage_kwh)
+    traces = make_traces(study, windows, feeder, operated, storage_kwh, chosen)
     violations = [v for _, v in audit_tree(study, feeder, windows, bought, segments)]
     return traces, (audit_line(violations, len(segments)),), operated

@@ -22,10 +22,10 @@ from xlplan.evaluate.results import (
     Trace,
     WindowResult,
 )
-from xlplan.evaluate.risk import simulate_years
+from xlplan.evaluate.risk import simulate_years, worst_events
 from xlplan.model.dispatch import Purchases
 from xlplan.outages.window_model import WindowModel
-from xlplan.study.study import Study
+from xlplan.study.study import DeviceChange, Study
 
 FloatArray = NDArray[np.float64]
 
@@ -57,6 +57,8 @@ class PlanFacts:
     numerical_events: int = 0
     tree_cost: float | None = None
     """Optimum of the whole tree, where that is the method."""
+    device_changes: tuple[DeviceChange, ...] = ()
+    """Other devices of this alternative, which cost money."""
 
 
 def build_plan_result(
@@ -87,7 +89,7 @@ def build_plan_result(
     slots = follow.slots
     per_window = np.array([window.metrics for window in follow.windows])
     yearly = follow.occurrences @ per_window
-    purchases = price_purchases(study, facts.bought)
+    purchases = price_purchases(study, facts.bought, facts.device_changes)
     parts = {name: float(yearly[slots.single(name)]) for name in COST_PARTS}
     costs = CostParts(
         investment=sum(p.investment for p in purchases),
@@ -136,6 +138,7 @@ def build_plan_result(
         convergence=facts.convergence,
         solve_seconds=facts.solve_seconds,
         numerical_events=facts.numerical_events,
+        worst_events=worst_events(study, windows, follow),
         demand_windows=tuple(w.series.window for w in windows if w.series.counts_for_demand),
     )
     checks = plan_checks(study, windows, follow, facts, costs, cost, purchases, interval)
@@ -313,6 +316,8 @@ def plan_checks(
                 max(0.0, sum(p.capital_net for p in purchases) - budget),
                 0.0,
                 max(CENT, ROUNDING * budget),
+                # Device changes are given, whatever they cost: for the planner to judge.
+                is_warning=bool(facts.device_changes),
             )
         )
     lines.append(

@@ -11,13 +11,17 @@ from collections.abc import Sequence
 import numpy as np
 from numpy.typing import NDArray
 
+from xlplan.base.units import minutes_from_hours
 from xlplan.evaluate.results import Purchase
 from xlplan.model.dispatch import Purchases
 from xlplan.model.purchase import FirstStage
 from xlplan.study.economics import capital_recovery_factor
-from xlplan.study.study import Study
+from xlplan.study.study import Device, DeviceChange, Study
 
 FloatArray = NDArray[np.float64]
+
+DEVICE = "device"
+"""Kind of a purchase that is another device on a line."""
 
 BOUGHT_TOLERANCE = 1e-6
 """kW or kWh below this are rounding of the solver, not a purchase."""
@@ -39,10 +43,12 @@ def read_purchases(first_stage: FirstStage, x: FloatArray) -> Purchases:
     )
 
 
-def price_purchases(study: Study, bought: Purchases) -> tuple[Purchase, ...]:
+def price_purchases(
+    study: Study, bought: Purchases, device_changes: Sequence[DeviceChange] = ()
+) -> tuple[Purchase, ...]:
     """Every asset that can be bought, with what is bought of it and what that costs.
 
-    A site cost is paid where anything is bought there.
+    A site cost is paid where anything is bought there. ``device_changes`` are always bought.
     """
     rate = study.settings.real_discount_rate_frac
     rows: list[Purchase] = []
@@ -64,7 +70,7 @@ def price_purchases(study: Study, bought: Purchases) -> tuple[Purchase, ...]:
         factor = capital_recovery_factor(rate, life)
         gross = per_kw * kw + per_kwh * kwh + (site if is_bought else 0.0)
         net = gross * (1.0 - grant)
-        om = om_rate * (kw if kind != "hardening" else float(is_bought))
+        om = om_rate * (float(is_bought) if kind == "hardening" else kw)
         rows.append(
             Purchase(
                 asset=asset,
@@ -135,7 +141,33 @@ def price_purchases(study: Study, bought: Purchases) -> tuple[Purchase, ...]:
             measure.fixed_om,
             bool(bought.is_hardened[i]),
         )
+    for change in device_changes:
+        add(
+            device_words(change),
+            DEVICE,
+            change.line,
+            0.0,
+            0.0,
+            (0.0, 0.0),
+            (0.0, 0.0, change.capital_cost),
+            0.0,
+            change.life_years,
+            0.0,
+            True,
+        )
     return tuple(rows)
+
+
+def device_words(change: DeviceChange) -> str:
+    """A device change as an asset: ``L05: recloser at the from end``."""
+    parts = [
+        f"{device.value if device is not Device.NONE else 'no device'} at the {end} end"
+        for device, end in ((change.from_device, "from"), (change.to_device, "to"))
+        if device is not None
+    ]
+    if change.switching_h is not None:
+        parts.append(f"switching in {minutes_from_hours(change.switching_h):g} minutes")
+    return f"{change.line}: {', '.join(parts) or 'unchanged'}"
 
 
 def net_capital(purchases: Sequence[Purchase]) -> float:

@@ -158,6 +158,48 @@ class Risk:
     cost_percentiles: tuple[tuple[float, float], ...] = ()
     """(percent, cost)."""
     eens_percentiles: tuple[tuple[float, float], ...] = ()
+    eens_mean: float = 0.0
+    eens_cvar95: float = 0.0
+    cost_bins: tuple[tuple[float, float, float], ...] = ()
+    """(from, to, share of years)."""
+    eens_bins: tuple[tuple[float, float, float], ...] = ()
+    event_cost: EventSpread | None = None
+    event_eens: EventSpread | None = None
+
+
+@dataclass(frozen=True)
+class EventSpread:
+    """One figure over all outage events, each weighted by how often it is expected.
+
+    ``percentiles``: (percent, figure); ``cvar95``: mean of the worst 5 % of events;
+    ``bins``: (from, to, events per year).
+    """
+
+    mean: float
+    cvar95: float
+    largest: float
+    percentiles: tuple[tuple[float, float], ...]
+    bins: tuple[tuple[float, float, float], ...]
+
+
+@dataclass(frozen=True)
+class WorstEvent:
+    """One scenario at the failure time at which it does most harm.
+
+    ``begins``: time of the first period of the event as in the profiles; ``lost``: what was lost,
+    load by load; ``per_year``: outage events of this scenario in this window, at whatever time.
+    """
+
+    window: str
+    scenario: str
+    causes: str
+    begins: str
+    hours: float
+    per_year: float
+    eens_kwh: float
+    customers: float
+    cost: float
+    lost: str
 
 
 @dataclass(frozen=True)
@@ -179,6 +221,9 @@ class Trace:
     sources: dict[str, FloatArray]
     energy_kwh: dict[str, FloatArray]
     energy_capacity_kwh: dict[str, float]
+    window: str = ""
+    scenario: str = ""
+    """Name of the scenario of an outage event; "" in normal service."""
     closings: tuple[str, ...] = ()
     """Ties and neighbour supplies closed, and dead parts, in words."""
 
@@ -253,7 +298,7 @@ class PlanResult:
     """Energy lost in the relaxed area of the loss curves, kWh a year."""
     normal_shed_kwh: float
     traces: tuple[Trace, ...]
-    """The normal day first, then the worst outage event."""
+    """The normal day first, then the worst, the most frequent and the longest outage event."""
     checks: tuple[CheckLine, ...]
     convergence: tuple[ConvergenceRow, ...]
     solve_seconds: float
@@ -264,3 +309,7 @@ class PlanResult:
     """Yearly cost less that of the existing feeder, paired."""
     ac: AcCheck | None = None
     """Operation checked by nonlinear power flow."""
+    worst_events: tuple[WorstEvent, ...] = ()
+    difference_to_best: float = 0.0
+    difference_to_best_interval: tuple[float, float] = (0.0, 0.0)
+    """The same against the recommended plan."""

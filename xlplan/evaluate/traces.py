@@ -30,6 +30,7 @@ def trace_of(
     title: str,
     description: str,
     closings: tuple[str, ...] = (),
+    scenario: str = "",
 ) -> Trace:
     """Series of one stretch.
 
@@ -39,7 +40,7 @@ def trace_of(
     first_period : int, window period of the dispatch's first
     dispatch : Dispatch
     storage_kwh : array, shape (n_storage,), in service
-    title, description, closings : words for the sheet
+    title, description, closings, scenario : words for the sheet
 
     Returns
     -------
@@ -73,6 +74,8 @@ def trace_of(
         energy_kwh={study.storage[i].storage: dispatch.energy_kwh[:, i] for i in has_store},
         energy_capacity_kwh={study.storage[i].storage: float(storage_kwh[i]) for i in has_store},
         closings=closings,
+        window=window.window,
+        scenario=scenario,
     )
 
 
@@ -82,6 +85,8 @@ def time_label(time: object) -> str:
         return time.strftime("%d %b %H:%M")
     if isinstance(time, datetime.time):
         return time.strftime("%H:%M")
+    if isinstance(time, float):
+        return f"{time:g}"
     return str(time)
 
 

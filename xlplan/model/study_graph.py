@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from xlplan.model.layout import Layout, build_layout, start_state, state_domain
 from xlplan.model.loads import build_loads
 from xlplan.model.period import FeederModel, build_feeder_model
-from xlplan.model.purchase import FirstStage, build_first_stage
+from xlplan.model.purchase import Choices, FirstStage, build_first_stage
 from xlplan.model.subproblem import (
     EventFamily,
     PlanFamily,
@@ -69,6 +69,7 @@ def build_study_graph(
     feeder: Feeder,
     windows: Sequence[WindowModel],
     plans_for_outages: bool = True,
+    choices: Choices | None = None,
 ) -> StudyGraph:
     """The value graph of a study.
 
@@ -78,6 +79,7 @@ def build_study_graph(
     feeder : Feeder
     windows : sequence of WindowModel
     plans_for_outages : bool, False: plans see no failures, events see no further ones
+    choices : Choices or None, what the first stage leaves open to bounds of its columns
 
     Returns
     -------
@@ -85,7 +87,7 @@ def build_study_graph(
     """
     all_series = [window.series for window in windows]
     layout = build_layout(study, all_series)
-    first_stage = build_first_stage(study, layout)
+    first_stage = build_first_stage(study, layout, choices)
     sections = build_sections(feeder)
     section_of_load = sections.section_of_bus[feeder.load_bus]
     lower, upper = state_domain(study, layout)

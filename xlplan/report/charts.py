@@ -6,6 +6,7 @@ would be taken for a formula.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any
@@ -21,6 +22,8 @@ PIXELS_PER_ROW = 20
 """Height of a sheet row of standard height."""
 
 MAX_TICK_LABELS = 12
+TICKS = 6
+"""Steps of a numeric axis, about."""
 
 
 @dataclass(frozen=True)
@@ -50,8 +53,12 @@ def bars(
     label_above: float = 0.0,
     label_format: str = "#,##0",
     has_labels: bool = True,
+    overlap: int | None = None,
 ) -> Chart:
-    """Horizontal bars from 0, first category on top; stacked segments from ``label_above`` on."""
+    """Horizontal bars from 0, first category on top; stacked segments from ``label_above`` on.
+
+    ``overlap`` 100: bars of one category on one line, for changes to both sides.
+    """
     chart = book.new_chart("bar", "stacked" if is_stacked else None)
     for one in series:
         options: dict[str, Any] = {
@@ -62,12 +69,14 @@ def bars(
             "border": {"color": INK, "width": 0.5},
             "gap": 60,
         }
-        if is_stacked:
-            options["overlap"] = 100
+        if is_stacked or overlap is not None:
+            options["overlap"] = 100 if overlap is None else overlap
         if has_labels and (one.labels or not is_stacked):
             options["data_labels"] = _labels(one, is_stacked, label_above, label_format)
         chart.add_series(options)
-    chart.set_y_axis({"reverse": True, "num_font": _font(9), "line": {"color": GREY}})
+    axis = {"reverse": True, "num_font": _font(9), "line": {"color": GREY}}
+    # Names beside the plot, also where bars reach below 0.
+    chart.set_y_axis({**axis, "label_position": "low"})
     chart.set_x_axis(
         {**_value_axis(axis_title, label_format), "label_position": "high", "min": None}
     )
@@ -81,6 +90,8 @@ def columns(
     series: Sequence[Series],
     category_title: str,
     axis_title: str,
+    number_format: str = "#,##0.0",
+    has_legend: bool = True,
 ) -> Chart:
     """Columns side by side from 0, for names without room for bars."""
     chart = book.new_chart("column")
@@ -97,8 +108,10 @@ def columns(
         )
     axis = {"name": category_title, "name_font": _font(9), "num_font": _font(8)}
     chart.set_x_axis({**axis, "line": {"color": GREY}})
-    chart.set_y_axis({**_value_axis(axis_title, "#,##0.0"), "min": 0})
-    return _finish(chart, title)
+    chart.set_y_axis({**_value_axis(axis_title, number_format), "min": 0})
+    if not has_legend:
+        chart.set_legend({"none": True})
+    return _finish(chart, title, has_legend)
 
 
 def _labels(one: Series, is_stacked: bool, above: float, number_format: str) -> dict[str, Any]:
@@ -161,7 +174,7 @@ def columns_over_time(
         }
     )
     chart.set_legend({"none": True})
-    return _finish_over_time(chart, title, axis_title, n_point, has_legend=False)
+    return _finish_over_time(chart, title, axis_title, n_point, has_legend=False, axis_min=0.0)
 
 
 def lines_over_time(
@@ -191,12 +204,19 @@ def lines_over_numbers(
     x_title: str,
     y_title: str,
     y_range: tuple[float, float],
+    x_max: float | None = None,
+    x_format: str = "#,##0",
+    has_markers: bool = False,
 ) -> Chart:
     """Straight lines over a numeric axis; ``y_range`` because automatic axes cut such lines."""
     chart = book.new_chart("scatter", "straight")
     for one in series:
-        chart.add_series({**_line_options(one, x_values), "marker": {"type": "none"}})
-    chart.set_x_axis({**_value_axis(x_title, "#,##0"), "min": 0, "major_gridlines": {}})
+        marker: dict[str, Any] = {"type": "none"}
+        if has_markers:
+            marker = {"type": "circle", "size": 6, "fill": {"color": one.colour}}
+        chart.add_series({**_line_options(one, x_values), "marker": marker})
+    x_axis = {**_value_axis(x_title, x_format), "min": 0, "major_gridlines": {}}
+    chart.set_x_axis(x_axis if x_max is None else {**x_axis, "max": x_max})
     low, high = y_range
     chart.set_y_axis({**_value_axis(y_title, "#,##0"), "min": low, "max": high})
     return _finish(chart, title)
@@ -268,6 +288,7 @@ def _finish_over_time(
     axis_max: float | None = None,
     number_format: str = "#,##0",
     has_legend: bool = True,
+    axis_min: float | None = None,
 ) -> Chart:
     """Axes of charts over the periods: a dozen time labels at most, below the plot."""
     step = max(1, -(-n_point // MAX_TICK_LABELS))
@@ -287,6 +308,8 @@ def _finish_over_time(
     axis = _value_axis(axis_title, number_format)
     if axis_max is not None:
         axis.update({"min": 0, "max": axis_max})
+    elif axis_min is not None:
+        axis["min"] = axis_min
     chart.set_y_axis(axis)
     return _finish(chart, title, has_legend)
 
@@ -297,3 +320,101 @@ def _finish(chart: Chart, title: str, has_legend: bool = True) -> Chart:
         chart.set_legend({"position": "bottom", "font": _font(9)})
     chart.set_chartarea({"border": {"color": GRID_GREY}})
     return chart
+
+
+@dataclass(frozen=True)
+class Stroke:
+    """One stroke of a drawing. ``name``: a fixed word of ours; the legend shows it once."""
+
+    name: str
+    x_values: CellRange
+    y_values: CellRange
+    colour: str
+    dash: str
+    width_pt: float
+
+
+@dataclass(frozen=True)
+class Dots:
+    """Points of a drawing with one marker; ``labels``: a text a point, "" for none.
+
+    A text may not begin with =, which would make it a formula.
+    """
+
+    name: str
+    x_values: CellRange
+    y_values: CellRange
+    colour: str
+    marker: str
+    labels: tuple[str, ...] = ()
+
+
+MARKER_SIZES = {"circle": 9, "diamond": 12, "x": 11}
+
+
+def drawing(
+    book: SafeBook,
+    title: str,
+    strokes: Sequence[Stroke],
+    dots: Sequence[Dots],
+    x_range: tuple[float, float],
+    y_range: tuple[float, float],
+) -> Chart:
+    """A drawing in the plane without axes: lines first, points over them."""
+    chart = book.new_chart("scatter", "straight")
+    for one in strokes:
+        chart.add_series(
+            {
+                "name": one.name,
+                "categories": one.x_values,
+                "values": one.y_values,
+                "line": {"color": one.colour, "width": one.width_pt, "dash_type": one.dash},
+                "marker": {"type": "none"},
+            }
+        )
+    for dot in dots:
+        options: dict[str, Any] = {
+            "name": dot.name,
+            "categories": dot.x_values,
+            "values": dot.y_values,
+            "line": {"none": True},
+            "marker": {
+                "type": dot.marker,
+                "size": MARKER_SIZES.get(dot.marker, 9),
+                "fill": {"color": dot.colour},
+                "border": {"color": INK if dot.marker != "x" else dot.colour, "width": 1.0},
+            },
+        }
+        if dot.labels:
+            options["data_labels"] = {
+                "value": True,
+                "position": "above",
+                "font": _font(9),
+                "custom": [{"value": text} if text else {"delete": True} for text in dot.labels],
+            }
+        chart.add_series(options)
+    for axis, (low, high) in ((chart.set_x_axis, x_range), (chart.set_y_axis, y_range)):
+        axis({"visible": False, "min": low, "max": high, "major_gridlines": {"visible": False}})
+    chart.show_blanks_as("gap")
+    names = [one.name for one in strokes]
+    again = [i for i, name in enumerate(names) if name in names[:i]]
+    chart = _finish(chart, title)
+    chart.set_legend({"position": "bottom", "font": _font(9), "delete_series": again})
+    return chart
+
+
+def wide_range(values: Sequence[float]) -> tuple[float, float]:
+    """Axis range in round steps that holds all values; automatic axes cut lines at the edge."""
+    low, high = min(values), max(values)
+    spread = high - low or max(abs(high), 1.0)
+    power = 10.0 ** math.floor(math.log10(spread / TICKS))
+    step = next(m * power for m in (1.0, 2.0, 5.0, 10.0) if m * power >= spread / TICKS)
+    bottom, top = math.floor(low / step) * step, math.ceil(high / step) * step
+    return bottom, (top if top > bottom else bottom + step)
+
+
+def padded(values: Sequence[float], margin: float = 0.1) -> tuple[float, float]:
+    """The same for places in a drawing, where 0 means nothing."""
+    low, high = min(values), max(values)
+    room = (high - low) * margin or 1.0
+    return low - room, high + room

@@ -93,6 +93,11 @@ class Grid:
         col = self.col(key)
         return [self.sheet, self.row(0), col, self.row(self.n_row - 1), col]
 
+    def chart_rows(self, key: str, first: int, n: int) -> list[str | int]:
+        """The same of ``n`` rows of it."""
+        col = self.col(key)
+        return [self.sheet, self.row(first), col, self.row(first + n - 1), col]
+
     def chart_name(self, key: str) -> list[str | int]:
         """Heading cell of a column as charts take it."""
         return [self.sheet, self.top, self.col(key)]
@@ -155,6 +160,9 @@ def write_cell(sheet: SafeSheet, row: int, col: int, cell: Cell, *looks: str) ->
         cell = None
     if isinstance(cell, Formula):
         sheet.formula(row, col, cell.text, cell.value, *looks)
+    elif isinstance(cell, str) and not cell:
+        # Truly empty: a chart would draw an empty text as 0.
+        sheet.blank(row, col, *looks)
     elif isinstance(cell, str):
         sheet.text(row, col, cell, *looks)
     elif cell is None or not _is_known(cell):

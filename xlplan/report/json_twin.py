@@ -12,6 +12,13 @@ from pathlib import Path
 from typing import Any
 
 from xlplan.base.units import pct_from_frac
+from xlplan.compare.pack_result import (
+    BudgetPoint,
+    HardeningValue,
+    RepairPoint,
+    SensitivityCase,
+    Worth,
+)
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import PlanResult
 from xlplan.report.target import replace_whole
@@ -30,6 +37,9 @@ COST_PARTS = (
     "end_of_window",
 )
 
+PURCHASE_TYPES = ("storage", "generator", "hardening")
+"""Kinds that the twin lists; device changes are in the capital and yearly cost alone."""
+
 
 def json_document(result: StudyResult) -> dict[str, Any]:
     """The whole document, ready for ``json.dumps``."""
@@ -43,10 +53,10 @@ def json_document(result: StudyResult) -> dict[str, Any]:
         "recommended": result.recommended,
         "alternatives": [_alternative(plan) for plan in result.plans],
         "method_reason": result.method_reason,
-        "hardening": [],
-        "repair_time": [],
-        "budget": [],
-        "sensitivities": [],
+        "hardening": [_hardening(row) for row in result.pack.hardening],
+        "repair_time": [_repair_point(point) for point in result.pack.repair_time],
+        "budget": [_budget_point(point) for point in result.pack.budget],
+        "sensitivities": [_sensitivity(case) for case in result.pack.sensitivities],
         "voltages": [row for plan in result.plans for row in _voltages(plan)],
         "value_of_outage_planning": _number(result.value_of_outage_planning),
         "scenarios": int(result.scenarios),
@@ -136,6 +146,7 @@ def _alternative(plan: PlanResult) -> dict[str, Any]:
                 "bought": bool(asset.is_bought),
             }
             for asset in plan.purchases
+            if asset.kind in PURCHASE_TYPES
         ],
         "reliability": {
             "eens_kwh_per_year": _number(indices.eens_kwh),
@@ -178,4 +189,90 @@ def _alternative(plan: PlanResult) -> dict[str, Any]:
             "difference": _number(plan.difference),
             "interval": _pair(plan.difference_interval),
         },
+    }
+
+
+def _worth(worth: Worth, yearly_cost: float) -> dict[str, Any]:
+    return {
+        "value": _number(worth.value),
+        "utility_value": _number(worth.utility),
+        "customers_value": _number(worth.customers),
+        "interval": _pair(worth.interval),
+        "net_value": _number(worth.value - yearly_cost),
+        "eens_saved_kwh_per_year": _number(worth.eens_saved_kwh),
+        "annual_cost_without": _number(worth.total_without),
+        "annual_cost_with": _number(worth.total_with),
+    }
+
+
+def _hardening(row: HardeningValue) -> dict[str, Any]:
+    saved = row.in_plan.value - row.fixed_om
+    return {
+        "measure": row.measure,
+        "lines": list(row.lines),
+        "bought": bool(row.is_in_plan),
+        "capital_cost": _number(row.capital_net),
+        "yearly_cost": _number(row.yearly_cost),
+        "alone": _worth(row.alone, row.yearly_cost),
+        "in_plan": _worth(row.in_plan, row.yearly_cost),
+        "payback_years": _number(row.capital_net / saved if saved > 0.0 else None),
+    }
+
+
+def _bought(plan: PlanResult) -> list[dict[str, Any]]:
+    return [
+        {"asset": asset.asset, "kw": _number(asset.kw), "kwh": _number(asset.kwh)}
+        for asset in plan.purchases
+        if asset.is_bought
+    ]
+
+
+def _figures(plan: PlanResult) -> dict[str, Any]:
+    """Cost and unserved energy of one point."""
+    return {
+        "annual_cost": _number(plan.costs.total),
+        "utility_cost": _number(plan.costs.utility),
+        "customers_cost": _number(plan.costs.customers),
+        "capital_cost": _number(plan.capital_cost),
+        "eens_kwh_per_year": _number(plan.indices.eens_kwh),
+        "saidi_h": _number(plan.indices.saidi_h),
+        "lower_bound": _number(plan.lower_bound),
+        "purchases": _bought(plan),
+    }
+
+
+def _repair_point(point: RepairPoint) -> dict[str, Any]:
+    return {
+        "factor": _number(point.factor),
+        "mean_event_h": _number(point.mean_event_h),
+        "events_per_year": _number(point.events_per_year),
+        "plan_kept": _figures(point.kept),
+        "plan_made_anew": _figures(point.anew),
+        "loss": _number(point.loss),
+        "loss_interval": _pair(point.loss_interval),
+    }
+
+
+def _budget_point(point: BudgetPoint) -> dict[str, Any]:
+    return {
+        "budget": _number(point.budget),
+        **_figures(point.plan),
+        "saving": _number(point.saving),
+        "saving_interval": _pair(point.interval),
+    }
+
+
+def _sensitivity(case: SensitivityCase) -> dict[str, Any]:
+    return {
+        "parameter": case.parameter,
+        "side": "high" if case.is_high else "low",
+        "value": _number(case.value),
+        "plan_kept": _figures(case.kept),
+        "plan_made_anew": _figures(case.anew),
+        "plan_changes": bool(case.does_change),
+        "loss": _number(case.loss),
+        "loss_interval": _pair(case.loss_interval),
+        "alternatives": [
+            {"name": name, "annual_cost": _number(total)} for name, total in case.totals
+        ],
     }

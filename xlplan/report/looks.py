@@ -72,6 +72,8 @@ LOOKS: dict[str, Properties] = {
     "remark": {**_TEXT, "font_color": GREY, "italic": True, "indent": 1},
     "link": {**_TEXT, "font_color": BLUE, "underline": 1},
     "status": {**_TEXT, "bold": True},
+    "verdict": {**_NUMBER, "bold": True, "indent": 1},
+    "per_minute": {**_NUMBER, "num_format": f"#,##0.0000{PAD}"},
     "absent": {**_NUMBER, "indent": 1, "font_color": GREY, "italic": True},
     "money": _NUMBER,
     "change": _NUMBER,

@@ -15,6 +15,10 @@ STUDY_LIFE_YEARS = 20.0
 HARDENING = "hardening"
 NO_PAYBACK = "does not pay back"
 NOTHING_BOUGHT = "nothing bought"
+CHEAPER, DEARER, UNDECIDED = "cheaper", "dearer", "undecided"
+HALF_CENT = 0.005
+LEAST_MINUTES = 0.5
+"""Fewer avoided customer-minutes a year are rounding, not a result."""
 
 
 def annuity_factor(rate_frac: float, years: float) -> float:
@@ -50,6 +54,12 @@ def saving(base: float, base_investment: float, total: float, investment: float)
 def payback_years(extra_capital: float, yearly_saving: float) -> float | str:
     """Years until the savings have returned the capital, without interest."""
     return NO_PAYBACK if yearly_saving <= 0.0 else extra_capital / yearly_saving
+
+
+def verdict(difference_interval: tuple[float, float]) -> str:
+    """Cheaper or dearer where the whole interval says so (beyond half a cent), else undecided."""
+    low, high = difference_interval
+    return DEARER if low > HALF_CENT else CHEAPER if high < -HALF_CENT else UNDECIDED
 
 
 def money_words(amount: float, currency: str) -> str:

@@ -4,6 +4,9 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+HEAD_ROW = 6
+"""Row of the heading, on the Alternatives sheet."""
+
 YEARLY = "{money}/year"
 MONEY = "{money}"
 
@@ -119,6 +122,24 @@ STATEMENT = (
                 look="change",
             ),
             Line(
+                "to_best",
+                "Against the recommended alternative",
+                "Above 0: dearer than the recommended alternative",
+                look="change",
+            ),
+            Line(
+                "to_best_low",
+                "95 % interval of that: low",
+                "Differences taken path by path; they do not follow changed cells",
+                look="change",
+            ),
+            Line(
+                "to_best_high",
+                "95 % interval of that: high",
+                "If 0 lies in the interval, the two cannot be told apart",
+                look="change",
+            ),
+            Line(
                 "bound",
                 "Lower bound",
                 "No plan that the alternative allows costs less; none for a plan that "
@@ -199,6 +220,33 @@ STATEMENT = (
                 look="hours",
             ),
             Line(
+                "total_gross",
+                "Total yearly cost before grants",
+                "As if grants were not given: what the purchases cost society",
+            ),
+            Line(
+                "ratio_gross",
+                "Benefit-cost ratio before grants",
+                "The same saving over extra yearly investment before grants",
+                unit="ratio",
+                look="hours",
+            ),
+            Line(
+                "minutes",
+                "Customer-minutes avoided",
+                "Outage hours per customer less than on the existing feeder, times customers, in "
+                "minutes",
+                unit="minutes/year",
+                look="whole",
+            ),
+            Line(
+                "per_minute",
+                "Cost per avoided customer-minute",
+                "Extra cost of the utility a year over those minutes; below 0: it saves as well",
+                unit="{money}/minute",
+                look="per_minute",
+            ),
+            Line(
                 "present_total",
                 "Present value of the total yearly cost",
                 "Over the years and at the discount rate above, end-of-year; assets "
@@ -217,6 +265,20 @@ STATEMENT = (
     Block(
         "Behind the figures",
         (
+            Line(
+                "customers_served",
+                "Customers",
+                "Sum over the loads, as given in the study",
+                unit="number",
+                look="whole",
+            ),
+            Line(
+                "saidi",
+                "Outage hours per customer",
+                "SAIDI of the Reliability sheet, everything counted",
+                unit="h/year",
+                look="hours",
+            ),
             Line(
                 "demand_kw",
                 "Grid purchase that the demand charge is on",
@@ -245,4 +307,37 @@ STATEMENT = (
             ),
         ),
     ),
+    Block(
+        "Verdicts in words",
+        (
+            Line(
+                "verdict",
+                "Verdict against the existing feeder",
+                "Undecided where 0 lies in the interval: such a difference is not ranked",
+                unit="",
+                look="verdict",
+                modifier="bold",
+            ),
+            Line(
+                "to_best_verdict",
+                "Verdict against the recommended one",
+                "Dearer, cheaper or undecided, by the interval",
+                unit="",
+                look="verdict",
+            ),
+        ),
+    ),
 )
+
+
+def statement_rows() -> tuple[dict[str, int], int]:
+    """Row of every block and figure, and the last row."""
+    row_of: dict[str, int] = {}
+    row = HEAD_ROW + 1
+    for block in STATEMENT:
+        row_of[block.title] = row
+        for line in block.lines:
+            row += 1
+            row_of[line.key] = row
+        row += 2
+    return row_of, row - 2

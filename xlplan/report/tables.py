@@ -10,9 +10,15 @@ from xlplan.report.grid import Column
 SUMMARY = "Summary"
 ALTERNATIVES = "Alternatives"
 PLAN = "Plan"
+HARDENING = "Line hardening"
+REPAIR_TIME = "Repair time"
+BUDGET = "Budget"
+SENSITIVITIES = "Sensitivities"
 RELIABILITY = "Reliability"
+RISK = "Risk"
 OPERATION = "Operation"
 VOLTAGES = "Voltages"
+FEEDER = "Feeder"
 CONVERGENCE = "Convergence"
 CHECKS = "Checks"
 ASSUMPTIONS = "Assumptions"
@@ -22,9 +28,15 @@ SHEET_ORDER = (
     SUMMARY,
     ALTERNATIVES,
     PLAN,
+    HARDENING,
+    REPAIR_TIME,
+    BUDGET,
+    SENSITIVITIES,
     RELIABILITY,
+    RISK,
     OPERATION,
     VOLTAGES,
+    FEEDER,
     CONVERGENCE,
     CHECKS,
     ASSUMPTIONS,
@@ -48,6 +60,20 @@ SUMMARY_PLANS = (
     Column("eens", "Energy not supplied (kWh/year)", "energy"),
 )
 
+SUMMARY_WORTH = (
+    Column("name", "Is it worth it", "wrap"),
+    Column("verdict", "Against the existing feeder", "verdict"),
+    Column("to_best", "Against the recommended one", "verdict"),
+    Column("payback", "Simple payback (years)", "years"),
+    Column("own_payback", "Payback on the utility's own money (years)", "years"),
+    Column("ratio", "Benefit-cost ratio", "hours"),
+    Column("ratio_gross", "Benefit-cost ratio before grants", "hours"),
+    Column("gross", "Capital before grants ({money})", "money"),
+    Column("present", "Present value against existing ({money})", "change"),
+    Column("minutes", "Customer-minutes avoided (per year)", "whole"),
+    Column("per_minute", "Cost per avoided customer-minute ({money})", "per_minute"),
+)
+
 PLAN_TOTALS = (
     Column("name", "Alternative", "wrap"),
     Column("place", "How it came about", "text"),
@@ -55,10 +81,10 @@ PLAN_TOTALS = (
     Column("storage_kwh", "Storage energy (kWh)", "energy"),
     Column("generator_kw", "Generation (kW)", "power"),
     Column("measures", "Hardening measures (number)", "whole"),
-    Column("other_capital", "Device changes: capital ({money})", "money", is_input=True),
-    Column("other_yearly", "Device changes: yearly cost ({money}/year)", "money", is_input=True),
+    Column("devices", "Device changes: capital ({money})", "money"),
     Column("gross", "Capital before grants ({money})", "money"),
     Column("net", "Capital after grants ({money})", "money"),
+    Column("investment_gross", "Yearly investment before grants ({money}/year)", "money"),
     Column("investment", "Yearly investment ({money}/year)", "money"),
     Column("fixed_om", "Fixed O&M ({money}/year)", "money"),
     Column("yearly", "Yearly cost ({money}/year)", "money"),
@@ -70,18 +96,18 @@ PRICES = (
     Column("kind", "Kind", "text"),
     Column("max_kw", "Largest new power (kW)", "power"),
     Column("max_kwh", "Largest new energy (kWh)", "energy"),
-    Column("per_kw", "Capital per kW ({money}/kW)", "price", is_input=True),
-    Column("per_kwh", "Capital per kWh ({money}/kWh)", "price", is_input=True),
-    Column("site", "Site cost, or cost of the measure ({money})", "money", is_input=True),
-    Column("grant", "Grant (share of capital)", "percent", is_input=True),
-    Column("life", "Life (years)", "years", is_input=True),
-    Column("om_rate", "Fixed O&M ({money}/year per kW, or per measure)", "price", is_input=True),
+    Column("per_kw", "Capital per kW ({money}/kW)", "price"),
+    Column("per_kwh", "Capital per kWh ({money}/kWh)", "price"),
+    Column("site", "Site cost, or cost of the measure ({money})", "money"),
+    Column("grant", "Grant (share of capital)", "percent"),
+    Column("life", "Life (years)", "years"),
+    Column("om_rate", "Fixed O&M ({money}/year per kW, or per measure)", "price"),
     Column("crf", "Capital recovery factor (per year)", "factor"),
 )
 
 PURCHASES = (
     Column("name", "Alternative", "wrap"),
-    Column("asset", "Asset", "text"),
+    Column("asset", "Asset", "wrap"),
     Column("kind", "Kind", "text"),
     Column("is_bought", "Bought", "text"),
     Column("kw", "Power bought (kW)", "power", is_input=True),
@@ -287,6 +313,133 @@ METHODS = (
     Column("method", "Method", "text"),
     Column("counted", "How the cost was found", "text"),
     Column("seconds", "Solving (s)", "hours"),
+)
+
+WORTH = (
+    Column("rank", "Rank by net value", "whole"),
+    Column("name", "Measure", "wrap"),
+    Column("lines", "Lines", "wrap"),
+    Column("avoided", "Failures avoided (share)", "percent"),
+    Column("is_bought", "In the plan", "text"),
+    Column("capital", "Capital after grants ({money})", "money"),
+    Column("yearly", "Its own yearly cost ({money}/year)", "money"),
+    Column("utility", "Worth to the utility, before its own cost ({money}/year)", "change"),
+    Column("customers", "Worth to customers ({money}/year)", "change"),
+    Column("value", "Worth, before its own cost ({money}/year)", "change"),
+    Column("low", "95 % interval: low ({money}/year)", "change"),
+    Column("high", "95 % interval: high ({money}/year)", "change"),
+    Column("net", "Net value ({money}/year)", "change"),
+    Column("payback", "Simple payback (years)", "years"),
+    Column("eens", "Unserved energy avoided (kWh/year)", "energy"),
+    Column("verdict", "Verdict", "status"),
+)
+
+REPAIR_POINTS = (
+    Column("factor", "Repair times (times those given)", "hours"),
+    Column("hours", "Mean length of an outage event (h, whole periods)", "hours"),
+    Column("events", "Outage events (per year)", "small"),
+    Column("kept", "Yearly cost, plan kept ({money}/year)", "money"),
+    Column("kept_utility", "Of this the utility's own ({money}/year)", "money"),
+    Column("kept_customers", "Of this the customers' ({money}/year)", "money"),
+    Column("kept_eens", "Energy not supplied, plan kept (kWh/year)", "energy"),
+    Column("kept_saidi", "Outage hours per customer, plan kept (h/year)", "hours"),
+    Column("anew", "Yearly cost, plan made anew ({money}/year)", "money"),
+    Column("anew_capital", "Capital of that plan ({money})", "money"),
+    Column("anew_eens", "Energy not supplied, plan made anew (kWh/year)", "energy"),
+    Column("loss", "Loss by keeping the plan ({money}/year)", "change"),
+    Column("low", "Interval of the loss: low ({money}/year)", "change"),
+    Column("high", "Interval of the loss: high ({money}/year)", "change"),
+    Column("verdict", "Make the plan anew?", "status"),
+)
+
+BUDGET_POINTS = (
+    Column("budget", "Money that may be spent ({money})", "money"),
+    Column("spent", "Capital spent after grants ({money})", "money"),
+    Column("total", "Yearly cost ({money}/year)", "money"),
+    Column("utility", "Of this the utility's own ({money}/year)", "money"),
+    Column("customers", "Of this the customers' ({money}/year)", "money"),
+    Column("eens", "Energy not supplied (kWh/year)", "energy"),
+    Column("saidi", "Outage hours per customer (h/year)", "hours"),
+    Column("saving", "Saving against spending nothing ({money}/year)", "change"),
+    Column("low", "Interval of the saving: low ({money}/year)", "change"),
+    Column("high", "Interval of the saving: high ({money}/year)", "change"),
+    Column("step", "Saving per 1,000 more spent ({money}/year)", "change"),
+    Column("bought", "What is bought", "wrap"),
+    Column("note", "Note", "wrap"),
+)
+
+SENSITIVITY_ROWS = (
+    Column("name", "Assumption", "wrap"),
+    Column("low_value", "Low value (times; points for the rate)", "hours"),
+    Column("high_value", "High value (times; points for the rate)", "hours"),
+    Column("low_anew", "Yearly cost at low, best plan ({money}/year)", "money"),
+    Column("high_anew", "Yearly cost at high, best plan ({money}/year)", "money"),
+    Column("low_change", "Against the study at low ({money}/year)", "change"),
+    Column("high_change", "Against the study at high ({money}/year)", "change"),
+    Column("range", "Range of cost ({money}/year)", "money"),
+    Column("low_kept", "Yearly cost at low, plan kept ({money}/year)", "money"),
+    Column("high_kept", "Yearly cost at high, plan kept ({money}/year)", "money"),
+    Column("low_plan", "What the best plan becomes at low", "wrap"),
+    Column("high_plan", "What the best plan becomes at high", "wrap"),
+    Column("verdict", "Does the plan change?", "status"),
+)
+
+SENSITIVITY_PARTS = (
+    Column("name", "Assumption", "wrap"),
+    Column("low_utility", "Best plan at low: utility's own ({money}/year)", "money"),
+    Column("low_customers", "Best plan at low: customers' ({money}/year)", "money"),
+    Column("high_utility", "Best plan at high: utility's own ({money}/year)", "money"),
+    Column("high_customers", "Best plan at high: customers' ({money}/year)", "money"),
+)
+
+REGRETS = (
+    Column("name", "Alternative", "wrap"),
+    Column("base", "Yearly cost as given ({money}/year)", "money"),
+    Column("largest", "Largest regret ({money}/year)", "money"),
+    Column("case", "In the case", "text"),
+    Column("mean", "Mean regret over the cases ({money}/year)", "money"),
+    Column("rank", "Rank by largest regret", "whole"),
+)
+
+SPREAD = (
+    Column("figure", "Figure", "wrap"),
+    Column("percent", "Percentile (%)", "whole"),
+    Column("cost_base", "Year's cost, existing feeder ({money})", "money"),
+    Column("cost_plan", "Year's cost, plan ({money})", "money"),
+    Column("eens_base", "Year's unserved energy, existing feeder (kWh)", "energy"),
+    Column("eens_plan", "Year's unserved energy, plan (kWh)", "energy"),
+    Column("event_cost_base", "Cost of one event, existing feeder ({money})", "money"),
+    Column("event_cost_plan", "Cost of one event, plan ({money})", "money"),
+    Column("event_eens_base", "Unserved in one event, existing feeder (kWh)", "energy"),
+    Column("event_eens_plan", "Unserved in one event, plan (kWh)", "energy"),
+)
+
+SPREAD_STEPS = (
+    Column("step", "From - to", "text"),
+    Column("low", "From", "energy"),
+    Column("high", "To", "energy"),
+    Column("weight", "How often", "small"),
+)
+
+WORST_EVENTS = (
+    Column("causes", "What fails", "wrap"),
+    Column("rank", "No.", "whole"),
+    Column("window", "Window", "wrap"),
+    Column("begins", "Outage begins", "text"),
+    Column("hours", "Lasts (h)", "hours"),
+    Column("per_year", "Events of this kind (per year)", "small"),
+    Column("eens", "Energy not supplied in this event (kWh)", "energy"),
+    Column("eens_base", "The same on the existing feeder, at its worst (kWh)", "energy"),
+    Column("customers", "Customers interrupted (number)", "energy"),
+    Column("cost", "Repair and interruption cost ({money})", "money"),
+    Column("lost", "What was lost", "wrap"),
+)
+
+DRAWN_BUSES = (
+    Column("bus", "Bus", "wrap"),
+    Column("x", "x (drawing units)", "hours"),
+    Column("y", "y (drawing units)", "hours"),
+    Column("note", "What stands there", "wrap"),
 )
 
 CHECK_LINES = (

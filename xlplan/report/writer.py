@@ -1,7 +1,8 @@
 """The results workbook: sheets in their order, written whole or not at all.
 
-    Summary - Alternatives - Plan - Reliability - Operation - Voltages - Convergence - Checks
-    - Assumptions - Cautions
+    Summary - Alternatives - Plan - Line hardening - Repair time - Budget - Sensitivities
+    - Reliability - Risk - Operation - Voltages - Feeder - Convergence - Checks - Assumptions
+    - Cautions
 
 Sheets are filled in the order in which they need each other's addresses: Plan first, Summary last.
 """
@@ -21,12 +22,18 @@ from xlplan.report.safe_book import SafeBook
 from xlplan.report.sheets import (
     alternatives,
     assumptions,
+    budget,
     cautions,
     checks,
     convergence,
+    feeder,
+    hardening,
     operation,
     plan,
     reliability,
+    repair_time,
+    risk,
+    sensitivities,
     summary,
     voltages,
 )
@@ -95,12 +102,20 @@ def _fill(book: SafeBook, result: StudyResult) -> None:
     for name in SHEET_ORDER:
         book.add_sheet(name)
     plan_cells = plan.write(book, result)
-    alternatives_cells = alternatives.write(book, result, plan_cells)
     reliability_cells = reliability.write(book, result)
+    alternatives_cells = alternatives.write(book, result, plan_cells, reliability_cells)
+    pack_cells = checks.PackCells(
+        hardening=hardening.write(book, result, plan_cells),
+        repair_time=repair_time.write(book, result),
+        budget=budget.write(book, result),
+        sensitivities=sensitivities.write(book, result),
+    )
+    risk.write(book, result)
     operation.write(book, result)
     voltages.write(book, result)
+    feeder.write(book, result)
     convergence.write(book, result)
-    checks_cells = checks.write(book, result, alternatives_cells, reliability_cells)
+    checks_cells = checks.write(book, result, alternatives_cells, reliability_cells, pack_cells)
     assumptions.write(book, result)
     cautions.write(book)
     summary.write(book, result, alternatives_cells, reliability_cells, checks_cells)

@@ -134,6 +134,7 @@ class NodeSolver:
         """One node. The pools are left as they are: new cuts come back in the solution."""
         i_family, i_member = request.family, request.member
         model = self.model(i_family, request.replica)
+        self.counts["node solve"] += 1
         state = clip_state(self.tables.families[i_family], request.state, request.capacity)
         try:
             outcome = model.solve(

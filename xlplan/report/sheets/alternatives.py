@@ -6,21 +6,24 @@ numbers; investment and fixed O&M are taken from the Plan sheet; everything else
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field, replace
 
 from xlsxwriter.utility import xl_rowcol_to_cell
 
+from xlplan.base.units import minutes_from_hours
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import PlanResult
 from xlplan.report import money
 from xlplan.report.grid import HEADING_CHARS, LINE_POINTS, Cell, Formula, lines_needed, write_cell
 from xlplan.report.safe_book import SafeBook
 from xlplan.report.sheets.plan import DISCOUNT_RATE, PlanCells
-from xlplan.report.statement import STATEMENT
+from xlplan.report.sheets.price_list import write_prices
+from xlplan.report.sheets.reliability import ReliabilityCells
+from xlplan.report.statement import HEAD_ROW, STATEMENT, statement_rows
 from xlplan.report.tables import ALTERNATIVES
 
 STUDY_LIFE = "study_life_years"
-RATE_ROW, LIFE_ROW, HEAD_ROW = 3, 4, 6
+RATE_ROW, LIFE_ROW = 3, 4
 FIRST_PLAN_COL = 2
 PLAN_WIDTH = 18
 NUMBER_PARTS = (
@@ -40,6 +43,8 @@ class AlternativesCells:
     """Where each figure stands: ``here(key, i_plan)`` on the sheet, ``away`` for others."""
 
     row_of: dict[str, int]
+    content: list[dict[str, Cell]] = field(default_factory=list)
+    """What each plan's column holds, by key."""
 
     def here(self, key: str, i_plan: int) -> str:
         """Relative address on the sheet."""
@@ -55,16 +60,19 @@ class AlternativesCells:
         return f"'{ALTERNATIVES}'!{cell}"
 
 
-def write(book: SafeBook, result: StudyResult, plan_cells: PlanCells) -> AlternativesCells:
+def write(
+    book: SafeBook, result: StudyResult, plan_cells: PlanCells, reliability: ReliabilityCells
+) -> AlternativesCells:
     """Writes the sheet; Summary and Checks refer to its cells."""
     sheet = book.sheet(ALTERNATIVES)
     sheet.head(
         "Alternatives side by side",
         "Yearly cost from its parts to totals, then capital, payback and present value, against "
-        "the existing feeder. Blue figures can be changed; formulas follow.",
+        "the existing feeder. Blue figures (rates, and prices at the end) can be changed.",
     )
     _write_assumptions(book, result)
-    cells, last_row = _place()
+    row_of, _ = statement_rows()
+    cells = AlternativesCells(row_of)
     note_col = FIRST_PLAN_COL + len(result.plans)
     for i, plan in enumerate(result.plans):
         sheet.text(HEAD_ROW, FIRST_PLAN_COL + i, plan.name, "heading_right")
@@ -75,7 +83,11 @@ def write(book: SafeBook, result: StudyResult, plan_cells: PlanCells) -> Alterna
     lines_of_names = max(lines_needed(plan.name, room) for plan in result.plans)
     sheet.height(HEAD_ROW, LINE_POINTS * lines_of_names + 4)
     content = [
-        {**_cost_cells(plan, i, cells, plan_cells), **_worth_cells(result, plan, i, cells)}
+        {
+            **_cost_cells(plan, i, cells, plan_cells),
+            **_worth_cells(result, plan, i, cells),
+            **_minute_cells(result, plan, i, cells, plan_cells, reliability),
+        }
         for i, plan in enumerate(result.plans)
     ]
     for block in STATEMENT:
@@ -90,8 +102,9 @@ def write(book: SafeBook, result: StudyResult, plan_cells: PlanCells) -> Alterna
             sheet.text(row, note_col, line.note, "remark")
     sheet.widths([40, max(15, len(result.currency) + 7)] + [PLAN_WIDTH] * len(result.plans) + [92])
     sheet.freeze(HEAD_ROW + 1, FIRST_PLAN_COL)
-    sheet.print_setup(last_row, note_col)
-    return cells
+    write_prices(sheet, plan_cells.price_list)
+    sheet.print_setup(plan_cells.price_list.below, note_col)
+    return replace(cells, content=content)
 
 
 def _write_assumptions(book: SafeBook, result: StudyResult) -> None:
@@ -106,19 +119,6 @@ def _write_assumptions(book: SafeBook, result: StudyResult) -> None:
     sheet.text(LIFE_ROW, 2, "Common practice; not an input of the study", "remark")
     book.define_name(DISCOUNT_RATE, ALTERNATIVES, f"$B${RATE_ROW + 1}")
     book.define_name(STUDY_LIFE, ALTERNATIVES, f"$B${LIFE_ROW + 1}")
-
-
-def _place() -> tuple[AlternativesCells, int]:
-    """Row of every block and figure, and the last row."""
-    row_of: dict[str, int] = {}
-    row = HEAD_ROW + 1
-    for block in STATEMENT:
-        row_of[block.title] = row
-        for line in block.lines:
-            row += 1
-            row_of[line.key] = row
-        row += 2
-    return AlternativesCells(row_of), row - 2
 
 
 def _cost_cells(
@@ -196,6 +196,13 @@ def _worth_cells(
         "difference": less_base("total", difference),
         "difference_low": plan.difference_interval[0],
         "difference_high": plan.difference_interval[1],
+        "verdict": _verdict(cells, i, "difference", plan.difference_interval, plan.name, base.name),
+        "to_best": plan.difference_to_best,
+        "to_best_low": plan.difference_to_best_interval[0],
+        "to_best_high": plan.difference_to_best_interval[1],
+        "to_best_verdict": _verdict(
+            cells, i, "to_best", plan.difference_to_best_interval, plan.name, result.recommended
+        ),
         "extra_capital": less_base("net", extra_capital),
         "extra_investment": less_base("investment", extra_investment),
         "saving": saving_cell,
@@ -205,4 +212,63 @@ def _worth_cells(
         "ratio": ratio,
         "present_total": Formula(present, plan.costs.total * factor),
         "present_difference": less_base("present_total", difference * factor),
+    }
+
+
+def _verdict(
+    cells: AlternativesCells, i: int, key: str, span: tuple[float, float], name: str, other: str
+) -> Cell:
+    """Cheaper, dearer or undecided by the interval; nothing to say of a plan against itself."""
+    if name == other:
+        return "-"
+    low, high = cells.here(f"{key}_low", i), cells.here(f"{key}_high", i)
+    cent = money.HALF_CENT
+    text = (
+        f'=IF({low}>{cent},"{money.DEARER}",'
+        f'IF({high}<-{cent},"{money.CHEAPER}","{money.UNDECIDED}"))'
+    )
+    return Formula(text, money.verdict(span))
+
+
+def _minute_cells(
+    result: StudyResult,
+    plan: PlanResult,
+    i: int,
+    cells: AlternativesCells,
+    plan_cells: PlanCells,
+    reliability: ReliabilityCells,
+) -> dict[str, Cell]:
+    """Customer-minutes avoided and what one costs; totals as if there were no grants."""
+    base = money.baseline(result)
+    saved_h = base.indices.saidi_h - plan.indices.saidi_h
+    minutes = minutes_from_hours(saved_h) * result.customers
+    minutes_text = (
+        f"=({cells.base('saidi')}-{cells.here('saidi', i)})*{cells.here('customers_served', i)}*60"
+    )
+    extra = plan.costs.utility - base.costs.utility
+    per_minute: Cell = "none avoided"
+    if minutes > money.LEAST_MINUTES:
+        text = f"=({cells.here('utility', i)}-{cells.base('utility')})/{cells.here('minutes', i)}"
+        per_minute = Formula(text, extra / minutes)
+    gross = sum(a.capital_gross * a.crf for a in plan.purchases)
+    base_gross = sum(a.capital_gross * a.crf for a in base.purchases)
+    totals = plan_cells.totals
+    ratio: Cell = money.NOTHING_BOUGHT
+    if gross - base_gross > 0.0:
+        saved = money.saving(
+            base.costs.total, base.costs.investment, plan.costs.total, plan.costs.investment
+        )
+        less = f"({totals.away(i, 'investment_gross')}-{totals.away(0, 'investment_gross')})"
+        ratio = Formula(f"={cells.here('saving', i)}/{less}", saved / (gross - base_gross))
+    total_gross = (
+        f"={cells.here('total', i)}+{totals.away(i, 'investment_gross')}"
+        f"-{totals.away(i, 'investment')}"
+    )
+    return {
+        "customers_served": result.customers,
+        "saidi": Formula(f"={reliability.indices.away(2 * i, 'saidi')}", plan.indices.saidi_h),
+        "minutes": Formula(minutes_text, minutes),
+        "per_minute": per_minute,
+        "total_gross": Formula(total_gross, plan.costs.total + gross - plan.costs.investment),
+        "ratio_gross": ratio,
     }

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from itertools import pairwise
 
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import CheckLine, PlanResult
@@ -16,6 +17,7 @@ from xlplan.report.grid import Cell, Formula, Grid
 from xlplan.report.money import baseline, formula_net_capital, formula_yearly
 from xlplan.report.safe_book import SafeBook
 from xlplan.report.sheets.alternatives import AlternativesCells
+from xlplan.report.sheets.hardening import HardeningCells
 from xlplan.report.sheets.reliability import ReliabilityCells
 from xlplan.report.tables import CHECK_LINES, CHECKS
 
@@ -41,6 +43,16 @@ class ChecksCells:
 
 
 @dataclass(frozen=True)
+class PackCells:
+    """Tables of the comparison pack; None where a sheet has none."""
+
+    hardening: HardeningCells | None = None
+    repair_time: Grid | None = None
+    budget: Grid | None = None
+    sensitivities: Grid | None = None
+
+
+@dataclass(frozen=True)
 class _Line:
     about: str
     name: str
@@ -56,6 +68,7 @@ def write(
     result: StudyResult,
     alternatives: AlternativesCells,
     reliability: ReliabilityCells,
+    pack: PackCells,
 ) -> ChecksCells:
     """Writes the sheet."""
     sheet = book.sheet(CHECKS)
@@ -68,6 +81,7 @@ def write(
     lines = [_run_line("Study", line) for line in result.checks]
     lines += [_run_line(plan.name, line) for plan in result.plans for line in plan.checks]
     lines += _money_lines(result, alternatives) + _energy_lines(result, reliability)
+    lines += _pack_lines(result, alternatives, pack)
     grid = Grid(CHECKS, OVERALL_ROW + 2, CHECK_LINES, len(lines))
     rows = [_row(line, grid, i) for i, line in enumerate(lines)]
     grid.write(sheet, rows)
@@ -255,4 +269,88 @@ def _energy_lines(result: StudyResult, cells: ReliabilityCells) -> list[_Line]:
                 )
             )
         first += n_window
+    return lines
+
+
+def _pack_lines(
+    result: StudyResult, alternatives: AlternativesCells, cells: PackCells
+) -> list[_Line]:
+    """The pack's own figures against the alternatives they rest on."""
+    lines: list[_Line] = []
+    pack = result.pack
+    if not pack.is_asked:
+        return lines
+    names = [plan.name for plan in result.plans]
+    i_best = names.index(pack.plan_name)
+    best, base = result.plans[i_best], baseline(result)
+
+    def total(i_plan: int) -> Formula:
+        return Formula(f"={alternatives.away('total', i_plan)}", result.plans[i_plan].costs.total)
+
+    def add(name: str, what: str, left: Cell, right: Cell, tolerance: float) -> None:
+        # What agrees as the run left it can only differ because a figure was altered since.
+        agrees = abs(_number(left) - _number(right)) <= tolerance
+        word = CHANGED if agrees else FAIL
+        lines.append(_Line("Comparison", name, what, left, right, tolerance, word))
+
+    money = max(CENT, RELATIVE * abs(best.costs.total))
+    if cells.budget is not None:
+        points = pack.budget
+        add(
+            "Budget curve begins at the existing feeder",
+            "Yearly cost with nothing spent, and the existing feeder's on Alternatives",
+            Formula(f"={cells.budget.away(0, 'total')}", points[0].plan.costs.total),
+            total(names.index(base.name)),
+            money,
+        )
+        rises = [
+            max(0.0, after.plan.costs.total - before.plan.costs.total)
+            for before, after in pairwise(points)
+        ]
+        add(
+            "Budget curve never rises",
+            "Most by which more money costs more, and 0: money need not be spent",
+            max(rises, default=0.0),
+            0.0,
+            money,
+        )
+        over = max((point.plan.capital_cost - point.budget for point in points), default=0.0)
+        add(
+            "Budget curve keeps its budgets",
+            "Most by which a point spends more than it may, and 0",
+            max(0.0, over),
+            0.0,
+            max(CENT, RELATIVE * max(point.budget for point in points)),
+        )
+    if cells.repair_time is not None:
+        at = [point.factor for point in pack.repair_time].index(1.0)
+        add(
+            "Repair times as given",
+            "Yearly cost of the plan at the repair times given, and on Alternatives",
+            Formula(
+                f"={cells.repair_time.away(at, 'kept')}", pack.repair_time[at].kept.costs.total
+            ),
+            total(i_best),
+            money,
+        )
+    if cells.hardening is not None:
+        lowest = min(min(row.in_plan.interval[1], row.alone.interval[1]) for row in pack.hardening)
+        add(
+            "No measure does harm",
+            "Upper end of the least worth of any measure where it is below 0, and 0",
+            min(0.0, lowest),
+            0.0,
+            money,
+        )
+    for case in pack.sensitivities:
+        # The plan kept is open to the search, so made anew can cost no more than it.
+        above = case.anew.costs.total - case.kept.costs.total
+        if above > money:
+            add(
+                f"Plan made anew, {case.parameter} {'high' if case.is_high else 'low'}",
+                "Amount by which it costs more than the plan kept, and 0",
+                above,
+                0.0,
+                money,
+            )
     return lines

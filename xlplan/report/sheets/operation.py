@@ -1,4 +1,4 @@
-"""Operation: the plan through a normal day and through its worst outage event.
+"""Operation: the plan through a normal day and through chosen outage events.
 
 For each trace: three charts, then (below all charts) its numbers by period. Sources may be below
 0 where a store charges or energy is sold.
@@ -49,7 +49,8 @@ def write(book: SafeBook, result: StudyResult) -> None:
     sheet.head(
         "How the plan runs",
         f"{best.name}: load, sources, stored energy and unserved load by period; a normal day, "
-        "then the worst outage event. The numbers behind the charts follow below them.",
+        "then the worst, the most frequent and the longest outage event. The numbers behind the "
+        "charts follow below them.",
     )
     if not best.traces:
         sheet.text(3, 0, "The run kept no trace of operation.", "note")

@@ -14,15 +14,14 @@ from xlplan.evaluate.results import PlanResult, Purchase
 from xlplan.report.grid import Cell, Formula, Grid
 from xlplan.report.money import buys_anything
 from xlplan.report.safe_book import SafeBook
+from xlplan.report.sheets.price_list import PriceList, place_prices
+from xlplan.report.statement import statement_rows
 from xlplan.report.tables import PLAN, PLAN_TOTALS, PRICES, PURCHASES
 
 DISCOUNT_RATE = "discount_rate"
 """Name of the cell that holds the real discount rate; it stands on the Alternatives sheet."""
 
-NOISE = 1e-6
-"""Money below which a remainder is rounding of sums, not a device change."""
-
-WIDTHS = (25, 18, 12, 12, 13, 13, 14, 14, 14, 14, 13, 13, 13)
+WIDTHS = (27, 18, 12, 12, 13, 13, 14, 14, 14, 14, 13, 13, 13)
 
 
 @dataclass(frozen=True)
@@ -30,6 +29,13 @@ class PlanCells:
     """Where the totals stand: row i belongs to plan i of the result."""
 
     totals: Grid
+    prices: Grid
+    price_row: dict[str, int]
+    price_list: PriceList
+
+    def price(self, asset: str, key: str) -> str:
+        """Address of one figure of the price list, for other sheets."""
+        return self.prices.away(self.price_row[asset], key)
 
 
 def write(book: SafeBook, result: StudyResult) -> PlanCells:
@@ -37,17 +43,14 @@ def write(book: SafeBook, result: StudyResult) -> PlanCells:
     sheet = book.sheet(PLAN)
     sheet.head(
         "What each alternative buys",
-        "Blue figures on a pale fill were given or found by the run; black ones are formulas that "
-        "follow them. Changing a figure moves the totals; it does not search for a new plan.",
+        "Blue figures on a pale fill were found by the run; black ones are formulas that follow "
+        "them and the prices on the Alternatives sheet. Changing one searches for no new plan.",
     )
     sheet.widths(WIDTHS)
     shown = [plan for plan in result.plans if buys_anything(plan)]
-    # Prices are the study's, the same in every plan; the first mention of an asset counts.
-    by_name: dict[str, Purchase] = {}
-    for plan in result.plans:
-        for asset in plan.purchases:
-            by_name.setdefault(asset.asset, asset)
-    assets = list(by_name.values())
+    # Prices are the study's, the same in every plan; they are typed on the Alternatives sheet.
+    price_list = place_prices(result, statement_rows()[1] + 2)
+    assets = price_list.assets
     price_row = {asset.asset: i for i, asset in enumerate(assets)}
     totals = Grid(PLAN, 4, PLAN_TOTALS, len(result.plans))
     prices = Grid(PLAN, totals.below + 2, PRICES, len(assets))
@@ -69,8 +72,8 @@ def write(book: SafeBook, result: StudyResult) -> PlanCells:
     best = [i for i, plan in enumerate(result.plans) if plan.name == result.recommended]
     totals.write(sheet, total_rows, marked=best)
 
-    sheet.text(prices.top - 1, 0, "Prices and lives, as given in the study", "section")
-    prices.write(sheet, [_price_row(a, prices, i) for i, a in enumerate(assets)])
+    sheet.text(prices.top - 1, 0, "Prices and lives, from the Alternatives sheet", "section")
+    prices.write(sheet, [_price_row(a, prices, i, price_list) for i, a in enumerate(assets)])
 
     sheet.text(bought.top - 1, 0, "Purchases by alternative", "section")
     marked = [i for i, row in enumerate(rows) if row["is_bought"] == "yes"]
@@ -78,7 +81,7 @@ def write(book: SafeBook, result: StudyResult) -> PlanCells:
     sheet.text(bought.below + 1, 0, NOTE, "note")
     sheet.freeze(2, 1)
     sheet.print_setup(bought.below + 1, len(PURCHASES) - 1)
-    return PlanCells(totals)
+    return PlanCells(totals, prices, price_row, price_list)
 
 
 NOTE = (
@@ -87,20 +90,25 @@ NOTE = (
 )
 
 
-def _price_row(asset: Purchase, prices: Grid, i: int) -> dict[str, Cell]:
+def _price_row(asset: Purchase, prices: Grid, i: int, price_list: PriceList) -> dict[str, Cell]:
     """One asset that can be bought: its prices, and the factor of its own life."""
+
+    def figure(key: str, value: float) -> Cell:
+        place = price_list.away(asset.asset, key)
+        return value if place is None else Formula(f"={place}", value)
+
     return {
         "asset": asset.asset,
         "place": asset.place,
         "kind": asset.kind,
         "max_kw": asset.max_new_kw,
         "max_kwh": asset.max_new_kwh,
-        "per_kw": asset.capital_per_kw,
-        "per_kwh": asset.capital_per_kwh,
-        "site": asset.capital_site,
-        "grant": asset.grant_frac,
-        "life": asset.life_years,
-        "om_rate": asset.fixed_om_rate,
+        "per_kw": figure("per_kw", asset.capital_per_kw),
+        "per_kwh": figure("per_kwh", asset.capital_per_kwh),
+        "site": figure("site", asset.capital_site),
+        "grant": figure("grant", asset.grant_frac),
+        "life": figure("life", asset.life_years),
+        "om_rate": figure("om_rate", asset.fixed_om_rate),
         "crf": Formula(f"=-PMT({DISCOUNT_RATE},{prices.here(i, 'life')},1)", asset.crf),
     }
 
@@ -142,14 +150,14 @@ def _purchase_row(
 def _total_row(
     plan: PlanResult, i: int, totals: Grid, bought: Grid, first: int | None
 ) -> dict[str, Cell]:
-    """Sums over a plan's block of purchases, and what device changes add."""
+    """Sums over a plan's block of purchases, device changes among them."""
     assets = plan.purchases
     n = len(assets)
 
-    def block_sum(key: str, value: float, extra: str = "") -> Formula:
+    def block_sum(key: str, value: float) -> Formula:
         if first is None or n == 0:
-            return Formula(f"=0{'+' + extra if extra else ''}", value)
-        return Formula(f"=SUM({bought.span(key, first, n)}){'+' + extra if extra else ''}", value)
+            return Formula("=0", value)
+        return Formula(f"=SUM({bought.span(key, first, n)})", value)
 
     def sum_of_kind(kind: str, key: str) -> Formula:
         value = sum((getattr(a, key) for a in assets if a.kind == kind and a.is_bought), 0.0)
@@ -164,10 +172,16 @@ def _total_row(
     if first is not None and n:
         kinds, yes = bought.span("kind", first, n), bought.span("is_bought", first, n)
         count = Formula(f'=COUNTIFS({kinds},"hardening",{yes},"yes")', measures)
-    other_capital = _remainder(plan.capital_cost, [a.capital_net for a in assets])
-    other_yearly = _remainder(plan.costs.investment, [a.investment for a in assets])
-    gross = sum(a.capital_gross for a in assets) + other_capital
-    capital_cell, yearly_cell = totals.here(i, "other_capital"), totals.here(i, "other_yearly")
+    gross_yearly = sum(a.capital_gross * a.crf for a in assets)
+    devices = Formula("=0", 0.0)
+    if first is not None and n:
+        kinds, net = bought.span("kind", first, n), bought.span("net", first, n)
+        value = sum(a.capital_net for a in assets if a.kind == "device")
+        devices = Formula(f'=SUMIFS({net},{kinds},"device")', value)
+    before_grants = Formula("=0", gross_yearly)
+    if first is not None and n:
+        spans = f"{bought.span('gross', first, n)},{bought.span('crf', first, n)}"
+        before_grants = Formula(f"=SUMPRODUCT({spans})", gross_yearly)
     return {
         "name": plan.name,
         "place": plan.kind,
@@ -175,20 +189,14 @@ def _total_row(
         "storage_kwh": sum_of_kind("storage", "kwh"),
         "generator_kw": sum_of_kind("generator", "kw"),
         "measures": count,
-        "other_capital": other_capital,
-        "other_yearly": other_yearly,
-        "gross": block_sum("gross", gross, capital_cell),
-        "net": block_sum("net", plan.capital_cost, capital_cell),
-        "investment": block_sum("investment", plan.costs.investment, yearly_cell),
+        "devices": devices,
+        "gross": block_sum("gross", plan.capital_gross),
+        "net": block_sum("net", plan.capital_cost),
+        "investment_gross": before_grants,
+        "investment": block_sum("investment", plan.costs.investment),
         "fixed_om": block_sum("fixed_om", plan.costs.fixed_om),
         "yearly": Formula(
             f"={totals.here(i, 'investment')}+{totals.here(i, 'fixed_om')}",
             plan.costs.investment + plan.costs.fixed_om,
         ),
     }
-
-
-def _remainder(total: float, parts: list[float]) -> float:
-    """What no listed asset accounts for: the changed devices of an alternative."""
-    rest = total - sum(parts)
-    return 0.0 if abs(rest) < max(NOISE, 1e-12 * abs(total)) else rest

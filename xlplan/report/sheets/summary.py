@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import PlanResult, Purchase
-from xlplan.report import charts, wording
+from xlplan.report import charts, pack_wording, wording
 from xlplan.report.grid import Cell, Formula, Grid
 from xlplan.report.looks import BLACK, BLUE, NAVY, ORANGE, SKY, VERMILION
 from xlplan.report.money import baseline, money_words
@@ -17,11 +17,11 @@ from xlplan.report.sheets.alternatives import AlternativesCells
 from xlplan.report.sheets.cautions import CAUTION_TEXTS
 from xlplan.report.sheets.checks import ChecksCells
 from xlplan.report.sheets.reliability import ReliabilityCells
-from xlplan.report.tables import CAUTIONS, PLAN, SUMMARY, SUMMARY_PLANS
+from xlplan.report.tables import CAUTIONS, PLAN, SUMMARY, SUMMARY_PLANS, SUMMARY_WORTH
 
-WIDTHS = (31, 13, 14, 14, 13, 13, 14, 13, 13, 13, 13, 13, 16, 13)
+WIDTHS = (31, 15, 15, 15, 16, 15, 15, 14, 15, 15, 15, 15, 17, 15)
 LAST_COL = len(WIDTHS) - 1
-CHART_ROWS, ROWS_PER_BAR = 22, 2
+CHART_ROWS, ROWS_PER_BAR = 18, 2
 LEFT_CHART_SHARE = 0.54
 MAX_BOUGHT = 10
 LEFT_LAST_COL = 5
@@ -56,9 +56,18 @@ def write(
     ]
     marked = [i for i, plan in enumerate(result.plans) if plan.name == result.recommended]
     grid.write(sheet, rows, marked=marked)
-    row = _charts(book, sheet, result, grid, grid.below + 1)
+    worth = Grid(SUMMARY, grid.below + 1, SUMMARY_WORTH, len(result.plans))
+    worth.write(
+        sheet,
+        [_worth_row(plan, i, alternatives) for i, plan in enumerate(result.plans)],
+        marked=marked,
+    )
+    row = _charts(book, sheet, result, grid, worth.below + 1)
     left = _purchases(sheet, result, row)
-    right = _uncertain(sheet, result, row)
+    right = _sentences(
+        sheet, "Three things that matter most", pack_wording.three_things(result), row
+    )
+    right = _sentences(sheet, "What is uncertain", wording.uncertainties(result), right)
     row = max(left, right) + 1
     sheet.text(row, 0, "Do the numbers agree?", "status")
     sheet.formula(row, 1, f"={checks.overall}", checks.words, "status")
@@ -198,11 +207,32 @@ def _asset_words(asset: Purchase, currency: str) -> str:
     return f"•  {asset.asset}: {asset.kind} at {asset.place}, {size}; {capital}"
 
 
-def _uncertain(sheet: SafeSheet, result: StudyResult, row: int) -> int:
-    """What is uncertain; next free row."""
-    sheet.text(row, RIGHT_COL, "What is uncertain", "section")
+def _sentences(sheet: SafeSheet, title: str, sentences: list[str], row: int) -> int:
+    """Sentences under a heading on the right; next free row. None: no heading either."""
+    if not sentences:
+        return row
+    sheet.text(row, RIGHT_COL, title, "section")
     row += 1
-    for sentence in wording.uncertainties(result):
-        sheet.paragraph(row, RIGHT_COL, LAST_COL, f"•  {sentence}", 112)
+    for sentence in sentences:
+        sheet.paragraph(row, RIGHT_COL, LAST_COL, f"•  {sentence}", 125)
         row += 1
     return row
+
+
+def _worth_row(plan: PlanResult, i: int, alternatives: AlternativesCells) -> dict[str, Cell]:
+    """Verdicts, payback, ratios and present value, all from Alternatives."""
+
+    def here(key: str) -> Cell:
+        found = alternatives.content[i][key]
+        value = found.value if isinstance(found, Formula) else found
+        assert value is not None
+        return Formula(f"={alternatives.away(key, i)}", value)
+
+    keys = ("payback", "own_payback", "ratio", "ratio_gross", "gross", "minutes", "per_minute")
+    return {
+        "name": plan.name,
+        "verdict": here("verdict"),
+        "to_best": here("to_best_verdict"),
+        "present": here("present_difference"),
+        **{key: here(key) for key in keys},
+    }

@@ -1,0 +1,112 @@
+"""Repair time: cost and unserved energy against the speed of repair, plan kept and made anew."""
+
+from __future__ import annotations
+
+from xlplan.compare.pack_result import RepairPoint
+from xlplan.compare.study_result import StudyResult
+from xlplan.report import charts, pack_wording
+from xlplan.report.grid import Cell, Formula, Grid
+from xlplan.report.looks import BLUE, ORANGE
+from xlplan.report.money import UNDECIDED
+from xlplan.report.safe_book import SafeBook
+from xlplan.report.sheets.absent import say_absent
+from xlplan.report.tables import REPAIR_POINTS, REPAIR_TIME
+
+WIDTHS = (14, 14, 11, 14, 14, 14, 14, 13, 14, 14, 14, 14, 14, 14, 14)
+CHART_ROWS = 18
+CHART_TOP = 5
+PAYS, HOLDS = "yes", "no"
+
+
+def write(book: SafeBook, result: StudyResult) -> Grid | None:
+    """Writes the sheet; the table for Checks, None where there is none."""
+    sheet = book.sheet(REPAIR_TIME)
+    sheet.head(
+        "What faster repair is worth",
+        "All repair times multiplied by one factor. Plan kept: the purchases of the "
+        f"{result.pack.plan_name or 'plan'}; plan made anew: the best purchases for that speed.",
+    )
+    sheet.widths(WIDTHS)
+    points = result.pack.repair_time
+    if not points:
+        say_absent(sheet, result, "outages")
+        return None
+    sheet.paragraph(3, 0, len(WIDTHS) - 1, pack_wording.hour_faster(result), 200, "text", "bold")
+    grid = Grid(REPAIR_TIME, CHART_TOP + CHART_ROWS + 2, REPAIR_POINTS, len(points))
+    sheet.text(grid.top - 1, 0, "Repair times from half to double", "section")
+    rows = [_row(point, grid, i) for i, point in enumerate(points)]
+    grid.write(sheet, rows, marked=[i for i, p in enumerate(points) if p.factor == 1.0])
+    hours = [point.mean_event_h for point in points]
+    for left, keys, title, unit, values in (
+        (
+            0,
+            ("kept", "anew"),
+            "Yearly cost against the mean length of an outage",
+            book.words("Yearly cost ({money}/year)"),
+            [v for p in points for v in (p.kept.costs.total, p.anew.costs.total)],
+        ),
+        (
+            1,
+            ("kept_eens", "anew_eens"),
+            "Energy not supplied against the mean length of an outage",
+            "Energy not supplied (kWh/year)",
+            [v for p in points for v in (p.kept.indices.eens_kwh, p.anew.indices.eens_kwh)],
+        ),
+    ):
+        chart = charts.lines_over_numbers(
+            book,
+            title,
+            grid.chart_values("hours"),
+            [
+                charts.Series(grid.chart_name(keys[0]), grid.chart_values(keys[0]), BLUE),
+                charts.Series(
+                    grid.chart_name(keys[1]), grid.chart_values(keys[1]), ORANGE, dash="dash"
+                ),
+            ],
+            "Mean length of an outage event (h)",
+            unit,
+            charts.wide_range(values),
+            x_max=max(hours) if max(hours) > 0.0 else None,
+            x_format="0.0",
+        )
+        alt = f"Two lines: {title[0].lower()}{title[1:]}; the plan kept and the plan made anew."
+        sheet.chart(CHART_TOP, left * 745, chart, 735, CHART_ROWS * charts.PIXELS_PER_ROW - 10, alt)
+    notes = (
+        "Repairs last whole periods: factors that round to the same number of periods give the "
+        "same figures.",
+        "Intervals hold what sampling leaves open (95 %) and what the search leaves open (distance "
+        "to the lower bound).",
+    )
+    for i, note in enumerate(notes):
+        sheet.text(grid.below + 1 + i, 0, note, "note")
+    sheet.freeze(2, 0)
+    sheet.print_setup(grid.below + 2, len(WIDTHS) - 1)
+    return grid
+
+
+def _row(point: RepairPoint, grid: Grid, i: int) -> dict[str, Cell]:
+    low, high = point.loss_interval
+    word = PAYS if low > 0.0 else HOLDS if high <= 0.0 else UNDECIDED
+    if point.kept == point.anew:
+        word = HOLDS
+    kept, anew = grid.here(i, "kept"), grid.here(i, "anew")
+    return {
+        "factor": point.factor,
+        "hours": point.mean_event_h,
+        "events": point.events_per_year,
+        "kept": Formula(
+            f"={grid.here(i, 'kept_utility')}+{grid.here(i, 'kept_customers')}",
+            point.kept.costs.total,
+        ),
+        "kept_utility": point.kept.costs.utility,
+        "kept_customers": point.kept.costs.customers,
+        "kept_eens": point.kept.indices.eens_kwh,
+        "kept_saidi": point.kept.indices.saidi_h,
+        "anew": point.anew.costs.total,
+        "anew_capital": point.anew.capital_cost,
+        "anew_eens": point.anew.indices.eens_kwh,
+        "loss": Formula(f"={kept}-{anew}", point.loss),
+        "low": low,
+        "high": high,
+        "verdict": word,
+    }
