@@ -12,6 +12,7 @@ import io
 import json
 import logging
 import os
+import shutil
 import signal
 import sys
 import traceback
@@ -25,6 +26,7 @@ from rich.status import Status
 
 import xlplan
 from xlplan.base.errors import Finding, Level, PathError, StudyError, XlplanError
+from xlplan.base.listing import listed
 from xlplan.base.units import frac_from_pct, hours_from_minutes, pct_from_frac
 from xlplan.compare.standing import Progress
 from xlplan.compare.study_result import StudyResult
@@ -238,24 +240,25 @@ def _is_same_file(one: Path, other: Path) -> bool:
 
 # -- printing ----------------------------------------------------------------------------------
 
-LEVELS = ((Level.FAULT, "Faults"), (Level.WARNING, "Warnings"), (Level.NOTE, "Notes"))
-
 
 def print_findings(findings: Sequence[Finding]) -> None:
-    """Findings by level, in the order of the workbook, wrapped to the terminal."""
-    console = Console(soft_wrap=not sys.stdout.isatty(), highlight=False, markup=False)
-    for level, heading in LEVELS:
-        chosen = [finding for finding in findings if finding.level is level]
-        if chosen:
-            console.print(f"{heading}:")
-            for finding in chosen:
-                console.print("  " + finding.text())
+    """Findings sheet by sheet, wrapped to the terminal; in a pipe one line each."""
+    for line in listed(findings, _line_width()):
+        print(line)
+
+
+def _line_width() -> int | None:
+    """Characters of a line: those of the terminal, or of COLUMNS where that is set; else any."""
+    if sys.stdout.isatty():
+        return shutil.get_terminal_size().columns
+    columns = os.environ.get("COLUMNS", "")
+    return int(columns) if columns.isascii() and columns.isdigit() and int(columns) > 0 else None
 
 
 def count_findings(findings: Sequence[Finding]) -> str:
     """How many of each level, in a sentence."""
     parts = []
-    for level, _ in LEVELS:
+    for level in Level:
         n = sum(finding.level is level for finding in findings)
         parts.append(f"{n} {level}{'' if n == 1 else 's'}")
     return ", ".join(parts) + "."
