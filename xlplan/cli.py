@@ -30,7 +30,15 @@ from xlplan.base.listing import listed
 from xlplan.base.units import frac_from_pct, hours_from_minutes, pct_from_frac
 from xlplan.compare.standing import Progress
 from xlplan.compare.study_result import StudyResult
-from xlplan.pipeline import Overrides, check_target, read_study, solve_study, write_answer
+from xlplan.pipeline import (
+    CheckedInput,
+    Overrides,
+    check_target,
+    read_study,
+    solve_study,
+    write_answer,
+    write_findings,
+)
 from xlplan.report.target import replace_whole
 from xlplan.workbook.template import write_template
 
@@ -102,6 +110,12 @@ def build_parser() -> argparse.ArgumentParser:
 
     check = commands.add_parser("check", help="list everything wrong or unlikely in a study")
     check.add_argument("study", type=Path, metavar="STUDY.xlsx")
+    check.add_argument(
+        "--mark",
+        type=Path,
+        metavar="OUT.xlsx",
+        help="write the findings and marked copies of their sheets to a new workbook",
+    )
     check.add_argument("--json", type=Path, metavar="FILE", help="write the findings as JSON")
     check.set_defaults(run=_check)
 
@@ -162,10 +176,14 @@ def _template(options: argparse.Namespace) -> int:
 
 
 def _check(options: argparse.Namespace) -> int:
+    mark: Path | None = options.mark
+    if mark is not None and mark.suffix.lower() != ".xlsx":
+        raise PathError(f"'{mark}' should end in .xlsx.")
+    for path in (mark, options.json):
+        if path is not None:
+            check_target(path, options.study)
     checked = read_study(options.study)
-    print_findings(checked.findings)
-    counts = count_findings(checked.findings)
-    print(counts if checked.findings else f"{counts} The study can be solved.")
+    print_checked(checked)
     if options.json is not None:
         document = {
             "schema": 1,
@@ -174,6 +192,11 @@ def _check(options: argparse.Namespace) -> int:
             "findings": [finding_record(finding) for finding in checked.findings],
         }
         replace_whole(options.json, json.dumps(document, indent=1, ensure_ascii=False) + "\n")
+    if mark is not None:
+        written = write_findings(checked, mark, options.study)
+        if written != mark:
+            print(f"'{mark}' is there already, so the marked copy has another name:")
+        print(written)
     return DONE if checked.is_usable else UNUSABLE
 
 
@@ -222,7 +245,7 @@ def _check_paths(options: argparse.Namespace) -> None:
         return
     if study.is_dir():
         raise PathError(f"'{study}' is a folder; give the name of a study.")
-    named = [getattr(options, name, None) for name in ("output", "json", "log")]
+    named = [getattr(options, name, None) for name in ("output", "json", "log", "mark")]
     targets = [path for path in named if path is not None]
     for i, target in enumerate(targets):
         if _is_same_file(target, study):
@@ -239,6 +262,15 @@ def _is_same_file(one: Path, other: Path) -> bool:
 
 
 # -- printing ----------------------------------------------------------------------------------
+
+
+def print_checked(checked: CheckedInput) -> None:
+    """The findings of a study, how many there are, and whether it can be solved."""
+    print_findings(checked.findings)
+    verdict = (
+        "can be solved" if checked.is_usable else "cannot be solved before its faults are mended"
+    )
+    print(f"{count_findings(checked.findings)} The study {verdict}.")
 
 
 def print_findings(findings: Sequence[Finding]) -> None:

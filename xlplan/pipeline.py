@@ -19,10 +19,12 @@ from xlplan.network.topology import check_no_load_voltage, check_radial
 from xlplan.outages.checks import check_islands, check_rounded_times
 from xlplan.outages.window_model import WindowModel, build_window_models
 from xlplan.report.json_twin import write_json
+from xlplan.report.target import put_in_place, temporary_beside
 from xlplan.report.writer import check_target, write_results
 from xlplan.study.build import build_study, check_tables, in_workbook_order
 from xlplan.study.outline import outline_of
 from xlplan.study.study import Study
+from xlplan.workbook.marking import write_marked
 from xlplan.workbook.reader import read_workbook
 from xlplan.workbook.tables import RawStudy
 
@@ -56,7 +58,20 @@ def read_study(path: Path) -> CheckedInput:
 
     Raises PathError or StudyFileError for what cannot be read at all.
     """
-    raw = read_workbook(path)
+    return check_raw(read_workbook(path))
+
+
+def check_raw(raw: RawStudy) -> CheckedInput:
+    """Checks a study that was read; all findings in one pass.
+
+    Parameters
+    ----------
+    raw : RawStudy
+
+    Returns
+    -------
+    CheckedInput
+    """
     checked, findings = check_tables(raw)
     if _has_fault(findings):
         outline = outline_of(checked, findings)
@@ -99,6 +114,25 @@ def _checks_left(shape: object) -> Finding:
     message = f"not checked yet, because of faults elsewhere: {waiting}."
     hint = "These follow once the faults are mended."
     return Finding(Level.NOTE, Code.CHECKS_LEFT, "Lines", "", "", "", message, hint)
+
+
+def write_findings(checked: CheckedInput, path: Path, study_path: Path) -> Path:
+    """Writes the findings as a new workbook, with marked copies of the affected sheets.
+
+    Parameters
+    ----------
+    checked : CheckedInput
+    path : Path asked for
+    study_path : Path, never written to
+
+    Returns
+    -------
+    Path of the workbook written: the next free name where the one asked for is taken
+    """
+    check_target(path, study_path)
+    with temporary_beside(path) as temporary:
+        write_marked(temporary, checked.raw, checked.findings)
+        return put_in_place(temporary, path, force=False)
 
 
 @dataclass(frozen=True)
@@ -254,8 +288,10 @@ def write_answer(
 __all__ = [
     "CheckedInput",
     "Overrides",
+    "check_raw",
     "check_target",
     "read_study",
     "solve_study",
     "write_answer",
+    "write_findings",
 ]

@@ -181,7 +181,7 @@ SHAPES = [
     (_set("Lines", D1="Length (ft)"), WARNING, "heading unit", "Lines!D1"),
     (_set("Loads", J1="Remarks"), NOTE, "column ignored", "Loads!J1"),
     (_set("Loads", D4=500), FAULT, "row without id", "Loads!A4"),
-    (_set("Loads", A4="Total", D4=500), FAULT, "blank", "Loads!B4"),
+    (_set("Loads", A4="Total", D4=500), FAULT, "totals row", "Loads!A4"),
     (_set("Settings", A24="base_kv", B24=11), FAULT, "heading twice", "Settings!B24"),
     (_set("Settings", A8="period_minuets"), FAULT, "heading near miss", "Settings!A8"),
     (_set("Settings", A4="voltage of ours"), FAULT, "blank", "Settings!"),

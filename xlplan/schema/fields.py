@@ -26,7 +26,7 @@ from functools import cache
 from importlib.resources import files
 from typing import Any
 
-TEMPLATE_VERSION = 1
+TEMPLATE_VERSION = 2
 """Raised whenever a sheet or a column is added, renamed or taken away."""
 
 SCHEMA_STEMS = (

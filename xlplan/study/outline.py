@@ -77,9 +77,7 @@ def outline_of(checked: CheckedStudy, findings: Iterable[Finding]) -> Outline | 
     column = origin.address.rstrip("0123456789")
     row = int(origin.address[len(column) :] or 0)
     return Outline(
-        OutlineSettings(
-            source, {"source_bus": Origin(origin.sheet, row, {"source_bus": column})}
-        ),
+        OutlineSettings(source, {"source_bus": Origin(origin.sheet, row, {"source_bus": column})}),
         tuple(OutlineBus(row.text("bus") or "", row.row.origin) for row in buses),
         tuple(
             OutlineLine(

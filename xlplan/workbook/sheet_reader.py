@@ -17,7 +17,7 @@ from openpyxl.utils.cell import coordinate_from_string, range_boundaries
 from xlplan.base.codes import Code
 from xlplan.base.errors import Finding, Level
 from xlplan.schema.fields import Field, Sheet
-from xlplan.workbook.folding import clean, fold
+from xlplan.workbook.folding import clean, fold, fold_heading
 from xlplan.workbook.headings import (
     field_of_heading,
     heading_match_count,
@@ -306,6 +306,8 @@ def _read_rows(
         row = Row(grid.sheet, number, cells, column_of)
         if schema.id_field in cells and is_blank(cells[schema.id_field]):
             findings.append(_about_no_id(schema, schema.id_field, row))
+        elif _is_totals_row(schema, row):
+            findings.append(_about_totals(next(iter(filter(_is_total, cells.values())))))
         else:
             rows.append(row)
     if n_gap:
@@ -319,6 +321,40 @@ def _read_rows(
             )
         )
     return tuple(rows), findings
+
+
+_WORDS_FOR_TOTALS = frozenset(
+    ["total", "totals", "sum", "sums", "subtotal", "grand total", "average", "mean", "count"]
+)
+
+
+def _is_total(cell: Cell) -> bool:
+    return isinstance(cell.value, str) and fold_heading(cell.value) in _WORDS_FOR_TOTALS
+
+
+def _is_totals_row(schema: Sheet, row: Row) -> bool:
+    """True for a row of sums below a table: named so, and blank where a row needs a value."""
+    if schema.other_columns is not None:
+        needed = []  # a time is never a word
+    else:
+        needed = [f.key for f in schema.fields if f.is_required and f.key != schema.id_field]
+    first = next((cell for cell in row.cells.values() if not is_blank(cell)), None)
+    return (
+        first is not None
+        and _is_total(first)
+        and (not needed or any(is_blank(row.cell(key)) for key in needed if key in row.cells))
+    )
+
+
+def _about_totals(cell: Cell) -> Finding:
+    return finding_at(
+        cell,
+        Level.FAULT,
+        Code.TOTALS_ROW,
+        "",
+        f"'{clean(cell.typed)}' looks like a row of sums below the table.",
+        "Clear the row or move it to the right of the table: every row here is read.",
+    )
 
 
 def _about_no_id(schema: Sheet, key: str, row: Row) -> Finding:

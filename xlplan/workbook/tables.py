@@ -100,7 +100,8 @@ class RawStudy:
     """A study workbook as typed: tables by schema sheet name, and what was found on the way.
 
     ``fingerprint``: ``sha256:...`` of the file's bytes. ``n_formula``: formulas whose stored
-    values were used.
+    values were used. ``rows_of``: every non-blank cell of the sheets that hold input, by title, row
+    number and 1-based column.
     """
 
     file_name: str
@@ -108,6 +109,7 @@ class RawStudy:
     findings: tuple[Finding, ...]
     fingerprint: str
     n_formula: int = 0
+    rows_of: Mapping[str, Mapping[int, Mapping[int, Cell]]] = field(default_factory=dict)
 
 
 def finding_at(
