@@ -49,6 +49,8 @@ OWNERS = {
         "workbook/template.py",
         "workbook/formats.py",
         "workbook/input_sheets.py",
+        "workbook/live_checks.py",
+        "workbook/start_sheet.py",
         "workbook/prompts.py",
         "workbook/sheet_writer.py",
         "report/*",

@@ -40,6 +40,7 @@ from xlplan.pipeline import (
     write_findings,
 )
 from xlplan.report.target import replace_whole
+from xlplan.workbook.launcher import check_no_launchers, write_launchers
 from xlplan.workbook.template import write_template
 
 DONE, FAILED, UNUSABLE, STOPPED = 0, 1, 2, 3
@@ -106,6 +107,9 @@ def build_parser() -> argparse.ArgumentParser:
     template = commands.add_parser("template", help="write a blank study, or the demo study")
     template.add_argument("out", type=Path, metavar="OUT.xlsx")
     template.add_argument("--demo", action="store_true", help="fill in the demo study")
+    template.add_argument(
+        "--launcher", action="store_true", help="write files to double-click beside it, too"
+    )
     template.set_defaults(run=_template)
 
     check = commands.add_parser("check", help="list everything wrong or unlikely in a study")
@@ -170,8 +174,13 @@ def _template(options: argparse.Namespace) -> int:
         raise PathError(f"'{out}' should end in .xlsx.")
     if out.exists():
         raise PathError(f"'{out}' is there already; choose another name. Nothing was changed.")
+    if options.launcher:
+        check_no_launchers(out)
     write_template(out, with_demo=options.demo)
     print(out)
+    if options.launcher:
+        for path in write_launchers(out, sys.executable):
+            print(path)
     return DONE
 
 

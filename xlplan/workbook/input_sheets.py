@@ -1,25 +1,35 @@
-"""Layout of the input sheets: title, one line of help, headings in row 4, values below.
+"""Layout of the input sheets: title, one line of help, headings in row 5, values below.
 
-Row 3 says above each heading whether it is needed and what a blank means. Nothing that could be
-taken for a value stands below the headings of a blank study: examples are in the notes.
+Row 3 says above each heading whether it is needed and what a blank means, row 4 shows one filled
+row as an example. Nothing that could be taken for a value stands below the headings of a blank
+study.
 """
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+import math
+from collections.abc import Callable, Mapping, Sequence
 from typing import Any
 
 from xlsxwriter.utility import xl_col_to_name
 
 from xlplan.schema.fields import Field, Kind, Sheet
 from xlplan.workbook import prompts
-from xlplan.workbook.formats import MISSING_CELLS, NEEDED_CELLS, OPTIONAL_CELLS, Role
+from xlplan.workbook.formats import (
+    FONT,
+    MISSING_CELLS,
+    NEEDED_CELLS,
+    OPTIONAL_CELLS,
+    RULE,
+    Role,
+)
 from xlplan.workbook.sheet_writer import SheetWriter
 
 HINT_ROW = 2
-HEADING_ROW = 3
-FIRST_ROW = 4
-"""Zero-based: row 5 of the sheet."""
+EXAMPLE_ROW = 3
+HEADING_ROW = 4
+FIRST_ROW = 5
+"""Zero-based: row 6 of the sheet."""
 
 ROOM = 200
 """Rows that a table offers at least."""
@@ -27,8 +37,8 @@ ROOM = 200
 SPARE_ROWS = 50
 """Rows that a table offers beyond those that are filled."""
 
-LAST_CHECKED_ROW = 4999
-"""Cells down to row 5000 are validated and offered in dropdowns."""
+LAST_CHECKED_ROW = 5000
+"""Cells down to row 5001 are validated and offered in dropdowns."""
 
 BLANK_PROFILE_COLUMNS = 6
 """Columns laid out for profiles where none is named yet."""
@@ -39,8 +49,19 @@ LAST_PROFILE_COLUMN = 60
 PRINTED_BLANK_ROWS = 32
 LINE_HEIGHT = 13
 LONGEST_COLUMN = 40
-NOTE_CHARACTERS = 108
-"""Characters of a note on one line of Settings."""
+SETTINGS_COLUMNS = (
+    ("Setting", 34),
+    ("Value", 25),
+    ("Unit", 20),
+    ("If blank", 16),
+    ("Example", 20),
+    ("Usually from", 38),
+    ("Note", 78),
+    ("Group", 11),
+)
+CHARTED_ROWS = 2000
+"""Rows that a chart shows at most: about three weeks of quarter hours."""
+CHART_SIZE = (620, 330)
 
 _BASE_WIDTH = {
     Kind.ID: 17,
@@ -72,12 +93,12 @@ def write_settings_sheet(
     """
     _demand_known(sheet, settings)
     writer.head(sheet.title, sheet.help)
-    headings = ("Setting", "Value", "Unit", "Note", "Group")
-    for column, (width, heading) in enumerate(zip((36, 40, 31, 112, 12), headings, strict=True)):
+    for column, (heading, width) in enumerate(SETTINGS_COLUMNS):
         writer.width(column, width)
         role = Role.HEADING_NEEDED if heading == "Value" else Role.HEADING_OPTIONAL
         writer.text(HEADING_ROW, column, heading, role)
     writer.height(HEADING_ROW, 20)
+    writer.text(HINT_ROW, 0, "Type in the column Value; the others are for you to read.", Role.HINT)
     for i_field, field in enumerate(sheet.fields):
         row = FIRST_ROW + i_field
         roles = _setting_roles(field)
@@ -85,16 +106,24 @@ def write_settings_sheet(
         writer.text(row, 0, field.title, Role.LABEL)
         writer.value(row, 1, settings.get(field.key), *roles)
         writer.text(row, 2, field.unit, Role.UNIT)
-        writer.text(row, 3, ("Needed. " if field.is_required else "") + note, Role.NOTE)
-        writer.text(row, 4, field.group, Role.UNIT)
+        default = "" if field.default is None else prompts.plain(field.default)
+        writer.text(row, 3, "needed" if field.is_required else default, Role.DEFAULT)
+        writer.text(row, 4, prompts.plain(field.example), Role.DEFAULT)
+        writer.text(row, 5, field.comes_from, Role.NOTE)
+        writer.text(row, 6, note, Role.NOTE)
+        writer.text(row, 7, field.group, Role.UNIT)
         writer.note(row, 0, prompts.note(field))
-        writer.height(row, 15 if len(note) < NOTE_CHARACTERS else 28)
+        n_line = max(
+            math.ceil(len(text) * 0.9 / SETTINGS_COLUMNS[column][1])
+            for column, text in ((2, field.unit), (5, field.comes_from), (6, note))
+        )
+        writer.height(row, LINE_HEIGHT * max(n_line, 1) + 2)
         writer.validation((row, 1, row, 1), prompts.validation(field, sheet, row, 1, row))
         name = f"set_{field.key}"
         _define_name(workbook, name, f"=Settings!$B${row + 1}")
     last_row = HEADING_ROW + len(sheet.fields)
     writer.worksheet.freeze_panes(FIRST_ROW, 1)
-    writer.page(last_row, len(headings) - 1, HEADING_ROW, sheet.help)
+    writer.page(last_row, len(SETTINGS_COLUMNS) - 1, HEADING_ROW, sheet.help)
     writer.worksheet.fit_to_pages(1, 1)
 
 
@@ -121,13 +150,14 @@ def write_table_sheet(
     n_line = 1
     for column, field in enumerate(fields):
         width = _column_width(field, rows)
-        writer.width(column, width, None if field.kind in _UNFORMATTED else Role.TEXT)
+        writer.width(column, width, Role.NUMBER if field.kind in _UNFORMATTED else Role.TEXT)
         n_line = max(n_line, _heading_lines(field.heading, width))
         columns.append(_lay_out_column(writer, sheet, field, column, last_row))
     writer.height(HEADING_ROW, LINE_HEIGHT * n_line + 10)
     for column, heading in enumerate(own_headings, start=len(fields)):
-        writer.width(column, max(11, len(heading) + 3))
+        writer.width(column, max(11, len(heading) + 3), Role.NUMBER)
         writer.text(HINT_ROW, column, "profile", Role.HINT)
+        writer.text(EXAMPLE_ROW, column, _profile_example(sheet), Role.EXAMPLE)
         columns.append(
             {"header": heading, "header_format": writer.formats.role(Role.HEADING_OPTIONAL)}
         )
@@ -142,12 +172,18 @@ def write_table_sheet(
                 number = Role.NUMBER
                 writer.value(FIRST_ROW + i_row, column, row[key], Role.TEXT, number)
     if sheet.other_columns is not None and not own_headings:
-        n_column = _lay_out_blank_profiles(writer, n_column)
+        n_column = _lay_out_blank_profiles(writer, sheet, n_column)
     _add_rules(writer, sheet, n_column, last_row)
     _name_ranges(workbook, sheet)
     writer.worksheet.freeze_panes(FIRST_ROW, 1)
     n_printed = max(PRINTED_BLANK_ROWS, len(rows) + 3)
-    writer.page(HEADING_ROW + n_printed, n_column - 1, HEADING_ROW, sheet.help)
+    last_column = n_column - 1
+    if sheet.name in CHARTS:
+        chart, alt = CHARTS[sheet.name](workbook, sheet, n_column, len(rows) or ROOM)
+        writer.width(n_column, 3)
+        writer.chart(EXAMPLE_ROW, n_column + 1, chart, CHART_SIZE, alt)
+        last_column = n_column + 1 + math.ceil(CHART_SIZE[0] / STANDARD_COLUMN_PIXELS)
+    writer.page(HEADING_ROW + n_printed, last_column, HEADING_ROW, sheet.help)
 
 
 def _lay_out_column(
@@ -156,6 +192,8 @@ def _lay_out_column(
     """Hint, note and validation of one column; returns what the table needs of it."""
     heading_role = Role.HEADING_NEEDED if field.is_required else Role.HEADING_OPTIONAL
     writer.text(HINT_ROW, column, prompts.hint(field), Role.HINT)
+    example = prompts.plain(field.example)
+    writer.text(EXAMPLE_ROW, column, f"e.g. {example}" if column == 0 else example, Role.EXAMPLE)
     writer.note(HEADING_ROW, column, prompts.note(field))
     checked = max(last_row, LAST_CHECKED_ROW)
     writer.validation(
@@ -165,13 +203,106 @@ def _lay_out_column(
     return {"header": field.heading, "header_format": writer.formats.role(heading_role)}
 
 
-def _lay_out_blank_profiles(writer: SheetWriter, n_column: int) -> int:
+def _profile_example(sheet: Sheet) -> str:
+    return prompts.plain(sheet.other_columns.example) if sheet.other_columns else ""
+
+
+def _chart_of_profiles(workbook: Any, sheet: Sheet, n_column: int, n_row: int) -> tuple[Any, str]:
+    """Every profile as a line over the time, so that a slip of the finger stands out."""
+    n_charted = min(n_row, CHARTED_ROWS)
+    last_row = HEADING_ROW + n_charted
+    chart = workbook.add_chart({"type": "line"})
+    for i, column in enumerate(range(len(sheet.fields), n_column)):
+        dash = "solid" if i < len(LINE_COLOURS) else "dash"
+        colour = LINE_COLOURS[i % len(LINE_COLOURS)]
+        chart.add_series(
+            {
+                "name": [sheet.name, HEADING_ROW, column],
+                "categories": [sheet.name, FIRST_ROW, 0, last_row, 0],
+                "values": [sheet.name, FIRST_ROW, column, last_row, column],
+                "line": {"color": colour, "width": 1.5, "dash_type": dash},
+            }
+        )
+    part = f", first {n_charted} rows" if n_charted < n_row else ""
+    _dress(chart, f"Profiles as typed{part}", "Time", "Share or multiple")
+    chart.set_x_axis(
+        {
+            "name": "Time",
+            "text_axis": True,  # as dates, steps within a day would fall on one another
+            "num_format": "mm-dd hh:mm",
+            "interval_unit": max(1, n_charted // 5),
+            "interval_tick": max(1, n_charted // 5),
+            **_axis_fonts(),
+            "label_position": "low",
+        }
+    )
+    return chart, "Line chart of every profile of this sheet over its times."
+
+
+def _chart_of_curves(workbook: Any, sheet: Sheet, n_column: int, n_row: int) -> tuple[Any, str]:
+    """The points of the loss curves: power at the terminals over power of the cells."""
+    keys = [field.key for field in sheet.fields]
+    across, upwards = keys.index("store_power_pct"), keys.index("terminal_power_pct")
+    last_row = HEADING_ROW + max(n_row, ROOM)
+    chart = workbook.add_chart({"type": "scatter"})
+    chart.add_series(
+        {
+            "name": "points of the curves",
+            "categories": [sheet.name, FIRST_ROW, across, last_row, across],
+            "values": [sheet.name, FIRST_ROW, upwards, last_row, upwards],
+            "marker": {
+                "type": "diamond",
+                "size": 8,
+                "fill": {"color": LINE_COLOURS[0]},
+                "border": {"color": LINE_COLOURS[0]},
+            },
+        }
+    )
+    titles = [sheet.field(key).heading for key in ("store_power_pct", "terminal_power_pct")]
+    _dress(chart, "Points as typed", *titles)
+    chart.set_legend({"none": True})
+    return chart, "Scatter chart of the points of all loss curves, terminal over store power."
+
+
+CHARTS: Mapping[str, Callable[[Any, Sheet, int, int], tuple[Any, str]]] = {
+    "Profiles": _chart_of_profiles,
+    "Storage curves": _chart_of_curves,
+}
+LINE_COLOURS = ("#0072B2", "#D55E00", "#009E73", "#CC79A7", "#000000", "#E69F00", "#56B4E9")
+"""Okabe and Ito, Color Universal Design; further lines are dashed as well."""
+STANDARD_COLUMN_PIXELS = 64
+
+
+def _axis_fonts() -> dict[str, Any]:
+    return {
+        "name_font": {"name": FONT, "size": 9, "bold": False},
+        "num_font": {"name": FONT, "size": 8},
+        "line": {"color": RULE},
+    }
+
+
+def _dress(chart: Any, title: str, across: str, upwards: str) -> None:
+    chart.set_title({"name": title, "name_font": {"name": FONT, "size": 11, "bold": True}})
+    chart.set_x_axis({"name": across, "label_position": "low", **_axis_fonts()})
+    chart.set_y_axis(
+        {
+            "name": upwards,
+            "label_position": "low",
+            "major_gridlines": {"visible": True, "line": {"color": "#E3E6E1", "width": 0.75}},
+            **_axis_fonts(),
+        }
+    )
+    chart.set_legend({"position": "bottom", "font": {"name": FONT, "size": 9}})
+
+
+def _lay_out_blank_profiles(writer: SheetWriter, sheet: Sheet, n_column: int) -> int:
     """Invite profiles in the columns beside the time; returns how many columns there are now."""
     writer.text(
         HINT_ROW, n_column, "one profile a column, each under a heading of your own", Role.HINT
     )
     for column in range(n_column, n_column + BLANK_PROFILE_COLUMNS):
-        writer.width(column, 13)
+        writer.width(column, 13, Role.NUMBER)
+        writer.text(EXAMPLE_ROW, column, _profile_example(sheet), Role.EXAMPLE)
         writer.blank(HEADING_ROW, column, Role.HEADING_OPTIONAL)
     return n_column + BLANK_PROFILE_COLUMNS
 
@@ -236,6 +367,7 @@ def _column_width(field: Field, rows: Sequence[Mapping[str, object]]) -> float:
         len(field.heading) / 3 + 6,
         len(prompts.hint(field)) * 0.8 + 3,
         min(longest_text, LONGEST_COLUMN) + 3,
+        min(len(prompts.plain(field.example)), LONGEST_COLUMN) * 0.9 + 6,
     )
 
 

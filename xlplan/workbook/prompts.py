@@ -89,6 +89,8 @@ def note(field: Field) -> str:
         lines.append(f"Blank means {plain(field.default)}.")
     if field.source:
         lines.append(f"Source of that: {field.source}.")
+    if field.comes_from:
+        lines.append(f"Usually from: {field.comes_from}.")
     lines.append(f"Example: {plain(field.example)}")
     return "\n".join(lines)
 
@@ -96,9 +98,8 @@ def note(field: Field) -> str:
 def setting_note(field: Field) -> str:
     """The note beside a setting, as running text."""
     parts = [field.help]
-    if field.default is not None:
-        source = f" ({field.source})" if field.source else ""
-        parts.append(f"Blank means {plain(field.default)}{source}.")
+    if field.default is not None and field.source:
+        parts.append(f"Source of the default: {field.source}.")
     return " ".join(parts)
 
 

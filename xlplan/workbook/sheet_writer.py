@@ -92,10 +92,25 @@ class SheetWriter:
         elif isinstance(value, int | float):
             if not math.isfinite(value):
                 raise WorkbookWriteError(f"{place}: {value} is no number that a cell can hold")
-            code = self.worksheet.write_number(row, column, value, self.formats.role(number))
+            is_big = number is Role.NUMBER and abs(value) >= 1000 and value == int(value)
+            look = self.formats.role(Role.BIG_NUMBER if is_big else number)
+            code = self.worksheet.write_number(row, column, value, look)
         else:
             raise WorkbookWriteError(f"{place}: cannot write a {type(value).__name__}")
         demand_written(code, place)
+
+    def formula(self, row: int, column: int, text: str, value: float | str, role: Role) -> None:
+        """Write a formula with the value it gives, which viewers without a calculator show."""
+        look = self.formats.role(role)
+        code = self.worksheet.write_formula(row, column, text, look, value)
+        demand_written(code, self._place(row, column))
+
+    def chart(self, row: int, column: int, chart: Any, size: tuple[int, int], alt: str) -> None:
+        """Put a chart with its upper left corner at a cell; ``alt`` is read out in its place."""
+        chart.set_size({"width": size[0], "height": size[1]})
+        options = {"description": alt, "object_position": 3}
+        code = self.worksheet.insert_chart(row, column, chart, options)
+        demand_written(code, f"chart at {self._place(row, column)}")
 
     def blank(self, row: int, column: int, role: Role) -> None:
         """Write a formatted cell without a value."""
