@@ -10,7 +10,7 @@ import textwrap
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, replace
 
-from xlplan.base.errors import Finding, Level
+from xlplan.base.errors import Finding, Level, one_line
 
 _ADDRESS = re.compile(r"([A-Z]{1,3})([0-9]+)")
 
@@ -70,7 +70,7 @@ class Group:
             return replace(finding, cell=cell_ranges(self.cells)).text()
         n = len(self.cells)
         key = f" {finding.key}" if finding.key else ""
-        return (
+        return one_line(
             f"{finding.sheet}!{cell_ranges(self.cells)}{key}: {n} more of this kind, the first: "
             f"{finding.message}"
         )
@@ -137,7 +137,7 @@ def listed(
             continue
         n_left -= len(groups)
         n_listed += sum(len(group.cells) for group in groups)
-        lines.append(f"{sheet} ({counted(found)})")
+        lines.append(one_line(f"{sheet} ({counted(found)})"))
         for group in groups:
             lines += _wrapped(f"{group.finding.level:<8} ", group.text(), width)
     if n_listed < len(findings):

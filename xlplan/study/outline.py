@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections.abc import Iterable
 from dataclasses import dataclass
 
+from xlplan.base.codes import Code
 from xlplan.base.errors import Finding, Level, Origin
 from xlplan.workbook.checked_study import CheckedStudy
 from xlplan.workbook.folding import fold
@@ -93,6 +94,8 @@ def outline_of(checked: CheckedStudy, findings: Iterable[Finding]) -> Outline | 
 
 
 def _is_about_shape(finding: Finding) -> bool:
+    if finding.code in (Code.SELF_LOOP, Code.NAME_TWICE):
+        return False  # the ends are known all the same
     sheet = fold(finding.sheet)
     if sheet == "lines":
         return finding.key in SHAPE_KEYS

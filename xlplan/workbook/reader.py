@@ -64,7 +64,7 @@ def read_workbook(path: Path) -> RawStudy:
     try:
         with warnings.catch_warnings(record=True) as caught:
             warnings.simplefilter("always")
-            sheets = _read_sheets(file.content)
+            sheets = read_sheets(file.content)
     except StudyFileError as error:
         raise StudyFileError(f"'{path}' {error}") from None
     except Exception as error:  # openpyxl raises whatever the broken part led it to
@@ -145,7 +145,7 @@ def tables_of(
     )
 
 
-def _read_sheets(content: bytes) -> Sheets:
+def read_sheets(content: bytes) -> Sheets:
     """Non-blank cells, facts and visibility of every sheet that may hold input."""
     book = load_workbook(io.BytesIO(content), read_only=True, data_only=True, keep_links=False)
     wanted = _wanted_titles([sheet.title for sheet in book.worksheets])

@@ -379,7 +379,12 @@ def about_merges(
     """Faults about merged cells inside the table: all but one of them lost their value."""
     findings = []
     for merged in facts.merged_ranges:
-        first_column, first_row, last_column, final_row = range_boundaries(merged)
+        try:
+            first_column, first_row, last_column, final_row = range_boundaries(merged)
+        except ValueError:
+            continue  # no range at all: nothing that a spreadsheet program would merge
+        if None in (first_column, first_row, last_column, final_row):
+            continue
         is_inside = first_row <= last_row and final_row >= header_row
         if is_inside and columns & set(range(first_column, last_column + 1)):
             findings.append(

@@ -11,13 +11,10 @@ import re
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 
-from xlplan.base.errors import Finding, Level, Origin
+from xlplan.base.errors import Finding, Level, Origin, one_line
 
 _LITERAL = re.compile(r'"[^"]*"|\\.')
 """Parts of a number format that are shown as they stand and scale nothing, such as 0"%"."""
-
-_CONTROL = re.compile(r"[\x00-\x1f\x7f-\x9f\u2028\u2029]+")
-"""Line breaks, and codes that would move a terminal's cursor."""
 
 LONGEST_MESSAGE = 400
 """A cell may hold 32767 characters; this is enough of them to recognise it."""
@@ -129,5 +126,5 @@ def finding_at(
 
 
 def _one_line(text: str) -> str:
-    line = _CONTROL.sub(" ", text)
+    line = one_line(text)
     return line if len(line) <= LONGEST_MESSAGE else f"{line[:LONGEST_MESSAGE]}..."
