@@ -25,6 +25,7 @@ ORDER = (
     "compare",
     "report",
     "pipeline",
+    "watch",
     "batch",
     "cli",
     "__main__",

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import argparse
 import contextlib
+import datetime
 import io
 import json
 import logging
@@ -17,6 +18,7 @@ import signal
 import sys
 import traceback
 from collections.abc import Iterator, Sequence
+from dataclasses import replace
 from pathlib import Path
 from types import FrameType
 from typing import NoReturn
@@ -25,7 +27,8 @@ from rich.console import Console
 from rich.status import Status
 
 import xlplan
-from xlplan.base.errors import Finding, Level, PathError, StudyError, XlplanError
+from xlplan.base.codes import Code
+from xlplan.base.errors import Finding, Level, NoPlanError, PathError, StudyError, XlplanError
 from xlplan.base.listing import listed
 from xlplan.base.units import frac_from_pct, hours_from_minutes, pct_from_frac
 from xlplan.compare.standing import Progress
@@ -40,6 +43,7 @@ from xlplan.pipeline import (
     write_findings,
 )
 from xlplan.report.target import replace_whole
+from xlplan.watch import Save, saves, stamp_of
 from xlplan.workbook.launcher import check_no_launchers, write_launchers
 from xlplan.workbook.template import write_template
 
@@ -122,6 +126,11 @@ def build_parser() -> argparse.ArgumentParser:
     )
     check.add_argument("--json", type=Path, metavar="FILE", help="write the findings as JSON")
     check.set_defaults(run=_check)
+
+    watch = commands.add_parser("watch", help="check a study again each time it is saved")
+    watch.add_argument("study", type=Path, metavar="STUDY.xlsx")
+    watch.add_argument("--solve", action="store_true", help="solve it, too, if it has no faults")
+    watch.set_defaults(run=_watch)
 
     solve = commands.add_parser("solve", help="check a study, solve it, write the results")
     solve.add_argument("study", type=Path, metavar="STUDY.xlsx")
@@ -207,6 +216,88 @@ def _check(options: argparse.Namespace) -> int:
             print(f"'{mark}' is there already, so the marked copy has another name:")
         print(written)
     return DONE if checked.is_usable else UNUSABLE
+
+
+def _watch(options: argparse.Namespace) -> int:
+    """Ctrl-C while waiting or checking is how watching ends: status 0. During a solve it counts
+    for the solve, whose status it is then."""
+    study: Path = options.study
+    if not study.exists():
+        raise PathError(f"There is no file '{study}'.")
+    # A shell that starts us in the background has SIGINT ignored; watching must end all the same.
+    with contextlib.suppress(ValueError):
+        signal.signal(signal.SIGINT, signal.default_int_handler)
+        signal.signal(signal.SIGTERM, signal.default_int_handler)
+    try:
+        _say(f"Watching '{study}'. Save it to have it checked again; Ctrl-C stops.")
+        for save in saves(study):
+            status = _after_save(options, save)
+            if status is not None:
+                return status
+    except KeyboardInterrupt:
+        _say("Stopped watching.")
+    return DONE
+
+
+def _after_save(options: argparse.Namespace, save: Save) -> int | None:
+    """Checks, and solves if asked; a status where watching is to end."""
+    study: Path = options.study
+    if save.stamp is None:
+        _say(f"'{study}' is gone; waiting for it to come back.")
+        return None
+    _say(f"\n{datetime.datetime.now():%H:%M:%S}  {study.name}")
+    try:
+        checked = read_study(study)
+        # That the study is open is what watching is for.
+        kept = tuple(f for f in checked.findings if f.code != Code.OPEN_ELSEWHERE)
+        checked = replace(checked, findings=kept)
+        print_checked(checked)
+        sys.stdout.flush()
+        if options.solve and checked.is_usable:
+            return _solve_while_watching(study, save)
+    except XlplanError as error:
+        # Caught in the middle of the next save: that one is told instead.
+        if stamp_of(study) == save.stamp:
+            _say(f"xlplan: {error}")
+    return None
+
+
+def _solve_while_watching(study: Path, save: Save) -> int | None:
+    """Solves, unless the study is saved again; a status where the user stopped it."""
+    with _Interrupt() as interrupt, _Display(is_quiet=False) as display:
+
+        def is_saved_again() -> bool:
+            return stamp_of(study) not in (save.stamp, None)
+
+        try:
+            result = solve_study(
+                study,
+                Overrides(),
+                _cores(),
+                display.show,
+                should_stop=lambda: interrupt.is_asked or is_saved_again(),
+            )
+        except NoPlanError:
+            if interrupt.is_asked or not is_saved_again():
+                raise
+            result = None
+        if result is None or (is_saved_again() and not interrupt.is_asked):
+            _say("The study was saved again, so this solve is dropped.")
+            return None
+        output = study.with_name(f"{study.stem}-results.xlsx")
+        written = write_answer(result, study, output, None, force=False)
+    print_summary(result)
+    if written != output:
+        print(f"'{output}' is there already, so the results have another name:")
+    _say(str(written))
+    if interrupt.is_asked:
+        return DONE if result.status == "gap reached" else STOPPED
+    return None
+
+
+def _say(text: str) -> None:
+    """Prints at once, into a pipe as well."""
+    print(text, flush=True)
 
 
 def _solve(options: argparse.Namespace) -> int:

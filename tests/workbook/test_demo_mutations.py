@@ -645,6 +645,17 @@ MUTATIONS: list[tuple[str, Change, list[Found]]] = [
         [fault("row twice", "Fixed purchases!B8")],
     ),
     # -- the same fault down a column --
+    # Three remarks and no number: not a profile. 384 decimal commas: one, with 50 faults listed.
+    (
+        "a column of remarks beside the profiles",
+        put(("Profiles!I5", "seen"), ("Profiles!I6", "yes"), ("Profiles!I7", "on Monday")),
+        [note("column ignored", "Profiles!I5")],
+    ),
+    (
+        "a profile of decimal commas",
+        column_of("Profiles", "F", "0,5", 6, 389),
+        [fault("ambiguous number", f"Profiles!F{row}") for row in range(6, 56)],
+    ),
     (
         "a column of texts",
         column_of("Loads", "D", "260 kW", 6, 18),

@@ -10,6 +10,7 @@ import re
 import shutil
 import subprocess
 import zipfile
+from functools import cache
 from pathlib import Path
 from typing import Any
 
@@ -64,12 +65,18 @@ def books(tmp_path_factory: pytest.TempPathFactory) -> dict[str, Path]:
     return paths
 
 
+@cache
+def start_page(path: Path, has_values: bool) -> Any:
+    """The sheet Start, its formulas or their stored values."""
+    return load_workbook(path, data_only=has_values)["Start"]
+
+
 def formulas_of(path: Path) -> dict[str, tuple[str, object]]:
     """Formula and stored value of every formula cell of Start."""
-    stored = load_workbook(path, data_only=True)["Start"]
+    stored = start_page(path, True)
     return {
         cell.coordinate: (cell.value, stored[cell.coordinate].value)
-        for row in load_workbook(path)["Start"].iter_rows()
+        for row in start_page(path, False).iter_rows()
         for cell in row
         if cell.data_type == "f"
     }
@@ -77,7 +84,7 @@ def formulas_of(path: Path) -> dict[str, tuple[str, object]]:
 
 def value_beside(path: Path, label: str, steps: int = 1) -> object:
     """The stored value some cells to the right of a text on Start."""
-    page = load_workbook(path, data_only=True)["Start"]
+    page = start_page(path, True)
     [cell] = [cell for row in page.iter_rows() for cell in row if cell.value == label]
     return page.cell(cell.row, cell.column + steps).value
 

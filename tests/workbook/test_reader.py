@@ -15,7 +15,7 @@ from openpyxl import Workbook
 from openpyxl.utils import get_column_letter
 
 from tests.workbook.study_tables import DAY, SETTINGS, TABLES, check_file, places, study_workbook
-from xlplan.base.errors import Level, StudyFileError
+from xlplan.base.errors import Level
 from xlplan.schema.fields import load_sheets
 from xlplan.study.build import check_and_build
 from xlplan.workbook.reader import read_workbook
@@ -348,15 +348,14 @@ def test_the_demo_has_no_faults_and_the_blank_template_no_traceback(tmp_path: Pa
 
 
 @pytest.mark.skipif(shutil.which("soffice") is None, reason="LibreOffice is not installed")
-def test_a_study_saved_by_libreoffice_is_the_same_and_its_own_format_is_refused(
+def test_a_study_saved_by_libreoffice_is_the_same(
     tmp_path: Path,
 ) -> None:
     path = tmp_path / "study.xlsx"
     write_template(path, with_demo=True)
     command = ["soffice", f"-env:UserInstallation={(tmp_path / 'office').as_uri()}", "--headless"]
-    for kind in ("xlsx", "ods"):
-        words = ["--convert-to", kind, "--outdir", str(tmp_path / kind), str(path)]
-        subprocess.run([*command, *words], check=True, capture_output=True, timeout=120)
+    words = ["--convert-to", "xlsx", "--outdir", str(tmp_path / "xlsx"), str(path)]
+    subprocess.run([*command, *words], check=True, capture_output=True, timeout=120)
     plain, _ = check_and_build(read_workbook(path))
     saved, findings = check_and_build(read_workbook(tmp_path / "xlsx" / "study.xlsx"))
     assert places(findings) == {("measures share line", "Hardening!B7")}
@@ -368,8 +367,6 @@ def test_a_study_saved_by_libreoffice_is_the_same_and_its_own_format_is_refused(
             assert without_origin == {k: v for k, v in vars(other).items() if k != "origin"}
     for name, values in plain.profiles.values.items():
         assert saved.profiles.values[name].tolist() == values.tolist()
-    with pytest.raises(StudyFileError, match="OpenDocument"):
-        read_workbook(tmp_path / "ods" / "study.ods")
 
 
 def _facts_both_ways(xml: bytes) -> tuple[SheetFacts, SheetFacts]:

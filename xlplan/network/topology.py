@@ -130,7 +130,8 @@ def _source_and_loose_buses(
     for bus in buses:
         if root(bus) != root(source):
             loose.setdefault(root(bus), []).append(bus)
-    origin_of = {bus.bus: bus.origin for bus in reversed(study.buses)}
+    named = [(bus.bus, bus.origin) for bus in study.buses]
+    origin_of = dict(reversed(named))
     findings = []
     for part in loose.values():
         origin = origin_of[part[0]]

@@ -210,7 +210,7 @@ def _write_copy(
     last_row, last_column = 1, 1
     for number in shown:
         for column, cell in rows[number].items():
-            properties = {"valign": "top"}
+            properties: dict[str, Any] = {"valign": "top"}
             if number == header_row:
                 properties = {"bold": True, "text_wrap": True, "bg_color": MIST, "valign": "top"}
             found = marks.get((number, column), ())

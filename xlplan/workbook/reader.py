@@ -117,10 +117,10 @@ def tables_of(
     RawStudy
     """
     findings = list(findings)
-    for title, number in sheets.stopped.items():
+    for stopped, number in sheets.stopped.items():
         message = f"reading stopped here, after {MAX_BLANK_ROWS} blank rows."
         findings.append(
-            Finding(Level.NOTE, Code.READING_STOPPED, title, f"A{number}", "", "", message)
+            Finding(Level.NOTE, Code.READING_STOPPED, stopped, f"A{number}", "", "", message)
         )
     tables: dict[str, Table] = {}
     for schema, title in _match_sheets(list(sheets.grids), findings).items():

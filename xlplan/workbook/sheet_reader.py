@@ -7,6 +7,7 @@ columns of the user's own is left alone.
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterable
 from dataclasses import dataclass, field
 from dataclasses import replace as replace_in
@@ -248,15 +249,24 @@ def _profile_columns(
     return profiles
 
 
+_MEANT_AS_NUMBER = re.compile(r"\W{0,2}[0-9]")
+
+
 def _has_number(grid: Grid, below: list[int], column: int, profile: Field) -> bool:
-    """True if any cell of a column could be a profile's value."""
+    """True if any cell of a column could be a profile's value, or most were meant as numbers.
+
+    A column of decimal commas pasted as text is a profile with faults, not a column of remarks.
+    """
+    n_meant = n_filled = 0
     for number in below:
         cell = grid.rows[number].get(column)
-        if cell is None:
+        if cell is None or is_blank(cell):
             continue
         if cell.is_uncalculated or cell.is_error or read_value(cell, profile).value is not None:
             return True
-    return False
+        n_filled += 1
+        n_meant += isinstance(cell.value, str) and bool(_MEANT_AS_NUMBER.match(cell.value))
+    return 2 * n_meant > n_filled
 
 
 def _about_missing_columns(
