@@ -18,6 +18,7 @@ import openpyxl
 import pytest
 from openpyxl import load_workbook
 
+from xlplan.schema.fields import sheet
 from xlplan.workbook.demo import demo_settings, demo_tables
 from xlplan.workbook.template import write_study_workbook
 
@@ -66,17 +67,18 @@ def books(tmp_path_factory: pytest.TempPathFactory) -> dict[str, Path]:
 
 
 @cache
-def start_page(path: Path, has_values: bool) -> Any:
-    """The sheet Start, its formulas or their stored values."""
-    return load_workbook(path, data_only=has_values)["Start"]
+def book_of(path: Path, has_values: bool) -> Any:
+    """The workbook, its formulas or their stored values."""
+    return load_workbook(path, data_only=has_values)
 
 
 def formulas_of(path: Path) -> dict[str, tuple[str, object]]:
-    """Formula and stored value of every formula cell of Start."""
-    stored = start_page(path, True)
+    """Formula and stored value of every formula cell, by ``Sheet!Cell``."""
+    stored = book_of(path, True)
     return {
-        cell.coordinate: (cell.value, stored[cell.coordinate].value)
-        for row in start_page(path, False).iter_rows()
+        f"{page.title}!{cell.coordinate}": (cell.value, stored[page.title][cell.coordinate].value)
+        for page in book_of(path, False)
+        for row in page.iter_rows()
         for cell in row
         if cell.data_type == "f"
     }
@@ -84,7 +86,7 @@ def formulas_of(path: Path) -> dict[str, tuple[str, object]]:
 
 def value_beside(path: Path, label: str, steps: int = 1) -> object:
     """The stored value some cells to the right of a text on Start."""
-    page = start_page(path, True)
+    page = book_of(path, True)["Start"]
     [cell] = [cell for row in page.iter_rows() for cell in row if cell.value == label]
     return page.cell(cell.row, cell.column + steps).value
 
@@ -92,7 +94,9 @@ def value_beside(path: Path, label: str, steps: int = 1) -> object:
 def test_every_formula_has_a_value_and_is_short(books: dict[str, Path]) -> None:
     for path in books.values():
         formulas = formulas_of(path)
-        assert all(value is not None for _, value in formulas.values())
+        on_start = [value for place, (_, value) in formulas.items() if place.startswith("Start!")]
+        assert len(on_start) >= N_FORMULA
+        assert all(value is not None for value in on_start)
         assert all(not str(value).startswith("#") for _, value in formulas.values())
         assert all(len(text) < 400 for text, _ in formulas.values())
 
@@ -140,13 +144,33 @@ def test_a_spreadsheet_program_finds_the_stored_values_again(
     subprocess.run([*command, *paths], check=True, capture_output=True, timeout=300)
     different = {}
     for name, path in books.items():
-        page = openpyxl.load_workbook(out / path.name, data_only=True)["Start"]
-        formulas = formulas_of(path)
-        assert len(formulas) >= N_FORMULA
-        different[name] = [
-            (text, stored, page[address].value)
-            for address, (text, stored) in formulas.items()
-            if stored != page[address].value
-        ]
+        again = openpyxl.load_workbook(out / path.name, data_only=True)
+        different[name] = []
+        for place, (text, stored) in formulas_of(path).items():
+            sheet, address = place.split("!")
+            value = again[sheet][address].value
+            if (stored or "") != (value or "") or (stored == 0) != (value == 0):
+                different[name].append((place, text, stored, value))
     assert len(different.pop("planted")) == 1
     assert different == {"blank": [], "demo": [], "slips": []}
+
+
+def test_the_list_of_what_can_be_bought_has_every_id_in_order(books: dict[str, Path]) -> None:
+    page = book_of(books["demo"], True)["Lists"]
+    [heading] = [c for row in page.iter_rows() for c in row if str(c.value).startswith("What can")]
+    ids = [
+        page.cell(row, heading.column).value
+        for row in range(heading.row + 1, page.max_row + 1)
+        if page.cell(row, heading.column).value
+    ]
+    tables = demo_tables()
+    expected = {
+        name: [row[key] for row in tables[name]]
+        for name, key in (
+            ("Generators", "generator"),
+            ("Storage", "storage"),
+            ("Hardening", "measure"),
+        )
+    }
+    order = sheet("Fixed purchases").field("asset").refers_to
+    assert ids == [ident for name in order for ident in expected[name]]

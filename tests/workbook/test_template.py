@@ -70,14 +70,15 @@ def test_sheets_stand_in_order_between_start_and_lists(blank: Workbook) -> None:
 
 
 @pytest.mark.parametrize("which", ["blank", "demo"])
-def test_formulas_stand_on_start_alone_and_nothing_is_an_error(
+def test_no_input_is_a_formula_and_nothing_is_an_error(
     which: str, request: pytest.FixtureRequest
 ) -> None:
     """A formula among the inputs would be read by its stored value, a guess of its writer."""
     book = request.getfixturevalue(which)
     for page in book:
         types = {cell.data_type for row in page.iter_rows() for cell in row}
-        assert types <= ({"n", "s", "f"} if page.title == "Start" else {"n", "s", "d", "b"})
+        is_input = page.title not in ("Start", "Lists")
+        assert types <= ({"n", "s", "d", "b"} if is_input else {"n", "s", "f"})
 
 
 def test_a_blank_study_holds_no_values(blank: Workbook) -> None:
@@ -160,6 +161,11 @@ def test_every_cell_to_fill_has_an_input_message_and_its_check(blank: Workbook, 
         elif field.kind is Kind.REFERENCE and len(field.refers_to) == 1:
             assert check.formula1 == prompts.id_list_name(field.refers_to[0])
             assert check.formula1 in blank.defined_names
+        elif field.kind is Kind.REFERENCE:
+            assert check.formula1 == "assets"
+            assert check.formula1 in blank.defined_names
+        elif field.kind is Kind.TIME and field.refers_to:
+            assert check.formula1 == prompts.id_list_name(field.refers_to[0])
         elif field.kind is Kind.PROFILE:
             assert check.formula1 == "profile_names"
             assert check.formula1 in blank.defined_names

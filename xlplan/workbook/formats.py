@@ -47,6 +47,7 @@ class Role(StrEnum):
     CALCULATED = "calculated number"
     CALCULATED_HOURS = "calculated number of hours"
     CALCULATED_WORD = "calculated word"
+    CALCULATED_TEXT = "calculated text"
     TEXT = "text"
     NUMBER = "number"
     BIG_NUMBER = "whole number from a thousand on"
@@ -117,6 +118,7 @@ _PROPERTIES: dict[Role, dict[str, Any]] = {
     Role.DEFAULT: {"italic": True, "font_color": FAINT_INK, **_INDENTED, **_EDGE, **_WRAPPED},
     Role.CALCULATED: {**_CALCULATED, "align": "right", "num_format": "#,##0"},
     Role.CALCULATED_HOURS: {**_CALCULATED, "align": "right", "num_format": "#,##0.##"},
+    Role.CALCULATED_TEXT: {**_CALCULATED, **_INDENTED},
     Role.CALCULATED_WORD: {**_CALCULATED, **_INDENTED, "bold": True},
     Role.TEXT: {"num_format": TEXT_FORMAT, **_TYPED, **_INDENTED},
     Role.NUMBER: {"align": "right", **_TYPED},

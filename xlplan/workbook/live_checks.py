@@ -124,3 +124,44 @@ def _column(entry: Sheet, column: int) -> str:
     letters = xl_col_to_name(column, col_abs=True)
     quoted = f"'{entry.name}'" if " " in entry.name else entry.name
     return f"{quoted}!{letters}${FIRST_ROW + 1}:{letters}${LAST_CHECKED_ROW + 1}"
+
+
+MOST_ASSETS = 200
+"""Ids that the list of what can be bought offers."""
+
+
+def asset_list(tables: Mapping[str, Rows], first_cell: str) -> list[tuple[str, str]]:
+    """The ids of several sheets below each other, as formulas with their values.
+
+    Parameters
+    ----------
+    tables : rows as typed by sheet name
+    first_cell : address of the first formula, such as ``$H$5``
+
+    Returns
+    -------
+    list of (formula, value); beyond the last id the value is empty
+    """
+    targets = asset_sheets()
+    names: list[str] = []
+    for name in targets:
+        key = sheet(name).id_field or ""
+        found = [str(row[key]) for row in tables.get(name, ()) if _is_typed(row.get(key))]
+        names += found or [""]  # the named range of an empty sheet is one blank cell
+    lists = [prompts.id_list_name(name) for name in targets]
+    formulas = []
+    row = int(first_cell.rpartition("$")[2])
+    column = first_cell.replace("$", "").rstrip("0123456789")
+    for i in range(MOST_ASSETS):
+        n = f"ROWS({first_cell}:{column}{row + i})"
+        text = '""'
+        for j in reversed(range(len(lists))):
+            before = "".join(f"-ROWS({name})" for name in lists[:j])
+            text = f'IFERROR(INDEX({lists[j]},{n}{before})&"",{text})'
+        formulas.append((f"={text}", names[i] if i < len(names) else ""))
+    return formulas
+
+
+def asset_sheets() -> tuple[str, ...]:
+    """Sheets whose ids can be bought: those that Fixed purchases refers to."""
+    return sheet("Fixed purchases").field("asset").refers_to

@@ -142,8 +142,15 @@ def write_start_sheet(
     writer.worksheet.fit_to_pages(1, 1)
 
 
-def write_lists_sheet(workbook: Any, writer: SheetWriter) -> None:
-    """Write Lists: every dropdown list in a column of its own, with a name."""
+def write_lists_sheet(workbook: Any, writer: SheetWriter, tables: Mapping[str, Rows]) -> None:
+    """Write Lists: every dropdown list in a column of its own, with a name.
+
+    Parameters
+    ----------
+    workbook : xlsxwriter Workbook
+    writer : SheetWriter of the sheet
+    tables : rows as typed by sheet name, for the list of what can be bought
+    """
     line = "The choices offered in the dropdowns. Changing them here does not change what is read."
     writer.head(LISTS, line)
     n_longest = 0
@@ -153,13 +160,33 @@ def write_lists_sheet(workbook: Any, writer: SheetWriter) -> None:
         writer.text(3, column, heading, Role.HEADING_OPTIONAL)
         for i_choice, choice in enumerate(choices):
             writer.text(4 + i_choice, column, choice, Role.LABEL)
-        letter = chr(ord("A") + column)
+        letter = xl_col_to_name(column)
         workbook.define_name(name, f"={LISTS}!${letter}$5:${letter}${4 + len(choices)}")
         n_longest = max(n_longest, len(choices))
+    _write_asset_list(workbook, writer, len(lists), tables)
     writer.height(3, 20)
     writer.worksheet.freeze_panes(4, 0)
     writer.worksheet.protect()
-    writer.page(4 + n_longest, len(lists) - 1, 3, line)
+    writer.page(4 + n_longest, len(lists), 3, line)
+
+
+def _write_asset_list(
+    workbook: Any, writer: SheetWriter, column: int, tables: Mapping[str, Rows]
+) -> None:
+    """What can be bought, from several sheets: a list that follows as rows are added."""
+    writer.width(column, 30)
+    writer.text(3, column, "What can be bought (calculated)", Role.HEADING_OPTIONAL)
+    letter = xl_col_to_name(column)
+    first = f"${letter}$5"
+    for i, (text, value) in enumerate(live_checks.asset_list(tables, first)):
+        writer.formula(4 + i, column, text, value, Role.CALCULATED_TEXT)
+    names = [prompts.id_list_name(name) for name in live_checks.asset_sheets()]
+    count = "+".join(f"ROWS({name})" for name in names)
+    area = f"{LISTS}!{first}:${letter}${4 + live_checks.MOST_ASSETS}"
+    workbook.define_name(
+        prompts.ASSET_LIST,
+        f"={LISTS}!{first}:INDEX({area},MIN({live_checks.MOST_ASSETS},{count}))",
+    )
 
 
 def _write_order(

@@ -69,4 +69,4 @@ def write_study_workbook(
                 write_settings_sheet(book, writer, sheet, settings)
             else:
                 write_table_sheet(book, writer, sheet, tables.get(sheet.name, ()))
-        write_lists_sheet(book, SheetWriter(book, LISTS, formats))
+        write_lists_sheet(book, SheetWriter(book, LISTS, formats), tables)
