@@ -208,6 +208,16 @@ def test_what_unpacks_to_too_much_in_all_is_refused(
         read_workbook(path)
 
 
+def test_a_table_of_texts_that_is_too_large_is_refused(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    path = tmp_path / "study.xlsx"
+    path.write_bytes(rezipped({"xl/sharedStrings.xml": b"<sst>" + b"<si/>" * 20_000 + b"</sst>"}))
+    monkeypatch.setattr("xlplan.workbook.triage.MAX_OTHER_PART_BYTES", 90_000)
+    with pytest.raises(StudyFileError, match="sharedStrings"):
+        read_workbook(path)
+
+
 def test_a_file_that_is_too_large_is_refused_before_it_is_read(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:

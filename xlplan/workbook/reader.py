@@ -41,8 +41,8 @@ _LOG = logging.getLogger(__name__)
 
 MAX_COLUMNS = 500
 """Columns beyond this are not read: more than a study has profiles."""
-MAX_VALUES = 3_000_000
-"""A year of 5-minute rows for 25 profiles stays below this; more would fill the memory."""
+MAX_VALUES = 1_500_000
+"""A year of 5-minute rows for a dozen profiles stays below this; more would fill the memory."""
 MAX_BLANK_ROWS = 5000
 """Reading stops after so many blank rows: formatting often runs on to the last row of a sheet."""
 SHEETS_OF_OUR_OWN = frozenset({"start", "lists", "field guide", "findings"})
@@ -178,7 +178,13 @@ def read_sheets(content: bytes) -> Sheets:
             if title not in wanted:
                 continue
             # The path of the part is known to openpyxl only under this name.
-            facts = sheet_facts(archive.read(sheet._worksheet_path))
+            xml = archive.read(sheet._worksheet_path)
+            if (
+                xml.count(b"v>") // 2 > n_left
+            ):  # seen at once what the count below takes long to see
+                raise StudyFileError(_too_many())
+            facts = sheet_facts(xml)
+            del xml
             grid, stopped_at, n_left = _read_grid(sheet, facts, n_left)
             sheets.facts[title], sheets.grids[title] = facts, grid
             if stopped_at:
@@ -186,6 +192,13 @@ def read_sheets(content: bytes) -> Sheets:
     sheets.version, sheets.version_place = _template_version(book)
     book.close()
     return sheets
+
+
+def _too_many() -> str:
+    return (
+        f"holds more than {MAX_VALUES:,} values, which no study needs. Remove what is no part of "
+        f"it."
+    )
 
 
 def _template_version(book: Any) -> tuple[object, tuple[str, str]]:
@@ -232,10 +245,7 @@ def _read_grid(sheet: Any, facts: SheetFacts, n_left: int) -> tuple[Grid, int, i
             n_blank = 0
             n_left -= len(cells)
             if n_left < 0:
-                raise StudyFileError(
-                    f"holds more than {MAX_VALUES:,} values, which no study needs. Remove what is "
-                    f"no part of it."
-                )
+                raise StudyFileError(_too_many())
             continue
         n_blank += 1
         if n_blank > MAX_BLANK_ROWS:

@@ -20,11 +20,14 @@ from openpyxl.utils.cell import coordinate_from_string
 
 _WORTH_LOOKING = re.compile(rb"<(?:\w+:)?f[\s/>]|hidden=|mergeCell")
 _FORMULA = re.compile(rb"<(?:\w+:)?f[\s/>]")
-_CELL_TAG = re.compile(rb"<(?:\w+:)?c\s[^>]*>")
 _ADDRESS = re.compile(rb"\sr=[\"']([A-Z]{1,3}[0-9]{1,7})[\"']")
-_FORMULA_TEXT = re.compile(rb"<(?:\w+:)?f(?:\s[^>]*)?(?:/>|>([^<]*)<)")
+_FORMULA_CELL = re.compile(
+    rb"<(?:\w+:)?c(\s[^>]*)>\s*"
+    rb"<(?:\w+:)?f(?:\s[^>]*)?(?:/>|>([^<]*)</(?:\w+:)?f>)\s*"
+    rb"(<(?:\w+:)?v(?:\s[^>]*)?(?:/>|>([^<]*)<))?"
+)
+"""Attributes of a cell, its formula, its stored value as an element and as text."""
 _TYPE_IS_TEXT = re.compile(rb"\st=[\"']str[\"']")
-_STORED = re.compile(rb"<(?:\w+:)?v(?:\s[^>]*)?(?:/>|>([^<]*)<)")
 _HIDDEN_ROW = re.compile(rb"<(?:\w+:)?row\s[^>]*hidden=[\"'](?:1|true)[\"'][^>]*>")
 _ROW_NUMBER = re.compile(rb"\sr=[\"']([0-9]{1,7})[\"']")
 _HIDDEN_COLUMN = re.compile(rb"<(?:\w+:)?col\s[^>]*hidden=[\"'](?:1|true)[\"'][^>]*>")
@@ -33,9 +36,6 @@ _MAX = re.compile(rb"\smax=[\"']([0-9]{1,5})[\"']")
 _MERGE = re.compile(rb"<(?:\w+:)?mergeCell\s[^>]*ref=[\"']([A-Z0-9:]+)[\"']")
 _FAR_RIGHT = re.compile(rb"\sr=[\"'][A-Z]{3}[0-9]")
 _OTHER_BOOK = re.compile(r"\[[0-9]+\]|\[[^\[\]]+\.xls[xmb]?\]", re.IGNORECASE)
-
-LONGEST_CELL = 70_000
-"""Bytes within which a formula's cell begins and ends: its formula and value at their longest."""
 
 
 @dataclass
@@ -84,22 +84,19 @@ def _search(xml: bytes, facts: SheetFacts) -> bool:
     """Facts by searching the text; False where it is not of the plain form."""
     if xml[:2] in (b"\xff\xfe", b"\xfe\xff") or b"<!--" in xml or b"<![CDATA[" in xml:
         return False
-    for match in _FORMULA.finditer(xml):
-        start = max(xml.rfind(b"<c ", 0, match.start()), xml.rfind(b":c ", 0, match.start()))
-        tag = _CELL_TAG.match(xml, xml.rfind(b"<", 0, start + 1)) if start >= 0 else None
-        address = _ADDRESS.search(tag[0]) if tag else None
-        if tag is None or address is None or match.start() - tag.end() > LONGEST_CELL:
+    n_formula = sum(1 for _ in _FORMULA.finditer(xml))
+    for match in _FORMULA_CELL.finditer(xml):
+        address = _ADDRESS.search(match[1])
+        if address is None:
             return False
-        end = xml.find(b"c>", match.start())
-        body = xml[tag.end() : end]
-        stored = _STORED.search(body)
-        formula = _FORMULA_TEXT.search(body)
         facts.add_formula(
             address[1].decode(),
-            (formula[1] or b"").decode("utf-8", "replace") if formula else "",
-            None if stored is None else (stored[1] or b"").decode("utf-8", "replace"),
-            bool(_TYPE_IS_TEXT.search(tag[0])),
+            (match[2] or b"").decode("utf-8", "replace"),
+            (match[4] or b"").decode("utf-8", "replace") if match[3] else None,
+            bool(_TYPE_IS_TEXT.search(match[1])),
         )
+    if facts.n_formula != n_formula:
+        return False
     for match in _HIDDEN_ROW.finditer(xml):
         number = _ROW_NUMBER.search(match[0])
         if number is None:

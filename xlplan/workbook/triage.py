@@ -23,6 +23,8 @@ MAX_PACKED_BYTES = 200_000_000
 MAX_PARTS = 10_000
 MAX_UNPACKED_BYTES = 400_000_000
 """A study of every sheet filled to a year of 5-minute rows unpacks to well below this."""
+MAX_OTHER_PART_BYTES = 60_000_000
+"""Texts, styles and the like are taken into memory whole, unlike the rows of sheets."""
 MAX_RATIO = 200
 """Ordinary sheets pack about ten to one; beyond this, in a part of some size, it is a trap."""
 RATIO_FROM_BYTES = 1_000_000
@@ -156,6 +158,13 @@ def _check_sizes(path: Path, infos: dict[str, zipfile.ZipInfo]) -> None:
                 f"'{path}' unpacks to {ratio:.0f} times its size in '{info.filename}', which no "
                 f"study needs. Clear the formatted but empty cells, or copy the study into a new "
                 f"workbook."
+            )
+        is_text = info.filename.lower().endswith((".xml", ".rels", ".vml"))
+        is_sheet = info.filename.startswith("xl/worksheets/")
+        if is_text and not is_sheet and info.file_size > MAX_OTHER_PART_BYTES:
+            raise StudyFileError(
+                f"'{path}' unpacks to {info.file_size / 1e6:.0f} MB in '{info.filename}', which no "
+                f"study needs. Remove what is no part of the study."
             )
     if total > MAX_UNPACKED_BYTES:
         raise StudyFileError(
