@@ -317,7 +317,9 @@ def _about_missing_sheets(matched: dict[Sheet, str | None], others: list[str]) -
             hint = f"Rename it to {schema.name}, or to something less alike if it is your own."
         elif not schema.is_optional:
             message = "this sheet is missing."
-            hint = f"Add it from a blank template. Sheets found: {', '.join(others) or 'none'}."
+            hint = "Add it from a blank template."
+            if others:
+                hint += f" Sheets found that are not known: {', '.join(others)}."
         else:
             continue
         findings.append(

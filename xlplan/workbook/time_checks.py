@@ -102,6 +102,8 @@ def _window(
         hint = f"A period is {minutes_from_hours(period_h):g} minutes (Settings)."
         return [fault(row, Code.NOT_WHOLE_PERIODS, "hours", message, hint)], None
     start = profiles.row_at(row.values.get("starts_at"))
+    if start is None and any(time is None for time in profiles.times):
+        return [], None  # it may be one of the times that are faulty themselves
     if start is None:
         first, last = profiles.rows[0].row.cell("time"), profiles.rows[-1].row.cell("time")
         message = f"{row.row.cell('starts_at').typed} is no time of Profiles."

@@ -21,6 +21,7 @@ from xlplan.schema.fields import Field, Kind
 from xlplan.workbook.folding import ZERO_WIDTH, clean, did_you_mean, fold
 from xlplan.workbook.tables import Cell, finding_at
 from xlplan.workbook.text_numbers import PLAIN_NUMBER, parse_number
+from xlplan.workbook.units import units_in
 
 EXCEL_ERRORS = frozenset(
     [
@@ -194,11 +195,12 @@ def _read_text_number(cell: Cell, field: Field, text: str) -> Reading:
             unit = f" ({field.unit})" if field.unit else ""
             hint = f"Give one number alone; the unit stands in the heading{unit}."
             if parsed.unit and parsed.before_unit is not None:
-                is_same = fold(parsed.unit) == fold(field.unit)
+                is_same = units_in(parsed.unit) == units_in(field.unit) != set()
                 hint = (
                     f"Type {parsed.before_unit:.12g} alone; the unit stands in the heading{unit}."
                     if is_same
-                    else f"Type the number alone, {in_unit(field)[5:-1] or 'without a unit'}."
+                    else "Type the number alone, "
+                    f"{in_unit(field).removeprefix('Give it ').rstrip('.') or 'without a unit'}."
                 )
         return _fault(cell, field, parsed.code, parsed.problem, hint)
     number = parsed.number
