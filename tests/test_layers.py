@@ -41,6 +41,8 @@ NEVER = {"report": {"model", "solve"}}
 OWNERS = {
     "openpyxl": (
         "workbook/*reader.py",
+        "workbook/grid.py",
+        "workbook/profile_columns.py",
         "workbook/sheet_facts.py",
         "workbook/triage.py",
     ),

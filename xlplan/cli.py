@@ -368,7 +368,7 @@ def print_checked(checked: CheckedInput) -> None:
     """The findings of a study, how many there are, and whether it can be solved."""
     print_findings(checked.findings)
     verdict = (
-        "can be solved" if checked.is_usable else "cannot be solved before its faults are mended"
+        "can be solved" if checked.is_usable else "cannot be solved yet"
     )
     print(f"{count_findings(checked.findings)} The study {verdict}.")
 

@@ -26,9 +26,9 @@ from xlplan.schema.fields import Field, Kind, load_sheets, schema_text
 from xlplan.workbook.demo import demo_tables
 from xlplan.workbook.template import write_template
 
-PROPERTIES = {
-    sheet.name: json.loads(schema_text(sheet.key))["properties"] for sheet in load_sheets()
-}
+SCHEMAS = {sheet.name: json.loads(schema_text(sheet.key)) for sheet in load_sheets()}
+PROPERTIES = {name: schema["properties"] for name, schema in SCHEMAS.items()}
+PROPERTIES["Profiles"][""] = SCHEMAS["Profiles"]["additionalProperties"]
 
 
 def cells() -> list[tuple[str, str, Field]]:
@@ -46,6 +46,9 @@ def cells() -> list[tuple[str, str, Field]]:
             for column, field in enumerate(sheet.fields, start=1):
                 address = f"{get_column_letter(column)}{HEADING_ROW + 1 + i_row}"
                 found.append((sheet.name, address, field))
+            if sheet.other_columns is not None:
+                address = f"{get_column_letter(2 + i_row % 7)}{HEADING_ROW + 1 + i_row}"
+                found.append((sheet.name, address, sheet.other_columns))
     return found
 
 

@@ -59,6 +59,18 @@ def near_miss(cell: Cell, missing: Iterable[Field]) -> Finding | None:
     )
 
 
+def about_double(cell: Cell, key: str, first: str) -> Finding:
+    """A fault where a heading stands twice; ``first`` is the address of the other."""
+    return finding_at(
+        cell,
+        Level.FAULT,
+        Code.HEADING_TWICE,
+        key,
+        f"'{clean(cell.typed)}' also stands in {first}.",
+        "Delete or rename one of the two columns.",
+    )
+
+
 def unit_differs(cell: Cell, unit_text: str, field: Field) -> Finding | None:
     """A warning where a unit is written that is not the field's own.
 

@@ -14,7 +14,7 @@ from xlsxwriter.utility import xl_col_to_name
 
 from xlplan.schema.fields import Field, Kind, Sheet, sheet
 from xlplan.workbook import prompts
-from xlplan.workbook.input_sheets import FIRST_ROW, LAST_CHECKED_ROW
+from xlplan.workbook.layout import FIRST_ROW, LAST_CHECKED_ROW
 
 Rows = Sequence[Mapping[str, object]]
 

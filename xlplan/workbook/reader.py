@@ -29,9 +29,10 @@ from xlplan.base.errors import Finding, Level, StudyFileError
 from xlplan.base.listing import cell_ranges
 from xlplan.schema.fields import Sheet, load_sheets
 from xlplan.workbook.folding import alike, fold
+from xlplan.workbook.grid import Grid
 from xlplan.workbook.settings_reader import read_settings
 from xlplan.workbook.sheet_facts import SheetFacts, sheet_facts
-from xlplan.workbook.sheet_reader import Grid, read_sheet
+from xlplan.workbook.sheet_reader import read_sheet
 from xlplan.workbook.tables import Cell, RawStudy, Table
 from xlplan.workbook.triage import triage
 from xlplan.workbook.values import EXCEL_ERRORS
