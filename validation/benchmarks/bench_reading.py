@@ -18,6 +18,7 @@ import tempfile
 import time
 import warnings
 from collections.abc import Callable
+from itertools import pairwise
 from pathlib import Path
 
 import openpyxl
@@ -60,7 +61,7 @@ def write_large_study(path: Path) -> None:
                 "conductor": "wire",
                 "outage_class": "overhead",
             }
-            for before, after in zip(names, names[1:], strict=False)
+            for before, after in pairwise(names)
         ],
         "Conductors": [{"conductor": "wire", "r_ohm_per_length": 0.2, "x_ohm_per_length": 0.3}],
         "Outage assumptions": [
