@@ -177,7 +177,7 @@ def test_of_a_long_sheet_the_rows_around_the_findings_are_copied(tmp_path: Path)
     assert page["B4000"].comment is not None
 
 
-@pytest.mark.parametrize("value", [1e300, -1e308, float("inf"), dt.datetime(1899, 1, 1), "x" * 900])
+@pytest.mark.parametrize("value", [1e300, -1e308, float("inf"), dt.datetime(1899, 1, 1), "x" * 40_000])
 def test_values_that_a_cell_cannot_hold_become_text(tmp_path: Path, value: object) -> None:
     book = Book()
     book.set("Loads!D6", value)

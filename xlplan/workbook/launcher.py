@@ -24,7 +24,7 @@ set "STUDY=%~dp0{study}"
 if not "%~1"=="" set "STUDY=%~1"
 :study
 echo.
-echo %STUDY%
+echo "%STUDY%"
 "%PYTHON%" -m xlplan check "%STUDY%"
 if errorlevel 1 set "WORST=2" & goto next
 choice /c YN /m "Solve it now"

@@ -260,14 +260,17 @@ def _column_number(letters: str) -> int:
 def value_of(cell: Cell) -> object:
     """A cell's value for its copy: formulas and errors as text, nothing that calculates.
 
-    Dates before 1900, infinities and durations that a cell cannot hold become text as well.
+    Dates before 1900, infinities and durations that a cell cannot hold become text as well; text
+    longer than a cell holds is cut, and ends in dots.
     """
     if cell.is_uncalculated:
         return "(a formula, never calculated)"
     value = cell.value
     if cell.is_error or value is None:
         return cell.typed
-    if isinstance(value, (bool, str)):
+    if isinstance(value, str):
+        return value if len(value) <= LONGEST_TEXT else f"{value[: LONGEST_TEXT - 4]} ..."
+    if isinstance(value, bool):
         return value
     if isinstance(value, (int, float)):
         return value if math.isfinite(value) and abs(value) < 1e300 else cell.typed
