@@ -20,6 +20,7 @@ from typing import IO
 import openpyxl
 import pytest
 
+from tests.test_end_to_end import write_study
 from xlplan.cli import main
 from xlplan.watch import GRACE_S, POLL_S, SETTLED_S, Save, is_whole, saves, stamp_of
 from xlplan.workbook.template import write_template
@@ -232,7 +233,7 @@ def test_saves_are_checked_until_ctrl_c(tmp_path: Path) -> None:
 @posix_only
 def test_a_study_without_faults_is_solved_if_asked(tmp_path: Path) -> None:
     study = tmp_path / "study.xlsx"
-    shutil.copy(ROOT / "examples" / "wendlemoor" / "wendlemoor.xlsx", study)
+    write_study(study, hours=2)
     command = Command(str(study), "--solve")
     try:
         command.wait_for("study-results.xlsx")
