@@ -18,7 +18,8 @@ SCRIPTS = sorted(Path(__file__).resolve().parent.glob("*/make_study.py"))
 
 def load(script: Path) -> ModuleType:
     spec = importlib.util.spec_from_file_location(script.parent.name, script)
-    assert spec is not None and spec.loader is not None
+    assert spec is not None
+    assert spec.loader is not None
     module = importlib.util.module_from_spec(spec)
     spec.loader.exec_module(module)
     return module

@@ -418,7 +418,7 @@ def test_checks_all_pass(answer):
 
 
 def test_both_methods_agree(answer):
-    path, twin = answer
+    path, _twin = answer
     study = path.with_name("small.xlsx")
     write_study(study, hours=4)
     status, tree = solve(study, "--method", "tree")
@@ -508,7 +508,8 @@ def test_faults_are_listed_with_their_cells(tmp_path, capsys):
     write_study(study, 4, {"Loads": loads})
     assert main(["check", str(study)]) == 2
     printed = capsys.readouterr().out
-    assert "Loads!" in printed and "-5" in printed
+    assert "Loads!" in printed
+    assert "-5" in printed
     assert main(["solve", str(study)]) == 2
     assert not (tmp_path / "study-results.xlsx").exists()
 
@@ -519,7 +520,8 @@ def test_no_workbook_at_all(tmp_path, capsys):
     assert main(["solve", str(text)]) == 2
     assert main(["solve", str(tmp_path / "absent.xlsx")]) == 1
     lines = capsys.readouterr().err.strip().splitlines()
-    assert len(lines) == 2 and all(line.startswith("xlplan: ") for line in lines)
+    assert len(lines) == 2
+    assert all(line.startswith("xlplan: ") for line in lines)
 
 
 def test_nowhere_to_write(tmp_path):
@@ -627,7 +629,8 @@ def test_a_piped_run_prints_plain_text(tmp_path):
     process = run_installed("solve", str(study))
     out, err = process.communicate(timeout=300)
     assert process.returncode == 0
-    assert "\x1b" not in out + err and "\r" not in out + err
+    assert "\x1b" not in out + err
+    assert "\r" not in out + err
     assert out.strip().endswith("study-results.xlsx")
 
 
@@ -648,7 +651,7 @@ def test_a_second_interrupt_stops_at_once(tmp_path):
     process.send_signal(signal.SIGINT)
     time.sleep(0.5)
     process.send_signal(signal.SIGINT)
-    out, err = process.communicate(timeout=300)
+    _out, err = process.communicate(timeout=300)
     # Twice Ctrl-C stops at once: no plan, one plain line, and nothing half-written.
     assert process.returncode == 1
     assert "stopped before there was a plan" in err

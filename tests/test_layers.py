@@ -25,6 +25,7 @@ ORDER = (
     "compare",
     "report",
     "pipeline",
+    "watch",
     "batch",
     "cli",
     "__main__",
@@ -40,6 +41,8 @@ NEVER = {"report": {"model", "solve"}}
 OWNERS = {
     "openpyxl": (
         "workbook/*reader.py",
+        "workbook/grid.py",
+        "workbook/profile_columns.py",
         "workbook/sheet_facts.py",
         "workbook/triage.py",
     ),
@@ -49,6 +52,8 @@ OWNERS = {
         "workbook/template.py",
         "workbook/formats.py",
         "workbook/input_sheets.py",
+        "workbook/live_checks.py",
+        "workbook/start_sheet.py",
         "workbook/prompts.py",
         "workbook/sheet_writer.py",
         "report/*",

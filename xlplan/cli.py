@@ -8,14 +8,17 @@ from __future__ import annotations
 
 import argparse
 import contextlib
+import datetime
 import io
 import json
 import logging
 import os
+import shutil
 import signal
 import sys
 import traceback
 from collections.abc import Iterator, Sequence
+from dataclasses import replace
 from pathlib import Path
 from types import FrameType
 from typing import NoReturn
@@ -24,19 +27,25 @@ from rich.console import Console
 from rich.status import Status
 
 import xlplan
-from xlplan.base.errors import Finding, Level, PathError, StudyError, XlplanError
+from xlplan.base.codes import Code
+from xlplan.base.errors import Finding, Level, NoPlanError, PathError, StudyError, XlplanError
+from xlplan.base.listing import listed
 from xlplan.base.units import frac_from_pct, hours_from_minutes, pct_from_frac
 from xlplan.compare.plan_solver import Progress
 from xlplan.compare.study_result import StudyResult
 from xlplan.pipeline import (
+    CheckedInput,
     Overrides,
     check_target,
     read_study,
     savepoint_path,
     solve_study,
     write_answer,
+    write_findings,
 )
 from xlplan.report.target import replace_whole
+from xlplan.watch import Save, saves, stamp_of
+from xlplan.workbook.launcher import check_no_launchers, write_launchers
 from xlplan.workbook.template import write_template
 
 DONE, FAILED, UNUSABLE, STOPPED = 0, 1, 2, 3
@@ -103,12 +112,26 @@ def build_parser() -> argparse.ArgumentParser:
     template = commands.add_parser("template", help="write a blank study, or the demo study")
     template.add_argument("out", type=Path, metavar="OUT.xlsx")
     template.add_argument("--demo", action="store_true", help="fill in the demo study")
+    template.add_argument(
+        "--launcher", action="store_true", help="write files to double-click beside it, too"
+    )
     template.set_defaults(run=_template)
 
     check = commands.add_parser("check", help="list everything wrong or unlikely in a study")
     check.add_argument("study", type=Path, metavar="STUDY.xlsx")
+    check.add_argument(
+        "--mark",
+        type=Path,
+        metavar="OUT.xlsx",
+        help="write the findings and marked copies of their sheets to a new workbook",
+    )
     check.add_argument("--json", type=Path, metavar="FILE", help="write the findings as JSON")
     check.set_defaults(run=_check)
+
+    watch = commands.add_parser("watch", help="check a study again each time it is saved")
+    watch.add_argument("study", type=Path, metavar="STUDY.xlsx")
+    watch.add_argument("--solve", action="store_true", help="solve it, too, if it has no faults")
+    watch.set_defaults(run=_watch)
 
     solve = commands.add_parser("solve", help="check a study, solve it, write the results")
     solve.add_argument("study", type=Path, metavar="STUDY.xlsx")
@@ -169,16 +192,25 @@ def _template(options: argparse.Namespace) -> int:
         raise PathError(f"'{out}' should end in .xlsx.")
     if out.exists():
         raise PathError(f"'{out}' is there already; choose another name. Nothing was changed.")
+    if options.launcher:
+        check_no_launchers(out)
     write_template(out, with_demo=options.demo)
     print(out)
+    if options.launcher:
+        for path in write_launchers(out, sys.executable):
+            print(path)
     return DONE
 
 
 def _check(options: argparse.Namespace) -> int:
+    mark: Path | None = options.mark
+    if mark is not None and mark.suffix.lower() != ".xlsx":
+        raise PathError(f"'{mark}' should end in .xlsx.")
+    for path in (mark, options.json):
+        if path is not None:
+            check_target(path, options.study)
     checked = read_study(options.study)
-    print_findings(checked.findings)
-    counts = count_findings(checked.findings)
-    print(counts if checked.findings else f"{counts} The study can be solved.")
+    print_checked(checked)
     if options.json is not None:
         document = {
             "schema": 1,
@@ -187,7 +219,94 @@ def _check(options: argparse.Namespace) -> int:
             "findings": [finding_record(finding) for finding in checked.findings],
         }
         replace_whole(options.json, json.dumps(document, indent=1, ensure_ascii=False) + "\n")
+    if mark is not None:
+        written = write_findings(checked, mark, options.study)
+        if written != mark:
+            print(f"'{mark}' is there already, so the marked copy has another name:")
+        print(written)
     return DONE if checked.is_usable else UNUSABLE
+
+
+def _watch(options: argparse.Namespace) -> int:
+    """Ctrl-C while waiting or checking is how watching ends: status 0. During a solve it counts
+    for the solve, whose status it is then."""
+    study: Path = options.study
+    if not study.exists():
+        raise PathError(f"There is no file '{study}'.")
+    # A shell that starts us in the background has SIGINT ignored; watching must end all the same.
+    with contextlib.suppress(ValueError):
+        signal.signal(signal.SIGINT, signal.default_int_handler)
+        signal.signal(signal.SIGTERM, signal.default_int_handler)
+    try:
+        _say(f"Watching '{study}'. Save it to have it checked again; Ctrl-C stops.")
+        for save in saves(study):
+            status = _after_save(options, save)
+            if status is not None:
+                return status
+    except KeyboardInterrupt:
+        _say("Stopped watching.")
+    return DONE
+
+
+def _after_save(options: argparse.Namespace, save: Save) -> int | None:
+    """Checks, and solves if asked; a status where watching is to end."""
+    study: Path = options.study
+    if save.stamp is None:
+        _say(f"'{study}' is gone; waiting for it to come back.")
+        return None
+    _say(f"\n{datetime.datetime.now():%H:%M:%S}  {study.name}")
+    try:
+        checked = read_study(study)
+        # That the study is open is what watching is for.
+        kept = tuple(f for f in checked.findings if f.code != Code.OPEN_ELSEWHERE)
+        checked = replace(checked, findings=kept)
+        print_checked(checked)
+        sys.stdout.flush()
+        if options.solve and checked.is_usable:
+            return _solve_while_watching(study, save)
+    except XlplanError as error:
+        # Caught in the middle of the next save: that one is told instead.
+        if stamp_of(study) == save.stamp:
+            _say(f"xlplan: {error}")
+    return None
+
+
+def _solve_while_watching(study: Path, save: Save) -> int | None:
+    """Solves, unless the study is saved again; a status where the user stopped it."""
+    with _Interrupt() as interrupt, _Display(is_quiet=False) as display:
+
+        def is_saved_again() -> bool:
+            return stamp_of(study) not in (save.stamp, None)
+
+        try:
+            result = solve_study(
+                study,
+                Overrides(),
+                _cores(),
+                display.show,
+                should_stop=lambda: interrupt.is_asked or is_saved_again(),
+            )
+        except NoPlanError:
+            if interrupt.is_asked or not is_saved_again():
+                raise
+            result = None
+        if result is None or (is_saved_again() and not interrupt.is_asked):
+            _say("The study was saved again, so this solve is dropped.")
+            return None
+        output = study.with_name(f"{study.stem}-results.xlsx")
+        written = write_answer(result, study, output, None, force=False)
+    print_summary(result)
+    if written != output:
+        print(f"'{output}' is there already, so the results have another name:")
+    _say(str(written))
+    if interrupt.is_asked:
+        return DONE if result.status == "gap reached" else STOPPED
+    return None
+
+
+def _say(text: str) -> None:
+    """Prints at once, into a pipe as well."""
+    print(text, flush=True)
 
 
 def _solve(options: argparse.Namespace) -> int:
@@ -244,7 +363,7 @@ def _check_paths(options: argparse.Namespace) -> None:
         return
     if study.is_dir():
         raise PathError(f"'{study}' is a folder; give the name of a study.")
-    named = [getattr(options, name, None) for name in ("output", "json", "log")]
+    named = [getattr(options, name, None) for name in ("output", "json", "log", "mark")]
     targets = [path for path in named if path is not None]
     for i, target in enumerate(targets):
         if _is_same_file(target, study):
@@ -262,24 +381,32 @@ def _is_same_file(one: Path, other: Path) -> bool:
 
 # -- printing ----------------------------------------------------------------------------------
 
-LEVELS = ((Level.FAULT, "Faults"), (Level.WARNING, "Warnings"), (Level.NOTE, "Notes"))
+
+def print_checked(checked: CheckedInput) -> None:
+    """The findings of a study, how many there are, and whether it can be solved."""
+    print_findings(checked.findings)
+    verdict = "can be solved" if checked.is_usable else "cannot be solved yet"
+    print(f"{count_findings(checked.findings)} The study {verdict}.")
 
 
 def print_findings(findings: Sequence[Finding]) -> None:
-    """Findings by level, in the order of the workbook, wrapped to the terminal."""
-    console = Console(soft_wrap=not sys.stdout.isatty(), highlight=False, markup=False)
-    for level, heading in LEVELS:
-        chosen = [finding for finding in findings if finding.level is level]
-        if chosen:
-            console.print(f"{heading}:")
-            for finding in chosen:
-                console.print("  " + finding.text())
+    """Findings sheet by sheet, wrapped to the terminal; in a pipe one line each."""
+    for line in listed(findings, _line_width()):
+        print(line)
+
+
+def _line_width() -> int | None:
+    """Characters of a line: those of the terminal, or of COLUMNS where that is set; else any."""
+    if sys.stdout.isatty():
+        return shutil.get_terminal_size().columns
+    columns = os.environ.get("COLUMNS", "")
+    return int(columns) if columns.isascii() and columns.isdigit() and int(columns) > 0 else None
 
 
 def count_findings(findings: Sequence[Finding]) -> str:
     """How many of each level, in a sentence."""
     parts = []
-    for level, _ in LEVELS:
+    for level in Level:
         n = sum(finding.level is level for finding in findings)
         parts.append(f"{n} {level}{'' if n == 1 else 's'}")
     return ", ".join(parts) + "."

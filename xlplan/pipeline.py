@@ -25,10 +25,13 @@ from xlplan.network.topology import check_no_load_voltage, check_radial
 from xlplan.outages.checks import check_islands, check_rounded_times
 from xlplan.outages.window_model import WindowModel, build_window_models
 from xlplan.report.json_twin import write_json
+from xlplan.report.target import put_in_place, temporary_beside
 from xlplan.report.writer import check_target, write_results
 from xlplan.solve.savepoint import Found, Savepoint
-from xlplan.study.build import check_and_build
+from xlplan.study.build import build_study, check_tables, in_workbook_order
+from xlplan.study.outline import outline_of
 from xlplan.study.study import Study
+from xlplan.workbook.marking import write_marked
 from xlplan.workbook.reader import read_workbook
 from xlplan.workbook.tables import RawStudy
 
@@ -62,13 +65,29 @@ def read_study(path: Path) -> CheckedInput:
 
     Raises PathError or StudyFileError for what cannot be read at all.
     """
-    raw = read_workbook(path)
-    study, findings = check_and_build(raw)
-    if study is None:
-        return CheckedInput(raw, tuple(findings), None, None, ())
+    return check_raw(read_workbook(path))
+
+
+def check_raw(raw: RawStudy) -> CheckedInput:
+    """Checks a study that was read; all findings in one pass.
+
+    Parameters
+    ----------
+    raw : RawStudy
+
+    Returns
+    -------
+    CheckedInput
+    """
+    checked, findings = check_tables(raw)
+    if _has_fault(findings):
+        outline = outline_of(checked, findings)
+        findings += [] if outline is None else check_radial(outline)
+        return CheckedInput(raw, _ordered([*findings, _checks_left(outline)]), None, None, ())
+    study = build_study(checked, raw.fingerprint)
     findings += check_radial(study)
-    if any(finding.level is Level.FAULT for finding in findings):
-        return CheckedInput(raw, tuple(findings), None, None, ())
+    if _has_fault(findings):
+        return CheckedInput(raw, _ordered([*findings, _checks_left(study)]), None, None, ())
     feeder = build_feeder(study)
     windows = build_window_models(study, feeder)
     scenarios = {
@@ -80,7 +99,47 @@ def read_study(path: Path) -> CheckedInput:
     findings += check_islands(study, feeder, scenarios)
     if study.settings.risk_weight_frac > 0.0:
         findings.append(_unused_risk_weight(study))
-    return CheckedInput(raw, tuple(findings), study, feeder, windows)
+    return CheckedInput(raw, _ordered(findings), study, feeder, windows)
+
+
+def _has_fault(findings: list[Finding]) -> bool:
+    return any(finding.level is Level.FAULT for finding in findings)
+
+
+def _ordered(findings: list[Finding]) -> tuple[Finding, ...]:
+    """In workbook order, each place and code once."""
+    once = {(f.sheet, f.cell, f.code, f.key, f.value): f for f in reversed(findings)}
+    kept = set(map(id, once.values()))
+    return tuple(in_workbook_order([finding for finding in findings if id(finding) in kept]))
+
+
+def _checks_left(shape: object) -> Finding:
+    """Says which checks wait until the faults are mended."""
+    waiting = "islands, voltages without load and times rounded to periods"
+    if shape is None:
+        waiting = f"whether the feeder is radial and connected, {waiting}"
+    message = f"not checked yet, because of faults elsewhere: {waiting}."
+    hint = "These follow once the faults are mended."
+    return Finding(Level.NOTE, Code.CHECKS_LEFT, "Lines", "", "", "", message, hint)
+
+
+def write_findings(checked: CheckedInput, path: Path, study_path: Path) -> Path:
+    """Writes the findings as a new workbook, with marked copies of the affected sheets.
+
+    Parameters
+    ----------
+    checked : CheckedInput
+    path : Path asked for
+    study_path : Path, never written to
+
+    Returns
+    -------
+    Path of the workbook written: the next free name where the one asked for is taken
+    """
+    check_target(path, study_path)
+    with temporary_beside(path) as temporary:
+        write_marked(temporary, checked.raw, checked.findings)
+        return put_in_place(temporary, path, force=False)
 
 
 @dataclass(frozen=True)
@@ -283,8 +342,10 @@ def write_answer(
 __all__ = [
     "CheckedInput",
     "Overrides",
+    "check_raw",
     "check_target",
     "read_study",
     "solve_study",
     "write_answer",
+    "write_findings",
 ]

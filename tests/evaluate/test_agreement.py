@@ -55,7 +55,7 @@ class Solved:
 
 
 def audited_violations(solved: Solved) -> list[str]:
-    """Every first plan and every first event, re-checked by code that takes no part in the model."""
+    """Every first plan and first event, re-checked by code that takes no part in the model."""
     study, feeder = solved.study, solved.feeder
     bought = read_purchases(solved.graph.first_stage, solved.found.x)
     capacities = capacities_in_service(study, bought)
@@ -116,7 +116,8 @@ def test_both_methods_give_the_same_cost_and_feasible_plans(seed: int) -> None:
     study, windows = solved.study, solved.windows
     tree = build_whole_tree(study, solved.feeder, windows)
     reference = solve_tree(tree)
-    assert reference.has_plan and reference.purchases is not None
+    assert reference.has_plan
+    assert reference.purchases is not None
     optimum = reference.objective
     room = AGREE * abs(optimum)
 

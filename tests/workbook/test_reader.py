@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import datetime as dt
 import hashlib
+import shutil
+import subprocess
 import zipfile
 from pathlib import Path
 
@@ -17,6 +19,7 @@ from xlplan.base.errors import Level
 from xlplan.schema.fields import load_sheets
 from xlplan.study.build import check_and_build
 from xlplan.workbook.reader import read_workbook
+from xlplan.workbook.sheet_facts import SheetFacts, sheet_facts
 from xlplan.workbook.template import write_study_workbook, write_template
 
 FAULT, WARNING, NOTE = Level.FAULT, Level.WARNING, Level.NOTE
@@ -181,7 +184,7 @@ SHAPES = [
     (_set("Lines", D1="Length (ft)"), WARNING, "heading unit", "Lines!D1"),
     (_set("Loads", J1="Remarks"), NOTE, "column ignored", "Loads!J1"),
     (_set("Loads", D4=500), FAULT, "row without id", "Loads!A4"),
-    (_set("Loads", A4="Total", D4=500), FAULT, "blank", "Loads!B4"),
+    (_set("Loads", A4="Total", D4=500), FAULT, "totals row", "Loads!A4"),
     (_set("Settings", A24="base_kv", B24=11), FAULT, "heading twice", "Settings!B24"),
     (_set("Settings", A8="period_minuets"), FAULT, "heading near miss", "Settings!A8"),
     (_set("Settings", A4="voltage of ours"), FAULT, "blank", "Settings!"),
@@ -339,3 +342,66 @@ def test_the_demo_has_no_faults_and_the_blank_template_no_traceback(tmp_path: Pa
     study, findings = check_and_build(read_workbook(path))
     assert study is None
     assert {"blank", "sheet empty"} == {code for code, _ in places(findings, FAULT)}
+
+
+# Files of other programs
+
+
+@pytest.mark.skipif(shutil.which("soffice") is None, reason="LibreOffice is not installed")
+def test_a_study_saved_by_libreoffice_is_the_same(
+    tmp_path: Path,
+) -> None:
+    path = tmp_path / "study.xlsx"
+    write_template(path, with_demo=True)
+    command = ["soffice", f"-env:UserInstallation={(tmp_path / 'office').as_uri()}", "--headless"]
+    words = ["--convert-to", "xlsx", "--outdir", str(tmp_path / "xlsx"), str(path)]
+    subprocess.run([*command, *words], check=True, capture_output=True, timeout=120)
+    plain, _ = check_and_build(read_workbook(path))
+    saved, findings = check_and_build(read_workbook(tmp_path / "xlsx" / "study.xlsx"))
+    assert places(findings) == {("measures share line", "Hardening!B7")}
+    assert plain is not None
+    assert saved is not None
+    for name in ("loads", "lines", "generators", "storage", "windows", "customer_classes"):
+        for mine, other in zip(getattr(plain, name), getattr(saved, name), strict=True):
+            without_origin = {k: v for k, v in vars(mine).items() if k != "origin"}
+            assert without_origin == {k: v for k, v in vars(other).items() if k != "origin"}
+    for name, values in plain.profiles.values.items():
+        assert saved.profiles.values[name].tolist() == values.tolist()
+
+
+def _facts_both_ways(xml: bytes) -> tuple[SheetFacts, SheetFacts]:
+    """The facts by searching, and by parsing after a remark was put in."""
+    parsed = xml.replace(b"<sheetData>", b"<!-- a remark --><sheetData>")
+    assert parsed != xml
+    return sheet_facts(xml), sheet_facts(parsed)
+
+
+def test_searching_a_sheet_finds_what_parsing_finds() -> None:
+    xml = b"""<worksheet xmlns="http://schemas.openxmlformats.org/spreadsheetml/2006/main">
+    <cols><col min="2" max="3" hidden="1" width="9"/><col min="5" max="5"/></cols><sheetData>
+    <row r="1"><c r="A1" s="1" t="s"><v>0</v></c><c r="B1"><f>1+1</f></c></row>
+    <row r="2" hidden="1"><c r="A2"><f>A1</f><v>2</v></c><c r="B2" t="str"><f>""</f><v></v></c>
+    <c r="C2"><f t="shared" ref="C2:C4" si="0">[1]Sheet1!A1</f><v>4</v></c></row>
+    <row r="3" hidden="true"><c r="C3"><f t="shared" si="0"/><v>5</v></c></row>
+    <row r="4" hidden="0"><c r="C4"><f t="shared" si="0"/></c><c r="D4"/><c r="E4"><f/></c></row>
+    </sheetData><mergeCells count="1"><mergeCell ref="A6:B7"/></mergeCells></worksheet>"""
+    found, parsed = _facts_both_ways(xml)
+    assert found == parsed
+    assert found.hidden_rows == {2, 3}
+    assert found.hidden_columns == {2, 3}
+    assert found.merged_ranges == ["A6:B7"]
+    assert found.uncalculated == {"B1", "C4", "E4"}
+    assert found.external == ["C2"]
+    assert found.n_formula == 7
+
+
+@pytest.mark.parametrize("name", ["template-1-demo.xlsx"])
+def test_searching_and_parsing_agree_on_real_sheets(name: str) -> None:
+    n_sheet = 0
+    with zipfile.ZipFile(Path(__file__).parent / "data" / name) as archive:
+        for part in archive.namelist():
+            if part.startswith("xl/worksheets/sheet"):
+                found, parsed = _facts_both_ways(archive.read(part))
+                assert found == parsed
+                n_sheet += 1
+    assert n_sheet == 20

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import re
+import zipfile
 from datetime import datetime, timedelta
 from itertools import pairwise
 from pathlib import Path
@@ -23,7 +24,9 @@ from xlplan.workbook.sheet_writer import WorkbookWriteError, demand_written
 from xlplan.workbook.template import write_study_workbook, write_template
 
 TEMPLATES = Path(__file__).resolve().parents[2] / "templates"
-HEADING_ROW = 4
+HEADING_ROW = 5
+EXAMPLE_ROW = 4
+HINT_ROW = 3
 TABLE_SHEETS = [entry for entry in load_sheets() if not entry.is_settings]
 
 
@@ -67,10 +70,15 @@ def test_sheets_stand_in_order_between_start_and_lists(blank: Workbook) -> None:
 
 
 @pytest.mark.parametrize("which", ["blank", "demo"])
-def test_there_are_no_formulas_and_no_errors(which: str, request: pytest.FixtureRequest) -> None:
+def test_no_input_is_a_formula_and_nothing_is_an_error(
+    which: str, request: pytest.FixtureRequest
+) -> None:
+    """A formula among the inputs would be read by its stored value, a guess of its writer."""
     book = request.getfixturevalue(which)
-    types = {cell.data_type for page in book for row in page.iter_rows() for cell in row}
-    assert types <= {"n", "s", "d", "b"}
+    for page in book:
+        types = {cell.data_type for row in page.iter_rows() for cell in row}
+        is_input = page.title not in ("Start", "Lists")
+        assert types <= ({"n", "s", "d", "b"} if is_input else {"n", "s", "f"})
 
 
 def test_a_blank_study_holds_no_values(blank: Workbook) -> None:
@@ -96,18 +104,26 @@ def test_headings_hints_and_notes_come_from_the_schema(blank: Workbook, entry: A
             assert f"Blank means {field.default}" in heading.comment.text
         if field.source:
             assert field.source in heading.comment.text
-        hint = page.cell(HEADING_ROW - 1, column).value
+        hint = page.cell(HINT_ROW, column).value
         assert (hint == "needed") == field.is_required
+        example = page.cell(EXAMPLE_ROW, column)
+        assert prompts.plain(field.example) in example.value
+        assert example.font.italic
+        assert field.comes_from in heading.comment.text
 
 
 def test_settings_have_one_row_each_with_a_name(blank: Workbook) -> None:
     page = blank["Settings"]
     titles = [cell.value for cell in page[HEADING_ROW]]
-    assert titles[:4] == ["Setting", "Value", "Unit", "Note"]
+    assert titles[:4] == ["Setting", "Value", "Unit", "If blank"]
+    assert titles[4:] == ["Example", "Usually from", "Note", "Group"]
     for row, field in enumerate(sheet("Settings").fields, start=HEADING_ROW + 1):
         assert page.cell(row, 1).value == field.title
         assert (page.cell(row, 3).value or "") == field.unit
-        assert field.help in page.cell(row, 4).value
+        assert field.help in page.cell(row, 7).value
+        assert page.cell(row, 5).value == prompts.plain(field.example)
+        if field.default is not None:
+            assert page.cell(row, 4).value == prompts.plain(field.default)
         assert blank.defined_names[f"set_{field.key}"].attr_text == f"Settings!$B${row}"
 
 
@@ -145,6 +161,11 @@ def test_every_cell_to_fill_has_an_input_message_and_its_check(blank: Workbook, 
         elif field.kind is Kind.REFERENCE and len(field.refers_to) == 1:
             assert check.formula1 == prompts.id_list_name(field.refers_to[0])
             assert check.formula1 in blank.defined_names
+        elif field.kind is Kind.REFERENCE:
+            assert check.formula1 == "assets"
+            assert check.formula1 in blank.defined_names
+        elif field.kind is Kind.TIME and field.refers_to:
+            assert check.formula1 == prompts.id_list_name(field.refers_to[0])
         elif field.kind is Kind.PROFILE:
             assert check.formula1 == "profile_names"
             assert check.formula1 in blank.defined_names
@@ -209,7 +230,7 @@ def test_demo_is_read_back_as_typed(demo: Workbook) -> None:
                 if page.cell(number, column).value is not None
             }
             assert found == {known.get(key, key): value for key, value in row.items()}
-    settings = {row[0].value: row[1].value for row in demo["Settings"].iter_rows(min_row=5)}
+    settings = {row[0].value: row[1].value for row in demo["Settings"].iter_rows(min_row=6)}
     for key, value in demo_settings().items():
         assert settings[sheet("Settings").field(key).title] == value
 
@@ -312,8 +333,8 @@ def test_text_stays_text_whatever_it_begins_with(tmp_path: Path) -> None:
     buses = [{"bus": f"B{number}", "name": text} for number, text in enumerate(texts)]
     write_study_workbook(path, {"Buses": buses}, {"prepared_by": texts[0]})
     book = load_workbook(path)
-    cells = [book["Buses"].cell(5 + number, 2) for number in range(len(texts))]
-    for cell, text in zip([*cells, book["Settings"]["B6"]], [*texts, texts[0]], strict=True):
+    cells = [book["Buses"].cell(6 + number, 2) for number in range(len(texts))]
+    for cell, text in zip([*cells, book["Settings"]["B7"]], [*texts, texts[0]], strict=True):
         assert (cell.value, cell.data_type, cell.hyperlink) == (text, "s", None)
 
 
@@ -322,8 +343,8 @@ def test_values_keep_the_type_in_which_they_were_typed(tmp_path: Path) -> None:
     rows = [{"load": "12", "peak_kw": "1,250.5", "customers": 7, "power_factor": True}]
     write_study_workbook(path, {"Loads": rows}, {"budget": 1e6})
     page = load_workbook(path)["Loads"]
-    assert [page["A5"].value, page["D5"].value, page["F5"].value] == ["12", "1,250.5", 7]
-    assert page["E5"].value is True
+    assert [page["A6"].value, page["D6"].value, page["F6"].value] == ["12", "1,250.5", 7]
+    assert page["E6"].value is True
 
 
 def test_cells_for_ids_keep_what_looks_like_a_date_or_a_number(blank: Workbook) -> None:
@@ -341,7 +362,7 @@ def test_unknown_sheets_and_keys_are_refused_and_nothing_is_left(tmp_path: Path)
         write_study_workbook(path, {"Lines": [{"line": "L1", "colour": "red"}]}, {})
     with pytest.raises(ValueError, match="motto"):
         write_study_workbook(path, {}, {"motto": "steady"})
-    with pytest.raises(WorkbookWriteError, match="Loads!D5"):
+    with pytest.raises(WorkbookWriteError, match="Loads!D6"):
         write_study_workbook(path, {"Loads": [{"load": "A", "peak_kw": float("nan")}]}, {})
     assert list(tmp_path.iterdir()) == []
 
@@ -374,3 +395,45 @@ def test_templates_in_the_repository_are_what_the_program_writes(
 ) -> None:
     fresh = dump(request.getfixturevalue(which))
     assert dump(load_workbook(TEMPLATES / name)) == fresh
+
+
+def test_what_is_typed_is_blue_and_what_is_calculated_is_black(demo: Workbook) -> None:
+    """The custom of financial models; the colour key says so in words as well."""
+    typed = [demo["Loads"]["A6"], demo["Loads"]["D6"], demo["Settings"]["B6"]]
+    assert {cell.font.color.rgb for cell in typed} == {"FF0000FF"}
+    calculated = [c for row in demo["Start"].iter_rows() for c in row if c.data_type == "f"]
+    assert {cell.font.color.rgb for cell in calculated} == {"FF000000"}
+    assert all(cell.border.left.style == "thick" for cell in calculated)
+    words = [cell.value for row in demo["Start"].iter_rows() for cell in row if cell.value]
+    assert any("Calculated" in str(word) for word in words)
+
+
+def test_start_names_every_sheet_with_the_source_of_its_figures(blank: Workbook) -> None:
+    words = {str(cell.value) for row in blank["Start"].iter_rows() for cell in row}
+    for entry in load_sheets():
+        assert entry.comes_from
+        assert {entry.name, entry.help, entry.comes_from} <= words
+
+
+@pytest.mark.parametrize("name", ["Profiles", "Storage curves"])
+def test_charts_show_what_was_typed_beside_the_table(
+    blank: Workbook, demo: Workbook, name: str, folder: Path
+) -> None:
+    for book, stem in ((blank, "blank"), (demo, "demo")):
+        (chart,) = book[name]._charts
+        (table,) = book[name].tables.values()
+        assert chart.anchor._from.col > range_boundaries(table.ref)[2] - 1  # counted from 0
+        with zipfile.ZipFile(folder / f"{stem}.xlsx") as archive:
+            drawings = [
+                archive.read(part).decode()
+                for part in archive.namelist()
+                if "drawings/draw" in part
+            ]
+        assert all('descr="' in drawing for drawing in drawings)
+    (chart,) = demo["Profiles"]._charts
+    rows = demo_tables()["Profiles"]
+    assert len(chart.series) == len(rows[0]) - 1
+    for series in chart.series:
+        area = series.val.numRef.f.split("!")[1].replace("$", "")
+        first, last = range_boundaries(area)[1], range_boundaries(area)[3]
+        assert (first, last) == (HEADING_ROW + 1, HEADING_ROW + len(rows))

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import io
+import os
 import zipfile
 from pathlib import Path
 
@@ -110,6 +111,13 @@ UNREADABLE = [
         "document type",
     ),
     ("broken.xlsx", rezipped({"xl/worksheets/sheet2.xml": b"<worksheet><sheetData>"}), "read"),
+    ("page.xls", b"<html><table><tr><td>1</td></tr></table></html>", "web page"),
+    (".~lock.study.xlsx#", b",me,desk,01.01.2026;", "lock file of 'study.xlsx'"),
+    (
+        "many.xlsx",
+        rezipped({f"xl/media/{number}.bin": b"" for number in range(10_001)}),
+        "by the thousand",
+    ),
     ("headless.xlsx", rezipped({"xl/workbook.xml": b"<nothing/>"}), "no sheets"),
 ]
 
@@ -166,10 +174,11 @@ def test_macros_are_ignored_with_a_note(tmp_path: Path) -> None:
     assert raw.tables["Buses"].rows
 
 
-def test_a_workbook_open_elsewhere_gets_a_note(tmp_path: Path) -> None:
+@pytest.mark.parametrize("lock", ["~$study.xlsx", ".~lock.study.xlsx#"])
+def test_a_workbook_open_elsewhere_gets_a_note(tmp_path: Path, lock: str) -> None:
     path = tmp_path / "study.xlsx"
     path.write_bytes(workbook_bytes())
-    (tmp_path / "~$study.xlsx").write_bytes(b"owner")
+    (tmp_path / lock).write_bytes(b"owner")
     assert [str(finding.code) for finding in triage(path).findings] == ["open elsewhere"]
 
 
@@ -177,3 +186,62 @@ def test_links_to_other_workbooks_get_a_note(tmp_path: Path) -> None:
     path = tmp_path / "study.xlsx"
     path.write_bytes(rezipped({"xl/externalLinks/externalLink1.xml": b"<externalLink/>"}))
     assert [str(finding.code) for finding in triage(path).findings] == ["external links"]
+
+
+def test_two_parts_of_one_name_are_refused(tmp_path: Path) -> None:
+    """One of them would be checked and the other read."""
+    path = tmp_path / "study.xlsx"
+    path.write_bytes(workbook_bytes())
+    with pytest.warns(UserWarning, match="Duplicate"), zipfile.ZipFile(path, "a") as archive:
+        archive.writestr("xl/workbook.xml", part("xl/workbook.xml"))
+    with pytest.raises(StudyFileError, match="twice"):
+        read_workbook(path)
+
+
+def test_what_unpacks_to_too_much_in_all_is_refused(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    path = tmp_path / "study.xlsx"
+    path.write_bytes(workbook_bytes())
+    monkeypatch.setattr("xlplan.workbook.triage.MAX_UNPACKED_BYTES", 20_000)
+    with pytest.raises(StudyFileError, match="unpacks to"):
+        read_workbook(path)
+
+
+def test_a_table_of_texts_that_is_too_large_is_refused(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    path = tmp_path / "study.xlsx"
+    path.write_bytes(rezipped({"xl/sharedStrings.xml": b"<sst>" + b"<si/>" * 20_000 + b"</sst>"}))
+    monkeypatch.setattr("xlplan.workbook.triage.MAX_OTHER_PART_BYTES", 90_000)
+    with pytest.raises(StudyFileError, match="sharedStrings"):
+        read_workbook(path)
+
+
+def test_a_file_that_is_too_large_is_refused_before_it_is_read(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    path = tmp_path / "study.xlsx"
+    with path.open("wb") as file:
+        file.truncate(200_000_001)  # takes no room on the disk
+    monkeypatch.setattr(Path, "read_bytes", None)
+    with pytest.raises(StudyFileError, match="larger than"):
+        read_workbook(path)
+
+
+def test_more_values_than_a_study_holds_are_refused(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    path = tmp_path / "study.xlsx"
+    path.write_bytes(workbook_bytes())
+    monkeypatch.setattr("xlplan.workbook.reader.MAX_VALUES", 100)
+    with pytest.raises(StudyFileError, match="more than 100 values"):
+        read_workbook(path)
+
+
+@pytest.mark.skipif(not hasattr(os, "mkfifo"), reason="no pipes here")
+def test_a_pipe_is_no_file_and_is_not_waited_for(tmp_path: Path) -> None:
+    path = tmp_path / "study.xlsx"
+    os.mkfifo(path)
+    with pytest.raises(PathError, match="no file"):
+        read_workbook(path)

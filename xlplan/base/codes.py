@@ -14,6 +14,7 @@ class Code(StrEnum):
     BLANK_ROWS = "blank rows"  # blank rows between others were skipped
     BLANK = "blank"  # a value is needed and missing
     BUDGET_ABOVE_STUDY = "budget above study"  # an alternative may spend more than the study
+    CHECKS_LEFT = "checks left"  # checks that wait until the faults are mended
     CLASS_LEFT_OUT = "class left out"  # an outage class that is not included
     COLUMN_IGNORED = "column ignored"  # a column of the user's own
     COLUMN_MISSING = "column missing"  # a column that is needed
@@ -26,6 +27,7 @@ class Code(StrEnum):
     DATE_FOR_NUMBER = "date for number"  # a date or time where a number is needed
     DEMAND_NOWHERE = "demand nowhere"  # a demand charge that no window counts for
     EXCEL_ERROR = "excel error"  # a cell with a spreadsheet error
+    EXTERNAL_FORMULA = "external formula"  # a cell whose formula reads another workbook
     EXTERNAL_LINKS = "external links"  # links to other workbooks
     FORMULA_NOT_CALCULATED = "formula not calculated"  # a formula without a stored value
     HALF_IMPEDANCE = "half impedance"  # resistance without reactance, or the reverse
@@ -55,6 +57,7 @@ class Code(StrEnum):
     NOT_A_NUMBER = "not a number"  # a value that is no number
     NOT_A_TIME = "not a time"  # a value that is no date, time or number
     NOT_A_YEAR = "not a year"  # windows that do not make up a year
+    NOT_LISTED = "not listed"  # more findings than are listed
     NOT_CONNECTED = "not connected"  # a bus that the source does not reach
     NOT_SOLVED = "not solved"  # an alternative without a result
     NOT_USED = "not used"  # a value that has no effect
@@ -84,6 +87,7 @@ class Code(StrEnum):
     PURCHASE_OFF_STEP = "purchase off step"  # a purchase that is no multiple of its step
     PURCHASE_TOO_LARGE = "purchase too large"  # a purchase above what can be added
     RANGE_REVERSED = "range reversed"  # a low value not below the high one
+    OLDER_TEMPLATE = "older template"  # a study from an older template
     READING_STOPPED = "reading stopped"  # reading stopped after many blank rows
     ROW_TWICE = "row twice"  # two rows that speak of the same thing
     ROW_WITHOUT_ID = "row without id"  # values in a row without a name
@@ -107,6 +111,7 @@ class Code(StrEnum):
     TIMES_MIXED = "times mixed"  # dates, clock times and numbers in one column
     TIME_ROUNDED = "time rounded"  # a time that rounding to periods moves by much
     TIME_TWICE = "time twice"  # the same time twice
+    TOTALS_ROW = "totals row"  # a row of sums among the others
     UNKNOWN_NAME = "unknown name"  # a reference to nothing
     UNLIKELY_VALUE = "unlikely value"  # possible, but unlikely
     WORD_FOR_BLANK = "word for blank"  # a word such as n/a in place of a blank

@@ -13,9 +13,18 @@ Turning findings into text happens in ``Finding.text`` alone.
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
 from enum import StrEnum
+
+_CONTROL = re.compile(r"[\x00-\x1f\x7f-\x9f\u2028\u2029]+")
+"""Line breaks, and codes that would move a terminal's cursor."""
+
+
+def one_line(text: str) -> str:
+    """Text in which nothing breaks the line or moves a terminal's cursor."""
+    return _CONTROL.sub(" ", text)
 
 
 class Level(StrEnum):
@@ -63,7 +72,7 @@ class Finding:
         place = f"{self.sheet}!{self.cell}" if self.cell else self.sheet
         key = f" {self.key}" if self.key else ""
         hint = f" {self.hint}" if self.hint else ""
-        return f"{place}{key}: {self.message}{hint}"
+        return one_line(f"{place}{key}: {self.message}{hint}")
 
 
 class XlplanError(Exception):

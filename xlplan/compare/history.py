@@ -10,7 +10,7 @@ from xlplan.outages.window_model import WindowModel
 from xlplan.study.study import Study
 
 STOP_FRAC = frac_from_pct(20.0)
-"""Beyond this the model does not describe the feeder; look before believing (model.md section 6)."""
+"""Beyond this the model does not describe the feeder: look before believing (model.md, 6)."""
 
 
 def peak_kw(study: Study, windows: Sequence[WindowModel]) -> float:

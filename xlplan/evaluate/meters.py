@@ -78,7 +78,7 @@ class EventMeter:
     scenario: Scenario
 
     def dispatch(self, family: EventFamily, member: int, y: FloatArray) -> Dispatch:
-        """Operation, with flows and voltages; shares pro rata where the optimum leaves them open."""
+        """Operation, with flows and voltages; shares pro rata where the optimum is open."""
         dispatch = event_dispatch(self.model, family, member, y)
         return share_pro_rata(self.context, self.scenario, member, dispatch)
 

@@ -30,7 +30,7 @@ TOLERANCE_KW = 1e-6
 """Shares that differ by less than this many kW are equal."""
 
 LIMIT_TOLERANCE = 1e-6
-"""Ratings (kVA) and squared voltages may pass their limits by this, as the solver's own rows may."""
+"""Ratings (kVA) and squared voltages may pass their limits by this, as the solver's rows may."""
 
 
 @dataclass(frozen=True)

@@ -80,17 +80,21 @@ class LinearProgram:
 
     def check(self) -> None:
         """Invariants, for tests; raises AssertionError."""
-        assert len(self.start) == self.n_row + 1 and self.start[-1] == len(self.index)
+        assert len(self.start) == self.n_row + 1
+        assert self.start[-1] == len(self.index)
         assert len(self.index) == len(self.value)
         assert self.n_col == len(self.col_lower) == len(self.col_upper) == len(self.is_integer)
         assert self.n_row == len(self.row_upper) == len(self.is_lazy)
         assert not len(self.index) or (self.index.min() >= 0 and self.index.max() < self.n_col)
-        assert np.isfinite(self.value).all() and np.isfinite(self.cost).all()
-        assert (self.col_lower <= self.col_upper).all() and (self.row_lower <= self.row_upper).all()
+        assert np.isfinite(self.value).all()
+        assert np.isfinite(self.cost).all()
+        assert (self.col_lower <= self.col_upper).all()
+        assert (self.row_lower <= self.row_upper).all()
         folds = self.folds
         assert len(folds.row) == len(folds.column) == folds.start[-1]
         assert len(np.unique(folds.row)) == len(np.unique(folds.column)) == len(folds)
-        assert not self.cost[folds.column].any() and not self.is_lazy[folds.row].any()
+        assert not self.cost[folds.column].any()
+        assert not self.is_lazy[folds.row].any()
 
 
 @dataclass

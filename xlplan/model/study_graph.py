@@ -1,8 +1,9 @@
 """A study as a value graph: families of plans and events, roots, first stage.
 
 Enters: study, feeder, window models. Leaves: ``StudyGraph``, the graph that the decomposition
-solves together with the meaning of its families. The same graph without exits (``plans_for_outages``
-False) is the planner who thinks that nothing can fail, and in an event that nothing more can.
+solves together with the meaning of its families. The same graph without exits
+(``plans_for_outages`` False) is the planner who thinks that nothing can fail, and in an event that
+nothing more can.
 """
 
 from __future__ import annotations

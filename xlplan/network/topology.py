@@ -13,6 +13,7 @@ from xlplan.base.codes import Code
 from xlplan.base.errors import Finding, Level
 from xlplan.network.no_load_voltage import check_no_load_voltage, no_load_v_sq
 from xlplan.network.tree import RadialTree, connected_parts, radial_tree
+from xlplan.study.outline import Outline, OutlineLine
 from xlplan.study.study import NOWHERE, Line, Study
 
 __all__ = [
@@ -25,7 +26,7 @@ __all__ = [
 ]
 
 
-def check_radial(study: Study) -> list[Finding]:
+def check_radial(study: Study | Outline) -> list[Finding]:
     """Faults of the feeder's shape: source, self loops, parallel lines, loops, loose buses.
 
     References that do not exist are passed over: the workbook's checks report them.
@@ -40,7 +41,7 @@ def check_radial(study: Study) -> list[Finding]:
             bus = group[bus]
         return bus
 
-    between: dict[frozenset[str], Line] = {}
+    between: dict[frozenset[str], Line | OutlineLine] = {}
     for line in study.lines:
         if line.from_bus not in group or line.to_bus not in group:
             continue
@@ -90,7 +91,9 @@ def check_radial(study: Study) -> list[Finding]:
     return findings + _source_and_loose_buses(study, buses, root)
 
 
-def _line_fault(line: Line, code: Code, key: str, value: str, message: str, hint: str) -> Finding:
+def _line_fault(
+    line: Line | OutlineLine, code: Code, key: str, value: str, message: str, hint: str
+) -> Finding:
     """A fault at one cell of a line's row."""
     return Finding(
         level=Level.FAULT,
@@ -105,7 +108,7 @@ def _line_fault(line: Line, code: Code, key: str, value: str, message: str, hint
 
 
 def _source_and_loose_buses(
-    study: Study, buses: list[str], root: Callable[[str], str]
+    study: Study | Outline, buses: list[str], root: Callable[[str], str]
 ) -> list[Finding]:
     """The source bus has to exist, and every other bus has to reach it."""
     source = study.settings.source_bus
@@ -127,7 +130,8 @@ def _source_and_loose_buses(
     for bus in buses:
         if root(bus) != root(source):
             loose.setdefault(root(bus), []).append(bus)
-    origin_of = {bus.bus: bus.origin for bus in reversed(study.buses)}
+    named = [(bus.bus, bus.origin) for bus in study.buses]
+    origin_of = dict(reversed(named))
     findings = []
     for part in loose.values():
         origin = origin_of[part[0]]

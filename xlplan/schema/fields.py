@@ -10,6 +10,7 @@ start with ``x-`` are ours:
     x-likely-minimum, x-likely-maximum, x-likely-text
                         outside: a warning, and what such a value would mean
     x-source            where a default that is a trade figure comes from
+    x-comes-from        where a planner usually finds the figure; of a sheet: its figures
     x-group             group of settings
     x-key, x-optional, x-settings, x-id-field, x-unique-ids
                         of the sheet itself
@@ -26,7 +27,7 @@ from functools import cache
 from importlib.resources import files
 from typing import Any
 
-TEMPLATE_VERSION = 1
+TEMPLATE_VERSION = 2
 """Raised whenever a sheet or a column is added, renamed or taken away."""
 
 SCHEMA_STEMS = (
@@ -99,6 +100,7 @@ class Field:
     source: str
     group: str
     example: object
+    comes_from: str = ""
 
     @property
     def heading(self) -> str:
@@ -126,6 +128,7 @@ class Sheet:
     id_field: str | None
     has_unique_ids: bool
     other_columns: Field | None
+    comes_from: str = ""
 
     def field(self, key: str) -> Field:
         """The field with this key; KeyError if there is none."""
@@ -170,6 +173,7 @@ def _sheet_from(schema: dict[str, Any]) -> Sheet:
         id_field=schema.get("x-id-field"),
         has_unique_ids=schema.get("x-unique-ids", False),
         other_columns=_field_from("", others, True) if isinstance(others, dict) else None,
+        comes_from=schema.get("x-comes-from", ""),
     )
 
 
@@ -195,4 +199,5 @@ def _field_from(key: str, entry: dict[str, Any], is_required: bool) -> Field:
         source=entry.get("x-source", ""),
         group=entry.get("x-group", ""),
         example=examples[0],
+        comes_from=entry.get("x-comes-from", ""),
     )

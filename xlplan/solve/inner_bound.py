@@ -1,4 +1,4 @@
-"""A deterministic upper bound of following a plan, backward in time from the corners of the state box.
+"""A deterministic bound of the cost from above, backward in time from the corners of the state box.
 
 At fixed capacities the value of a node is convex in its incoming state, so it lies below any convex
 combination of its values at other states. Solve each node at the corners of the state box and at

@@ -47,7 +47,7 @@ class Found(StrEnum):
 
 @dataclass(frozen=True)
 class Saved:
-    """Contents of a file: cuts by family, number of the last solve, phase, best decision or None."""
+    """Contents of a file: cuts by family, number of the last solve, phase, best decision if any."""
 
     cuts: tuple[CutBatch, ...]
     n_group: int

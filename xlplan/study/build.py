@@ -35,7 +35,7 @@ from xlplan.study.records import (
 from xlplan.study.study import Study
 from xlplan.workbook.checked_study import CheckedStudy
 from xlplan.workbook.cross_checks import check_across
-from xlplan.workbook.field_checks import check_table
+from xlplan.workbook.field_checks import at_most, check_table
 from xlplan.workbook.folding import fold
 from xlplan.workbook.tables import RawStudy
 
@@ -51,20 +51,43 @@ def check_and_build(raw: RawStudy) -> tuple[Study | None, list[Finding]]:
     -------
     (Study or None, findings): None where any finding is a fault; findings in workbook order
     """
+    checked, findings = check_tables(raw)
+    if any(finding.level is Level.FAULT for finding in findings):
+        return None, findings
+    return build_study(checked, raw.fingerprint), findings
+
+
+def check_tables(raw: RawStudy) -> tuple[CheckedStudy, list[Finding]]:
+    """Everything that tables alone can tell.
+
+    Parameters
+    ----------
+    raw : RawStudy
+
+    Returns
+    -------
+    (CheckedStudy, findings): findings in workbook order
+    """
     findings = list(raw.findings)
     tables = {}
     for schema in load_sheets():
         tables[schema.name], found = check_table(raw.tables[schema.name], schema)
         findings += found
     checked, found = check_across(tables)
-    findings = _in_workbook_order(findings + found)
-    if any(finding.level is Level.FAULT for finding in findings):
-        return None, findings
-    return build_study(checked, raw.fingerprint), findings
+    return checked, at_most(in_workbook_order(findings + found))
 
 
-def _in_workbook_order(findings: list[Finding]) -> list[Finding]:
-    """By sheet, row and column; what is about the whole file or a whole sheet first."""
+def in_workbook_order(findings: list[Finding]) -> list[Finding]:
+    """By sheet, row and column; what is about the whole file or a whole sheet first.
+
+    Parameters
+    ----------
+    findings : list of Finding
+
+    Returns
+    -------
+    list of Finding
+    """
     order = {fold(schema.name): i for i, schema in enumerate(load_sheets())}
 
     def place(finding: Finding) -> tuple[int, int, int, str]:

@@ -22,6 +22,9 @@ IMPEDANCE_WAYS: tuple[tuple[str, ...], ...] = (
 )
 """A line's impedance is given in exactly one of these ways, each of them whole."""
 
+_NEEDS_LENGTH = frozenset(key for way in IMPEDANCE_WAYS[:2] for key in way)
+"""With one of these a missing length is a fault by itself."""
+
 
 def check_feeder(study: CheckedStudy) -> Iterator[Finding]:
     """Findings about settings of voltage, lines, loads and classes."""
@@ -75,7 +78,8 @@ def _lines(study: CheckedStudy) -> Iterator[Finding]:
                 "Name the bus at the other end.",
             )
         outage_class = classes.get(row.text("outage_class") or "")
-        if outage_class is not None and row.number("length") == 0:
+        is_told = "length" in row.typed or not row.typed & _NEEDS_LENGTH
+        if outage_class is not None and row.number("length") == 0 and is_told:
             per_length = outage_class.number("failures_per_length_year") or 0.0
             if per_length > 0 and not outage_class.number("failures_per_year"):
                 yield warning(

@@ -12,13 +12,17 @@ from dataclasses import dataclass, replace
 
 from xlplan.base.codes import Code
 from xlplan.base.errors import Finding, Level
-from xlplan.base.units import pct_from_frac
+from xlplan.base.listing import cell_ranges
+from xlplan.base.units import frac_from_pct, pct_from_frac
 from xlplan.schema.fields import Field, Kind, Sheet
 from xlplan.workbook.tables import Cell, Row, Table, finding_at
 from xlplan.workbook.values import in_unit, read_value
 
 MOST_OF_A_KIND = 50
 """Faults of one kind that are listed for one column; more of them have one cause."""
+
+MOST_FINDINGS = 1000
+"""Findings of one study that are kept in all."""
 
 LARGEST_NUMBER = 1e12
 SMALLEST_POSITIVE = 1e-9
@@ -201,9 +205,17 @@ def _out_of_bounds(cell: Cell, field: Field, value: float) -> Finding | None:
                 Code.OUT_OF_BOUNDS,
                 field.key,
                 f"{value:.6g} {words} {bound:g}.",
-                in_unit(field),
+                _percent_meant(field, value) or in_unit(field),
             )
     return None
+
+
+def _percent_meant(field: Field, value: float) -> str:
+    """The question that goes with a percentage typed where a share of one is needed."""
+    is_share = field.maximum == 1 and not field.key.endswith("_pct")
+    if not is_share or not 1.0 < value <= pct_from_frac(1.0):
+        return ""
+    return f"Did you mean {value:.6g} %? That is {frac_from_pct(value):.6g} here."
 
 
 def _unlikely(cell: Cell, field: Field, value: float) -> Finding | None:
@@ -250,22 +262,55 @@ def shorten(findings: list[Finding], n_note: int = MOST_OF_A_KIND) -> list[Findi
 
     Returns
     -------
-    list of Finding; the last of a kind that is kept says how many more there are
+    list of Finding; the last of a kind that is kept says how many more there are, and where
     """
     kept: list[Finding] = []
     last: dict[tuple[str, Level, str, str], int] = {}
     count: dict[tuple[str, Level, str, str], int] = {}
+    left_out: dict[tuple[str, Level, str, str], list[str]] = {}
     for finding in findings:
         kind = (finding.sheet, finding.level, finding.code, finding.key)
         count[kind] = count.get(kind, 0) + 1
         if count[kind] <= (n_note if finding.level is Level.NOTE else MOST_OF_A_KIND):
             last[kind] = len(kept)
             kept.append(finding)
-    for kind, position in last.items():
-        n_more = count[kind] - (n_note if kind[1] is Level.NOTE else MOST_OF_A_KIND)
-        if n_more > 0:
-            others = f"{n_more} other cell{'s' if n_more > 1 else ''}"
-            finding = kept[position]
-            message = f"{finding.message} The same in {others} of this column."
-            kept[position] = replace(finding, message=message)
+        else:
+            left_out.setdefault(kind, []).append(finding.cell)
+    for kind, cells in left_out.items():
+        others = f"{len(cells)} other cell{'s' if len(cells) > 1 else ''}"
+        finding = kept[last[kind]]
+        where = shortened_ranges(cells)
+        message = f"{finding.message} The same in {others} of this column ({where})."
+        kept[last[kind]] = replace(finding, message=message)
     return kept
+
+
+def shortened_ranges(cells: list[str], longest: int = 60) -> str:
+    """The cells as ranges, or the first and last where that would be long."""
+    text = cell_ranges(cells)
+    return text if len(text) <= longest else f"{cells[0]} to {cells[-1]}"
+
+
+def at_most(findings: list[Finding], most: int = MOST_FINDINGS) -> list[Finding]:
+    """Not more findings than anybody could use: faults are kept first, then warnings, then notes.
+
+    Parameters
+    ----------
+    findings : list of Finding
+    most : how many are kept
+
+    Returns
+    -------
+    list of Finding in the order given; where some are left out, a note at the end says how many
+    """
+    if len(findings) <= most:
+        return findings
+    ranked = sorted(range(len(findings)), key=lambda i: list(Level).index(findings[i].level))
+    kept = [findings[i] for i in sorted(ranked[:most])]
+    n_more = len(findings) - most
+    message = f"{n_more} further findings are not listed."
+    hint = "Mend those that are, and check again."
+    return [
+        *kept,
+        Finding(Level.NOTE, Code.NOT_LISTED, kept[-1].sheet, "", "", "", message, hint),
+    ]

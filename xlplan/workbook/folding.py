@@ -21,8 +21,8 @@ _NOT_A_WORD = re.compile(r"[\W_]+")
 ALIKE_CUTOFF = 0.8
 """difflib ratio from which a heading counts as a mistyped one: one wrong letter in five."""
 
-SUGGEST_CUTOFF = 0.6
-"""difflib's own default; a suggestion may be bolder than a fault."""
+SUGGEST_CUTOFF = 0.5
+"""A suggestion may be bolder than a fault, and names are short: B1 for Bus 1."""
 
 
 def clean(text: str) -> str:
@@ -76,4 +76,5 @@ def did_you_mean(name: str, names: Iterable[str]) -> str:
     if not names:
         return "There is none to choose from yet."
     shown = ", ".join(names[:6])
-    return f"There is: {shown}{', ...' if len(names) > 6 else ''}."
+    more = f" and {len(names) - 6} more" if len(names) > 6 else ""
+    return f"There is: {shown}{more}."

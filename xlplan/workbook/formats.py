@@ -25,6 +25,9 @@ RULE = "#C9CFC6"
 ALERT_FILL = "#FFD8B0"
 ALERT_INK = "#7A3E00"
 LINK = "#1B4F8F"
+INPUT_INK = "#0000FF"
+"""Blue for what is typed, black for what is calculated: the custom of financial models."""
+CALCULATED_FILL = "#ECEEEC"
 
 TIME_FORMAT = "yyyy-mm-dd hh:mm"
 TEXT_FORMAT = "@"
@@ -39,8 +42,15 @@ class Role(StrEnum):
     HEADING_NEEDED = "heading of a needed column"
     HEADING_OPTIONAL = "heading of an optional column"
     HINT = "hint above a heading"
+    EXAMPLE = "example above a heading"
+    DEFAULT = "what a blank means"
+    CALCULATED = "calculated number"
+    CALCULATED_HOURS = "calculated number of hours"
+    CALCULATED_WORD = "calculated word"
+    CALCULATED_TEXT = "calculated text"
     TEXT = "text"
     NUMBER = "number"
+    BIG_NUMBER = "whole number from a thousand on"
     TIME = "time"
     VALUE_TEXT = "setting, text"
     VALUE_NUMBER = "setting, number"
@@ -53,6 +63,9 @@ class Role(StrEnum):
     PLAIN = "plain line"
     MEANING = "text beside a label"
     LINK = "link"
+    SAMPLE_EXAMPLE = "colour key: example"
+    SAMPLE_DEFAULT = "colour key: default"
+    SAMPLE_CALCULATED = "colour key: calculated"
     SAMPLE_NEEDED = "colour key: needed"
     SAMPLE_OPTIONAL = "colour key: optional"
     SAMPLE_ALERT = "colour key: alert"
@@ -63,6 +76,15 @@ _TOP = {"valign": "top"}
 _WRAPPED = {"text_wrap": True, **_TOP}
 _INDENTED = {"align": "left", "indent": 1}
 _VALUE = {**_EDGE, **_TOP}
+_TYPED = {"font_color": INPUT_INK}
+_CALCULATED = {
+    "font_color": "#000000",
+    "bg_color": CALCULATED_FILL,
+    **_EDGE,
+    "left": 5,
+    "left_color": FAINT_INK,
+    **_TOP,
+}
 
 _PROPERTIES: dict[Role, dict[str, Any]] = {
     Role.TITLE: {"bold": True, "font_size": 15, "font_color": PINE},
@@ -85,18 +107,33 @@ _PROPERTIES: dict[Role, dict[str, Any]] = {
         **_EDGE,
     },
     Role.HINT: {**_INDENTED, "italic": True, "font_size": 8, "font_color": FAINT_INK},
-    Role.TEXT: {"num_format": TEXT_FORMAT, **_INDENTED},
-    Role.NUMBER: {"align": "right"},
-    Role.TIME: {"num_format": TIME_FORMAT, **_INDENTED},
-    Role.VALUE_TEXT: {"num_format": TEXT_FORMAT, **_INDENTED, **_VALUE},
-    Role.VALUE_NUMBER: {"align": "right", **_VALUE},
+    Role.EXAMPLE: {
+        "italic": True,
+        "font_size": 9,
+        "font_color": FAINT_INK,
+        "bottom": 4,
+        "bottom_color": FAINT_INK,
+        **_INDENTED,
+    },
+    Role.DEFAULT: {"italic": True, "font_color": FAINT_INK, **_INDENTED, **_EDGE, **_WRAPPED},
+    Role.CALCULATED: {**_CALCULATED, "align": "right", "num_format": "#,##0"},
+    Role.CALCULATED_HOURS: {**_CALCULATED, "align": "right", "num_format": "#,##0.##"},
+    Role.CALCULATED_TEXT: {**_CALCULATED, **_INDENTED},
+    Role.CALCULATED_WORD: {**_CALCULATED, **_INDENTED, "bold": True},
+    Role.TEXT: {"num_format": TEXT_FORMAT, **_TYPED, **_INDENTED},
+    Role.NUMBER: {"align": "right", **_TYPED},
+    Role.BIG_NUMBER: {"align": "right", "num_format": "#,##0", **_TYPED},
+    Role.TIME: {"num_format": TIME_FORMAT, **_TYPED, **_INDENTED},
+    Role.VALUE_TEXT: {"num_format": TEXT_FORMAT, **_TYPED, **_INDENTED, **_VALUE},
+    Role.VALUE_NUMBER: {"align": "right", **_TYPED, **_VALUE},
     Role.VALUE_NEEDED_TEXT: {
         "num_format": TEXT_FORMAT,
         "bg_color": STRAW,
+        **_TYPED,
         **_INDENTED,
         **_VALUE,
     },
-    Role.VALUE_NEEDED_NUMBER: {"align": "right", "bg_color": STRAW, **_VALUE},
+    Role.VALUE_NEEDED_NUMBER: {"align": "right", "bg_color": STRAW, **_TYPED, **_VALUE},
     Role.LABEL: {**_INDENTED, **_EDGE, **_TOP},
     Role.STEP: {"align": "center", **_EDGE, **_TOP},
     Role.UNIT: {"font_color": FAINT_INK, **_INDENTED, **_EDGE, **_WRAPPED},
@@ -104,8 +141,18 @@ _PROPERTIES: dict[Role, dict[str, Any]] = {
     Role.PLAIN: {"align": "left", **_TOP},
     Role.MEANING: {**_INDENTED, **_TOP},
     Role.LINK: {"font_color": LINK, "underline": 1, **_INDENTED, **_EDGE, **_TOP},
-    Role.SAMPLE_NEEDED: {**_INDENTED, "bg_color": STRAW, **_EDGE},
-    Role.SAMPLE_OPTIONAL: {**_INDENTED, "bg_color": PAPER, **_EDGE},
+    Role.SAMPLE_NEEDED: {**_INDENTED, **_TYPED, "bg_color": STRAW, **_EDGE},
+    Role.SAMPLE_OPTIONAL: {**_INDENTED, **_TYPED, "bg_color": PAPER, **_EDGE},
+    Role.SAMPLE_EXAMPLE: {
+        "italic": True,
+        "font_size": 9,
+        "font_color": FAINT_INK,
+        "bottom": 4,
+        "bottom_color": FAINT_INK,
+        **_INDENTED,
+    },
+    Role.SAMPLE_DEFAULT: {"italic": True, "font_color": FAINT_INK, **_INDENTED},
+    Role.SAMPLE_CALCULATED: {**_CALCULATED, **_INDENTED},
     Role.SAMPLE_ALERT: {**_INDENTED, "bg_color": ALERT_FILL, "font_color": ALERT_INK, **_EDGE},
 }
 

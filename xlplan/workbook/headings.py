@@ -14,33 +14,7 @@ from xlplan.base.errors import Finding, Level
 from xlplan.schema.fields import Field, Sheet
 from xlplan.workbook.folding import alike, clean, fold, fold_heading
 from xlplan.workbook.tables import Cell, finding_at
-
-_UNITS = frozenset(
-    {
-        *("w", "kw", "mw", "gw", "wh", "kwh", "mwh", "va", "kva", "mva", "var", "kvar", "mvar"),
-        *("v", "kv", "a", "ka", "ohm", "kohm", "mohm", "pu", "%", "cents"),
-        *("km", "m", "mi", "ft", "s", "min", "h", "days", "weeks", "months", "years"),
-    }
-)
-"""Words in parentheses that are units beyond doubt."""
-_OTHER_SPELLINGS = {
-    "hours": "h",
-    "hour": "h",
-    "hrs": "h",
-    "minutes": "min",
-    "minute": "min",
-    "mins": "min",
-    "seconds": "s",
-    "second": "s",
-    "sec": "s",
-    "mile": "mi",
-    "miles": "mi",
-    "feet": "ft",
-    "metres": "m",
-    "meters": "m",
-    "year": "years",
-    "percent": "%",
-}
+from xlplan.workbook.units import units_in
 
 
 def field_of_heading(text: str, fields: Iterable[Field]) -> Field | None:
@@ -85,12 +59,24 @@ def near_miss(cell: Cell, missing: Iterable[Field]) -> Finding | None:
     )
 
 
+def about_double(cell: Cell, key: str, first: str) -> Finding:
+    """A fault where a heading stands twice; ``first`` is the address of the other."""
+    return finding_at(
+        cell,
+        Level.FAULT,
+        Code.HEADING_TWICE,
+        key,
+        f"'{clean(cell.typed)}' also stands in {first}.",
+        "Delete or rename one of the two columns.",
+    )
+
+
 def unit_differs(cell: Cell, unit_text: str, field: Field) -> Finding | None:
     """A warning where a unit is written that is not the field's own.
 
     ``unit_text`` is a heading's words in parentheses, or a unit cell of Settings.
     """
-    strange = _units_in(unit_text) - _units_in(field.unit)
+    strange = units_in(unit_text) - units_in(field.unit)
     if not strange:
         return None
     expected = f"in {field.unit}" if field.unit else "without a unit"
@@ -107,11 +93,6 @@ def unit_differs(cell: Cell, unit_text: str, field: Field) -> Finding | None:
 def words_in_parentheses(heading: str) -> str:
     """``kW`` of ``Peak load (kW)``."""
     return " ".join(re.findall(r"[(\[]([^()\[\]]*)[)\]]", heading))
-
-
-def _units_in(text: str) -> set[str]:
-    words = re.findall(r"%|[^\W_]+", fold(text).replace("p.u.", "pu").replace("p.u", "pu"))
-    return {unit for word in words if (unit := _OTHER_SPELLINGS.get(word, word)) in _UNITS}
 
 
 def heading_match_count(texts: Iterable[str], schema: Sheet) -> int:

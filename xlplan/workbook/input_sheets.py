@@ -1,11 +1,13 @@
-"""Layout of the input sheets: title, one line of help, headings in row 4, values below.
+"""Layout of the input sheets: title, one line of help, headings in row 5, values below.
 
-Row 3 says above each heading whether it is needed and what a blank means. Nothing that could be
-taken for a value stands below the headings of a blank study: examples are in the notes.
+Row 3 says above each heading whether it is needed and what a blank means, row 4 shows one filled
+row as an example. Nothing that could be taken for a value stands below the headings of a blank
+study.
 """
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping, Sequence
 from typing import Any
 
@@ -13,22 +15,23 @@ from xlsxwriter.utility import xl_col_to_name
 
 from xlplan.schema.fields import Field, Kind, Sheet
 from xlplan.workbook import prompts
-from xlplan.workbook.formats import MISSING_CELLS, NEEDED_CELLS, OPTIONAL_CELLS, Role
+from xlplan.workbook.formats import (
+    MISSING_CELLS,
+    NEEDED_CELLS,
+    OPTIONAL_CELLS,
+    Role,
+)
+from xlplan.workbook.input_charts import CHART_SIZE, CHARTS, STANDARD_COLUMN_PIXELS
+from xlplan.workbook.layout import (
+    EXAMPLE_ROW,
+    FIRST_ROW,
+    HEADING_ROW,
+    HINT_ROW,
+    LAST_CHECKED_ROW,
+    ROOM,
+    SPARE_ROWS,
+)
 from xlplan.workbook.sheet_writer import SheetWriter
-
-HINT_ROW = 2
-HEADING_ROW = 3
-FIRST_ROW = 4
-"""Zero-based: row 5 of the sheet."""
-
-ROOM = 200
-"""Rows that a table offers at least."""
-
-SPARE_ROWS = 50
-"""Rows that a table offers beyond those that are filled."""
-
-LAST_CHECKED_ROW = 4999
-"""Cells down to row 5000 are validated and offered in dropdowns."""
 
 BLANK_PROFILE_COLUMNS = 6
 """Columns laid out for profiles where none is named yet."""
@@ -39,8 +42,16 @@ LAST_PROFILE_COLUMN = 60
 PRINTED_BLANK_ROWS = 32
 LINE_HEIGHT = 13
 LONGEST_COLUMN = 40
-NOTE_CHARACTERS = 108
-"""Characters of a note on one line of Settings."""
+SETTINGS_COLUMNS = (
+    ("Setting", 34),
+    ("Value", 25),
+    ("Unit", 20),
+    ("If blank", 16),
+    ("Example", 20),
+    ("Usually from", 38),
+    ("Note", 78),
+    ("Group", 11),
+)
 
 _BASE_WIDTH = {
     Kind.ID: 17,
@@ -72,12 +83,12 @@ def write_settings_sheet(
     """
     _demand_known(sheet, settings)
     writer.head(sheet.title, sheet.help)
-    headings = ("Setting", "Value", "Unit", "Note", "Group")
-    for column, (width, heading) in enumerate(zip((36, 40, 31, 112, 12), headings, strict=True)):
+    for column, (heading, width) in enumerate(SETTINGS_COLUMNS):
         writer.width(column, width)
         role = Role.HEADING_NEEDED if heading == "Value" else Role.HEADING_OPTIONAL
         writer.text(HEADING_ROW, column, heading, role)
     writer.height(HEADING_ROW, 20)
+    writer.text(HINT_ROW, 0, "Type in the column Value; the others are for you to read.", Role.HINT)
     for i_field, field in enumerate(sheet.fields):
         row = FIRST_ROW + i_field
         roles = _setting_roles(field)
@@ -85,16 +96,24 @@ def write_settings_sheet(
         writer.text(row, 0, field.title, Role.LABEL)
         writer.value(row, 1, settings.get(field.key), *roles)
         writer.text(row, 2, field.unit, Role.UNIT)
-        writer.text(row, 3, ("Needed. " if field.is_required else "") + note, Role.NOTE)
-        writer.text(row, 4, field.group, Role.UNIT)
+        default = "" if field.default is None else prompts.plain(field.default)
+        writer.text(row, 3, "needed" if field.is_required else default, Role.DEFAULT)
+        writer.text(row, 4, prompts.plain(field.example), Role.DEFAULT)
+        writer.text(row, 5, field.comes_from, Role.NOTE)
+        writer.text(row, 6, note, Role.NOTE)
+        writer.text(row, 7, field.group, Role.UNIT)
         writer.note(row, 0, prompts.note(field))
-        writer.height(row, 15 if len(note) < NOTE_CHARACTERS else 28)
+        n_line = max(
+            math.ceil(len(text) * 0.9 / SETTINGS_COLUMNS[column][1])
+            for column, text in ((2, field.unit), (5, field.comes_from), (6, note))
+        )
+        writer.height(row, LINE_HEIGHT * max(n_line, 1) + 2)
         writer.validation((row, 1, row, 1), prompts.validation(field, sheet, row, 1, row))
         name = f"set_{field.key}"
         _define_name(workbook, name, f"=Settings!$B${row + 1}")
     last_row = HEADING_ROW + len(sheet.fields)
     writer.worksheet.freeze_panes(FIRST_ROW, 1)
-    writer.page(last_row, len(headings) - 1, HEADING_ROW, sheet.help)
+    writer.page(last_row, len(SETTINGS_COLUMNS) - 1, HEADING_ROW, sheet.help)
     writer.worksheet.fit_to_pages(1, 1)
 
 
@@ -121,13 +140,14 @@ def write_table_sheet(
     n_line = 1
     for column, field in enumerate(fields):
         width = _column_width(field, rows)
-        writer.width(column, width, None if field.kind in _UNFORMATTED else Role.TEXT)
+        writer.width(column, width, Role.NUMBER if field.kind in _UNFORMATTED else Role.TEXT)
         n_line = max(n_line, _heading_lines(field.heading, width))
         columns.append(_lay_out_column(writer, sheet, field, column, last_row))
     writer.height(HEADING_ROW, LINE_HEIGHT * n_line + 10)
     for column, heading in enumerate(own_headings, start=len(fields)):
-        writer.width(column, max(11, len(heading) + 3))
+        writer.width(column, max(11, len(heading) + 3), Role.NUMBER)
         writer.text(HINT_ROW, column, "profile", Role.HINT)
+        writer.text(EXAMPLE_ROW, column, _profile_example(sheet), Role.EXAMPLE)
         columns.append(
             {"header": heading, "header_format": writer.formats.role(Role.HEADING_OPTIONAL)}
         )
@@ -142,12 +162,18 @@ def write_table_sheet(
                 number = Role.NUMBER
                 writer.value(FIRST_ROW + i_row, column, row[key], Role.TEXT, number)
     if sheet.other_columns is not None and not own_headings:
-        n_column = _lay_out_blank_profiles(writer, n_column)
+        n_column = _lay_out_blank_profiles(writer, sheet, n_column)
     _add_rules(writer, sheet, n_column, last_row)
     _name_ranges(workbook, sheet)
     writer.worksheet.freeze_panes(FIRST_ROW, 1)
     n_printed = max(PRINTED_BLANK_ROWS, len(rows) + 3)
-    writer.page(HEADING_ROW + n_printed, n_column - 1, HEADING_ROW, sheet.help)
+    last_column = n_column - 1
+    if sheet.name in CHARTS:
+        chart, alt = CHARTS[sheet.name](workbook, sheet, n_column, len(rows) or ROOM)
+        writer.width(n_column, 3)
+        writer.chart(EXAMPLE_ROW, n_column + 1, chart, CHART_SIZE, alt)
+        last_column = n_column + 1 + math.ceil(CHART_SIZE[0] / STANDARD_COLUMN_PIXELS)
+    writer.page(HEADING_ROW + n_printed, last_column, HEADING_ROW, sheet.help)
 
 
 def _lay_out_column(
@@ -156,6 +182,8 @@ def _lay_out_column(
     """Hint, note and validation of one column; returns what the table needs of it."""
     heading_role = Role.HEADING_NEEDED if field.is_required else Role.HEADING_OPTIONAL
     writer.text(HINT_ROW, column, prompts.hint(field), Role.HINT)
+    example = prompts.plain(field.example)
+    writer.text(EXAMPLE_ROW, column, f"e.g. {example}" if column == 0 else example, Role.EXAMPLE)
     writer.note(HEADING_ROW, column, prompts.note(field))
     checked = max(last_row, LAST_CHECKED_ROW)
     writer.validation(
@@ -165,13 +193,18 @@ def _lay_out_column(
     return {"header": field.heading, "header_format": writer.formats.role(heading_role)}
 
 
-def _lay_out_blank_profiles(writer: SheetWriter, n_column: int) -> int:
+def _profile_example(sheet: Sheet) -> str:
+    return prompts.plain(sheet.other_columns.example) if sheet.other_columns else ""
+
+
+def _lay_out_blank_profiles(writer: SheetWriter, sheet: Sheet, n_column: int) -> int:
     """Invite profiles in the columns beside the time; returns how many columns there are now."""
     writer.text(
         HINT_ROW, n_column, "one profile a column, each under a heading of your own", Role.HINT
     )
     for column in range(n_column, n_column + BLANK_PROFILE_COLUMNS):
-        writer.width(column, 13)
+        writer.width(column, 13, Role.NUMBER)
+        writer.text(EXAMPLE_ROW, column, _profile_example(sheet), Role.EXAMPLE)
         writer.blank(HEADING_ROW, column, Role.HEADING_OPTIONAL)
     return n_column + BLANK_PROFILE_COLUMNS
 
@@ -236,6 +269,7 @@ def _column_width(field: Field, rows: Sequence[Mapping[str, object]]) -> float:
         len(field.heading) / 3 + 6,
         len(prompts.hint(field)) * 0.8 + 3,
         min(longest_text, LONGEST_COLUMN) + 3,
+        min(len(prompts.plain(field.example)), LONGEST_COLUMN) * 0.9 + 6,
     )
 
 

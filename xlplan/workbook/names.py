@@ -112,7 +112,10 @@ def _resolve_row(
                 # So many have one cause, and comparing each with every name would take long.
                 has_few = n_unknown[field.key] <= MOST_OF_A_KIND
                 offered = list(known.values()) if has_few else []
-                findings.append(_about_unknown(row, field, part, offered))
+                if known:
+                    findings.append(_about_unknown(row, field, part, offered))
+                else:
+                    findings.append(_about_nothing_known(row, field))
                 faulty.add(field.key)
                 continue
             if name != part:
@@ -143,6 +146,16 @@ def _about_unknown(row: CheckedRow, field: Field, name: str, known: list[str]) -
         f"'{name}' is not in the sheet {where}.",
         did_you_mean(name, known),
     )
+
+
+def _about_nothing_known(row: CheckedRow, field: Field) -> Finding:
+    """The same words for every name, so that they are listed once with their range."""
+    where = " and ".join(field.refers_to) or "Profiles"
+    what = "have no rows" if len(field.refers_to) > 1 else "has no rows"
+    if field.kind is Kind.PROFILE:
+        what = "has no profiles"
+    message = f"{where} {what} yet, so that this name means nothing."
+    return fault(row, Code.UNKNOWN_NAME, field.key, message, f"Fill in {where}.")
 
 
 def _doubles(study: CheckedStudy) -> Iterator[Finding]:

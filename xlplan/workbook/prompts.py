@@ -13,6 +13,8 @@ from xlplan.schema.fields import Field, Kind, Sheet, load_sheets
 from xlplan.workbook.sheet_writer import LONGEST_PROMPT, LONGEST_PROMPT_TITLE, shortened
 
 PROFILE_LIST = "profile_names"
+ASSET_LIST = "assets"
+"""Range that holds the ids of several sheets: what can be bought."""
 LIST_KINDS = (Kind.CHOICE, Kind.YES_NO)
 
 _SHARED_LISTS = {
@@ -89,6 +91,8 @@ def note(field: Field) -> str:
         lines.append(f"Blank means {plain(field.default)}.")
     if field.source:
         lines.append(f"Source of that: {field.source}.")
+    if field.comes_from:
+        lines.append(f"Usually from: {field.comes_from}.")
     lines.append(f"Example: {plain(field.example)}")
     return "\n".join(lines)
 
@@ -96,9 +100,8 @@ def note(field: Field) -> str:
 def setting_note(field: Field) -> str:
     """The note beside a setting, as running text."""
     parts = [field.help]
-    if field.default is not None:
-        source = f" ({field.source})" if field.source else ""
-        parts.append(f"Blank means {plain(field.default)}{source}.")
+    if field.default is not None and field.source:
+        parts.append(f"Source of the default: {field.source}.")
     return " ".join(parts)
 
 
@@ -131,6 +134,12 @@ def _criterion(field: Field, sheet: Sheet, row: int, column: int, last_row: int)
     if field.kind is Kind.REFERENCE and len(field.refers_to) == 1:
         target = field.refers_to[0]
         return _list(id_list_name(target), "warning", f"{target} has no such row yet.")
+    if field.kind is Kind.REFERENCE:
+        targets = ", ".join(field.refers_to)
+        return _list(ASSET_LIST, "warning", f"None of {targets} has such a row yet.")
+    if field.kind is Kind.TIME and field.refers_to:
+        target = field.refers_to[0]
+        return _list(id_list_name(target), "warning", f"{target} has no such time yet.")
     if field.kind is Kind.ID and sheet.has_unique_ids:
         cell = xl_rowcol_to_cell(row, column)
         top = xl_rowcol_to_cell(row, column, row_abs=True, col_abs=True)

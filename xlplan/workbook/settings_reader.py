@@ -13,6 +13,7 @@ from xlplan.base.codes import Code
 from xlplan.base.errors import Finding, Level
 from xlplan.schema.fields import Field, Sheet
 from xlplan.workbook.folding import fold_heading
+from xlplan.workbook.grid import Grid
 from xlplan.workbook.headings import (
     field_of_heading,
     near_miss,
@@ -22,7 +23,6 @@ from xlplan.workbook.headings import (
 from xlplan.workbook.sheet_facts import SheetFacts
 from xlplan.workbook.sheet_reader import (
     HEADING_ROWS,
-    Grid,
     about_hidden_rows,
     about_merges,
     about_no_header,

@@ -7,52 +7,31 @@ columns of the user's own is left alone.
 
 from __future__ import annotations
 
-from collections.abc import Iterable
-from dataclasses import dataclass, field
 from dataclasses import replace as replace_in
 
 from openpyxl.utils import column_index_from_string, get_column_letter
-from openpyxl.utils.cell import coordinate_from_string, range_boundaries
+from openpyxl.utils.cell import range_boundaries
 
 from xlplan.base.codes import Code
 from xlplan.base.errors import Finding, Level
-from xlplan.schema.fields import Field, Sheet
-from xlplan.workbook.folding import clean, fold
+from xlplan.schema.fields import Sheet
+from xlplan.workbook.folding import clean, fold_heading
+from xlplan.workbook.grid import Grid, sheet_finding
 from xlplan.workbook.headings import (
+    about_double,
     field_of_heading,
     heading_match_count,
     near_miss,
     unit_differs,
     words_in_parentheses,
 )
+from xlplan.workbook.profile_columns import profile_columns
 from xlplan.workbook.sheet_facts import SheetFacts
 from xlplan.workbook.tables import Cell, Row, Table, finding_at
-from xlplan.workbook.values import is_blank, read_value
+from xlplan.workbook.values import is_blank
 
 HEADING_ROWS = 15
 """The heading row is looked for so far down."""
-
-
-@dataclass
-class Grid:
-    """Non-blank cells of one sheet, by row number and 1-based column."""
-
-    sheet: str
-    rows: dict[int, dict[int, Cell]] = field(default_factory=dict)
-
-    def add_uncalculated(self, addresses: Iterable[str]) -> None:
-        """Puts in the formulas without a stored value, which otherwise look blank."""
-        for address in addresses:
-            letters, number = coordinate_from_string(address)
-            cells = self.rows.setdefault(number, {})
-            cells[column_index_from_string(letters)] = Cell(
-                self.sheet, address, is_uncalculated=True
-            )
-        self.rows = dict(sorted(self.rows.items()))
-
-    def texts(self, number: int) -> list[str]:
-        """The texts of one row."""
-        return [c.value for c in self.rows.get(number, {}).values() if isinstance(c.value, str)]
 
 
 def read_sheet(schema: Sheet, grid: Grid, facts: SheetFacts) -> tuple[Table, list[Finding]]:
@@ -84,12 +63,6 @@ def read_sheet(schema: Sheet, grid: Grid, facts: SheetFacts) -> tuple[Table, lis
     return Table(schema.name, grid.sheet, header_row, column_of, rows), findings
 
 
-def _sheet_finding(
-    level: Level, code: Code, sheet: str, cell: str, message: str, hint: str = "", key: str = ""
-) -> Finding:
-    return Finding(level, code, sheet, cell, key, "", message, hint)
-
-
 def _find_header_row(schema: Sheet, grid: Grid) -> int:
     """The row among the first that names most fields; 0 where none names any."""
     best, best_count = 0, 0
@@ -105,7 +78,7 @@ def about_no_header(schema: Sheet, grid: Grid) -> list[Finding]:
         return []
     names = ", ".join(f.heading for f in schema.fields if f.is_required)
     return [
-        _sheet_finding(
+        sheet_finding(
             Level.FAULT,
             Code.NO_HEADINGS,
             grid.sheet,
@@ -130,13 +103,17 @@ def _match_columns(
         if found is None:
             others.append((column, cell))
         elif found.key in columns:
-            findings.append(_about_double(cell, found.key, columns[found.key], header_row))
+            findings.append(
+                about_double(
+                    cell, found.key, f"{get_column_letter(columns[found.key])}{header_row}"
+                )
+            )
         else:
             columns[found.key] = column
             warning = unit_differs(cell, words_in_parentheses(cell.typed), found)
             findings += [warning] if warning else []
     if schema.other_columns is not None:
-        columns |= _profile_columns(schema, grid, header_row, others, columns, findings)
+        columns |= profile_columns(schema, grid, header_row, others, columns, findings)
         return columns
     missing = [f for f in schema.fields if f.key not in columns]
     ignored = []
@@ -162,103 +139,6 @@ def _about_unreadable_heading(cell: Cell) -> Finding:
     )
 
 
-def _about_double(cell: Cell, key: str, first_column: int, header_row: int) -> Finding:
-    first = f"{get_column_letter(first_column)}{header_row}"
-    return finding_at(
-        cell,
-        Level.FAULT,
-        Code.HEADING_TWICE,
-        key,
-        f"'{clean(cell.typed)}' also stands in {first}.",
-        "Delete or rename one of the two columns.",
-    )
-
-
-def _profile_columns(
-    schema: Sheet,
-    grid: Grid,
-    header_row: int,
-    others: list[tuple[int, Cell]],
-    columns: dict[str, int],
-    findings: list[Finding],
-) -> dict[str, int]:
-    """Columns under headings of the user's own, next to the others, that hold any number.
-
-    A column without a heading ends the table; what stands beyond it is the user's own.
-    """
-    profiles: dict[str, int] = {}
-    spelling: dict[str, str] = {}
-    named = {column for column, cell in others if not is_blank(cell)} | set(columns.values())
-    first = last = columns.get("time", min(named, default=1))
-    while first - 1 in named:
-        first -= 1
-    while last + 1 in named:
-        last += 1
-    below = [number for number in grid.rows if number > header_row]
-    assert schema.other_columns is not None
-    for column, cell in others:
-        name = clean(cell.typed)
-        if not first <= column <= last:
-            if not is_blank(cell):
-                findings.append(
-                    finding_at(
-                        cell,
-                        Level.NOTE,
-                        Code.COLUMN_IGNORED,
-                        "",
-                        f"'{name}' stands apart from the table and is not used as a profile.",
-                    )
-                )
-        elif not _has_number(grid, below, column, schema.other_columns):
-            findings.append(
-                finding_at(
-                    cell,
-                    Level.NOTE,
-                    Code.COLUMN_IGNORED,
-                    "",
-                    f"'{name}' holds no numbers and is not used as a profile.",
-                )
-            )
-        elif fold(name) in spelling:
-            other = profiles[spelling[fold(name)]]
-            findings.append(_about_double(cell, name, other, header_row))
-        else:
-            profiles[name] = column
-            spelling[fold(name)] = name
-    nameless = sorted(
-        {
-            column
-            for number in below
-            for column, cell in grid.rows[number].items()
-            if column in (first - 1, last + 1)
-            and read_value(cell, schema.other_columns).value is not None
-        }
-    )
-    for column in nameless:
-        findings.append(
-            _sheet_finding(
-                Level.FAULT,
-                Code.PROFILE_WITHOUT_NAME,
-                grid.sheet,
-                f"{get_column_letter(column)}{header_row}",
-                "this column holds numbers but has no heading.",
-                "Name the profile, or clear the column.",
-            )
-        )
-    return profiles
-
-
-def _has_number(grid: Grid, below: list[int], column: int, profile: Field) -> bool:
-    """True if any cell of a column could be a profile's value."""
-    for number in below:
-        cell = grid.rows[number].get(column)
-        if cell is None:
-            continue
-        if cell.is_uncalculated or cell.is_error or read_value(cell, profile).value is not None:
-            return True
-    return False
-
-
 def _about_missing_columns(
     schema: Sheet, grid: Grid, header_row: int, columns: dict[str, int], has_rows: bool
 ) -> list[Finding]:
@@ -266,7 +146,7 @@ def _about_missing_columns(
         return []
     first = min(grid.rows[header_row])
     return [
-        _sheet_finding(
+        sheet_finding(
             Level.FAULT,
             Code.COLUMN_MISSING,
             grid.sheet,
@@ -306,11 +186,13 @@ def _read_rows(
         row = Row(grid.sheet, number, cells, column_of)
         if schema.id_field in cells and is_blank(cells[schema.id_field]):
             findings.append(_about_no_id(schema, schema.id_field, row))
+        elif _is_totals_row(schema, row):
+            findings.append(_about_totals(next(iter(filter(_is_total, cells.values())))))
         else:
             rows.append(row)
     if n_gap:
         findings.append(
-            _sheet_finding(
+            sheet_finding(
                 Level.NOTE,
                 Code.BLANK_ROWS,
                 grid.sheet,
@@ -319,6 +201,40 @@ def _read_rows(
             )
         )
     return tuple(rows), findings
+
+
+_WORDS_FOR_TOTALS = frozenset(
+    ["total", "totals", "sum", "sums", "subtotal", "grand total", "average", "mean", "count"]
+)
+
+
+def _is_total(cell: Cell) -> bool:
+    return isinstance(cell.value, str) and fold_heading(cell.value) in _WORDS_FOR_TOTALS
+
+
+def _is_totals_row(schema: Sheet, row: Row) -> bool:
+    """True for a row of sums below a table: named so, and blank where a row needs a value."""
+    if schema.other_columns is not None:
+        needed = []  # a time is never a word
+    else:
+        needed = [f.key for f in schema.fields if f.is_required and f.key != schema.id_field]
+    first = next((cell for cell in row.cells.values() if not is_blank(cell)), None)
+    return (
+        first is not None
+        and _is_total(first)
+        and (not needed or any(is_blank(row.cell(key)) for key in needed if key in row.cells))
+    )
+
+
+def _about_totals(cell: Cell) -> Finding:
+    return finding_at(
+        cell,
+        Level.FAULT,
+        Code.TOTALS_ROW,
+        "",
+        f"'{clean(cell.typed)}' looks like a row of sums below the table.",
+        "Clear the row or move it to the right of the table: every row here is read.",
+    )
 
 
 def _about_no_id(schema: Sheet, key: str, row: Row) -> Finding:
@@ -343,11 +259,16 @@ def about_merges(
     """Faults about merged cells inside the table: all but one of them lost their value."""
     findings = []
     for merged in facts.merged_ranges:
-        first_column, first_row, last_column, final_row = range_boundaries(merged)
+        try:
+            first_column, first_row, last_column, final_row = range_boundaries(merged)
+        except ValueError:
+            continue  # no range at all: nothing that a spreadsheet program would merge
+        if None in (first_column, first_row, last_column, final_row):
+            continue
         is_inside = first_row <= last_row and final_row >= header_row
         if is_inside and columns & set(range(first_column, last_column + 1)):
             findings.append(
-                _sheet_finding(
+                sheet_finding(
                     Level.FAULT,
                     Code.MERGED_CELLS,
                     sheet,
@@ -368,7 +289,7 @@ def about_hidden_rows(sheet: str, facts: SheetFacts, numbers: list[int]) -> list
     if len(hidden) > 1:
         how_many = f"{len(hidden)} hidden or filtered rows were"
     return [
-        _sheet_finding(
+        sheet_finding(
             Level.NOTE,
             Code.HIDDEN_ROWS,
             sheet,
@@ -385,7 +306,7 @@ def _about_hidden_columns(
     """Notes about hidden columns, whose values are used all the same."""
     last = max((row.number for row in rows), default=1)
     return [
-        _sheet_finding(
+        sheet_finding(
             Level.NOTE,
             Code.HIDDEN_COLUMN,
             sheet,

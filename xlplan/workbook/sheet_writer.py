@@ -12,14 +12,14 @@ import os
 import tempfile
 from collections.abc import Iterator
 from contextlib import contextmanager
-from datetime import datetime
+from datetime import date, datetime, time, timedelta
 from pathlib import Path
 from typing import Any
 
 import xlsxwriter
 
 from xlplan.base.errors import PathError, ResultFileError
-from xlplan.workbook.formats import FONT, Formats, Role, workbook_options
+from xlplan.workbook.formats import FONT, INK, Formats, Role, workbook_options
 
 LONGEST_TEXT = 32767
 """Characters in a cell (limit of the file format)."""
@@ -92,14 +92,59 @@ class SheetWriter:
         elif isinstance(value, int | float):
             if not math.isfinite(value):
                 raise WorkbookWriteError(f"{place}: {value} is no number that a cell can hold")
-            code = self.worksheet.write_number(row, column, value, self.formats.role(number))
+            is_big = number is Role.NUMBER and abs(value) >= 1000 and value == int(value)
+            look = self.formats.role(Role.BIG_NUMBER if is_big else number)
+            code = self.worksheet.write_number(row, column, value, look)
         else:
             raise WorkbookWriteError(f"{place}: cannot write a {type(value).__name__}")
         demand_written(code, place)
 
+    def formula(self, row: int, column: int, text: str, value: float | str, role: Role) -> None:
+        """Write a formula with the value it gives, which viewers without a calculator show."""
+        look = self.formats.role(role)
+        code = self.worksheet.write_formula(row, column, text, look, value)
+        demand_written(code, self._place(row, column))
+
+    def chart(self, row: int, column: int, chart: Any, size: tuple[int, int], alt: str) -> None:
+        """Put a chart with its upper left corner at a cell; ``alt`` is read out in its place."""
+        chart.set_size({"width": size[0], "height": size[1]})
+        options = {"description": alt, "object_position": 3}
+        code = self.worksheet.insert_chart(row, column, chart, options)
+        demand_written(code, f"chart at {self._place(row, column)}")
+
     def blank(self, row: int, column: int, role: Role) -> None:
         """Write a formatted cell without a value."""
         code = self.worksheet.write_blank(row, column, None, self.formats.role(role))
+        demand_written(code, self._place(row, column))
+
+    def put(self, row: int, column: int, value: object, properties: dict[str, Any]) -> None:
+        """Write a value of any type that a cell can hold, with a format of its own; text stays
+        text whatever it begins with, and None leaves a formatted blank."""
+        place = self._place(row, column)
+        look = self.formats.rule({"font_color": INK, **properties})
+        sheet = self.worksheet
+        if value is None:
+            code = sheet.write_blank(row, column, None, look)
+        elif isinstance(value, bool):
+            code = sheet.write_boolean(row, column, value, look)
+        elif isinstance(value, str):
+            if len(value) > LONGEST_TEXT:
+                raise WorkbookWriteError(f"{place}: the text is too long for a cell")
+            code = sheet.write_string(row, column, value, look)
+        elif isinstance(value, datetime | date | time | timedelta):
+            code = sheet.write_datetime(row, column, value, look)
+        elif isinstance(value, int | float) and math.isfinite(value):
+            code = sheet.write_number(row, column, value, look)
+        else:
+            raise WorkbookWriteError(f"{place}: cannot write {value!r}")
+        demand_written(code, place)
+
+    def cell_link(self, row: int, column: int, sheet: str, address: str, text: str) -> None:
+        """Write a link to a cell of another sheet of this workbook."""
+        quoted = sheet.replace("'", "''")
+        code = self.worksheet.write_url(
+            row, column, f"internal:'{quoted}'!{address}", self.formats.role(Role.LINK), text
+        )
         demand_written(code, self._place(row, column))
 
     def sheet_link(self, row: int, column: int, sheet: str) -> None:

@@ -11,13 +11,10 @@ import re
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 
-from xlplan.base.errors import Finding, Level, Origin
+from xlplan.base.errors import Finding, Level, Origin, one_line
 
 _LITERAL = re.compile(r'"[^"]*"|\\.')
 """Parts of a number format that are shown as they stand and scale nothing, such as 0"%"."""
-
-_CONTROL = re.compile(r"[\x00-\x1f\x7f-\x9f\u2028\u2029]+")
-"""Line breaks, and codes that would move a terminal's cursor."""
 
 LONGEST_MESSAGE = 400
 """A cell may hold 32767 characters; this is enough of them to recognise it."""
@@ -100,7 +97,8 @@ class RawStudy:
     """A study workbook as typed: tables by schema sheet name, and what was found on the way.
 
     ``fingerprint``: ``sha256:...`` of the file's bytes. ``n_formula``: formulas whose stored
-    values were used.
+    values were used. ``rows_of``: every non-blank cell of the sheets that hold input, by title, row
+    number and 1-based column.
     """
 
     file_name: str
@@ -108,6 +106,7 @@ class RawStudy:
     findings: tuple[Finding, ...]
     fingerprint: str
     n_formula: int = 0
+    rows_of: Mapping[str, Mapping[int, Mapping[int, Cell]]] = field(default_factory=dict)
 
 
 def finding_at(
@@ -127,5 +126,5 @@ def finding_at(
 
 
 def _one_line(text: str) -> str:
-    line = _CONTROL.sub(" ", text)
+    line = one_line(text)
     return line if len(line) <= LONGEST_MESSAGE else f"{line[:LONGEST_MESSAGE]}..."

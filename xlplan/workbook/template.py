@@ -62,11 +62,11 @@ def write_study_workbook(
     if unknown:
         raise ValueError(f"there is no input table {sorted(unknown)[0]}")
     with new_workbook(Path(path), "Resilience study of a distribution feeder") as (book, formats):
-        write_start_sheet(book, SheetWriter(book, START, formats), remark)
+        write_start_sheet(book, SheetWriter(book, START, formats), remark, tables, settings)
         for sheet in sheets:
             writer = SheetWriter(book, sheet.name, formats)
             if sheet.is_settings:
                 write_settings_sheet(book, writer, sheet, settings)
             else:
                 write_table_sheet(book, writer, sheet, tables.get(sheet.name, ()))
-        write_lists_sheet(book, SheetWriter(book, LISTS, formats))
+        write_lists_sheet(book, SheetWriter(book, LISTS, formats), tables)

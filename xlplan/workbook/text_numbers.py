@@ -21,6 +21,7 @@ _ONE_COMMA = re.compile(r"[+-]?[0-9]{1,3},[0-9]{3}")
 """1,250 is 1250 to some and 1.25 to others."""
 _DECIMAL_COMMA = re.compile(r"[+-]?[0-9]{1,3}(?:\.?[0-9]{3})*,[0-9]+|[+-]?[0-9]+,[0-9]+")
 _GROUPED_BY_DOT = re.compile(r"[+-]?[1-9][0-9]{0,2}(?:\.[0-9]{3}){2,}")
+_NUMBER_AND_UNIT = re.compile(r"([+-]?[0-9][0-9., ]*)([^\W\d_][^\d]{0,20})")
 _STARTS_AS_NUMBER = re.compile(r"\W{0,2}[0-9]")
 
 
@@ -36,6 +37,9 @@ class ParsedNumber:
     code: Code = Code.NOT_A_NUMBER
     problem: str = ""
     has_more_than_a_number: bool = False
+    unit: str = ""
+    """What stands behind the number, and ``before_unit`` the number, where it is clear."""
+    before_unit: float | None = None
 
 
 def parse_number(text: str) -> ParsedNumber:
@@ -81,6 +85,15 @@ def _why_not(text: str, tidy: str) -> ParsedNumber:
         )
     if any(ch.isdigit() and not ch.isascii() for ch in tidy):
         return ParsedNumber(None, problem=f"'{text}' is not written in the digits 0 to 9.")
+    if match := _NUMBER_AND_UNIT.fullmatch(tidy):
+        digits = _plain_form(match[1].rstrip())
+        return ParsedNumber(
+            None,
+            problem=f"'{text}' is a number with '{match[2]}' behind it.",
+            has_more_than_a_number=True,
+            unit=match[2],
+            before_unit=None if digits is None else float(digits),
+        )
     if _STARTS_AS_NUMBER.match(tidy):
         return ParsedNumber(
             None, problem=f"'{text}' is not a plain number.", has_more_than_a_number=True

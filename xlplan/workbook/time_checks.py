@@ -102,6 +102,8 @@ def _window(
         hint = f"A period is {minutes_from_hours(period_h):g} minutes (Settings)."
         return [fault(row, Code.NOT_WHOLE_PERIODS, "hours", message, hint)], None
     start = profiles.row_at(row.values.get("starts_at"))
+    if start is None and any(time is None for time in profiles.times):
+        return [], None  # it may be one of the times that are faulty themselves
     if start is None:
         first, last = profiles.rows[0].row.cell("time"), profiles.rows[-1].row.cell("time")
         message = f"{row.row.cell('starts_at').typed} is no time of Profiles."
@@ -317,17 +319,22 @@ def _substation(
     if settings is None or limit is None or any(row.faulty for row in loads):
         return
     allowance = 1.0 + frac_from_pct(settings.number("loss_allowance_pct") or 0.0)
+    peaks: dict[str | None, float] = {}
+    for load in loads:
+        name = load.text("load_profile")
+        peaks[name] = peaks.get(name, 0.0) + (load.number("peak_kw") or 0.0)
     worst = (0.0, "")
     for row, stretch in stretches:
-        shapes = [_values(profiles, load.text("load_profile"), stretch) for load in loads]
-        if any(shape is None for shape in shapes):
-            continue
         total = [0.0] * (stretch.stop - stretch.start)
         scale = allowance * (row.number("load_multiplier") or 0.0)
-        for load, shape in zip(loads, shapes, strict=True):
-            peak_kw = (load.number("peak_kw") or 0.0) * scale
-            total = [kw + peak_kw * value for kw, value in zip(total, shape or (), strict=True)]
-        worst = max(worst, (max(total), str(row.text("window"))))
+        for name, peak_kw in peaks.items():
+            shape = _values(profiles, name, stretch)
+            if shape is None:
+                break
+            weight = peak_kw * scale
+            total = [kw + weight * value for kw, value in zip(total, shape, strict=True)]
+        else:
+            worst = max(worst, (max(total), str(row.text("window"))))
     if worst[0] > limit:
         yield warning(
             settings,

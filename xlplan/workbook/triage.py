@@ -19,8 +19,12 @@ _OLE_MAGIC = bytes.fromhex("D0CF11E0A1B11AE1")
 _ZIP_MAGIC = b"PK\x03\x04"
 _SAVE_AS = "Open it in a spreadsheet program and save it as Excel Workbook (.xlsx)."
 
+MAX_PACKED_BYTES = 200_000_000
+MAX_PARTS = 10_000
 MAX_UNPACKED_BYTES = 400_000_000
 """A study of every sheet filled to a year of 5-minute rows unpacks to well below this."""
+MAX_OTHER_PART_BYTES = 60_000_000
+"""Texts, styles and the like are taken into memory whole, unlike the rows of sheets."""
 MAX_RATIO = 200
 """Ordinary sheets pack about ten to one; beyond this, in a part of some size, it is a trap."""
 RATIO_FROM_BYTES = 1_000_000
@@ -44,12 +48,20 @@ def triage(path: Path) -> WorkbookFile:
     name = path.name
     if path.is_dir():
         raise PathError(f"'{path}' is a folder. Name the study workbook in it.")
-    if name.startswith("~$"):
+    if name.startswith(("~$", ".~lock.")):
+        owner = name.removeprefix("~$").removeprefix(".~lock.").removesuffix("#")
         raise StudyFileError(
-            f"'{path}' is the lock file of '{name[2:]}', which is open in a spreadsheet program. "
+            f"'{path}' is the lock file of '{owner}', which is open in a spreadsheet program. "
             f"Name the workbook itself."
         )
     try:
+        if path.exists() and not path.is_file():
+            raise PathError(f"'{path}' is no file. Name the study workbook.")
+        if path.stat().st_size > MAX_PACKED_BYTES:
+            raise StudyFileError(
+                f"'{path}' is larger than {MAX_PACKED_BYTES / 1e6:.0f} MB, which no study needs. "
+                f"Remove what is no part of it."
+            )
         content = path.read_bytes()
     except FileNotFoundError:
         raise PathError(f"There is no file '{path}'.") from None
@@ -80,6 +92,9 @@ def _about_ole(path: Path, content: bytes) -> str:
 
 def _about_other(path: Path, content: bytes) -> str:
     """Neither an old Excel file nor a zip."""
+    head = content[:512].lstrip().lower()
+    if head.startswith((b"<html", b"<!doctype html", b"<table")):
+        return f"'{path}' is a web page under the name of a workbook. {_SAVE_AS}"
     if path.suffix.lower() in (".csv", ".txt", ".tsv"):
         return f"'{path}' is a text file, not a workbook. {_SAVE_AS}"
     if not any(content[:4]) or content[:2] == b"PK":
@@ -93,6 +108,11 @@ def _look_inside(path: Path, content: bytes) -> list[Finding]:
     try:
         with zipfile.ZipFile(io.BytesIO(content)) as archive:
             infos = {info.filename: info for info in archive.infolist()}
+            if len(archive.infolist()) > MAX_PARTS or len(infos) < len(archive.infolist()):
+                raise StudyFileError(
+                    f"'{path}' holds parts by the thousand or twice under one name, which no "
+                    f"spreadsheet program writes. It is not read."
+                )
             _check_kind(path, archive, infos)
             _check_sizes(path, infos)
             _check_entities(path, archive, infos)
@@ -139,6 +159,13 @@ def _check_sizes(path: Path, infos: dict[str, zipfile.ZipInfo]) -> None:
                 f"study needs. Clear the formatted but empty cells, or copy the study into a new "
                 f"workbook."
             )
+        is_text = info.filename.lower().endswith((".xml", ".rels", ".vml"))
+        is_sheet = info.filename.startswith("xl/worksheets/")
+        if is_text and not is_sheet and info.file_size > MAX_OTHER_PART_BYTES:
+            raise StudyFileError(
+                f"'{path}' unpacks to {info.file_size / 1e6:.0f} MB in '{info.filename}', which no "
+                f"study needs. Remove what is no part of the study."
+            )
     if total > MAX_UNPACKED_BYTES:
         raise StudyFileError(
             f"'{path}' unpacks to {total / 1e6:.0f} MB; at most {MAX_UNPACKED_BYTES / 1e6:.0f} MB "
@@ -181,7 +208,8 @@ def _notes(path: Path, types: bytes, infos: dict[str, zipfile.ZipInfo]) -> list[
             Code.EXTERNAL_LINKS,
             "the workbook links to other workbooks. The values stored in this one are used.",
         )
-    if path.with_name("~$" + path.name).exists():
+    locks = ("~$" + path.name, f".~lock.{path.name}#")
+    if any(path.with_name(name).exists() for name in locks):
         note(
             Code.OPEN_ELSEWHERE,
             "the workbook seems to be open in a spreadsheet program. Changes that were not saved "

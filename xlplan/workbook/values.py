@@ -21,6 +21,7 @@ from xlplan.schema.fields import Field, Kind
 from xlplan.workbook.folding import ZERO_WIDTH, clean, did_you_mean, fold
 from xlplan.workbook.tables import Cell, finding_at
 from xlplan.workbook.text_numbers import PLAIN_NUMBER, parse_number
+from xlplan.workbook.units import units_in
 
 EXCEL_ERRORS = frozenset(
     [
@@ -78,7 +79,7 @@ def read_value(cell: Cell, field: Field) -> Reading:
             cell,
             field,
             Code.FORMULA_NOT_CALCULATED,
-            "holds a formula that was never calculated.",
+            "the cell holds a formula that was never calculated.",
             "Open the workbook in a spreadsheet program, save it and run again.",
         )
     if cell.is_error or (isinstance(cell.value, str) and cell.value.strip() in EXCEL_ERRORS):
@@ -193,6 +194,14 @@ def _read_text_number(cell: Cell, field: Field, text: str) -> Reading:
         elif parsed.has_more_than_a_number:
             unit = f" ({field.unit})" if field.unit else ""
             hint = f"Give one number alone; the unit stands in the heading{unit}."
+            if parsed.unit and parsed.before_unit is not None:
+                is_same = units_in(parsed.unit) == units_in(field.unit) != set()
+                hint = (
+                    f"Type {parsed.before_unit:.12g} alone; the unit stands in the heading{unit}."
+                    if is_same
+                    else "Type the number alone, "
+                    f"{in_unit(field).removeprefix('Give it ').rstrip('.') or 'without a unit'}."
+                )
         return _fault(cell, field, parsed.code, parsed.problem, hint)
     number = parsed.number
     if parsed.is_percent and not field.key.endswith("_pct"):
