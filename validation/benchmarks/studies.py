@@ -74,6 +74,8 @@ def feeder_study(
     rng = np.random.default_rng(seed)
     n_line = n_bus - 1
     buses = [make_bus("S")] + [make_bus(f"B{i}") for i in range(1, n_bus)]
+    # More buses are a finer picture of a feeder of the same size, not a larger utility.
+    span, share_of_load = min(1.0, 13.0 / n_bus), min(1.0, 25.0 / n_bus)
     # A trunk with laterals: each new bus hangs on one of the last few.
     above = [int(rng.integers(max(0, i - 4), i)) if i > 1 else 0 for i in range(1, n_bus)]
     own = set(range(n_line)) if n_section is None else {0}
@@ -87,7 +89,7 @@ def feeder_study(
             device = (
                 Device.BREAKER if i == 0 else Device(rng.choice(["recloser", "switch", "fuse"]))
             )
-        length = float(rng.uniform(0.4, 2.0))
+        length = float(rng.uniform(0.4, 2.0)) * span
         lines.append(
             make_line(
                 f"L{i + 1}",
@@ -106,7 +108,7 @@ def feeder_study(
         make_load(
             f"D{i + 1}",
             buses[i + 1].bus,
-            float(rng.uniform(60.0, 260.0)),
+            float(rng.uniform(60.0, 260.0)) * share_of_load,
             customer_class=str(kinds[i]),
             load_profile="homes" if kinds[i] == "homes" else "shops",
             power_factor=0.95,

@@ -304,6 +304,9 @@ class MemberTable:
         """Numbers of some members, in their order."""
         if self._whole is None:
             return self._gather(members)
+        if len(members) == 1:  # views, where most calls are
+            one = slice(int(members[0]), int(members[0]) + 1)
+            return _Numbers(*(part[one] for part in vars(self._whole).values()))
         return _Numbers(*(part[members] for part in vars(self._whole).values()))
 
     def _gather(self, members: IntArray) -> _Numbers:
