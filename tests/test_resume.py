@@ -80,4 +80,4 @@ def test_a_changed_study_starts_afresh_and_says_so(tmp_path: Path, capsys) -> No
     assert main(command(results, twin, "--resume", "--gap", "5")) == 0
     assert "started afresh" in capsys.readouterr().out
     document = json.loads(twin.read_text("utf-8"))
-    assert any(f["code"] == "stopped run" for f in document["findings"])
+    assert any("started afresh" in f["message"] for f in document["findings"])

@@ -195,7 +195,7 @@ def feeder_study(
         sun=np.clip((SUN * (2.0 * rng.random((repeat, 1)) * 0.5 + 0.4)).ravel(), 0.0, 1.0),
         price=np.tile(PRICE, repeat),
     )
-    return Study(
+    study = Study(
         settings=make_settings(
             period_h=PERIOD_H,
             vmin_pu=0.95,
@@ -204,6 +204,7 @@ def feeder_study(
             vmax_event_pu=1.06,
             source_voltage_pu=1.03,
             base_kv=12.0,
+            energy_price_per_kwh=1.0,  # times the profile, which holds the price itself
             demand_charge_per_kw_year=0.0,
             export_price_per_kwh=0.05,
             gap_target_frac=gap_target_frac,
@@ -233,6 +234,9 @@ def feeder_study(
             replace(record, price_profile="price") for record in records
         ),
     )  # fmt: skip
+    assert study.settings.export_price_per_kwh is not None
+    assert study.settings.export_price_per_kwh < study.settings.energy_price_per_kwh * PRICE.min()
+    return study
 
 
 def with_repair_classes(

@@ -308,6 +308,7 @@ METHODS = (
     Column("cost", "Cost of following it ({money}/year)", "money"),
     Column("low", "95 % interval: low ({money}/year)", "money"),
     Column("high", "95 % interval: high ({money}/year)", "money"),
+    Column("ceiling", "Bound from above, no sampling ({money}/year)", "money"),
     Column("gap", "Gap", "percent"),
     Column("status", "Why it stopped", "text"),
     Column("method", "Method", "text"),

@@ -13,7 +13,7 @@ from xlplan.report.looks import BLACK, BLUE, VERMILION
 from xlplan.report.safe_book import SafeBook
 from xlplan.report.tables import CONVERGENCE, METHODS, PASSES
 
-WIDTHS = (26, 17, 17, 17, 17, 15, 15, 13, 30, 12)
+WIDTHS = (26, 17, 17, 17, 17, 17, 15, 15, 13, 30, 12)
 CHART_ROWS = 19
 
 MEANINGS = (
@@ -23,6 +23,8 @@ MEANINGS = (
     "interval: in about 19 of 20 runs with other seeds the interval would hold the true cost.",
     "Gap: upper end of that interval less the lower bound, as a share of the cost; what a better "
     "plan could at most still save. It is in part statistical where the cost is.",
+    "Bound from above: with these purchases the feeder can be run for no more than this; it is "
+    "proven, not sampled, and left blank where working it out would take too long.",
     "A run that was stopped gives its best plan with the gap it had; nothing is rounded in its "
     "favour.",
 )
@@ -65,6 +67,7 @@ def _method_row(plan: PlanResult) -> dict[str, Cell]:
         "cost": plan.costs.total,
         "low": plan.cost_interval[0],
         "high": plan.cost_interval[1],
+        "ceiling": plan.bound_upper,
         "gap": plan.gap_frac,
         "status": plan.status,
         "method": plan.method,
