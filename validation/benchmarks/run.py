@@ -218,7 +218,9 @@ def main() -> None:
     parser.add_argument("--out", type=Path)
     parser.add_argument("--here", action="store_true", help="in this process, result as JSON")
     options = parser.parse_args()
-    chosen = [c for c in cases() if any(c.name.startswith(w) for w in options.words)]
+    everything = list(cases())
+    exact = [c for c in everything if c.name in options.words]
+    chosen = exact or [c for c in everything if any(c.name.startswith(w) for w in options.words)]
     if options.here:
         print(json.dumps(vars(run_case(chosen[0], options.workers))))
         return

@@ -74,8 +74,10 @@ def add_polygon(
     columns = [int(c) for c, _ in terms]
     if len(set(columns)) != len(columns):
         raise ValueError(f"{name}: a column occurs twice in a rating")
-    names = [f"{name} polygon {i}" for i in range(N_CORNER)]
-    builder.add_lazy_block(names, columns, np.array([a for _, a in terms]).T, upper)
+    # One name for all: a name of its own for each would take more room than the rows.
+    builder.add_lazy_block(
+        [f"{name} polygon"] * N_CORNER, columns, np.array([a for _, a in terms]).T, upper
+    )
 
 
 def add_network(

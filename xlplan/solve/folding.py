@@ -107,12 +107,15 @@ class Folding:
         y : array, shape (n_col,), kept columns given, folded ones overwritten
         side : array, shape (n_fold,), ``b_D``
         """
-        for places, (place, index, value) in zip((self._early, self._late), self._rest,
-                                                 strict=True):  # fmt: skip
-            if not len(places):
-                continue
-            left = side[places] - np.bincount(place, value * y[index], len(places))
-            y[self.column[places]] = self._inverse.times(places, left, len(self))
+        found = np.zeros(len(self))
+        left = np.zeros(len(self))
+        for is_late, places, (place, index, value) in zip(
+            (False, True), (self._early, self._late), self._rest, strict=True
+        ):
+            if len(places):
+                left[places] = side[places] - np.bincount(place, value * y[index], len(places))
+                self._inverse.times(self._is_late == is_late, left, found)
+                y[self.column[places]] = found[places]
 
     def expand_rows(self, rows: IntArray) -> Expanded:
         """Program rows without their folded columns."""
@@ -173,50 +176,55 @@ def _joined(parts: Sequence[NDArray[np.generic]], kind: type) -> NDArray[np.gene
     return np.concatenate(parts) if parts else np.zeros(0, dtype=kind)
 
 
+@dataclass(frozen=True)
+class _Alike:
+    """Blocks with the same matrix: their inverse, and where each of them begins."""
+
+    inverse: FloatArray
+    starts: IntArray
+    places: IntArray
+    """(n_block, n) positions among the folds."""
+
+
 class _Inverse:
-    """Inverses of all blocks as one sparse matrix by rows (folded column, row ``D``)."""
+    """Inverses of all blocks; those of equal blocks are kept once."""
 
     def __init__(self, start: IntArray, blocks: Sequence[FloatArray]) -> None:
-        known: dict[bytes, tuple[IntArray, IntArray, FloatArray]] = {}
-        rows, columns, values = [], [], []
-        for begin, block in zip(start[:-1], blocks, strict=True):
+        starts: dict[bytes, list[int]] = {}
+        matrices: dict[bytes, FloatArray] = {}
+        for begin, block in zip(start[:-1].tolist(), blocks, strict=True):
             key = block.tobytes()
-            if key not in known:
-                whole = np.linalg.inv(block)
-                r, c = np.nonzero(np.abs(whole) > NOTHING * np.abs(whole).max(initial=0.0))
-                known[key] = (r, c, whole[r, c])
-            r, c, v = known[key]
-            rows.append(r + begin)
-            columns.append(c + begin)
-            values.append(v)
-        self._row = np.asarray(_joined(rows, np.int64), dtype=np.int64)
-        self._column = np.asarray(_joined(columns, np.int64), dtype=np.int64)
-        self._value = np.asarray(_joined(values, np.float64), dtype=np.float64)
+            starts.setdefault(key, []).append(begin)
+            matrices[key] = block
+        self._alike: list[_Alike] = []
         n = int(start[-1])
-        self._start = np.concatenate([[0], np.cumsum(np.bincount(self._row, minlength=n))])
-        self._parts: dict[int, tuple[IntArray, IntArray, FloatArray]] = {}
+        self._group = np.zeros(n, dtype=np.int64)
+        self._begin = np.zeros(n, dtype=np.int64)
+        for i, (key, begins) in enumerate(starts.items()):
+            inverse = np.linalg.inv(matrices[key])
+            inverse[np.abs(inverse) <= NOTHING * np.abs(inverse).max(initial=0.0)] = 0.0
+            at = np.array(begins, dtype=np.int64)
+            places = at[:, None] + np.arange(len(inverse))
+            self._alike.append(_Alike(inverse, at, places))
+            self._group[places.ravel()] = i
+            self._begin[places.ravel()] = np.repeat(at, len(inverse))
 
-    def times(self, places: IntArray, right: FloatArray, n: int) -> FloatArray:
-        """``W[places, places] @ right``; places are always one of two sets, early or late."""
-        key = int(places[0])
-        if key not in self._parts:
-            to = np.full(n, -1, dtype=np.int64)
-            to[places] = np.arange(len(places))
-            inside = to[self._row] >= 0
-            self._parts[key] = (
-                to[self._row[inside]], to[self._column[inside]], self._value[inside]
-            )  # fmt: skip
-        row, column, value = self._parts[key]
-        return np.bincount(row, value * right[column], len(places))
+    def times(self, is_wanted: NDArray[np.bool_], right: FloatArray, out: FloatArray) -> None:
+        """``out = W @ right`` in the wanted blocks, all positions among the folds."""
+        for alike in self._alike:
+            wanted = is_wanted[alike.starts]
+            if wanted.any():
+                places = alike.places if wanted.all() else alike.places[wanted]
+                out[places] = right[places] @ alike.inverse.T
 
     def row_times(self, places: IntArray, left: FloatArray) -> tuple[IntArray, FloatArray]:
         """``left @ W[places]`` as positions and values."""
-        columns = [self._column[self._start[p] : self._start[p + 1]] for p in places]
-        values = [
-            x * self._value[self._start[p] : self._start[p + 1]]
-            for p, x in zip(places, left, strict=True)
-        ]
-        found, inverse = np.unique(np.concatenate(columns), return_inverse=True)
-        total = np.bincount(inverse, np.concatenate(values), len(found))
-        stays = total != 0.0
-        return found[stays], total[stays]
+        columns, values = [], []
+        for begin in np.unique(self._begin[places]).tolist():
+            here = self._begin[places] == begin
+            inverse = self._alike[int(self._group[begin])].inverse
+            row = left[here] @ inverse[places[here] - begin]
+            used = np.flatnonzero(row)
+            columns.append(begin + used)
+            values.append(row[used])
+        return np.concatenate(columns), np.concatenate(values)

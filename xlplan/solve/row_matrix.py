@@ -1,4 +1,4 @@
-"""A sparse matrix by rows in NumPy: the three products that cuts and checks need."""
+"""A sparse matrix by rows in NumPy: the products that cuts and checks need."""
 
 from __future__ import annotations
 
@@ -16,20 +16,14 @@ class RowMatrix:
 
     >>> program = LinearProgram(*[np.zeros(2)] * 3, *[np.zeros(1)] * 2, np.array([0, 2]),
     ...     np.array([0, 1]), np.array([3.0, 4.0]), np.zeros(2, bool), np.zeros(1, bool))
-    >>> RowMatrix(program).times(np.array([1.0, 10.0])).tolist()
-    [43.0]
+    >>> RowMatrix(program).transposed_times(np.array([0]), np.array([10.0])).tolist()
+    [30.0, 40.0]
     """
 
     def __init__(self, program: LinearProgram) -> None:
         self.n_row, self.n_col = program.n_row, program.n_col
         self.start, self.index = program.start, program.index
         self.value = program.value.copy()
-        self._row = np.repeat(np.arange(self.n_row), np.diff(program.start))
-
-    def times(self, y: FloatArray) -> FloatArray:
-        """``A y``, (n_row,)."""
-        # Sums row by row: a running sum over all entries would lose digits.
-        return np.bincount(self._row, self.value * y[self.index], self.n_row)
 
     def entries(self, rows: IntArray) -> IntArray:
         """Positions of the entries of some rows, row after row."""

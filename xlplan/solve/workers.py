@@ -13,9 +13,10 @@ import signal
 from collections.abc import Callable, Sequence
 from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
 from concurrent.futures.process import BrokenProcessPool
+from dataclasses import dataclass, replace
 
 from xlplan.base.memory import resident_bytes
-from xlplan.model.value_graph import ValueGraph
+from xlplan.model.value_graph import Family, ValueGraph
 from xlplan.solve.cuts import CutBatch, CutPool
 from xlplan.solve.member_cache import MemberCache
 from xlplan.solve.node_solver import Measure, NodeRequest, NodeSolution, NodeSolver
@@ -46,6 +47,15 @@ def _solve_chunk(
     assert _SOLVER is not None
     _SOLVER.add_cuts(cuts)
     return [_SOLVER.solve(request, measure) for request in requests], _SOLVER.all_counts()
+
+
+@dataclass
+class Elsewhere(Family):
+    """A family whose program another process holds."""
+
+    name: str
+    n_member: int
+    is_expanded: bool
 
 
 class Workers:
@@ -185,6 +195,21 @@ class Workers:
             for place, solution in zip(chunk, found, strict=True):
                 solutions[place] = solution
 
+    def _part(self, worker: int) -> ValueGraph:
+        """The graph with the programs of the worker's own families only: the others are large.
+
+        Of those a worker asks how many members they have and what the tables say.
+        """
+        own = {family for (family, _), owner in self._owner.items() if owner == worker}
+        if worker == 0:  # whatever has no owner is solved there
+            named = {family for family, _ in self._owner}
+            own |= set(range(len(self.graph.families))) - named
+        families = tuple(
+            family if i in own else Elsewhere(family.name, family.n_member, family.is_expanded)
+            for i, family in enumerate(self.graph.families)
+        )
+        return replace(self.graph, families=families)
+
     def _submit(
         self, worker: int, requests: list[NodeRequest], measure: Measure | None
     ) -> Future[tuple[list[NodeSolution], dict[str, float]]]:
@@ -194,7 +219,7 @@ class Workers:
                 # A forked child would share the parent's solver threads.
                 mp_context=multiprocessing.get_context("spawn"),
                 initializer=_start_worker,
-                initargs=(self.graph, self.tables, self._cache_bytes),
+                initargs=(self._part(worker), self.tables, self._cache_bytes),
             )
         executor = self._executors[worker]
         assert executor is not None
