@@ -354,6 +354,33 @@ def allocate(windows: Sequence[WindowModel], n_sample: int) -> list[int]:
     return [max(least, round(n_sample * s / total)) if total > 0 else 0 for s in size]
 
 
+def controlled(cost: FloatArray, control: FloatArray, expected: float) -> FloatArray:
+    """Samples with a control variate taken off.
+
+    The control may be subtracted with any coefficient; the best one is regressed, within limits:
+    where the control hardly varies the regression would divide by rounding.
+
+    Parameters
+    ----------
+    cost : array, shape (n,)
+    control : array, shape (n,), in the same unit, much like the cost
+    expected : float, the control's true mean
+
+    Returns
+    -------
+    array, shape (n,), of the same mean in expectation
+    """
+    variance = float(control.var())
+    if len(cost) < 2 or variance <= 0.0:
+        return cost
+    beta = float(np.cov(cost, control)[0, 1]) / variance
+    return cost - min(max(beta, 0.0), MOST_CONTROL) * (control - expected)
+
+
+MOST_CONTROL = 2.0
+"""The control is a forecast of the cost itself: its coefficient is near 1."""
+
+
 @dataclass(frozen=True)
 class _History:
     """Histories after a first event, as differences from the base."""
@@ -481,10 +508,7 @@ class _History:
         control = guide[chosen]
         exact = float(chance @ guide)
         cost = weight * self.slots.cost(difference)
-        # The control variate may be subtracted with any coefficient; the best one is regressed.
-        spread = float(control.var()) * weight
-        beta = float(np.cov(cost, control)[0, 1]) / (spread / weight) if spread > 0.0 else 0.0
-        samples = cost - beta * (control - exact / weight)
+        samples = controlled(cost, weight * control, exact)
         correction = weight * difference.mean(axis=0)
         self._share_out(correction, weight * difference, control, float(samples.mean()))
         return correction, samples
