@@ -137,7 +137,7 @@ def test_a_run_goes_on_from_what_was_saved(tmp_path):
     first = Savepoint(path, "study a")
     with Engine(graph, seed=1, savepoint=first) as engine:
         done = engine.run(1e-6)
-        first.save(engine.pools, 100, True, done.x)
+        first.save(engine.pools, 100, True)
     again = Savepoint(path, "study a")
     with Engine(graph, seed=1, savepoint=again, resumes=True) as engine:
         assert again.found is Found.MATCHING
@@ -154,7 +154,7 @@ def test_another_study_or_a_broken_file_starts_afresh(tmp_path):
     path = tmp_path / "saved.npz"
     with Engine(graph, seed=1) as engine:
         engine.run(0.1)
-        Savepoint(path, "study a").save(engine.pools, 1, False, None)
+        Savepoint(path, "study a").save(engine.pools, 1, False)
     whole = path.read_bytes()
     for content, key, found in (
         (whole, "study b", Found.OTHER_STUDY),

@@ -82,6 +82,13 @@ def test_numbers_far_apart_give_the_same_by_both_methods():
     assert counts.get("failed node", 0) == 0
 
 
+def in_money(records, factor, *names):
+    """Records with some of their amounts in another money."""
+    return tuple(
+        replace(one, **{name: getattr(one, name) * factor for name in names}) for one in records
+    )
+
+
 @pytest.mark.parametrize("factor", [1e-3, 1e3])
 @pytest.mark.parametrize("seed", [3, 8])
 def test_the_same_study_in_other_money_is_the_same_plan(seed, factor):
@@ -89,38 +96,20 @@ def test_the_same_study_in_other_money_is_the_same_plan(seed, factor):
     found, *_ = solved(study)
     scaled = change_study(
         study,
-        customer_classes=tuple(
-            replace(c, **{
-                name: getattr(c, name) * factor
-                for name in ("cost_0h_per_kw", "cost_1h_per_kw", "cost_4h_per_kw",
-                             "cost_8h_per_kw", "cost_after_8h_per_kwh")
-            })
-            for c in study.customer_classes
+        customer_classes=in_money(
+            study.customer_classes, factor, "cost_0h_per_kw", "cost_1h_per_kw", "cost_4h_per_kw",
+            "cost_8h_per_kw", "cost_after_8h_per_kwh",
         ),
-        generators=tuple(
-            replace(g, **{
-                name: getattr(g, name) * factor
-                for name in ("capital_cost_per_kw", "capital_site_cost", "fixed_om_per_kw",
-                             "running_cost_per_kwh")
-            })
-            for g in study.generators
+        generators=in_money(
+            study.generators, factor, "capital_cost_per_kw", "capital_site_cost",
+            "fixed_om_per_kw", "running_cost_per_kwh",
         ),
-        storage=tuple(
-            replace(s, **{
-                name: getattr(s, name) * factor
-                for name in ("capital_cost_per_kw", "capital_cost_per_kwh", "capital_site_cost",
-                             "fixed_om_per_kw")
-            })
-            for s in study.storage
+        storage=in_money(
+            study.storage, factor, "capital_cost_per_kw", "capital_cost_per_kwh",
+            "capital_site_cost", "fixed_om_per_kw",
         ),
-        measures=tuple(
-            replace(m, capital_cost=m.capital_cost * factor, fixed_om=m.fixed_om * factor)
-            for m in study.measures
-        ),
-        outage_classes=tuple(
-            replace(o, repair_cost_per_failure=o.repair_cost_per_failure * factor)
-            for o in study.outage_classes
-        ),
+        measures=in_money(study.measures, factor, "capital_cost", "fixed_om"),
+        outage_classes=in_money(study.outage_classes, factor, "repair_cost_per_failure"),
         **{
             name: getattr(study.settings, name) * factor
             for name in ("energy_price_per_kwh", "demand_charge_per_kw_year",

@@ -402,9 +402,8 @@ class _Run:
     def save(self) -> None:
         """Keeps what is learnt, where that is asked for."""
         if self.engine._savepoint is not None:
-            x = self.best.first.x if self.best is not None else None
             self.engine._savepoint.save(
-                self.engine.pools, self.engine._n_group, self.is_integer_phase, x
+                self.engine.pools, self.engine._n_group, self.is_integer_phase
             )
 
     def _agree(self, is_first: bool) -> list[RootPoint]:

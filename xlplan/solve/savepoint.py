@@ -1,9 +1,9 @@
 """What a run has learnt, kept in a file so that a stopped run can go on.
 
-The file holds every cut (they stay valid whatever happens next), the best decision so far and
-whether whole numbers had been turned to. It is keyed: a study that changed by a byte, or another
-version of the formulation, does not match and is started afresh. The file is replaced in one step,
-so that a run killed while saving leaves the last whole one.
+The file holds every cut (they stay valid whatever happens next) and whether whole numbers had been
+turned to; the best decision follows from the cuts. It is keyed: a study that changed by a byte, or
+another version of the formulation, does not match and is started afresh. The file is replaced in
+one step, so that a run killed while saving leaves the last whole one.
 """
 
 from __future__ import annotations
@@ -21,8 +21,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from xlplan.solve.cuts import CutBatch, CutPool
-
-FloatArray = NDArray[np.float64]
 
 _LOG = logging.getLogger(__name__)
 
@@ -47,12 +45,11 @@ class Found(StrEnum):
 
 @dataclass(frozen=True)
 class Saved:
-    """Contents of a file: cuts by family, number of the last solve, phase, best decision if any."""
+    """Contents of a file: cuts by family, number of the last solve, phase."""
 
     cuts: tuple[CutBatch, ...]
     n_group: int
     is_integer_phase: bool
-    x: FloatArray | None
 
 
 class Savepoint:
@@ -74,15 +71,13 @@ class Savepoint:
         """Whether it is time to save."""
         return time.monotonic() - self._last >= self._interval
 
-    def save(self, pools: Sequence[CutPool], n_group: int, is_integer_phase: bool,
-             x: FloatArray | None) -> None:  # fmt: skip
+    def save(self, pools: Sequence[CutPool], n_group: int, is_integer_phase: bool) -> None:
         """Replaces the file. A disk that is full is logged, not fatal: the run goes on."""
         begin = time.monotonic()
         arrays: dict[str, NDArray[np.generic]] = {
             "key": np.array(self.key),
             "n_group": np.array(n_group),
             "is_integer_phase": np.array(is_integer_phase),
-            "x": np.zeros(0) if x is None else x,
             "n_family": np.array(len(pools)),
         }
         for i, pool in enumerate(pools):
@@ -149,7 +144,4 @@ def _read(data: np.lib.npyio.NpzFile, pools: Sequence[CutPool]) -> Saved | None:
         if not is_fit:
             return None
         cuts.append(batch)
-    x = data["x"].astype(float)
-    return Saved(
-        tuple(cuts), int(data["n_group"]), bool(data["is_integer_phase"]), x if len(x) else None
-    )
+    return Saved(tuple(cuts), int(data["n_group"]), bool(data["is_integer_phase"]))

@@ -6,9 +6,21 @@ Enters: a study, and what to change. Leaves: a new study; nothing of the old one
 from __future__ import annotations
 
 from dataclasses import replace
+from typing import TypeVar
 
 from xlplan.base.units import frac_from_pct
-from xlplan.study.study import DeviceChange, OutageClass, Study
+from xlplan.study.study import (
+    CustomerClass,
+    DeviceChange,
+    Generator,
+    Measure,
+    OutageClass,
+    Storage,
+    Study,
+    Window,
+)
+
+Record = TypeVar("Record", CustomerClass, Generator, Measure, OutageClass, Storage, Window)
 
 PRICE_PARAMETERS = ("storage cost", "generator cost", "hardening cost", "discount rate")
 """Assumptions that change what purchases cost and nothing of how the feeder runs."""
@@ -80,32 +92,27 @@ def vary(study: Study, parameter: str, value: float) -> Study:
         return replace(
             study,
             outage_classes=tuple(
-                replace(
-                    one,
-                    failures_per_year=one.failures_per_year * value,
-                    failures_per_length_year=one.failures_per_length_year * value,
-                )
+                _scaled(one, value, "failures_per_year", "failures_per_length_year")
                 for one in study.outage_classes
             ),
         )
     if parameter == REPAIR_TIMES:
         return replace(
             study,
-            outage_classes=tuple(
-                replace(one, repair_h=one.repair_h * value) for one in study.outage_classes
-            ),
+            outage_classes=tuple(_scaled(one, value, "repair_h") for one in study.outage_classes),
         )
     if parameter == "interruption costs":
         return replace(
             study,
             customer_classes=tuple(
-                replace(
+                _scaled(
                     one,
-                    cost_0h_per_kw=one.cost_0h_per_kw * value,
-                    cost_1h_per_kw=one.cost_1h_per_kw * value,
-                    cost_4h_per_kw=one.cost_4h_per_kw * value,
-                    cost_8h_per_kw=one.cost_8h_per_kw * value,
-                    cost_after_8h_per_kwh=one.cost_after_8h_per_kwh * value,
+                    value,
+                    "cost_0h_per_kw",
+                    "cost_1h_per_kw",
+                    "cost_4h_per_kw",
+                    "cost_8h_per_kw",
+                    "cost_after_8h_per_kwh",
                 )
                 for one in study.customer_classes
             ),
@@ -114,11 +121,8 @@ def vary(study: Study, parameter: str, value: float) -> Study:
         return replace(
             study,
             storage=tuple(
-                replace(
-                    one,
-                    capital_cost_per_kw=one.capital_cost_per_kw * value,
-                    capital_cost_per_kwh=one.capital_cost_per_kwh * value,
-                    capital_site_cost=one.capital_site_cost * value,
+                _scaled(
+                    one, value, "capital_cost_per_kw", "capital_cost_per_kwh", "capital_site_cost"
                 )
                 for one in study.storage
             ),
@@ -127,20 +131,14 @@ def vary(study: Study, parameter: str, value: float) -> Study:
         return replace(
             study,
             generators=tuple(
-                replace(
-                    one,
-                    capital_cost_per_kw=one.capital_cost_per_kw * value,
-                    capital_site_cost=one.capital_site_cost * value,
-                )
+                _scaled(one, value, "capital_cost_per_kw", "capital_site_cost")
                 for one in study.generators
             ),
         )
     if parameter == "hardening cost":
         return replace(
             study,
-            measures=tuple(
-                replace(one, capital_cost=one.capital_cost * value) for one in study.measures
-            ),
+            measures=tuple(_scaled(one, value, "capital_cost") for one in study.measures),
         )
     if parameter == "energy price":
         sale, stored = settings.export_price_per_kwh, settings.stored_energy_price_per_kwh
@@ -156,11 +154,14 @@ def vary(study: Study, parameter: str, value: float) -> Study:
     if parameter == "load":
         return replace(
             study,
-            windows=tuple(
-                replace(one, load_multiplier=one.load_multiplier * value) for one in study.windows
-            ),
+            windows=tuple(_scaled(one, value, "load_multiplier") for one in study.windows),
         )
     if parameter == "discount rate":
         rate = settings.real_discount_rate_frac + frac_from_pct(value)
         return replace(study, settings=replace(settings, real_discount_rate_frac=max(0.0, rate)))
     raise ValueError(f"'{parameter}' is no assumption of the Sensitivities sheet")
+
+
+def _scaled(record: Record, value: float, *names: str) -> Record:
+    """A record with some of its numbers multiplied."""
+    return replace(record, **{name: getattr(record, name) * value for name in names})
