@@ -224,5 +224,6 @@ def _warnings(result: StudyResult, best: PlanResult) -> list[str]:
             "service."
         )
     if best.numerical_events:
-        said.append(f"The solver met {best.numerical_events} numerically difficult problems.")
+        n = best.numerical_events
+        said.append(f"The solver met {n} numerically difficult problem{'' if n == 1 else 's'}.")
     return said
