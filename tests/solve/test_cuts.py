@@ -8,7 +8,8 @@ import scipy.optimize
 
 from tests.model.extensive_form import ExtensiveForm
 from tests.solve.graphs import gate_graph, random_tree_graph
-from xlplan.solve.cuts import CutBatch, CutPool, DomainBox, ExitMultipliers, lift_amount
+from xlplan.solve.cut_pool import CutBatch, CutPool
+from xlplan.solve.cuts import DomainBox, ExitMultipliers, lift_amount
 from xlplan.solve.decomposition import Engine
 from xlplan.solve.member_cache import MemberCache
 from xlplan.solve.node_solver import NodeRequest, NodeSolver

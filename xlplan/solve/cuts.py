@@ -1,7 +1,7 @@
 """Cuts: affine functions of state and capacities that lie below the value of a node.
 
 ``value(s, c) >= intercept + state_slope @ s + capacity_slope @ c`` for every state and capacity in
-the node's box. ``CutPool`` keeps those of one family, ``DualBound`` makes them from multipliers.
+the node's box. ``DualBound`` makes those of a family from multipliers.
 
 Whatever multipliers ``pi`` are put in, weak duality gives a valid cut, because every column has
 finite bounds: with ``d = cost - A' pi``
@@ -17,13 +17,15 @@ weight of the exit; then the value at the exit needs no upper bound.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
 from xlplan.model.value_graph import Family, Member
+from xlplan.solve.cut_pool import CutBatch
 from xlplan.solve.member_cache import MemberCache
+from xlplan.solve.member_table import MemberTable
 from xlplan.solve.row_matrix import RowMatrix
 
 FloatArray = NDArray[np.float64]
@@ -35,207 +37,11 @@ ROUNDING_SHIFT = 1e-12
 SMALL_SLOPE = 1e-9
 """Slopes below this share of the largest term are moved into the intercept (scaling)."""
 
-TABLE_BYTES = 40_000_000
-"""A family's table of members beyond this size is not kept."""
-
 MANY_EXITS = 8
 """Cuts of a family with more exits than this are made member by member."""
 
 SNAP_WEIGHT = 1e-6
 """Multipliers of an exit whose sum is this close to the weight are scaled up to it."""
-
-
-@dataclass(frozen=True)
-class CutBatch:
-    """Some cuts of one family: (n,), (n,), (n, n_state), (n, n_capacity).
-
-    ``group`` numbers the solve that the multipliers came from.
-    """
-
-    family: int
-    member: IntArray
-    intercept: FloatArray
-    state_slope: FloatArray
-    capacity_slope: FloatArray
-    group: IntArray
-
-    def __len__(self) -> int:
-        return len(self.member)
-
-    def take(self, keep: NDArray[np.bool_] | IntArray) -> CutBatch:
-        """Some of the cuts."""
-        return CutBatch(
-            self.family,
-            self.member[keep],
-            self.intercept[keep],
-            self.state_slope[keep],
-            self.capacity_slope[keep],
-            self.group[keep],
-        )
-
-    def values(self, states: FloatArray, capacity: FloatArray) -> FloatArray:
-        """Value of each cut at its own state, (n,)."""
-        state_part = np.einsum("ij,ij->i", self.state_slope, states)
-        return self.intercept + state_part + self.capacity_slope @ capacity
-
-
-@dataclass(frozen=True)
-class SortedCuts:
-    """Cuts of a family sorted by member, the oldest of a member first.
-
-    order (n,) positions in the pool; start, members : where each member's cuts begin, of those that
-    have any; state_slope (n, n_state), level (n,) value without the state's part, both in order
-    """
-
-    order: IntArray
-    start: IntArray
-    members: IntArray
-    state_slope: FloatArray
-    level: FloatArray
-
-
-class CutPool:
-    """Every cut of one family, never deleted, in the order in which they came."""
-
-    def __init__(self, family: int, n_member: int, n_state: int, n_capacity: int) -> None:
-        self.family = family
-        self.n = 0
-        self._member = np.zeros(64, dtype=np.int64)
-        self._group = np.zeros(64, dtype=np.int64)
-        self._intercept = np.zeros(64)
-        self._state_slope = np.zeros((64, n_state))
-        self._capacity_slope = np.zeros((64, n_capacity))
-        self._positions: list[list[int]] = [[] for _ in range(n_member)]
-        self._by_group: dict[tuple[int, int], int] = {}
-        self._level_capacity: FloatArray | None = None
-        self._level = np.zeros(64)
-        self._n_level = 0
-        self._sorted: SortedCuts | None = None
-        self._sorted_capacity: FloatArray | None = None
-
-    @property
-    def n_member(self) -> int:
-        """Members of the family."""
-        return len(self._positions)
-
-    @property
-    def member(self) -> IntArray:
-        """(n,) member that each cut belongs to."""
-        return self._member[: self.n]
-
-    @property
-    def group(self) -> IntArray:
-        """(n,) number of the solve that each cut came from."""
-        return self._group[: self.n]
-
-    @property
-    def intercept(self) -> FloatArray:
-        """(n,)"""
-        return self._intercept[: self.n]
-
-    @property
-    def state_slope(self) -> FloatArray:
-        """(n, n_state)"""
-        return self._state_slope[: self.n]
-
-    @property
-    def capacity_slope(self) -> FloatArray:
-        """(n, n_capacity)"""
-        return self._capacity_slope[: self.n]
-
-    def add(self, batch: CutBatch) -> None:
-        """Appends cuts; a second one of the same member and group is ignored."""
-        fresh = [
-            i
-            for i, key in enumerate(zip(batch.member.tolist(), batch.group.tolist(), strict=True))
-            if key not in self._by_group and np.isfinite(batch.intercept[i])
-        ]
-        if len(fresh) < len(batch):
-            batch = batch.take(np.array(fresh, dtype=np.int64))
-        end = self.n + len(batch)
-        while end > len(self._member):
-            for name in (
-                "_member", "_group", "_intercept", "_state_slope", "_capacity_slope", "_level"
-            ):  # fmt: skip
-                old = getattr(self, name)
-                setattr(self, name, np.concatenate([old, np.zeros_like(old)]))
-        self._member[self.n : end] = batch.member
-        self._group[self.n : end] = batch.group
-        self._intercept[self.n : end] = batch.intercept
-        self._state_slope[self.n : end] = batch.state_slope
-        self._capacity_slope[self.n : end] = batch.capacity_slope
-        for position, (member, group) in enumerate(
-            zip(batch.member.tolist(), batch.group.tolist(), strict=True), start=self.n
-        ):
-            self._positions[member].append(position)
-            self._by_group[member, group] = position
-        self.n = end
-
-    def since(self, n_known: int) -> CutBatch:
-        """The cuts that came after the first ``n_known``."""
-        part = slice(n_known, self.n)
-        return CutBatch(
-            self.family,
-            self._member[part],
-            self._intercept[part],
-            self._state_slope[part],
-            self._capacity_slope[part],
-            self._group[part],
-        )
-
-    def positions(self, member: int) -> list[int]:
-        """Positions of the cuts of one member; not to be changed."""
-        return self._positions[member]
-
-    def position_of(self, member: int, group: int) -> int:
-        """Position of the member's cut of one group, -1 where there is none."""
-        return self._by_group.get((member, group), -1)
-
-    def level(self, capacity: FloatArray) -> FloatArray:
-        """``intercept + capacity_slope @ capacity`` of every cut, (n,); kept between calls."""
-        is_known = self._level_capacity is not None and np.array_equal(
-            self._level_capacity, capacity
-        )
-        if not is_known:
-            self._level_capacity = capacity.copy()
-            self._n_level = 0
-        if self._n_level < self.n:
-            part = slice(self._n_level, self.n)
-            self._level[part] = self._intercept[part] + self._capacity_slope[part] @ capacity
-            self._n_level = self.n
-        return self._level[: self.n]
-
-    def by_member(self, capacity: FloatArray) -> SortedCuts:
-        """Cuts sorted by member at some capacities; kept between calls."""
-        known = self._sorted
-        if known is None or len(known.order) != self.n:
-            order = np.argsort(self.member, kind="stable")
-            members, start = np.unique(self.member[order], return_index=True)
-            known = SortedCuts(order, start, members, self.state_slope[order], np.zeros(0))
-            self._sorted_capacity = None
-        is_known = self._sorted_capacity is not None and np.array_equal(
-            self._sorted_capacity, capacity
-        )
-        if not is_known:
-            known = replace(known, level=self.level(capacity)[known.order])
-            self._sorted_capacity = capacity.copy()
-        self._sorted = known
-        return known
-
-    def value(self, member: int, state: FloatArray, capacity: FloatArray) -> float:
-        """Highest cut of one member at one point, minus infinity where it has none."""
-        positions = self._positions[member]
-        if not positions:
-            return float("-inf")
-        level = self.level(capacity)[positions]
-        return float((level + self._state_slope[positions] @ state).max())
-
-    def check(self) -> None:
-        """Invariants, for tests."""
-        assert sum(len(p) for p in self._positions) == self.n == len(self._by_group)
-        assert all(np.all(self._member[p] == m) for m, p in enumerate(self._positions) if p)
-        assert np.isfinite(self.intercept).all()
-        assert np.isfinite(self.state_slope).all()
 
 
 @dataclass(frozen=True)
@@ -250,108 +56,6 @@ class ExitMultipliers:
     intercept: FloatArray
     state_slope: FloatArray
     capacity_slope: FloatArray
-
-
-class MemberTable:
-    """What differs between the members of a family, as arrays over the members.
-
-    Only positions that differ somewhere are stacked; the others are those of member 0. A table that
-    would be large is not kept: what is asked for is then gathered anew.
-
-    has_same_inputs : whether every member holds its incoming state in the same columns
-    """
-
-    def __init__(self, cache: MemberCache, i_family: int, family: Family) -> None:
-        self._cache, self._i_family = cache, i_family
-        self.first = first = cache.get(i_family, 0)
-        columns = np.zeros(len(first.cost), dtype=bool)
-        rows = np.zeros(len(first.row_lower), dtype=bool)
-        self.has_same_inputs = True
-        for i_member in range(1, family.n_member):
-            member = cache.get(i_family, i_member)
-            columns |= member.cost != first.cost
-            columns |= member.col_lower != first.col_lower
-            columns |= member.col_upper != first.col_upper
-            rows |= member.row_lower != first.row_lower
-            rows |= member.row_upper != first.row_upper
-            if not np.array_equal(member.in_columns, first.in_columns):
-                self.has_same_inputs = False
-        columns[family.program.index[family.patch]] = True
-        columns[family.out_columns.ravel()] = True
-        self.columns, self.rows = np.flatnonzero(columns), np.flatnonzero(rows)
-        self.row_place = np.full(len(rows), -1, dtype=np.int64)
-        self.row_place[self.rows] = np.arange(len(self.rows))
-        self.column_place = np.full(len(columns), -1, dtype=np.int64)
-        self.column_place[self.columns] = np.arange(len(self.columns))
-        # Columns of the incoming state and of the capacities are in the slopes, not in the sums.
-        self.given = first.in_columns >= 0
-        self.into = np.where(self.given, first.in_columns, 0)
-        apart = np.zeros(len(columns), dtype=bool)
-        apart[self.into[self.given]] = True
-        apart[family.capacity_columns[family.capacity_columns >= 0]] = True
-        is_const = ~apart
-        is_const[self.columns] = False
-        self.const = np.flatnonzero(is_const)
-        self.const_lower = first.col_lower[self.const]
-        self.const_upper = first.col_upper[self.const]
-        self.inside = np.where(apart[self.columns], 0.0, 1.0)
-        size = 8 * family.n_member * (3 * len(self.columns) + 2 * len(self.rows))
-        self._whole: _Numbers | None = None
-        if size <= TABLE_BYTES:
-            self._whole = self._gather(np.arange(family.n_member)).compact()
-
-    def numbers(self, members: IntArray) -> _Numbers:
-        """Numbers of some members, in their order."""
-        if self._whole is None:
-            return self._gather(members)
-        if len(members) == 1:  # views, where most calls are
-            one = slice(int(members[0]), int(members[0]) + 1)
-            return _Numbers(*(part[one] for part in vars(self._whole).values()))
-        return _Numbers(*(part[members] for part in vars(self._whole).values()))
-
-    def _gather(self, members: IntArray) -> _Numbers:
-        taken = [self._cache.get(self._i_family, m) for m in members.tolist()]
-        return _Numbers(
-            cost=np.array([m.cost[self.columns] for m in taken]),
-            col_lower=np.array([m.col_lower[self.columns] for m in taken]),
-            col_upper=np.array([m.col_upper[self.columns] for m in taken]),
-            row_lower=np.array([m.row_lower[self.rows] for m in taken]),
-            row_upper=np.array([m.row_upper[self.rows] for m in taken]),
-            patch_value=np.array([m.patch_value for m in taken]),
-            exit_weight=np.array([m.exit_weight for m in taken]),
-            exit_child=np.array([m.exit_child for m in taken]),
-            offset=np.array([m.offset for m in taken]),
-            scale=np.array([m.scale for m in taken]),
-        )
-
-
-@dataclass(frozen=True)
-class _Numbers:
-    """Numbers of n members: (n, number of positions that differ), and (n,) for the last two."""
-
-    cost: FloatArray
-    col_lower: FloatArray
-    col_upper: FloatArray
-    row_lower: FloatArray
-    row_upper: FloatArray
-    patch_value: FloatArray
-    exit_weight: FloatArray
-    exit_child: IntArray
-    offset: FloatArray
-    scale: FloatArray
-
-    def compact(self) -> _Numbers:
-        """The same numbers, those that are equal for all members or on both sides kept once."""
-        parts = {
-            name: np.broadcast_to(part[0].copy(), part.shape)
-            if len(part) and (part == part[0]).all()
-            else part
-            for name, part in vars(self).items()
-        }
-        for one, other in (("row_lower", "row_upper"), ("col_lower", "col_upper")):
-            if np.array_equal(parts[one], parts[other]):
-                parts[other] = parts[one]
-        return _Numbers(**parts)
 
 
 @dataclass(frozen=True)
@@ -543,97 +247,154 @@ class DualBound:
 
         Returns
         -------
-        CutBatch of n cuts; None where the family is not fit for it (many exits, other inputs)
+        CutBatch of at most n cuts; None where the family is not fit for it (many exits, members
+        that hold their state in different columns)
+        """
+        n, n_cut = len(members), len(cuts.exit)
+        children = ChildMultipliers(
+            pair=np.repeat(np.arange(n), n_cut),
+            exit=np.tile(cuts.exit, n),
+            pi=np.tile(cuts.pi, n),
+            intercept=cuts.intercept.ravel(),
+            state_slope=cuts.state_slope.reshape(n * n_cut, cuts.state_slope.shape[2]),
+            capacity_slope=cuts.capacity_slope.reshape(n * n_cut, len(self.capacity_lower)),
+        )
+        none = np.zeros(n, dtype=np.int64)
+        found = self.cuts_of_pairs(pi[None, :], none, members, children, np.full(n, group))
+        return None if found is None else found[0].take(found[1])
+
+    def cuts_of_pairs(
+        self,
+        pi: FloatArray,
+        solve: IntArray,
+        members: IntArray,
+        children: ChildMultipliers,
+        groups: IntArray,
+    ) -> tuple[CutBatch, NDArray[np.bool_]] | None:
+        """Cuts of pairs of a solve, whose multipliers serve, and a member.
+
+        Parameters
+        ----------
+        pi : array, shape (n_solve, n_row)
+        solve, members, groups : arrays, shape (n_pair,)
+        children : ChildMultipliers
+
+        Returns
+        -------
+        cuts of all pairs and which of them are valid (a multiplier may need a side that is
+        infinite for that member); None where the family is not fit for it
         """
         table = self.table
         if table is None:
             return None
         now, first = table.numbers(members), table.first
-        n = len(members)
-        rows = np.flatnonzero(pi)
-        multiplier = pi[rows]
+        n_pair = len(members)
+        # Rows that are the same for all members.
+        at, rows = np.nonzero(pi)
+        multiplier = pi[at, rows]
         place = table.row_place[rows]
-        differs = place >= 0
         side = np.where(multiplier > 0.0, first.row_lower[rows], first.row_upper[rows])
-        usable = multiplier
-        if not np.isfinite(side[~differs]).all():
-            usable = np.where(differs | np.isfinite(side), multiplier, 0.0)
-            side = np.where(np.isfinite(side), side, 0.0)
-        row_const = usable[~differs] * side[~differs]
-        place, at = place[differs], multiplier[differs]
-        side = np.where(at > 0.0, now.row_lower[:, place], now.row_upper[:, place])
-        if not np.isfinite(side).all():
-            return None
-        row_vary = side * at
-        d = first.cost - self.matrix_of(first).transposed_times(rows, usable)
+        is_open = (place < 0) & ~np.isfinite(side)
+        if is_open.any():
+            pi = pi.copy()
+            pi[at[is_open], rows[is_open]] = 0.0
+            at, rows, place = at[~is_open], rows[~is_open], place[~is_open]
+            multiplier, side = multiplier[~is_open], side[~is_open]
+        same = place < 0
+        row_term = multiplier[same] * side[same]
+        n_solve = len(pi)
+        row_const = np.bincount(at[same], row_term, n_solve)
+        size_const = np.bincount(at[same], np.abs(row_term), n_solve)
+        # Rows that differ, of those that any solve uses.
+        used = np.unique(place[~same])
+        by_row = pi[:, table.rows[used]][solve]
+        side = now.row_lower[:, used]
+        if now.row_upper is not now.row_lower:
+            side = np.where(by_row > 0.0, side, now.row_upper[:, used])
+        with np.errstate(invalid="ignore"):
+            row_vary = np.where(by_row != 0.0, side * by_row, 0.0)
+        is_valid = np.isfinite(row_vary).all(axis=1)
+        # Reduced costs.
+        matrix, n_col = self.matrix_of(first), len(first.cost)
+        entries = matrix.entries(rows)
+        counts = matrix.start[rows + 1] - matrix.start[rows]
+        weights = matrix.value[entries] * np.repeat(multiplier, counts)
+        target = np.repeat(at * n_col, counts) + matrix.index[entries]
+        d = first.cost - np.bincount(target, weights, n_solve * n_col).reshape(n_solve, n_col)
         columns, at_column = table.columns, table.column_place
-        d_vary = now.cost + (d[columns] - first.cost[columns])
+        d_vary = now.cost + (d[:, columns] - first.cost[columns])[solve]
         if len(self.patch):
-            full = np.zeros(len(pi))
-            full[rows] = usable
-            step = full[self.patch_row] * (now.patch_value - first.patch_value)
-            np.subtract.at(d_vary, (slice(None), at_column[self.patch_column]), step)
+            step = pi[:, self.patch_row][solve] * (now.patch_value - first.patch_value)
+            moved = np.flatnonzero(step.any(axis=0))
+            places = at_column[self.patch_column[moved]]
+            np.subtract.at(d_vary, (slice(None), places), step[:, moved])
         # Children's cuts: scaled down where they weigh more than the exit does.
         weight = now.exit_weight
         n_exit = weight.shape[1]
-        total = np.bincount(cuts.exit, cuts.pi, n_exit)
+        total = np.bincount(children.pair * n_exit + children.exit, children.pi, n_pair * n_exit)
+        total = total.reshape(n_pair, n_exit)
         with np.errstate(divide="ignore", invalid="ignore"):
             ratio = np.where(total > 0.0, weight / np.where(total > 0.0, total, 1.0), 0.0)
         factor = np.where(ratio < 1.0 + SNAP_WEIGHT, ratio, 1.0)
         rest = np.maximum(weight - factor * total, 0.0)
         exit_term = rest * self.theta_lower
-        capacity_slope = np.zeros((n, len(self.capacity_lower)))
-        cut_term = np.zeros((n, len(cuts.exit)))
-        for i, e in enumerate(cuts.exit.tolist()):
-            share = factor[:, e] * cuts.pi[i]
-            cut_term[:, i] = share * cuts.intercept[:, i]
-            capacity_slope += share[:, None] * cuts.capacity_slope[:, i]
-            places = at_column[self.family.out_columns[e]]
-            np.add.at(d_vary, (slice(None), places), share[:, None] * cuts.state_slope[:, i])
-        given, into = table.given, table.into
-        col_const = _col_terms(d[table.const], table.const_lower, table.const_upper)
+        share = factor[children.pair, children.exit] * children.pi
+        child_term = share * children.intercept
+        cut_term = np.bincount(children.pair, child_term, n_pair)
+        places = at_column[self.family.out_columns[children.exit]]
+        n_vary = len(columns)
+        if len(share):
+            flat = children.pair[:, None] * n_vary + places
+            more = np.bincount(
+                flat.ravel(), (share[:, None] * children.state_slope).ravel(), n_pair * n_vary
+            )
+            d_vary += more.reshape(n_pair, n_vary)
+        capacity_slope = np.zeros((n_pair, len(self.capacity_lower)))
+        np.add.at(capacity_slope, children.pair, share[:, None] * children.capacity_slope)
+        col_const = _col_terms(d[:, table.const], table.const_lower, table.const_upper)
         col_vary = _col_terms(d_vary, now.col_lower, now.col_upper) * table.inside
+        size_const = size_const + np.abs(col_const).sum(axis=1)
         intercept = (
             now.offset
-            + float(row_const.sum())
-            + float(col_const.sum())
+            + (row_const + col_const.sum(axis=1))[solve]
             + row_vary.sum(axis=1)
             + col_vary.sum(axis=1)
-            + cut_term.sum(axis=1)
+            + cut_term
             + exit_term.sum(axis=1)
         )
-        size = float(
-            np.abs(now.offset).max()
-            + np.abs(row_const).sum()
-            + np.abs(col_const).sum()
-            + np.abs(row_vary).sum(axis=1).max()
-            + np.abs(col_vary).sum(axis=1).max()
-            + np.abs(cut_term).sum(axis=1).max()
-            + np.abs(exit_term).sum(axis=1).max()
+        size = (
+            np.abs(now.offset)
+            + size_const[solve]
+            + np.abs(row_vary).sum(axis=1)
+            + np.abs(col_vary).sum(axis=1)
+            + np.bincount(children.pair, np.abs(child_term), n_pair)
+            + np.abs(exit_term).sum(axis=1)
         )
 
-        def by_member(wanted: IntArray, same: FloatArray, vary: FloatArray) -> FloatArray:
-            """Numbers of some columns, (n, n_wanted), where some of them differ by member."""
-            found = np.tile(same[wanted], (n, 1))
+        def by_pair(wanted: IntArray, same: FloatArray, vary: FloatArray) -> FloatArray:
+            """Numbers of some columns, (n_pair, n_wanted), where some of them differ."""
+            found = (
+                same[:, wanted][solve] if len(same) > 1 else np.tile(same[0, wanted], (n_pair, 1))
+            )
             place = at_column[wanted]
             found[:, place >= 0] = vary[:, place[place >= 0]]
             return found
 
-        state_slope = np.where(given, by_member(into, d, d_vary), 0.0)
-        capacity_slope[:, self._has_column] += by_member(self._capacity_columns, d, d_vary)
-        lower = by_member(into, first.col_lower, now.col_lower)
-        upper = by_member(into, first.col_upper, now.col_upper)
-        return self._assembled(
+        given, into = table.given, table.into
+        state_slope = np.where(given, by_pair(into, d, d_vary), 0.0)
+        capacity_slope[:, self._has_column] += by_pair(self._capacity_columns, d, d_vary)
+        cuts = self._assembled(
             members,
-            intercept,
+            np.where(is_valid, intercept, -np.inf),
             state_slope,
             capacity_slope,
-            np.where(given, lower, 0.0),
-            np.where(given, upper, 0.0),
+            np.where(given, by_pair(into, first.col_lower[None, :], now.col_lower), 0.0),
+            np.where(given, by_pair(into, first.col_upper[None, :], now.col_upper), 0.0),
             now.scale,
-            group,
+            groups,
             size,
         )
+        return cuts, is_valid
 
     @property
     def table(self) -> MemberTable | None:
@@ -673,8 +434,8 @@ class DualBound:
         state_lower: FloatArray,
         state_upper: FloatArray,
         scale: FloatArray,
-        group: int,
-        size: float,
+        group: int | IntArray,
+        size: float | FloatArray,
     ) -> CutBatch:
         """Scales, moves small slopes into the intercept, lowers for rounding."""
         shift = ROUNDING_SHIFT * size
@@ -695,8 +456,24 @@ class DualBound:
             (intercept - shift) / scale,
             state_slope / scale[:, None],
             capacity_slope / scale[:, None],
-            np.full(len(members), group, dtype=np.int64),
+            np.broadcast_to(np.asarray(group, dtype=np.int64), (len(members),)),
         )
+
+
+@dataclass(frozen=True)
+class ChildMultipliers:
+    """Multipliers of children's cuts, one after the other.
+
+    pair (n,) which cut each counts in, ascending; exit, pi, intercept (n,); state_slope (n,
+    n_state), capacity_slope (n, n_capacity) of the child's cut
+    """
+
+    pair: IntArray
+    exit: IntArray
+    pi: FloatArray
+    intercept: FloatArray
+    state_slope: FloatArray
+    capacity_slope: FloatArray
 
 
 @dataclass(frozen=True)

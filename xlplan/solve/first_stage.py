@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 
 from xlplan.model.linear_program import LinearProgram
 from xlplan.model.value_graph import Root, ValueGraph
-from xlplan.solve.cuts import CutPool
+from xlplan.solve.cut_pool import CutPool
 from xlplan.solve.highs import KeptModel, solve_program
 from xlplan.solve.tables import GraphTables
 

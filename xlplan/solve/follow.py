@@ -23,7 +23,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from xlplan.model.value_graph import ValueGraph
-from xlplan.solve.cuts import CutBatch
+from xlplan.solve.cut_pool import CutBatch
 from xlplan.solve.member_cache import MemberCache
 from xlplan.solve.node_solver import NodeRequest, NodeSolution
 from xlplan.solve.result import CostEstimate

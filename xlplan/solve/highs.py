@@ -151,8 +151,15 @@ class KeptModel:
 
     def set_row_coefficients(self, row: int, columns: IntArray, value: FloatArray) -> None:
         """New coefficients in one row; the basis stays valid, unlike after deleting the row."""
-        for column, coefficient in zip(columns, value, strict=True):
-            self._highs.changeCoeff(row, int(column), float(coefficient))
+        self.set_coefficients(np.full(len(columns), row), columns, value)
+
+    def set_coefficients(self, rows: IntArray, columns: IntArray, value: FloatArray) -> None:
+        """New coefficients, one by one: HiGHS has no call for many."""
+        change = self._highs.changeCoeff
+        for row, column, number in zip(
+            rows.tolist(), columns.tolist(), value.tolist(), strict=True
+        ):
+            change(row, column, number)
 
     def add_rows(
         self,

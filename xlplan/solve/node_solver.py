@@ -10,14 +10,15 @@ from __future__ import annotations
 import logging
 from collections import Counter
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from xlplan.base.memory import resident_bytes
 from xlplan.model.value_graph import Family, ValueGraph
-from xlplan.solve.cuts import CutBatch, CutPool, DualBound
+from xlplan.solve.cut_pool import CutBatch, CutPool, joined
+from xlplan.solve.cuts import DualBound
 from xlplan.solve.highs import SolverFailureError
 from xlplan.solve.member_cache import MemberCache
 from xlplan.solve.node import DUAL_TOLERANCE, NodeModel, NodeOutcome
@@ -84,7 +85,7 @@ class NodeSolution:
     out_states: FloatArray
     y: FloatArray | None
     measured: object
-    cuts: tuple[CutBatch, ...]
+    cuts: tuple[CutBatch, ...] = ()
     has_failed: bool = False
 
 
@@ -131,57 +132,101 @@ class NodeSolver:
         return self._models[key]
 
     def solve(self, request: NodeRequest, measure: Measure | None = None) -> NodeSolution:
-        """One node. The pools are left as they are: new cuts come back in the solution."""
-        i_family, i_member = request.family, request.member
-        model = self.model(i_family, request.replica)
-        self.counts["node solve"] += 1
-        state = clip_state(self.tables.families[i_family], request.state, request.capacity)
-        try:
-            outcome = model.solve(
-                i_member, state, request.capacity, request.cut_tolerance, request.second_cost
+        """One node."""
+        return self.solve_run([request], measure)[0]
+
+    def solve_run(
+        self, requests: Sequence[NodeRequest], measure: Measure | None = None
+    ) -> list[NodeSolution]:
+        """Nodes of one kept model, one after the other; their cuts are made together.
+
+        The pools are left as they are: new cuts come back with the solutions, all of them with the
+        first one that has any.
+        """
+        i_family, family = requests[0].family, self.graph.families[requests[0].family]
+        model, table = self.model(i_family, requests[0].replica), self.tables.families[i_family]
+        solutions: list[NodeSolution] = []
+        states: list[FloatArray] = []
+        asked: list[int] = []
+        outcomes: list[NodeOutcome] = []
+        for request in requests:
+            self.counts["node solve"] += 1
+            state = clip_state(table, request.state, request.capacity)
+            states.append(state)
+            try:
+                outcome = model.solve(
+                    request.member,
+                    state,
+                    request.capacity,
+                    request.cut_tolerance,
+                    request.second_cost,
+                )
+            except SolverFailureError as failure:
+                _LOG.warning("member %d: %s", request.member, failure)
+                solutions.append(self._failed(request, state))
+                continue
+            if request.group >= 0:
+                asked.append(len(solutions))
+                outcomes.append(outcome)
+            solutions.append(
+                NodeSolution(
+                    value=outcome.value,
+                    cost=outcome.cost,
+                    theta=outcome.theta,
+                    out_states=outcome.out_states,
+                    y=outcome.y if request.wants_primal else None,
+                    measured=None
+                    if measure is None
+                    else measure(family, request.member, outcome.y),
+                )
             )
-            cuts = self._checked_cuts(model, outcome, request, state)
-        except SolverFailureError as failure:
-            _LOG.warning("member %d: %s", i_member, failure)
-            return self._failed(request, state)
-        family = self.graph.families[i_family]
-        measured = measure(family, i_member, outcome.y) if measure is not None else None
-        return NodeSolution(
-            value=outcome.value,
-            cost=outcome.cost,
-            theta=outcome.theta,
-            out_states=outcome.out_states,
-            y=outcome.y if request.wants_primal else None,
-            measured=measured,
-            cuts=cuts,
-        )
+        if asked:
+            cuts = self._checked_cuts(
+                model, outcomes, [requests[i] for i in asked], np.array([states[i] for i in asked])
+            )
+            solutions[asked[0]] = replace(solutions[asked[0]], cuts=(cuts,))
+        return solutions
 
     def _checked_cuts(
-        self, model: NodeModel, outcome: NodeOutcome, request: NodeRequest, state: FloatArray
-    ) -> tuple[CutBatch, ...]:
-        """Cuts of the node and of others by sharing; a cut far off the objective is counted."""
-        if request.group < 0:
-            return ()
-        cut = model.cut_from(outcome, request.member, request.group)
-        reached = cut.take(np.arange(1)).values(state[None, :], request.capacity)[0]
-        if abs(reached - outcome.value) > DUAL_TOLERANCE * (1.0 + abs(outcome.value)):
-            self.counts["cut not tight"] += 1
-            _LOG.debug(
-                "%s, member %d: cut gives %r, the solver %r",
-                model.family.name, request.member, reached, outcome.value,
-            )  # fmt: skip
+        self,
+        model: NodeModel,
+        outcomes: Sequence[NodeOutcome],
+        requests: Sequence[NodeRequest],
+        states: FloatArray,
+    ) -> CutBatch:
+        """Cuts of nodes and of others by sharing; a cut far off the objective is counted."""
+        cuts, places = model.cuts_from(
+            outcomes, [r.member for r in requests], [r.group for r in requests]
+        )
+        capacities = np.array([r.capacity for r in requests])
+        reached = (
+            cuts.intercept[places]
+            + np.einsum("ij,ij->i", cuts.state_slope[places], states)
+            + np.einsum("ij,ij->i", cuts.capacity_slope[places], capacities)
+        )
+        values = np.array([o.value for o in outcomes])
+        loose = np.flatnonzero(np.abs(reached - values) > DUAL_TOLERANCE * (1.0 + np.abs(values)))
+        if len(loose):
+            self.counts["cut not tight"] += len(loose)
+            for i in loose.tolist():
+                _LOG.debug(
+                    "%s, member %d: cut gives %r, the solver %r",
+                    model.family.name, requests[i].member, reached[i], values[i],
+                )  # fmt: skip
             model.forget_basis()
-        share = request.share
-        if share is None or not len(share.members):
-            return (cut,)
-        shared = model.shared_cuts(outcome, share.members, request.group)
-        if shared is None:
-            return (cut,)
-        places = np.searchsorted(share.members, shared.member)
-        known = share.known[places]
-        gained = shared.values(share.states[places], request.capacity) - known
-        better = np.flatnonzero(gained > SHARE_MARGIN * np.abs(known))
-        return (cut, shared.take(better)) if len(better) else (cut,)
+        batches = [cuts]
+        for outcome, request in zip(outcomes, requests, strict=True):
+            share = request.share
+            if share is None or not len(share.members):
+                continue
+            shared = model.shared_cuts(outcome, share.members, request.group)
+            if shared is None:
+                continue
+            at = np.searchsorted(share.members, shared.member)
+            known = share.known[at]
+            gained = shared.values(share.states[at], request.capacity) - known
+            batches.append(shared.take(np.flatnonzero(gained > SHARE_MARGIN * np.abs(known))))
+        return joined(batches)
 
     def _failed(self, request: NodeRequest, state: FloatArray) -> NodeSolution:
         self.counts["failed node"] += 1
@@ -194,7 +239,6 @@ class NodeSolver:
             out_states=np.zeros((0, len(state))),
             y=None,
             measured=None,
-            cuts=(),
             has_failed=True,
         )
 

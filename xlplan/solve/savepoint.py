@@ -20,7 +20,7 @@ from pathlib import Path
 import numpy as np
 from numpy.typing import NDArray
 
-from xlplan.solve.cuts import CutBatch, CutPool
+from xlplan.solve.cut_pool import CutBatch, CutPool
 
 _LOG = logging.getLogger(__name__)
 

@@ -14,21 +14,28 @@ from collections.abc import Callable, Sequence
 from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
 from concurrent.futures.process import BrokenProcessPool
 from dataclasses import dataclass, replace
+from itertools import chain
 
 from xlplan.base.memory import resident_bytes
 from xlplan.model.value_graph import Family, ValueGraph
-from xlplan.solve.cuts import CutBatch, CutPool
+from xlplan.solve.cut_pool import CutBatch, CutPool
 from xlplan.solve.member_cache import MemberCache
 from xlplan.solve.node_solver import Measure, NodeRequest, NodeSolution, NodeSolver
 from xlplan.solve.tables import GraphTables
 
 _LOG = logging.getLogger(__name__)
 
+RUN = 48
+"""Requests of one kept model that are solved together: their cuts are made in one go."""
+
 CHUNK = 48
 """Requests sent at once: long enough to outweigh the sending, short enough to be stopped."""
 
 POLL_S = 0.2
 """Seconds between looks at whether to stop."""
+
+Runs = list[list[int]]
+"""Places of requests, those that are solved together in one list."""
 
 _SOLVER: NodeSolver | None = None
 
@@ -41,12 +48,15 @@ def _start_worker(graph: ValueGraph, tables: GraphTables, cache_bytes: int) -> N
 
 
 def _solve_chunk(
-    cuts: Sequence[CutBatch], requests: Sequence[NodeRequest], measure: Measure | None
+    cuts: Sequence[CutBatch], runs: Sequence[Sequence[NodeRequest]], measure: Measure | None
 ) -> tuple[list[NodeSolution], dict[str, float]]:
     """Runs in a worker: takes the cuts in, then solves in the given order."""
     assert _SOLVER is not None
     _SOLVER.add_cuts(cuts)
-    return [_SOLVER.solve(request, measure) for request in requests], _SOLVER.all_counts()
+    solutions: list[NodeSolution] = []
+    for run in runs:
+        solutions += _SOLVER.solve_run(run, measure)
+    return solutions, _SOLVER.all_counts()
 
 
 @dataclass
@@ -108,6 +118,24 @@ class Workers:
             return self._solve_here(self._local, requests, measure, should_stop)
         return self._solve_there(requests, measure, should_stop)
 
+    def _runs(self, places: Sequence[int], requests: Sequence[NodeRequest]) -> Runs:
+        """Places in runs that one kept model solves together.
+
+        The same for any number of workers, for a model's history depends on its runs. A large
+        program is solved by itself, so that a stop need not wait long.
+        """
+        runs: Runs = []
+        last = None
+        for place in places:
+            request = requests[place]
+            key = (request.family, request.replica)
+            most = RUN if self.graph.families[request.family].is_expanded else 1
+            if key != last or len(runs[-1]) >= most:
+                runs.append([])
+            runs[-1].append(place)
+            last = key
+        return runs
+
     def _news(self, worker: int) -> list[CutBatch]:
         """Cuts that a worker has not seen."""
         known = self._known[worker]
@@ -124,11 +152,11 @@ class Workers:
     ) -> list[NodeSolution | None]:
         solver.add_cuts(self._news(0))
         solutions: list[NodeSolution | None] = []
-        for request in requests:
+        for run in self._runs(range(len(requests)), requests):
             if should_stop is not None and should_stop():
                 solutions += [None] * (len(requests) - len(solutions))
                 break
-            solutions.append(solver.solve(request, measure))
+            solutions += solver.solve_run([requests[i] for i in run], measure)
         self._counts[0] = solver.all_counts()
         return solutions
 
@@ -141,17 +169,14 @@ class Workers:
         places: list[list[int]] = [[] for _ in range(self.n_worker)]
         for place, request in enumerate(requests):
             places[self.owner(request)].append(place)
-        pending: dict[Future[tuple[list[NodeSolution], dict[str, float]]], tuple[int, list[int]]]
+        pending: dict[Future[tuple[list[NodeSolution], dict[str, float]]], tuple[int, Runs]]
         pending = {}
         for worker, mine in enumerate(places):
-            for chunk in (mine[i : i + CHUNK] for i in range(0, len(mine), CHUNK)):
-                pending[self._submit(worker, [requests[i] for i in chunk], measure)] = (
-                    worker,
-                    chunk,
-                )
+            for chunk in _chunks(self._runs(mine, requests)):
+                pending[self._submit(worker, chunk, requests, measure)] = (worker, chunk)
         solutions: list[NodeSolution | None] = [None] * len(requests)
         is_stopping = False
-        broken: list[tuple[int, list[int]]] = []
+        broken: list[tuple[int, Runs]] = []
         while pending:
             done, _ = wait(pending, timeout=POLL_S, return_when=FIRST_COMPLETED)
             for future in done:
@@ -163,7 +188,7 @@ class Workers:
                 except BrokenProcessPool:
                     broken.append((worker, chunk))
                     continue
-                for place, solution in zip(chunk, found, strict=True):
+                for place, solution in zip(chain.from_iterable(chunk), found, strict=True):
                     solutions[place] = solution
             if not is_stopping and should_stop is not None and should_stop():
                 is_stopping = True
@@ -175,7 +200,7 @@ class Workers:
 
     def _solve_again(
         self,
-        broken: list[tuple[int, list[int]]],
+        broken: list[tuple[int, Runs]],
         requests: Sequence[NodeRequest],
         measure: Measure | None,
         solutions: list[NodeSolution | None],
@@ -190,9 +215,9 @@ class Workers:
             self._executors[worker] = None
             self._known[worker] = [0] * len(self.pools)
         for worker, chunk in sorted(broken, key=lambda item: item[1][0]):
-            future = self._submit(worker, [requests[i] for i in chunk], measure)
+            future = self._submit(worker, chunk, requests, measure)
             found, self._counts[worker] = future.result()
-            for place, solution in zip(chunk, found, strict=True):
+            for place, solution in zip(chain.from_iterable(chunk), found, strict=True):
                 solutions[place] = solution
 
     def _part(self, worker: int) -> ValueGraph:
@@ -211,7 +236,11 @@ class Workers:
         return replace(self.graph, families=families)
 
     def _submit(
-        self, worker: int, requests: list[NodeRequest], measure: Measure | None
+        self,
+        worker: int,
+        chunk: Runs,
+        requests: Sequence[NodeRequest],
+        measure: Measure | None,
     ) -> Future[tuple[list[NodeSolution], dict[str, float]]]:
         if self._executors[worker] is None:
             self._executors[worker] = ProcessPoolExecutor(
@@ -223,7 +252,8 @@ class Workers:
             )
         executor = self._executors[worker]
         assert executor is not None
-        return executor.submit(_solve_chunk, self._news(worker), requests, measure)
+        runs = [[requests[i] for i in run] for run in chunk]
+        return executor.submit(_solve_chunk, self._news(worker), runs, measure)
 
     def counts(self) -> dict[str, float]:
         """Counted events of all workers."""
@@ -248,6 +278,19 @@ class Workers:
             if executor is not None:
                 executor.shutdown(wait=True, cancel_futures=True)
                 self._executors[i] = None
+
+
+def _chunks(runs: Runs) -> list[Runs]:
+    """Whole runs, put together up to the size of a chunk."""
+    chunks: list[Runs] = []
+    n = 0
+    for run in runs:
+        if not chunks or n + len(run) > CHUNK:
+            chunks.append([])
+            n = 0
+        chunks[-1].append(run)
+        n += len(run)
+    return chunks
 
 
 def _share_out(weights: dict[tuple[int, int], float], n_worker: int) -> dict[tuple[int, int], int]:
