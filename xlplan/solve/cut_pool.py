@@ -97,6 +97,7 @@ class CutPool:
         self._level = np.zeros(64)
         self._level_capacity: FloatArray | None = None
         self._n_level = 0
+        self._last_group = -1
         # Keys in ascending order and where they stand; the last cuts may not be among them yet.
         self._order = np.zeros(0, dtype=np.int64)
         self._sorted_key = np.zeros(0, dtype=np.int64)
@@ -135,7 +136,9 @@ class CutPool:
     def add(self, batch: CutBatch) -> None:
         """Appends cuts; a second one of the same member and group is ignored."""
         key = _keys(batch.member, batch.group)
-        is_fresh = np.isfinite(batch.intercept) & (self._find(key) < 0)
+        is_fresh = np.isfinite(batch.intercept)
+        if len(key) and int(batch.group.min()) <= self._last_group:
+            is_fresh &= self._find(key) < 0
         if len(key) > 1:
             first = np.unique(key, return_index=True)[1]
             if len(first) < len(key):
@@ -156,6 +159,7 @@ class CutPool:
         self._intercept[part] = batch.intercept
         self._state_slope[part] = batch.state_slope
         self._capacity_slope[part] = batch.capacity_slope
+        self._last_group = max(self._last_group, int(batch.group.max(initial=-1)))
         self.n = end
 
     def since(self, n_known: int) -> CutBatch:

@@ -158,6 +158,7 @@ class DualBound:
         self._cache = cache
         self._nest = _nest_table(cache, i_family, family)
         self._table: MemberTable | None = None
+        self._is_looked_at = False
 
     @property
     def is_nested(self) -> bool:
@@ -287,7 +288,7 @@ class DualBound:
         table = self.table
         if table is None:
             return None
-        now, first = table.numbers(members), table.first
+        first = table.first
         n_pair = len(members)
         # Rows that are the same for all members.
         at, rows = np.nonzero(pi)
@@ -307,10 +308,11 @@ class DualBound:
         size_const = np.bincount(at[same], np.abs(row_term), n_solve)
         # Rows that differ, of those that any solve uses.
         used = np.unique(place[~same])
+        now = table.numbers(members, used)
         by_row = pi[:, table.rows[used]][solve]
-        side = now.row_lower[:, used]
+        side = now.row_lower
         if now.row_upper is not now.row_lower:
-            side = np.where(by_row > 0.0, side, now.row_upper[:, used])
+            side = np.where(by_row > 0.0, side, now.row_upper)
         with np.errstate(invalid="ignore"):
             row_vary = np.where(by_row != 0.0, side * by_row, 0.0)
         is_valid = np.isfinite(row_vary).all(axis=1)
@@ -399,11 +401,12 @@ class DualBound:
     @property
     def table(self) -> MemberTable | None:
         """What differs between the members; None where ``cuts_of`` cannot be used."""
-        if len(self.family.exit_gate) > MANY_EXITS:
-            return None
-        if self._table is None:
-            self._table = MemberTable(self._cache, self.i_family, self.family)
-        return self._table if self._table.has_same_inputs else None
+        if not self._is_looked_at:
+            self._is_looked_at = True
+            if len(self.family.exit_gate) <= MANY_EXITS:
+                table = MemberTable(self._cache, self.i_family, self.family)
+                self._table = table if table.has_same_inputs else None
+        return self._table
 
     def matrix_of(self, member: Member) -> RowMatrix:
         """The matrix with one member's patch written into it."""

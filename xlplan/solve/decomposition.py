@@ -142,6 +142,7 @@ class Engine:
         self._first_stage = FirstStage(graph, self.tables)
         self._follower = Follower(graph, self.tables, self._cache)
         self._root_members = {(r.family, r.member) for r in graph.roots}
+        self._root_families = {r.family for r in graph.roots}
         self._workers = Workers(
             graph, self.tables, self.pools, workers, self._work_weights(), self._cache
         )
@@ -298,10 +299,9 @@ class Engine:
 
     def _placed(self, request: NodeRequest) -> NodeRequest:
         """Chooses the kept model: the roots' own is left to them."""
-        if (request.family, request.member) in self._root_members:
-            return replace(request, replica=0)
-        if not any(family == request.family for family, _ in self._root_members):
-            return replace(request, replica=0)
+        is_root = (request.family, request.member) in self._root_members
+        if is_root or request.family not in self._root_families:
+            return request if request.replica == 0 else replace(request, replica=0)
         # Equal members go to the same model, whatever else is in the batch.
         return replace(request, replica=1 + request.member % self.options.n_replica)
 

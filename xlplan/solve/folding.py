@@ -71,6 +71,7 @@ class Folding:
         # Rows D without their own block: what is left when the inverse is applied.
         self._early, self._late = np.flatnonzero(~self._is_late), np.flatnonzero(self._is_late)
         self._rest = [self._rest_of(places) for places in (self._early, self._late)]
+        self._parts = [self._inverse.part(self._is_late == is_late) for is_late in (False, True)]
 
     def __len__(self) -> int:
         return len(self.row)
@@ -88,7 +89,7 @@ class Folding:
             blocks[block_of[p]][p - begin, o - begin] = v
         return blocks
 
-    def _rest_of(self, places: IntArray) -> tuple[IntArray, IntArray, FloatArray]:
+    def _rest_of(self, places: IntArray) -> tuple[NDArray[np.int32], NDArray[np.int32], FloatArray]:
         """Entries of some rows ``D`` outside their own block: (position in places, column, value).
 
         Folded columns of an earlier stage are among them.
@@ -97,7 +98,7 @@ class Folding:
         place = np.repeat(np.arange(len(places)), np.diff(first))
         other = self._fold_of_column[index]
         own = (other >= 0) & (self._is_late[np.maximum(other, 0)] == self._is_late[places][place])
-        return place[~own], index[~own], value[~own]
+        return place[~own].astype(np.int32), index[~own].astype(np.int32), value[~own]
 
     def complete(self, y: FloatArray, side: FloatArray) -> None:
         """Fills the folded columns of a point.
@@ -109,12 +110,13 @@ class Folding:
         """
         found = np.zeros(len(self))
         left = np.zeros(len(self))
-        for is_late, places, (place, index, value) in zip(
-            (False, True), (self._early, self._late), self._rest, strict=True
+        for blocks, places, (place, index, value) in zip(
+            self._parts, (self._early, self._late), self._rest, strict=True
         ):
             if len(places):
                 left[places] = side[places] - np.bincount(place, value * y[index], len(places))
-                self._inverse.times(self._is_late == is_late, left, found)
+                for inverse, inside in blocks:
+                    found[inside] = left[inside] @ inverse.T
                 y[self.column[places]] = found[places]
 
     def expand_rows(self, rows: IntArray) -> Expanded:
@@ -209,13 +211,14 @@ class _Inverse:
             self._group[places.ravel()] = i
             self._begin[places.ravel()] = np.repeat(at, len(inverse))
 
-    def times(self, is_wanted: NDArray[np.bool_], right: FloatArray, out: FloatArray) -> None:
-        """``out = W @ right`` in the wanted blocks, all positions among the folds."""
+    def part(self, is_wanted: NDArray[np.bool_]) -> list[tuple[FloatArray, IntArray]]:
+        """Inverses of the wanted blocks, and the positions (n_block, n) of those that have each."""
+        parts = []
         for alike in self._alike:
             wanted = is_wanted[alike.starts]
             if wanted.any():
-                places = alike.places if wanted.all() else alike.places[wanted]
-                out[places] = right[places] @ alike.inverse.T
+                parts.append((alike.inverse, alike.places[wanted]))
+        return parts
 
     def row_times(self, places: IntArray, left: FloatArray) -> tuple[IntArray, FloatArray]:
         """``left @ W[places]`` as positions and values."""

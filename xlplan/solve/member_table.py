@@ -94,9 +94,9 @@ class ShiftedSeries:
         """Numbers kept."""
         return len(self.flat)
 
-    def take(self, members: IntArray) -> FloatArray:
-        """Rows of some members, (n, n_column)."""
-        taken: FloatArray = self.flat[self.place[None, :] + members[:, None]]
+    def take(self, members: IntArray, columns: IntArray | slice = slice(None)) -> FloatArray:
+        """Rows of some members, (n, n_column), or some columns of them."""
+        taken: FloatArray = self.flat[self.place[columns][None, :] + members[:, None]]
         return taken
 
     def one(self, member: int) -> FloatArray:
@@ -179,15 +179,15 @@ class MemberTable:
         self._offset = np.array([m.offset for m in taken])
         self._scale = np.array([m.scale for m in taken])
 
-    def numbers(self, members: IntArray) -> Numbers:
-        """Numbers of some members, in their order, with a first axis."""
-        row_lower = self._row_lower.take(members)
+    def numbers(self, members: IntArray, rows: IntArray) -> Numbers:
+        """Numbers of some members, in their order, with a first axis; rows (positions) alone."""
+        row_lower = self._row_lower.take(members, rows)
         return Numbers(
             self._cost.take(members),
             self._col_lower.take(members),
             self._col_upper.take(members),
             row_lower,
-            row_lower if self._is_equal else self._row_upper.take(members),
+            row_lower if self._is_equal else self._row_upper.take(members, rows),
             self._patch_value.take(members),
             self._exit_weight[members],
             self._exit_child[members],

@@ -245,7 +245,7 @@ class NodeModel:
             upper[moving] = now.col_upper[self._moving_column]
         lower[self._capacity_places] = upper[self._capacity_places] = capacity[self._has_capacity]
         lower[self._in_places] = upper[self._in_places] = state[self._is_given]
-        moved = np.flatnonzero((lower != self._lower) | (upper != self._upper))
+        moved = ((lower != self._lower) | (upper != self._upper)).nonzero()[0]
         self._model.set_col_bounds(moved, lower[moved], upper[moved])
         self._lower, self._upper = lower, upper
         self._children.set_capacity(capacity)
@@ -276,7 +276,7 @@ class NodeModel:
         cost = self._cost.copy()
         cost[self._moving] = now.cost[self._moving_column]
         cost[self.n_kept :] = numbers.exit_weight
-        moved = np.flatnonzero(cost != self._cost)
+        moved = (cost != self._cost).nonzero()[0]
         self._model.set_costs(moved, cost[moved])
         self._cost = cost
         was_free = now.is_fold_free
@@ -293,7 +293,7 @@ class NodeModel:
     def _patch(self, value: FloatArray) -> None:
         """Matrix entries that differ between members."""
         patch = self.family.patch
-        changed = np.flatnonzero(self._matrix.value[patch] != value)
+        changed = (self._matrix.value[patch] != value).nonzero()[0]
         if not len(changed):
             return
         row = self._rows.of_program[self.bound.patch_row[changed]]
@@ -336,7 +336,7 @@ class NodeModel:
         Where many are violated most of them follow from the worst ones (the voltage at the end of
         a line from that in its middle), and every row makes the later solves slower.
         """
-        found = np.flatnonzero((activity > high) | (activity < low))
+        found = ((activity > high) | (activity < low)).nonzero()[0]
         if len(found):
             found = found[place[found] < 0]
         if len(found) <= FEW_ROWS:

@@ -13,13 +13,13 @@ made, so that it holds at the other value of the gate too.
 from __future__ import annotations
 
 from collections import Counter
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
 
 from xlplan.model.value_graph import ValueGraph
-from xlplan.solve.cut_pool import CutPool
+from xlplan.solve.cut_pool import CutPool, SortedCuts
 from xlplan.solve.cuts import ExitMultipliers, lift_amount
 from xlplan.solve.highs import KeptModel
 from xlplan.solve.member_table import Numbers
@@ -54,6 +54,8 @@ class _CutRows:
     state_slope: FloatArray
     capacity_slope: FloatArray
     group: IntArray
+    position: IntArray
+    """Where the cut stands in the pool of its exit's child."""
 
     @staticmethod
     def empty(n: int, n_state: int, n_capacity: int) -> _CutRows:
@@ -65,12 +67,23 @@ class _CutRows:
             state_slope=np.zeros((n, n_state)),
             capacity_slope=np.zeros((n, n_capacity)),
             group=np.full(n, -1, dtype=np.int64),
+            position=np.full(n, -1, dtype=np.int64),
         )
 
     def append(self, other: _CutRows) -> None:
         """Puts rows behind."""
         for name in vars(self):
             setattr(self, name, np.concatenate([getattr(self, name), getattr(other, name)]))
+
+
+@dataclass(frozen=True)
+class _Segments:
+    """Targets that have cuts, where these begin and end, and the target of each cut."""
+
+    target: IntArray
+    start: IntArray
+    end: IntArray
+    by_cut: NDArray[np.int32]
 
 
 @dataclass(frozen=True)
@@ -85,6 +98,21 @@ class _Target:
     exits: IntArray
     place: IntArray
     members: IntArray
+    _known: list[tuple[IntArray, _Segments]] = field(default_factory=list)
+
+    def segments(self, cuts: SortedCuts) -> _Segments:
+        """Where the cuts of the targets lie; kept until there are other cuts."""
+        if not self._known or self._known[0][0] is not cuts.order:
+            begin, end = cuts.start[self.members], cuts.start[self.members + 1]
+            has_cuts = np.flatnonzero(end > begin)
+            by_cut = np.zeros(len(cuts.order), dtype=np.int32)
+            start, stop = begin[has_cuts], end[has_cuts]
+            if len(has_cuts):
+                # Cuts of members between two targets count with the one before, and are left out.
+                reach = np.append(start[1:], stop[-1])
+                by_cut[start[0] : reach[-1]] = np.repeat(has_cuts, reach - start)
+            self._known[:] = [(cuts.order, _Segments(has_cuts, start, stop, by_cut))]
+        return self._known[0][1]
 
 
 class ChildRows:
@@ -117,6 +145,7 @@ class ChildRows:
         self._model, self._out_places, self._n_kept = model, out_places, n_kept
         self._n_capacity = len(graph.capacity_lower)
         self._capacity = np.full(self._n_capacity, np.nan)
+        self._asked = self._capacity
         self._cuts = _CutRows.empty(0, self.n_state, self._n_capacity)
         self._known: set[Choice] = set()
         self._is_gated = np.array([bool(g) for g in family.exit_gate], dtype=bool)
@@ -134,8 +163,9 @@ class ChildRows:
 
     def set_capacity(self, capacity: FloatArray) -> None:
         """Moves the right sides to other capacities."""
-        if np.array_equal(capacity, self._capacity):
+        if capacity is self._asked or np.array_equal(capacity, self._capacity):
             return
+        self._asked = capacity
         self._capacity = capacity.copy()
         for e in np.flatnonzero(self._is_gated):
             self._gate[e] = capacity[list(self._gates[e])].sum()
@@ -164,6 +194,7 @@ class ChildRows:
             if not positions:
                 rows = self._cuts.row[slots]
                 self._cuts.group[slots] = NO_CUT
+                self._cuts.position[slots] = -1
                 self._model.set_row_bounds(
                     rows, np.full(len(rows), -np.inf), np.full(len(rows), np.inf)
                 )
@@ -249,34 +280,35 @@ class ChildRows:
             if not pool.n or not is_active.any():
                 continue
             cuts = pool.by_member(self._capacity)
+            segments = target.segments(cuts)
             n_target = len(target.members)
             at_state = np.zeros((n_target, self.n_state))
             at_state[target.place] = states[exits]
-            is_wanted = np.zeros(n_target, dtype=bool)
-            is_wanted[target.place[is_active]] = True
-            begin, end = cuts.start[target.members], cuts.start[target.members + 1]
-            wanted = np.flatnonzero(is_wanted & (end > begin))
-            if not len(wanted):
-                continue
             # What is wanted lies together: a plan from some period on needs the later ones.
-            first, last = int(begin[wanted[0]]), int(end[wanted[-1]])
-            members = np.arange(target.members[wanted[0]], target.members[wanted[-1]] + 1)
-            counts = cuts.start[members + 1] - cuts.start[members]
-            place = np.searchsorted(target.members, members)
-            by_cut = np.repeat(place, counts)
+            wanted = target.place[is_active]
+            k = slice(*np.searchsorted(segments.target, [wanted.min(), wanted.max() + 1]).tolist())
+            asked = segments.target[k]
+            if not len(asked):
+                continue
+            first, last = int(segments.start[k][0]), int(segments.end[k][-1])
+            by_cut = segments.by_cut[first:last]
             value = cuts.level[first:last].copy()
             for i in range(self.n_state):
-                value += cuts.state_slope[first:last, i] * at_state[by_cut, i]
-            start = cuts.start[members[counts > 0]] - first
-            highest = np.maximum.reduceat(value, start)
-            is_top = np.flatnonzero(value == np.repeat(highest, counts[counts > 0]))
-            # The oldest at ties.
-            oldest = cuts.order[first + is_top[np.searchsorted(is_top, start)]]
-            top, position = np.full(n_target, -np.inf), np.full(n_target, -1, dtype=np.int64)
-            held = place[counts > 0]
-            is_target = np.isin(members[counts > 0], target.members)
-            top[held[is_target]], position[held[is_target]] = highest[is_target], oldest[is_target]
+                value += cuts.state_slope[first:last, i] * at_state[:, i][by_cut]
+            start = segments.start[k] - first
+            top = np.full(n_target, -np.inf)
+            end = segments.end[k] - first
+            # Every second part is what lies between two targets.
+            parts = np.column_stack([start, end]).ravel()[:-1]
+            top[asked] = np.maximum.reduceat(value, parts)[::2]
+            position = np.full(n_target, -1, dtype=np.int64)
             above = is_active & (top[target.place] > best[exits])
+            missed = np.zeros(n_target, dtype=bool)
+            missed[target.place[above]] = True
+            for j in np.flatnonzero(missed[asked]).tolist():
+                # The oldest at ties.
+                part = value[start[j] : end[j]]
+                position[asked[j]] = cuts.order[first + start[j] + int(np.argmax(part))]
             for e, k in zip(exits[above].tolist(), target.place[above].tolist(), strict=True):
                 reach = top[k]
                 if 0.0 < self._gate[e] < 1.0:
@@ -303,7 +335,7 @@ class ChildRows:
     ) -> list[Choice]:
         """Like ``_violated_fixed`` for children that change with the member."""
         chosen = []
-        for e in np.flatnonzero(now.exit_weight > 0.0).tolist():
+        for e in (now.exit_weight > 0.0).nonzero()[0].tolist():
             i_child, i_member = now.exit_child[e].tolist()
             if self._is_gated[e]:
                 raise NotImplementedError("a gated exit whose children differ between members")
@@ -362,6 +394,7 @@ class ChildRows:
             rows.state_slope[i] = pool.state_slope[position]
             rows.capacity_slope[i] = pool.capacity_slope[position]
             rows.group[i] = pool.group_at(position)
+            rows.position[i] = position
             if self._is_gated[e]:
                 lift = self._lift(e, i_child, position, bool(is_gated), now)
                 gate = list(self._gates[e])
@@ -392,6 +425,7 @@ class ChildRows:
         cuts.intercept[slot] = pool.intercept[position]
         cuts.capacity_slope[slot] = pool.capacity_slope[position]
         cuts.group[slot] = pool.group_at(position)
+        cuts.position[slot] = position
 
     def _set_slot_sides(self, slots: list[int]) -> None:
         cuts = self._cuts
@@ -403,13 +437,13 @@ class ChildRows:
         n_used = 0
         for e, i_child, position, _ in chosen:
             slots = self._slots[e]
-            groups = self._cuts.group[slots].tolist()
-            if self.pools[i_child].group_at(position) in groups:
+            held = self._cuts.position[slots].tolist()
+            if position in held:
                 continue  # it is there: what is left is the solver's tolerance
             is_loose = row_dual[self._cuts.row[slots]] <= 0.0 if slots else []
             loose = [slot for slot, is_so in zip(slots, is_loose, strict=True) if is_so]
             # Of those the ones that repeat a cut come first.
-            idle = [s for s in loose if groups.count(int(self._cuts.group[s])) > 1]
+            idle = [s for s in loose if held.count(int(self._cuts.position[s])) > 1]
             # One cut per component of the state can be tight at once, beside the first ones.
             free = idle or (loose if len(slots) >= FIRST_SLOTS + self.n_state else [])
             if free:
@@ -433,7 +467,7 @@ class ChildRows:
         cuts = self._cuts
         self._last_out = states
         pi = row_dual[cuts.row]
-        at = np.flatnonzero(pi > 0.0)
+        at = (pi > 0.0).nonzero()[0]
         at = at[now.exit_weight[cuts.exit[at]] > 0.0]
         if not self.table.is_fixed:
             at = at[cuts.group[at] != NO_CUT]
@@ -449,15 +483,13 @@ class ChildRows:
 
     def _remember(self, at: IntArray, now: Numbers) -> None:
         """Keeps which cuts were tight, for the next time that this child comes."""
+        exits, positions = self._cuts.exit[at].tolist(), self._cuts.position[at].tolist()
         tight: dict[int, set[int]] = {}
-        for e, group in zip(
-            self._cuts.exit[at].tolist(), self._cuts.group[at].tolist(), strict=True
-        ):
+        for e, position in zip(exits, positions, strict=True):
+            tight.setdefault(e, set()).add(position)
+        for e, found in tight.items():
             i_child, i_member = now.exit_child[e].tolist()
-            tight.setdefault(e, set()).add(self.pools[i_child].position_of(i_member, group))
-        for e, positions in tight.items():
-            i_child, i_member = now.exit_child[e].tolist()
-            self._slot_cuts[e, i_child, i_member] = sorted(positions)
+            self._slot_cuts[e, i_child, i_member] = sorted(found)
 
 
 def _merge_repeats(columns: IntArray, values: FloatArray) -> tuple[IntArray, FloatArray, IntArray]:
