@@ -317,7 +317,7 @@ class DualBound:
             row_vary = np.where(by_row != 0.0, side * by_row, 0.0)
         is_valid = np.isfinite(row_vary).all(axis=1)
         # Reduced costs.
-        matrix, n_col = self.matrix_of(first), len(first.cost)
+        matrix, n_col = self.matrix, len(first.cost)
         entries = matrix.entries(rows)
         counts = matrix.start[rows + 1] - matrix.start[rows]
         weights = matrix.value[entries] * np.repeat(multiplier, counts)
@@ -326,7 +326,7 @@ class DualBound:
         columns, at_column = table.columns, table.column_place
         d_vary = now.cost + (d[:, columns] - first.cost[columns])[solve]
         if len(self.patch):
-            step = pi[:, self.patch_row][solve] * (now.patch_value - first.patch_value)
+            step = pi[:, self.patch_row][solve] * (now.patch_value - self.patch_base)
             moved = np.flatnonzero(step.any(axis=0))
             places = at_column[self.patch_column[moved]]
             np.subtract.at(d_vary, (slice(None), places), step[:, moved])
@@ -407,13 +407,6 @@ class DualBound:
                 table = MemberTable(self._cache, self.i_family, self.family)
                 self._table = table if table.has_same_inputs else None
         return self._table
-
-    def matrix_of(self, member: Member) -> RowMatrix:
-        """The matrix with one member's patch written into it."""
-        if len(self.patch):
-            self.matrix.value[self.patch] = member.patch_value
-            self.patch_base = member.patch_value
-        return self.matrix
 
     def _finish(self, terms: list[_Terms], members: list[int], group: int, size: float) -> CutBatch:
         return self._assembled(

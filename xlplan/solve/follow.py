@@ -159,14 +159,24 @@ class Follower:
 
     def exits(self, i_family: int, i_member: int, capacity: FloatArray) -> Exits:
         """Exits of a node that count."""
-        member = self.cache.get(i_family, i_member)
-        index = np.flatnonzero(member.exit_weight > 0.0)
+        known = self.tables.families[i_family].exits
+        if known is not None:
+            weight, child = known.weight[i_member], known.child[i_member]
+            child_if_gated = known.child_if_gated[i_member]
+        else:
+            member = self.cache.get(i_family, i_member)
+            weight = member.exit_weight / member.scale
+            child, child_if_gated = member.exit_child, member.exit_child_if_gated
+        index = (weight > 0.0).nonzero()[0]
         gates = self.graph.families[i_family].exit_gate
-        gate = np.array([capacity[list(gates[e])].sum() if gates[e] else 0.0 for e in index])
-        child = np.where(
-            (gate > 0.5)[:, None], member.exit_child_if_gated[index], member.exit_child[index]
-        ).reshape(len(index), 2)
-        return Exits(index, member.exit_weight[index] / member.scale, child, gate)
+        gate = np.array(
+            [capacity[list(gates[e])].sum() if gates[e] else 0.0 for e in index.tolist()]
+        )
+        is_gated = gate > 0.5
+        child = child[index]
+        if is_gated.any():
+            child = np.where(is_gated[:, None], child_if_gated[index], child)
+        return Exits(index, weight[index], child, gate)
 
     def n_path(self, limit: int) -> int:
         """Nodes on all paths from the roots, or ``limit`` where there are more."""

@@ -33,6 +33,9 @@ FEASIBILITY_TOLERANCE = 1e-7
 _ROWWISE = int(highspy.MatrixFormat.kRowwise)
 _MINIMISE = int(highspy.ObjSense.kMinimize)
 
+_KEPT: dict[str, object] = {"solver": "simplex", "simplex_strategy": 1, "presolve": "off"}
+"""Options of kept models: presolve would throw the basis away."""
+
 _TERMINATIONS = {
     "kOptimal": Termination.OPTIMAL,
     "kModelEmpty": Termination.OPTIMAL,
@@ -105,7 +108,7 @@ class KeptModel:
         self.name = name
         self.counts: Counter[str] = Counter()
         self.seconds = 0.0
-        self._highs = new_highs(solver="simplex", simplex_strategy=1, presolve="off")
+        self._highs = new_highs(**_KEPT)
         n_col, n_row = len(cost), len(row_lower)
         status = self._highs.passModel(
             n_col,
@@ -187,6 +190,17 @@ class KeptModel:
         """Deletes rows; those behind them move up."""
         if len(rows):
             self._highs.deleteRows(len(rows), _int32(rows))
+
+    def rest(self) -> None:
+        """Gives the memory for solving back; model and basis stay.
+
+        HiGHS keeps its working space however small the need, so they go to a new object.
+        """
+        old, self._highs = self._highs, new_highs(**_KEPT)
+        self._highs.passModel(old.getLp())
+        basis = old.getBasis()
+        if basis.valid:
+            self._highs.setBasis(basis)
 
     def forget_basis(self) -> None:
         """The next run starts cold."""

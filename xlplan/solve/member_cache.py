@@ -6,7 +6,7 @@ from collections import OrderedDict
 
 from xlplan.model.value_graph import Family, Member
 
-CACHE_BYTES = 150_000_000
+CACHE_BYTES = 80_000_000
 """Memory for members kept in one process; results do not depend on it."""
 
 

@@ -156,14 +156,21 @@ class MemberTable:
         self._gather(cache, i_family, n_member)
 
     def _gather(self, cache: MemberCache, i_family: int, n_member: int) -> None:
-        """One kind of number after the other: all members in full would fill the memory."""
-        series = []
-        for name, places in (
+        """Numbers where members differ; all members in full would fill the memory."""
+        kinds: list[tuple[str, IntArray | slice]] = [
             ("cost", self.columns), ("col_lower", self.columns), ("col_upper", self.columns),
             ("row_lower", self.rows), ("row_upper", self.rows), ("patch_value", slice(None)),
-        ):  # fmt: skip
-            rows = [getattr(cache.get(i_family, m), name)[places] for m in range(n_member)]
-            series.append(ShiftedSeries(np.array(rows, dtype=float)))
+        ]  # fmt: skip
+        exits = ("exit_weight", "exit_child", "exit_child_if_gated", "offset", "scale")
+        rows: list[list[FloatArray]] = [[] for _ in kinds]
+        taken: list[list[object]] = [[] for _ in exits]
+        for i_member in range(n_member):
+            member = cache.get(i_family, i_member)
+            for row, (name, places) in zip(rows, kinds, strict=True):
+                row.append(getattr(member, name)[places])
+            for part, name in zip(taken, exits, strict=True):
+                part.append(getattr(member, name))
+        series = [ShiftedSeries(np.array(row, dtype=float)) for row in rows]
         self._cost, self._col_lower, self._col_upper, self._row_lower, self._row_upper = series[:5]
         self._patch_value = series[5]
         # Most rows that differ are equations.
@@ -172,12 +179,8 @@ class MemberTable:
         )
         if self._is_equal:
             self._row_upper = self._row_lower
-        taken = [cache.get(i_family, m) for m in range(n_member)]
-        self._exit_weight = np.array([m.exit_weight for m in taken])
-        self._exit_child = np.array([m.exit_child for m in taken])
-        self._exit_child_if_gated = np.array([m.exit_child_if_gated for m in taken])
-        self._offset = np.array([m.offset for m in taken])
-        self._scale = np.array([m.scale for m in taken])
+        self._exit_weight, self._exit_child, self._exit_child_if_gated, *rest = map(np.array, taken)
+        self._offset, self._scale = rest
 
     def numbers(self, members: IntArray, rows: IntArray) -> Numbers:
         """Numbers of some members, in their order, with a first axis; rows (positions) alone."""

@@ -91,7 +91,7 @@ class NodeModel:
         self.bound = bound
         self.n_col, self.n_exit = program.n_col, len(family.exit_gate)
         self.counts: Counter[str] = Counter()
-        self._matrix = RowMatrix(program)
+        self._matrix = RowMatrix(program, is_changed=len(family.patch) > 0)
         self._folding = Folding(program, self._matrix)
         kept = self._folding.kept
         self.n_kept = len(kept)
@@ -464,6 +464,10 @@ class NodeModel:
             exits.exit, exits.pi, intercept[kept], state_slope[kept], capacity_slope[kept]
         )
         return self.bound.cuts_of(members[kept], outcome.pi, cuts, group)
+
+    def rest(self) -> None:
+        """Gives back the solver's working memory until the next solve."""
+        self._model.rest()
 
     def forget_basis(self) -> None:
         """The next solve starts cold."""

@@ -33,6 +33,11 @@ SHARE_MARGIN = 1e-3
 """A cut shared with another member is kept where it beats the known value by this share."""
 
 
+REST_ROWS = 1_000_000
+"""Models of events give their working memory back after each run where all families together have
+more rows than this; what is then lost is small beside solving such large programs."""
+
+
 @dataclass(frozen=True)
 class Share:
     """Other members (n,), ascending, with a state of each (n, n_state) and what is known there.
@@ -103,6 +108,7 @@ class NodeSolver:
         self.counts: Counter[str] = Counter()
         self._models: dict[tuple[int, int], NodeModel] = {}
         self._bounds: dict[int, DualBound] = {}
+        self._do_models_rest = tables.n_row > REST_ROWS
 
     def add_cuts(self, batches: Sequence[CutBatch]) -> None:
         """Cuts made elsewhere."""
@@ -185,6 +191,8 @@ class NodeSolver:
                 model, outcomes, [requests[i] for i in asked], np.array([states[i] for i in asked])
             )
             solutions[asked[0]] = replace(solutions[asked[0]], cuts=(cuts,))
+        if self._do_models_rest and family.is_expanded:
+            model.rest()
         return solutions
 
     def _checked_cuts(

@@ -12,7 +12,7 @@ IntArray = NDArray[np.int64]
 
 
 class RowMatrix:
-    """Rows of a program. ``value`` is a copy and may be changed, the pattern is shared.
+    """Rows of a program. The pattern is shared; ``value`` is a copy where it may be changed.
 
     >>> program = LinearProgram(*[np.zeros(2)] * 3, *[np.zeros(1)] * 2, np.array([0, 2]),
     ...     np.array([0, 1]), np.array([3.0, 4.0]), np.zeros(2, bool), np.zeros(1, bool))
@@ -20,10 +20,10 @@ class RowMatrix:
     [30.0, 40.0]
     """
 
-    def __init__(self, program: LinearProgram) -> None:
+    def __init__(self, program: LinearProgram, is_changed: bool = False) -> None:
         self.n_row, self.n_col = program.n_row, program.n_col
         self.start, self.index = program.start, program.index
-        self.value = program.value.copy()
+        self.value = program.value.copy() if is_changed else program.value
 
     def entries(self, rows: IntArray) -> IntArray:
         """Positions of the entries of some rows, row after row."""

@@ -19,6 +19,19 @@ FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
 
+FEW_EXITS = 8
+"""Exits of families with no more than this are kept for every member."""
+
+
+@dataclass(frozen=True)
+class ExitTable:
+    """Exits of every member: weight (n_member, n_exit), true; child, child_if_gated (.., 2)."""
+
+    weight: FloatArray
+    child: IntArray
+    child_if_gated: IntArray
+
+
 @dataclass(frozen=True)
 class FamilyTable:
     """Numbers of one family.
@@ -27,6 +40,8 @@ class FamilyTable:
     is_fixed : True if every exit has one and the same child in all members where it counts
     child, child_if_gated : (n_exit, 2), that child where ``is_fixed``, else -1
     theta_lower : (n_exit,), lowest value of any child of the exit
+    child_families : families that any exit leads to, ascending
+    exits : what the exits are in every member, where there are few; else None
     """
 
     n_state: int
@@ -37,14 +52,17 @@ class FamilyTable:
     child_if_gated: IntArray
     theta_lower: FloatArray
     box: DomainBox
+    child_families: tuple[int, ...]
+    exits: ExitTable | None
 
 
 @dataclass(frozen=True)
 class GraphTables:
-    """Tables of every family, and how many nodes there are."""
+    """Tables of every family, how many nodes there are, and rows of all programs."""
 
     families: tuple[FamilyTable, ...]
     n_node: int
+    n_row: int
 
 
 def gather_tables(graph: ValueGraph, cache: MemberCache) -> GraphTables:
@@ -60,6 +78,17 @@ def gather_tables(graph: ValueGraph, cache: MemberCache) -> GraphTables:
     gated = [np.full((n, 2), -1, dtype=np.int64) for n in n_exits]
     theta_lowers = [np.full(n, np.inf) for n in n_exits]
     is_fixed = [True] * len(graph.families)
+    led_to: list[set[int]] = [set() for _ in graph.families]
+    exit_tables = [
+        ExitTable(
+            np.zeros((f.n_member, n)),
+            np.full((f.n_member, n, 2), -1, dtype=np.int64),
+            np.full((f.n_member, n, 2), -1, dtype=np.int64),
+        )
+        if n <= FEW_EXITS
+        else None
+        for f, n in zip(graph.families, n_exits, strict=True)
+    ]
     for i_family, i_member in graph.order.tolist():
         family = graph.families[i_family]
         member = cache.get(i_family, i_member)
@@ -69,11 +98,17 @@ def gather_tables(graph: ValueGraph, cache: MemberCache) -> GraphTables:
         theta_lowers[i_family] = np.where(
             active, np.minimum(theta_lowers[i_family], lower), theta_lowers[i_family]
         )
+        exit_table = exit_tables[i_family]
+        if exit_table is not None:
+            exit_table.weight[i_member] = member.exit_weight / member.scale
+            exit_table.child[i_member] = member.exit_child
+            exit_table.child_if_gated[i_member] = member.exit_child_if_gated
         for table, now in (
             (children[i_family], member.exit_child),
             (gated[i_family], member.exit_child_if_gated),
         ):
             known = table[:, 1] >= 0
+            led_to[i_family].update(np.unique(now[now[:, 1] >= 0, 0]).tolist())
             both = known & active
             if np.any(table[both] != now[both]):
                 is_fixed[i_family] = False
@@ -101,9 +136,12 @@ def gather_tables(graph: ValueGraph, cache: MemberCache) -> GraphTables:
                 child_if_gated=gated[i] if is_fixed[i] else np.full_like(gated[i], -1),
                 theta_lower=np.where(np.isfinite(theta_lowers[i]), theta_lowers[i], 0.0),
                 box=_domain(graph, i, family),
+                child_families=tuple(sorted(led_to[i])),
+                exits=exit_tables[i],
             )
         )
-    return GraphTables(tuple(tables), len(graph.order))
+    n_row = sum(family.program.n_row for family in graph.families)
+    return GraphTables(tuple(tables), len(graph.order), n_row)
 
 
 def _check_boxes(family: Family, member: Member, i_member: int) -> None:

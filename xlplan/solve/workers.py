@@ -13,6 +13,7 @@ import signal
 from collections.abc import Callable, Sequence
 from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
 from concurrent.futures.process import BrokenProcessPool
+from copy import copy
 from dataclasses import dataclass, replace
 from itertools import chain
 
@@ -93,6 +94,7 @@ class Workers:
         self._counts: list[dict[str, float]] = [{} for _ in range(self.n_worker)]
         self._known = [[0] * len(pools) for _ in range(self.n_worker)]
         self._owner = _share_out(weights, self.n_worker)
+        self._wanted = [self._asked_for(i) for i in range(self.n_worker)]
         self._executors: list[ProcessPoolExecutor | None] = [None] * self.n_worker
         self._local: NodeSolver | None = None
         self._n_restart = 0
@@ -139,7 +141,12 @@ class Workers:
     def _news(self, worker: int) -> list[CutBatch]:
         """Cuts that a worker has not seen."""
         known = self._known[worker]
-        news = [pool.since(n) for pool, n in zip(self.pools, known, strict=True) if pool.n > n]
+        wanted = self._wanted[worker]
+        news = [
+            pool.since(n)
+            for pool, n in zip(self.pools, known, strict=True)
+            if pool.n > n and pool.family in wanted
+        ]
         self._known[worker] = [pool.n for pool in self.pools]
         return news
 
@@ -225,15 +232,28 @@ class Workers:
 
         Of those a worker asks how many members they have and what the tables say.
         """
+        own = self._families_of(worker)
+        families = tuple(
+            _without_names(family)
+            if i in own
+            else Elsewhere(family.name, family.n_member, family.is_expanded)
+            for i, family in enumerate(self.graph.families)
+        )
+        return replace(self.graph, families=families)
+
+    def _families_of(self, worker: int) -> set[int]:
+        """Families of which the worker holds a model."""
         own = {family for (family, _), owner in self._owner.items() if owner == worker}
         if worker == 0:  # whatever has no owner is solved there
             named = {family for family, _ in self._owner}
             own |= set(range(len(self.graph.families))) - named
-        families = tuple(
-            family if i in own else Elsewhere(family.name, family.n_member, family.is_expanded)
-            for i, family in enumerate(self.graph.families)
-        )
-        return replace(self.graph, families=families)
+        return own
+
+    def _asked_for(self, worker: int) -> set[int]:
+        """Families whose cuts the worker needs: its own and their children."""
+        own = self._families_of(worker)
+        children = {child for i in own for child in self.tables.families[i].child_families}
+        return own | children
 
     def _submit(
         self,
@@ -278,6 +298,13 @@ class Workers:
             if executor is not None:
                 executor.shutdown(wait=True, cancel_futures=True)
                 self._executors[i] = None
+
+
+def _without_names(family: Family) -> Family:
+    """The family without the names of columns and rows, which nobody reads in a worker."""
+    slim = copy(family)
+    slim.program = replace(family.program, col_names=(), row_names=())
+    return slim
 
 
 def _chunks(runs: Runs) -> list[Runs]:
