@@ -84,12 +84,17 @@ def test_sheets_are_these_and_no_others(workbook_path: Path) -> None:
         assert sheet["A2"].value
         assert sheet.print_area
         assert sheet.page_setup.paperSize
-        assert sheet.sheet_properties.pageSetUpPr.fitToPage
+        # Fitted to the page's width, or a scale of its own with page breaks.
+        fits = sheet.sheet_properties.pageSetUpPr is not None
+        assert fits != bool(sheet.row_breaks.brk), sheet.title
+        assert fits == (sheet.page_setup.scale in (None, 100)), sheet.title
         assert sheet.page_setup.orientation == "landscape"
         assert sheet.oddFooter.right.text
     # The format leaves out a height of one page; 0 is as many as it takes.
     assert formulas["Summary"].page_setup.fitToHeight in (None, 1)
-    assert formulas["Operation"].page_setup.fitToHeight == 0
+    assert formulas["Plan"].page_setup.fitToHeight == 0
+    broken = {sheet.title for sheet in formulas if sheet.row_breaks.brk}
+    assert broken == {"Sensitivities", "Risk", "Operation", "Feeder"}
 
 
 def test_every_formula_has_a_value_and_none_is_an_error(workbook_path: Path) -> None:
@@ -168,7 +173,7 @@ def test_worth_worked_out_by_hand(workbook_path: Path, result: StudyResult) -> N
     assert capital == pytest.approx(510_960.0 * 0.8 + 155_000.0 + 44_000.0)
     assert rows["Simple payback, customers included"][2] == pytest.approx(capital / saving)
     assert rows["Benefit-cost ratio"][2] == pytest.approx(saving / best.investment)
-    assert rows["Simple payback, customers included"][0] == "nothing bought"
+    assert rows["Simple payback, customers included"][0] == "no purchase"
 
 
 def test_no_payback_in_words(tmp_path: Path) -> None:
@@ -180,7 +185,7 @@ def test_no_payback_in_words(tmp_path: Path) -> None:
     )
     _, values = read(path)
     assert statement(values["Alternatives"])["Simple payback, customers included"][3] == (
-        "does not pay back"
+        "no payback"
     )
 
 

@@ -107,7 +107,7 @@ def columns(
             }
         )
     axis = {"name": category_title, "name_font": _font(9), "num_font": _font(8)}
-    chart.set_x_axis({**axis, "line": {"color": GREY}})
+    chart.set_x_axis({**axis, "num_format": "#,##0", "line": {"color": GREY}})
     chart.set_y_axis({**_value_axis(axis_title, number_format), "min": 0})
     if not has_legend:
         chart.set_legend({"none": True})
@@ -338,7 +338,8 @@ class Stroke:
 class Dots:
     """Points of a drawing with one marker; ``labels``: a text a point, "" for none.
 
-    A text may not begin with =, which would make it a formula.
+    A text may not begin with =, which would make it a formula. ``sides``: above, below, right or
+    left of each point.
     """
 
     name: str
@@ -347,6 +348,7 @@ class Dots:
     colour: str
     marker: str
     labels: tuple[str, ...] = ()
+    sides: tuple[str, ...] = ()
 
 
 MARKER_SIZES = {"circle": 9, "diamond": 12, "x": 11}
@@ -385,22 +387,46 @@ def drawing(
                 "border": {"color": INK if dot.marker != "x" else dot.colour, "width": 1.0},
             },
         }
-        if dot.labels:
-            options["data_labels"] = {
-                "value": True,
-                "position": "above",
-                "font": _font(9),
-                "custom": [{"value": text} if text else {"delete": True} for text in dot.labels],
-            }
+        chart.add_series(options)
+    n_shown = len(strokes) + len(dots)
+    # A series has its labels all on one side: names stand on series of their own, unseen.
+    names = [
+        {
+            "name": f"names {side} of {dot.name}",
+            "categories": dot.x_values,
+            "values": dot.y_values,
+            "line": {"none": True},
+            "marker": {"type": "none"},
+            "data_labels": _names(dot, side),
+        }
+        for dot in dots
+        for side in dict.fromkeys(dot.sides)
+        if any(dot.labels[i] for i in range(len(dot.labels)) if dot.sides[i] == side)
+    ]
+    for options in names:
         chart.add_series(options)
     for axis, (low, high) in ((chart.set_x_axis, x_range), (chart.set_y_axis, y_range)):
         axis({"visible": False, "min": low, "max": high, "major_gridlines": {"visible": False}})
     chart.show_blanks_as("gap")
-    names = [one.name for one in strokes]
-    again = [i for i, name in enumerate(names) if name in names[:i]]
+    drawn = [one.name for one in strokes]
+    unseen = [i for i, name in enumerate(drawn) if name in drawn[:i]]
+    unseen += range(n_shown, n_shown + len(names))
     chart = _finish(chart, title)
-    chart.set_legend({"position": "bottom", "font": _font(9), "delete_series": again})
+    chart.set_legend({"position": "bottom", "font": _font(9), "delete_series": unseen})
     return chart
+
+
+def _names(dot: Dots, side: str) -> dict[str, Any]:
+    """Labels of the points whose names stand on one side."""
+    texts = zip(dot.labels, dot.sides, strict=True)
+    return {
+        "value": True,
+        "position": side,
+        "font": _font(9),
+        "custom": [
+            {"value": text} if text and at == side else {"delete": True} for text, at in texts
+        ],
+    }
 
 
 def wide_range(values: Sequence[float]) -> tuple[float, float]:

@@ -12,13 +12,10 @@ from dataclasses import dataclass
 
 from xlsxwriter.utility import xl_rowcol_to_cell
 
+from xlplan.report.room import BODY_CHARS, HEADING_CHARS, LINE_POINTS, lines_needed
 from xlplan.report.safe_book import ABSENT, SafeSheet
 
 LEFT_LOOKS = ("text", "wrap", "status", "any")
-HEADING_CHARS, BODY_CHARS = 1.0, 1.2
-"""Characters of bold and of plain Arial that fit in one unit of column width (measured)."""
-
-LINE_POINTS = 13.0
 
 
 @dataclass(frozen=True)
@@ -125,33 +122,24 @@ class Grid:
         if not rows:
             sheet.text(self.row(0), self.left, "none", "note")
         for i_row, row in enumerate(rows):
-            extra = ("plan",) if i_row in marked else ()
-            lines = 1
+            lines = max(1, *(self._lines(sheet, i, row) for i in range(len(self.columns))))
+            extra = (*(("plan",) if i_row in marked else ()), *(("top",) if lines > 1 else ()))
             for i, column in enumerate(self.columns):
                 looks = (column.look, *(("input",) if column.is_input else ()), *extra)
-                cell = row[column.key]
-                write_cell(sheet, self.row(i_row), self.left + i, cell, *looks)
-                if column.look == "wrap" and isinstance(cell, str):
-                    room = BODY_CHARS * sheet.width(self.left + i)
-                    lines = max(lines, lines_needed(cell, room))
+                write_cell(sheet, self.row(i_row), self.left + i, row[column.key], *looks)
             if lines > 1:
                 sheet.height(self.row(i_row), LINE_POINTS * lines + 3)
+
+    def _lines(self, sheet: SafeSheet, i: int, row: Mapping[str, Cell]) -> int:
+        """Lines that the text of a wrapped column takes."""
+        cell = row[self.columns[i].key]
+        if self.columns[i].look != "wrap" or not isinstance(cell, str):
+            return 1
+        return lines_needed(cell, BODY_CHARS * sheet.width(self.left + i))
 
 
 def _is_known(value: float | str) -> bool:
     return isinstance(value, str) or math.isfinite(value)
-
-
-def lines_needed(text: str, room: float) -> int:
-    """Lines that wrapped text takes where ``room`` characters fit on one."""
-    lines, used = 1, 0.0
-    for word in text.split():
-        if used and used + 1 + len(word) > room:
-            lines, used = lines + 1, 0.0
-        used += len(word) + (1 if used else 0)
-        while used > room > 0:
-            lines, used = lines + 1, used - room
-    return lines
 
 
 def write_cell(sheet: SafeSheet, row: int, col: int, cell: Cell, *looks: str) -> None:

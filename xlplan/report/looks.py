@@ -33,13 +33,13 @@ FONT = "Arial"
 
 Properties = dict[str, Any]
 
-_NUMBER: Properties = {"align": "right", "valign": "top"}
+_NUMBER: Properties = {"align": "right", "valign": "vcenter"}
 
 PAD = "_W"
 """At the end of a number format: room as wide as a W, so that columns do not touch. Cell indents
 would do the same, but LibreOffice ignores them for some numbers."""
 
-_TEXT: Properties = {"align": "left", "valign": "top"}
+_TEXT: Properties = {"align": "left", "valign": "vcenter"}
 
 LOOKS: dict[str, Properties] = {
     "title": {"bold": True, "font_size": 16, "font_color": INK, "valign": "top"},
@@ -98,6 +98,9 @@ MODIFIERS: dict[str, Properties] = {
     "total": {"bold": True, "top": 1, "top_color": INK},
     "input": {"font_color": INPUT_FONT, "bg_color": INPUT_FILL},
     "indent": {"indent": 1},
+    "wrapped": {"text_wrap": True},
+    # Where a row has several lines, figures stand beside the first of them.
+    "top": {"valign": "top"},
     "plan": {"bold": True, "bg_color": "#EEF4F8"},
 }
 

@@ -15,7 +15,7 @@ from xlplan.report.sheets.absent import say_absent
 from xlplan.report.sheets.plan import PlanCells
 from xlplan.report.tables import HARDENING, WORTH
 
-WIDTHS = (9, 30, 26, 11, 9, 13, 13, 15, 13, 14, 14, 14, 14, 13, 13, 16)
+WIDTHS = (7, 27, 17, 10, 8, 12, 12.5, 13, 12.5, 12.5, 12.5, 12.5, 12.5, 11, 11, 13)
 NOT_RANKED = "-"
 WORTH_IT, NOT_WORTH_IT = "worth it", "not worth it"
 ROWS_PER_BAR = 2

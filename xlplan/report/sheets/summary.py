@@ -12,6 +12,7 @@ from xlplan.report import charts, pack_wording, wording
 from xlplan.report.grid import Cell, Formula, Grid
 from xlplan.report.looks import BLACK, BLUE, NAVY, ORANGE, SKY, VERMILION
 from xlplan.report.money import baseline, money_words
+from xlplan.report.room import BODY_CHARS
 from xlplan.report.safe_book import SafeBook, SafeSheet
 from xlplan.report.sheets.alternatives import AlternativesCells
 from xlplan.report.sheets.cautions import CAUTION_TEXTS
@@ -19,12 +20,15 @@ from xlplan.report.sheets.checks import ChecksCells
 from xlplan.report.sheets.reliability import ReliabilityCells
 from xlplan.report.tables import CAUTIONS, PLAN, SUMMARY, SUMMARY_PLANS, SUMMARY_WORTH
 
-WIDTHS = (31, 15, 15, 15, 16, 15, 15, 14, 15, 15, 15, 15, 17, 15)
-LAST_COL = len(WIDTHS) - 1
-CHART_ROWS, ROWS_PER_BAR = 18, 2
+NAME_WIDTH, LEAST_WIDTH = 27.0, 12.5
+UNIT_CHARS = 8.5
+"""Room that a heading's ``(.../year)`` takes beside the currency."""
+
+LAST_COL = len(SUMMARY_PLANS) - 1
+LEAST_CHART_ROWS, HEAD_ROWS, ROWS_PER_BAR = 14, 6, 1.4
 LEFT_CHART_SHARE = 0.54
-MAX_BOUGHT = 10
-LEFT_LAST_COL = 5
+MAX_BOUGHT = 8
+LEFT_LAST_COL = 6
 RIGHT_COL = 7
 SEGMENTS = (
     ("upkeep", NAVY, "#FFFFFF"),
@@ -43,12 +47,14 @@ def write(
 ) -> None:
     """Writes the sheet."""
     sheet = book.sheet(SUMMARY)
-    sheet.widths(WIDTHS)
+    width = max(LEAST_WIDTH, len(result.currency) + UNIT_CHARS)
+    sheet.widths([NAME_WIDTH] + [width] * LAST_COL)
+    chars = NAME_WIDTH + width * LAST_COL
     # The space before a percent sign must not end a line.
     headline = wording.headline(result).replace(" %", "\u00a0%")
-    sheet.paragraph(0, 0, LAST_COL, headline, 118, "title")
-    sheet.paragraph(1, 0, LAST_COL, wording.consequence(result), 222, "text", "bold")
-    sheet.paragraph(2, 0, LAST_COL, wording.basis(result), 222, "subtitle")
+    sheet.paragraph(0, 0, LAST_COL, headline, round(0.58 * chars), "title")
+    sheet.paragraph(1, 0, LAST_COL, wording.consequence(result), round(chars), "text", "bold")
+    sheet.paragraph(2, 0, LAST_COL, wording.basis(result), round(BODY_CHARS * chars), "subtitle")
     grid = Grid(SUMMARY, 4, SUMMARY_PLANS, len(result.plans))
     rows = [
         _row(plan, baseline(result), i, grid, alternatives, reliability)
@@ -63,11 +69,11 @@ def write(
         marked=marked,
     )
     row = _charts(book, sheet, result, grid, worth.below + 1)
+    matters, found = pack_wording.three_things(result), pack_wording.findings(result)
     left = _purchases(sheet, result, row)
-    right = _sentences(
-        sheet, "Three things that matter most", pack_wording.three_things(result), row
-    )
-    right = _sentences(sheet, "What is uncertain", wording.uncertainties(result), right)
+    right = _sentences(sheet, "Three things that matter most", matters, row, RIGHT_COL)
+    left = _sentences(sheet, "What the comparisons found", found, left, 0)
+    right = _sentences(sheet, "What is uncertain", wording.uncertainties(result), right, RIGHT_COL)
     row = max(left, right) + 1
     sheet.text(row, 0, "Do the numbers agree?", "status")
     sheet.formula(row, 1, f"={checks.overall}", checks.words, "status")
@@ -75,7 +81,7 @@ def write(
     cautions = f"{len(CAUTION_TEXTS)} cautions apply: read the Cautions sheet before using this"
     sheet.link(row, RIGHT_COL, CAUTIONS, cautions)
     note = (
-        "The sentences state what the run found; the table follows the other sheets when figures "
+        "The sentences state what the run found; the tables follow the other sheets when figures "
         "there are changed. Costs are real and before tax."
     )
     sheet.text(row + 1, 0, note, "note")
@@ -149,7 +155,7 @@ def _charts(book: SafeBook, sheet: SafeSheet, result: StudyResult, grid: Grid, r
     )
     total = sheet.pixels(0, LAST_COL)
     left = round(LEFT_CHART_SHARE * total)
-    n_row = max(CHART_ROWS, 4 + ROWS_PER_BAR * len(result.plans))
+    n_row = max(LEAST_CHART_ROWS, HEAD_ROWS + round(ROWS_PER_BAR * len(result.plans)))
     height = n_row * charts.PIXELS_PER_ROW - 10
     alt = (
         "Stacked bars: yearly cost of each alternative, in investment and upkeep; energy, fuel "
@@ -187,8 +193,7 @@ def _purchases(sheet: SafeSheet, result: StudyResult, row: int) -> int:
         sheet.text(row, 0, "Nothing.", "text")
         return row + 1
     for asset in bought[:MAX_BOUGHT]:
-        sheet.paragraph(row, 0, LEFT_LAST_COL, _asset_words(asset, result.currency), 95)
-        row += 1
+        row = sheet.block(row, 0, LEFT_LAST_COL, _asset_words(asset, result.currency))
     if len(bought) > MAX_BOUGHT:
         sheet.text(row, 0, f"and {len(bought) - MAX_BOUGHT} more on the Plan sheet")
         row += 1
@@ -207,15 +212,15 @@ def _asset_words(asset: Purchase, currency: str) -> str:
     return f"•  {asset.asset}: {asset.kind} at {asset.place}, {size}; {capital}"
 
 
-def _sentences(sheet: SafeSheet, title: str, sentences: list[str], row: int) -> int:
-    """Sentences under a heading on the right; next free row. None: no heading either."""
+def _sentences(sheet: SafeSheet, title: str, sentences: list[str], row: int, col: int) -> int:
+    """Sentences under a heading on one side; next free row. None: no heading either."""
     if not sentences:
         return row
-    sheet.text(row, RIGHT_COL, title, "section")
+    sheet.text(row, col, title, "section")
     row += 1
     for sentence in sentences:
-        sheet.paragraph(row, RIGHT_COL, LAST_COL, f"•  {sentence}", 125)
-        row += 1
+        last_col = LAST_COL if col == RIGHT_COL else LEFT_LAST_COL
+        row = sheet.block(row, col, last_col, f"•  {sentence}")
     return row
 
 
