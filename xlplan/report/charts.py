@@ -22,6 +22,9 @@ PIXELS_PER_ROW = 20
 """Height of a sheet row of standard height."""
 
 MAX_TICK_LABELS = 12
+MAX_UPRIGHT = 16
+"""Columns side by side that can all have a label."""
+
 TICKS = 6
 """Steps of a numeric axis, about."""
 
@@ -74,7 +77,7 @@ def bars(
         if has_labels and (one.labels or not is_stacked):
             options["data_labels"] = _labels(one, is_stacked, label_above, label_format)
         chart.add_series(options)
-    axis = {"reverse": True, "num_font": _font(9), "line": {"color": GREY}}
+    axis = {"reverse": True, "num_font": _font(10), "line": {"color": GREY}}
     # Names beside the plot, also where bars reach below 0.
     chart.set_y_axis({**axis, "label_position": "low"})
     chart.set_x_axis(
@@ -106,8 +109,12 @@ def columns(
                 "gap": 60,
             }
         )
-    axis = {"name": category_title, "name_font": _font(9), "num_font": _font(8)}
-    chart.set_x_axis({**axis, "num_format": "#,##0", "line": {"color": GREY}})
+    axis = {"name": category_title, "name_font": _font(10), "num_font": _font(9)}
+    n_point = int(categories[3]) - int(categories[1]) + 1
+    step = 1 if n_point <= MAX_UPRIGHT else 2
+    chart.set_x_axis(
+        {**axis, "num_format": "#,##0", "interval_unit": step, "line": {"color": GREY}}
+    )
     chart.set_y_axis({**_value_axis(axis_title, number_format), "min": 0})
     if not has_legend:
         chart.set_legend({"none": True})
@@ -119,7 +126,7 @@ def _labels(one: Series, is_stacked: bool, above: float, number_format: str) -> 
     labels: dict[str, Any] = {
         "value": True,
         "num_format": number_format,
-        "font": {**_font(8), "color": colour},
+        "font": {**_font(9), "color": colour},
     }
     if is_stacked:
         labels["position"] = "center"
@@ -240,8 +247,8 @@ def lines_over_names(
     chart.set_x_axis(
         {
             "name": category_title,
-            "name_font": _font(9),
-            "num_font": {**_font(8), "rotation": -45},
+            "name_font": _font(10),
+            "num_font": {**_font(9), "rotation": -45},
             "interval_unit": step,
             "interval_tick": step,
             "label_position": "low",
@@ -272,8 +279,8 @@ def _font(size: float, is_bold: bool = False) -> dict[str, Any]:
 def _value_axis(title: str, number_format: str) -> dict[str, Any]:
     return {
         "name": title,
-        "name_font": _font(9),
-        "num_font": _font(9),
+        "name_font": _font(10),
+        "num_font": _font(10),
         "num_format": number_format,
         "major_gridlines": {"visible": True, "line": {"color": GRID_GREY, "width": 0.5}},
         "line": {"color": GREY},
@@ -295,8 +302,8 @@ def _finish_over_time(
     chart.set_x_axis(
         {
             "name": "Start of period",
-            "name_font": _font(9),
-            "num_font": {**_font(8), "rotation": -45},
+            "name_font": _font(10),
+            "num_font": {**_font(9), "rotation": -45},
             "interval_unit": step,
             "interval_tick": step,
             "label_position": "low",
@@ -317,7 +324,7 @@ def _finish_over_time(
 def _finish(chart: Chart, title: str, has_legend: bool = True) -> Chart:
     chart.set_title({"name": title, "name_font": _font(11, is_bold=True), "overlay": False})
     if has_legend:
-        chart.set_legend({"position": "bottom", "font": _font(9)})
+        chart.set_legend({"position": "bottom", "font": _font(10)})
     chart.set_chartarea({"border": {"color": GRID_GREY}})
     return chart
 
@@ -350,6 +357,9 @@ class Dots:
     labels: tuple[str, ...] = ()
     sides: tuple[str, ...] = ()
 
+
+UNSEEN = {"type": "circle", "size": 12, "fill": {"none": True}, "border": {"none": True}}
+"""A marker that keeps names clear of the one that is seen."""
 
 MARKER_SIZES = {"circle": 9, "diamond": 12, "x": 11}
 
@@ -396,7 +406,7 @@ def drawing(
             "categories": dot.x_values,
             "values": dot.y_values,
             "line": {"none": True},
-            "marker": {"type": "none"},
+            "marker": UNSEEN,
             "data_labels": _names(dot, side),
         }
         for dot in dots
@@ -412,7 +422,7 @@ def drawing(
     unseen = [i for i, name in enumerate(drawn) if name in drawn[:i]]
     unseen += range(n_shown, n_shown + len(names))
     chart = _finish(chart, title)
-    chart.set_legend({"position": "bottom", "font": _font(9), "delete_series": unseen})
+    chart.set_legend({"position": "bottom", "font": _font(10), "delete_series": unseen})
     return chart
 
 
@@ -422,7 +432,7 @@ def _names(dot: Dots, side: str) -> dict[str, Any]:
     return {
         "value": True,
         "position": side,
-        "font": _font(9),
+        "font": _font(10),
         "custom": [
             {"value": text} if text and at == side else {"delete": True} for text, at in texts
         ],

@@ -122,7 +122,8 @@ class Grid:
         if not rows:
             sheet.text(self.row(0), self.left, "none", "note")
         for i_row, row in enumerate(rows):
-            lines = max(1, *(self._lines(sheet, i, row) for i in range(len(self.columns))))
+            chars = HEADING_CHARS if i_row in marked else BODY_CHARS
+            lines = max(1, *(self._lines(sheet, i, row, chars) for i in range(len(self.columns))))
             extra = (*(("plan",) if i_row in marked else ()), *(("top",) if lines > 1 else ()))
             for i, column in enumerate(self.columns):
                 looks = (column.look, *(("input",) if column.is_input else ()), *extra)
@@ -130,12 +131,14 @@ class Grid:
             if lines > 1:
                 sheet.height(self.row(i_row), LINE_POINTS * lines + 3)
 
-    def _lines(self, sheet: SafeSheet, i: int, row: Mapping[str, Cell]) -> int:
+    def _lines(self, sheet: SafeSheet, i: int, row: Mapping[str, Cell], chars: float) -> int:
         """Lines that the text of a wrapped column takes."""
         cell = row[self.columns[i].key]
+        if isinstance(cell, Formula):
+            cell = cell.value
         if self.columns[i].look != "wrap" or not isinstance(cell, str):
             return 1
-        return lines_needed(cell, BODY_CHARS * sheet.width(self.left + i))
+        return lines_needed(cell, chars * sheet.width(self.left + i))
 
 
 def _is_known(value: float | str) -> bool:

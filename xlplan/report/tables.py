@@ -63,7 +63,7 @@ SUMMARY_PLANS = (
 SUMMARY_WORTH = (
     Column("name", "Is it worth it", "wrap"),
     Column("verdict", "Against the existing feeder", "verdict"),
-    Column("to_best", "Against the recommended one", "verdict"),
+    Column("to_best", "Against the best one", "verdict"),
     Column("payback", "Simple payback (years)", "years"),
     Column("own_payback", "Payback on the utility's own money (years)", "years"),
     Column("ratio", "Benefit-cost ratio", "hours"),
@@ -195,9 +195,9 @@ SECTIONS = (
 CAUSES = (
     Column("name", "Alternative", "wrap"),
     Column("causes", "What fails", "wrap"),
-    Column("section", "Dead section", "text"),
-    Column("window", "Window", "text"),
-    Column("kind", "Kind", "text"),
+    Column("section", "Dead section", "wrap"),
+    Column("window", "Window", "wrap"),
+    Column("kind", "Kind", "wrap"),
     Column("repair_h", "Repair time (h)", "hours"),
     Column("events", "Events (per year)", "small"),
     Column("eens", "Energy not supplied (kWh/year)", "energy"),
@@ -399,7 +399,7 @@ REGRETS = (
     Column("name", "Alternative", "wrap"),
     Column("base", "Yearly cost as given ({money}/year)", "money"),
     Column("largest", "Largest regret ({money}/year)", "money"),
-    Column("case", "In the case", "text"),
+    Column("case", "In the case", "wrap"),
     Column("mean", "Mean regret over the cases ({money}/year)", "money"),
     Column("rank", "Rank by largest regret", "whole"),
 )

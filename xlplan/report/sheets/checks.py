@@ -77,7 +77,7 @@ def write(
         "Each row sets two figures that should agree side by side. FAIL: a fault of the run. LOOK: "
         "for you to judge. CHANGED: a figure of this workbook was altered after the run.",
     )
-    sheet.widths([24, 40, 62, 19, 19, 13, 13, 13, 12])
+    sheet.widths([22, 36, 56, 17, 17, 12, 12, 12, 11])
     lines = [_run_line("Study", line) for line in result.checks]
     lines += [_run_line(plan.name, line) for plan in result.plans for line in plan.checks]
     lines += _money_lines(result, alternatives) + _energy_lines(result, reliability)

@@ -66,6 +66,7 @@ LOOKS = (
 )
 LABEL_SIDES = ("above", "below", "right", "left")
 LEAST_RISE = 0.4
+ROOM_FOR_NAMES = 0.18
 
 
 def write(book: SafeBook, result: StudyResult) -> None:
@@ -74,9 +75,8 @@ def write(book: SafeBook, result: StudyResult) -> None:
     drawing = result.feeder
     sheet.head(
         "The feeder, and what the outages shown do to it",
-        "Round and solid: live. Diamond and dashed: cut off from every supply, an island if "
-        "something can form it. Cross and dotted: dead by the fault. Grey, long dashes: open tie. "
-        "Outages of the least-cost plan.",
+        "Round, solid: live. Diamond, dashed: cut off from every supply, an island if something "
+        "can form it. Cross, dotted: dead by the fault. Grey: open tie.",
     )
     if drawing is None or not drawing.buses:
         sheet.text(3, 0, "The run kept no drawing.", "note")
@@ -320,4 +320,6 @@ def _chart(
                 )
             )
     xs, ys = [bus.x for bus in drawing.buses], [bus.y for bus in drawing.buses]
-    return charts.drawing(book, title, strokes, dots, charts.padded(xs), charts.padded(ys))
+    return charts.drawing(
+        book, title, strokes, dots, charts.padded(xs), charts.padded(ys, ROOM_FOR_NAMES)
+    )

@@ -24,7 +24,10 @@ from xlplan.report.tables import OPERATION, TRACE_HEAD
 MAX_CHARTED = 6
 """Series a chart holds; smaller sources share one column "Other sources"."""
 
-CHART_ROWS = 17
+CHART_ROWS = 15
+LONG_TABLE = 0.85
+"""Share of a page's height beyond which rows of a table do not fit on it with their heading."""
+
 MAX_CHART_PX = 1600
 TIME_WIDTH, HOUR_WIDTH, COLUMN_WIDTH = 17, 9, 11.5
 DASHES = ("solid", "dash", "round_dot", "long_dash", "dash_dot", "square_dot")
@@ -55,8 +58,7 @@ def write(book: SafeBook, result: StudyResult) -> None:
     sheet.head(
         "How the plan runs",
         f"{best.name}: load, sources, stored energy and unserved load by period; a normal day, "
-        "then the worst, the most frequent and the longest outage event. The numbers behind the "
-        "charts follow below them.",
+        "then the worst, the most frequent and the longest outage. The numbers follow below.",
     )
     if not best.traces:
         sheet.text(3, 0, "The run kept no trace of operation.", "note")
@@ -85,8 +87,10 @@ def write(book: SafeBook, result: StudyResult) -> None:
     # Charts of one stretch stay together on a page; tables begin on one of their own.
     breaks = _breaks([*tops, first_numbers], sheet.page_pixels(last_col))
     breaks += [one.grid.top - (2 if stores else 1) for one in placed]
-    # All tables have the same columns, so one heading serves on every page.
-    heading = placed[0].grid.top
+    # All tables have the same columns, so one heading serves where a table fills several pages.
+    longest = max(one.grid.n_row for one in placed) * charts.PIXELS_PER_ROW
+    is_long = longest > LONG_TABLE * sheet.page_pixels(last_col)
+    heading = placed[0].grid.top if is_long else None
     sheet.print_setup(row, last_col, heading_row=heading, breaks=breaks)
 
 
@@ -233,7 +237,7 @@ def _write_charts(
             (
                 charts.lines_over_time(
                     book,
-                    "State of charge at the end of each period",
+                    "State of charge, end of period",
                     times,
                     lines,
                     "State of charge (%)",

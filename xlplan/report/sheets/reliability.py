@@ -38,7 +38,7 @@ MAX_CAUSES = 400
 CHART_ROWS = 16
 MAX_BUSES_CHARTED = 60
 
-WIDTHS = (26, 39, 15, 15, 15, 15, 15, 15, 15, 15, 15)
+WIDTHS = (24, 36, 14.5, 15, 15, 15, 15, 15, 15, 15, 15)
 
 
 @dataclass(frozen=True)
@@ -67,9 +67,9 @@ def write(book: SafeBook, result: StudyResult) -> ReliabilityCells:
     classes = _classes(sheet, base, best, windows.below + 2)
     buses = _buses(sheet, base, best, classes.below + 2)
     _charts(book, sheet, classes, buses)
-    row = _causes(sheet, base, best, buses.below + 2)
+    causes = _causes(sheet, base, best, buses.below + 2)
     sheet.freeze(2, 1)
-    sheet.print_setup(row, len(CLASSES) - 1)
+    sheet.print_setup(causes.below, len(CLASSES) - 1, heading_row=causes.top)
     return ReliabilityCells(indices, windows, classes, buses)
 
 
@@ -243,8 +243,8 @@ def _buses(sheet: SafeSheet, base: PlanResult, best: PlanResult, top: int) -> Gr
     return grid
 
 
-def _causes(sheet: SafeSheet, base: PlanResult, best: PlanResult, top: int) -> int:
-    """Sections summed by formula over the list of causes under them; last row."""
+def _causes(sheet: SafeSheet, base: PlanResult, best: PlanResult, top: int) -> Grid:
+    """Sections summed by formula over the list of causes under them; that list."""
     plans = _once([base, best])
     listed = {plan.name: _cause_rows(plan) for plan in plans}
     names = sorted({str(row["section"]) for rows in listed.values() for row in rows})
@@ -266,7 +266,7 @@ def _causes(sheet: SafeSheet, base: PlanResult, best: PlanResult, top: int) -> i
     sections.write(sheet, rows)
     sheet.text(causes.top - 1, 0, "By cause, the most harmful first", "section")
     causes.write(sheet, [row for plan in plans for row in listed[plan.name]])
-    return causes.below
+    return causes
 
 
 def _sum_where(

@@ -20,16 +20,16 @@ from xlplan.report.sheets.checks import ChecksCells
 from xlplan.report.sheets.reliability import ReliabilityCells
 from xlplan.report.tables import CAUTIONS, PLAN, SUMMARY, SUMMARY_PLANS, SUMMARY_WORTH
 
-NAME_WIDTH, LEAST_WIDTH = 27.0, 12.5
+NAME_WIDTH, LEAST_WIDTH = 26.0, 13.0
 UNIT_CHARS = 8.5
 """Room that a heading's ``(.../year)`` takes beside the currency."""
 
 LAST_COL = len(SUMMARY_PLANS) - 1
-LEAST_CHART_ROWS, HEAD_ROWS, ROWS_PER_BAR = 14, 6, 1.4
+LEAST_CHART_ROWS, HEAD_ROWS, ROWS_PER_BAR = 12, 6, 1.3
 LEFT_CHART_SHARE = 0.54
 MAX_BOUGHT = 8
-LEFT_LAST_COL = 6
-RIGHT_COL = 7
+LEFT_LAST_COL = 4
+RIGHT_COL = 6
 SEGMENTS = (
     ("upkeep", NAVY, "#FFFFFF"),
     ("supply", BLUE, "#FFFFFF"),
@@ -53,7 +53,9 @@ def write(
     # The space before a percent sign must not end a line.
     headline = wording.headline(result).replace(" %", "\u00a0%")
     sheet.paragraph(0, 0, LAST_COL, headline, round(0.58 * chars), "title")
-    sheet.paragraph(1, 0, LAST_COL, wording.consequence(result), round(chars), "text", "bold")
+    sheet.paragraph(
+        1, 0, LAST_COL, wording.consequence(result), round(1.08 * chars), "text", "bold"
+    )
     sheet.paragraph(2, 0, LAST_COL, wording.basis(result), round(BODY_CHARS * chars), "subtitle")
     grid = Grid(SUMMARY, 4, SUMMARY_PLANS, len(result.plans))
     rows = [

@@ -25,8 +25,9 @@ from xlplan.report.tables import (
     VOLTAGES,
 )
 
-WIDTHS = (26, 17, 26, 12, 12, 14, 30, 12, 12, 30, 11, 11, 12, 12, 12)
+WIDTHS = (20, 14, 22, 9.5, 9.5, 11, 24, 10.5, 10, 22, 10, 9.5, 9.5, 10, 9.5)
 CHART_ROWS = 19
+NOTE_CHARS = round(1.15 * sum(WIDTHS))
 MAX_BUSES_CHARTED = 200
 NORMAL, EVENTS = "normal service", "outage events"
 PASS, LOOK, UNSOLVED = "PASS", "LOOK", "LOOK: not solved"
@@ -69,7 +70,7 @@ def write(book: SafeBook, result: StudyResult) -> None:
         return
     row = 3
     for meaning in MEANINGS:
-        sheet.paragraph(row, 0, last_col, meaning, 235)
+        sheet.paragraph(row, 0, last_col, meaning, NOTE_CHARS)
         row += 1
     row = _verdicts(sheet, result, checked, row + 1)
     best = next((one for one in checked if one[0].name == result.recommended), checked[0])
@@ -219,7 +220,7 @@ def _losses(sheet: SafeSheet, checked: list[tuple[PlanResult, AcCheck]], row: in
         "here. Cost beyond the allowance: what losses cost more at the purchase price than the "
         "allowance has put into the plan; below 0 the allowance was ample."
     )
-    sheet.text(grid.below, 0, note, "note")
+    sheet.paragraph(grid.below, 0, len(WIDTHS) - 1, note, NOTE_CHARS, "note")
     return grid.below + 1
 
 
@@ -273,7 +274,7 @@ def _outside(sheet: SafeSheet, checked: list[tuple[PlanResult, AcCheck]], row: i
         f"served above 600 V: {narrow.low_pu:g} to {narrow.high_pu:g} p.u.; buses outside of that "
         "are marked in the next table."
     )
-    sheet.text(grid.below, 0, note, "note")
+    sheet.paragraph(grid.below, 0, len(WIDTHS) - 1, note, NOTE_CHARS, "note")
     return grid.below + 1
 
 
@@ -371,7 +372,7 @@ def _loadings(sheet: SafeSheet, checked: list[tuple[PlanResult, AcCheck]], row: 
         "voltage asks of them beyond their planned output is included; it is not taken from their "
         "stored energy or fuel."
     )
-    sheet.text(grid.below, 0, note, "note")
+    sheet.paragraph(grid.below, 0, len(WIDTHS) - 1, note, NOTE_CHARS, "note")
     return grid.below
 
 
