@@ -51,6 +51,7 @@ def bars(
     title: str,
     categories: CellRange,
     series: Sequence[Series],
+    category_title: str,
     axis_title: str,
     is_stacked: bool = False,
     label_above: float = 0.0,
@@ -79,7 +80,9 @@ def bars(
         chart.add_series(options)
     axis = {"reverse": True, "num_font": _font(10), "line": {"color": GREY}}
     # Names beside the plot, also where bars reach below 0.
-    chart.set_y_axis({**axis, "label_position": "low"})
+    chart.set_y_axis(
+        {**axis, "label_position": "low", "name": category_title, "name_font": _font(10)}
+    )
     chart.set_x_axis(
         {**_value_axis(axis_title, label_format), "label_position": "high", "min": None}
     )

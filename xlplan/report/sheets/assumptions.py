@@ -12,7 +12,6 @@ from xlplan.report.grid import Cell, Grid
 from xlplan.report.safe_book import SafeBook
 from xlplan.report.tables import ASSUMPTIONS, FINDINGS, INPUTS, RUN_FACTS
 
-
 WIDTHS = (28, 24, 36, 24, 44, 14, 34)
 
 

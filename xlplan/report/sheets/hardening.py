@@ -71,6 +71,7 @@ def write(book: SafeBook, result: StudyResult, plan_cells: PlanCells) -> Hardeni
             charts.Series(_title(sheet, in_plan), in_plan.chart_values("net"), BLUE),
             charts.Series(_title(sheet, alone), alone.chart_values("net"), ORANGE),
         ],
+        "Measure",
         book.words("Net value ({money}/year)"),
     )
     alt = "Bars: net value of each hardening measure beside the plan's purchases and alone."

@@ -204,6 +204,7 @@ def _charts(book: SafeBook, sheet: SafeSheet, classes: Grid, buses: Grid) -> Non
             "Energy not supplied by customer class",
             classes.chart_values("name"),
             pair(classes, "eens"),
+            "Customer class",
             "Energy not supplied (kWh/year)",
         )
         alt = "Bars: energy not supplied a year by customer class, existing feeder and plan."

@@ -70,6 +70,7 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
             charts.Series(grid.chart_name("low_change"), grid.chart_values("low_change"), BLUE),
             charts.Series(grid.chart_name("high_change"), grid.chart_values("high_change"), ORANGE),
         ],
+        "Assumption",
         book.words("Change of the yearly cost ({money}/year)"),
         overlap=100,
     )

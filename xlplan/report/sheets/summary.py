@@ -151,6 +151,7 @@ def _charts(book: SafeBook, sheet: SafeSheet, result: StudyResult, grid: Grid, r
             )
             for key, colour, label_colour in SEGMENTS
         ],
+        "Alternative",
         book.words("Yearly cost ({money}/year)"),
         is_stacked=True,
         label_above=0.09 * largest,
@@ -174,6 +175,7 @@ def _charts(book: SafeBook, sheet: SafeSheet, result: StudyResult, grid: Grid, r
                 grid.chart_name("outage_fair_h"), grid.chart_values("outage_fair_h"), BLUE
             ),
         ],
+        "Alternative",
         "Outage hours per customer (h/year)",
         label_format="0.00",
     )
