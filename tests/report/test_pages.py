@@ -134,7 +134,13 @@ def cut_texts(path: Path) -> list[str]:
         merged = {(m.min_row, m.min_col): m for m in sheet.merged_cells.ranges}
         for row in sheet.iter_rows(max_col=last_col):
             for cell in row:
-                if isinstance(cell, MergedCell) or not isinstance(cell.value, str):
+                if isinstance(cell, MergedCell) or cell.value is None:
+                    continue
+                if isinstance(cell.value, int | float):
+                    if digits_room(cell) > widths[cell.column - 1]:
+                        found.append(f"{sheet.title}!{cell.coordinate} {cell.value}: ####")
+                    continue
+                if not isinstance(cell.value, str):
                     continue
                 size = (cell.font.sz or 10.0) / 10.0
                 chars = CHARS[bool(cell.font.b)] / size
@@ -149,11 +155,29 @@ def cut_texts(path: Path) -> list[str]:
                     if len(cell.value) > 1.07 * room:
                         found.append(f"{place}: runs over")
                     continue
+                words = cell.value.replace("-", "- ").replace("/", "/ ").split()
+                if span is None and cell.font.b and max(map(len, words)) > 1.04 * room:
+                    found.append(f"{place}: breaks a word")
                 rows = range(cell.row, (span.max_row if span is not None else cell.row) + 1)
                 points = sum(sheet.row_dimensions[r].height or STANDARD_POINTS for r in rows)
                 if lines_needed(cell.value, room) * LINE_POINTS * size > points + 1.0:
                     found.append(f"{place}: too low")
     return found
+
+
+def digits_room(cell: Any) -> float:
+    """Width in characters that a number needs: digits, commas at half a digit, sign, padding."""
+    first = cell.number_format.split(";")[0]
+    decimals = len(first.partition(".")[2].split("_")[0].strip("%")) if "." in first else 0
+    if "E+" in first or first == "General":
+        return 0.0
+    value = cell.value * 100.0 if "%" in first else cell.value
+    whole = len(f"{abs(value):.{decimals}f}".partition(".")[0])
+    commas = (whole - 1) // 3 if "," in first else 0
+    signs = 1.0 if value < 0.0 or first.startswith("+") else 0.0
+    percent = 1.6 if "%" in first else 0.0
+    pad = 1.0 if "_W" in first else 0.0
+    return whole + 0.5 * commas + (decimals + 0.5 if decimals else 0.0) + signs + percent + pad
 
 
 def is_empty(sheet: Any, row: int, col: int) -> bool:

@@ -15,6 +15,7 @@ from xlsxwriter.utility import xl_rowcol_to_cell
 from xlplan.report.room import BODY_CHARS, HEADING_CHARS, LINE_POINTS, lines_needed
 from xlplan.report.safe_book import ABSENT, SafeSheet
 
+MOST_FOR_A_WORD = 18.0
 LEFT_LOOKS = ("text", "wrap", "status", "any")
 
 
@@ -39,6 +40,18 @@ class Column:
     look: str = "text"
     is_input: bool = False
     """Typed figures that formulas use: shown in blue on a pale fill."""
+
+
+def set_widths(sheet: SafeSheet, widths: Sequence[float], *tables: Sequence[Column]) -> None:
+    """Width of each column, in characters: as given, or what the longest heading word needs."""
+    wide = list(widths)
+    for table in tables:
+        for i, column in enumerate(table[: len(wide)]):
+            words = sheet.book.words(column.title).replace("-", "- ").split()
+            pad = 0.0 if column.look in LEFT_LOOKS else 1.0
+            need = max(map(len, words)) / HEADING_CHARS + pad
+            wide[i] = max(wide[i], min(need, MOST_FOR_A_WORD))
+    sheet.widths(wide)
 
 
 @dataclass(frozen=True)

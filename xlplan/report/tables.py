@@ -239,7 +239,7 @@ AC_LOSSES = (
     Column("unsolved", "Without AC solution", "whole"),
     Column("occurrences", "Occurrences (per year)", "hours"),
     Column("share_note", "Losses against the allowance", "wrap"),
-    Column("served", "Load served (kWh)", "energy"),
+    Column("served", "Load served (kWh)", "whole"),
     Column("loss", "AC losses (kWh)", "energy"),
     Column("note", "Note", "wrap"),
     Column("allowance", "Loss allowance (kWh)", "energy"),

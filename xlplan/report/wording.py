@@ -16,6 +16,9 @@ GAP_REACHED = "gap reached"
 SHED_SHOWN_KWH = 0.5
 """Below this a year's shedding in normal service would read as 0 kWh."""
 
+LEAST_VALUE = 0.5
+"""Money a year below which two plans cost the same in a sentence."""
+
 POISSON_WARNING_FRAC = 0.05
 """Above this share the one-at-a-time rule hides too many events (model.md section 2)."""
 
@@ -145,10 +148,14 @@ def outage_planning(result: StudyResult) -> str:
     words = f"95 % interval {money_words(span[0], currency)} to {money_words(span[1], currency)}"
     best = result.plan(LEAST_COST)
     left_open = abs(best.costs.total) * (best.gap_frac or 0.0)
+    if includes_zero(span) and abs(value) < LEAST_VALUE:
+        return (
+            "Planning for outages is worth nothing here: the plan that ignores them costs the same."
+        )
     if includes_zero(span):
         return (
             "Planning for outages is worth nothing here that can be told from 0: the plan that "
-            f"ignores them costs {money_words(value, currency)} a year more ({words})."
+            f"ignores them costs {_change(value, currency)} ({words})."
         )
     if 0.0 <= value <= left_open:
         return (

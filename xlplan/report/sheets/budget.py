@@ -5,7 +5,7 @@ from __future__ import annotations
 from xlplan.compare.pack_result import BudgetPoint
 from xlplan.compare.study_result import StudyResult
 from xlplan.report import charts, pack_wording
-from xlplan.report.grid import Cell, Formula, Grid
+from xlplan.report.grid import Cell, Formula, Grid, set_widths
 from xlplan.report.looks import BLUE, NAVY, ORANGE
 from xlplan.report.safe_book import SafeBook
 from xlplan.report.sheets.absent import say_absent
@@ -25,7 +25,7 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
         "The best plan found at each limit of capital after grants, from nothing to what would be "
         "spent without a limit.",
     )
-    sheet.widths(WIDTHS)
+    set_widths(sheet, WIDTHS, BUDGET_POINTS)
     points = result.pack.budget
     if not points:
         say_absent(sheet, result, "assets for sale")

@@ -13,7 +13,7 @@ from itertools import pairwise
 
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import CheckLine, PlanResult
-from xlplan.report.grid import Cell, Formula, Grid
+from xlplan.report.grid import Cell, Formula, Grid, set_widths
 from xlplan.report.money import baseline, formula_net_capital, formula_yearly
 from xlplan.report.safe_book import SafeBook
 from xlplan.report.sheets.alternatives import AlternativesCells
@@ -77,7 +77,7 @@ def write(
         "Each row sets two figures that should agree side by side. FAIL: a fault of the run. LOOK: "
         "for you to judge. CHANGED: a figure of this workbook was altered after the run.",
     )
-    sheet.widths([22, 36, 56, 17, 17, 12, 12, 12, 11])
+    set_widths(sheet, [22, 36, 56, 17, 17, 12, 12, 12, 11], CHECK_LINES)
     lines = [_run_line("Study", line) for line in result.checks]
     lines += [_run_line(plan.name, line) for plan in result.plans for line in plan.checks]
     lines += _money_lines(result, alternatives) + _energy_lines(result, reliability)

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from xlplan.compare.pack_result import HardeningValue, Worth
 from xlplan.compare.study_result import StudyResult
 from xlplan.report import charts
-from xlplan.report.grid import Cell, Formula, Grid
+from xlplan.report.grid import Cell, Formula, Grid, set_widths
 from xlplan.report.looks import BLUE, ORANGE
 from xlplan.report.money import NO_PAYBACK, UNDECIDED
 from xlplan.report.safe_book import SafeBook, SafeSheet
@@ -52,7 +52,7 @@ def write(book: SafeBook, result: StudyResult, plan_cells: PlanCells) -> Hardeni
         "Worth: yearly cost with the measure less than without it, before the measure's own cost. "
         "Same windows and random numbers with and without.",
     )
-    sheet.widths(WIDTHS)
+    set_widths(sheet, WIDTHS, WORTH)
     if not rows:
         say_absent(sheet, result, "measures on the Hardening sheet")
         return None

@@ -18,6 +18,7 @@ from xlplan.evaluate.results import Trace
 from xlplan.report import charts
 from xlplan.report.grid import Cell, Column, Formula, Grid
 from xlplan.report.looks import BLACK, SERIES_COLOURS, VERMILION
+from xlplan.report.room import BODY_CHARS
 from xlplan.report.safe_book import SafeBook, SafeSheet
 from xlplan.report.tables import OPERATION, TRACE_HEAD
 
@@ -77,10 +78,11 @@ def write(book: SafeBook, result: StudyResult) -> None:
         row = one.grid.below + 1
     last_col = max(12, *(len(one.grid.columns) - 1 for one in placed))
     sheet.widths([TIME_WIDTH, HOUR_WIDTH] + [COLUMN_WIDTH] * (last_col - 1))
+    chars = round(BODY_CHARS * sum(sheet.width(col) for col in range(last_col + 1)))
     for top, one in zip(tops, placed, strict=True):
         sheet.text(top, 0, one.trace.title, "section")
         for i, note in enumerate(_notes(one.trace)):
-            sheet.text(top + 1 + i, 0, note)
+            sheet.paragraph(top + 1 + i, 0, last_col, note, chars)
         _write_numbers(sheet, one)
         _write_charts(book, sheet, one, order, top + 1 + len(_notes(one.trace)))
     sheet.freeze(2, 0)

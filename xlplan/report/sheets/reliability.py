@@ -12,7 +12,7 @@ from dataclasses import dataclass
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import CauseResult, Indices, PlanResult
 from xlplan.report import charts
-from xlplan.report.grid import Cell, Formula, Grid
+from xlplan.report.grid import Cell, Formula, Grid, set_widths
 from xlplan.report.looks import BLUE, VERMILION
 from xlplan.report.money import baseline
 from xlplan.report.safe_book import SafeBook, SafeSheet
@@ -60,7 +60,7 @@ def write(book: SafeBook, result: StudyResult) -> ReliabilityCells:
         "Expected values per year by IEEE 1366 (customer interruptions count the largest share of "
         f"load shed at once). Tables further down: existing feeder and plan ({best.name}).",
     )
-    sheet.widths(WIDTHS)
+    set_widths(sheet, WIDTHS, INDICES, WINDOWS, CLASSES, BUSES, SECTIONS, CAUSES)
     indices = _indices(sheet, result, 3 + CHART_ROWS)
     row = _history(sheet, result, indices.below)
     windows = _windows(sheet, [base, best], row + 2)

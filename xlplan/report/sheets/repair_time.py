@@ -5,14 +5,14 @@ from __future__ import annotations
 from xlplan.compare.pack_result import RepairPoint
 from xlplan.compare.study_result import StudyResult
 from xlplan.report import charts, pack_wording
-from xlplan.report.grid import Cell, Formula, Grid
+from xlplan.report.grid import Cell, Formula, Grid, set_widths
 from xlplan.report.looks import BLUE, ORANGE
 from xlplan.report.money import UNDECIDED
 from xlplan.report.safe_book import SafeBook
 from xlplan.report.sheets.absent import say_absent
 from xlplan.report.tables import REPAIR_POINTS, REPAIR_TIME
 
-WIDTHS = (11, 12, 10, 13, 13, 13, 12, 12, 13, 13, 13, 13, 12, 12.5, 12.5, 12.5, 10)
+WIDTHS = (9.5, 10.5, 9, 13, 13, 13, 11.5, 11.5, 13, 13, 13, 12, 11.5, 12, 12, 12, 9)
 CHART_ROWS = 18
 CHART_TOP = 5
 PAYS, HOLDS = "yes", "no"
@@ -26,7 +26,7 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
         "All repair times multiplied by one factor. Plan kept: the purchases of the "
         f"{result.pack.plan_name or 'plan'}; plan made anew: the best purchases for that speed.",
     )
-    sheet.widths(WIDTHS)
+    set_widths(sheet, WIDTHS, REPAIR_POINTS)
     points = result.pack.repair_time
     if not points:
         say_absent(sheet, result, "outages")

@@ -7,7 +7,7 @@ from xlsxwriter.chart import Chart
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import EventSpread, PlanResult, WorstEvent
 from xlplan.report import charts
-from xlplan.report.grid import Cell, Grid
+from xlplan.report.grid import Cell, Grid, set_widths
 from xlplan.report.looks import BLUE, ORANGE, VERMILION
 from xlplan.report.money import baseline
 from xlplan.report.safe_book import SafeBook, SafeSheet
@@ -39,7 +39,7 @@ def write(book: SafeBook, result: StudyResult) -> None:
         f"Existing feeder and plan ({best.name}): simulated years, single outage events, and the "
         "worst scenarios. The plan minimises the expected cost, not the risk.",
     )
-    sheet.widths(WIDTHS)
+    set_widths(sheet, WIDTHS, SPREAD, WORST_EVENTS)
     rows = _figures(base, best)
     grid = Grid(RISK, 4 + ROWS_OF_CHARTS * CHART_ROWS, SPREAD, len(rows))
     sheet.text(grid.top - 1, 0, "Percentiles of a year and of one event", "section")

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from xlplan.compare.pack_result import SensitivityCase
 from xlplan.compare.study_result import StudyResult
 from xlplan.report import charts, pack_wording
-from xlplan.report.grid import Cell, Column, Formula, Grid
+from xlplan.report.grid import Cell, Column, Formula, Grid, set_widths
 from xlplan.report.looks import BLUE, ORANGE
 from xlplan.report.safe_book import SafeBook, SafeSheet
 from xlplan.report.sheets.absent import say_absent
@@ -41,7 +41,7 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
         "One assumption varied at a time, as the study asks. Best plan: made anew for the case; "
         f"plan kept: the purchases of the {result.pack.plan_name or 'plan'}.",
     )
-    sheet.widths(WIDTHS)
+    set_widths(sheet, WIDTHS, SENSITIVITY_ROWS, SENSITIVITY_PARTS, REGRETS)
     cases = result.pack.sensitivities
     if not cases:
         say_absent(sheet, result, "rows on its Sensitivities sheet")

@@ -9,7 +9,7 @@ from __future__ import annotations
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import PlanResult, Purchase
 from xlplan.report import charts, pack_wording, wording
-from xlplan.report.grid import Cell, Formula, Grid
+from xlplan.report.grid import Cell, Formula, Grid, set_widths
 from xlplan.report.looks import BLACK, BLUE, NAVY, ORANGE, SKY, VERMILION
 from xlplan.report.money import baseline, money_words
 from xlplan.report.room import BODY_CHARS
@@ -28,6 +28,9 @@ LAST_COL = len(SUMMARY_PLANS) - 1
 LEAST_CHART_ROWS, HEAD_ROWS, ROWS_PER_BAR = 12, 6, 1.3
 LEFT_CHART_SHARE = 0.54
 MAX_BOUGHT = 8
+LEAST_CAPITAL = 0.5
+"""What costs less is rounding of a size, not a purchase to speak of."""
+
 LEFT_LAST_COL = 4
 RIGHT_COL = 6
 SEGMENTS = (
@@ -48,7 +51,7 @@ def write(
     """Writes the sheet."""
     sheet = book.sheet(SUMMARY)
     width = max(LEAST_WIDTH, len(result.currency) + UNIT_CHARS)
-    sheet.widths([NAME_WIDTH] + [width] * LAST_COL)
+    set_widths(sheet, [NAME_WIDTH] + [width] * LAST_COL, SUMMARY_PLANS)
     chars = NAME_WIDTH + width * LAST_COL
     # The space before a percent sign must not end a line.
     headline = wording.headline(result).replace(" %", "\u00a0%")
@@ -190,7 +193,8 @@ def _charts(book: SafeBook, sheet: SafeSheet, result: StudyResult, grid: Grid, r
 def _purchases(sheet: SafeSheet, result: StudyResult, row: int) -> int:
     """What to buy, dearest first; next free row."""
     best = result.plan(result.recommended)
-    bought = sorted((a for a in best.purchases if a.is_bought), key=lambda a: -a.capital_net)
+    shown = (a for a in best.purchases if a.is_bought and a.capital_gross >= LEAST_CAPITAL)
+    bought = sorted(shown, key=lambda a: -a.capital_net)
     sheet.text(row, 0, f"What to buy: {best.name}", "section")
     row += 1
     if not bought:

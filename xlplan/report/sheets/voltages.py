@@ -13,7 +13,7 @@ from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.ac_results import AcCheck, BusVoltage
 from xlplan.evaluate.results import PlanResult
 from xlplan.report import charts
-from xlplan.report.grid import Cell, Formula, Grid
+from xlplan.report.grid import Cell, Formula, Grid, set_widths
 from xlplan.report.looks import BLUE, SKY, VERMILION
 from xlplan.report.safe_book import SafeBook, SafeSheet
 from xlplan.report.tables import (
@@ -61,7 +61,7 @@ def write(book: SafeBook, result: StudyResult) -> None:
         "Lowest and highest voltage of every bus, linear model against AC power flow; losses left "
         "out by the linear model. A check of the plans, no replacement for a three-phase study.",
     )
-    sheet.widths(WIDTHS)
+    set_widths(sheet, WIDTHS, AC_PLANS, AC_LOSSES, AC_VOLTAGES)
     last_col = len(WIDTHS) - 1
     checked = [(plan, plan.ac) for plan in result.plans if plan.ac is not None]
     if not checked:
