@@ -95,7 +95,14 @@ def test_sheets_are_these_and_no_others(workbook_path: Path) -> None:
     assert formulas["Summary"].page_setup.fitToHeight in (None, 1)
     assert formulas["Plan"].page_setup.fitToHeight == 0
     broken = {sheet.title for sheet in formulas if sheet.row_breaks.brk}
-    assert broken == {"Sensitivities", "Risk", "Operation", "Feeder"}
+    assert broken == {
+        "Sensitivities",
+        "Reliability",
+        "Risk",
+        "Operation",
+        "Voltages",
+        "Feeder",
+    }
 
 
 def test_every_formula_has_a_value_and_none_is_an_error(workbook_path: Path) -> None:

@@ -34,7 +34,7 @@ class Series:
     """One series: its name and values as cells, its colour.
 
     ``labels``: value of each point, to label those large enough to hold a label; ``dash``: line
-    style, which keeps lines apart in a grey print.
+    style, which keeps lines apart in a grey print; ``has_labels`` False: no figures beside bars.
     """
 
     name: CellRange
@@ -44,6 +44,7 @@ class Series:
     label_colour: str = BLACK
     dash: str = "solid"
     width_pt: float = 2.0
+    has_labels: bool = True
 
 
 def bars(
@@ -56,7 +57,6 @@ def bars(
     is_stacked: bool = False,
     label_above: float = 0.0,
     label_format: str = "#,##0",
-    has_labels: bool = True,
     overlap: int | None = None,
 ) -> Chart:
     """Horizontal bars from 0, first category on top; stacked segments from ``label_above`` on.
@@ -75,13 +75,19 @@ def bars(
         }
         if is_stacked or overlap is not None:
             options["overlap"] = 100 if overlap is None else overlap
-        if has_labels and (one.labels or not is_stacked):
+        if one.has_labels and (one.labels or not is_stacked):
             options["data_labels"] = _labels(one, is_stacked, label_above, label_format)
         chart.add_series(options)
     axis = {"reverse": True, "num_font": _font(10), "line": {"color": GREY}}
     # Names beside the plot, also where bars reach below 0.
     chart.set_y_axis(
-        {**axis, "label_position": "low", "name": category_title, "name_font": _font(10)}
+        {
+            **axis,
+            "label_position": "low",
+            "interval_unit": 1,
+            "name": category_title,
+            "name_font": _font(10),
+        }
     )
     chart.set_x_axis(
         {**_value_axis(axis_title, label_format), "label_position": "high", "min": None}
@@ -317,7 +323,7 @@ def _finish_over_time(
     )
     axis = _value_axis(axis_title, number_format)
     if axis_max is not None:
-        axis.update({"min": 0, "max": axis_max})
+        axis.update({"min": 0, "max": axis_max, "major_unit": 0.2})
     elif axis_min is not None:
         axis["min"] = axis_min
     chart.set_y_axis(axis)

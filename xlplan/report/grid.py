@@ -48,7 +48,7 @@ def set_widths(sheet: SafeSheet, widths: Sequence[float], *tables: Sequence[Colu
     for table in tables:
         for i, column in enumerate(table[: len(wide)]):
             words = sheet.book.words(column.title).replace("-", "- ").split()
-            pad = 0.0 if column.look in LEFT_LOOKS else 1.0
+            pad = 1.0 if column.look in LEFT_LOOKS else 1.5
             need = max(map(len, words)) / HEADING_CHARS + pad
             wide[i] = max(wide[i], min(need, MOST_FOR_A_WORD))
     sheet.widths(wide)

@@ -15,6 +15,9 @@ GREEN = "#009E73"
 ORANGE = "#E69F00"
 SKY = "#56B4E9"
 PURPLE = "#CC79A7"
+YELLOW = "#F0E442"
+LIGHT_BLUE = "#BFE3F7"
+LIGHT_VERMILION = "#F6CDB0"
 NAVY = "#0B3954"
 BLACK = "#000000"
 INK = "#1B2B34"
@@ -26,8 +29,11 @@ INPUT_FONT = "#0000FF"
 OK_FILL, OK_FONT = "#D9F0E6", "#00543C"
 LOOK_FILL, LOOK_FONT = "#FFD8B0", "#7A3E00"
 
-SERIES_COLOURS = (BLUE, ORANGE, VERMILION, SKY, GREEN, PURPLE)
-"""Up to six series, neighbours apart in lightness."""
+AREA_COLOURS = (BLUE, ORANGE, NAVY, YELLOW, VERMILION, LIGHT_BLUE)
+"""Up to six stacked series, apart in lightness: a grey print keeps them apart."""
+
+LINE_COLOURS = (BLUE, ORANGE, VERMILION, SKY, GREEN, PURPLE)
+"""Up to six lines, all dark enough on white; dashes keep them apart in a grey print."""
 
 FONT = "Arial"
 

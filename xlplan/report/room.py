@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-HEADING_CHARS, BODY_CHARS = 1.0, 1.2
+HEADING_CHARS, BODY_CHARS = 1.0, 1.1
 """Characters of bold and of plain Arial that fit in one unit of column width (measured)."""
 
 LINE_POINTS = 13.0

@@ -176,6 +176,10 @@ class SafeSheet:
         room = PAGE_INCHES[1] - MARGINS["top"] - MARGINS["bottom"]
         return int(room * PIXELS_PER_INCH / self.print_scale(last_col))
 
+    def default_height(self, points: float) -> None:
+        """Height of all rows that get none of their own; to be set before anything is written."""
+        self._sheet.set_default_row(points)
+
     def freeze(self, row: int, col: int) -> None:
         """Keeps the rows above and the columns left of a cell in sight."""
         self._sheet.freeze_panes(row, col)

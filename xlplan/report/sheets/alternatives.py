@@ -26,7 +26,7 @@ from xlplan.report.tables import ALTERNATIVES
 STUDY_LIFE = "study_life_years"
 RATE_ROW, LIFE_ROW = 3, 4
 FIRST_PLAN_COL = 2
-LABEL_WIDTH, UNIT_WIDTH, PLAN_WIDTH, NOTE_WIDTH = 38, 13, 14, 66
+LABEL_WIDTH, UNIT_WIDTH, PLAN_WIDTH, NOTE_WIDTH = 38, 14, 14, 66
 NUMBER_PARTS = (
     "energy",
     "fuel",

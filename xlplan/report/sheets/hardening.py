@@ -15,7 +15,7 @@ from xlplan.report.sheets.absent import say_absent
 from xlplan.report.sheets.plan import PlanCells
 from xlplan.report.tables import HARDENING, WORTH
 
-WIDTHS = (7, 27, 17, 10, 8, 12, 12.5, 13, 12.5, 12.5, 12.5, 12.5, 12.5, 11, 11, 13)
+WIDTHS = (7, 25, 14, 9, 8, 12, 12.5, 13, 12.5, 12.5, 12.5, 12.5, 12.5, 11, 11, 13)
 NOT_RANKED = "-"
 WORTH_IT, NOT_WORTH_IT = "worth it", "not worth it"
 ROWS_PER_BAR = 2

@@ -17,7 +17,7 @@ from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import Trace
 from xlplan.report import charts
 from xlplan.report.grid import Cell, Column, Formula, Grid
-from xlplan.report.looks import BLACK, SERIES_COLOURS, VERMILION
+from xlplan.report.looks import AREA_COLOURS, BLACK, LINE_COLOURS, VERMILION
 from xlplan.report.room import BODY_CHARS
 from xlplan.report.safe_book import SafeBook, SafeSheet
 from xlplan.report.tables import OPERATION, TRACE_HEAD
@@ -25,7 +25,11 @@ from xlplan.report.tables import OPERATION, TRACE_HEAD
 MAX_CHARTED = 6
 """Series a chart holds; smaller sources share one column "Other sources"."""
 
-CHART_ROWS = 15
+LEAST_LAST_COL = 15
+FULL = 1.02
+"""End of the axis of states of charge: lines at its very edge would be cut."""
+
+CHART_ROWS = 18
 LONG_TABLE = 0.85
 """Share of a page's height beyond which rows of a table do not fit on it with their heading."""
 
@@ -76,7 +80,7 @@ def write(book: SafeBook, result: StudyResult) -> None:
         one = _place(trace, order, stores, row + 1 + (1 if stores else 0))
         placed.append(one)
         row = one.grid.below + 1
-    last_col = max(12, *(len(one.grid.columns) - 1 for one in placed))
+    last_col = max(LEAST_LAST_COL, *(len(one.grid.columns) - 1 for one in placed))
     sheet.widths([TIME_WIDTH, HOUR_WIDTH] + [COLUMN_WIDTH] * (last_col - 1))
     chars = round(BODY_CHARS * sum(sheet.width(col) for col in range(last_col + 1)))
     for top, one in zip(tops, placed, strict=True):
@@ -206,10 +210,10 @@ def _write_charts(
         return charts.Series(name, values, colour, dash=dash, width_pt=width_pt)
 
     columns = [
-        series(f"source {n}", SERIES_COLOURS[order.index(n)]) for n in one.sources if one.uses([n])
+        series(f"source {n}", AREA_COLOURS[order.index(n)]) for n in one.sources if one.uses([n])
     ]
     if one.uses(one.rest):
-        columns.append(series("other", SERIES_COLOURS[-1]))
+        columns.append(series("other", AREA_COLOURS[-1]))
     load = series("load", BLACK, width_pt=1.5)
     drawn = []
     if columns:
@@ -233,7 +237,7 @@ def _write_charts(
     largest = sorted(one.capacity, key=lambda name: -one.capacity[name])[:MAX_CHARTED]
     if largest:
         lines = [
-            series(f"soc {name}", SERIES_COLOURS[i], DASHES[i]) for i, name in enumerate(largest)
+            series(f"soc {name}", LINE_COLOURS[i], DASHES[i]) for i, name in enumerate(largest)
         ]
         drawn.append(
             (
@@ -244,13 +248,13 @@ def _write_charts(
                     lines,
                     "State of charge (%)",
                     n_point,
-                    axis_max=1.0,
+                    axis_max=FULL,
                     number_format="0%",
                 ),
                 "lines of the state of charge of each store by period.",
             )
         )
-    total = min(MAX_CHART_PX, sheet.pixels(0, max(12, len(grid.columns) - 1)))
+    total = min(MAX_CHART_PX, sheet.pixels(0, max(LEAST_LAST_COL, len(grid.columns) - 1)))
     width = total // max(2, len(drawn))
     for i, (chart, words) in enumerate(drawn):
         sheet.chart(row, i * width, chart, width - 10, height, f"{trace.title}: {words}"[:250])

@@ -13,7 +13,7 @@ from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import CauseResult, Indices, PlanResult
 from xlplan.report import charts
 from xlplan.report.grid import Cell, Formula, Grid, set_widths
-from xlplan.report.looks import BLUE, VERMILION
+from xlplan.report.looks import BLUE, ORANGE
 from xlplan.report.money import baseline
 from xlplan.report.safe_book import SafeBook, SafeSheet
 from xlplan.report.tables import (
@@ -69,7 +69,9 @@ def write(book: SafeBook, result: StudyResult) -> ReliabilityCells:
     _charts(book, sheet, classes, buses)
     causes = _causes(sheet, base, best, buses.below + 2)
     sheet.freeze(2, 1)
-    sheet.print_setup(causes.below, len(CLASSES) - 1, heading_row=causes.top)
+    sections_row = buses.below + 2
+    breaks = [windows.top - 1, sections_row]
+    sheet.print_setup(causes.below, len(CLASSES) - 1, heading_row=causes.top, breaks=breaks)
     return ReliabilityCells(indices, windows, classes, buses)
 
 
@@ -190,7 +192,7 @@ def _charts(book: SafeBook, sheet: SafeSheet, classes: Grid, buses: Grid) -> Non
     """Energy not supplied by class, outage time by bus: existing feeder beside plan."""
 
     def pair(grid: Grid, key: str) -> list[charts.Series]:
-        sides = ((f"{key}_base", VERMILION), (f"{key}_plan", BLUE))
+        sides = ((f"{key}_base", ORANGE), (f"{key}_plan", BLUE))
         return [
             charts.Series(grid.chart_name(one), grid.chart_values(one), colour)
             for one, colour in sides

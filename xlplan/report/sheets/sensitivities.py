@@ -14,7 +14,10 @@ from xlplan.report.sheets.absent import say_absent
 from xlplan.report.tables import REGRETS, SENSITIVITIES, SENSITIVITY_PARTS, SENSITIVITY_ROWS
 
 WIDTHS = (30, 13, 13, 13, 13, 13, 13, 13, 32, 32, 18)
-CHART_ROWS, ROWS_PER_BAR = 9, 2
+CHART_ROWS, ROWS_PER_BAR = 9, 1.7
+MOST_BESIDE_CHART = 3
+"""Rows of the tables that fit on the page of the chart."""
+
 CHART_TOP = 5
 AS_GIVEN = "as given"
 
@@ -50,7 +53,7 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
     pairs = sorted(_pairs(cases), key=lambda one: one.span(base)[0] - one.span(base)[1])
     words = pack_wording.sensitivities(result)
     sheet.paragraph(3, 0, len(WIDTHS) - 1, words, sum(WIDTHS), "text", "bold")
-    n_row = CHART_ROWS + ROWS_PER_BAR * len(pairs)
+    n_row = CHART_ROWS + round(ROWS_PER_BAR * len(pairs))
     base_row = CHART_TOP + n_row + 1
     sheet.text(base_row, 0, f"Yearly cost as given: {result.pack.plan_name}")
     sheet.number(base_row, 3, base, "money")
@@ -75,7 +78,8 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
         overlap=100,
     )
     alt = "Bars to both sides: change of the yearly cost at the low and high value of each row."
-    sheet.chart(CHART_TOP, 0, chart, 1150, n_row * charts.PIXELS_PER_ROW - 10, alt)
+    width = sheet.pixels(0, len(WIDTHS) - 1) - 10
+    sheet.chart(CHART_TOP, 0, chart, width, n_row * charts.PIXELS_PER_ROW - 10, alt)
     row = _regrets(sheet, result, parts.below + 2)
     notes = (
         "The plan changes where another asset is bought or a size moves by more than 10 %. Kept "
@@ -88,8 +92,9 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
     for i, note in enumerate(notes):
         sheet.text(row + i, 0, note, "note")
     sheet.freeze(2, 1)
+    breaks = [*([] if len(pairs) <= MOST_BESIDE_CHART else [base_row]), parts.below + 2]
     last_col = max(len(WIDTHS), len(result.pack.regrets) + 3) - 1
-    sheet.print_setup(row + len(notes), last_col, breaks=[parts.below + 2])
+    sheet.print_setup(row + len(notes), last_col, breaks=breaks)
     return grid
 
 

@@ -6,11 +6,21 @@ sheets that hold them, so that nothing is calculated twice.
 
 from __future__ import annotations
 
+import math
+
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import PlanResult, Purchase
 from xlplan.report import charts, pack_wording, wording
 from xlplan.report.grid import Cell, Formula, Grid, set_widths
-from xlplan.report.looks import BLACK, BLUE, NAVY, ORANGE, SKY, VERMILION
+from xlplan.report.looks import (
+    BLACK,
+    BLUE,
+    LIGHT_BLUE,
+    LIGHT_VERMILION,
+    NAVY,
+    ORANGE,
+    VERMILION,
+)
 from xlplan.report.money import baseline, money_words
 from xlplan.report.room import BODY_CHARS
 from xlplan.report.safe_book import SafeBook, SafeSheet
@@ -20,12 +30,16 @@ from xlplan.report.sheets.checks import ChecksCells
 from xlplan.report.sheets.reliability import ReliabilityCells
 from xlplan.report.tables import CAUTIONS, PLAN, SUMMARY, SUMMARY_PLANS, SUMMARY_WORTH
 
-NAME_WIDTH, LEAST_WIDTH = 26.0, 13.0
+NAME_WIDTH, LEAST_WIDTH = 26.0, 14.0
 UNIT_CHARS = 8.5
 """Room that a heading's ``(.../year)`` takes beside the currency."""
 
 LAST_COL = len(SUMMARY_PLANS) - 1
-LEAST_CHART_ROWS, HEAD_ROWS, ROWS_PER_BAR = 12, 6, 1.3
+ROW_POINTS, ROW_PIXELS, SECTION_POINTS = 12.75, 17, 17.0
+"""Rows just high enough for a line, since all has to stand on one page."""
+
+LEAST_CHART_PX, CHART_HEAD_PX, PX_PER_BAR = 235, 145, 23
+CHART_GAP_PX = 10
 LEFT_CHART_SHARE = 0.54
 MAX_BOUGHT = 8
 LEAST_CAPITAL = 0.5
@@ -36,7 +50,7 @@ RIGHT_COL = 6
 SEGMENTS = (
     ("upkeep", NAVY, "#FFFFFF"),
     ("supply", BLUE, "#FFFFFF"),
-    ("other", SKY, BLACK),
+    ("other", LIGHT_BLUE, BLACK),
     ("customers", ORANGE, BLACK),
 )
 
@@ -50,6 +64,7 @@ def write(
 ) -> None:
     """Writes the sheet."""
     sheet = book.sheet(SUMMARY)
+    sheet.default_height(ROW_POINTS)
     width = max(LEAST_WIDTH, len(result.currency) + UNIT_CHARS)
     set_widths(sheet, [NAME_WIDTH] + [width] * LAST_COL, SUMMARY_PLANS)
     chars = NAME_WIDTH + width * LAST_COL
@@ -57,7 +72,7 @@ def write(
     headline = wording.headline(result).replace(" %", "\u00a0%")
     sheet.paragraph(0, 0, LAST_COL, headline, round(0.58 * chars), "title")
     sheet.paragraph(
-        1, 0, LAST_COL, wording.consequence(result), round(1.08 * chars), "text", "bold"
+        1, 0, LAST_COL, wording.consequence(result), round(1.15 * chars), "text", "bold"
     )
     sheet.paragraph(2, 0, LAST_COL, wording.basis(result), round(BODY_CHARS * chars), "subtitle")
     grid = Grid(SUMMARY, 4, SUMMARY_PLANS, len(result.plans))
@@ -77,7 +92,10 @@ def write(
     matters, found = pack_wording.three_things(result), pack_wording.findings(result)
     left = _purchases(sheet, result, row)
     right = _sentences(sheet, "Three things that matter most", matters, row, RIGHT_COL)
-    left = _sentences(sheet, "What the comparisons found", found, left, 0)
+    about = "What the comparisons found"
+    if result.pack.plan_name not in ("", result.recommended):
+        about += f" ({result.pack.plan_name})"
+    left = _sentences(sheet, about, found, left, 0)
     right = _sentences(sheet, "What is uncertain", wording.uncertainties(result), right, RIGHT_COL)
     row = max(left, right) + 1
     sheet.text(row, 0, "Do the numbers agree?", "status")
@@ -161,8 +179,8 @@ def _charts(book: SafeBook, sheet: SafeSheet, result: StudyResult, grid: Grid, r
     )
     total = sheet.pixels(0, LAST_COL)
     left = round(LEFT_CHART_SHARE * total)
-    n_row = max(LEAST_CHART_ROWS, HEAD_ROWS + round(ROWS_PER_BAR * len(result.plans)))
-    height = n_row * charts.PIXELS_PER_ROW - 10
+    height = max(LEAST_CHART_PX, CHART_HEAD_PX + PX_PER_BAR * len(result.plans))
+    n_row = math.ceil((height + CHART_GAP_PX) / ROW_PIXELS)
     alt = (
         "Stacked bars: yearly cost of each alternative, in investment and upkeep; energy, fuel "
         "and demand; repairs and other; and customers' outage cost."
@@ -175,7 +193,10 @@ def _charts(book: SafeBook, sheet: SafeSheet, result: StudyResult, grid: Grid, r
         [
             charts.Series(grid.chart_name("outage_h"), grid.chart_values("outage_h"), VERMILION),
             charts.Series(
-                grid.chart_name("outage_fair_h"), grid.chart_values("outage_fair_h"), BLUE
+                grid.chart_name("outage_fair_h"),
+                grid.chart_values("outage_fair_h"),
+                LIGHT_VERMILION,
+                has_labels=False,
             ),
         ],
         "Alternative",
@@ -196,6 +217,7 @@ def _purchases(sheet: SafeSheet, result: StudyResult, row: int) -> int:
     shown = (a for a in best.purchases if a.is_bought and a.capital_gross >= LEAST_CAPITAL)
     bought = sorted(shown, key=lambda a: -a.capital_net)
     sheet.text(row, 0, f"What to buy: {best.name}", "section")
+    sheet.height(row, SECTION_POINTS)
     row += 1
     if not bought:
         sheet.text(row, 0, "Nothing.", "text")
@@ -214,6 +236,8 @@ def _asset_words(asset: Purchase, currency: str) -> str:
     capital = f"capital {money_words(asset.capital_net, currency)} after grants"
     if asset.kind == "hardening":
         return f"•  {asset.asset}: hardening of {asset.place}; {capital}"
+    if asset.kind == "device":
+        return f"•  {asset.asset}; {capital}"
     size = f"{asset.kw:,.1f} kW"
     if asset.kind == "storage":
         size += f", {asset.kwh:,.1f} kWh"
@@ -225,6 +249,7 @@ def _sentences(sheet: SafeSheet, title: str, sentences: list[str], row: int, col
     if not sentences:
         return row
     sheet.text(row, col, title, "section")
+    sheet.height(row, SECTION_POINTS)
     row += 1
     for sentence in sentences:
         last_col = LAST_COL if col == RIGHT_COL else LEFT_LAST_COL

@@ -25,7 +25,7 @@ from xlplan.report.tables import (
     VOLTAGES,
 )
 
-WIDTHS = (20, 14, 22, 9.5, 9.5, 11, 24, 10.5, 10, 22, 10, 9.5, 9.5, 10, 9.5)
+WIDTHS = (20, 14, 22, 9.5, 9.5, 11, 24, 11.5, 11, 22, 11, 11, 11, 11, 11)
 CHART_ROWS = 19
 NOTE_CHARS = round(1.15 * sum(WIDTHS))
 MAX_BUSES_CHARTED = 200
@@ -77,14 +77,18 @@ def write(book: SafeBook, result: StudyResult) -> None:
     chart_row = row + 1
     n_bus = sum(not bus.is_event for bus in best[1].buses)
     has_chart = 1 < n_bus <= MAX_BUSES_CHARTED
-    row = _losses(sheet, checked, chart_row + (CHART_ROWS if has_chart else 0))
-    row = _outside(sheet, checked, row + 1)
-    voltages, row = _voltages(sheet, best, checked, row + 1)
-    row = _loadings(sheet, checked, row + 1)
+    losses_row = chart_row + (CHART_ROWS if has_chart else 0)
+    row = _losses(sheet, checked, losses_row)
+    outside_row = row + 1
+    loadings_row = _outside(sheet, checked, outside_row) + 1
+    voltages_row = _loadings(sheet, checked, loadings_row) + 1
+    # The longest table comes last, so that its heading can stand on every page from there on.
+    voltages, row = _voltages(sheet, best, checked, voltages_row)
     if has_chart:
         _chart(book, sheet, best, voltages, n_bus, chart_row)
     sheet.freeze(2, 1)
-    sheet.print_setup(row, last_col)
+    breaks = [losses_row, outside_row, voltages_row]
+    sheet.print_setup(row, last_col, heading_row=voltages.top, breaks=breaks)
 
 
 def _verdicts(
@@ -272,7 +276,7 @@ def _outside(sheet: SafeSheet, checked: list[tuple[PlanResult, AcCheck]], row: i
         "Range A is meant for normal operation; outage events are listed for information. The drop "
         "of customers' transformers and service lines comes on top of what is shown. Customers "
         f"served above 600 V: {narrow.low_pu:g} to {narrow.high_pu:g} p.u.; buses outside of that "
-        "are marked in the next table."
+        "are marked in the last table."
     )
     sheet.paragraph(grid.below, 0, len(WIDTHS) - 1, note, NOTE_CHARS, "note")
     return grid.below + 1
