@@ -277,4 +277,4 @@ def test_sheets_with_a_scale_of_their_own_fit_letter(workbook_path: Path) -> Non
             pixels = sum(7.41 * (width + 0.71) for width in widths)
             assert pixels * sheet.page_setup.scale / 100.0 <= letter, sheet.title
             n_scaled += 1
-    assert n_scaled == 6
+    assert n_scaled == 7

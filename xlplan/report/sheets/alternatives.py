@@ -112,7 +112,9 @@ def write(
     sheet.widths([LABEL_WIDTH, unit] + [PLAN_WIDTH] * len(result.plans) + [NOTE_WIDTH])
     sheet.freeze(HEAD_ROW + 1, FIRST_PLAN_COL)
     write_prices(sheet, plan_cells.price_list)
-    sheet.print_setup(plan_cells.price_list.below, note_col, heading_row=HEAD_ROW)
+    prices = plan_cells.price_list
+    breaks = [prices.top] if prices.assets else []
+    sheet.print_setup(prices.below, note_col, heading_row=HEAD_ROW, breaks=breaks)
     return replace(cells, content=content)
 
 

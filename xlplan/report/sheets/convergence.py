@@ -54,13 +54,11 @@ def write(book: SafeBook, result: StudyResult) -> None:
     passes.write(sheet, [_pass_row(one) for one in best.convergence])
     _write_chart(book, best, passes, chart_row)
     sheet.freeze(2, 0)
-    sheet.print_setup(passes.below, len(METHODS) - 1)
+    sheet.print_setup(passes.below, len(METHODS) - 1, heading_row=passes.top)
 
 
 def _method_row(plan: PlanResult) -> dict[str, Cell]:
-    counted = (
-        "every path counted" if plan.is_enumerated else f"{plan.n_sample:,} sampled continuations"
-    )
+    counted = "every path counted" if plan.is_enumerated else f"{plan.n_sample:,} sampled histories"
     return {
         "name": plan.name,
         "bound": plan.lower_bound,

@@ -102,7 +102,7 @@ def write(book: SafeBook, result: StudyResult) -> None:
     sheet.text(lines.top - 1, 0, "Lines: state in each drawing", "section")
     _write_lines(sheet, drawing, lines)
     walks = [walk for i in range(n_stage) for walk in stage_walks(drawing, i)]
-    paths = Grid(FEEDER, lines.below + 2, PATHS, sum(len(walk.buses) for walk in walks))
+    paths = Grid(FEEDER, lines.below + 3, PATHS, sum(len(walk.buses) for walk in walks))
     sheet.text(paths.top - 1, 0, "Paths: how the charts draw the lines", "section")
     first_row = _write_paths(sheet, drawing, paths, walks)
     for i, (top, title) in enumerate(zip(tops, drawing.stages, strict=True)):
@@ -121,11 +121,11 @@ def write(book: SafeBook, result: StudyResult) -> None:
         if drawing.is_computed
         else "Places are those of the study's Buses sheet."
     )
-    sheet.text(paths.below + 1, 0, how, "note")
+    sheet.text(lines.below, 0, how, "note")
     sheet.freeze(2, 0)
-    breaks = [*tops[per_page::per_page], numbers_top, paths.top - 1]
-    # The columns that only feed the charts stay off the printed page.
-    sheet.print_setup(paths.below + 1, last_col, heading_row=paths.top, breaks=breaks)
+    breaks = [*tops[per_page::per_page], numbers_top]
+    # What only feeds the charts stays off the printed page.
+    sheet.print_setup(lines.below, last_col, breaks=breaks)
 
 
 def _bus_columns(drawing: FeederDrawing) -> tuple[Column, ...]:

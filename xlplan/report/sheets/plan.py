@@ -80,7 +80,7 @@ def write(book: SafeBook, result: StudyResult) -> PlanCells:
     bought.write(sheet, rows, marked=marked)
     sheet.text(bought.below + 1, 0, NOTE, "note")
     sheet.freeze(2, 1)
-    sheet.print_setup(bought.below + 1, len(PURCHASES) - 1)
+    sheet.print_setup(bought.below + 1, len(PURCHASES) - 1, heading_row=bought.top)
     return PlanCells(totals, prices, price_row, price_list)
 
 
