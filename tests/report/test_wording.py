@@ -101,17 +101,17 @@ def test_uncertainties(result: StudyResult) -> None:
     assert "statistical" not in counted
     window = dataclasses.replace(result.plans[2].windows[0], poisson_events=0.2)
     busy = " ".join(wording.uncertainties(with_best(result, windows=(window,))))
-    assert "Window ordinary day: failures often overlap" in busy
+    assert "In window ordinary day failures often overlap" in busy
     span = dataclasses.replace(result, value_of_outage_planning_interval=(-1.0, 5.0))
     assert "worth nothing here that can be told from 0" in " ".join(wording.uncertainties(span))
 
 
 def test_rivals_are_named(result: StudyResult) -> None:
-    assert "Not clearly dearer" not in " ".join(wording.uncertainties(result))
+    assert "As cheap as this plan" not in " ".join(wording.uncertainties(result))
     low = result.plan(LEAST_COST).cost_interval[0]
     near = dataclasses.replace(result.plans[3], cost_interval=(low, low + 1.0))
     tied = dataclasses.replace(result, plans=(*result.plans[:3], near))
-    assert "Not clearly dearer than this plan: =1+1 switches." in " ".join(
+    assert "As cheap as this plan within what the run leaves open: =1+1 switches." in " ".join(
         wording.uncertainties(tied)
     )
 

@@ -55,7 +55,7 @@ def knee(result: StudyResult) -> str:
     return (
         f"The first {money_words(here.budget, currency)} of capital bring {share:.0f} % of what "
         f"{money_words(last.budget, currency)} bring: up to there each 1,000 {currency} saves "
-        f"{money_words(first, currency)} a year, its own cost paid; beyond, the curve bends and "
+        f"{money_words(first, currency)} a year net of its own cost; beyond, the curve bends and "
         f"each saves {money_words(rest, currency)}.{free}"
     )
 

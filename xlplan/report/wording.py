@@ -230,7 +230,7 @@ def _rivals(result: StudyResult, best: PlanResult) -> list[str]:
     ]
     if not near:
         return []
-    return [f"Not clearly dearer than this plan: {'; '.join(near)}."]
+    return [f"As cheap as this plan within what the run leaves open: {'; '.join(near)}."]
 
 
 def _warnings(result: StudyResult, best: PlanResult) -> list[str]:
@@ -246,7 +246,7 @@ def _warnings(result: StudyResult, best: PlanResult) -> list[str]:
     for window in best.windows:
         if window.poisson_events > window.expected_events * (1.0 + POISSON_WARNING_FRAC):
             said.append(
-                f"Window {window.window}: failures often overlap; one at a time hides that."
+                f"In window {window.window} failures often overlap; the model takes one at a time."
             )
     if best.normal_shed_kwh > SHED_SHOWN_KWH:
         said.append(
