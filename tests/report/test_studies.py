@@ -400,6 +400,25 @@ def test_pages_of_real_studies(studies: dict[str, Study], name: str) -> None:
     check_charts(path)
 
 
+@pytest.mark.parametrize("name", NAMES)
+def test_every_reconciliation_has_its_line_and_none_fails(
+    studies: dict[str, Study], name: str
+) -> None:
+    path, twin = studies[name]
+    sheet = openpyxl.load_workbook(path, data_only=True)["Checks"]
+    rows = [row for row in sheet.iter_rows(values_only=True) if row[8] in ("PASS", "LOOK", "FAIL")]
+    assert not [row for row in rows if row[8] == "FAIL"]
+    names = {str(row[1]) for row in rows}
+    sums = ("bus", "customer class", "window", "dead section and cause")
+    assert {f"Energy not supplied by {word}" for word in sums} <= names
+    assert {"Total of the Alternatives sheet", "Worth of planning for outages"} <= names
+    if name == "villages":
+        assert {"Sensitivities begin at the study as given", "Repair times as given"} <= names
+        assert {"Budget curve never rises", "No measure does harm"} <= names
+    of_plans = [row for row in rows if row[1] == "Sum of the ten cost parts"]
+    assert [row[0] for row in of_plans] == [plan["name"] for plan in twin["alternatives"]]
+
+
 def test_planning_for_outages_is_worth_nothing_where_there_are_none(
     studies: dict[str, Study],
 ) -> None:

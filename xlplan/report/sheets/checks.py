@@ -11,6 +11,7 @@ import math
 from dataclasses import dataclass
 from itertools import pairwise
 
+from xlplan.base.names import IGNORING_OUTAGES, LEAST_COST
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import CheckLine, PlanResult
 from xlplan.report.grid import Cell, Formula, Grid, set_widths
@@ -19,7 +20,7 @@ from xlplan.report.safe_book import SafeBook
 from xlplan.report.sheets.alternatives import AlternativesCells
 from xlplan.report.sheets.hardening import HardeningCells
 from xlplan.report.sheets.reliability import ReliabilityCells
-from xlplan.report.tables import CHECK_LINES, CHECKS
+from xlplan.report.tables import CHECK_LINES, CHECKS, SENSITIVITIES
 
 PASS, FAIL, LOOK, CHANGED = "PASS", "FAIL", "LOOK", "CHANGED"
 ALL_PASS = "PASS: all checks agree"
@@ -81,7 +82,7 @@ def write(
     lines = [_run_line("Study", line) for line in result.checks]
     lines += [_run_line(plan.name, line) for plan in result.plans for line in plan.checks]
     lines += _money_lines(result, alternatives) + _energy_lines(result, reliability)
-    lines += _pack_lines(result, alternatives, pack)
+    lines += _planning_line(result, alternatives) + _pack_lines(result, alternatives, pack)
     grid = Grid(CHECKS, OVERALL_ROW + 2, CHECK_LINES, len(lines))
     rows = [_row(line, grid, i) for i, line in enumerate(lines)]
     grid.write(sheet, rows)
@@ -222,6 +223,28 @@ def _money_lines(result: StudyResult, cells: AlternativesCells) -> list[_Line]:
     return lines
 
 
+def _planning_line(result: StudyResult, cells: AlternativesCells) -> list[_Line]:
+    """What planning for outages is worth, which Summary states, against the two totals."""
+    names = [plan.name for plan in result.plans]
+    if IGNORING_OUTAGES not in names or LEAST_COST not in names:
+        return []
+    blind, best = names.index(IGNORING_OUTAGES), names.index(LEAST_COST)
+    value = result.plans[blind].costs.total - result.plans[best].costs.total
+    agrees = abs(value - result.value_of_outage_planning) <= CENT
+    return [
+        _Line(
+            "Study",
+            "Worth of planning for outages",
+            "Plan ignoring outages less least-cost plan on Alternatives, and the worth that "
+            "Summary states",
+            Formula(f"={cells.away('total', blind)}-{cells.away('total', best)}", value),
+            result.value_of_outage_planning,
+            CENT,
+            CHANGED if agrees else FAIL,
+        )
+    ]
+
+
 def _formula_errors(plan: PlanResult, rate_frac: float) -> tuple[float, float]:
     """By how much formulas from prices miss what the run found: yearly cost, capital.
 
@@ -248,10 +271,13 @@ def _energy_lines(result: StudyResult, cells: ReliabilityCells) -> list[_Line]:
         eens = plan.indices.eens_kwh
         index = Formula(f"={cells.indices.away(2 * i_plan, 'eens')}", eens)
         n_window = len(plan.windows)
+        # One row for each section that stays dead; failures that leave none dead are a row, too.
+        n_section = cells.sections.n_row
         sums = (
             ("bus", cells.buses, f"eens_{side}", 0, len(plan.buses), plan.buses),
             ("customer class", cells.classes, f"eens_{side}", 0, len(plan.classes), plan.classes),
             ("window", cells.windows, "eens_year", first, n_window, plan.windows),
+            ("dead section and cause", cells.sections, f"eens_{side}", 0, n_section, plan.causes),
         )
         for word, grid, key, start, n, records in sums:
             if n == 0:
@@ -294,6 +320,16 @@ def _pack_lines(
         lines.append(_Line("Comparison", name, what, left, right, tolerance, word))
 
     money = max(CENT, RELATIVE * abs(best.costs.total))
+    if cells.sensitivities is not None:
+        # The line above the table, two rows over its title.
+        place = f"='{SENSITIVITIES}'!$D${cells.sensitivities.top - 2}"
+        add(
+            "Sensitivities begin at the study as given",
+            "Yearly cost that changes are counted from, and the plan's on Alternatives",
+            Formula(place, best.costs.total),
+            total(i_best),
+            money,
+        )
     if cells.budget is not None:
         points = pack.budget
         add(

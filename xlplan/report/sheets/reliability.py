@@ -43,12 +43,13 @@ WIDTHS = (24, 36, 14.5, 15, 15, 15, 15, 15, 15, 15, 15)
 
 @dataclass(frozen=True)
 class ReliabilityCells:
-    """Where indices, windows, classes and buses stand, for Summary and Checks."""
+    """Where indices, windows, classes, buses and sections stand, for Summary and Checks."""
 
     indices: Grid
     windows: Grid
     classes: Grid
     buses: Grid
+    sections: Grid
 
 
 def write(book: SafeBook, result: StudyResult) -> ReliabilityCells:
@@ -67,12 +68,11 @@ def write(book: SafeBook, result: StudyResult) -> ReliabilityCells:
     classes = _classes(sheet, base, best, windows.below + 2)
     buses = _buses(sheet, base, best, classes.below + 2)
     _charts(book, sheet, classes, buses)
-    causes = _causes(sheet, base, best, buses.below + 2)
+    sections, causes = _causes(sheet, base, best, buses.below + 2)
     sheet.freeze(2, 1)
-    sections_row = buses.below + 2
-    breaks = [windows.top - 1, sections_row]
+    breaks = [windows.top - 1, sections.top - 1]
     sheet.print_setup(causes.below, len(CLASSES) - 1, heading_row=causes.top, breaks=breaks)
-    return ReliabilityCells(indices, windows, classes, buses)
+    return ReliabilityCells(indices, windows, classes, buses, sections)
 
 
 def _indices(sheet: SafeSheet, result: StudyResult, top: int) -> Grid:
@@ -246,8 +246,8 @@ def _buses(sheet: SafeSheet, base: PlanResult, best: PlanResult, top: int) -> Gr
     return grid
 
 
-def _causes(sheet: SafeSheet, base: PlanResult, best: PlanResult, top: int) -> Grid:
-    """Sections summed by formula over the list of causes under them; that list."""
+def _causes(sheet: SafeSheet, base: PlanResult, best: PlanResult, top: int) -> tuple[Grid, Grid]:
+    """Sections summed by formula over the list of causes under them; both tables."""
     plans = _once([base, best])
     listed = {plan.name: _cause_rows(plan) for plan in plans}
     names = sorted({str(row["section"]) for rows in listed.values() for row in rows})
@@ -269,7 +269,7 @@ def _causes(sheet: SafeSheet, base: PlanResult, best: PlanResult, top: int) -> G
     sections.write(sheet, rows)
     sheet.text(causes.top - 1, 0, "By cause, the most harmful first", "section")
     causes.write(sheet, [row for plan in plans for row in listed[plan.name]])
-    return causes
+    return sections, causes
 
 
 def _sum_where(
