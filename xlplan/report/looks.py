@@ -49,7 +49,7 @@ _TEXT: Properties = {"align": "left", "valign": "vcenter"}
 
 LOOKS: dict[str, Properties] = {
     "title": {"bold": True, "font_size": 16, "font_color": INK, "valign": "top"},
-    "subtitle": {"font_color": GREY, "valign": "top"},
+    "subtitle": {"font_color": GREY, "valign": "vcenter"},
     "section": {"bold": True, "font_size": 12, "font_color": INK},
     "heading": {
         "bold": True,

@@ -287,10 +287,11 @@ AC_LOADINGS = (
     Column("rating", "Rating", "energy"),
     Column("unit", "Unit", "text"),
     Column("kind", "Kind", "wrap"),
-    Column("when", "When", "wrap"),
+    Column("verdict", "Within the rating", "status"),
     Column("linear", "Linear (share of rating)", "percent"),
     Column("ac", "AC (share of rating)", "percent"),
-    Column("verdict", "Within the rating", "status"),
+    # Last, so that it can take the empty columns beside it.
+    Column("when", "When", "text"),
 )
 
 PASSES = (

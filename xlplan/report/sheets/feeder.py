@@ -95,7 +95,7 @@ def write(book: SafeBook, result: StudyResult) -> None:
         tops.append(row)
         row += n_row + (3 if note else 2)
     numbers_top = row
-    buses = Grid(FEEDER, row + 1, _bus_columns(drawing), len(drawing.buses))
+    buses = Grid(FEEDER, row + 2, _bus_columns(drawing), len(drawing.buses))
     lines = Grid(FEEDER, buses.below + 2, _line_columns(drawing), len(drawing.lines))
     sheet.text(row, 0, "Buses: place, and state in each drawing", "section")
     _write_buses(sheet, drawing, buses)
@@ -121,11 +121,11 @@ def write(book: SafeBook, result: StudyResult) -> None:
         if drawing.is_computed
         else "Places are those of the study's Buses sheet."
     )
-    sheet.text(lines.below, 0, how, "note")
+    sheet.text(numbers_top + 1, 0, how, "note")
     sheet.freeze(2, 0)
     breaks = [*tops[per_page::per_page], numbers_top]
     # What only feeds the charts stays off the printed page.
-    sheet.print_setup(lines.below, last_col, breaks=breaks)
+    sheet.print_setup(lines.below - 1, last_col, breaks=breaks)
 
 
 def _bus_columns(drawing: FeederDrawing) -> tuple[Column, ...]:

@@ -68,7 +68,8 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
             "Mean length of an outage event (h)",
             unit,
             charts.wide_range(values),
-            x_max=max(hours) if max(hours) > 0.0 else None,
+            # Beyond the last point, whose marker would be cut at the edge.
+            x_max=charts.wide_range([0.0, *hours])[1],
             x_format="0.0",
             has_markers=True,
         )
