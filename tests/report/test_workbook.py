@@ -414,3 +414,19 @@ def test_many_causes_and_sources_are_gathered(tmp_path: Path) -> None:
         k for k in first if k.endswith("(kW)") and head.index(k) > head.index("Other sources (kW)")
     ]
     assert first["Other sources (kW)"] == pytest.approx(sum(first[k] for k in other))
+
+
+def test_sections_far_from_the_index_are_for_the_reader_to_judge(tmp_path: Path) -> None:
+    full = made_up_result()
+    best = full.plans[2]
+    causes = tuple(dataclasses.replace(c, eens_kwh=1.05 * c.eens_kwh) for c in best.causes)
+    plan = dataclasses.replace(best, causes=causes)
+    result = dataclasses.replace(full, plans=(*full.plans[:2], plan, full.plans[3]))
+    _, values = read(write_results(result, tmp_path / "o.xlsx", False, tmp_path / "s.xlsx"))
+    rows = [
+        row
+        for row in table(values["Checks"], "About")
+        if row["Check"] == "Energy not supplied by dead section"
+    ]
+    found = {row["About"]: row["Result"] for row in rows}
+    assert found == {"Existing feeder": "PASS", "Least-cost plan": "LOOK"}

@@ -35,6 +35,10 @@ RELATIVE = 1e-6
 """Share by which sums may differ: far above rounding, far below what a reader could see."""
 
 
+NEAR = 0.01
+"""Share by which figures may differ that are not the same but should be near one another."""
+
+
 @dataclass(frozen=True)
 class ChecksCells:
     """The overall line: its address for other sheets, and its words."""
@@ -271,13 +275,10 @@ def _energy_lines(result: StudyResult, cells: ReliabilityCells) -> list[_Line]:
         eens = plan.indices.eens_kwh
         index = Formula(f"={cells.indices.away(2 * i_plan, 'eens')}", eens)
         n_window = len(plan.windows)
-        # One row for each section that stays dead; failures that leave none dead are a row, too.
-        n_section = cells.sections.n_row
         sums = (
             ("bus", cells.buses, f"eens_{side}", 0, len(plan.buses), plan.buses),
             ("customer class", cells.classes, f"eens_{side}", 0, len(plan.classes), plan.classes),
             ("window", cells.windows, "eens_year", first, n_window, plan.windows),
-            ("dead section and cause", cells.sections, f"eens_{side}", 0, n_section, plan.causes),
         )
         for word, grid, key, start, n, records in sums:
             if n == 0:
@@ -295,7 +296,29 @@ def _energy_lines(result: StudyResult, cells: ReliabilityCells) -> list[_Line]:
                 )
             )
         first += n_window
+        if plan.causes:
+            lines.append(_section_line(plan, side, index, cells))
     return lines
+
+
+def _section_line(plan: PlanResult, side: str, index: Formula, cells: ReliabilityCells) -> _Line:
+    """Sections by what each first event does; what an earlier event leaves behind is not in them.
+
+    So they are near the index and not equal to it: a difference is to be judged, not a fault.
+    """
+    grid = cells.sections
+    return _Line(
+        plan.name,
+        "Energy not supplied by dead section",
+        "Sum over every dead section, all events as first ones (kWh/year), and the index EENS, in "
+        "which a store may not be full again; allowed: 1 %, and what is shed in normal service",
+        Formula(
+            f"=SUM({grid.span_away(f'eens_{side}')})", sum(one.eens_kwh for one in plan.causes)
+        ),
+        index,
+        max(CENT, NEAR * abs(plan.indices.eens_kwh)) + plan.normal_shed_kwh,
+        LOOK,
+    )
 
 
 def _pack_lines(

@@ -254,7 +254,12 @@ def _causes(sheet: SafeSheet, base: PlanResult, best: PlanResult, top: int) -> t
     sections = Grid(RELIABILITY, top + 1, SECTIONS, len(names))
     causes = Grid(RELIABILITY, sections.below + 3, CAUSES, sum(map(len, listed.values())))
     first = {base.name: 0, best.name: len(listed[base.name]) if best.name != base.name else 0}
-    sheet.text(top, 0, "By dead section (sums over the causes below)", "section")
+    sheet.text(
+        top,
+        0,
+        "By dead section: sums over the causes below, each event as if it were the first",
+        "section",
+    )
     rows: list[dict[str, Cell]] = []
     for i, name in enumerate(names):
         row: dict[str, Cell] = {"name": name, "label": _section_words(name)}
