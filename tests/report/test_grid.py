@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import pytest
 
-from xlplan.report.grid import Column, Grid, lines_needed
+from xlplan.report.grid import Column, Grid
+from xlplan.report.room import lines_needed
 
 GRID = Grid("Plan", 4, (Column("a", "A"), Column("b", "B (kW)", "power")), 3, left=2)
 

@@ -101,23 +101,26 @@ def test_uncertainties(result: StudyResult) -> None:
     assert "statistical" not in counted
     window = dataclasses.replace(result.plans[2].windows[0], poisson_events=0.2)
     busy = " ".join(wording.uncertainties(with_best(result, windows=(window,))))
-    assert "ordinary day: failures overlap" in busy
+    assert "In window ordinary day failures often overlap" in busy
     span = dataclasses.replace(result, value_of_outage_planning_interval=(-1.0, 5.0))
-    assert "the interval includes 0" in " ".join(wording.uncertainties(span))
+    assert "worth nothing here that can be told from 0" in " ".join(wording.uncertainties(span))
 
 
 def test_rivals_are_named(result: StudyResult) -> None:
-    assert "Not clearly dearer" not in " ".join(wording.uncertainties(result))
+    assert "As cheap as this plan" not in " ".join(wording.uncertainties(result))
     low = result.plan(LEAST_COST).cost_interval[0]
     near = dataclasses.replace(result.plans[3], cost_interval=(low, low + 1.0))
     tied = dataclasses.replace(result, plans=(*result.plans[:3], near))
-    assert "gap: =1+1 switches." in " ".join(wording.uncertainties(tied))
+    assert "As cheap as this plan within what the run leaves open: =1+1 switches." in " ".join(
+        wording.uncertainties(tied)
+    )
 
 
 def test_basis_and_consequence(result: StudyResult) -> None:
     assert "prepared by @SUM(A1)" in wording.basis(result)
     assert "Price year not given" in wording.basis(dataclasses.replace(result, price_year=None))
     text = wording.consequence(result)
-    assert "6.10 a year on the existing feeder" in text
-    assert "Utility's own cost up" in text
+    assert "instead of 6.10 on the existing feeder" in text
+    assert "The utility itself pays 49,457 crowns a year more" in text
+    assert "outages cost customers 233,360 crowns a year less" in text
     assert EXISTING in [plan.name for plan in result.plans]

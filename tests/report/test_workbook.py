@@ -84,12 +84,26 @@ def test_sheets_are_these_and_no_others(workbook_path: Path) -> None:
         assert sheet["A2"].value
         assert sheet.print_area
         assert sheet.page_setup.paperSize
-        assert sheet.sheet_properties.pageSetUpPr.fitToPage
+        # Fitted to the page's width, or a scale of its own with page breaks.
+        properties = sheet.sheet_properties.pageSetUpPr
+        is_fitted = properties is not None and bool(properties.fitToPage)
+        assert is_fitted != bool(sheet.row_breaks.brk), sheet.title
+        assert is_fitted == (sheet.page_setup.scale is None), sheet.title
         assert sheet.page_setup.orientation == "landscape"
         assert sheet.oddFooter.right.text
     # The format leaves out a height of one page; 0 is as many as it takes.
     assert formulas["Summary"].page_setup.fitToHeight in (None, 1)
-    assert formulas["Operation"].page_setup.fitToHeight == 0
+    assert formulas["Plan"].page_setup.fitToHeight == 0
+    broken = {sheet.title for sheet in formulas if sheet.row_breaks.brk}
+    assert broken == {
+        "Alternatives",
+        "Sensitivities",
+        "Reliability",
+        "Risk",
+        "Operation",
+        "Voltages",
+        "Feeder",
+    }
 
 
 def test_every_formula_has_a_value_and_none_is_an_error(workbook_path: Path) -> None:
@@ -168,7 +182,7 @@ def test_worth_worked_out_by_hand(workbook_path: Path, result: StudyResult) -> N
     assert capital == pytest.approx(510_960.0 * 0.8 + 155_000.0 + 44_000.0)
     assert rows["Simple payback, customers included"][2] == pytest.approx(capital / saving)
     assert rows["Benefit-cost ratio"][2] == pytest.approx(saving / best.investment)
-    assert rows["Simple payback, customers included"][0] == "nothing bought"
+    assert rows["Simple payback, customers included"][0] == "no purchase"
 
 
 def test_no_payback_in_words(tmp_path: Path) -> None:
@@ -180,7 +194,7 @@ def test_no_payback_in_words(tmp_path: Path) -> None:
     )
     _, values = read(path)
     assert statement(values["Alternatives"])["Simple payback, customers included"][3] == (
-        "does not pay back"
+        "no payback"
     )
 
 
@@ -261,30 +275,6 @@ def test_sections_add_up(workbook_path: Path, result: StudyResult) -> None:
     total = sum(row["Energy not supplied, plan (kWh/year)"] for row in rows)
     assert total == pytest.approx(result.plans[2].indices.eens_kwh)
     assert [row["Dead section"] for row in rows] == ["(nothing dead)", "Z0", "Z1", "Z2", "Z3"]
-
-
-def test_charts_say_what_they_show(workbook_path: Path) -> None:
-    with zipfile.ZipFile(workbook_path) as package:
-        drawings = [n for n in package.namelist() if re.match(r"xl/drawings/drawing\d+\.xml", n)]
-        frames = "".join(package.read(name).decode() for name in drawings)
-        charts = [n for n in package.namelist() if n.startswith("xl/charts/chart")]
-        texts = [package.read(name).decode() for name in charts]
-    tags = re.findall(r"<xdr:cNvPr [^>]*>", frames)
-    assert len(tags) == len(charts) == 22
-    assert all(re.search(r'descr="[^"]{30,}"', tag) for tag in tags)
-    for text in texts:
-        titles = re.findall(r"<a:t>(.*?)</a:t>", text)
-        if any("Normal service" in t or "Worst: L1" in t for t in titles):
-            # A drawing has no axes, and its names are texts of their own.
-            assert "B01" in titles
-            continue
-        assert len(titles) >= 2, titles
-        assert any(
-            re.search(r"\((crowns/year|crowns|h/year|kWh/year|kWh|kW|%|s|p.u.)\)", t)
-            for t in titles
-        ), titles
-        assert text.count("<c:valAx>") <= 2
-    assert sum('<c:crosses val="max"/>' in text for text in texts) == 0
 
 
 def test_voltages_sheet(workbook_path: Path, result: StudyResult) -> None:
@@ -424,3 +414,19 @@ def test_many_causes_and_sources_are_gathered(tmp_path: Path) -> None:
         k for k in first if k.endswith("(kW)") and head.index(k) > head.index("Other sources (kW)")
     ]
     assert first["Other sources (kW)"] == pytest.approx(sum(first[k] for k in other))
+
+
+def test_sections_far_from_the_index_are_for_the_reader_to_judge(tmp_path: Path) -> None:
+    full = made_up_result()
+    best = full.plans[2]
+    causes = tuple(dataclasses.replace(c, eens_kwh=1.05 * c.eens_kwh) for c in best.causes)
+    plan = dataclasses.replace(best, causes=causes)
+    result = dataclasses.replace(full, plans=(*full.plans[:2], plan, full.plans[3]))
+    _, values = read(write_results(result, tmp_path / "o.xlsx", False, tmp_path / "s.xlsx"))
+    rows = [
+        row
+        for row in table(values["Checks"], "About")
+        if row["Check"] == "Energy not supplied by dead section"
+    ]
+    found = {row["About"]: row["Result"] for row in rows}
+    assert found == {"Existing feeder": "PASS", "Least-cost plan": "LOOK"}

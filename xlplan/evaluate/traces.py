@@ -108,5 +108,6 @@ def describe_stages(study: Study, feeder: Feeder, scenario: Scenario) -> tuple[s
             )
         if not parts:
             parts.append("everything is supplied")
-        lines.append(f"{stage.name} ({stage.n_period} periods): " + "; ".join(parts))
+        periods = f"{stage.n_period} period{'' if stage.n_period == 1 else 's'}"
+        lines.append(f"{stage.name} ({periods}): " + "; ".join(parts))
     return tuple(lines)

@@ -22,6 +22,9 @@ PIXELS_PER_ROW = 20
 """Height of a sheet row of standard height."""
 
 MAX_TICK_LABELS = 12
+MAX_UPRIGHT = 16
+"""Columns side by side that can all have a label."""
+
 TICKS = 6
 """Steps of a numeric axis, about."""
 
@@ -31,7 +34,7 @@ class Series:
     """One series: its name and values as cells, its colour.
 
     ``labels``: value of each point, to label those large enough to hold a label; ``dash``: line
-    style, which keeps lines apart in a grey print.
+    style, which keeps lines apart in a grey print; ``has_labels`` False: no figures beside bars.
     """
 
     name: CellRange
@@ -41,6 +44,7 @@ class Series:
     label_colour: str = BLACK
     dash: str = "solid"
     width_pt: float = 2.0
+    has_labels: bool = True
 
 
 def bars(
@@ -48,11 +52,11 @@ def bars(
     title: str,
     categories: CellRange,
     series: Sequence[Series],
+    category_title: str,
     axis_title: str,
     is_stacked: bool = False,
     label_above: float = 0.0,
     label_format: str = "#,##0",
-    has_labels: bool = True,
     overlap: int | None = None,
 ) -> Chart:
     """Horizontal bars from 0, first category on top; stacked segments from ``label_above`` on.
@@ -71,12 +75,20 @@ def bars(
         }
         if is_stacked or overlap is not None:
             options["overlap"] = 100 if overlap is None else overlap
-        if has_labels and (one.labels or not is_stacked):
+        if one.has_labels and (one.labels or not is_stacked):
             options["data_labels"] = _labels(one, is_stacked, label_above, label_format)
         chart.add_series(options)
-    axis = {"reverse": True, "num_font": _font(9), "line": {"color": GREY}}
+    axis = {"reverse": True, "num_font": _font(10), "line": {"color": GREY}}
     # Names beside the plot, also where bars reach below 0.
-    chart.set_y_axis({**axis, "label_position": "low"})
+    chart.set_y_axis(
+        {
+            **axis,
+            "label_position": "low",
+            "interval_unit": 1,
+            "name": category_title,
+            "name_font": _font(10),
+        }
+    )
     chart.set_x_axis(
         {**_value_axis(axis_title, label_format), "label_position": "high", "min": None}
     )
@@ -106,8 +118,12 @@ def columns(
                 "gap": 60,
             }
         )
-    axis = {"name": category_title, "name_font": _font(9), "num_font": _font(8)}
-    chart.set_x_axis({**axis, "line": {"color": GREY}})
+    axis = {"name": category_title, "name_font": _font(10), "num_font": _font(9)}
+    n_point = int(categories[3]) - int(categories[1]) + 1
+    step = 1 if n_point <= MAX_UPRIGHT else 2
+    chart.set_x_axis(
+        {**axis, "num_format": "#,##0", "interval_unit": step, "line": {"color": GREY}}
+    )
     chart.set_y_axis({**_value_axis(axis_title, number_format), "min": 0})
     if not has_legend:
         chart.set_legend({"none": True})
@@ -119,7 +135,7 @@ def _labels(one: Series, is_stacked: bool, above: float, number_format: str) -> 
     labels: dict[str, Any] = {
         "value": True,
         "num_format": number_format,
-        "font": {**_font(8), "color": colour},
+        "font": {**_font(9), "color": colour},
     }
     if is_stacked:
         labels["position"] = "center"
@@ -240,8 +256,8 @@ def lines_over_names(
     chart.set_x_axis(
         {
             "name": category_title,
-            "name_font": _font(9),
-            "num_font": {**_font(8), "rotation": -45},
+            "name_font": _font(10),
+            "num_font": {**_font(9), "rotation": -45},
             "interval_unit": step,
             "interval_tick": step,
             "label_position": "low",
@@ -272,8 +288,8 @@ def _font(size: float, is_bold: bool = False) -> dict[str, Any]:
 def _value_axis(title: str, number_format: str) -> dict[str, Any]:
     return {
         "name": title,
-        "name_font": _font(9),
-        "num_font": _font(9),
+        "name_font": _font(10),
+        "num_font": _font(10),
         "num_format": number_format,
         "major_gridlines": {"visible": True, "line": {"color": GRID_GREY, "width": 0.5}},
         "line": {"color": GREY},
@@ -295,8 +311,8 @@ def _finish_over_time(
     chart.set_x_axis(
         {
             "name": "Start of period",
-            "name_font": _font(9),
-            "num_font": {**_font(8), "rotation": -45},
+            "name_font": _font(10),
+            "num_font": {**_font(9), "rotation": -45},
             "interval_unit": step,
             "interval_tick": step,
             "label_position": "low",
@@ -307,7 +323,7 @@ def _finish_over_time(
     )
     axis = _value_axis(axis_title, number_format)
     if axis_max is not None:
-        axis.update({"min": 0, "max": axis_max})
+        axis.update({"min": 0, "max": axis_max, "major_unit": 0.2})
     elif axis_min is not None:
         axis["min"] = axis_min
     chart.set_y_axis(axis)
@@ -317,7 +333,7 @@ def _finish_over_time(
 def _finish(chart: Chart, title: str, has_legend: bool = True) -> Chart:
     chart.set_title({"name": title, "name_font": _font(11, is_bold=True), "overlay": False})
     if has_legend:
-        chart.set_legend({"position": "bottom", "font": _font(9)})
+        chart.set_legend({"position": "bottom", "font": _font(10)})
     chart.set_chartarea({"border": {"color": GRID_GREY}})
     return chart
 
@@ -338,7 +354,8 @@ class Stroke:
 class Dots:
     """Points of a drawing with one marker; ``labels``: a text a point, "" for none.
 
-    A text may not begin with =, which would make it a formula.
+    A text may not begin with =, which would make it a formula. ``sides``: above, below, right or
+    left of each point.
     """
 
     name: str
@@ -347,7 +364,11 @@ class Dots:
     colour: str
     marker: str
     labels: tuple[str, ...] = ()
+    sides: tuple[str, ...] = ()
 
+
+UNSEEN = {"type": "circle", "size": 12, "fill": {"none": True}, "border": {"none": True}}
+"""A marker that keeps names clear of the one that is seen."""
 
 MARKER_SIZES = {"circle": 9, "diamond": 12, "x": 11}
 
@@ -385,22 +406,46 @@ def drawing(
                 "border": {"color": INK if dot.marker != "x" else dot.colour, "width": 1.0},
             },
         }
-        if dot.labels:
-            options["data_labels"] = {
-                "value": True,
-                "position": "above",
-                "font": _font(9),
-                "custom": [{"value": text} if text else {"delete": True} for text in dot.labels],
-            }
+        chart.add_series(options)
+    n_shown = len(strokes) + len(dots)
+    # A series has its labels all on one side: names stand on series of their own, unseen.
+    names = [
+        {
+            "name": f"names {side} of {dot.name}",
+            "categories": dot.x_values,
+            "values": dot.y_values,
+            "line": {"none": True},
+            "marker": UNSEEN,
+            "data_labels": _names(dot, side),
+        }
+        for dot in dots
+        for side in dict.fromkeys(dot.sides)
+        if any(dot.labels[i] for i in range(len(dot.labels)) if dot.sides[i] == side)
+    ]
+    for options in names:
         chart.add_series(options)
     for axis, (low, high) in ((chart.set_x_axis, x_range), (chart.set_y_axis, y_range)):
         axis({"visible": False, "min": low, "max": high, "major_gridlines": {"visible": False}})
     chart.show_blanks_as("gap")
-    names = [one.name for one in strokes]
-    again = [i for i, name in enumerate(names) if name in names[:i]]
+    drawn = [one.name for one in strokes]
+    unseen = [i for i, name in enumerate(drawn) if name in drawn[:i]]
+    unseen += range(n_shown, n_shown + len(names))
     chart = _finish(chart, title)
-    chart.set_legend({"position": "bottom", "font": _font(9), "delete_series": again})
+    chart.set_legend({"position": "bottom", "font": _font(10), "delete_series": unseen})
     return chart
+
+
+def _names(dot: Dots, side: str) -> dict[str, Any]:
+    """Labels of the points whose names stand on one side."""
+    texts = zip(dot.labels, dot.sides, strict=True)
+    return {
+        "value": True,
+        "position": side,
+        "font": _font(10),
+        "custom": [
+            {"value": text} if text and at == side else {"delete": True} for text, at in texts
+        ],
+    }
 
 
 def wide_range(values: Sequence[float]) -> tuple[float, float]:

@@ -12,13 +12,11 @@ from dataclasses import dataclass
 
 from xlsxwriter.utility import xl_rowcol_to_cell
 
+from xlplan.report.room import BODY_CHARS, HEADING_CHARS, LINE_POINTS, lines_needed
 from xlplan.report.safe_book import ABSENT, SafeSheet
 
+MOST_FOR_A_WORD = 18.0
 LEFT_LOOKS = ("text", "wrap", "status", "any")
-HEADING_CHARS, BODY_CHARS = 1.0, 1.2
-"""Characters of bold and of plain Arial that fit in one unit of column width (measured)."""
-
-LINE_POINTS = 13.0
 
 
 @dataclass(frozen=True)
@@ -42,6 +40,18 @@ class Column:
     look: str = "text"
     is_input: bool = False
     """Typed figures that formulas use: shown in blue on a pale fill."""
+
+
+def set_widths(sheet: SafeSheet, widths: Sequence[float], *tables: Sequence[Column]) -> None:
+    """Width of each column, in characters: as given, or what the longest heading word needs."""
+    wide = list(widths)
+    for table in tables:
+        for i, column in enumerate(table[: len(wide)]):
+            words = sheet.book.words(column.title).replace("-", "- ").split()
+            pad = 1.0 if column.look in LEFT_LOOKS else 1.5
+            need = max(map(len, words)) / HEADING_CHARS + pad
+            wide[i] = max(wide[i], min(need, MOST_FOR_A_WORD))
+    sheet.widths(wide)
 
 
 @dataclass(frozen=True)
@@ -125,33 +135,27 @@ class Grid:
         if not rows:
             sheet.text(self.row(0), self.left, "none", "note")
         for i_row, row in enumerate(rows):
-            extra = ("plan",) if i_row in marked else ()
-            lines = 1
+            chars = HEADING_CHARS if i_row in marked else BODY_CHARS
+            lines = max(1, *(self._lines(sheet, i, row, chars) for i in range(len(self.columns))))
+            extra = (*(("plan",) if i_row in marked else ()), *(("top",) if lines > 1 else ()))
             for i, column in enumerate(self.columns):
                 looks = (column.look, *(("input",) if column.is_input else ()), *extra)
-                cell = row[column.key]
-                write_cell(sheet, self.row(i_row), self.left + i, cell, *looks)
-                if column.look == "wrap" and isinstance(cell, str):
-                    room = BODY_CHARS * sheet.width(self.left + i)
-                    lines = max(lines, lines_needed(cell, room))
+                write_cell(sheet, self.row(i_row), self.left + i, row[column.key], *looks)
             if lines > 1:
                 sheet.height(self.row(i_row), LINE_POINTS * lines + 3)
+
+    def _lines(self, sheet: SafeSheet, i: int, row: Mapping[str, Cell], chars: float) -> int:
+        """Lines that the text of a wrapped column takes."""
+        cell = row[self.columns[i].key]
+        if isinstance(cell, Formula):
+            cell = cell.value
+        if self.columns[i].look != "wrap" or not isinstance(cell, str):
+            return 1
+        return lines_needed(cell, chars * sheet.width(self.left + i))
 
 
 def _is_known(value: float | str) -> bool:
     return isinstance(value, str) or math.isfinite(value)
-
-
-def lines_needed(text: str, room: float) -> int:
-    """Lines that wrapped text takes where ``room`` characters fit on one."""
-    lines, used = 1, 0.0
-    for word in text.split():
-        if used and used + 1 + len(word) > room:
-            lines, used = lines + 1, 0.0
-        used += len(word) + (1 if used else 0)
-        while used > room > 0:
-            lines, used = lines + 1, used - room
-    return lines
 
 
 def write_cell(sheet: SafeSheet, row: int, col: int, cell: Cell, *looks: str) -> None:

@@ -15,6 +15,9 @@ GREEN = "#009E73"
 ORANGE = "#E69F00"
 SKY = "#56B4E9"
 PURPLE = "#CC79A7"
+YELLOW = "#F0E442"
+LIGHT_BLUE = "#BFE3F7"
+LIGHT_VERMILION = "#F6CDB0"
 NAVY = "#0B3954"
 BLACK = "#000000"
 INK = "#1B2B34"
@@ -26,24 +29,27 @@ INPUT_FONT = "#0000FF"
 OK_FILL, OK_FONT = "#D9F0E6", "#00543C"
 LOOK_FILL, LOOK_FONT = "#FFD8B0", "#7A3E00"
 
-SERIES_COLOURS = (BLUE, ORANGE, VERMILION, SKY, GREEN, PURPLE)
-"""Up to six series, neighbours apart in lightness."""
+AREA_COLOURS = (BLUE, ORANGE, NAVY, YELLOW, VERMILION, LIGHT_BLUE)
+"""Up to six stacked series, apart in lightness: a grey print keeps them apart."""
+
+LINE_COLOURS = (BLUE, ORANGE, VERMILION, SKY, GREEN, PURPLE)
+"""Up to six lines, all dark enough on white; dashes keep them apart in a grey print."""
 
 FONT = "Arial"
 
 Properties = dict[str, Any]
 
-_NUMBER: Properties = {"align": "right", "valign": "top"}
+_NUMBER: Properties = {"align": "right", "valign": "vcenter"}
 
 PAD = "_W"
 """At the end of a number format: room as wide as a W, so that columns do not touch. Cell indents
 would do the same, but LibreOffice ignores them for some numbers."""
 
-_TEXT: Properties = {"align": "left", "valign": "top"}
+_TEXT: Properties = {"align": "left", "valign": "vcenter"}
 
 LOOKS: dict[str, Properties] = {
     "title": {"bold": True, "font_size": 16, "font_color": INK, "valign": "top"},
-    "subtitle": {"font_color": GREY, "valign": "top"},
+    "subtitle": {"font_color": GREY, "valign": "vcenter"},
     "section": {"bold": True, "font_size": 12, "font_color": INK},
     "heading": {
         "bold": True,
@@ -98,6 +104,9 @@ MODIFIERS: dict[str, Properties] = {
     "total": {"bold": True, "top": 1, "top_color": INK},
     "input": {"font_color": INPUT_FONT, "bg_color": INPUT_FILL},
     "indent": {"indent": 1},
+    "wrapped": {"text_wrap": True},
+    # Where a row has several lines, figures stand beside the first of them.
+    "top": {"valign": "top"},
     "plan": {"bold": True, "bg_color": "#EEF4F8"},
 }
 

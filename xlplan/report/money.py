@@ -13,8 +13,8 @@ STUDY_LIFE_YEARS = 20.0
 """Years over which the present value is taken (common practice); a cell of its own to change."""
 
 HARDENING = "hardening"
-NO_PAYBACK = "does not pay back"
-NOTHING_BOUGHT = "nothing bought"
+NO_PAYBACK = "no payback"
+NOTHING_BOUGHT = "no purchase"
 CHEAPER, DEARER, UNDECIDED = "cheaper", "dearer", "undecided"
 HALF_CENT = 0.005
 LEAST_MINUTES = 0.5

@@ -8,6 +8,7 @@ from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import PlanResult
 from xlplan.report.money import money_words
 
+N_THINGS = 3
 MOST_NAMED = 6
 """Assets named in a list of purchases; more would not fit a cell."""
 
@@ -33,29 +34,29 @@ def knee(result: StudyResult) -> str:
     last = points[-1]
     if at is None:
         return (
-            "No bend: no amount of money tried lowers the yearly cost by more than the interval of "
-            "the saving."
+            "No amount of money tried lowers the yearly cost beyond doubt (by more than the "
+            "interval of the saving)."
         )
     free = ""
     if result.capital_budget is not None and result.capital_budget > last.budget:
         free = (
-            f" The study's budget, {money_words(result.capital_budget, currency)}, does not bind."
+            f" The study's budget, {money_words(result.capital_budget, currency)}, is more than "
+            "any plan would spend."
         )
     here = points[at]
     share = pct_from_frac(here.saving / last.saving)
     if at == len(points) - 1:
         return (
-            f"No bend before the end: money goes on paying up to "
-            f"{money_words(last.budget, currency)}, which saves "
-            f"{money_words(last.saving, currency)} a year.{free}"
+            f"Money goes on paying up to {money_words(last.budget, currency)}, which saves "
+            f"{money_words(last.saving, currency)} a year: the curve has no bend before that.{free}"
         )
     rest = (last.saving - here.saving) / (last.budget - here.budget) * 1000.0
     first = here.saving / here.budget * 1000.0 if here.budget > 0.0 else 0.0
     return (
-        f"The curve bends at {money_words(here.budget, currency)}: that much money brings "
-        f"{share:.0f} % of the saving of {money_words(last.budget, currency)}. Up to there each "
-        f"1,000 {currency} of capital saves {money_words(first, currency)} a year, investment "
-        f"counted; beyond it {money_words(rest, currency)}.{free}"
+        f"The first {money_words(here.budget, currency)} of capital bring {share:.0f} % of what "
+        f"{money_words(last.budget, currency)} bring: up to there each 1,000 {currency} saves "
+        f"{money_words(first, currency)} a year net of its own cost; beyond, the curve bends and "
+        f"each saves {money_words(rest, currency)}.{free}"
     )
 
 
@@ -68,11 +69,10 @@ def hour_faster(result: StudyResult) -> str:
             "by a whole period."
         )
     low, high = (money_words(one, currency) for one in value.interval)
-    zero = "; the interval includes 0" if value.interval[0] <= 0.0 <= value.interval[1] else ""
+    zero = ", so perhaps nothing" if value.interval[0] <= 0.0 <= value.interval[1] else ""
     return (
-        f"Repairs faster by one hour are worth {money_words(value.value, currency)} a year with "
-        f"the plan kept (interval {low} to {high}{zero}), measured over the next "
-        f"{value.hours:.2f} h."
+        f"Repairs faster by one hour are worth {money_words(value.value, currency)} a year beside "
+        f"what the plan buys (interval {low} to {high}{zero})."
     )
 
 
@@ -103,32 +103,76 @@ def plan_changes(result: StudyResult) -> str:
     cases = result.pack.sensitivities
     changed = [case for case in cases if case.does_change and case.is_decided]
     if not changed:
-        return "In no case tried is another plan cheaper beyond its interval."
+        return "In no case tried is another plan cheaper beyond doubt."
     worst = max(changed, key=lambda case: case.loss)
     return (
-        f"In {len(changed)} of {len(cases)} cases another plan is cheaper beyond its interval; "
-        f"keeping this one loses most with {case_words(worst)}: "
+        f"In {len(changed)} of {len(cases)} cases another plan is cheaper beyond doubt; keeping "
+        f"this one loses most with {case_words(worst)}: "
         f"{money_words(worst.loss, result.currency)} a year."
     )
 
 
+def by_parameter(
+    cases: tuple[SensitivityCase, ...], base: float
+) -> list[tuple[str, list[SensitivityCase]]]:
+    """Cases of each assumption, the one that moves the yearly cost over the widest range first."""
+    found: dict[str, list[SensitivityCase]] = {}
+    for case in cases:
+        found.setdefault(case.parameter, []).append(case)
+
+    def reach(item: tuple[str, list[SensitivityCase]]) -> float:
+        costs = [base, *(case.anew.costs.total for case in item[1])]
+        return min(costs) - max(costs)
+
+    return sorted(found.items(), key=reach)
+
+
+def _assumption(name: str, cases: list[SensitivityCase], base: float, currency: str) -> str:
+    """What one assumption does to the yearly cost, and whether the plan holds."""
+    moves = []
+    for case in sorted(cases, key=lambda one: one.value):
+        change = case.anew.costs.total - base
+        where = f"{case.value:+g} points" if name == "discount rate" else f"{case.value:g} times"
+        sign = "+" if change > 0.0 else "-" if change < 0.0 else ""
+        moves.append(f"{sign}{money_words(abs(change), currency)} at {where}")
+    changed = any(case.does_change and case.is_decided for case in cases)
+    holds = "another plan would then be better" if changed else "the plan holds"
+    return f"{name[:1].upper()}{name[1:]}: yearly cost {', '.join(moves)}; {holds}."
+
+
 def three_things(result: StudyResult) -> list[str]:
-    """What matters most: the purchase that does most, the money, the assumption to check."""
-    said = []
+    """What matters most to the result: the assumptions that move the yearly cost most.
+
+    Where the study varies fewer than three, what the comparisons found fills the rest.
+    """
+    return _things(result)[:N_THINGS]
+
+
+def findings(result: StudyResult) -> list[str]:
+    """What else the comparisons found: money, hardening, repair."""
+    return _things(result)[N_THINGS:]
+
+
+def _things(result: StudyResult) -> list[str]:
     pack, currency = result.pack, result.currency
+    said = []
+    if pack.sensitivities:
+        base = result.plan(pack.plan_name).costs.total
+        ranked = by_parameter(pack.sensitivities, base)[:N_THINGS]
+        said += [_assumption(name, cases, base, currency) for name, cases in ranked]
+    if pack.budget:
+        said.append(knee(result))
     worth = [row for row in pack.hardening if row.in_plan.interval[0] > row.yearly_cost]
     if worth:
         best = max(worth, key=lambda row: row.in_plan.value - row.yearly_cost)
         net = best.in_plan.value - best.yearly_cost
-        state = "is in the plan" if best.is_in_plan else "is not in the plan"
+        state = "bought" if best.is_in_plan else "not bought"
         said.append(
-            f"{best.measure}: net {money_words(net, currency)} a year beside the plan's purchases; "
-            f"it {state}."
+            f"{best.measure} ({state}) is worth {money_words(net, currency)} a year more than it "
+            "costs: no line measure is worth more."
         )
-    if pack.budget:
-        said.append(knee(result))
-    if pack.sensitivities:
-        said.append(sensitivities(result))
     if pack.hour_faster is not None:
         said.append(hour_faster(result))
-    return said[:3]
+    if pack.sensitivities:
+        said.append(plan_changes(result))
+    return said

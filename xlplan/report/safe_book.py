@@ -33,11 +33,21 @@ from xlplan.report.looks import (
     PAD,
     money_format,
 )
+from xlplan.report.room import BODY_CHARS, HEADING_CHARS, lines_needed
 
 MAX_TEXT = 32_767
 """Characters in a cell (Excel specifications and limits)."""
 
 A4 = 9
+PIXELS_PER_INCH = 96
+PAGE_INCHES = (11.0, 210.0 / 25.4)
+"""Landscape page on which A4 and Letter both fit: the width of Letter, the height of A4."""
+
+MARGINS = {"left": 0.4, "right": 0.4, "top": 0.5, "bottom": 0.6}
+WIDTH_SLACK = 0.94
+"""Programs differ in how wide a column comes out: LibreOffice takes the width of a digit as 7.4
+pixels, Excel as 7."""
+
 MAX_FOOTER = 255
 ABSENT = "not computed"
 
@@ -108,6 +118,24 @@ class SafeSheet:
         points = 1.3 * (look.font_size or 10)
         self.height(row, points * max(1, math.ceil(len(text) / chars)) + 3)
 
+    def block(self, row: int, first_col: int, last_col: int, text: str, *looks: str) -> int:
+        """Wrapped text over several columns and as many rows as it needs; the next free row.
+
+        Rows keep their standard height, so that blocks side by side do not stretch one another.
+        """
+        looks = looks or ("text",)
+        chars = HEADING_CHARS if "bold" in looks else BODY_CHARS
+        room = chars * sum(self.width(col) for col in range(first_col, last_col + 1))
+        last_row = row + lines_needed(text, room) - 1
+        look = self.book.look(*looks, wrapped=True)
+        ensure(
+            self._sheet.merge_range(row, first_col, last_row, last_col, "", look),
+            f"block in {self.name} row {row}",
+        )
+        code = self._sheet.write_string(row, first_col, text[:MAX_TEXT], look)
+        ensure(code, f"block in {self.name} row {row}")
+        return last_row + 1
+
     def link(self, row: int, col: int, sheet_name: str, text: str) -> None:
         """A link to another sheet of this workbook."""
         target = f"internal:'{sheet_name}'!A1"
@@ -138,9 +166,19 @@ class SafeSheet:
         """Height of a row."""
         ensure(self._sheet.set_row(row, points), "row height")
 
-    def page_breaks(self, rows: list[int]) -> None:
-        """Starts a new printed page at each row, where the reader's program heeds it."""
-        ensure(self._sheet.set_h_pagebreaks(rows), "page break")
+    def print_scale(self, last_col: int) -> float:
+        """Share of its size at which all columns fit on one page's width, on A4 and Letter."""
+        room = PAGE_INCHES[0] - MARGINS["left"] - MARGINS["right"]
+        return min(1.0, WIDTH_SLACK * room * PIXELS_PER_INCH / self.pixels(0, last_col))
+
+    def page_pixels(self, last_col: int) -> int:
+        """Height of a printed page in pixels of the sheet, on A4 and Letter."""
+        room = PAGE_INCHES[1] - MARGINS["top"] - MARGINS["bottom"]
+        return int(room * PIXELS_PER_INCH / self.print_scale(last_col))
+
+    def default_height(self, points: float) -> None:
+        """Height of all rows that get none of their own; to be set before anything is written."""
+        self._sheet.set_default_row(points)
 
     def freeze(self, row: int, col: int) -> None:
         """Keeps the rows above and the columns left of a cell in sight."""
@@ -180,17 +218,29 @@ class SafeSheet:
         last_col: int,
         heading_row: int | None = None,
         is_one_page: bool = False,
-        is_landscape: bool = True,
+        breaks: Sequence[int] = (),
     ) -> None:
-        """Paper, margins, footer; all columns on one page's width, or all on one page."""
+        """Paper, margins, footer; all columns on one page's width, or all on one page.
+
+        Parameters
+        ----------
+        last_row, last_col : int, end of what is printed
+        heading_row : int or None, repeated on every page that follows it
+        is_one_page : bool
+        breaks : rows at which a new page starts. Such pages have a scale of their own, since
+            Excel leaves breaks out of account where it fits pages itself
+
+        Made for A4 and narrow enough for Letter.
+        """
         sheet = self._sheet
-        if is_landscape:
-            sheet.set_landscape()
-        else:
-            sheet.set_portrait()
+        sheet.set_landscape()
         sheet.set_paper(A4)
-        sheet.set_margins(left=0.4, right=0.4, top=0.5, bottom=0.6)
-        sheet.fit_to_pages(1, 1 if is_one_page else 0)
+        sheet.set_margins(**MARGINS)
+        if breaks:
+            sheet.set_print_scale(math.floor(100.0 * self.print_scale(last_col)))
+            ensure(sheet.set_h_pagebreaks(list(breaks)), "page breaks")
+        else:
+            sheet.fit_to_pages(1, 1 if is_one_page else 0)
         ensure(sheet.print_area(0, 0, last_row, last_col), "print area")
         if heading_row is not None:
             ensure(sheet.repeat_rows(heading_row), "repeated rows")

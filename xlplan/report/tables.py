@@ -53,17 +53,17 @@ SUMMARY_PLANS = (
     Column("customers", "Customers' outage cost ({money}/year)", "money"),
     Column("total", "Total ({money}/year)", "money"),
     Column("difference", "Against existing ({money}/year)", "change"),
-    Column("low", "95 % interval of this, low ({money}/year)", "change"),
-    Column("high", "95 % interval of this, high ({money}/year)", "change"),
+    Column("low", "95 % interval: low ({money}/year)", "change"),
+    Column("high", "95 % interval: high ({money}/year)", "change"),
     Column("outage_h", "Outage hours per customer (h/year)", "hours"),
-    Column("outage_fair_h", "Of these, without storms and loss of bulk supply (h/year)", "hours"),
+    Column("outage_fair_h", "Without storms, bulk supply loss (h/year)", "hours"),
     Column("eens", "Energy not supplied (kWh/year)", "energy"),
 )
 
 SUMMARY_WORTH = (
     Column("name", "Is it worth it", "wrap"),
     Column("verdict", "Against the existing feeder", "verdict"),
-    Column("to_best", "Against the recommended one", "verdict"),
+    Column("to_best", "Against the best one", "verdict"),
     Column("payback", "Simple payback (years)", "years"),
     Column("own_payback", "Payback on the utility's own money (years)", "years"),
     Column("ratio", "Benefit-cost ratio", "hours"),
@@ -195,9 +195,9 @@ SECTIONS = (
 CAUSES = (
     Column("name", "Alternative", "wrap"),
     Column("causes", "What fails", "wrap"),
-    Column("section", "Dead section", "text"),
-    Column("window", "Window", "text"),
-    Column("kind", "Kind", "text"),
+    Column("section", "Dead section", "wrap"),
+    Column("window", "Window", "wrap"),
+    Column("kind", "Kind", "wrap"),
     Column("repair_h", "Repair time (h)", "hours"),
     Column("events", "Events (per year)", "small"),
     Column("eens", "Energy not supplied (kWh/year)", "energy"),
@@ -239,7 +239,7 @@ AC_LOSSES = (
     Column("unsolved", "Without AC solution", "whole"),
     Column("occurrences", "Occurrences (per year)", "hours"),
     Column("share_note", "Losses against the allowance", "wrap"),
-    Column("served", "Load served (kWh)", "energy"),
+    Column("served", "Load served (kWh)", "whole"),
     Column("loss", "AC losses (kWh)", "energy"),
     Column("note", "Note", "wrap"),
     Column("allowance", "Loss allowance (kWh)", "energy"),
@@ -287,10 +287,11 @@ AC_LOADINGS = (
     Column("rating", "Rating", "energy"),
     Column("unit", "Unit", "text"),
     Column("kind", "Kind", "wrap"),
-    Column("when", "When", "wrap"),
+    Column("verdict", "Within the rating", "status"),
     Column("linear", "Linear (share of rating)", "percent"),
     Column("ac", "AC (share of rating)", "percent"),
-    Column("verdict", "Within the rating", "status"),
+    # Last, so that it can take the empty columns beside it.
+    Column("when", "When", "text"),
 )
 
 PASSES = (
@@ -345,6 +346,8 @@ REPAIR_POINTS = (
     Column("kept_eens", "Energy not supplied, plan kept (kWh/year)", "energy"),
     Column("kept_saidi", "Outage hours per customer, plan kept (h/year)", "hours"),
     Column("anew", "Yearly cost, plan made anew ({money}/year)", "money"),
+    Column("anew_utility", "Of this the utility's own ({money}/year)", "money"),
+    Column("anew_customers", "Of this the customers' ({money}/year)", "money"),
     Column("anew_capital", "Capital of that plan ({money})", "money"),
     Column("anew_eens", "Energy not supplied, plan made anew (kWh/year)", "energy"),
     Column("loss", "Loss by keeping the plan ({money}/year)", "change"),
@@ -378,8 +381,6 @@ SENSITIVITY_ROWS = (
     Column("low_change", "Against the study at low ({money}/year)", "change"),
     Column("high_change", "Against the study at high ({money}/year)", "change"),
     Column("range", "Range of cost ({money}/year)", "money"),
-    Column("low_kept", "Yearly cost at low, plan kept ({money}/year)", "money"),
-    Column("high_kept", "Yearly cost at high, plan kept ({money}/year)", "money"),
     Column("low_plan", "What the best plan becomes at low", "wrap"),
     Column("high_plan", "What the best plan becomes at high", "wrap"),
     Column("verdict", "Does the plan change?", "status"),
@@ -391,13 +392,15 @@ SENSITIVITY_PARTS = (
     Column("low_customers", "Best plan at low: customers' ({money}/year)", "money"),
     Column("high_utility", "Best plan at high: utility's own ({money}/year)", "money"),
     Column("high_customers", "Best plan at high: customers' ({money}/year)", "money"),
+    Column("low_kept", "Plan kept, at low ({money}/year)", "money"),
+    Column("high_kept", "Plan kept, at high ({money}/year)", "money"),
 )
 
 REGRETS = (
     Column("name", "Alternative", "wrap"),
     Column("base", "Yearly cost as given ({money}/year)", "money"),
     Column("largest", "Largest regret ({money}/year)", "money"),
-    Column("case", "In the case", "text"),
+    Column("case", "In the case", "wrap"),
     Column("mean", "Mean regret over the cases ({money}/year)", "money"),
     Column("rank", "Rank by largest regret", "whole"),
 )
@@ -415,12 +418,20 @@ SPREAD = (
     Column("event_eens_plan", "Unserved in one event, plan (kWh)", "energy"),
 )
 
-SPREAD_STEPS = (
-    Column("step", "From - to", "text"),
-    Column("low", "From", "energy"),
-    Column("high", "To", "energy"),
-    Column("weight", "How often", "small"),
-)
+
+def _steps(look: str, weight: str) -> tuple[Column, ...]:
+    """A distribution in equal steps; ``weight``: how often a step is met."""
+    return (
+        Column("low", "From", look),
+        Column("high", "To", look),
+        Column("weight", weight, "small"),
+    )
+
+
+YEAR_COST_STEPS = _steps("money", "Share of years")
+YEAR_EENS_STEPS = _steps("energy", "Share of years")
+EVENT_COST_STEPS = _steps("money", "Events (per year)")
+EVENT_EENS_STEPS = _steps("energy", "Events (per year)")
 
 WORST_EVENTS = (
     Column("causes", "What fails", "wrap"),

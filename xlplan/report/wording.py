@@ -16,6 +16,9 @@ GAP_REACHED = "gap reached"
 SHED_SHOWN_KWH = 0.5
 """Below this a year's shedding in normal service would read as 0 kWh."""
 
+LEAST_VALUE = 0.5
+"""Money a year below which two plans cost the same in a sentence."""
+
 POISSON_WARNING_FRAC = 0.05
 """Above this share the one-at-a-time rule hides too many events (model.md section 2)."""
 
@@ -79,18 +82,19 @@ def consequence(result: StudyResult) -> str:
     """What the plan costs and what it does for customers, in one line."""
     best, base = result.plan(result.recommended), baseline(result)
     currency = result.currency
+    if not buys_anything(best):
+        return f"Customers are without supply for {best.indices.saidi_h:.2f} hours a year each."
     return (
-        f"Capital after grants: {money_words(best.capital_cost, currency)}. "
-        f"Outage hours per customer: {base.indices.saidi_h:.2f} a year on the existing feeder, "
-        f"{best.indices.saidi_h:.2f} with the plan. Utility's own cost "
-        f"{_change(best.costs.utility - base.costs.utility, currency)} a year, customers' outage "
-        f"cost {_change(best.costs.customers - base.costs.customers, currency)} a year."
+        f"It takes {money_words(best.capital_cost, currency)} of capital after grants. Customers "
+        f"are without supply for {best.indices.saidi_h:.2f} hours a year each, instead of "
+        f"{base.indices.saidi_h:.2f} on the existing feeder. The utility itself pays "
+        f"{_change(best.costs.utility - base.costs.utility, currency)}; outages cost customers "
+        f"{_change(best.costs.customers - base.costs.customers, currency)}."
     )
 
 
 def _change(amount: float, currency: str) -> str:
-    direction = "up" if amount > 0.0 else "down"
-    return f"{direction} {money_words(abs(amount), currency)}"
+    return f"{money_words(abs(amount), currency)} a year {'more' if amount > 0.0 else 'less'}"
 
 
 def basis(result: StudyResult) -> str:
@@ -114,9 +118,8 @@ def uncertainties(result: StudyResult) -> list[str]:
         said.append("Every path was counted, so the yearly cost has no sampling error.")
     else:
         said.append(
-            f"Yearly cost of the plan: {money_words(low, currency)} to "
-            f"{money_words(high, currency)} (95 % interval, {best.n_sample:,} sampled "
-            "continuations: a statistical figure)."
+            f"The plan's yearly cost is a statistical figure: {money_words(low, currency)} to "
+            f"{money_words(high, currency)} (95 % interval, {best.n_sample:,} sampled histories)."
         )
     if best.lower_bound is not None and best.gap_frac is not None:
         said.append(
@@ -124,21 +127,46 @@ def uncertainties(result: StudyResult) -> list[str]:
             f"this one is within {pct_from_frac(best.gap_frac):.2f} % of that."
         )
     said += _rivals(result, best)
-    value = result.value_of_outage_planning
-    span = result.value_of_outage_planning_interval
-    words = f"{money_words(span[0], currency)} to {money_words(span[1], currency)}"
-    zero = "; the interval includes 0" if includes_zero(span) else ""
+    said.append(outage_planning(result))
     said.append(
-        f"Planning for outages is worth {money_words(value, currency)} a year "
-        f"(95 % interval {words}{zero})."
-    )
-    said.append(
-        f"Years differ: mean {money_words(best.risk.mean, currency)}; one year in twenty costs "
-        f"more than {money_words(best.risk.p95, currency)} ({best.risk.n_year:,} simulated years)."
+        f"Years differ: the mean is {money_words(best.risk.mean, currency)}, but one year in "
+        f"twenty costs more than {money_words(best.risk.p95, currency)} ({best.risk.n_year:,} "
+        "simulated years)."
     )
     said += _ac_words(result, best)
     said += _warnings(result, best)
     return said
+
+
+def outage_planning(result: StudyResult) -> str:
+    """What planning for outages is worth; nothing where the two plans cannot be told apart.
+
+    The search may leave more open than the two plans differ: then it has found no value.
+    """
+    value, currency = result.value_of_outage_planning, result.currency
+    span = result.value_of_outage_planning_interval
+    words = f"95 % interval {money_words(span[0], currency)} to {money_words(span[1], currency)}"
+    best = result.plan(LEAST_COST)
+    left_open = abs(best.costs.total) * (best.gap_frac or 0.0)
+    if includes_zero(span) and abs(value) < LEAST_VALUE:
+        return (
+            "Planning for outages is worth nothing here: the plan that ignores them costs the same."
+        )
+    if includes_zero(span):
+        return (
+            "Planning for outages is worth nothing here that can be told from 0: the plan that "
+            f"ignores them costs {_change(value, currency)} ({words})."
+        )
+    if 0.0 <= value <= left_open:
+        return (
+            "Planning for outages is worth nothing here: the plan that ignores them costs "
+            f"{money_words(value, currency)} a year more, and the search leaves "
+            f"{money_words(left_open, currency)} open."
+        )
+    return (
+        f"Planning for outages is worth {money_words(value, currency)} a year against a plan that "
+        f"ignores them ({words})."
+    )
 
 
 def _ac_words(result: StudyResult, best: PlanResult) -> list[str]:
@@ -202,7 +230,7 @@ def _rivals(result: StudyResult, best: PlanResult) -> list[str]:
     ]
     if not near:
         return []
-    return [f"Not clearly dearer than the plan, within interval or gap: {'; '.join(near)}."]
+    return [f"As cheap as this plan within what the run leaves open: {'; '.join(near)}."]
 
 
 def _warnings(result: StudyResult, best: PlanResult) -> list[str]:
@@ -212,11 +240,13 @@ def _warnings(result: StudyResult, best: PlanResult) -> list[str]:
     if missed:
         said.append(f"STOP and look: far from the feeder's own records: {'; '.join(missed)}.")
     elif not history:
-        said.append("Nothing in the study lets the existing feeder be compared with its records.")
+        said.append(
+            "The study gives no past peak, SAIFI or SAIDI to hold the existing feeder against."
+        )
     for window in best.windows:
         if window.poisson_events > window.expected_events * (1.0 + POISSON_WARNING_FRAC):
             said.append(
-                f"Window {window.window}: failures overlap often, and one-at-a-time hides them."
+                f"In window {window.window} failures often overlap; the model takes one at a time."
             )
     if best.normal_shed_kwh > SHED_SHOWN_KWH:
         said.append(

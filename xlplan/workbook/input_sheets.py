@@ -114,7 +114,6 @@ def write_settings_sheet(
     last_row = HEADING_ROW + len(sheet.fields)
     writer.worksheet.freeze_panes(FIRST_ROW, 1)
     writer.page(last_row, len(SETTINGS_COLUMNS) - 1, HEADING_ROW, sheet.help)
-    writer.worksheet.fit_to_pages(1, 1)
 
 
 def write_table_sheet(
@@ -171,7 +170,8 @@ def write_table_sheet(
     if sheet.name in CHARTS:
         chart, alt = CHARTS[sheet.name](workbook, sheet, n_column, len(rows) or ROOM)
         writer.width(n_column, 3)
-        writer.chart(EXAMPLE_ROW, n_column + 1, chart, CHART_SIZE, alt)
+        # Below the heading, which is repeated on every printed page with all that stands on it.
+        writer.chart(FIRST_ROW + 1, n_column + 1, chart, CHART_SIZE, alt)
         last_column = n_column + 1 + math.ceil(CHART_SIZE[0] / STANDARD_COLUMN_PIXELS)
     writer.page(HEADING_ROW + n_printed, last_column, HEADING_ROW, sheet.help)
 

@@ -29,6 +29,9 @@ LONGEST_PROMPT = 255
 """Limits of the title and text of an input message (file format)."""
 
 A4 = 9
+WIDE = 250.0
+"""Characters beyond which one page's width leaves print too small to read."""
+
 _CREATED = datetime(2026, 1, 1)
 """A fixed date: the same content gives the same file."""
 
@@ -202,14 +205,20 @@ class SheetWriter:
         self.height(1, 17)
 
     def page(self, last_row: int, last_column: int, heading_row: int | None, line: str) -> None:
-        """Print setup: landscape, one page wide, wide enough for the line of text in A2."""
+        """Print setup: landscape, wide enough for the line of text in A2.
+
+        One page wide; two with the first column on both where the print would be too small.
+        """
         sheet = self.worksheet
         while self._width_to(last_column) < len(line) * 0.95:
             last_column += 1
         sheet.set_landscape()
         sheet.set_paper(A4)
         sheet.set_margins(left=0.5, right=0.5, top=0.6, bottom=0.7)
-        sheet.fit_to_pages(1, 0)
+        is_wide = self._width_to(last_column) > WIDE
+        sheet.fit_to_pages(2 if is_wide else 1, 0)
+        if is_wide:
+            demand_written(sheet.repeat_columns(0), f"repeated column of {self.name}")
         demand_written(sheet.print_area(0, 0, last_row, last_column), f"print area of {self.name}")
         sheet.set_footer(f"&L&8{self.name}&R&8&P / &N")
         if heading_row is not None:

@@ -12,4 +12,4 @@ def say_absent(sheet: SafeSheet, result: StudyResult, what: str) -> None:
     """One line in place of tables; ``what`` the study lacks, if that is the reason."""
     reason = f"Nothing to show: the study has no {what}, or a finding on Assumptions says why."
     sheet.text(3, 0, reason if result.pack.is_asked else PLAN_ONLY, "note")
-    sheet.print_setup(3, 8)
+    sheet.print_setup(3, 12)

@@ -14,7 +14,8 @@ from xlplan.base.units import minutes_from_hours
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import PlanResult
 from xlplan.report import money
-from xlplan.report.grid import HEADING_CHARS, LINE_POINTS, Cell, Formula, lines_needed, write_cell
+from xlplan.report.grid import Cell, Formula, write_cell
+from xlplan.report.room import BODY_CHARS, HEADING_CHARS, LINE_POINTS, lines_needed
 from xlplan.report.safe_book import SafeBook
 from xlplan.report.sheets.plan import DISCOUNT_RATE, PlanCells
 from xlplan.report.sheets.price_list import write_prices
@@ -25,7 +26,7 @@ from xlplan.report.tables import ALTERNATIVES
 STUDY_LIFE = "study_life_years"
 RATE_ROW, LIFE_ROW = 3, 4
 FIRST_PLAN_COL = 2
-PLAN_WIDTH = 18
+LABEL_WIDTH, UNIT_WIDTH, PLAN_WIDTH, NOTE_WIDTH = 38, 14, 14, 66
 NUMBER_PARTS = (
     "energy",
     "fuel",
@@ -94,16 +95,26 @@ def write(
         sheet.text(cells.row_of[block.title], 0, block.title, "section")
         for line in block.lines:
             row = cells.row_of[line.key]
-            extra = (line.modifier,) if line.modifier else ()
+            lines = lines_needed(line.note, BODY_CHARS * NOTE_WIDTH)
+            if lines > 1:
+                sheet.height(row, LINE_POINTS * lines + 3)
+            extra = (
+                *((line.modifier,) if line.modifier else ()),
+                *(("top",) if lines > 1 else ()),
+            )
             sheet.text(row, 0, line.label, "text", *extra)
             sheet.text(row, 1, book.words(line.unit), "subtitle", *extra)
             for i, by_key in enumerate(content):
                 write_cell(sheet, row, FIRST_PLAN_COL + i, by_key[line.key], line.look, *extra)
-            sheet.text(row, note_col, line.note, "remark")
-    sheet.widths([40, max(15, len(result.currency) + 7)] + [PLAN_WIDTH] * len(result.plans) + [92])
+            note_looks = ("remark", "wrapped", *(("top",) if lines > 1 else ()))
+            sheet.text(row, note_col, line.note, *note_looks)
+    unit = max(UNIT_WIDTH, len(result.currency) + 7)
+    sheet.widths([LABEL_WIDTH, unit] + [PLAN_WIDTH] * len(result.plans) + [NOTE_WIDTH])
     sheet.freeze(HEAD_ROW + 1, FIRST_PLAN_COL)
     write_prices(sheet, plan_cells.price_list)
-    sheet.print_setup(plan_cells.price_list.below, note_col)
+    prices = plan_cells.price_list
+    breaks = [prices.top] if prices.assets else []
+    sheet.print_setup(prices.below, note_col, heading_row=HEAD_ROW, breaks=breaks)
     return replace(cells, content=content)
 
 

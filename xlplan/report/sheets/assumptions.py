@@ -12,6 +12,8 @@ from xlplan.report.grid import Cell, Grid
 from xlplan.report.safe_book import SafeBook
 from xlplan.report.tables import ASSUMPTIONS, FINDINGS, INPUTS, RUN_FACTS
 
+WIDTHS = (28, 24, 36, 24, 44, 14, 34)
+
 
 def write(book: SafeBook, result: StudyResult) -> None:
     """Writes the sheet."""
@@ -21,7 +23,7 @@ def write(book: SafeBook, result: StudyResult) -> None:
         "About the run, what was noticed in the study workbook, and every input used, defaults "
         "included. Copies of values: changing them here changes nothing.",
     )
-    sheet.widths([30, 26, 40, 26, 46, 16, 34])
+    sheet.widths(WIDTHS)
     facts = run_facts(result)
     sheet.text(3, 0, "Run", "section")
     grid = Grid(ASSUMPTIONS, 4, RUN_FACTS, len(facts))
@@ -29,7 +31,7 @@ def write(book: SafeBook, result: StudyResult) -> None:
     sheet.paragraph(grid.top, 1, 6, RUN_FACTS[1].title, 100, "heading")
     for i, (title, value) in enumerate(facts):
         sheet.text(grid.row(i), 0, title)
-        sheet.paragraph(grid.row(i), 1, 6, value, 190)
+        sheet.paragraph(grid.row(i), 1, 6, value, 180)
     findings = Grid(ASSUMPTIONS, grid.below + 2, FINDINGS, len(result.findings))
     sheet.text(findings.top - 1, 0, "Noticed in the study workbook", "section")
     findings.write(
@@ -49,7 +51,7 @@ def write(book: SafeBook, result: StudyResult) -> None:
     sheet.text(inputs.top - 1, 0, "Every input used", "section")
     inputs.write(sheet, [_input_row(echo) for echo in result.inputs])
     sheet.freeze(2, 0)
-    sheet.print_setup(inputs.below - 1, len(INPUTS) - 1)
+    sheet.print_setup(inputs.below - 1, len(INPUTS) - 1, heading_row=inputs.top)
 
 
 def run_facts(result: StudyResult) -> list[tuple[str, str]]:

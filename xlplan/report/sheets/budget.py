@@ -5,13 +5,13 @@ from __future__ import annotations
 from xlplan.compare.pack_result import BudgetPoint
 from xlplan.compare.study_result import StudyResult
 from xlplan.report import charts, pack_wording
-from xlplan.report.grid import Cell, Formula, Grid
+from xlplan.report.grid import Cell, Formula, Grid, set_widths
 from xlplan.report.looks import BLUE, NAVY, ORANGE
 from xlplan.report.safe_book import SafeBook
 from xlplan.report.sheets.absent import say_absent
 from xlplan.report.tables import BUDGET, BUDGET_POINTS
 
-WIDTHS = (15, 14, 14, 14, 14, 13, 12, 14, 14, 14, 14, 48, 30)
+WIDTHS = (13, 13, 13, 13, 13, 11, 11, 13, 13, 13, 13, 36, 17)
 CHART_ROWS = 18
 CHART_TOP = 5
 PER = 1000.0
@@ -25,16 +25,17 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
         "The best plan found at each limit of capital after grants, from nothing to what would be "
         "spent without a limit.",
     )
-    sheet.widths(WIDTHS)
+    set_widths(sheet, WIDTHS, BUDGET_POINTS)
     points = result.pack.budget
     if not points:
         say_absent(sheet, result, "assets for sale")
         return None
-    sheet.paragraph(3, 0, len(WIDTHS) - 1, pack_wording.knee(result), 210, "text", "bold")
+    sheet.paragraph(3, 0, len(WIDTHS) - 1, pack_wording.knee(result), sum(WIDTHS), "text", "bold")
     grid = Grid(BUDGET, CHART_TOP + CHART_ROWS + 2, BUDGET_POINTS, len(points))
     sheet.text(grid.top - 1, 0, "Points of the curve", "section")
     rows = [_row(result, point, grid, i) for i, point in enumerate(points)]
     grid.write(sheet, rows, marked=[i for i in (result.pack.knee,) if i is not None])
+    half = sheet.pixels(0, len(WIDTHS) - 1) // 2
     for left, keys, title, unit, values in (
         (
             0,
@@ -66,7 +67,8 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
             has_markers=True,
         )
         alt = f"{title}, from nothing to what would be spent without a limit."
-        sheet.chart(CHART_TOP, left * 815, chart, 805, CHART_ROWS * charts.PIXELS_PER_ROW - 10, alt)
+        height = CHART_ROWS * charts.PIXELS_PER_ROW - 10
+        sheet.chart(CHART_TOP, left * half, chart, half - 10, height, alt)
     note = (
         "Intervals hold what sampling leaves open (95 %) and what the search leaves open. A plan "
         "found with less money is kept where a search with more found none better."

@@ -11,15 +11,16 @@ import math
 from dataclasses import dataclass
 from itertools import pairwise
 
+from xlplan.base.names import IGNORING_OUTAGES, LEAST_COST
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import CheckLine, PlanResult
-from xlplan.report.grid import Cell, Formula, Grid
+from xlplan.report.grid import Cell, Formula, Grid, set_widths
 from xlplan.report.money import baseline, formula_net_capital, formula_yearly
 from xlplan.report.safe_book import SafeBook
 from xlplan.report.sheets.alternatives import AlternativesCells
 from xlplan.report.sheets.hardening import HardeningCells
 from xlplan.report.sheets.reliability import ReliabilityCells
-from xlplan.report.tables import CHECK_LINES, CHECKS
+from xlplan.report.tables import CHECK_LINES, CHECKS, SENSITIVITIES
 
 PASS, FAIL, LOOK, CHANGED = "PASS", "FAIL", "LOOK", "CHANGED"
 ALL_PASS = "PASS: all checks agree"
@@ -32,6 +33,10 @@ CENT = 0.005
 
 RELATIVE = 1e-6
 """Share by which sums may differ: far above rounding, far below what a reader could see."""
+
+
+NEAR = 0.01
+"""Share by which figures may differ that are not the same but should be near one another."""
 
 
 @dataclass(frozen=True)
@@ -77,11 +82,11 @@ def write(
         "Each row sets two figures that should agree side by side. FAIL: a fault of the run. LOOK: "
         "for you to judge. CHANGED: a figure of this workbook was altered after the run.",
     )
-    sheet.widths([24, 40, 62, 19, 19, 13, 13, 13, 12])
+    set_widths(sheet, [22, 36, 56, 17, 17, 12, 12, 12, 11], CHECK_LINES)
     lines = [_run_line("Study", line) for line in result.checks]
     lines += [_run_line(plan.name, line) for plan in result.plans for line in plan.checks]
     lines += _money_lines(result, alternatives) + _energy_lines(result, reliability)
-    lines += _pack_lines(result, alternatives, pack)
+    lines += _planning_line(result, alternatives) + _pack_lines(result, alternatives, pack)
     grid = Grid(CHECKS, OVERALL_ROW + 2, CHECK_LINES, len(lines))
     rows = [_row(line, grid, i) for i, line in enumerate(lines)]
     grid.write(sheet, rows)
@@ -222,6 +227,28 @@ def _money_lines(result: StudyResult, cells: AlternativesCells) -> list[_Line]:
     return lines
 
 
+def _planning_line(result: StudyResult, cells: AlternativesCells) -> list[_Line]:
+    """What planning for outages is worth, which Summary states, against the two totals."""
+    names = [plan.name for plan in result.plans]
+    if IGNORING_OUTAGES not in names or LEAST_COST not in names:
+        return []
+    blind, best = names.index(IGNORING_OUTAGES), names.index(LEAST_COST)
+    value = result.plans[blind].costs.total - result.plans[best].costs.total
+    agrees = abs(value - result.value_of_outage_planning) <= CENT
+    return [
+        _Line(
+            "Study",
+            "Worth of planning for outages",
+            "Plan ignoring outages less least-cost plan on Alternatives, and the worth that "
+            "Summary states",
+            Formula(f"={cells.away('total', blind)}-{cells.away('total', best)}", value),
+            result.value_of_outage_planning,
+            CENT,
+            CHANGED if agrees else FAIL,
+        )
+    ]
+
+
 def _formula_errors(plan: PlanResult, rate_frac: float) -> tuple[float, float]:
     """By how much formulas from prices miss what the run found: yearly cost, capital.
 
@@ -269,7 +296,29 @@ def _energy_lines(result: StudyResult, cells: ReliabilityCells) -> list[_Line]:
                 )
             )
         first += n_window
+        if plan.causes:
+            lines.append(_section_line(plan, side, index, cells))
     return lines
+
+
+def _section_line(plan: PlanResult, side: str, index: Formula, cells: ReliabilityCells) -> _Line:
+    """Sections by what each first event does; what an earlier event leaves behind is not in them.
+
+    So they are near the index and not equal to it: a difference is to be judged, not a fault.
+    """
+    grid = cells.sections
+    return _Line(
+        plan.name,
+        "Energy not supplied by dead section",
+        "Sum over every dead section, all events as first ones (kWh/year), and the index EENS, in "
+        "which a store may not be full again; allowed: 1 %, and what is shed in normal service",
+        Formula(
+            f"=SUM({grid.span_away(f'eens_{side}')})", sum(one.eens_kwh for one in plan.causes)
+        ),
+        index,
+        max(CENT, NEAR * abs(plan.indices.eens_kwh)) + plan.normal_shed_kwh,
+        LOOK,
+    )
 
 
 def _pack_lines(
@@ -294,6 +343,16 @@ def _pack_lines(
         lines.append(_Line("Comparison", name, what, left, right, tolerance, word))
 
     money = max(CENT, RELATIVE * abs(best.costs.total))
+    if cells.sensitivities is not None:
+        # The line above the table, two rows over its title.
+        place = f"='{SENSITIVITIES}'!$D${cells.sensitivities.top - 2}"
+        add(
+            "Sensitivities begin at the study as given",
+            "Yearly cost that changes are counted from, and the plan's on Alternatives",
+            Formula(place, best.costs.total),
+            total(i_best),
+            money,
+        )
     if cells.budget is not None:
         points = pack.budget
         add(

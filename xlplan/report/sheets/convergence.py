@@ -8,7 +8,7 @@ from xlplan.base.units import pct_from_frac
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import ConvergenceRow, PlanResult
 from xlplan.report import charts
-from xlplan.report.grid import Cell, Grid
+from xlplan.report.grid import Cell, Grid, set_widths
 from xlplan.report.looks import BLACK, BLUE, VERMILION
 from xlplan.report.safe_book import SafeBook
 from xlplan.report.tables import CONVERGENCE, METHODS, PASSES
@@ -36,7 +36,7 @@ def write(book: SafeBook, result: StudyResult) -> None:
     best = result.plan(result.recommended)
     target = f"target {pct_from_frac(result.gap_target_frac):.2f} %"
     sheet.head("How far the solver got", f"Status: {result.status}; {target}; seed {result.seed}.")
-    sheet.widths(WIDTHS)
+    set_widths(sheet, WIDTHS, METHODS)
     row = 3
     for meaning in MEANINGS:
         sheet.paragraph(row, 0, len(WIDTHS) - 1, meaning, 205)
@@ -54,13 +54,11 @@ def write(book: SafeBook, result: StudyResult) -> None:
     passes.write(sheet, [_pass_row(one) for one in best.convergence])
     _write_chart(book, best, passes, chart_row)
     sheet.freeze(2, 0)
-    sheet.print_setup(passes.below, len(METHODS) - 1)
+    sheet.print_setup(passes.below, len(METHODS) - 1, heading_row=passes.top)
 
 
 def _method_row(plan: PlanResult) -> dict[str, Cell]:
-    counted = (
-        "every path counted" if plan.is_enumerated else f"{plan.n_sample:,} sampled continuations"
-    )
+    counted = "every path counted" if plan.is_enumerated else f"{plan.n_sample:,} sampled histories"
     return {
         "name": plan.name,
         "bound": plan.lower_bound,

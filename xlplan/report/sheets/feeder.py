@@ -17,11 +17,15 @@ from xlplan.report.looks import BLUE, GREY, ORANGE, VERMILION
 from xlplan.report.safe_book import SafeBook, SafeSheet
 from xlplan.report.tables import DRAWN_BUSES, FEEDER
 
-MOST_ROWS = 31
 HEIGHT_SHARE = 0.57
 """Height of a drawing over its width: with its heading it then fits a landscape page."""
-WIDTHS_HEAD = (26, 14, 14, 60)
-MOST_PX = 1300
+
+MOST_HALF_PAGE = 40
+"""With more buses a drawing needs a page of its own."""
+
+WIDTHS_HEAD = (24, 12, 12, 40)
+STATE_WIDTH = 14
+LEAST_LAST_COL = 8
 MOST_LABELS = 80
 """With more buses names would cover the drawing; the table has them."""
 
@@ -50,14 +54,19 @@ class _Look:
     marker: str
     dash: str
     width_pt: float
+    short: str = ""
+    """What is added to the name of a bus."""
 
 
 LOOKS = (
     _Look("live", "live", BLUE, "circle", "solid", 2.25),
-    _Look("island", "cut off: island", ORANGE, "diamond", "dash", 2.25),
-    _Look("dead", "dead by the fault", VERMILION, "x", "round_dot", 1.5),
+    _Look("island", "cut off: island", ORANGE, "diamond", "dash", 2.25, " (cut off)"),
+    _Look("dead", "dead by the fault", VERMILION, "x", "round_dot", 1.5, " (dead)"),
     _Look("open", "open tie", GREY, "none", "long_dash", 1.0),
 )
+LABEL_SIDES = ("above", "below", "right", "left")
+LEAST_RISE = 0.4
+ROOM_FOR_NAMES = 0.18
 
 
 def write(book: SafeBook, result: StudyResult) -> None:
@@ -66,32 +75,34 @@ def write(book: SafeBook, result: StudyResult) -> None:
     drawing = result.feeder
     sheet.head(
         "The feeder, and what the outages shown do to it",
-        "Round and solid: live. Diamond and dashed: cut off from every supply, an island if "
-        "something can form it. Cross and dotted: dead by the fault. Grey: open tie. Outages of "
-        "the least-cost plan, on the feeder as it is.",
+        "Round, solid: live. Diamond, dashed: cut off from every supply, an island if something "
+        "can form it. Cross, dotted: dead by the fault. Grey: open tie.",
     )
     if drawing is None or not drawing.buses:
         sheet.text(3, 0, "The run kept no drawing.", "note")
         sheet.print_setup(3, 8)
         return
     n_stage = len(drawing.stages)
-    sheet.widths([*WIDTHS_HEAD, *([16] * n_stage), *([13] * 3 * n_stage)])
-    last_col = len(WIDTHS_HEAD) + n_stage - 1
-    width = min(MOST_PX, sheet.pixels(0, last_col)) - 10
-    n_row = min(MOST_ROWS, int(HEIGHT_SHARE * width / charts.PIXELS_PER_ROW))
+    sheet.widths([*WIDTHS_HEAD, *([STATE_WIDTH] * n_stage), *([13] * 3 * n_stage)])
+    last_col = max(LEAST_LAST_COL, len(WIDTHS_HEAD) + n_stage - 1)
+    width = sheet.pixels(0, last_col) - 10
+    page_rows = sheet.page_pixels(last_col) // charts.PIXELS_PER_ROW
+    per_page = 2 if len(drawing.buses) <= MOST_HALF_PAGE else 1
+    # Each drawing has a title, a line of words and a blank row; the first page has the head, too.
+    n_row = min(page_rows // per_page - 5, int(HEIGHT_SHARE * width / charts.PIXELS_PER_ROW))
     tops, row = [], 3
     for note in drawing.stage_notes:
         tops.append(row)
         row += n_row + (3 if note else 2)
     numbers_top = row
-    buses = Grid(FEEDER, row + 1, _bus_columns(drawing), len(drawing.buses))
+    buses = Grid(FEEDER, row + 2, _bus_columns(drawing), len(drawing.buses))
     lines = Grid(FEEDER, buses.below + 2, _line_columns(drawing), len(drawing.lines))
     sheet.text(row, 0, "Buses: place, and state in each drawing", "section")
     _write_buses(sheet, drawing, buses)
     sheet.text(lines.top - 1, 0, "Lines: state in each drawing", "section")
     _write_lines(sheet, drawing, lines)
     walks = [walk for i in range(n_stage) for walk in stage_walks(drawing, i)]
-    paths = Grid(FEEDER, lines.below + 2, PATHS, sum(len(walk.buses) for walk in walks))
+    paths = Grid(FEEDER, lines.below + 3, PATHS, sum(len(walk.buses) for walk in walks))
     sheet.text(paths.top - 1, 0, "Paths: how the charts draw the lines", "section")
     first_row = _write_paths(sheet, drawing, paths, walks)
     for i, (top, title) in enumerate(zip(tops, drawing.stages, strict=True)):
@@ -110,11 +121,11 @@ def write(book: SafeBook, result: StudyResult) -> None:
         if drawing.is_computed
         else "Places are those of the study's Buses sheet."
     )
-    sheet.text(paths.below + 1, 0, how, "note")
-    sheet.page_breaks([*tops[1:], numbers_top])
+    sheet.text(numbers_top + 1, 0, how, "note")
     sheet.freeze(2, 0)
-    # The columns that only feed the charts stay off the printed page.
-    sheet.print_setup(paths.below + 1, last_col)
+    breaks = [*tops[per_page::per_page], numbers_top]
+    # What only feeds the charts stays off the printed page.
+    sheet.print_setup(lines.below - 1, last_col, breaks=breaks)
 
 
 def _bus_columns(drawing: FeederDrawing) -> tuple[Column, ...]:
@@ -236,9 +247,31 @@ def _ways(lines: list[DrawnLine], goes_back: bool) -> list[tuple[str, ...]]:
     return ways
 
 
-def _label(bus: str) -> str:
-    """The name itself; a space before one that could pass for a formula."""
-    return f" {bus}" if bus.startswith("=") else bus
+def _label(bus: str, state: str) -> str:
+    """The name and, in words, what befell it; a space before what could pass for a formula."""
+    word = next(look.short for look in LOOKS if look.word == state)
+    return f"{' ' if bus.startswith('=') else ''}{bus}{word}"
+
+
+def label_places(drawing: FeederDrawing) -> dict[str, str]:
+    """Side of each bus on which its name is clear of lines, as far as there is one."""
+    place = {bus.bus: (bus.x, bus.y) for bus in drawing.buses}
+    across = max(x for x, _ in place.values()) - min(x for x, _ in place.values())
+    upward = max(y for _, y in place.values()) - min(y for _, y in place.values())
+    taken: dict[str, set[str]] = {bus: set() for bus in place}
+    for line in drawing.lines:
+        for here, there in ((line.from_bus, line.to_bus), (line.to_bus, line.from_bus)):
+            dx = (place[there][0] - place[here][0]) / (across or 1.0)
+            dy = (place[there][1] - place[here][1]) / (upward or 1.0) * HEIGHT_SHARE
+            # A name is wide and low: lines that rise gently do not meet one above them.
+            if abs(dy) > LEAST_RISE * abs(dx):
+                taken[here].add("above" if dy > 0.0 else "below")
+            else:
+                taken[here].add("right" if dx > 0.0 else "left")
+    return {
+        bus: next((side for side in LABEL_SIDES if side not in sides), LABEL_SIDES[0])
+        for bus, sides in taken.items()
+    }
 
 
 def _chart(
@@ -254,6 +287,7 @@ def _chart(
     """Lines by state, buses by state over them; names where there is room."""
     used_buses = {bus.states[i] for bus in drawing.buses}
     has_names = len(drawing.buses) <= MOST_LABELS
+    sides = label_places(drawing)
     strokes, dots = [], []
     for look in LOOKS:
         key = f"y {i} {look.word}"
@@ -271,7 +305,8 @@ def _chart(
                 )
         if look.word in used_buses:
             labels = tuple(
-                _label(bus.bus) if bus.states[i] == look.word else "" for bus in drawing.buses
+                _label(bus.bus, look.word) if bus.states[i] == look.word else ""
+                for bus in drawing.buses
             )
             dots.append(
                 charts.Dots(
@@ -281,7 +316,10 @@ def _chart(
                     look.colour,
                     look.marker,
                     labels if has_names else (),
+                    tuple(sides[bus.bus] for bus in drawing.buses),
                 )
             )
     xs, ys = [bus.x for bus in drawing.buses], [bus.y for bus in drawing.buses]
-    return charts.drawing(book, title, strokes, dots, charts.padded(xs), charts.padded(ys))
+    return charts.drawing(
+        book, title, strokes, dots, charts.padded(xs), charts.padded(ys, ROOM_FOR_NAMES)
+    )

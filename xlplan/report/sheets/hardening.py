@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from xlplan.compare.pack_result import HardeningValue, Worth
 from xlplan.compare.study_result import StudyResult
 from xlplan.report import charts
-from xlplan.report.grid import Cell, Formula, Grid
+from xlplan.report.grid import Cell, Formula, Grid, set_widths
 from xlplan.report.looks import BLUE, ORANGE
 from xlplan.report.money import NO_PAYBACK, UNDECIDED
 from xlplan.report.safe_book import SafeBook, SafeSheet
@@ -15,7 +15,7 @@ from xlplan.report.sheets.absent import say_absent
 from xlplan.report.sheets.plan import PlanCells
 from xlplan.report.tables import HARDENING, WORTH
 
-WIDTHS = (9, 30, 26, 11, 9, 13, 13, 15, 13, 14, 14, 14, 14, 13, 13, 16)
+WIDTHS = (7, 25, 14, 9, 8, 12, 12.5, 13, 12.5, 12.5, 12.5, 12.5, 12.5, 11, 11, 13)
 NOT_RANKED = "-"
 WORTH_IT, NOT_WORTH_IT = "worth it", "not worth it"
 ROWS_PER_BAR = 2
@@ -52,7 +52,7 @@ def write(book: SafeBook, result: StudyResult, plan_cells: PlanCells) -> Hardeni
         "Worth: yearly cost with the measure less than without it, before the measure's own cost. "
         "Same windows and random numbers with and without.",
     )
-    sheet.widths(WIDTHS)
+    set_widths(sheet, WIDTHS, WORTH)
     if not rows:
         say_absent(sheet, result, "measures on the Hardening sheet")
         return None
@@ -71,6 +71,7 @@ def write(book: SafeBook, result: StudyResult, plan_cells: PlanCells) -> Hardeni
             charts.Series(_title(sheet, in_plan), in_plan.chart_values("net"), BLUE),
             charts.Series(_title(sheet, alone), alone.chart_values("net"), ORANGE),
         ],
+        "Measure",
         book.words("Net value ({money}/year)"),
     )
     alt = "Bars: net value of each hardening measure beside the plan's purchases and alone."

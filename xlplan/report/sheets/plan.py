@@ -11,7 +11,7 @@ from dataclasses import dataclass
 
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import PlanResult, Purchase
-from xlplan.report.grid import Cell, Formula, Grid
+from xlplan.report.grid import Cell, Formula, Grid, set_widths
 from xlplan.report.money import buys_anything
 from xlplan.report.safe_book import SafeBook
 from xlplan.report.sheets.price_list import PriceList, place_prices
@@ -46,7 +46,7 @@ def write(book: SafeBook, result: StudyResult) -> PlanCells:
         "Blue figures on a pale fill were found by the run; black ones are formulas that follow "
         "them and the prices on the Alternatives sheet. Changing one searches for no new plan.",
     )
-    sheet.widths(WIDTHS)
+    set_widths(sheet, WIDTHS, PLAN_TOTALS, PRICES, PURCHASES)
     shown = [plan for plan in result.plans if buys_anything(plan)]
     # Prices are the study's, the same in every plan; they are typed on the Alternatives sheet.
     price_list = place_prices(result, statement_rows()[1] + 2)
@@ -80,7 +80,7 @@ def write(book: SafeBook, result: StudyResult) -> PlanCells:
     bought.write(sheet, rows, marked=marked)
     sheet.text(bought.below + 1, 0, NOTE, "note")
     sheet.freeze(2, 1)
-    sheet.print_setup(bought.below + 1, len(PURCHASES) - 1)
+    sheet.print_setup(bought.below + 1, len(PURCHASES) - 1, heading_row=bought.top)
     return PlanCells(totals, prices, price_row, price_list)
 
 

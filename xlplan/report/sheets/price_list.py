@@ -10,6 +10,7 @@ from dataclasses import dataclass
 
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import Purchase
+from xlplan.report.room import BODY_CHARS, LINE_POINTS, lines_needed
 from xlplan.report.safe_book import SafeSheet
 from xlplan.report.tables import ALTERNATIVES
 
@@ -77,7 +78,11 @@ def write_prices(sheet: SafeSheet, prices: PriceList) -> None:
             if asset.kind not in kinds:
                 continue
             row = prices.row_of[asset.asset, key]
-            sheet.text(row, 0, f"{asset.asset}: {label}")
+            words = f"{asset.asset}: {label}"
+            lines = lines_needed(words, BODY_CHARS * sheet.width(0))
+            if lines > 1:
+                sheet.height(row, LINE_POINTS * lines + 3)
+            sheet.text(row, 0, words, "wrap")
             sheet.text(row, 1, sheet.book.words(unit), "subtitle")
             sheet.number(row, VALUE_COL, getattr(asset, attribute), look, "input")
             origin = f"Sheet {SHEET_OF.get(asset.kind, asset.kind)} of the study, {asset.place}"

@@ -12,8 +12,8 @@ from dataclasses import dataclass
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import CauseResult, Indices, PlanResult
 from xlplan.report import charts
-from xlplan.report.grid import Cell, Formula, Grid
-from xlplan.report.looks import BLUE, VERMILION
+from xlplan.report.grid import Cell, Formula, Grid, set_widths
+from xlplan.report.looks import BLUE, ORANGE
 from xlplan.report.money import baseline
 from xlplan.report.safe_book import SafeBook, SafeSheet
 from xlplan.report.tables import (
@@ -38,17 +38,18 @@ MAX_CAUSES = 400
 CHART_ROWS = 16
 MAX_BUSES_CHARTED = 60
 
-WIDTHS = (26, 39, 15, 15, 15, 15, 15, 15, 15, 15, 15)
+WIDTHS = (24, 36, 14.5, 15, 15, 15, 15, 15, 15, 15, 15)
 
 
 @dataclass(frozen=True)
 class ReliabilityCells:
-    """Where indices, windows, classes and buses stand, for Summary and Checks."""
+    """Where indices, windows, classes, buses and sections stand, for Summary and Checks."""
 
     indices: Grid
     windows: Grid
     classes: Grid
     buses: Grid
+    sections: Grid
 
 
 def write(book: SafeBook, result: StudyResult) -> ReliabilityCells:
@@ -60,17 +61,18 @@ def write(book: SafeBook, result: StudyResult) -> ReliabilityCells:
         "Expected values per year by IEEE 1366 (customer interruptions count the largest share of "
         f"load shed at once). Tables further down: existing feeder and plan ({best.name}).",
     )
-    sheet.widths(WIDTHS)
+    set_widths(sheet, WIDTHS, INDICES, WINDOWS, CLASSES, BUSES, SECTIONS, CAUSES)
     indices = _indices(sheet, result, 3 + CHART_ROWS)
     row = _history(sheet, result, indices.below)
     windows = _windows(sheet, [base, best], row + 2)
     classes = _classes(sheet, base, best, windows.below + 2)
     buses = _buses(sheet, base, best, classes.below + 2)
     _charts(book, sheet, classes, buses)
-    row = _causes(sheet, base, best, buses.below + 2)
+    sections, causes = _causes(sheet, base, best, buses.below + 2)
     sheet.freeze(2, 1)
-    sheet.print_setup(row, len(CLASSES) - 1)
-    return ReliabilityCells(indices, windows, classes, buses)
+    breaks = [windows.top - 1, sections.top - 1]
+    sheet.print_setup(causes.below, len(CLASSES) - 1, heading_row=causes.top, breaks=breaks)
+    return ReliabilityCells(indices, windows, classes, buses, sections)
 
 
 def _indices(sheet: SafeSheet, result: StudyResult, top: int) -> Grid:
@@ -190,7 +192,7 @@ def _charts(book: SafeBook, sheet: SafeSheet, classes: Grid, buses: Grid) -> Non
     """Energy not supplied by class, outage time by bus: existing feeder beside plan."""
 
     def pair(grid: Grid, key: str) -> list[charts.Series]:
-        sides = ((f"{key}_base", VERMILION), (f"{key}_plan", BLUE))
+        sides = ((f"{key}_base", ORANGE), (f"{key}_plan", BLUE))
         return [
             charts.Series(grid.chart_name(one), grid.chart_values(one), colour)
             for one, colour in sides
@@ -204,6 +206,7 @@ def _charts(book: SafeBook, sheet: SafeSheet, classes: Grid, buses: Grid) -> Non
             "Energy not supplied by customer class",
             classes.chart_values("name"),
             pair(classes, "eens"),
+            "Customer class",
             "Energy not supplied (kWh/year)",
         )
         alt = "Bars: energy not supplied a year by customer class, existing feeder and plan."
@@ -243,15 +246,20 @@ def _buses(sheet: SafeSheet, base: PlanResult, best: PlanResult, top: int) -> Gr
     return grid
 
 
-def _causes(sheet: SafeSheet, base: PlanResult, best: PlanResult, top: int) -> int:
-    """Sections summed by formula over the list of causes under them; last row."""
+def _causes(sheet: SafeSheet, base: PlanResult, best: PlanResult, top: int) -> tuple[Grid, Grid]:
+    """Sections summed by formula over the list of causes under them; both tables."""
     plans = _once([base, best])
     listed = {plan.name: _cause_rows(plan) for plan in plans}
     names = sorted({str(row["section"]) for rows in listed.values() for row in rows})
     sections = Grid(RELIABILITY, top + 1, SECTIONS, len(names))
     causes = Grid(RELIABILITY, sections.below + 3, CAUSES, sum(map(len, listed.values())))
     first = {base.name: 0, best.name: len(listed[base.name]) if best.name != base.name else 0}
-    sheet.text(top, 0, "By dead section (sums over the causes below)", "section")
+    sheet.text(
+        top,
+        0,
+        "By dead section: sums over the causes below, each event as if it were the first",
+        "section",
+    )
     rows: list[dict[str, Cell]] = []
     for i, name in enumerate(names):
         row: dict[str, Cell] = {"name": name, "label": _section_words(name)}
@@ -266,7 +274,7 @@ def _causes(sheet: SafeSheet, base: PlanResult, best: PlanResult, top: int) -> i
     sections.write(sheet, rows)
     sheet.text(causes.top - 1, 0, "By cause, the most harmful first", "section")
     causes.write(sheet, [row for plan in plans for row in listed[plan.name]])
-    return causes.below
+    return sections, causes
 
 
 def _sum_where(

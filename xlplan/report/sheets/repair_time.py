@@ -5,14 +5,14 @@ from __future__ import annotations
 from xlplan.compare.pack_result import RepairPoint
 from xlplan.compare.study_result import StudyResult
 from xlplan.report import charts, pack_wording
-from xlplan.report.grid import Cell, Formula, Grid
+from xlplan.report.grid import Cell, Formula, Grid, set_widths
 from xlplan.report.looks import BLUE, ORANGE
 from xlplan.report.money import UNDECIDED
 from xlplan.report.safe_book import SafeBook
 from xlplan.report.sheets.absent import say_absent
 from xlplan.report.tables import REPAIR_POINTS, REPAIR_TIME
 
-WIDTHS = (14, 14, 11, 14, 14, 14, 14, 13, 14, 14, 14, 14, 14, 14, 14)
+WIDTHS = (9.5, 10.5, 9, 13, 13, 13, 11.5, 11.5, 13, 13, 13, 12, 11.5, 12, 12, 12, 9)
 CHART_ROWS = 18
 CHART_TOP = 5
 PAYS, HOLDS = "yes", "no"
@@ -26,17 +26,19 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
         "All repair times multiplied by one factor. Plan kept: the purchases of the "
         f"{result.pack.plan_name or 'plan'}; plan made anew: the best purchases for that speed.",
     )
-    sheet.widths(WIDTHS)
+    set_widths(sheet, WIDTHS, REPAIR_POINTS)
     points = result.pack.repair_time
     if not points:
         say_absent(sheet, result, "outages")
         return None
-    sheet.paragraph(3, 0, len(WIDTHS) - 1, pack_wording.hour_faster(result), 200, "text", "bold")
+    text = pack_wording.hour_faster(result)
+    sheet.paragraph(3, 0, len(WIDTHS) - 1, text, sum(map(int, WIDTHS)), "text", "bold")
     grid = Grid(REPAIR_TIME, CHART_TOP + CHART_ROWS + 2, REPAIR_POINTS, len(points))
     sheet.text(grid.top - 1, 0, "Repair times from half to double", "section")
     rows = [_row(point, grid, i) for i, point in enumerate(points)]
     grid.write(sheet, rows, marked=[i for i, p in enumerate(points) if p.factor == 1.0])
     hours = [point.mean_event_h for point in points]
+    half = sheet.pixels(0, len(WIDTHS) - 1) // 2
     for left, keys, title, unit, values in (
         (
             0,
@@ -66,11 +68,14 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
             "Mean length of an outage event (h)",
             unit,
             charts.wide_range(values),
-            x_max=max(hours) if max(hours) > 0.0 else None,
+            # Beyond the last point, whose marker would be cut at the edge.
+            x_max=charts.wide_range([0.0, *hours])[1],
             x_format="0.0",
+            has_markers=True,
         )
         alt = f"Two lines: {title[0].lower()}{title[1:]}; the plan kept and the plan made anew."
-        sheet.chart(CHART_TOP, left * 745, chart, 735, CHART_ROWS * charts.PIXELS_PER_ROW - 10, alt)
+        height = CHART_ROWS * charts.PIXELS_PER_ROW - 10
+        sheet.chart(CHART_TOP, left * half, chart, half - 10, height, alt)
     notes = (
         "Repairs last whole periods: factors that round to the same number of periods give the "
         "same figures.",
@@ -102,7 +107,12 @@ def _row(point: RepairPoint, grid: Grid, i: int) -> dict[str, Cell]:
         "kept_customers": point.kept.costs.customers,
         "kept_eens": point.kept.indices.eens_kwh,
         "kept_saidi": point.kept.indices.saidi_h,
-        "anew": point.anew.costs.total,
+        "anew": Formula(
+            f"={grid.here(i, 'anew_utility')}+{grid.here(i, 'anew_customers')}",
+            point.anew.costs.total,
+        ),
+        "anew_utility": point.anew.costs.utility,
+        "anew_customers": point.anew.costs.customers,
         "anew_capital": point.anew.capital_cost,
         "anew_eens": point.anew.indices.eens_kwh,
         "loss": Formula(f"={kept}-{anew}", point.loss),

@@ -2,18 +2,32 @@
 
 from __future__ import annotations
 
+from xlsxwriter.chart import Chart
+
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import EventSpread, PlanResult, WorstEvent
 from xlplan.report import charts
-from xlplan.report.grid import Cell, Column, Grid
+from xlplan.report.grid import Cell, Grid, set_widths
 from xlplan.report.looks import BLUE, ORANGE, VERMILION
 from xlplan.report.money import baseline
 from xlplan.report.safe_book import SafeBook, SafeSheet
-from xlplan.report.tables import RISK, SPREAD, SPREAD_STEPS, WORST_EVENTS
+from xlplan.report.tables import (
+    EVENT_COST_STEPS,
+    EVENT_EENS_STEPS,
+    RISK,
+    SPREAD,
+    WORST_EVENTS,
+    YEAR_COST_STEPS,
+    YEAR_EENS_STEPS,
+)
 
-WIDTHS = (32, 12, 16, 16, 15, 15, 15, 16, 15, 16, 60)
+WIDTHS = (32, 13, 14, 15, 14, 14, 14, 14, 14, 14, 40)
 N_WORST = 10
-CHART_ROWS = 18
+CHART_ROWS = 15
+ROWS_OF_CHARTS = 2
+YEARS, EVENTS = "Share of years (1 = all)", "Events (per year)"
+RIGHT_TABLE_COL = 5
+"""Where the right one of two tables side by side begins."""
 
 
 def write(book: SafeBook, result: StudyResult) -> None:
@@ -25,50 +39,47 @@ def write(book: SafeBook, result: StudyResult) -> None:
         f"Existing feeder and plan ({best.name}): simulated years, single outage events, and the "
         "worst scenarios. The plan minimises the expected cost, not the risk.",
     )
-    sheet.widths(WIDTHS)
+    set_widths(sheet, WIDTHS, SPREAD, WORST_EVENTS)
     rows = _figures(base, best)
-    grid = Grid(RISK, 4 + CHART_ROWS + 2, SPREAD, len(rows))
+    grid = Grid(RISK, 4 + ROWS_OF_CHARTS * CHART_ROWS, SPREAD, len(rows))
     sheet.text(grid.top - 1, 0, "Percentiles of a year and of one event", "section")
     grid.write(sheet, rows)
     shown = best.worst_events[:N_WORST]
-    worst = Grid(RISK, grid.below + 3, WORST_EVENTS, len(shown))
+    worst = Grid(RISK, grid.below + 2, WORST_EVENTS, len(shown))
     sheet.text(worst.top - 1, 0, f"Worst scenarios: {best.name}", "section")
     worst.write(sheet, [_worst_row(one, i, base) for i, one in enumerate(shown)])
-    row = worst.below + 2
-    steps = []
-    risk = best.risk
-    for title, bins in (
-        (book.words("Year's cost of the plan ({money}): share of years"), risk.cost_bins),
-        ("Year's unserved energy with the plan (kWh): share of years", risk.eens_bins),
-        (
-            book.words("Cost of one event ({money}): events per year"),
-            risk.event_cost.bins if risk.event_cost is not None else (),
-        ),
-        (
-            "Unserved energy of one event (kWh): events per year",
-            risk.event_eens.bins if risk.event_eens is not None else (),
-        ),
-    ):
-        sheet.text(row, 0, title, "section")
-        one = Grid(RISK, row + 1, _step_columns(title), len(bins))
-        one.write(sheet, [_step_row(*step) for step in bins])
-        steps.append(one)
-        row = one.below + 1
+    row = worst.below
+    for note in _notes(best):
+        sheet.text(row, 0, note, "note")
+        row += 1
+    steps_row = row + 1
+    steps = _steps(sheet, best, steps_row)
     _charts(book, sheet, result, grid, steps)
-    for i, note in enumerate(_notes(best)):
-        sheet.text(row + i, 0, note, "note")
     sheet.freeze(2, 0)
-    sheet.print_setup(row + 3, len(WIDTHS) - 1)
+    last_row = max(one.below for one in steps)
+    sheet.print_setup(last_row, len(WIDTHS) - 1, breaks=[worst.top - 1, steps_row])
 
 
-def _step_columns(title: str) -> tuple[Column, ...]:
-    """Columns of a distribution; the last is named after what it holds."""
-    head = [*SPREAD_STEPS]
-    return (*head[:-1], Column("weight", title, "small"))
-
-
-def _step_row(low: float, high: float, weight: float) -> dict[str, Cell]:
-    return {"step": f"{low:,.0f} - {high:,.0f}", "low": low, "high": high, "weight": weight}
+def _steps(sheet: SafeSheet, best: PlanResult, row: int) -> list[Grid]:
+    """Four distributions in equal steps, two side by side: a year's above, one event's below."""
+    risk = best.risk
+    cost, eens = risk.event_cost, risk.event_eens
+    # What, bins, columns.
+    tables = (
+        ("Year's cost of the plan ({money})", risk.cost_bins, YEAR_COST_STEPS),
+        ("Year's unserved energy with the plan (kWh)", risk.eens_bins, YEAR_EENS_STEPS),
+        ("Cost of one event ({money})", cost.bins if cost else (), EVENT_COST_STEPS),
+        ("Unserved energy of one event (kWh)", eens.bins if eens else (), EVENT_EENS_STEPS),
+    )
+    grids: list[Grid] = []
+    for i, (title, bins, columns) in enumerate(tables):
+        left = RIGHT_TABLE_COL if i % 2 else 0
+        top = row if i < 2 else max(one.below for one in grids[:2]) + 1
+        sheet.text(top, left, sheet.book.words(title), "section")
+        one = Grid(RISK, top + 1, columns, len(bins), left)
+        one.write(sheet, [{"low": a, "high": b, "weight": weight} for a, b, weight in bins])
+        grids.append(one)
+    return grids
 
 
 def _figures(base: PlanResult, best: PlanResult) -> list[dict[str, Cell]]:
@@ -133,49 +144,60 @@ def _charts(
     book: SafeBook, sheet: SafeSheet, result: StudyResult, grid: Grid, steps: list[Grid]
 ) -> None:
     n = grid.n_row - 2
-    width = sheet.pixels(0, len(WIDTHS) - 1) // 3 - 10
+    width = sheet.pixels(0, len(WIDTHS) - 1) // 3
     height = CHART_ROWS * charts.PIXELS_PER_ROW - 10
-    if n > 1:
-        columns = {key: _middle(grid, key, n) for key in ("percent", "cost_base", "cost_plan")}
-        plans = (baseline(result), result.plan(result.recommended))
-        values = [v for plan in plans for _, v in plan.risk.cost_percentiles]
+    plans = (baseline(result), result.plan(result.recommended))
+
+    def place(chart: Chart, i_row: int, i_col: int, alt: str) -> None:
+        sheet.chart(3 + i_row * CHART_ROWS, i_col * width, chart, width - 10, height, alt)
+
+    for i_row, (key, what, unit) in enumerate(
+        (("cost", "Cost", book.words("{money}")), ("eens", "Unserved energy", "kWh"))
+    ):
+        if n < 2:
+            continue
+        points = [plan.risk.eens_percentiles for plan in plans]
+        if key == "cost":
+            points = [plan.risk.cost_percentiles for plan in plans]
+        sides = ((f"{key}_base", VERMILION, "solid"), (f"{key}_plan", BLUE, "dash"))
         chart = charts.lines_over_numbers(
             book,
-            "Cost of a year, by percentile",
-            columns["percent"],
+            f"{what} of a year, by percentile",
+            _middle(grid, "percent", n),
             [
-                charts.Series(grid.chart_name("cost_base"), columns["cost_base"], VERMILION),
-                charts.Series(
-                    grid.chart_name("cost_plan"), columns["cost_plan"], BLUE, dash="dash"
-                ),
+                charts.Series(grid.chart_name(side), _middle(grid, side, n), colour, dash=dash)
+                for side, colour, dash in sides
             ],
             "Percentile of years (%)",
-            book.words("Year's cost ({money})"),
-            charts.wide_range(values),
+            f"{what} of a year ({unit})",
+            charts.wide_range([value for one in points for _, value in one]),
             x_max=100.0,
         )
-        alt = "Two lines: cost of a year by percentile, existing feeder and plan."
-        sheet.chart(3, 0, chart, width, height, alt)
-    for i, (one, title, axis, colour) in enumerate(
-        (
-            (steps[0], "Years by cost: the plan", "Share of years", BLUE),
-            (steps[3], "Events by unserved energy: the plan", "Events per year", ORANGE),
-        )
-    ):
+        alt = f"Two lines: {what.lower()} of a year by percentile, existing feeder and plan."
+        place(chart, i_row, 0, alt)
+    money = book.words("{money}")
+    words = (
+        ("Years by cost: the plan", f"Year's cost, from ({money})", YEARS),
+        ("Years by unserved energy: the plan", "Year's unserved energy, from (kWh)", YEARS),
+        ("Events by cost: the plan", f"Cost of one event, from ({money})", EVENTS),
+        ("Events by unserved energy: the plan", "Unserved in one event, from (kWh)", EVENTS),
+    )
+    for i, (one, (title, category, axis)) in enumerate(zip(steps, words, strict=True)):
         if one.n_row < 1:
             continue
+        colour = ORANGE if i % 2 else BLUE
         chart = charts.columns(
             book,
             title,
-            one.chart_values("step"),
+            one.chart_values("low"),
             [charts.Series(one.chart_name("weight"), one.chart_values("weight"), colour)],
-            (book.words("Year's cost ({money})"), "Unserved in one event (kWh)")[i],
+            category,
             axis,
             number_format="0.00",
             has_legend=False,
         )
         alt = f"Columns: {title[0].lower()}{title[1:]}, in equal steps."
-        sheet.chart(3, (i + 1) * (width + 10), chart, width, height, alt)
+        place(chart, i // 2, 1 + i % 2, alt)
 
 
 def _middle(grid: Grid, key: str, n: int) -> list[str | int]:

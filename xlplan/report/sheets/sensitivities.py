@@ -7,14 +7,17 @@ from dataclasses import dataclass
 from xlplan.compare.pack_result import SensitivityCase
 from xlplan.compare.study_result import StudyResult
 from xlplan.report import charts, pack_wording
-from xlplan.report.grid import Cell, Column, Formula, Grid
+from xlplan.report.grid import Cell, Column, Formula, Grid, set_widths
 from xlplan.report.looks import BLUE, ORANGE
 from xlplan.report.safe_book import SafeBook, SafeSheet
 from xlplan.report.sheets.absent import say_absent
 from xlplan.report.tables import REGRETS, SENSITIVITIES, SENSITIVITY_PARTS, SENSITIVITY_ROWS
 
-WIDTHS = (30, 15, 15, 15, 15, 15, 15, 14, 15, 15, 34, 34, 24)
-CHART_ROWS, ROWS_PER_BAR = 9, 2
+WIDTHS = (30, 13, 13, 13, 13, 13, 13, 13, 32, 32, 18)
+CHART_ROWS, ROWS_PER_BAR = 9, 1.7
+MOST_BESIDE_CHART = 3
+"""Rows of the tables that fit on the page of the chart."""
+
 CHART_TOP = 5
 AS_GIVEN = "as given"
 
@@ -41,15 +44,16 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
         "One assumption varied at a time, as the study asks. Best plan: made anew for the case; "
         f"plan kept: the purchases of the {result.pack.plan_name or 'plan'}.",
     )
-    sheet.widths(WIDTHS)
+    set_widths(sheet, WIDTHS, SENSITIVITY_ROWS, SENSITIVITY_PARTS, REGRETS)
     cases = result.pack.sensitivities
     if not cases:
         say_absent(sheet, result, "rows on its Sensitivities sheet")
         return None
     base = result.plan(result.pack.plan_name).costs.total
     pairs = sorted(_pairs(cases), key=lambda one: one.span(base)[0] - one.span(base)[1])
-    sheet.paragraph(3, 0, len(WIDTHS) - 1, pack_wording.sensitivities(result), 230, "text", "bold")
-    n_row = CHART_ROWS + ROWS_PER_BAR * len(pairs)
+    words = pack_wording.sensitivities(result)
+    sheet.paragraph(3, 0, len(WIDTHS) - 1, words, sum(WIDTHS), "text", "bold")
+    n_row = CHART_ROWS + round(ROWS_PER_BAR * len(pairs))
     base_row = CHART_TOP + n_row + 1
     sheet.text(base_row, 0, f"Yearly cost as given: {result.pack.plan_name}")
     sheet.number(base_row, 3, base, "money")
@@ -58,7 +62,8 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
     base_cell = f"$D${base_row + 1}"
     parts = Grid(SENSITIVITIES, grid.below + 2, SENSITIVITY_PARTS, len(pairs))
     grid.write(sheet, [_row(pair, grid, parts, i, base, base_cell) for i, pair in enumerate(pairs)])
-    sheet.text(parts.top - 1, 0, "The same, the utility's own part and the customers'", "section")
+    title = "The same: the utility's own part and the customers', and the plan kept"
+    sheet.text(parts.top - 1, 0, title, "section")
     parts.write(sheet, [_parts_row(pair) for pair in pairs])
     chart = charts.bars(
         book,
@@ -68,13 +73,14 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
             charts.Series(grid.chart_name("low_change"), grid.chart_values("low_change"), BLUE),
             charts.Series(grid.chart_name("high_change"), grid.chart_values("high_change"), ORANGE),
         ],
+        "Assumption",
         book.words("Change of the yearly cost ({money}/year)"),
         overlap=100,
     )
     alt = "Bars to both sides: change of the yearly cost at the low and high value of each row."
-    sheet.chart(CHART_TOP, 0, chart, 1150, n_row * charts.PIXELS_PER_ROW - 10, alt)
+    width = sheet.pixels(0, len(WIDTHS) - 1) - 10
+    sheet.chart(CHART_TOP, 0, chart, width, n_row * charts.PIXELS_PER_ROW - 10, alt)
     row = _regrets(sheet, result, parts.below + 2)
-    sheet.page_breaks([parts.below + 2])
     notes = (
         "The plan changes where another asset is bought or a size moves by more than 10 %. Kept "
         "plan no worse: the loss by keeping it is within its interval.",
@@ -86,7 +92,9 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
     for i, note in enumerate(notes):
         sheet.text(row + i, 0, note, "note")
     sheet.freeze(2, 1)
-    sheet.print_setup(row + len(notes), len(WIDTHS) - 1)
+    breaks = [*([] if len(pairs) <= MOST_BESIDE_CHART else [base_row]), parts.below + 2]
+    last_col = max(len(WIDTHS), len(result.pack.regrets) + 3) - 1
+    sheet.print_setup(row + len(notes), last_col, breaks=breaks)
     return grid
 
 
@@ -110,6 +118,7 @@ def _parts_row(pair: _Pair) -> dict[str, Cell]:
     for side, case in (("low", pair.low), ("high", pair.high)):
         row[f"{side}_utility"] = None if case is None else case.anew.costs.utility
         row[f"{side}_customers"] = None if case is None else case.anew.costs.customers
+        row[f"{side}_kept"] = None if case is None else case.kept.costs.total
     return row
 
 
@@ -138,8 +147,6 @@ def _row(
         "low_change": change(pair.low, "low"),
         "high_change": change(pair.high, "high"),
         "range": Formula(f"=MAX({reach})-MIN({reach})", high - low),
-        "low_kept": None if pair.low is None else pair.low.kept.costs.total,
-        "high_kept": None if pair.high is None else pair.high.kept.costs.total,
         "low_plan": None if pair.low is None else pair.low.changes,
         "high_plan": None if pair.high is None else pair.high.changes,
         "verdict": _verdict([c for c in (pair.low, pair.high) if c is not None]),
@@ -166,10 +173,13 @@ def _regrets(sheet: SafeSheet, result: StudyResult, row: int) -> int:
     columns += [Column(f"cost {n}", f"{n} ({{money}}/year)", "money") for n in names]
     columns.append(Column("anew", "Plan made anew ({money}/year)", "money"))
     columns.append(Column("best", "Best of the row ({money}/year)", "money"))
-    columns += [Column(f"regret {n}", f"Regret: {n} ({{money}}/year)", "money") for n in names]
+    lost = [Column("case", "Case", "wrap")]
+    lost += [Column(f"regret {n}", f"Regret: {n} ({{money}}/year)", "money") for n in names]
     top = Grid(SENSITIVITIES, row + 1, REGRETS, len(names))
     table = Grid(SENSITIVITIES, top.below + 2, tuple(columns), len(cases))
+    losses = Grid(SENSITIVITIES, table.below + 2, tuple(lost), len(cases))
     rows: list[dict[str, Cell]] = []
+    loss_rows: list[dict[str, Cell]] = []
     regret_of: dict[str, list[float]] = {name: [] for name in names}
     for i, (word, totals, anew) in enumerate(cases):
         known = [*totals.values(), *([] if anew is None else [anew])]
@@ -179,20 +189,22 @@ def _regrets(sheet: SafeSheet, result: StudyResult, row: int) -> int:
             "anew": "" if anew is None else anew,
             "best": Formula(f"=MIN({first}:{last})", min(known)),
         }
+        loss_cells: dict[str, Cell] = {"case": word}
         for name in names:
             regret = totals[name] - min(known)
             regret_of[name].append(regret)
             cells[f"cost {name}"] = totals[name]
             text = f"={table.here(i, f'cost {name}')}-{table.here(i, 'best')}"
-            cells[f"regret {name}"] = Formula(text, regret)
+            loss_cells[f"regret {name}"] = Formula(text, regret)
         rows.append(cells)
+        loss_rows.append(loss_cells)
     largest = {name: max(values) for name, values in regret_of.items()}
     summary: list[dict[str, Cell]] = []
     for i, name in enumerate(names):
-        span = table.span(f"regret {name}")
+        span = losses.span(f"regret {name}")
         values = regret_of[name]
         worst = cases[values.index(largest[name])][0]
-        place = f"=INDEX({table.span('case')},MATCH({top.here(i, 'largest')},{span},0))"
+        place = f"=INDEX({losses.span('case')},MATCH({top.here(i, 'largest')},{span},0))"
         rank = 1 + sum(one < largest[name] for one in largest.values())
         summary.append(
             {
@@ -210,4 +222,7 @@ def _regrets(sheet: SafeSheet, result: StudyResult, row: int) -> int:
     top.write(sheet, summary, marked=[0])
     sheet.text(table.top - 1, 0, "Yearly cost of every alternative in every case", "section")
     table.write(sheet, rows)
-    return table.below + 1
+    title = "Regret: yearly cost less that of the best plan of the row"
+    sheet.text(losses.top - 1, 0, title, "section")
+    losses.write(sheet, loss_rows)
+    return losses.below + 1

@@ -6,12 +6,23 @@ sheets that hold them, so that nothing is calculated twice.
 
 from __future__ import annotations
 
+import math
+
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import PlanResult, Purchase
 from xlplan.report import charts, pack_wording, wording
-from xlplan.report.grid import Cell, Formula, Grid
-from xlplan.report.looks import BLACK, BLUE, NAVY, ORANGE, SKY, VERMILION
+from xlplan.report.grid import Cell, Formula, Grid, set_widths
+from xlplan.report.looks import (
+    BLACK,
+    BLUE,
+    LIGHT_BLUE,
+    LIGHT_VERMILION,
+    NAVY,
+    ORANGE,
+    VERMILION,
+)
 from xlplan.report.money import baseline, money_words
+from xlplan.report.room import BODY_CHARS
 from xlplan.report.safe_book import SafeBook, SafeSheet
 from xlplan.report.sheets.alternatives import AlternativesCells
 from xlplan.report.sheets.cautions import CAUTION_TEXTS
@@ -19,17 +30,27 @@ from xlplan.report.sheets.checks import ChecksCells
 from xlplan.report.sheets.reliability import ReliabilityCells
 from xlplan.report.tables import CAUTIONS, PLAN, SUMMARY, SUMMARY_PLANS, SUMMARY_WORTH
 
-WIDTHS = (31, 15, 15, 15, 16, 15, 15, 14, 15, 15, 15, 15, 17, 15)
-LAST_COL = len(WIDTHS) - 1
-CHART_ROWS, ROWS_PER_BAR = 18, 2
+NAME_WIDTH, LEAST_WIDTH = 26.0, 14.0
+UNIT_CHARS = 8.5
+"""Room that a heading's ``(.../year)`` takes beside the currency."""
+
+LAST_COL = len(SUMMARY_PLANS) - 1
+ROW_POINTS, ROW_PIXELS, SECTION_POINTS = 12.75, 17, 17.0
+"""Rows just high enough for a line, since all has to stand on one page."""
+
+LEAST_CHART_PX, CHART_HEAD_PX, PX_PER_BAR = 235, 145, 23
+CHART_GAP_PX = 10
 LEFT_CHART_SHARE = 0.54
-MAX_BOUGHT = 10
-LEFT_LAST_COL = 5
-RIGHT_COL = 7
+MAX_BOUGHT = 8
+LEAST_CAPITAL = 0.5
+"""What costs less is rounding of a size, not a purchase to speak of."""
+
+LEFT_LAST_COL = 4
+RIGHT_COL = 6
 SEGMENTS = (
     ("upkeep", NAVY, "#FFFFFF"),
     ("supply", BLUE, "#FFFFFF"),
-    ("other", SKY, BLACK),
+    ("other", LIGHT_BLUE, BLACK),
     ("customers", ORANGE, BLACK),
 )
 
@@ -43,12 +64,17 @@ def write(
 ) -> None:
     """Writes the sheet."""
     sheet = book.sheet(SUMMARY)
-    sheet.widths(WIDTHS)
+    sheet.default_height(ROW_POINTS)
+    width = max(LEAST_WIDTH, len(result.currency) + UNIT_CHARS)
+    set_widths(sheet, [NAME_WIDTH] + [width] * LAST_COL, SUMMARY_PLANS)
+    chars = NAME_WIDTH + width * LAST_COL
     # The space before a percent sign must not end a line.
     headline = wording.headline(result).replace(" %", "\u00a0%")
-    sheet.paragraph(0, 0, LAST_COL, headline, 118, "title")
-    sheet.paragraph(1, 0, LAST_COL, wording.consequence(result), 222, "text", "bold")
-    sheet.paragraph(2, 0, LAST_COL, wording.basis(result), 222, "subtitle")
+    sheet.paragraph(0, 0, LAST_COL, headline, round(0.58 * chars), "title")
+    sheet.paragraph(
+        1, 0, LAST_COL, wording.consequence(result), round(1.15 * chars), "text", "bold"
+    )
+    sheet.paragraph(2, 0, LAST_COL, wording.basis(result), round(BODY_CHARS * chars), "subtitle")
     grid = Grid(SUMMARY, 4, SUMMARY_PLANS, len(result.plans))
     rows = [
         _row(plan, baseline(result), i, grid, alternatives, reliability)
@@ -63,11 +89,14 @@ def write(
         marked=marked,
     )
     row = _charts(book, sheet, result, grid, worth.below + 1)
+    matters, found = pack_wording.three_things(result), pack_wording.findings(result)
     left = _purchases(sheet, result, row)
-    right = _sentences(
-        sheet, "Three things that matter most", pack_wording.three_things(result), row
-    )
-    right = _sentences(sheet, "What is uncertain", wording.uncertainties(result), right)
+    right = _sentences(sheet, "Three things that matter most", matters, row, RIGHT_COL)
+    about = "What the comparisons found"
+    if result.pack.plan_name not in ("", result.recommended):
+        about += f" ({result.pack.plan_name})"
+    left = _sentences(sheet, about, found, left, 0)
+    right = _sentences(sheet, "What is uncertain", wording.uncertainties(result), right, RIGHT_COL)
     row = max(left, right) + 1
     sheet.text(row, 0, "Do the numbers agree?", "status")
     sheet.formula(row, 1, f"={checks.overall}", checks.words, "status")
@@ -75,7 +104,7 @@ def write(
     cautions = f"{len(CAUTION_TEXTS)} cautions apply: read the Cautions sheet before using this"
     sheet.link(row, RIGHT_COL, CAUTIONS, cautions)
     note = (
-        "The sentences state what the run found; the table follows the other sheets when figures "
+        "The sentences state what the run found; the tables follow the other sheets when figures "
         "there are changed. Costs are real and before tax."
     )
     sheet.text(row + 1, 0, note, "note")
@@ -143,14 +172,15 @@ def _charts(book: SafeBook, sheet: SafeSheet, result: StudyResult, grid: Grid, r
             )
             for key, colour, label_colour in SEGMENTS
         ],
+        "Alternative",
         book.words("Yearly cost ({money}/year)"),
         is_stacked=True,
         label_above=0.09 * largest,
     )
     total = sheet.pixels(0, LAST_COL)
     left = round(LEFT_CHART_SHARE * total)
-    n_row = max(CHART_ROWS, 4 + ROWS_PER_BAR * len(result.plans))
-    height = n_row * charts.PIXELS_PER_ROW - 10
+    height = max(LEAST_CHART_PX, CHART_HEAD_PX + PX_PER_BAR * len(result.plans))
+    n_row = math.ceil((height + CHART_GAP_PX) / ROW_PIXELS)
     alt = (
         "Stacked bars: yearly cost of each alternative, in investment and upkeep; energy, fuel "
         "and demand; repairs and other; and customers' outage cost."
@@ -163,9 +193,13 @@ def _charts(book: SafeBook, sheet: SafeSheet, result: StudyResult, grid: Grid, r
         [
             charts.Series(grid.chart_name("outage_h"), grid.chart_values("outage_h"), VERMILION),
             charts.Series(
-                grid.chart_name("outage_fair_h"), grid.chart_values("outage_fair_h"), BLUE
+                grid.chart_name("outage_fair_h"),
+                grid.chart_values("outage_fair_h"),
+                LIGHT_VERMILION,
+                has_labels=False,
             ),
         ],
+        "Alternative",
         "Outage hours per customer (h/year)",
         label_format="0.00",
     )
@@ -180,15 +214,16 @@ def _charts(book: SafeBook, sheet: SafeSheet, result: StudyResult, grid: Grid, r
 def _purchases(sheet: SafeSheet, result: StudyResult, row: int) -> int:
     """What to buy, dearest first; next free row."""
     best = result.plan(result.recommended)
-    bought = sorted((a for a in best.purchases if a.is_bought), key=lambda a: -a.capital_net)
+    shown = (a for a in best.purchases if a.is_bought and a.capital_gross >= LEAST_CAPITAL)
+    bought = sorted(shown, key=lambda a: -a.capital_net)
     sheet.text(row, 0, f"What to buy: {best.name}", "section")
+    sheet.height(row, SECTION_POINTS)
     row += 1
     if not bought:
         sheet.text(row, 0, "Nothing.", "text")
         return row + 1
     for asset in bought[:MAX_BOUGHT]:
-        sheet.paragraph(row, 0, LEFT_LAST_COL, _asset_words(asset, result.currency), 95)
-        row += 1
+        row = sheet.block(row, 0, LEFT_LAST_COL, _asset_words(asset, result.currency))
     if len(bought) > MAX_BOUGHT:
         sheet.text(row, 0, f"and {len(bought) - MAX_BOUGHT} more on the Plan sheet")
         row += 1
@@ -201,21 +236,24 @@ def _asset_words(asset: Purchase, currency: str) -> str:
     capital = f"capital {money_words(asset.capital_net, currency)} after grants"
     if asset.kind == "hardening":
         return f"•  {asset.asset}: hardening of {asset.place}; {capital}"
+    if asset.kind == "device":
+        return f"•  {asset.asset}; {capital}"
     size = f"{asset.kw:,.1f} kW"
     if asset.kind == "storage":
         size += f", {asset.kwh:,.1f} kWh"
     return f"•  {asset.asset}: {asset.kind} at {asset.place}, {size}; {capital}"
 
 
-def _sentences(sheet: SafeSheet, title: str, sentences: list[str], row: int) -> int:
-    """Sentences under a heading on the right; next free row. None: no heading either."""
+def _sentences(sheet: SafeSheet, title: str, sentences: list[str], row: int, col: int) -> int:
+    """Sentences under a heading on one side; next free row. None: no heading either."""
     if not sentences:
         return row
-    sheet.text(row, RIGHT_COL, title, "section")
+    sheet.text(row, col, title, "section")
+    sheet.height(row, SECTION_POINTS)
     row += 1
     for sentence in sentences:
-        sheet.paragraph(row, RIGHT_COL, LAST_COL, f"•  {sentence}", 125)
-        row += 1
+        last_col = LAST_COL if col == RIGHT_COL else LEFT_LAST_COL
+        row = sheet.block(row, col, last_col, f"•  {sentence}")
     return row
 
 

@@ -10,11 +10,12 @@ import math
 
 from xlplan.base.units import pct_from_frac
 from xlplan.compare.study_result import StudyResult
-from xlplan.evaluate.ac_results import AcCheck, BusVoltage
+from xlplan.evaluate.ac_results import AcCheck, AssetLoading, BusVoltage
 from xlplan.evaluate.results import PlanResult
 from xlplan.report import charts
-from xlplan.report.grid import Cell, Formula, Grid
+from xlplan.report.grid import Cell, Formula, Grid, set_widths
 from xlplan.report.looks import BLUE, SKY, VERMILION
+from xlplan.report.room import BODY_CHARS, LINE_POINTS, lines_needed
 from xlplan.report.safe_book import SafeBook, SafeSheet
 from xlplan.report.tables import (
     AC_LOADINGS,
@@ -25,8 +26,9 @@ from xlplan.report.tables import (
     VOLTAGES,
 )
 
-WIDTHS = (26, 17, 26, 12, 12, 14, 30, 12, 12, 30, 11, 11, 12, 12, 12)
+WIDTHS = (20, 14, 22, 9.5, 9.5, 11, 24, 11.5, 11, 22, 11, 11, 11, 11, 11)
 CHART_ROWS = 19
+NOTE_CHARS = round(1.15 * sum(WIDTHS))
 MAX_BUSES_CHARTED = 200
 NORMAL, EVENTS = "normal service", "outage events"
 PASS, LOOK, UNSOLVED = "PASS", "LOOK", "LOOK: not solved"
@@ -60,7 +62,7 @@ def write(book: SafeBook, result: StudyResult) -> None:
         "Lowest and highest voltage of every bus, linear model against AC power flow; losses left "
         "out by the linear model. A check of the plans, no replacement for a three-phase study.",
     )
-    sheet.widths(WIDTHS)
+    set_widths(sheet, WIDTHS, AC_PLANS, AC_LOSSES, AC_VOLTAGES)
     last_col = len(WIDTHS) - 1
     checked = [(plan, plan.ac) for plan in result.plans if plan.ac is not None]
     if not checked:
@@ -69,21 +71,26 @@ def write(book: SafeBook, result: StudyResult) -> None:
         return
     row = 3
     for meaning in MEANINGS:
-        sheet.paragraph(row, 0, last_col, meaning, 235)
+        sheet.paragraph(row, 0, last_col, meaning, NOTE_CHARS)
         row += 1
     row = _verdicts(sheet, result, checked, row + 1)
     best = next((one for one in checked if one[0].name == result.recommended), checked[0])
     chart_row = row + 1
     n_bus = sum(not bus.is_event for bus in best[1].buses)
     has_chart = 1 < n_bus <= MAX_BUSES_CHARTED
-    row = _losses(sheet, checked, chart_row + (CHART_ROWS if has_chart else 0))
-    row = _outside(sheet, checked, row + 1)
-    voltages, row = _voltages(sheet, best, checked, row + 1)
-    row = _loadings(sheet, checked, row + 1)
+    losses_row = chart_row + (CHART_ROWS if has_chart else 0)
+    row = _losses(sheet, checked, losses_row)
+    outside_row = row + 1
+    loadings_row = _outside(sheet, checked, outside_row) + 1
+    loadings, row = _loadings(sheet, checked, loadings_row)
+    voltages_row = row + 1
+    # The longest table comes last, so that its heading can stand on every page from there on.
+    voltages, row = _voltages(sheet, best, checked, voltages_row)
     if has_chart:
         _chart(book, sheet, best, voltages, n_bus, chart_row)
     sheet.freeze(2, 1)
-    sheet.print_setup(row, last_col)
+    breaks = [losses_row, outside_row, *loadings, voltages_row]
+    sheet.print_setup(row, last_col, heading_row=voltages.top, breaks=breaks)
 
 
 def _verdicts(
@@ -219,7 +226,7 @@ def _losses(sheet: SafeSheet, checked: list[tuple[PlanResult, AcCheck]], row: in
         "here. Cost beyond the allowance: what losses cost more at the purchase price than the "
         "allowance has put into the plan; below 0 the allowance was ample."
     )
-    sheet.text(grid.below, 0, note, "note")
+    sheet.paragraph(grid.below, 0, len(WIDTHS) - 1, note, NOTE_CHARS, "note")
     return grid.below + 1
 
 
@@ -271,9 +278,9 @@ def _outside(sheet: SafeSheet, checked: list[tuple[PlanResult, AcCheck]], row: i
         "Range A is meant for normal operation; outage events are listed for information. The drop "
         "of customers' transformers and service lines comes on top of what is shown. Customers "
         f"served above 600 V: {narrow.low_pu:g} to {narrow.high_pu:g} p.u.; buses outside of that "
-        "are marked in the next table."
+        "are marked in the last table."
     )
-    sheet.text(grid.below, 0, note, "note")
+    sheet.paragraph(grid.below, 0, len(WIDTHS) - 1, note, NOTE_CHARS, "note")
     return grid.below + 1
 
 
@@ -338,41 +345,58 @@ def _range_words(bus: BusVoltage) -> str:
     return "inside; outside above 600 V" if bus.is_outside_range_a_above_600_v else "inside"
 
 
-def _loadings(sheet: SafeSheet, checked: list[tuple[PlanResult, AcCheck]], row: int) -> int:
-    """Highest loading of everything with a rating; next free row."""
-    sheet.text(row, 0, "Highest loadings", "section")
-    found = [(plan, one) for plan, check in checked for one in check.loadings]
-    grid = Grid(VOLTAGES, row + 1, AC_LOADINGS, len(found))
-    grid.write(
-        sheet,
-        [
-            {
-                "name": plan.name,
-                "operation": operation_words(one.is_event),
-                "asset": one.asset,
-                "rating": one.rating,
-                "unit": one.unit,
-                "kind": one.kind,
-                "when": one.when,
-                "linear": one.linear_frac,
-                "ac": one.ac_frac,
-                "verdict": LOOK
-                if one.breaks_limits
-                else (PASS if math.isfinite(one.ac_frac) else UNSOLVED),
-            }
-            for plan, one in found
-        ],
-    )
-    col = grid.col("verdict")
-    sheet.status_fill(grid.row(0), grid.row(max(1, len(found)) - 1), col, col)
+def _loadings(
+    sheet: SafeSheet, checked: list[tuple[PlanResult, AcCheck]], row: int
+) -> tuple[list[int], int]:
+    """Highest loading of everything with a rating; tops of the tables and the next free row.
+
+    A table for each alternative: each begins a page, so that its heading stands there.
+    """
+    tops = []
+    for plan, check in checked:
+        tops.append(row)
+        sheet.text(row, 0, f"Highest loadings: {plan.name}", "section")
+        grid = Grid(VOLTAGES, row + 1, AC_LOADINGS, len(check.loadings))
+        grid.write(sheet, [_loading_row(plan, one) for one in check.loadings])
+        for i, one in enumerate(check.loadings):
+            _spread(sheet, grid.row(i), grid.col("when"), one.when, one.kind)
+        col = grid.col("verdict")
+        sheet.status_fill(grid.row(0), grid.row(max(1, grid.n_row) - 1), col, col)
+        row = grid.below + 1
     note = (
         "Lines: AC current times the nominal voltage, since heating follows the current. Neighbour "
         "supplies: share of the spare power of the same period. Forming units: what holding the "
         "voltage asks of them beyond their planned output is included; it is not taken from their "
         "stored energy or fuel."
     )
-    sheet.text(grid.below, 0, note, "note")
-    return grid.below
+    sheet.paragraph(row - 1, 0, len(WIDTHS) - 1, note, NOTE_CHARS, "note")
+    return tops, row
+
+
+def _spread(sheet: SafeSheet, row: int, col: int, when: str, kind: str) -> None:
+    """Writes when it was over all columns that are left, beside a kind that may take two lines."""
+    last_col = len(WIDTHS) - 1
+    room = BODY_CHARS * sum(sheet.width(one) for one in range(col, last_col + 1))
+    kind_room = BODY_CHARS * sheet.width([one.key for one in AC_LOADINGS].index("kind"))
+    sheet.paragraph(row, col, last_col, when, int(room))
+    lines = max(lines_needed(when, room), lines_needed(kind, kind_room))
+    sheet.height(row, LINE_POINTS * lines + 3)
+
+
+def _loading_row(plan: PlanResult, one: AssetLoading) -> dict[str, Cell]:
+    verdict = LOOK if one.breaks_limits else PASS if math.isfinite(one.ac_frac) else UNSOLVED
+    return {
+        "name": plan.name,
+        "operation": operation_words(one.is_event),
+        "asset": one.asset,
+        "rating": one.rating,
+        "unit": one.unit,
+        "kind": one.kind,
+        "when": one.when,
+        "linear": one.linear_frac,
+        "ac": one.ac_frac,
+        "verdict": verdict,
+    }
 
 
 def _chart(
