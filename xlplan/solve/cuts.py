@@ -638,7 +638,7 @@ class DualBound:
     @property
     def table(self) -> MemberTable | None:
         """What differs between the members; None where ``cuts_of`` cannot be used."""
-        if len(self.family.exit_gate) > MANY_EXITS:
+        if len(self.family.exit_gate) > MANY_EXITS or self.family.exit_columns is not None:
             return None
         if self._table is None:
             self._table = MemberTable(self._cache, self.i_family, self.family)
@@ -751,6 +751,11 @@ class _Sum:
             full[self.rows] = self.pi
             step = full[bound.patch_row] * (member.patch_value - bound.patch_base)
             np.subtract.at(self.d, bound.patch_column, step)
+        if bound.family.exit_columns is not None:
+            # What rows make of the value of an exit is part of its weight.
+            self.weight = self.weight + self.d[bound.family.exit_columns]
+            self.d[bound.family.exit_columns] = np.minimum(self.weight, 0.0)
+            self.weight = np.maximum(self.weight, 0.0)
         self.cut_exit, self.cut_pi = exits.exit, exits.pi
         self.cut_intercept = exits.intercept
         self.cut_slope, self.cut_capacity = exits.state_slope, exits.capacity_slope

@@ -158,12 +158,15 @@ class NodeModel:
         self.n_state = self.table.n_state
         self.counts: Counter[str] = Counter()
         self._matrix = RowMatrix(program)
-        self._folding = Folding(program, self._matrix)
+        self._theta_columns = family.exit_columns
+        self._folding = Folding(program, self._matrix, self._theta_columns)
         kept = self._folding.kept
         self.n_kept = len(kept)
         # Column of the model that holds each program column; exits stand behind the kept ones.
         self._column_place = np.full(self.n_col, -1, dtype=np.int64)
         self._column_place[kept] = np.arange(self.n_kept)
+        if self._theta_columns is not None:
+            self._column_place[self._theta_columns] = self.n_kept + np.arange(self.n_exit)
         self._lower = np.concatenate([program.col_lower[kept], self.table.theta_lower])
         self._upper = np.concatenate([program.col_upper[kept], np.full(self.n_exit, np.inf)])
         self._cost = np.zeros(self.n_kept + self.n_exit)
@@ -283,6 +286,8 @@ class NodeModel:
         """``y`` of the program, (n_col,), from the model's columns."""
         y = np.empty(self.n_col)
         y[self._folding.kept] = primal[: self.n_kept]
+        if self._theta_columns is not None:
+            y[self._theta_columns] = primal[self.n_kept :]
         if len(self._folding):
             self._folding.complete(y, self._fold_side)
         return y
@@ -303,7 +308,10 @@ class NodeModel:
         self._lower, self._upper = lower, upper
         is_new_member = i_member != self._member_index
         if is_new_member:
-            cost = np.concatenate([member.cost[kept], member.exit_weight])
+            weight = member.exit_weight
+            if self._theta_columns is not None:
+                weight = weight + member.cost[self._theta_columns]
+            cost = np.concatenate([member.cost[kept], weight])
             moved = np.flatnonzero(cost != self._cost)
             self._model.set_costs(moved, cost[moved])
             self._cost = cost
