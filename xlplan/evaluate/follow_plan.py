@@ -143,6 +143,16 @@ class FollowResult:
         )
         return NORMAL_95 * float(np.sqrt(np.square(errors).sum()))
 
+    def aimed(self) -> tuple[float, float]:
+        """What plans are chosen by, per year, and half of its 95 % interval."""
+        tail = self.tail_cost
+        if tail is None:
+            return self.running_cost, self.half_width
+        outcomes = self.windows[0].outcomes
+        assert outcomes is not None
+        weight = outcomes.aim.weight_frac
+        return (1.0 - weight) * self.running_cost + weight * tail, self.aim_half_width
+
     def difference_half_width(self, other: FollowResult) -> float:
         """Half of the 95 % interval of the difference of two costs, on the same histories."""
         variance = 0.0

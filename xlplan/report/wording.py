@@ -118,7 +118,9 @@ def uncertainties(result: StudyResult) -> list[str]:
             f"{money_words(high, currency)} (95 % interval, {best.n_sample:,} sampled "
             "continuations: a statistical figure)."
         )
-    if best.lower_bound is not None and best.gap_frac is not None:
+    if best.aim is not None:
+        said += aim_words(best, currency)
+    elif best.lower_bound is not None and best.gap_frac is not None:
         said.append(
             f"No plan on offer costs less than {money_words(best.lower_bound, currency)} a year: "
             f"this one is within {pct_from_frac(best.gap_frac):.2f} % of that."
@@ -139,6 +141,28 @@ def uncertainties(result: StudyResult) -> list[str]:
     said += _ac_words(result, best)
     said += _warnings(result, best)
     return said
+
+
+def aim_words(plan: PlanResult, currency: str) -> list[str]:
+    """What a plan minimises where bad outcomes have a weight, and how close it comes."""
+    aim = plan.aim
+    if aim is None:
+        return []
+    weight, tail = pct_from_frac(aim.weight_frac), pct_from_frac(aim.tail_frac)
+    said = (
+        f"Bad outcomes have a weight of {weight:g} %: the plan is chosen by its weighted cost, "
+        f"{money_words(aim.total, currency)} a year = {100.0 - weight:g} % of the expected cost "
+        f"{money_words(aim.expected, currency)} + {weight:g} % of "
+        f"{money_words(aim.tail, currency)}, which a year would cost if every occurrence of every "
+        f"window cost the mean of its worst {tail:g} % (CVaR)"
+    )
+    if plan.lower_bound is not None and plan.gap_frac is not None:
+        said += (
+            f"; no plan on offer has a weighted cost below "
+            f"{money_words(plan.lower_bound, currency)}, this one is within "
+            f"{pct_from_frac(plan.gap_frac):.2f} % of that"
+        )
+    return [f"{said}. All other costs and differences are expected ones."]
 
 
 def _ac_words(result: StudyResult, best: PlanResult) -> list[str]:
@@ -193,12 +217,12 @@ def _ac_verdict(best: PlanResult) -> str:
 
 def _rivals(result: StudyResult, best: PlanResult) -> list[str]:
     """Other alternatives that are as cheap, within the interval or the gap."""
-    gap = abs(best.costs.total) * (best.gap_frac or 0.0)
-    reach = max(best.cost_interval[1], best.costs.total + gap)
+    gap = abs(best.aimed_total) * (best.gap_frac or 0.0)
+    reach = max(best.aimed_interval[1], best.aimed_total + gap)
     near = [
         plan.name
         for plan in result.plans
-        if plan.name != best.name and plan.cost_interval[0] <= reach
+        if plan.name != best.name and plan.aimed_interval[0] <= reach
     ]
     if not near:
         return []

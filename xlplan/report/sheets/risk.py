@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from xlplan.base.units import pct_from_frac
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import EventSpread, PlanResult, WorstEvent
 from xlplan.report import charts
@@ -23,7 +24,7 @@ def write(book: SafeBook, result: StudyResult) -> None:
     sheet.head(
         "How bad can it get",
         f"Existing feeder and plan ({best.name}): simulated years, single outage events, and the "
-        "worst scenarios. The plan minimises the expected cost, not the risk.",
+        f"worst scenarios. {_aim(best)}",
     )
     sheet.widths(WIDTHS)
     rows = _figures(base, best)
@@ -59,6 +60,17 @@ def write(book: SafeBook, result: StudyResult) -> None:
         sheet.text(row + i, 0, note, "note")
     sheet.freeze(2, 0)
     sheet.print_setup(row + 3, len(WIDTHS) - 1)
+
+
+def _aim(best: PlanResult) -> str:
+    """What the plan was chosen by."""
+    if best.aim is None:
+        return "The plan minimises the expected cost, not the risk."
+    weight, tail = pct_from_frac(best.aim.weight_frac), pct_from_frac(best.aim.tail_frac)
+    return (
+        f"The plan minimises {100.0 - weight:g} % of the expected cost and {weight:g} % of the "
+        f"mean of the worst {tail:g} % of outcomes of each window (not of the years below)."
+    )
 
 
 def _step_columns(title: str) -> tuple[Column, ...]:
