@@ -56,8 +56,9 @@ def _finding(result: StudyResult, best: PlanResult) -> str:
     currency = result.currency
     name = plan_words(best)
     if best.name == base.name or not buys_anything(best):
+        what = "yearly cost" if best.aim is None else "weighted cost"
         return (
-            f"{name} buys nothing: no purchase on offer was found to lower the yearly cost, "
+            f"{name} buys nothing: no purchase on offer was found to lower the {what}, "
             "customers' outage costs included."
         )
     low, high = best.difference_interval
@@ -65,14 +66,29 @@ def _finding(result: StudyResult, best: PlanResult) -> str:
     if includes_zero((low, high)):
         return (
             f"{name} and the existing feeder cannot be told apart on yearly cost: the 95 % "
-            f"interval of the difference, {span}, includes 0."
+            f"interval of the difference, {span}, includes 0.{_aimed_change(best, base, currency)}"
         )
     amount = money_words(abs(best.difference), currency)
     share = ""
     if base.costs.total > 0.0:
         share = f" ({pct_from_frac(abs(best.difference) / base.costs.total):.1f} %)"
     verb = "lowers" if high < 0.0 else "raises"
-    return f"{name} {verb} the yearly cost by {amount}{share}, customers' outage costs included."
+    return (
+        f"{name} {verb} the yearly cost by {amount}{share}, customers' outage costs included."
+        f"{_aimed_change(best, base, currency)}"
+    )
+
+
+def _aimed_change(best: PlanResult, base: PlanResult, currency: str) -> str:
+    """What the plan does to the weighted cost, where plans are chosen by it."""
+    if best.aim is None:
+        return ""
+    change = best.aimed_total - base.aimed_total
+    verb = "lowers" if change < 0.0 else "raises"
+    return (
+        f" It {verb} the weighted cost, which counts bad outcomes more and by which it was chosen, "
+        f"by {money_words(abs(change), currency)}."
+    )
 
 
 def consequence(result: StudyResult) -> str:
