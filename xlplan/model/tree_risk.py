@@ -66,6 +66,7 @@ class Outcomes:
         self._count(chance, 0)
 
     def _count(self, chance: float, after: pulp.LpVariable | int) -> None:
+        assert self.paid is not None
         name = f"{self.name}_{self.n_outcome}"
         excess = self.problem.add_variable(f"excess_{name}", 0)
         self.problem += excess >= self.paid + after - self.worst, f"exceeding_{name}"

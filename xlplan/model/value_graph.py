@@ -105,7 +105,8 @@ class Outcomes:
 
     def slope(self, theta: FloatArray) -> FloatArray:
         """Factor by which each exit counts beyond its chance, (n_exit,)."""
-        return self.aim.slope(self.chance, self._with(theta))[:-1]
+        slope: FloatArray = self.aim.slope(self.chance, self._with(theta))[:-1]
+        return slope
 
     def _with(self, theta: FloatArray) -> FloatArray:
         return self.cost + np.concatenate([theta, [0.0]])
