@@ -150,6 +150,8 @@ def build_study_graph(
                 capacity_offset=first_stage.capacity_offset,
                 state_matrix=start_state(study, layout, window.series),
                 state_offset=np.zeros(layout.n_state),
+                # Its cuts serve the plans after every repair.
+                beside=None if aim is None else (plan, 0),
             )
         )
         places.append(WindowFamilies(plan, tuple(events), first_plan))

@@ -161,7 +161,11 @@ class Family:
 
 @dataclass(frozen=True)
 class Root:
-    """One node whose value enters the first stage."""
+    """One node whose value enters the first stage.
+
+    beside : a node (family, member) that is solved where the root is, for the sake of its cuts,
+        where those of the root serve no other node; or None
+    """
 
     name: str
     family: int
@@ -171,6 +175,7 @@ class Root:
     capacity_offset: FloatArray
     state_matrix: FloatArray
     state_offset: FloatArray
+    beside: tuple[int, int] | None = None
 
 
 @dataclass(frozen=True)

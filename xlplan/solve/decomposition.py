@@ -385,6 +385,7 @@ class _Run:
         for i_pass in range(self.options.n_pass):
             begin = self.clock.seconds()
             points = self._agree(is_first=i_pass == 0)
+            self._solve_beside(points)
             is_partial = self._is_partial(points)
             found = self._look(points, is_partial)
             self.n_cut += self.engine.add_cuts_of(found)
@@ -492,6 +493,18 @@ class _Run:
                 outcomes = graph.families[request.family].outcomes(solution.y)
             points.append(RootPoint(i, request.capacity, request.state, solution, exits, outcomes))
         return points
+
+    def _solve_beside(self, points: list[RootPoint]) -> None:
+        """Solves the nodes beside the roots, for their cuts."""
+        requests = []
+        for point in points:
+            beside = self.graph.roots[point.i_root].beside
+            if beside is not None:
+                group = self.engine.next_group()
+                requests.append(NodeRequest(*beside, point.state, point.capacity, group=group))
+        if requests:
+            self.n_cut += self.engine.add_cuts(self.engine.solve_batch(requests, self.clock))
+            self.n_solve += len(requests)
 
     def _root_tolerance(self, first: FirstStagePlan) -> float:
         """By how much the roots together may be too low, weighted."""
