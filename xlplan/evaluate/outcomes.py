@@ -3,7 +3,8 @@
 An outcome is: nothing fails, or the first potential failure. Its cost is what the first plan has
 cost up to there, the event, and what is expected to follow: the figures of the first plan and its
 events once more (``later_costs``), and the difference that the state after the event makes. Where
-that difference is sampled it carries noise; the mean of the worst outcomes is then biased upward
+that difference is sampled it carries noise (``Noise``: without bias as far as failures of one
+scenario that are near in time behave alike); the mean of the worst outcomes is then biased upward
 (Jensen: it is convex in the costs), so as an upper end it is on the safe side. The interval is that
 of the aim with the set of worst outcomes as found.
 """

@@ -109,7 +109,8 @@ class Outcomes:
         return slope
 
     def _with(self, theta: FloatArray) -> FloatArray:
-        return self.cost + np.concatenate([theta, [0.0]])
+        cost: FloatArray = self.cost + np.concatenate([theta, [0.0]])
+        return cost
 
 
 class Family:
