@@ -776,3 +776,83 @@ def test_plan_only_leaves_the_pack_out(answer):
     book = openpyxl.load_workbook(path, data_only=True)
     for name in ("Line hardening", "Repair time", "Budget", "Sensitivities"):
         assert "--plan-only" in book[name]["A4"].value
+
+
+# -- a weight on bad outcomes ------------------------------------------------------------------
+
+
+@pytest.fixture(scope="module")
+def weighted(tmp_path_factory: pytest.TempPathFactory) -> tuple[Path, dict[str, Any]]:
+    """The two villages with 40 % on the worst 5 % of outcomes, the whole run."""
+    study = write_study(
+        tmp_path_factory.mktemp("weighted") / "study.xlsx", risk_weight_pct=40, risk_tail_pct=5
+    )
+    twin = study.with_suffix(".json")
+    words = ["solve", str(study), "--json", str(twin), "--quiet", "--method", "decomposed"]
+    assert main(words) == 0
+    return study.with_name("study-results.xlsx"), json.loads(twin.read_text(encoding="utf-8"))
+
+
+def test_weighted_cost_has_its_parts_bound_and_gap(weighted, answer):
+    _, twin = weighted
+    for plan in twin["alternatives"]:
+        aim = plan["objective"]
+        assert set(plan) == PLAN_KEYS | {"objective"}
+        assert (aim["weight_pct"], aim["tail_pct"]) == (close(40.0), close(5.0))
+        assert aim["expected_cost"] == close(plan["annual_cost"]["total"])
+        parts = 0.6 * aim["expected_cost"] + 0.4 * aim["cvar"]
+        assert aim["total"] == close(parts)
+        assert aim["cvar"] >= aim["expected_cost"]
+        low, high = aim["interval"]
+        assert low <= aim["total"] <= high
+        # One window, 1,095 times a year: what is not run is the same in mean and worst.
+        n = 1095.0
+        window = plan["windows"][0]
+        fixed = plan["annual_cost"]["total"] - n * window["expected_cost"]
+        assert aim["cvar"] == close(fixed + n * window["cvar"])
+        if plan["lower_bound"] is not None:
+            assert plan["lower_bound"] <= high
+            gap = 100.0 * max(0.0, high - plan["lower_bound"]) / abs(aim["total"])
+            assert plan["gap_pct"] == pytest.approx(gap, abs=1e-6)
+    # Against the plan chosen by expected cost: no lower mean, no higher weighted cost.
+    best, plain = plan_of(twin, LEAST_COST), plan_of(answer[1], LEAST_COST)
+    assert best["objective"]["total"] <= plan_of(twin, EXISTING)["objective"]["total"]
+    assert best["annual_cost"]["total"] >= plain["lower_bound"] - 0.01
+
+
+def test_weight_is_said_and_what_it_leaves_out(weighted):
+    path, twin = weighted
+    messages = [f for f in twin["findings"] if f["key"] == "risk_weight_pct"]
+    assert [f["level"] for f in messages] == ["note"]
+    assert "left out" in messages[0]["message"]
+    assert not any("no effect" in f["message"] for f in twin["findings"])
+    assert twin["hardening"] == twin["budget"] == twin["sensitivities"] == []
+    book = openpyxl.load_workbook(path, data_only=True)
+    best = plan_of(twin, LEAST_COST)
+    rows = [row for row in book["Convergence"].iter_rows(values_only=True) if row[0] == LEAST_COST]
+    numbers = [cell for cell in rows[-1] if isinstance(cell, int | float)]
+    aim = best["objective"]
+    for figure in (best["lower_bound"], aim["expected_cost"], aim["cvar"], aim["total"]):
+        assert any(number == close(figure) for number in numbers)
+    for name in ("Summary", "Convergence"):
+        texts = [str(c) for row in book[name].iter_rows(values_only=True) for c in row if c]
+        assert any("Bad outcomes have a weight of 40 %" in text for text in texts), name
+    risk = [str(c) for row in book["Risk"].iter_rows(values_only=True) for c in row if c]
+    assert any("40 % of the mean of the worst 5 %" in text for text in risk)
+    checks = list(book["Checks"].iter_rows(values_only=True))
+    assert "FAIL" not in [row[8] for row in checks]
+    assert any(str(row[1]).startswith("Outcomes of ") and row[8] == "PASS" for row in checks)
+
+
+def test_both_methods_give_the_same_weighted_cost(tmp_path):
+    found = {}
+    for method in ("tree", "decomposed"):
+        folder = tmp_path / method
+        folder.mkdir()
+        study = write_study(folder / "study.xlsx", hours=4, risk_weight_pct=100, risk_tail_pct=10)
+        status, twin = solve(study, "--method", method, "--gap", "0.05")
+        assert status == 0
+        found[method] = plan_of(twin, LEAST_COST)["objective"]["total"]
+        bound = plan_of(twin, LEAST_COST)["lower_bound"]
+        assert bound <= found[method] * (1.0 + 1e-6)
+    assert found["decomposed"] == pytest.approx(found["tree"], rel=5e-4)

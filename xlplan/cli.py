@@ -437,8 +437,13 @@ def print_summary(result: StudyResult) -> None:
         print("                    every history counted, no sampling")
     else:
         print(f"                    95 % interval {low:,.0f} to {high:,.0f}")
+    if best.aim is not None:
+        weight = pct_from_frac(best.aim.weight_frac)
+        print(f"  weighted cost     {best.aim.total:,.0f} {money}")
+        print(f"                    {weight:g} % of it for bad outcomes: {best.aim.tail:,.0f}")
     if best.lower_bound is not None and best.gap_frac is not None:
-        print(f"  lower bound       {best.lower_bound:,.0f}")
+        of = "" if best.aim is None else " (of the weighted cost)"
+        print(f"  lower bound       {best.lower_bound:,.0f}{of}")
         print(
             f"  gap               {pct_from_frac(best.gap_frac):.2f} % "
             f"(target {pct_from_frac(result.gap_target_frac):g} %): {result.status}"

@@ -97,8 +97,6 @@ def check_raw(raw: RawStudy) -> CheckedInput:
     findings += check_no_load_voltage(study, feeder, scenarios)
     findings += check_rounded_times(study)
     findings += check_islands(study, feeder, scenarios)
-    if study.settings.risk_weight_frac > 0.0:
-        findings.append(_unused_risk_weight(study))
     return CheckedInput(raw, _ordered(findings), study, feeder, windows)
 
 
@@ -249,9 +247,14 @@ def solve_study(
             existing, _, best = plans
             own = solve_own(solver)
             plans += tuple(against(plan, existing) for plan in own.plans)
-            maker = PackMaker(solver, existing, best, own.plans)
-            pack = maker.make()
-            findings += [*own.findings, *maker.findings]
+            findings += own.findings
+            if checked.study.settings.risk_weight_frac > 0.0:
+                pack = Pack(left_out=LEFT_OUT)
+                findings.append(_left_out(checked.study))
+            else:
+                maker = PackMaker(solver, existing, best, own.plans)
+                pack = maker.make()
+                findings += maker.findings
     if savepoint is not None and plans[2].result.status == "gap reached":
         savepoint.remove()
     return assemble(
@@ -299,18 +302,26 @@ def useful_workers(windows: tuple[WindowModel, ...], cores: int) -> int:
     return 1 if work < FEW_SUBPROBLEMS else cores
 
 
-def _unused_risk_weight(study: Study) -> Finding:
-    """Says that plans minimise the expected cost, whatever the weight."""
+LEFT_OUT = (
+    "With a weight on bad outcomes this is left out: the value of hardening, budgets, repair times "
+    "and sensitivities are worked out for the expected cost alone."
+)
+
+
+def _left_out(study: Study) -> Finding:
+    """Says what a weight on bad outcomes leaves out."""
     origin = study.settings.origin_of.get("risk_weight_pct")
     return Finding(
-        level=Level.WARNING,
-        code=Code.NOT_USED,
+        level=Level.NOTE,
+        code=Code.NOT_SOLVED,
         sheet="Settings" if origin is None else origin.sheet,
         cell="" if origin is None else origin.cell("risk_weight_pct"),
         key="risk_weight_pct",
         value=f"{pct_from_frac(study.settings.risk_weight_frac):g}",
-        message="This version minimises the expected cost; the weight on risk has no effect.",
-        hint="The results show the risk of each plan.",
+        message="with a weight on bad outcomes the sheets on line hardening, repair time, budget "
+        "and sensitivities are left out, and so is the bound from above where it needs a run of "
+        "its own: they are worked out for the expected cost alone.",
+        hint="Set the weight to 0 to have them.",
     )
 
 

@@ -109,8 +109,10 @@ def cheapest(
     for plan in plans:
         within = capital_budget is None or plan.result.capital_cost <= capital_budget + CENT
         half = plan.follow.difference_half_width(best.follow)
-        is_clear = plan.result.costs.total < best.result.costs.total - half - CENT
-        if within and is_clear and plan.result.costs.total < found.result.costs.total:
+        if plan.result.aim is not None and best.result.aim is not None:
+            half = plan.result.aim.half_width + best.result.aim.half_width
+        is_clear = plan.result.aimed_total < best.result.aimed_total - half - CENT
+        if within and is_clear and plan.result.aimed_total < found.result.aimed_total:
             found = plan
     return found
 

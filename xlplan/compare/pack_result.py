@@ -128,6 +128,8 @@ class Pack:
     """The comparison pack; empty parts were not asked for, or have a finding that says why."""
 
     is_asked: bool = False
+    left_out: str = ""
+    """Why all of it was left out, in a sentence; empty where it was not."""
     plan_name: str = ""
     hardening: tuple[HardeningValue, ...] = ()
     budget: tuple[BudgetPoint, ...] = ()

@@ -361,12 +361,11 @@ class PlanSolver:
             follow = self._follower(self.graph, self.engine).follow(
                 found.capacities[0], samples, self.options.seed
             )
-            cost = found.first_stage_cost + follow.running_cost + self.device_yearly
-            gap = _gap(cost + follow.half_width, bound, cost)
+            running, half = follow.aimed()
+            cost = found.first_stage_cost + running + self.device_yearly
+            gap = _gap(cost + half, bound, cost)
             seconds = spent + time.monotonic() - started
-            rows.append(
-                ConvergenceRow(seconds, bound, cost, cost + follow.half_width, gap, "plan followed")
-            )
+            rows.append(ConvergenceRow(seconds, bound, cost, cost + half, gap, "plan followed"))
             left = deadline - time.monotonic()
             is_over = found.termination is not StopReason.GAP_REACHED or left <= 0.0
             if gap <= target or is_over or before is not None or wish.is_brief:

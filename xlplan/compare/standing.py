@@ -2,7 +2,8 @@
 
 ``Existing feeder`` buys nothing; ``Plan ignoring outages`` buys for normal service as if nothing
 could fail, and in an event plans as if nothing more could; ``Least-cost plan`` minimises the
-expected yearly cost. All are followed through the same failures.
+expected yearly cost, or mean and worst outcomes where these have a weight. All are followed
+through the same failures.
 """
 
 from __future__ import annotations
@@ -39,6 +40,8 @@ DESCRIPTIONS = {
     ),
     LEAST_COST: "The purchases with the lowest expected yearly cost, outages included.",
 }
+AIMED = "The purchases with the lowest weighted cost: expected yearly cost and worst outcomes."
+"""What the least-cost plan is where bad outcomes have a weight."""
 
 CENT = 0.01
 """Plans whose costs differ by less are equal."""
@@ -53,7 +56,7 @@ class StandingAlternatives(PlanSolver):
         existing = self._optimise(EXISTING)
         ignoring = self._optimise(IGNORING_OUTAGES)
         for other in (existing, ignoring):
-            is_cheaper = other.result.costs.total < best.result.costs.total - CENT
+            is_cheaper = other.result.aimed_total < best.result.aimed_total - CENT
             if is_cheaper and self.method == "decomposed" and not self.should_stop():
                 best = self._try_purchases(best, other)
         plans = (existing, ignoring, best)
@@ -67,17 +70,18 @@ class StandingAlternatives(PlanSolver):
         """
         wish = replace(self._wish(LEAST_COST), fixed=other.bought)
         tried = self._by_decomposition(wish, best)
-        return tried if tried.result.costs.total < best.result.costs.total else best
+        return tried if tried.result.aimed_total < best.result.aimed_total else best
 
     def _optimise(self, name: str) -> SolvedPlan:
         """One of the three."""
         return self.solve_wish(self._wish(name))
 
     def _wish(self, name: str) -> Wish:
+        is_aimed = name == LEAST_COST and self.study.settings.risk_weight_frac > 0.0
         return Wish(
             name=name,
             kind=KINDS[name],
-            description=DESCRIPTIONS[name],
+            description=AIMED if is_aimed else DESCRIPTIONS[name],
             capital_budget=self.study.settings.capital_budget,
             fixed=self.nothing_bought() if name == EXISTING else None,
             ignores_outages=name == IGNORING_OUTAGES,

@@ -27,8 +27,12 @@ from xlplan.base.errors import NoPlanError
 from xlplan.base.rng import stream
 from xlplan.evaluate.meters import PlanReading, read_solution
 from xlplan.evaluate.metrics import COST_PARTS, Slots
+from xlplan.evaluate.outcomes import Noise, WindowOutcomes, followed_outcomes, return_period
+from xlplan.model.aimed_plan import AimedPlanFamily
+from xlplan.model.risk_aim import aim_of
 from xlplan.model.study_graph import StudyGraph
 from xlplan.model.tree_size import count_window
+from xlplan.model.value_graph import Family
 from xlplan.outages.clock import Clock
 from xlplan.outages.window_model import WindowModel
 from xlplan.solve.node_solver import NodeRequest, NodeSolution
@@ -87,6 +91,8 @@ class WindowFollow:
     clock_plan: FloatArray
     solver_plan_cost: float | None
     solver_event_cost: float | None
+    outcomes: WindowOutcomes | None = None
+    """Where bad outcomes have a weight: what may happen in an occurrence and what it costs."""
 
     @property
     def metrics(self) -> FloatArray:
@@ -120,6 +126,32 @@ class FollowResult:
         """Half of the 95 % interval of ``running_cost``."""
         errors = self.occurrences * np.array([w.standard_error for w in self.windows])
         return NORMAL_95 * float(np.sqrt(np.square(errors).sum()))
+
+    @property
+    def tail_cost(self) -> float | None:
+        """Cost of a year whose every occurrence costs the mean of its worst outcomes, or None."""
+        tails = [window.outcomes.tail_cost for window in self.windows if window.outcomes]
+        if not tails:
+            return None
+        return float(self.occurrences @ np.array(tails))
+
+    @property
+    def aim_half_width(self) -> float:
+        """Half of the 95 % interval of the aim (mean and worst outcomes), per year."""
+        errors = self.occurrences * np.array(
+            [w.outcomes.standard_error if w.outcomes else w.standard_error for w in self.windows]
+        )
+        return NORMAL_95 * float(np.sqrt(np.square(errors).sum()))
+
+    def aimed(self) -> tuple[float, float]:
+        """What plans are chosen by, per year, and half of its 95 % interval."""
+        tail = self.tail_cost
+        if tail is None:
+            return self.running_cost, self.half_width
+        outcomes = self.windows[0].outcomes
+        assert outcomes is not None
+        weight = outcomes.aim.weight_frac
+        return (1.0 - weight) * self.running_cost + weight * tail, self.aim_half_width
 
     def difference_half_width(self, other: FollowResult) -> float:
         """Half of the 95 % interval of the difference of two costs, on the same histories."""
@@ -205,13 +237,22 @@ class Follower:
         self, i_window: int, member: int, state: FloatArray, capacity: FloatArray
     ) -> NodeRequest:
         """Asks for the plan of a window from a period on."""
-        family = self.graph.plan_family(i_window)
+        places = self.graph.windows[i_window]
+        is_first = member == 0
+        family = (self.graph.first_plan_family if is_first else self.graph.plan_family)(i_window)
         second = None
         if self.breaks_ties_by_energy:
             second = np.zeros(family.program.n_col)
             energy = family.columns["energy_kwh"][member:]
             np.add.at(second, energy[energy >= 0], -1.0)
-        return NodeRequest(self.graph.windows[i_window].plan, member, state, capacity, second)
+        return NodeRequest(
+            places.first_plan if is_first else places.plan,
+            member,
+            state,
+            capacity,
+            second,
+            wants_primal=isinstance(family, AimedPlanFamily),
+        )
 
     def event_request(
         self, i_window: int, w: int, k: int, state: FloatArray, capacity: FloatArray
@@ -253,10 +294,13 @@ class Follower:
             solver_event_cost += float(first[k, w]) * solution.cost
         in_service, count = clock.occupancy()
         base = expected_metrics(clock, plan.metrics, events)
-        charged = self.graph.models[0].study.settings.demand_charge_per_kw_year > 0.0
-        if avoided.any() and charged and window.series.counts_for_demand:
-            # Only the first plan is held to the demand limit: after an avoided failure the model
-            # plans anew without it, so that moment counts as an event that lasts no time.
+        settings = self.graph.models[0].study.settings
+        charged = settings.demand_charge_per_kw_year > 0.0 and window.series.counts_for_demand
+        aim = aim_of(settings)
+        if avoided.any() and (charged or aim is not None):
+            # Only the first plan is held to the demand limit and to the aim: after an avoided
+            # failure the model plans anew without them, so that moment counts as an event that
+            # lasts no time.
             arrivals = _with_avoided(window.clock, avoided)
             events_seen = np.concatenate([events, np.zeros((n_period, 1, slots.n_slot))], axis=1)
             after_seen = np.concatenate([after, plan.states[:, None, :]], axis=1)
@@ -265,10 +309,23 @@ class Follower:
         history = _History(
             self, i_window, window, arrivals, plan, events_seen, after_seen, capacity, slots
         )
+        noise = None
         if enumerates:
-            correction, samples = history.enumerate(), np.zeros(0)
+            correction, by_first = history.enumerate()
+            samples = np.zeros(0)
         else:
-            correction, samples = history.sample(n_sample, seed)
+            correction, samples, by_first, noise = history.sample(n_sample, seed)
+        outcomes = None
+        if aim is not None:
+            outcomes = followed_outcomes(
+                aim,
+                arrivals,
+                slots.cost(plan.metrics),
+                slots.cost(events_seen),
+                n_scenario,
+                by_first,
+                noise,
+            )
         n = len(samples)
         error = float(samples.std(ddof=1) / np.sqrt(n)) if n > 1 else 0.0
         return WindowFollow(
@@ -284,9 +341,19 @@ class Follower:
             expected_cost=float(slots.cost(base + correction)),
             standard_error=error,
             clock_plan=self.graph.plan_family(i_window).survival,
-            solver_plan_cost=plan_solution.cost,
+            solver_plan_cost=_own_cost(self.graph.first_plan_family(i_window), plan_solution),
             solver_event_cost=solver_event_cost,
+            outcomes=outcomes,
         )
+
+
+def _own_cost(family: Family, solution: NodeSolution) -> float:
+    """Expected cost of a plan's own periods, whatever its aim is."""
+    if isinstance(family, AimedPlanFamily):
+        assert solution.y is not None
+        assert family.expected_cost is not None
+        return float(family.expected_cost @ solution.y)
+    return solution.cost
 
 
 def expected_metrics(clock: Clock, plan: FloatArray, events: FloatArray) -> FloatArray:
@@ -370,11 +437,17 @@ def controlled(cost: FloatArray, control: FloatArray, expected: float) -> FloatA
     -------
     array, shape (n,), of the same mean in expectation
     """
+    factor = control_factor(cost, control)
+    return cost if factor is None else cost - factor * (control - expected)
+
+
+def control_factor(cost: FloatArray, control: FloatArray) -> float | None:
+    """Coefficient with which the control is taken off; None where it says nothing."""
     variance = float(control.var())
     if len(cost) < 2 or variance <= 0.0:
-        return cost
+        return None
     beta = float(np.cov(cost, control)[0, 1]) / variance
-    return cost - min(max(beta, 0.0), MOST_CONTROL) * (control - expected)
+    return min(max(beta, 0.0), MOST_CONTROL)
 
 
 MOST_CONTROL = 2.0
@@ -402,14 +475,8 @@ class _History:
         return clock.survival[:-1, None] * clock.failure_chance[:, None] * clock.scenario_chance
 
     def _back(self, k: int, w: int) -> int | None:
-        """Period from which the rest of the window is planned after an event; None if none is.
-
-        After an avoided failure in the last period only the end of the window is left; after a
-        real event that reaches the end, the event has it in itself.
-        """
-        u = k + 1 + int(self.clock.event_periods[w])
-        last = self.window.series.n_period - (w < len(self.window.scenarios))
-        return u if u <= last else None
+        """Period from which the rest of the window is planned after an event, or None."""
+        return return_period(self.clock, k, w, len(self.window.scenarios))
 
     def _plans(self, at: list[tuple[int, FloatArray]]) -> list[PlanReading]:
         follower = self.follower
@@ -451,34 +518,42 @@ class _History:
                 found.append((difference, solution.out_states[0]))
         return found
 
-    def enumerate(self) -> FloatArray:
-        """Exact correction, (n_slot,)."""
+    def enumerate(self) -> tuple[FloatArray, FloatArray]:
+        """Exact correction, (n_slot,), and of the cost by first arrival, (n_period, n_scenario)."""
         total = np.zeros(self.slots.n_slot)
+        by_first = np.zeros(self.first.shape)
         level = [
-            (u, self.after[k, w], float(self.first[k, w]))
+            (u, self.after[k, w], float(self.first[k, w]), (int(k), int(w)))
             for k, w in np.argwhere(self.first > 0.0)
             if (u := self._back(int(k), int(w))) is not None
         ]
         while level:
-            readings = self._plans([(u, state) for u, state, _ in level])
-            at, weights = [], []
-            for (u, _, weight), reading in zip(level, readings, strict=True):
-                total += weight * self._plan_difference(u, reading)
+            readings = self._plans([(u, state) for u, state, *_ in level])
+            at, weights, origins = [], [], []
+            for (u, _, weight, origin), reading in zip(level, readings, strict=True):
+                step = weight * self._plan_difference(u, reading)
+                total += step
+                by_first[origin] += float(self.slots.cost(step))
                 chance = self.clock.first_failure_from(u)[:, None] * self.clock.scenario_chance[u:]
                 for i, w in np.argwhere(chance > 0.0):
                     at.append((u + int(i), int(w), reading.states[i]))
                     weights.append(weight * float(chance[i, w]))
+                    origins.append(origin)
             level = []
-            for (k, w, _), weight, (difference, state) in zip(
-                at, weights, self._after_events(at), strict=True
+            for (k, w, _), weight, origin, (difference, state) in zip(
+                at, weights, origins, self._after_events(at), strict=True
             ):
-                total += weight * difference
+                step = weight * difference
+                total += step
+                by_first[origin] += float(self.slots.cost(step))
                 if (back := self._back(k, w)) is not None:
-                    level.append((back, state, weight))
-        return total
+                    level.append((back, state, weight, origin))
+        return total, by_first
 
-    def sample(self, n_sample: int, seed: int) -> tuple[FloatArray, FloatArray]:
-        """Correction by random histories, and the cost correction of each."""
+    def sample(
+        self, n_sample: int, seed: int
+    ) -> tuple[FloatArray, FloatArray, FloatArray, Noise | None]:
+        """Correction by random histories, the cost correction of each, and by first arrival."""
         # Scenario by scenario, so that equal steps through the list reach each in proportion.
         pairs = [
             (int(k), int(w))
@@ -486,7 +561,7 @@ class _History:
             if self._back(int(k), int(w)) is not None
         ]
         if not pairs or n_sample < 1:
-            return np.zeros(self.slots.n_slot), np.zeros(0)
+            return np.zeros(self.slots.n_slot), np.zeros(0), np.zeros(self.first.shape), None
         chance = np.array([self.first[k, w] for k, w in pairs])
         random = stream(seed, "continuations", self.window.series.window)
         draws = random.random((n_sample, 2 * MOST_FAILURES + 1))
@@ -511,7 +586,17 @@ class _History:
         samples = controlled(cost, weight * control, exact)
         correction = weight * difference.mean(axis=0)
         self._share_out(correction, weight * difference, control, float(samples.mean()))
-        return correction, samples
+        factor = control_factor(cost, weight * control) or 0.0
+        noise = Noise(
+            np.array(pairs, dtype=np.int64),
+            chance / weight,
+            weight,
+            cost / weight - factor * control,
+        )
+        by_first = np.zeros(self.first.shape)
+        known = chance * (factor * guide + noise.spread())
+        by_first[noise.pairs[:, 0], noise.pairs[:, 1]] = known
+        return correction, samples, by_first, noise
 
     def _guide(self, pairs: list[tuple[int, int]]) -> FloatArray:
         """What the cuts of ``V`` say of the state after each event, against the first plan's."""

@@ -22,8 +22,10 @@ from xlplan.evaluate.metrics import (
     event_metrics,
     plan_metrics,
 )
+from xlplan.evaluate.outcomes import WindowOutcomes, counted_outcomes
 from xlplan.evaluate.pro_rata import share_pro_rata
 from xlplan.model.dispatch import Purchases, SegmentKind, TreeSegment
+from xlplan.model.risk_aim import aim_of
 from xlplan.network.feeder import Feeder
 from xlplan.outages.window_model import WindowModel
 from xlplan.study.study import Study
@@ -137,4 +139,46 @@ def _window(
         clock_plan=clock.survival,
         solver_plan_cost=None,
         solver_event_cost=None,
+        outcomes=_outcomes(context, own, readings, plan.metrics, storage_kwh),
+    )
+
+
+def _outcomes(
+    context: WindowContext,
+    own: list[tuple[int, TreeSegment]],
+    readings: dict[int, FloatArray],
+    plan: FloatArray,
+    storage_kwh: FloatArray,
+) -> WindowOutcomes | None:
+    """Outcomes of the window where bad ones have a weight: all below a first failure summed up.
+
+    A failure avoided in the last period leaves the window as if nothing had failed.
+    """
+    aim = aim_of(context.study.settings)
+    if aim is None:
+        return None
+    slots = context.slots
+    end = slots.single("end_of_window")
+    paid = np.cumsum(slots.cost(plan))
+    root = next(i for i, s in own if s.i_parent < 0)
+    first: dict[int, int] = {}
+    total: dict[int, float] = {}
+    for i, segment in own:
+        if i == root:
+            continue
+        top = first[i] = i if segment.i_parent == root else first[segment.i_parent]
+        if segment.kind is SegmentKind.EVENT:
+            cost = segment.weight * float(slots.cost(readings[i]))
+        else:
+            metrics = segment.period_weight @ readings[i]
+            energy = segment.dispatch.energy_kwh[-1]
+            metrics[end] += segment.end_weight * end_cost(context, energy, storage_kwh)
+            cost = float(slots.cost(metrics))
+        total[top] = total.get(top, 0.0) + cost
+    of = dict(own)
+    return counted_outcomes(
+        aim,
+        [of[i].weight for i in total],
+        [float(paid[of[i].start_period - 1]) + cost / of[i].weight for i, cost in total.items()],
+        float(paid[-1]),
     )

@@ -106,7 +106,8 @@ def attach_meters(graph: StudyGraph, windows: tuple[WindowModel, ...]) -> None:
     """Gives every family of the graph its meter."""
     for i_window, (model, window) in enumerate(zip(graph.models, windows, strict=True)):
         context = build_context(model.study, model.feeder, model.series)
-        graph.plan_family(i_window).meter = PlanMeter(model, context)
+        for family in (graph.plan_family(i_window), graph.first_plan_family(i_window)):
+            family.meter = PlanMeter(model, context)
         for w, scenario in enumerate(window.scenarios):
             graph.event_family(i_window, w).meter = EventMeter(model, context, scenario)
 

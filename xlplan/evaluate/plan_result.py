@@ -13,6 +13,7 @@ from xlplan.evaluate.metrics import COST_PARTS
 from xlplan.evaluate.purchases import net_capital, price_purchases
 from xlplan.evaluate.reliability import by_bus, by_class, indices
 from xlplan.evaluate.results import (
+    AimResult,
     CauseResult,
     CheckLine,
     ConvergenceRow,
@@ -100,9 +101,11 @@ def build_plan_result(
     fixed = costs.investment + costs.fixed_om + costs.demand
     cost = fixed + follow.running_cost
     interval = (cost - follow.half_width, cost + follow.half_width)
+    aim = _aim_result(follow, fixed, cost)
+    aimed, high = (cost, interval[1]) if aim is None else (aim.total, aim.interval[1])
     gap = None
     if facts.lower_bound is not None:
-        gap = max(0.0, interval[1] - facts.lower_bound) / max(abs(cost), 1e-9)
+        gap = max(0.0, high - facts.lower_bound) / max(abs(aimed), 1e-9)
     customers = np.array([load.customers for load in study.loads], dtype=float)
     fair = _without_storms_and_bulk(windows, follow)
     result = PlanResult(
@@ -140,9 +143,19 @@ def build_plan_result(
         numerical_events=facts.numerical_events,
         worst_events=worst_events(study, windows, follow),
         demand_windows=tuple(w.series.window for w in windows if w.series.counts_for_demand),
+        aim=aim,
     )
-    checks = plan_checks(study, windows, follow, facts, costs, cost, purchases, interval)
+    checks = plan_checks(study, windows, follow, facts, costs, cost, purchases, (aimed, high))
     return replace(result, checks=(*checks, *audit))
+
+
+def _aim_result(follow: FollowResult, fixed: float, cost: float) -> AimResult | None:
+    """What the plan is chosen by, where that is not its cost alone."""
+    tail, outcomes = follow.tail_cost, follow.windows[0].outcomes
+    if tail is None or outcomes is None:
+        return None
+    aim = outcomes.aim
+    return AimResult(aim.weight_frac, aim.tail_frac, cost, fixed + tail, follow.aim_half_width)
 
 
 def _without_storms_and_bulk(windows: Sequence[WindowModel], follow: FollowResult) -> FloatArray:
@@ -175,6 +188,7 @@ def _window_results(
                 eens_kwh=float(metrics[slots.per_load("ens_kwh")].sum()),
                 customer_interruptions=float(customers @ metrics[slots.per_load("sustained")]),
                 customer_hours=float(customers @ metrics[slots.per_load("hours")]),
+                tail_cost=None if result.outcomes is None else result.outcomes.tail_cost,
             )
         )
     return tuple(rows)
@@ -215,9 +229,9 @@ def plan_checks(
     costs: CostParts,
     cost: float,
     purchases: Sequence[Purchase],
-    interval: tuple[float, float],
+    aimed: tuple[float, float],
 ) -> tuple[CheckLine, ...]:
-    """Reconciliations of one plan."""
+    """Reconciliations of one plan; ``aimed``: what it is chosen by, and its upper end."""
     lines = [
         CheckLine(
             "Cost parts add up",
@@ -276,6 +290,17 @@ def plan_checks(
                 1e-9,
             )
         )
+        if result.outcomes is not None:
+            outcomes = result.outcomes
+            lines.append(
+                CheckLine(
+                    f"Outcomes of {window.series.window}",
+                    "Mean cost of the outcomes that worst ones are chosen among, and expected cost",
+                    float(outcomes.chance @ outcomes.cost),
+                    result.expected_cost,
+                    ROUNDING * max(1.0, abs(result.expected_cost)),
+                )
+            )
         poisson = result.clock.poisson_mean()
         lines.append(
             CheckLine(
@@ -291,8 +316,9 @@ def plan_checks(
         lines.append(
             CheckLine(
                 "Bound below cost",
-                "Amount by which the lower bound passes the upper end of the cost's interval",
-                max(0.0, facts.lower_bound - interval[1]),
+                "Amount by which the lower bound passes the upper end of the interval of "
+                + ("the cost" if follow.tail_cost is None else "mean and worst outcomes"),
+                max(0.0, facts.lower_bound - aimed[1]),
                 0.0,
                 max(CENT, ROUNDING * abs(cost)),
             )
@@ -303,7 +329,7 @@ def plan_checks(
                 "Whole tree",
                 "Optimum of the whole scenario tree against the cost of its plan, counted again",
                 facts.tree_cost,
-                cost,
+                aimed[0],
                 max(CENT, ROUNDING * abs(cost)),
             )
         )

@@ -101,6 +101,8 @@ class WindowResult:
     eens_kwh: float
     customer_interruptions: float
     customer_hours: float
+    tail_cost: float | None = None
+    """Mean cost of the worst outcomes, where they have a weight."""
 
 
 @dataclass(frozen=True)
@@ -259,13 +261,45 @@ class ConvergenceRow:
 
 
 @dataclass(frozen=True)
+class AimResult:
+    """What a plan is chosen by where bad outcomes have a weight, per year.
+
+    weight_frac : weight of ``tail``; ``expected`` has the rest
+    tail_frac : share of a window occurrence's outcomes that counts as bad
+    expected : expected yearly cost, as in the cost parts
+    tail : CVaR, the yearly cost if every occurrence of every window cost the mean of its worst
+        outcomes; an outcome is that nothing fails, or a first failure with what is expected to
+        follow
+    half_width : half of the 95 % interval of the aim
+    """
+
+    weight_frac: float
+    tail_frac: float
+    expected: float
+    tail: float
+    half_width: float
+
+    @property
+    def total(self) -> float:
+        """The aim: what the plan minimises."""
+        return (1.0 - self.weight_frac) * self.expected + self.weight_frac * self.tail
+
+    @property
+    def interval(self) -> tuple[float, float]:
+        """95 % interval of the aim."""
+        return (self.total - self.half_width, self.total + self.half_width)
+
+
+@dataclass(frozen=True)
 class PlanResult:
     """Everything about one alternative.
 
     ``cost_interval``: 95 % interval of the cost of following the plan; both ends equal where every
     path was enumerated. ``lower_bound`` None where the alternative is no optimum (plan ignoring
-    outages). ``interruption_own_clock``: interruption cost re-priced on each load group's own
-    clock. ``indices_fair``: without storm windows and loss of bulk supply.
+    outages). Where bad outcomes have a weight, ``lower_bound``, ``bound_upper``, ``gap_frac`` and
+    ``convergence`` are those of ``aim``, all else is expected cost.
+    ``interruption_own_clock``: interruption cost re-priced on each load group's own clock.
+    ``indices_fair``: without storm windows and loss of bulk supply.
     """
 
     name: str
@@ -310,6 +344,18 @@ class PlanResult:
     ac: AcCheck | None = None
     """Operation checked by nonlinear power flow."""
     worst_events: tuple[WorstEvent, ...] = ()
+    aim: AimResult | None = None
+    """Where bad outcomes have a weight; None where the expected cost is minimised."""
     difference_to_best: float = 0.0
     difference_to_best_interval: tuple[float, float] = (0.0, 0.0)
     """The same against the recommended plan."""
+
+    @property
+    def aimed_total(self) -> float:
+        """What the plan is chosen by, per year: its cost, or the aim where there is one."""
+        return self.costs.total if self.aim is None else self.aim.total
+
+    @property
+    def aimed_interval(self) -> tuple[float, float]:
+        """95 % interval of that."""
+        return self.cost_interval if self.aim is None else self.aim.interval

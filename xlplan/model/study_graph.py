@@ -1,9 +1,10 @@
 """A study as a value graph: families of plans and events, roots, first stage.
 
 Enters: study, feeder, window models. Leaves: ``StudyGraph``, the graph that the decomposition
-solves together with the meaning of its families. The same graph without exits
+solves together with the meaning of its families. With a weight on bad outcomes the first plan of
+every window is of a family of its own, whose cuts serve no other plan. The same graph without exits
 (``plans_for_outages`` False) is the planner who thinks that nothing can fail, and in an event that
-nothing more can.
+nothing more can; nothing is at risk then.
 """
 
 from __future__ import annotations
@@ -14,10 +15,12 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from xlplan.model.aimed_plan import AimedPlanFamily, aimed_plan
 from xlplan.model.layout import Layout, build_layout, start_state, state_domain
 from xlplan.model.loads import build_loads
 from xlplan.model.period import FeederModel, build_feeder_model
 from xlplan.model.purchase import Choices, FirstStage, build_first_stage
+from xlplan.model.risk_aim import RiskAim, aim_of
 from xlplan.model.subproblem import (
     EventFamily,
     PlanFamily,
@@ -36,10 +39,14 @@ FloatArray = NDArray[np.float64]
 
 @dataclass(frozen=True)
 class WindowFamilies:
-    """Positions of one window's families in the graph."""
+    """Positions of one window's families in the graph.
+
+    first_plan : the family that the root is of: ``plan``, or its own under a weight on bad outcomes
+    """
 
     plan: int
     events: tuple[int, ...]
+    first_plan: int
 
 
 @dataclass(frozen=True)
@@ -55,6 +62,12 @@ class StudyGraph:
     def plan_family(self, i_window: int) -> PlanFamily:
         """Plans of a window."""
         family = self.graph.families[self.windows[i_window].plan]
+        assert isinstance(family, PlanFamily)
+        return family
+
+    def first_plan_family(self, i_window: int) -> PlanFamily:
+        """Plans of a window from its start: those before anything fails."""
+        family = self.graph.families[self.windows[i_window].first_plan]
         assert isinstance(family, PlanFamily)
         return family
 
@@ -92,6 +105,7 @@ def build_study_graph(
     sections = build_sections(feeder)
     section_of_load = sections.section_of_bus[feeder.load_bus]
     lower, upper = state_domain(study, layout)
+    aim = aim_of(study.settings) if plans_for_outages else None
     families: list[PlanFamily | EventFamily] = []
     roots, places, models, order = [], [], [], []
     for window in windows:
@@ -119,19 +133,28 @@ def build_study_graph(
         for k in reversed(range(n_period)):
             order += [(event, k) for event in events]
             order.append((plan, k))
+        first_plan = plan
+        if aim is not None:
+            first_plan = len(families)
+            families.append(
+                _first_plan(families[plan], window, aim, model, plan_upper, event_upper)
+            )
+            order.append((first_plan, 0))
         roots.append(
             Root(
                 name=window.series.window,
-                family=plan,
+                family=first_plan,
                 member=0,
                 weight=window.series.occurrences_per_year,
                 capacity_matrix=first_stage.capacity_matrix,
                 capacity_offset=first_stage.capacity_offset,
                 state_matrix=start_state(study, layout, window.series),
                 state_offset=np.zeros(layout.n_state),
+                # Its cuts serve the plans after every repair.
+                beside=None if aim is None else (plan, 0),
             )
         )
-        places.append(WindowFamilies(plan, tuple(events)))
+        places.append(WindowFamilies(plan, tuple(events), first_plan))
         models.append(model)
     capacity_lower = layout.capacity_lower.copy()
     capacity_lower[layout.demand_kw] = 0.0
@@ -148,6 +171,58 @@ def build_study_graph(
         state_upper_matrix=tuple(upper for _ in families),
     )
     return StudyGraph(graph, layout, first_stage, tuple(places), tuple(models))
+
+
+def _first_plan(
+    plan: PlanFamily | EventFamily,
+    window: WindowModel,
+    aim: RiskAim,
+    model: FeederModel,
+    plan_upper: FloatArray,
+    event_upper: FloatArray,
+) -> AimedPlanFamily:
+    """The first plan of a window under an aim."""
+    assert isinstance(plan, PlanFamily)
+    plan_lower, event_lower = _least_values(model, window)
+    k, w = plan.exit_period, plan.exit_scenario
+    is_gated = np.array([bool(gate) for gate in plan.exit_gate], dtype=bool)
+    low, high = event_lower[k, w], event_upper[k, w]
+    return aimed_plan(
+        plan,
+        aim,
+        np.where(is_gated, np.minimum(low, plan_lower[k + 1]), low),
+        np.where(is_gated, np.maximum(high, plan_upper[k + 1]), high),
+    )
+
+
+def _least_values(model: FeederModel, window: WindowModel) -> tuple[FloatArray, FloatArray]:
+    """Bounds of the values from below: everything sold that the substation lets through.
+
+    No price is below 0; what can be earned besides is the normal supply that an event beyond the
+    window takes off.
+
+    Returns
+    -------
+    plan_lower : (n_period + 1,); event_lower : (n_period, n_scenario)
+    """
+    series, n_period, dt = model.series, model.series.n_period, model.series.period_h
+    limit = float(model.study.settings.substation_limit_kva)
+    sold = np.zeros(n_period)
+    if series.export_price_per_kwh is not None:
+        sold += max(series.export_price_per_kwh, 0.0) * min(limit, model.flow_limit_kw) * dt
+    supply = series.price_per_kwh * series.load_kw.sum(axis=1) * dt
+    plan = np.zeros(n_period + 1)
+    event = np.zeros((n_period, len(window.scenarios)))
+    for k in reversed(range(n_period)):
+        for w, scenario in enumerate(window.scenarios):
+            period = k + 1 + np.arange(scenario.n_period)
+            row = period % n_period
+            back = k + 1 + scenario.n_period
+            event[k, w] = -sold[row].sum() - supply[row][period >= n_period].sum()
+            event[k, w] += plan[back] if back < n_period else 0.0
+        # Values fall with the time that is left, so the least of all is a bound of any mean.
+        plan[k] = -sold[k] + min(plan[k + 1], float(event[k].min(initial=0.0)))
+    return plan, event
 
 
 def _value_bounds(

@@ -8,9 +8,10 @@ import numpy as np
 from pulp import LpAffineExpression as Expression
 
 from xlplan.model.dispatch import BoolArray, Dispatch, FloatArray, TreeSegment
+from xlplan.model.tree_account import Gate
 from xlplan.model.tree_columns import OperatedPeriod
 from xlplan.model.tree_purchases import value_of
-from xlplan.model.whole_tree import Gate, TreeNode, WholeTree
+from xlplan.model.whole_tree import TreeNode, WholeTree
 
 
 def read_segments(tree: WholeTree) -> tuple[TreeSegment, ...]:

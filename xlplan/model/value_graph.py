@@ -11,7 +11,9 @@ of the graph, and has a value function of its incoming state ``s`` and the capac
 
 An *exit* hands the state in ``out_columns[e]`` on to a child. A *gated* exit has two children: the
 capacities named in ``gate`` sum to 0 or 1; at 0 its value is that of ``child``, at 1 that of
-``child_if_gated`` (a failure that a measure avoids). ``first_stage`` decides ``x`` once; every
+``child_if_gated`` (a failure that a measure avoids). A family with ``exit_columns`` has columns of
+``y`` that stand for the values of its exits, so that rows may hold them (an aim that is not their
+weighted sum alone). ``first_stage`` decides ``x`` once; every
 *root* is a node with a weight, its own map from ``x`` to the capacities in service, and a map from
 capacities to its initial state:
 
@@ -29,6 +31,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from xlplan.model.linear_program import LinearProgram
+from xlplan.model.risk_aim import RiskAim
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -84,6 +87,32 @@ class Nest:
     exit_last: IntArray
 
 
+@dataclass(frozen=True)
+class Outcomes:
+    """A root's aim at one solution: the exits, and the outcome that none of them is taken.
+
+    aim : RiskAim; chance (n_exit + 1,), the last one that of no exit; cost (n_exit + 1,), what has
+    been paid by then, to which the value of an exit is added
+    """
+
+    aim: RiskAim
+    chance: FloatArray
+    cost: FloatArray
+
+    def value(self, theta: FloatArray) -> float:
+        """The aim if the exits are worth ``theta``, (n_exit,)."""
+        return self.aim.value(self.chance, self._with(theta))
+
+    def slope(self, theta: FloatArray) -> FloatArray:
+        """Factor by which each exit counts beyond its chance, (n_exit,)."""
+        slope: FloatArray = self.aim.slope(self.chance, self._with(theta))[:-1]
+        return slope
+
+    def _with(self, theta: FloatArray) -> FloatArray:
+        cost: FloatArray = self.cost + np.concatenate([theta, [0.0]])
+        return cost
+
+
 class Family:
     """One constraint matrix and its members. Subclasses must be picklable.
 
@@ -104,6 +133,10 @@ class Family:
     is_expanded : True if the cost of following a plan expands the exits that lead to this family
         over all of them (outage events: cheap), False if it samples them
     nest : Nest, or None where the members differ in other ways
+    exit_columns : (n_exit,) columns that are the values ``theta`` of the exits, or None. Their cost
+        comes on top of the weight of the exit; the two and what rows add are never below 0
+        together, and the column's box plays no part
+    aim : RiskAim of a family of roots that ``outcomes`` is about, or None
     """
 
     name: str
@@ -115,15 +148,25 @@ class Family:
     patch: IntArray
     is_expanded: bool
     nest: Nest | None = None
+    exit_columns: IntArray | None = None
+    aim: RiskAim | None = None
 
     def member(self, i_member: int) -> Member:
         """Numbers of one member."""
         raise NotImplementedError
 
+    def outcomes(self, y: FloatArray) -> Outcomes | None:
+        """What the aim of a root is taken over; None where that is the expectation alone."""
+        return None
+
 
 @dataclass(frozen=True)
 class Root:
-    """One node whose value enters the first stage."""
+    """One node whose value enters the first stage.
+
+    beside : a node (family, member) that is solved where the root is, for the sake of its cuts,
+        where those of the root serve no other node; or None
+    """
 
     name: str
     family: int
@@ -133,6 +176,7 @@ class Root:
     capacity_offset: FloatArray
     state_matrix: FloatArray
     state_offset: FloatArray
+    beside: tuple[int, int] | None = None
 
 
 @dataclass(frozen=True)

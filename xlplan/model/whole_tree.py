@@ -13,7 +13,7 @@ that nothing has failed since ``u`` and ``q`` the chance of a failure in a perio
 Every node has columns of its own; nothing is shared between nodes but purchases and the state at
 which they branch. The decomposition (``subproblem.py``) folds the same nodes into value functions
 and shares no code with this module: only so is their agreement evidence. Small cases only, see
-``tree_size.py``. The risk weight of the settings plays no part here.
+``tree_size.py``. A weight on bad outcomes concerns the first plans alone (``tree_risk.py``).
 """
 
 from __future__ import annotations
@@ -25,61 +25,19 @@ import pulp
 from pulp import LpAffineExpression as Expression
 
 from xlplan.model.dispatch import Purchases, SegmentKind
+from xlplan.model.risk_aim import aim_of
+from xlplan.model.tree_account import Account, Arrival, Gate
 from xlplan.model.tree_bounds import ValueBounds, bound_values
 from xlplan.model.tree_columns import Case, OperatedPeriod, PlantState
 from xlplan.model.tree_period import PeriodEquations
 from xlplan.model.tree_purchases import PurchaseColumns, add_purchases, fix_purchases
+from xlplan.model.tree_risk import Outcomes
 from xlplan.model.tree_size import Slice, hardening_slices
 from xlplan.network.feeder import Feeder
 from xlplan.outages.damage import first_moment_cost
 from xlplan.outages.records import Scenario
 from xlplan.outages.window_model import WindowModel
 from xlplan.study.study import Study
-
-
-class Account:
-    """A sum of costs that grows by thousands of terms; expressions would be copied each time."""
-
-    def __init__(self) -> None:
-        self.terms: dict[pulp.LpVariable, float] = {}
-        self.constant = 0.0
-
-    def add(self, cost: Expression, weight: float) -> None:
-        """Adds ``weight * cost``."""
-        for variable, coefficient in cost.items():
-            self.terms[variable] = self.terms.get(variable, 0.0) + weight * coefficient
-        self.constant += weight * cost.constant
-
-    def expression(self) -> Expression:
-        """The sum."""
-        return Expression(self.terms, constant=self.constant)
-
-
-@dataclass(frozen=True)
-class Gate:
-    """A branch that is followed only if one of the measures is bought, or only if none is."""
-
-    measures: tuple[int, ...]
-    is_avoided: bool
-
-
-@dataclass(frozen=True)
-class Arrival:
-    """How a node is reached, and where its cost goes.
-
-    ``weight`` multiplies its cost in ``account``; ``chance`` is that of being reached where every
-    gate on the way stands as noted.
-    """
-
-    account: Account
-    weight: float
-    chance: float
-    gates: tuple[Gate, ...]
-    i_parent: int
-
-    def times(self, chance: float) -> Arrival:
-        """The same, with a further chance on the way."""
-        return replace(self, weight=self.weight * chance, chance=self.chance * chance)
 
 
 @dataclass
@@ -127,7 +85,8 @@ def build_whole_tree(
 
     Returns
     -------
-    WholeTree; minimises ``annual(x) + demand_charge D + sum_w n_w V_w``, money per year
+    WholeTree; minimises ``annual(x) + demand_charge D + sum_w n_w V_w``, money per year, where
+    ``V_w`` is the window's expected cost, or the aim of mean and worst outcomes if one is set
     """
     problem = pulp.LpProblem("whole_tree", pulp.LpMinimize)
     if fixed_x is None:
@@ -140,8 +99,7 @@ def build_whole_tree(
     nodes: list[TreeNode] = []
     for i_window, window in enumerate(windows):
         tree = _WindowTree(problem, study, feeder, window, i_window, purchases, fixed_x, nodes)
-        root = Arrival(account, window.series.occurrences_per_year, 1.0, (), -1)
-        tree.add_first_plan(root)
+        tree.add_first_plan(account)
     problem.setObjective(account.expression())
     return WholeTree(problem, purchases, tuple(nodes))
 
@@ -173,9 +131,19 @@ class _WindowTree:
         needs_bounds = fixed_x is None and any(scenario.hardening for scenario in window.scenarios)
         self.bounds: ValueBounds | None = bound_values(study, window) if needs_bounds else None
 
-    def add_first_plan(self, arrival: Arrival) -> None:
-        """``V_0``: the plan before anything fails, the only one that the demand charge sees."""
-        node = self.add_plan(0, self.equations.start_state(), arrival)
+    def add_first_plan(self, account: Account) -> None:
+        """``V_0``: the plan before anything fails, the only one that the demand charge sees.
+
+        It is also the only one with an aim beyond its expected cost.
+        """
+        occurrences = self.window.series.occurrences_per_year
+        aim, outcomes = aim_of(self.study.settings), None
+        weight = occurrences
+        if aim is not None:
+            outcomes = Outcomes(self.problem, self.i_window, aim, occurrences, account)
+            weight *= 1.0 - aim.weight_frac
+        arrival = Arrival(account, weight, 1.0, (), -1)
+        node = self.add_plan(0, self.equations.start_state(), arrival, outcomes)
         if self.window.series.counts_for_demand:
             for k, period in enumerate(node.periods):
                 self.problem += (
@@ -183,7 +151,9 @@ class _WindowTree:
                     f"demand_w{self.i_window}k{k}",
                 )
 
-    def add_plan(self, start: int, state: PlantState, arrival: Arrival) -> TreeNode:
+    def add_plan(
+        self, start: int, state: PlantState, arrival: Arrival, outcomes: Outcomes | None = None
+    ) -> TreeNode:
         """``V_u``: all in service from a period on, and every failure on the way."""
         i_node, node = self._new_node(SegmentKind.PLAN, None, start, arrival)
         survival = 1.0
@@ -191,17 +161,28 @@ class _WindowTree:
             case = Case(f"n{i_node}k{k}", k, self.window.normal, is_event=False)
             period = self._add_period(node, case, state, survival)
             arrival.account.add(period.cost, arrival.weight * survival)
+            if outcomes is not None:
+                outcomes.pay(period.cost)
             state = period.state()
             failure = survival * float(self.window.clock.failure_chance[k])
             if failure > 0.0:
                 branch = replace(arrival.times(failure), i_parent=i_node)
-                self._add_failures(k, state, branch, node, failure)
+                self._add_failures(k, state, branch, node, failure, outcomes)
             survival *= 1.0 - float(self.window.clock.failure_chance[k])
-        self._add_end(node, f"n{i_node}", state, arrival.times(survival), survival)
+        end = self._add_end(node, f"n{i_node}", state, arrival.times(survival), survival)
+        if outcomes is not None:
+            outcomes.pay(end)
+            outcomes.finish(survival)
         return node
 
     def _add_failures(
-        self, k: int, state: PlantState, arrival: Arrival, parent: TreeNode, failure: float
+        self,
+        k: int,
+        state: PlantState,
+        arrival: Arrival,
+        parent: TreeNode,
+        failure: float,
+        outcomes: Outcomes | None,
     ) -> None:
         """Everything that can fail in period ``k``; the arrival is that of some failure."""
         for i_scenario in range(len(self.window.scenarios)):
@@ -209,7 +190,8 @@ class _WindowTree:
             if chance <= 0.0:
                 continue
             for part in self.slices[i_scenario]:
-                branch = arrival.times(chance * part.share)
+                arriving = arrival.times(chance * part.share)
+                branch = arriving if outcomes is None else outcomes.begin(arriving)
                 passed = failure * chance * part.share
                 if not part.avoided_by:
                     self._add_event(k, i_scenario, state, branch)
@@ -219,6 +201,8 @@ class _WindowTree:
                     self._add_no_event(k, state, branch, parent, passed)
                 else:
                     self._add_event(k, i_scenario, state, branch)
+                if outcomes is not None:
+                    outcomes.close(arriving, branch, passed)
 
     def _add_event(self, k: int, i_scenario: int, state: PlantState, arrival: Arrival) -> None:
         """``D``: a failure in period ``k``, its outage event, and what follows the repair."""
@@ -332,12 +316,14 @@ class _WindowTree:
 
     def _add_end(
         self, node: TreeNode, name: str, state: PlantState, arrival: Arrival, chance: float
-    ) -> None:
-        """The window ends with this state."""
+    ) -> Expression:
+        """The window ends with this state; what that costs."""
         if chance <= 0.0:
-            return
-        arrival.account.add(self.equations.add_end_cost(name, state), arrival.weight)
+            return Expression()
+        cost = self.equations.add_end_cost(name, state)
+        arrival.account.add(cost, arrival.weight)
         node.ends.append((chance, arrival.gates))
+        return cost
 
     def _new_node(
         self, kind: SegmentKind, i_scenario: int | None, start: int, arrival: Arrival

@@ -1,7 +1,11 @@
 """The JSON twin: the same results for programs and tests, under stable keys.
 
 Money is per year in the study's currency unless the key says capital. A number that is not known
-is ``null``; there is no NaN. Lists of results that a run does not compute are empty.
+is ``null``; there is no NaN. Lists of results that a run does not compute are empty. Where bad
+outcomes have a weight, ``objective`` is what the plan minimises, ``(1 - weight) expected_cost +
+weight cvar``; ``lower_bound``, ``bound_upper`` and ``gap_pct`` are then those of the objective, and
+every other cost is an expected one as always. Without a weight there is no ``objective``, nor a
+``cvar`` of windows.
 """
 
 from __future__ import annotations
@@ -20,7 +24,7 @@ from xlplan.compare.pack_result import (
     Worth,
 )
 from xlplan.compare.study_result import StudyResult
-from xlplan.evaluate.results import PlanResult
+from xlplan.evaluate.results import AimResult, PlanResult
 from xlplan.report.target import replace_whole
 
 SCHEMA = 1
@@ -137,6 +141,7 @@ def _alternative(plan: PlanResult) -> dict[str, Any]:
         "lower_bound": _number(plan.lower_bound),
         "cost_interval": _pair(plan.cost_interval),
         "gap_pct": _number(gap),
+        **({} if plan.aim is None else {"objective": _objective(plan.aim)}),
         "purchases": [
             {
                 "asset": asset.asset,
@@ -162,6 +167,7 @@ def _alternative(plan: PlanResult) -> dict[str, Any]:
                 "expected_cost": _number(window.expected_cost),
                 "expected_events": _number(window.expected_events),
                 "eens_kwh": _number(window.eens_kwh),
+                **({} if window.tail_cost is None else {"cvar": _number(window.tail_cost)}),
             }
             for window in plan.windows
         ],
@@ -189,6 +195,18 @@ def _alternative(plan: PlanResult) -> dict[str, Any]:
             "difference": _number(plan.difference),
             "interval": _pair(plan.difference_interval),
         },
+    }
+
+
+def _objective(aim: AimResult) -> dict[str, Any]:
+    """What the plan minimises where bad outcomes have a weight."""
+    return {
+        "total": _number(aim.total),
+        "interval": _pair(aim.interval),
+        "expected_cost": _number(aim.expected),
+        "cvar": _number(aim.tail),
+        "weight_pct": _number(pct_from_frac(aim.weight_frac)),
+        "tail_pct": _number(pct_from_frac(aim.tail_frac)),
     }
 
 

@@ -317,6 +317,18 @@ METHODS = (
     Column("seconds", "Solving (s)", "hours"),
 )
 
+AIMS = (
+    Column("name", "Alternative", "wrap"),
+    Column("bound", "Lower bound of the weighted cost ({money}/year)", "money"),
+    Column("expected", "Expected cost ({money}/year)", "money"),
+    Column("tail", "Cost if every window went badly, CVaR ({money}/year)", "money"),
+    Column("total", "Weighted cost ({money}/year)", "money"),
+    Column("low", "95 % interval: low ({money}/year)", "money"),
+    Column("high", "95 % interval: high ({money}/year)", "money"),
+    Column("ceiling", "Weighted cost, every path counted ({money}/year)", "money"),
+    Column("gap", "Gap of the weighted cost", "percent"),
+)
+
 WORTH = (
     Column("rank", "Rank by net value", "whole"),
     Column("name", "Measure", "wrap"),

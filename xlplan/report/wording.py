@@ -59,8 +59,9 @@ def _finding(result: StudyResult, best: PlanResult) -> str:
     currency = result.currency
     name = plan_words(best)
     if best.name == base.name or not buys_anything(best):
+        what = "yearly cost" if best.aim is None else "weighted cost"
         return (
-            f"{name} buys nothing: no purchase on offer was found to lower the yearly cost, "
+            f"{name} buys nothing: no purchase on offer was found to lower the {what}, "
             "customers' outage costs included."
         )
     low, high = best.difference_interval
@@ -68,14 +69,29 @@ def _finding(result: StudyResult, best: PlanResult) -> str:
     if includes_zero((low, high)):
         return (
             f"{name} and the existing feeder cannot be told apart on yearly cost: the 95 % "
-            f"interval of the difference, {span}, includes 0."
+            f"interval of the difference, {span}, includes 0.{_aimed_change(best, base, currency)}"
         )
     amount = money_words(abs(best.difference), currency)
     share = ""
     if base.costs.total > 0.0:
         share = f" ({pct_from_frac(abs(best.difference) / base.costs.total):.1f} %)"
     verb = "lowers" if high < 0.0 else "raises"
-    return f"{name} {verb} the yearly cost by {amount}{share}, customers' outage costs included."
+    return (
+        f"{name} {verb} the yearly cost by {amount}{share}, customers' outage costs included."
+        f"{_aimed_change(best, base, currency)}"
+    )
+
+
+def _aimed_change(best: PlanResult, base: PlanResult, currency: str) -> str:
+    """What the plan does to the weighted cost, where plans are chosen by it."""
+    if best.aim is None:
+        return ""
+    change = best.aimed_total - base.aimed_total
+    verb = "lowers" if change < 0.0 else "raises"
+    return (
+        f" It {verb} the weighted cost, which counts bad outcomes more and by which it was chosen, "
+        f"by {money_words(abs(change), currency)}."
+    )
 
 
 def consequence(result: StudyResult) -> str:
@@ -121,7 +137,9 @@ def uncertainties(result: StudyResult) -> list[str]:
             f"The plan's yearly cost is a statistical figure: {money_words(low, currency)} to "
             f"{money_words(high, currency)} (95 % interval, {best.n_sample:,} sampled histories)."
         )
-    if best.lower_bound is not None and best.gap_frac is not None:
+    if best.aim is not None:
+        said += aim_words(best, currency)
+    elif best.lower_bound is not None and best.gap_frac is not None:
         said.append(
             f"No plan on offer costs less than {money_words(best.lower_bound, currency)} a year: "
             f"this one is within {pct_from_frac(best.gap_frac):.2f} % of that."
@@ -167,6 +185,28 @@ def outage_planning(result: StudyResult) -> str:
         f"Planning for outages is worth {money_words(value, currency)} a year against a plan that "
         f"ignores them ({words})."
     )
+
+
+def aim_words(plan: PlanResult, currency: str) -> list[str]:
+    """What a plan minimises where bad outcomes have a weight, and how close it comes."""
+    aim = plan.aim
+    if aim is None:
+        return []
+    weight, tail = pct_from_frac(aim.weight_frac), pct_from_frac(aim.tail_frac)
+    said = (
+        f"Bad outcomes have a weight of {weight:g} %: the plan is chosen by its weighted cost, "
+        f"{money_words(aim.total, currency)} a year = {100.0 - weight:g} % of the expected cost "
+        f"{money_words(aim.expected, currency)} + {weight:g} % of "
+        f"{money_words(aim.tail, currency)}, which a year would cost if every occurrence of every "
+        f"window cost the mean of its worst {tail:g} % (CVaR)"
+    )
+    if plan.lower_bound is not None and plan.gap_frac is not None:
+        said += (
+            f"; no plan on offer has a weighted cost below "
+            f"{money_words(plan.lower_bound, currency)}, this one is within "
+            f"{pct_from_frac(plan.gap_frac):.2f} % of that"
+        )
+    return [f"{said}. All other costs and differences are expected ones."]
 
 
 def _ac_words(result: StudyResult, best: PlanResult) -> list[str]:
@@ -221,12 +261,12 @@ def _ac_verdict(best: PlanResult) -> str:
 
 def _rivals(result: StudyResult, best: PlanResult) -> list[str]:
     """Other alternatives that are as cheap, within the interval or the gap."""
-    gap = abs(best.costs.total) * (best.gap_frac or 0.0)
-    reach = max(best.cost_interval[1], best.costs.total + gap)
+    gap = abs(best.aimed_total) * (best.gap_frac or 0.0)
+    reach = max(best.aimed_interval[1], best.aimed_total + gap)
     near = [
         plan.name
         for plan in result.plans
-        if plan.name != best.name and plan.cost_interval[0] <= reach
+        if plan.name != best.name and plan.aimed_interval[0] <= reach
     ]
     if not near:
         return []

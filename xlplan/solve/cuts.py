@@ -403,7 +403,7 @@ class DualBound:
         """What differs between the members; None where ``cuts_of`` cannot be used."""
         if not self._is_looked_at:
             self._is_looked_at = True
-            if len(self.family.exit_gate) <= MANY_EXITS:
+            if len(self.family.exit_gate) <= MANY_EXITS and self.family.exit_columns is None:
                 table = MemberTable(self._cache, self.i_family, self.family)
                 self._table = table if table.has_same_inputs else None
         return self._table
@@ -524,6 +524,11 @@ class _Sum:
             full[self.rows] = self.pi
             step = full[bound.patch_row] * (member.patch_value - bound.patch_base)
             np.subtract.at(self.d, bound.patch_column, step)
+        if bound.family.exit_columns is not None:
+            # What rows make of the value of an exit is part of its weight.
+            self.weight = self.weight + self.d[bound.family.exit_columns]
+            self.d[bound.family.exit_columns] = np.minimum(self.weight, 0.0)
+            self.weight = np.maximum(self.weight, 0.0)
         self.cut_exit, self.cut_pi = exits.exit, exits.pi
         self.cut_intercept = exits.intercept
         self.cut_slope, self.cut_capacity = exits.state_slope, exits.capacity_slope

@@ -11,6 +11,9 @@ One pass of ``Engine.run``:
 4. the cuts of all these go into the pools, and where every event was followed the cost of
    following the plan is known up to its interval, and so is the gap.
 
+A root may have an aim that is no expectation (``Family.aim``): what is then bounded and measured is
+that aim, and every exit counts as much as it can in the tolerances.
+
 Whole numbers are left to the first stage, and there to the time when the relaxed bound has
 settled. This is stochastic dual dynamic programming (Pereira and Pinto 1991) on an acyclic graph.
 """
@@ -25,7 +28,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from xlplan.base.rng import stream
-from xlplan.model.value_graph import ValueGraph
+from xlplan.model.value_graph import Family, ValueGraph
 from xlplan.solve.first_stage import FirstStage, FirstStagePlan, capacities_of, state_of
 from xlplan.solve.follow import Follower, Following, RootPoint, Sampled, Term
 from xlplan.solve.inner_bound import inner_bound
@@ -141,6 +144,7 @@ class Engine:
         self.pools = new_pools(graph, self.tables)
         self._first_stage = FirstStage(graph, self.tables)
         self._follower = Follower(graph, self.tables, self._cache)
+        self.most_weight = max(_most_weight(graph.families[r.family]) for r in graph.roots)
         self._root_members = {(r.family, r.member) for r in graph.roots}
         self._root_families = {r.family for r in graph.roots}
         self._workers = Workers(
@@ -226,6 +230,8 @@ class Engine:
         -------
         (bound, ""), or (None, why there is none)
         """
+        if any(self.graph.families[r.family].exit_columns is not None for r in self.graph.roots):
+            return None, "it is worked out for the expected cost alone"
         states = [state_of(r, c) for r, c in zip(self.graph.roots, result.capacities, strict=True)]
         found = inner_bound(
             self.graph,
@@ -341,6 +347,11 @@ class Engine:
         return weights
 
 
+def _most_weight(family: Family) -> float:
+    """Largest factor by which the value of a family's exits can count beyond their weight."""
+    return 1.0 if family.aim is None else family.aim.most_weight
+
+
 class _Run:
     """State of one call of ``Engine.run``."""
 
@@ -364,6 +375,8 @@ class _Run:
         self._terms: list[list[Term]] = []
         self.n_solve = 0
         self.n_cut = 0
+        self.most_weight = engine.most_weight
+        """By how much more than by its chance what follows an exit of a root can count."""
 
     # -- passes --------------------------------------------------------------------------------
 
@@ -372,6 +385,7 @@ class _Run:
         for i_pass in range(self.options.n_pass):
             begin = self.clock.seconds()
             points = self._agree(is_first=i_pass == 0)
+            self._solve_beside(points)
             is_partial = self._is_partial(points)
             found = self._look(points, is_partial)
             self.n_cut += self.engine.add_cuts_of(found)
@@ -461,7 +475,8 @@ class _Run:
                     state_of(root, capacity),
                     capacity,
                     group=engine.next_group(),
-                    cut_tolerance=tolerance / max(root.weight, 1e-12),
+                    cut_tolerance=tolerance / max(root.weight, 1e-12) / self.most_weight,
+                    wants_primal=graph.families[root.family].exit_columns is not None,
                 )
             )
         # Not watched by the clock: without the roots there is no plan.
@@ -473,8 +488,23 @@ class _Run:
             if solution is None or solution.has_failed:
                 raise RuntimeError(f"root {graph.roots[i].name} could not be solved")
             exits = engine._follower.exits(request.family, request.member, request.capacity)
-            points.append(RootPoint(i, request.capacity, request.state, solution, exits))
+            outcomes = None
+            if solution.y is not None:
+                outcomes = graph.families[request.family].outcomes(solution.y)
+            points.append(RootPoint(i, request.capacity, request.state, solution, exits, outcomes))
         return points
+
+    def _solve_beside(self, points: list[RootPoint]) -> None:
+        """Solves the nodes beside the roots, for their cuts."""
+        requests = []
+        for point in points:
+            beside = self.graph.roots[point.i_root].beside
+            if beside is not None:
+                group = self.engine.next_group()
+                requests.append(NodeRequest(*beside, point.state, point.capacity, group=group))
+        if requests:
+            self.n_cut += self.engine.add_cuts(self.engine.solve_batch(requests, self.clock))
+            self.n_solve += len(requests)
 
     def _root_tolerance(self, first: FirstStagePlan) -> float:
         """By how much the roots together may be too low, weighted."""
@@ -596,7 +626,7 @@ class _Run:
             return 0.0
         if not np.isfinite(gap):
             gap = self.options.first_gap_frac * max(abs(self.lower_bound), 1e-9)
-        return self.options.tolerance_share * gap / total
+        return self.options.tolerance_share * gap / (total * self.most_weight)
 
     def _select(self, point: RootPoint, is_partial: bool) -> BoolArray:
         """Which events to follow in this pass, (n,) over the exits that count."""
@@ -722,13 +752,16 @@ class _Run:
         by_root, n = [], 0
         for point in points:
             value = point.solution.value
+            extra = np.zeros(len(point.solution.theta))
             for e, weight, child in zip(
                 point.exits.index, point.exits.weight, point.exits.child, strict=True
             ):
                 upper = self.engine._follower.upper((int(child[0]), int(child[1])))
-                value += float(weight) * max(upper - float(point.solution.theta[e]), 0.0)
+                more = float(weight) * max(upper - float(point.solution.theta[e]), 0.0)
+                value += more
+                extra[e] += more
                 n += 1
-            by_root.append(value)
+            by_root.append(value if point.outcomes is None else point.value(extra))
         weights = [r.weight for r in self.graph.roots]
         high = first.cost + sum(w * v for w, v in zip(weights, by_root, strict=True))
         return CostEstimate(high, high, high, False, 0, tuple(by_root), n_unmeasured=n)

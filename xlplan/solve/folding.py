@@ -51,18 +51,23 @@ class Folding:
 
     Attributes
     ----------
-    kept : (n_kept,), program columns that are left
+    kept : (n_kept,), program columns that are left, those in ``apart`` excepted
     row, column : (n_fold,), rows ``D`` and columns ``E``, in pairs
     """
 
-    def __init__(self, program: LinearProgram, matrix: RowMatrix) -> None:
+    def __init__(
+        self, program: LinearProgram, matrix: RowMatrix, apart: IntArray | None = None
+    ) -> None:
         folds = program.folds
         self.row, self.column = folds.row, folds.column
         self.n_col = program.n_col
         self._matrix = matrix
         is_folded = np.zeros(program.n_col, dtype=bool)
         is_folded[self.column] = True
-        self.kept = np.flatnonzero(~is_folded)
+        is_kept = ~is_folded
+        if apart is not None:
+            is_kept[apart] = False
+        self.kept = np.flatnonzero(is_kept)
         self._fold_of_column = np.full(program.n_col, -1, dtype=np.int64)
         self._fold_of_column[self.column] = np.arange(len(self.column))
         stage = np.repeat(folds.stage, np.diff(folds.start))

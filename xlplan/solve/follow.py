@@ -12,17 +12,23 @@ to their weights, which leaves only these differences to chance (the cuts are a 
 Nothing is added to the pools while a plan is followed, so that it is one policy that is measured.
 An exit that could not be followed is charged the upper bound of its child: the figure stays a
 bound from above.
+
+A root whose aim is no expectation (``Family.outcomes``) is not a sum of these differences: they are
+added to the values of the exits they belong to, and the aim is taken over the outcomes with these.
+A chain's difference goes to the exit it began at, over the chance that it was drawn there. So the
+value of every exit is without bias, and a mean of the worst ones is then biased upward (Jensen: the
+aim is convex in the values): as an upper end it is on the safe side.
 """
 
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
-from xlplan.model.value_graph import ValueGraph
+from xlplan.model.value_graph import Outcomes, ValueGraph
 from xlplan.solve.cut_pool import CutBatch
 from xlplan.solve.member_cache import MemberCache
 from xlplan.solve.node_solver import NodeRequest, NodeSolution
@@ -46,13 +52,32 @@ SolveBatch = Callable[[Sequence[NodeRequest]], Sequence[NodeSolution | None]]
 
 @dataclass
 class RootPoint:
-    """A root solved at the plan: what following starts from."""
+    """A root solved at the plan: what following starts from.
+
+    outcomes : what its aim is taken over, None where that is the expectation
+    """
 
     i_root: int
     capacity: FloatArray
     state: FloatArray
     solution: NodeSolution
     exits: Exits
+    outcomes: Outcomes | None = None
+
+    def value(self, extra: FloatArray) -> float:
+        """The aim if the exits cost ``extra`` (n_exit,) more than promised, times their chance."""
+        assert self.outcomes is not None
+        return self.outcomes.value(self._values(extra))
+
+    def slope(self, extra: FloatArray) -> FloatArray:
+        """Factor by which more at each exit counts beyond its chance, (n_exit,)."""
+        assert self.outcomes is not None
+        return self.outcomes.slope(self._values(extra))
+
+    def _values(self, extra: FloatArray) -> FloatArray:
+        theta = self.solution.theta.copy()
+        theta[self.exits.index] += extra[self.exits.index] / self.exits.weight
+        return theta
 
 
 @dataclass(frozen=True)
@@ -73,12 +98,16 @@ class Exits:
 
 @dataclass(frozen=True)
 class Term:
-    """An exit to be followed by sampling: its part of the root's value, child, state, theta."""
+    """An exit to be followed by sampling: its part of the root's value, child, state, theta.
+
+    origin : the exit of the root that it is, or is below
+    """
 
     weight: float
     child: tuple[int, int]
     state: FloatArray
     theta: float
+    origin: int = -1
 
 
 @dataclass(frozen=True)
@@ -113,9 +142,10 @@ class Following:
 
 @dataclass
 class Sampled:
-    """What chains found: their sums per root, and the cuts made on the way."""
+    """What chains found: their sums per root, the exits they began at, the cuts on the way."""
 
     sums: list[FloatArray]
+    origins: list[IntArray] = field(default_factory=list)
     weights: list[float] = field(default_factory=list)
     cuts: list[CutBatch] = field(default_factory=list)
     n_solve: int = 0
@@ -209,6 +239,7 @@ class Follower:
         """Follows every path; the estimate is exact for the cuts as they are."""
         found = Following(errors=[np.full(len(p.solution.theta), np.nan) for p in points])
         by_root = [p.solution.value for p in points]
+        extra = [np.zeros(len(p.solution.theta)) for p in points]
         n_unmeasured = 0
         front: list[tuple[int, int, float, tuple[int, int], FloatArray, float]] = []
         for i, point in enumerate(points):
@@ -222,17 +253,22 @@ class Follower:
             for (i, e, weight, child, _, theta), solution in zip(front, solutions, strict=True):
                 if solution is None or solution.has_failed:
                     by_root[i] += weight * (self.upper(child) - theta)
+                    extra[i][e] += weight * (self.upper(child) - theta)
                     n_unmeasured += 1
                     continue
                 found.n_solve += 1
                 found.cuts += solution.cuts
                 difference = weight * (solution.value - theta)
                 by_root[i] += difference
+                extra[i][e] += difference
                 before = found.errors[i][e]
                 found.errors[i][e] = difference + (0.0 if np.isnan(before) else before)
                 exits = self.exits(child[0], child[1], points[i].capacity)
                 following += self._front(i, exits, solution, weight, e)
             front = following
+        for i, point in enumerate(points):
+            if point.outcomes is not None:
+                by_root[i] = point.value(extra[i])
         mean = first_stage_cost + sum(
             self.graph.roots[p.i_root].weight * value
             for p, value in zip(points, by_root, strict=True)
@@ -300,7 +336,8 @@ class Follower:
                         places.append((i, j))
                 else:
                     weight = float(point.exits.weight[j])
-                    terms[i].append(_term(point.exits, point.solution, j, weight))
+                    e = int(point.exits.index[j])
+                    terms[i].append(_term(point.exits, point.solution, j, weight, e))
         # One kept model after the other, each in the order of its members: nearby states follow.
         places.sort(key=lambda p: (*points[p[0]].exits.child[p[1]].tolist(), p))
         requests = []
@@ -308,6 +345,7 @@ class Follower:
             child = (int(points[i].exits.child[j, 0]), int(points[i].exits.child[j, 1]))
             requests.append(first_request(points[i], j, child))
         by_root = [p.solution.value for p in points]
+        extra = [np.zeros(len(p.solution.theta)) for p in points]
         n_unmeasured = 0
         for (i, j), solution in zip(places, solve(requests), strict=True):
             point = points[i]
@@ -316,13 +354,15 @@ class Follower:
             child = (int(point.exits.child[j, 0]), int(point.exits.child[j, 1]))
             if solution is None or solution.has_failed:
                 by_root[i] += weight * (self.upper(child) - theta)
+                extra[i][e] += weight * (self.upper(child) - theta)
                 n_unmeasured += 1
                 continue
             found.n_solve += 1
             found.cuts += solution.cuts
             found.errors[i][e] = weight * (solution.value - theta)
             by_root[i] += found.errors[i][e]
-            terms[i] += self._terms_below(child, solution, weight, point.capacity)
+            extra[i][e] += found.errors[i][e]
+            terms[i] += self._terms_below(child, solution, weight, point.capacity, e)
         found.expanded_part = sum(
             self.graph.roots[p.i_root].weight * float(np.nansum(error))
             for p, error in zip(points, found.errors, strict=True)
@@ -335,6 +375,8 @@ class Follower:
         found.sampled_part, found.half_width = sampled.total, sampled.half_width
         if not is_partial:
             by_root = [value + mean for value, mean in zip(by_root, sampled.means, strict=True)]
+            if any(p.outcomes is not None for p in points):
+                self._apply_aims(points, extra, sampled, by_root, found)
             weights = [self.graph.roots[p.i_root].weight for p in points]
             mean = first_stage_cost + sum(w * v for w, v in zip(weights, by_root, strict=True))
             found.estimate = CostEstimate(
@@ -348,12 +390,38 @@ class Follower:
             )
         return found
 
+    @staticmethod
+    def _apply_aims(
+        points: Sequence[RootPoint],
+        extra: Sequence[FloatArray],
+        sampled: Sampled,
+        by_root: list[float],
+        found: Following,
+    ) -> None:
+        """Puts values under an aim in the place of sums, and the interval of the aim."""
+        counted = list(sampled.sums)
+        for i, point in enumerate(points):
+            if point.outcomes is None:
+                continue
+            more, sums, origins = extra[i], sampled.sums[i], sampled.origins[i]
+            if len(sums):
+                more = more + np.bincount(origins, sums / len(sums), len(more))
+            by_root[i] = point.value(more)
+            counted[i] = sums * point.slope(more)[origins]
+        found.half_width = replace(sampled, sums=counted).half_width
+
     def _terms_below(
-        self, node: tuple[int, int], solution: NodeSolution, weight: float, capacity: FloatArray
+        self,
+        node: tuple[int, int],
+        solution: NodeSolution,
+        weight: float,
+        capacity: FloatArray,
+        origin: int,
     ) -> list[Term]:
         exits = self.exits(node[0], node[1], capacity)
         return [
-            _term(exits, solution, j, weight * float(exits.weight[j])) for j in range(len(exits))
+            _term(exits, solution, j, weight * float(exits.weight[j]), origin)
+            for j in range(len(exits))
         ]
 
     def sample(
@@ -393,10 +461,12 @@ class Follower:
             share = weights[i] / sum(weights) if weights[i] > 0.0 else 0.0
             n = max(2, int(np.ceil(n_sample * share))) if n_sample and share > 0.0 else 0
             found.sums.append(np.zeros(n))
+            found.origins.append(np.zeros(n, dtype=np.int64))
             if n:
                 chance = np.array([t.weight for t in below])
                 whole = float(chance.sum())
                 for j, pick in enumerate(rng.choice(len(below), size=n, p=chance / whole)):
+                    found.origins[i][j] = below[int(pick)].origin
                     front.append(_Step(i, j, whole, whole, whole, below[int(pick)]))
         for _ in range(MAX_DEPTH):
             if not front:
@@ -452,10 +522,10 @@ class Follower:
         ]
 
 
-def _term(exits: Exits, solution: NodeSolution, j: int, weight: float) -> Term:
+def _term(exits: Exits, solution: NodeSolution, j: int, weight: float, origin: int = -1) -> Term:
     e = int(exits.index[j])
     child = (int(exits.child[j, 0]), int(exits.child[j, 1]))
-    return Term(weight, child, solution.out_states[e], float(solution.theta[e]))
+    return Term(weight, child, solution.out_states[e], float(solution.theta[e]), origin)
 
 
 def student_factor(freedom: float) -> float:

@@ -92,12 +92,15 @@ class NodeModel:
         self.n_col, self.n_exit = program.n_col, len(family.exit_gate)
         self.counts: Counter[str] = Counter()
         self._matrix = RowMatrix(program, is_changed=len(family.patch) > 0)
-        self._folding = Folding(program, self._matrix)
+        self._theta_columns = family.exit_columns
+        self._folding = Folding(program, self._matrix, self._theta_columns)
         kept = self._folding.kept
         self.n_kept = len(kept)
         # Column of the model that holds each program column; exits stand behind the kept ones.
         self._column_place = np.full(self.n_col, -1, dtype=np.int32)
         self._column_place[kept] = np.arange(self.n_kept)
+        if self._theta_columns is not None:
+            self._column_place[self._theta_columns] = self.n_kept + np.arange(self.n_exit)
         self._lazy = LazyRows(np.flatnonzero(program.is_lazy), self._matrix)
         self._find_differences()
         now = self._now
@@ -230,6 +233,8 @@ class NodeModel:
         """``y`` of the program, (n_col,), from the model's columns."""
         y = np.empty(self.n_col)
         y[self._folding.kept] = primal[: self.n_kept]
+        if self._theta_columns is not None:
+            y[self._theta_columns] = primal[self.n_kept :]
         if len(self._folding):
             self._folding.complete(y, self._now.fold_side)
         return y
@@ -276,6 +281,8 @@ class NodeModel:
         cost = self._cost.copy()
         cost[self._moving] = now.cost[self._moving_column]
         cost[self.n_kept :] = numbers.exit_weight
+        if self._theta_columns is not None:
+            cost[self.n_kept :] += now.cost[self._theta_columns]
         moved = (cost != self._cost).nonzero()[0]
         self._model.set_costs(moved, cost[moved])
         self._cost = cost

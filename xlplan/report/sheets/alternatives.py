@@ -132,6 +132,10 @@ def _write_assumptions(book: SafeBook, result: StudyResult) -> None:
     book.define_name(STUDY_LIFE, ALTERNATIVES, f"$B${LIFE_ROW + 1}")
 
 
+OF_WEIGHTED_COST = "see Convergence"
+"""Bound and gap belong to the weighted cost where bad outcomes have a weight."""
+
+
 def _cost_cells(
     plan: PlanResult, i: int, cells: AlternativesCells, plan_cells: PlanCells
 ) -> dict[str, Cell]:
@@ -152,12 +156,12 @@ def _cost_cells(
         "total": Formula(f"={cells.here('utility', i)}+{cells.here('customers', i)}", costs.total),
         "low": plan.cost_interval[0],
         "high": plan.cost_interval[1],
-        "bound": plan.lower_bound,
+        "bound": plan.lower_bound if plan.aim is None else OF_WEIGHTED_COST,
         "demand_kw": plan.demand_kw,
         "shed_kwh": plan.normal_shed_kwh,
         "burnt_kwh": plan.burnt_kwh,
         "own_clock": plan.interruption_own_clock,
-        "gap": plan.gap_frac,
+        "gap": plan.gap_frac if plan.aim is None else OF_WEIGHTED_COST,
         "gross": Formula(f"={totals.away(i, 'gross')}", plan.capital_gross),
         "net": Formula(f"={totals.away(i, 'net')}", plan.capital_cost),
         "grants": Formula(

@@ -118,6 +118,13 @@ CAUTION_TEXTS = (
         "The utility's finance staff; the regulator",
     ),
     (
+        "A weight on bad outcomes",
+        "Where the study sets one, bad outcomes are the worst of single window occurrences: "
+        "nothing fails, or a first failure with the average of what may follow. They are no bad "
+        "years and no series of failures, and the plan may cost more on average.",
+        "The board's judgement; the same study with weight 0",
+    ),
+    (
         "Statistical figures",
         "Costs found by sampling have an interval, and another seed gives other figures within "
         "about that interval. A difference whose interval includes 0 is no finding.",

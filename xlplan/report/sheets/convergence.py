@@ -7,11 +7,11 @@ import math
 from xlplan.base.units import pct_from_frac
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import ConvergenceRow, PlanResult
-from xlplan.report import charts
-from xlplan.report.grid import Cell, Grid, set_widths
+from xlplan.report import charts, wording
+from xlplan.report.grid import Cell, Formula, Grid, set_widths
 from xlplan.report.looks import BLACK, BLUE, VERMILION
 from xlplan.report.safe_book import SafeBook
-from xlplan.report.tables import CONVERGENCE, METHODS, PASSES
+from xlplan.report.tables import AIMS, CONVERGENCE, METHODS, PASSES
 
 WIDTHS = (26, 17, 17, 17, 17, 17, 15, 15, 13, 30, 12)
 CHART_ROWS = 19
@@ -30,6 +30,10 @@ MEANINGS = (
 )
 
 
+SEE_BELOW = "see below"
+"""In the place of figures that are those of the weighted cost."""
+
+
 def write(book: SafeBook, result: StudyResult) -> None:
     """Writes the sheet."""
     sheet = book.sheet(CONVERGENCE)
@@ -38,7 +42,7 @@ def write(book: SafeBook, result: StudyResult) -> None:
     sheet.head("How far the solver got", f"Status: {result.status}; {target}; seed {result.seed}.")
     set_widths(sheet, WIDTHS, METHODS)
     row = 3
-    for meaning in MEANINGS:
+    for meaning in (*wording.aim_words(best, result.currency), *_aim_meaning(best), *MEANINGS):
         sheet.paragraph(row, 0, len(WIDTHS) - 1, meaning, 205)
         row += 1
     chart_row = row + 1
@@ -49,6 +53,13 @@ def write(book: SafeBook, result: StudyResult) -> None:
     methods.write(sheet, [_method_row(plan) for plan in result.plans], marked)
     sheet.text(methods.below, 0, f"Why this method: {result.method_reason}", "note")
     row = methods.below + 2
+    if best.aim is not None:
+        aimed = [plan for plan in result.plans if plan.aim is not None]
+        sheet.text(row, 0, "Weighted cost: what plans are chosen by", "section")
+        aims = Grid(CONVERGENCE, row + 1, AIMS, len(aimed))
+        marked = [i for i, plan in enumerate(aimed) if plan.name == best.name]
+        aims.write(sheet, [_aim_row(plan, aims, i) for i, plan in enumerate(aimed)], marked)
+        row = aims.below + 1
     passes = Grid(CONVERGENCE, row + 1, PASSES, len(best.convergence))
     sheet.text(row, 0, f"Passes of the solver: {best.name}", "section")
     passes.write(sheet, [_pass_row(one) for one in best.convergence])
@@ -57,16 +68,46 @@ def write(book: SafeBook, result: StudyResult) -> None:
     sheet.print_setup(passes.below, len(METHODS) - 1, heading_row=passes.top)
 
 
+def _aim_meaning(best: PlanResult) -> tuple[str, ...]:
+    """What the figures below are where bad outcomes have a weight."""
+    if best.aim is None:
+        return ()
+    return (
+        "Lower bound, gap and the passes of the solver are those of the weighted cost. Outcomes of "
+        "a window are: nothing fails, or the first failure with the expected cost of what follows. "
+        "Where that is sampled the mean of the worst comes out a little too high, so the upper end "
+        "is on the safe side.",
+    )
+
+
+def _aim_row(plan: PlanResult, grid: Grid, i: int) -> dict[str, Cell]:
+    aim = plan.aim
+    assert aim is not None
+    expected, tail = grid.here(i, "expected"), grid.here(i, "tail")
+    weight = f"{aim.weight_frac:.6g}"
+    return {
+        "name": plan.name,
+        "bound": plan.lower_bound,
+        "expected": aim.expected,
+        "tail": aim.tail,
+        "total": Formula(f"=(1-{weight})*{expected}+{weight}*{tail}", aim.total),
+        "low": aim.interval[0],
+        "high": aim.interval[1],
+        "ceiling": plan.bound_upper,
+        "gap": plan.gap_frac,
+    }
+
+
 def _method_row(plan: PlanResult) -> dict[str, Cell]:
     counted = "every path counted" if plan.is_enumerated else f"{plan.n_sample:,} sampled histories"
     return {
         "name": plan.name,
-        "bound": plan.lower_bound,
+        "bound": plan.lower_bound if plan.aim is None else SEE_BELOW,
         "cost": plan.costs.total,
         "low": plan.cost_interval[0],
         "high": plan.cost_interval[1],
-        "ceiling": plan.bound_upper,
-        "gap": plan.gap_frac,
+        "ceiling": plan.bound_upper if plan.aim is None else SEE_BELOW,
+        "gap": plan.gap_frac if plan.aim is None else SEE_BELOW,
         "status": plan.status,
         "method": plan.method,
         "counted": counted,

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from xlsxwriter.chart import Chart
 
+from xlplan.base.units import pct_from_frac
 from xlplan.compare.study_result import StudyResult
 from xlplan.evaluate.results import EventSpread, PlanResult, WorstEvent
 from xlplan.report import charts
@@ -37,7 +38,7 @@ def write(book: SafeBook, result: StudyResult) -> None:
     sheet.head(
         "How bad can it get",
         f"Existing feeder and plan ({best.name}): simulated years, single outage events, and the "
-        "worst scenarios. The plan minimises the expected cost, not the risk.",
+        f"worst scenarios. {_aim(best)}",
     )
     set_widths(sheet, WIDTHS, SPREAD, WORST_EVENTS)
     rows = _figures(base, best)
@@ -80,6 +81,17 @@ def _steps(sheet: SafeSheet, best: PlanResult, row: int) -> list[Grid]:
         one.write(sheet, [{"low": a, "high": b, "weight": weight} for a, b, weight in bins])
         grids.append(one)
     return grids
+
+
+def _aim(best: PlanResult) -> str:
+    """What the plan was chosen by."""
+    if best.aim is None:
+        return "The plan minimises the expected cost, not the risk."
+    weight, tail = pct_from_frac(best.aim.weight_frac), pct_from_frac(best.aim.tail_frac)
+    return (
+        f"The plan minimises {100.0 - weight:g} % of the expected cost and {weight:g} % of the "
+        f"mean of the worst {tail:g} % of outcomes of each window (not of the years below)."
+    )
 
 
 def _figures(base: PlanResult, best: PlanResult) -> list[dict[str, Cell]]:
