@@ -54,6 +54,7 @@ class NodeRequest:
     group : number of the cuts made, -1 for no cuts
     share : other members for which the same multipliers are tried, or None
     cut_tolerance : how much too low the value may be for want of the children's last cuts
+    known : no cut is made where the value is no higher than this
     wants_primal : whether ``y`` is handed back
     """
 
@@ -66,6 +67,7 @@ class NodeRequest:
     group: int = -1
     share: Share | None = None
     cut_tolerance: float = 0.0
+    known: float = float("-inf")
     wants_primal: bool = False
 
 
@@ -160,7 +162,7 @@ class NodeSolver:
         self, model: NodeModel, outcome: NodeOutcome, request: NodeRequest, state: FloatArray
     ) -> tuple[CutBatch, ...]:
         """Cuts of the node and of others by sharing; a cut far off the objective is counted."""
-        if request.group < 0:
+        if request.group < 0 or outcome.value <= request.known:
             return ()
         cut = model.cut_from(outcome, request.member, request.group)
         reached = cut.take(np.arange(1)).values(state[None, :], request.capacity)[0]
