@@ -250,7 +250,7 @@ class PlanSolver:
     def estimated_cost(self, wish: Wish) -> float:
         """Yearly cost of given purchases, without following them where the cuts know it closely.
 
-        The bound, and what a part of the events found the cuts not to know, scaled to all events.
+        The bound, and what looks at a part of the events, scaled to all of them, see above it.
         Where that is more than the wish's closeness the plan is followed.
         """
         if self.method == "tree" or wish.fixed is None or wish.closeness is None:
@@ -327,26 +327,30 @@ class PlanSolver:
         bounds = self._bounds(self.graph, wish)
         bound, n_new = -math.inf, 0
         rows: list[ConvergenceRow] = []
+        self.on_progress(Progress(name, "solving"))
+        has_looked = not self._followed
+        found = self._proposed(bounds, closeness, MOST_LOOKS if has_looked else 0, deadline)
         while True:
-            self.on_progress(Progress(name, "solving", bound if rows else None))
-            best = self._best_known(wish)
-            # Where there is no plan yet that might serve, the cuts alone need not be asked.
-            found = self._proposed(bounds, closeness, MOST_LOOKS if best is None else 0, deadline)
             bound = max(bound, found.lower_bound + self.device_yearly)
+            best = self._best_known(wish)
             if best is not None:
                 cost, plan = best
                 high = cost + plan.follow.half_width
-                seconds = time.monotonic() - started
                 gap = _gap(high, bound, cost)
+                seconds = time.monotonic() - started
                 rows.append(ConvergenceRow(seconds, bound, cost, high, gap, "plan followed"))
                 is_over = time.monotonic() >= deadline or self.should_stop()
                 if high - bound <= closeness or n_new >= MOST_ROUNDS or is_over:
                     break
+            # Given purchases are followed at once: what was learnt of other plans is mostly enough.
+            if not has_looked and (wish.fixed is None or n_new > 0):
                 found = self._proposed(bounds, closeness, MOST_LOOKS, deadline)
-                bound = max(bound, found.lower_bound + self.device_yearly)
+                has_looked = True
+                continue
             self.on_progress(Progress(name, "following the plan", bound))
             self._follow_briefly(found, closeness)
-            n_new += 1
+            n_new, has_looked = n_new + 1, False
+            found = self._proposed(bounds, closeness, 0, deadline)
         facts = PlanFacts(
             name=name,
             kind=wish.kind,

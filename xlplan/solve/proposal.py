@@ -15,7 +15,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from xlplan.solve.decomposition import Engine, _Run
-from xlplan.solve.first_stage import FirstStagePlan
 from xlplan.solve.follow import Following, RootPoint
 from xlplan.solve.node_solver import Measure, NodeRequest, NodeSolution
 from xlplan.solve.stopping import Clock
@@ -28,8 +27,8 @@ class Proposal:
     """A decision that was not followed.
 
     x (n_x,), capacities per root, first_stage_cost; lower_bound : of everything within the bounds
-    of ``x``; open_abs : what the last look found the cuts not to know, of all events, infinite
-    where there was none; event_tolerance : by how much an event's value may be too low for that
+    of ``x``; open_abs : distance to it from the lowest cost of following that the looks saw of a
+    decision within the bounds, infinite where there was no look; event_tolerance : by how much an event's value may be too low for that
     """
 
     x: FloatArray
@@ -54,8 +53,8 @@ def propose(
     ----------
     engine : Engine, whose cuts are used and added to
     x_bounds : pair of arrays, shape (n_x,)
-    closeness_abs : money per year; a look that finds no more open than this is the last one, and
-        first stage and roots agree to a part of it
+    closeness_abs : money per year; when no more than this is seen to be open there is no further
+        look, and first stage and roots agree to a part of it
     n_look : most looks; 0 where the cuts as they are have to do
     deadline : value of ``time.monotonic()`` after which there is no further look, or None
     should_stop : asked now and then
@@ -71,11 +70,12 @@ def propose(
     run.is_integer_phase = True
     run.is_enumerating = engine._n_path <= engine.options.enumerate_up_to
     run.gap_abs = closeness_abs if engine.is_warm else np.inf
-    open_abs, n_done = np.inf, 0
+    cost, n_done = np.inf, 0
     while True:
         if run.lower_bound > -np.inf:
             run.target = closeness_abs / max(abs(run.lower_bound), 1e-9)
         points = run._agree(is_first=not np.isfinite(run.gap_abs))
+        open_abs = max(cost - run.lower_bound, 0.0)
         if n_done >= n_look or open_abs <= closeness_abs or run.clock.should_stop():
             break
         is_partial = not run.is_enumerating and (
@@ -84,9 +84,9 @@ def propose(
         found = run._look(points, is_partial)
         engine.add_cuts_of(found)
         n_done += 1
-        open_abs = _open_of(run, points, found)
+        cost = min(cost, _seen_cost(run, points, found))
         run._record(found)
-        run.gap_abs = max(closeness_abs, open_abs)
+        run.gap_abs = max(closeness_abs, cost - run.lower_bound)
     engine.is_warm = engine.is_warm or n_done > 0
     run.gap_abs = closeness_abs
     first = run.current
@@ -101,15 +101,18 @@ def propose(
     )
 
 
-def _open_of(run: _Run, points: Sequence[RootPoint], found: Following) -> float:
-    """What a look found that the cuts did not know."""
-    if not run.is_enumerating:
-        return max(run._open_seen, 0.0)
-    first: FirstStagePlan | None = run.current
+def _seen_cost(run: _Run, points: Sequence[RootPoint], found: Following) -> float:
+    """Cost of following by what a look found of it, scaled to all events.
+
+    The look is at events that mattered before and a part of the others, so it is rather too high.
+    """
+    if run.is_enumerating:
+        assert found.estimate is not None
+        return found.estimate.mean
+    first = run.current
     assert first is not None
-    assert found.estimate is not None
     known = sum(run.graph.roots[p.i_root].weight * p.solution.value for p in points)
-    return max(found.estimate.mean - first.cost - known, 0.0)
+    return first.cost + known + max(run._open_seen, 0.0)
 
 
 class LearningService:
