@@ -258,7 +258,7 @@ class PlanSolver:
         bounds = self._bounds(self.graph, wish)
         self.on_progress(Progress(wish.name, "solving"))
         deadline = time.monotonic() + self._limit_s(wish) * (1.0 - RESERVE)
-        found = self._proposed(bounds, wish.closeness, MOST_LOOKS, deadline)
+        found = self._proposed(bounds, wish.closeness, MOST_LOOKS, deadline, draws_chains=True)
         if found.open_abs > wish.closeness:
             return self.solve_wish(wish).result.costs.total
         return found.lower_bound + found.open_abs + self.device_yearly
@@ -377,8 +377,11 @@ class PlanSolver:
         closeness: float,
         n_look: int,
         deadline: float,
+        draws_chains: bool = False,
     ) -> Proposal:
-        return propose(self.engine, bounds, closeness, n_look, deadline, self.should_stop)
+        return propose(
+            self.engine, bounds, closeness, n_look, deadline, self.should_stop, draws_chains
+        )
 
     def _follow_briefly(self, found: Proposal, closeness: float) -> None:
         """Follows a proposal and remembers it; what its events teach goes to the engine."""

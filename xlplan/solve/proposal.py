@@ -22,13 +22,18 @@ from xlplan.solve.stopping import Clock
 FloatArray = NDArray[np.float64]
 
 
+NOTHING_NEW = 1e-9
+"""Relative difference of a node's value and of what the cuts knew that is rounding."""
+
+
 @dataclass(frozen=True)
 class Proposal:
     """A decision that was not followed.
 
     x (n_x,), capacities per root, first_stage_cost; lower_bound : of everything within the bounds
-    of ``x``; open_abs : distance to it from the lowest cost of following that the looks saw of a
-    decision within the bounds, infinite where there was no look; event_tolerance : by how much an event's value may be too low for that
+    of ``x``; open_abs : distance to it from the cost of following that the last look saw,
+    infinite where there was no look; event_tolerance : by how much an
+    event's value may be too low for that
     """
 
     x: FloatArray
@@ -46,6 +51,7 @@ def propose(
     n_look: int,
     deadline: float | None = None,
     should_stop: Callable[[], bool] | None = None,
+    draws_chains: bool = False,
 ) -> Proposal:
     """Finds a decision within bounds, in whole numbers.
 
@@ -58,6 +64,8 @@ def propose(
     n_look : most looks; 0 where the cuts as they are have to do
     deadline : value of ``time.monotonic()`` after which there is no further look, or None
     should_stop : asked now and then
+    draws_chains : whether every look also estimates what comes after the events it looked at; a
+        plan that is followed afterwards anyhow does not need it
 
     Returns
     -------
@@ -84,7 +92,8 @@ def propose(
         found = run._look(points, is_partial)
         engine.add_cuts_of(found)
         n_done += 1
-        cost = min(cost, _seen_cost(run, points, found))
+        chains = _chains(run, points, found) if draws_chains else found.sampled_part
+        cost = _seen_cost(run, points, found) + chains
         run._record(found)
         run.gap_abs = max(closeness_abs, cost - run.lower_bound)
     engine.is_warm = engine.is_warm or n_done > 0
@@ -102,17 +111,47 @@ def propose(
 
 
 def _seen_cost(run: _Run, points: Sequence[RootPoint], found: Following) -> float:
-    """Cost of following by what a look found of it, scaled to all events.
+    """Cost of following by what a look found of it, scaled to all events, without what comes after.
 
     The look is at events that mattered before and a part of the others, so it is rather too high.
+    Infinite where it left out all events of a root.
     """
     if run.is_enumerating:
         assert found.estimate is not None
         return found.estimate.mean
+    if any(len(p.exits) and np.isnan(e).all() for p, e in zip(points, found.errors, strict=True)):
+        return float("inf")
     first = run.current
     assert first is not None
     known = sum(run.graph.roots[p.i_root].weight * p.solution.value for p in points)
-    return first.cost + known + max(run._open_seen, 0.0)
+    return first.cost + known + max(run._open_seen - found.sampled_part, 0.0)
+
+
+def _chains(run: _Run, points: Sequence[RootPoint], found: Following) -> float:
+    """What chains from the events of a look find open after them, scaled to all events."""
+    if run.is_enumerating:
+        return 0.0
+    engine, tolerance = run.engine, run._event_tolerance(list(points))
+
+    def request(child: tuple[int, int], state: FloatArray, capacity: FloatArray) -> NodeRequest:
+        return NodeRequest(
+            child[0],
+            child[1],
+            state,
+            capacity,
+            group=engine.next_group(),
+            cut_tolerance=tolerance,
+        )
+
+    drawn = run._chain(list(points), request)
+    if drawn is None:
+        return 0.0
+    total = seen = 0.0
+    for point, error in zip(points, found.errors, strict=True):
+        weight = run.graph.roots[point.i_root].weight * point.exits.weight
+        total += float(weight.sum())
+        seen += float(weight[~np.isnan(error[point.exits.index])].sum())
+    return drawn.total * total / seen if seen > 0.0 else float("inf")
 
 
 class LearningService:
@@ -158,5 +197,5 @@ class LearningService:
             request,
             group=engine.next_group(),
             cut_tolerance=self.tolerance,
-            known=float(known[0]) + self.tolerance,
+            known=float(known[0]) + self.tolerance + NOTHING_NEW * abs(float(known[0])),
         )
