@@ -347,6 +347,8 @@ class PlanSolver:
                 found = self._proposed(bounds, closeness, MOST_LOOKS, deadline)
                 has_looked = True
                 continue
+            if self.should_stop():
+                raise NoPlanError(f"Stopped before there was a plan for '{name}'.")
             self.on_progress(Progress(name, "following the plan", bound))
             self._follow_briefly(found, closeness)
             n_new, has_looked = n_new + 1, False
