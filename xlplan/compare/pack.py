@@ -322,8 +322,8 @@ class PackMaker:
     ) -> tuple[SolvedPlan, SolvedPlan, dict[str, float]]:
         """Plan kept, plan made anew, costs of alternatives, where more than prices differs.
 
-        Alternatives that buy the same share a figure; that of the others is what their search
-        measures, since nothing but their cost is shown.
+        Alternatives that buy the same share a figure; that of the others is estimated, since
+        nothing but their cost is shown.
         """
         feeder = build_feeder(study)
         windows = build_window_models(study, feeder)
@@ -331,9 +331,9 @@ class PackMaker:
         with PlanSolver(
             study, feeder, windows, base.options, base.on_progress, base.should_stop
         ) as solver:
-            anew = self._solve(solver, self._wish(f"{name}: made anew"))
+            # The plan kept comes first: it may be good enough, and its cuts are near the best ones.
             kept = self._solve(solver, self._wish(f"{name}: {own_name}", self.best.bought))
-            anew = self._better(anew, kept)
+            anew = self._better(self._solve(solver, self._wish(f"{name}: made anew")), kept)
             totals = {own_name: kept.result.costs.total}
             known = [(self.best.bought, kept.result.costs.total)]
             for other in (self.existing, *self._contenders()) if with_others else ():
