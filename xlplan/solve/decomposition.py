@@ -147,7 +147,7 @@ class Engine:
         )
         self._n_group = 0
         self.is_warm = False
-        """Whether an earlier run has got as far as whole numbers: later ones begin there."""
+        """Whether an earlier search has got as far as whole numbers: later ones begin there."""
         self._n_replica_used = 0
         self._n_path = self._follower.n_path(self.options.enumerate_up_to + 1)
         self._seconds_per_full: float = 0.0
@@ -289,7 +289,8 @@ class Engine:
             reason = StopReason.INTERRUPTED
         if reason is not StopReason.GAP_REACHED:
             run.save()
-        self.is_warm = self.is_warm or run.is_integer_phase
+        has_choice = self._first_stage.has_integers  # given decisions say little of the others
+        self.is_warm = self.is_warm or (run.is_integer_phase and has_choice)
         return run.result(reason)
 
     # -- parts used by the run -----------------------------------------------------------------
