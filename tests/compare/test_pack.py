@@ -203,7 +203,8 @@ def test_repair_times_against_single_runs(study, pack, made):
         # Two hours times the factor, in whole hours.
         assert p.mean_event_h == pytest.approx(np.ceil(2.0 * p.factor))
     eens = [p.kept.indices.eens_kwh for p in pack.repair_time]
-    assert eens == sorted(eens)
+    # Factors that round to the same periods differ by what the solver leaves open.
+    assert all(b >= a * (1.0 - 1e-6) for a, b in pairwise(eens))
 
 
 def test_an_hour_faster(pack, made):

@@ -47,6 +47,21 @@ def test_milp_has_no_duals_and_a_proven_bound():
         _ = result.row_dual
 
 
+def test_a_start_point_is_not_taken_for_the_optimum():
+    """min 0.8 x + phi, phi >= 9 - 2 x: half of 9 for x, 3.6. At x = 0, phi = 9 it costs 9."""
+    builder = ProgramBuilder()
+    x = builder.add_column("x", 0.0, 10.0, 0.8)
+    size = builder.add_column("size", 0.0, 10.0, 1.5)
+    site = builder.add_column("site", 0.0, 1.0, 4.0, True)
+    phi = builder.add_column("phi", 0.0, np.inf, 1.0)
+    builder.add_row("site", [(size, 1.0), (site, -10.0)], upper=0.0)
+    builder.add_row("cut", [(x, 2.0), (size, 2.1), (phi, 1.0)], lower=9.0)
+    result = solve_program(builder.build(), start_point=np.array([0.0, 0.0, 0.0, 9.0]))
+    assert result.objective == pytest.approx(3.6)
+    assert result.bound == pytest.approx(3.6)
+    assert result.col_value[x] == pytest.approx(4.5)
+
+
 def test_infeasible_program_has_no_values():
     program = replace(_program(), row_lower=np.array([100.0]), row_upper=np.array([200.0]))
     result = solve_program(program)

@@ -11,6 +11,7 @@ from __future__ import annotations
 import logging
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field, replace
+from functools import partial
 from typing import TypeVar
 
 import numpy as np
@@ -49,6 +50,12 @@ SHEETS_OF = {"line hardening": "Hardening", "repair times": "Outage assumptions"
 REPAIR_FACTORS = (0.5, 0.75, 1.0, 1.5, 2.0)
 SIZE_SHARE = 0.1
 """A size that moves by less than this share of itself leaves the plan as it was."""
+
+CLOSE_SHARE = 0.05
+"""Points of curves are searched to this share of what the least-cost plan saves,"""
+
+LEAST_CLOSE, MOST_CLOSE = 0.02, 0.2
+"""but not to less or more than these shares of the target gap."""
 
 LEAST_SECONDS = 5.0
 """Small studies may search this long for a point, however fast their plan was found."""
@@ -180,7 +187,16 @@ class PackMaker:
             fixed=fixed,
             is_brief=True,
             limit_s=self.limit_s,
+            closeness=self.closeness,
         )
+
+    @property
+    def closeness(self) -> float:
+        """Money per year by which a point may miss its optimum: little of what the plan saves."""
+        total, target = self.best.result.costs.total, self.solver.options.gap_target_frac
+        saving = abs(self.existing.result.costs.total - total)
+        least, most = (share * target * abs(total) for share in (LEAST_CLOSE, MOST_CLOSE))
+        return min(max(CLOSE_SHARE * saving, least), most)
 
     # -- hardening -----------------------------------------------------------------------------
 
@@ -306,8 +322,8 @@ class PackMaker:
     ) -> tuple[SolvedPlan, SolvedPlan, dict[str, float]]:
         """Plan kept, plan made anew, costs of alternatives, where more than prices differs.
 
-        Alternatives that buy the same share a figure; that of the others is what their search
-        measures, since nothing but their cost is shown.
+        Alternatives that buy the same share a figure; that of the others is estimated, since
+        nothing but their cost is shown.
         """
         feeder = build_feeder(study)
         windows = build_window_models(study, feeder)
@@ -315,9 +331,9 @@ class PackMaker:
         with PlanSolver(
             study, feeder, windows, base.options, base.on_progress, base.should_stop
         ) as solver:
-            anew = self._solve(solver, self._wish(f"{name}: made anew"))
+            # The plan kept comes first: it may be good enough, and its cuts are near the best ones.
             kept = self._solve(solver, self._wish(f"{name}: {own_name}", self.best.bought))
-            anew = self._better(anew, kept)
+            anew = self._better(self._solve(solver, self._wish(f"{name}: made anew")), kept)
             totals = {own_name: kept.result.costs.total}
             known = [(self.best.bought, kept.result.costs.total)]
             for other in (self.existing, *self._contenders()) if with_others else ():
@@ -358,28 +374,25 @@ class PackMaker:
     def sensitivities(self) -> list[SensitivityCase]:
         """Every row of the sheet, low and high."""
         cases = []
-        prices = _price_cases(self.study)
-        for row in self.study.sensitivities:
-            for value, is_high in ((row.low, False), (row.high, True)):
-                what = f"{row.parameter} {'high' if is_high else 'low'}"
-                price = next((i for i, (r, v) in enumerate(prices) if r is row and v == value), -1)
-
-                def work(
-                    row: Sensitivity = row,
-                    value: float = value,
-                    is_high: bool = is_high,
-                    price: int = price,
-                ) -> SensitivityCase:
-                    return self._sensitivity(row, value, is_high, price)
-
-                found = self._try(what, work, row.origin)
-                if found is not None:
-                    cases.append(found)
+        for row, value, is_high in self.cases():
+            what = f"{row.parameter} {'high' if is_high else 'low'}"
+            found = self._try(what, partial(self.case, row, value, is_high), row.origin)
+            if found is not None:
+                cases.append(found)
         return cases
 
-    def _sensitivity(
-        self, row: Sensitivity, value: float, is_high: bool, price: int
-    ) -> SensitivityCase:
+    def cases(self) -> list[tuple[Sensitivity, float, bool]]:
+        """Row, value and whether it is the high one, of everything that is varied."""
+        return [
+            (row, value, is_high)
+            for row in self.study.sensitivities
+            for value, is_high in ((row.low, False), (row.high, True))
+        ]
+
+    def case(self, row: Sensitivity, value: float, is_high: bool) -> SensitivityCase:
+        """One assumption at one value."""
+        prices = _price_cases(self.study)
+        price = next((i for i, (r, v) in enumerate(prices) if r is row and v == value), -1)
         name = f"{row.parameter.capitalize()} {'high' if is_high else 'low'}"
         if price >= 0:
             kept, anew, totals = self._at_prices(name, price)

@@ -41,6 +41,7 @@ from xlplan.model.whole_tree import build_whole_tree
 from xlplan.network.feeder import Feeder
 from xlplan.outages.window_model import WindowModel
 from xlplan.solve.decomposition import Engine
+from xlplan.solve.proposal import LearningService, Proposal, propose
 from xlplan.solve.result import DecompositionResult, IterationRecord, StopReason
 from xlplan.solve.savepoint import Savepoint
 from xlplan.solve.tree import TreeTermination, solve_tree
@@ -66,7 +67,20 @@ GIVEN_TARGET = 0.2
 saving is counted): how much better they could still be run must be small beside the difference."""
 
 BRIEF_TARGET = 0.5
-"""The same for the points of curves and sensitivities, which are searched once and followed."""
+"""The same for a brief wish that does not say how near the best plan is near enough."""
+
+MOST_LOOKS = 8
+"""Parts of the events that a point's search looks at before the plan is followed."""
+
+MOST_ROUNDS = 3
+"""Plans that are followed for one point before the best of them is taken with its gap."""
+
+SAMPLE_SHARE = 0.25
+"""Points are followed with this share of the least number of continuations at first: what these
+add is small against the first events, and the number is doubled where it is not."""
+
+SAMPLING_PART = 0.25
+"""Part of the closeness that a point's sampling error may take."""
 
 BOUND_SHARE, BOUND_LEAST_S = 0.25, 20.0
 """A deterministic bound from above may take this share of a plan's time, or of so many seconds."""
@@ -134,6 +148,22 @@ class Wish:
     limit_s: float | None = None
     whole_budget: float | None = None
     """Of purchases and device changes together; None: ``capital_budget`` and the changes."""
+    closeness: float | None = None
+    """Of a brief wish: money per year by which the best plan may be missed; None: by a share of the
+    target. What is left open shows in the plan's bound."""
+
+
+@dataclass(frozen=True)
+class _Followed:
+    """A plan that was followed, for other questions that it may answer.
+
+    ``running``: per year, demand charge included, purchases left out: these have other prices in
+    other questions.
+    """
+
+    bought: Purchases
+    follow: FollowResult
+    running: float
 
 
 class PlanSolver:
@@ -182,6 +212,8 @@ class PlanSolver:
             memory_bytes=options.memory_bytes,
         )
         self._blind: tuple[StudyGraph, Engine] | None = None
+        self._followed: list[_Followed] = []
+        self._n_brief = max(2, round(SAMPLE_SHARE * options.samples))
 
     def __enter__(self) -> Self:
         return self
@@ -211,24 +243,25 @@ class PlanSolver:
             return self._ignoring_outages(wish)
         if self.method == "tree":
             return self._by_tree(wish)
+        if wish.is_brief and wish.closeness is not None:
+            return self._briefly(wish, wish.closeness)
         return self._by_decomposition(wish)
 
     def estimated_cost(self, wish: Wish) -> float:
-        """Yearly cost of a plan as its own search measures it, without following it anew.
+        """Yearly cost of given purchases, without following them where the cuts know it closely.
 
-        A third to half of the work of ``solve_wish``, for figures of which only the cost is shown.
+        The bound, and what looks at a part of the events, scaled to all of them, see above it.
+        Where that is more than the wish's closeness the plan is followed.
         """
-        if wish.ignores_outages or self.method == "tree":
+        if self.method == "tree" or wish.fixed is None or wish.closeness is None:
             return self.solve_wish(wish).result.costs.total
-        started = time.monotonic()
-        limit_s = self._limit_s(wish)
         bounds = self._bounds(self.graph, wish)
-        target = self.options.gap_target_frac
-        found = self._run(wish.name, target, started + limit_s, started + limit_s, bounds, [])
-        if found.cost.n_unmeasured > 0:
-            # Stopped before all was followed: what was not is charged far too much.
+        self.on_progress(Progress(wish.name, "solving"))
+        deadline = time.monotonic() + self._limit_s(wish) * (1.0 - RESERVE)
+        found = self._proposed(bounds, wish.closeness, MOST_LOOKS, deadline, draws_chains=True)
+        if found.open_abs > wish.closeness:
             return self.solve_wish(wish).result.costs.total
-        return found.cost.mean + self.device_yearly
+        return found.lower_bound + found.open_abs + self.device_yearly
 
     def study_of(self, wish: Wish) -> Study:
         """The study at the wish's prices and budget."""
@@ -279,6 +312,110 @@ class PlanSolver:
                 gap_frac=None,
             ),
         )
+
+    # -- points of curves ----------------------------------------------------------------------
+
+    def _briefly(self, wish: Wish, closeness: float) -> SolvedPlan:
+        """One plan within ``closeness`` of the bound, from what other questions have found out.
+
+        A plan that was followed before serves if it is near enough. Else the plan that the cuts
+        propose is followed, and that makes new cuts where they were off; then it is asked again.
+        """
+        name, started = wish.name, time.monotonic()
+        limit_s = self._limit_s(wish)
+        deadline = started + limit_s * (1.0 - RESERVE)
+        bounds = self._bounds(self.graph, wish)
+        bound, n_new = -math.inf, 0
+        rows: list[ConvergenceRow] = []
+        self.on_progress(Progress(name, "solving"))
+        has_looked = not self._followed
+        found = self._proposed(bounds, closeness, MOST_LOOKS if has_looked else 0, deadline)
+        while True:
+            bound = max(bound, found.lower_bound + self.device_yearly)
+            best = self._best_known(wish)
+            if best is not None:
+                cost, plan = best
+                high = cost + plan.follow.half_width
+                gap = _gap(high, bound, cost)
+                seconds = time.monotonic() - started
+                rows.append(ConvergenceRow(seconds, bound, cost, high, gap, "plan followed"))
+                is_over = time.monotonic() >= deadline or self.should_stop()
+                if high - bound <= closeness or n_new >= MOST_ROUNDS or is_over:
+                    break
+            # Given purchases are followed at once: what was learnt of other plans is mostly enough.
+            if not has_looked and (wish.fixed is None or n_new > 0):
+                found = self._proposed(bounds, closeness, MOST_LOOKS, deadline)
+                has_looked = True
+                continue
+            if self.should_stop():
+                raise NoPlanError(f"Stopped before there was a plan for '{name}'.")
+            self.on_progress(Progress(name, "following the plan", bound))
+            self._follow_briefly(found, closeness)
+            n_new, has_looked = n_new + 1, False
+            found = self._proposed(bounds, closeness, 0, deadline)
+        facts = PlanFacts(
+            name=name,
+            kind=wish.kind,
+            description=wish.description,
+            bought=plan.bought,
+            lower_bound=bound,
+            bound_upper=None,
+            status="gap reached" if gap <= self.options.gap_target_frac else self._stopped(),
+            method="decomposed",
+            method_reason=self.method_reason,
+            convergence=tuple(rows),
+            solve_seconds=time.monotonic() - started,
+            device_changes=self.device_changes,
+        )
+        study = self.study_of(wish)
+        result = build_plan_result(
+            study, self.windows, plan.follow, facts, (), (), self.options.seed
+        )
+        return SolvedPlan(self._with_status(result), plan.follow, plan.bought)
+
+    def _proposed(
+        self,
+        bounds: tuple[FloatArray, FloatArray],
+        closeness: float,
+        n_look: int,
+        deadline: float,
+        draws_chains: bool = False,
+    ) -> Proposal:
+        return propose(
+            self.engine, bounds, closeness, n_look, deadline, self.should_stop, draws_chains
+        )
+
+    def _follow_briefly(self, found: Proposal, closeness: float) -> None:
+        """Follows a proposal and remembers it; what its events teach goes to the engine."""
+        service = LearningService(self.engine, found.event_tolerance)
+        follower = replace(self._follower(self.graph, self.engine), service=service)
+        follow = follower.follow(found.capacities[0], self._n_brief, self.options.seed)
+        service.take_in()
+        if follow.half_width > SAMPLING_PART * closeness:
+            self._n_brief = min(2 * self._n_brief, self.options.samples)
+        bought = read_purchases(self.graph.first_stage, found.x)
+        self._remember(bought, follow)
+
+    def _remember(self, bought: Purchases, follow: FollowResult) -> None:
+        """Keeps a followed plan, at the study's own prices."""
+        charge = self.study.settings.demand_charge_per_kw_year * bought.demand_kw
+        self._followed.append(_Followed(bought, follow, charge + follow.running_cost))
+
+    def _best_known(self, wish: Wish) -> tuple[float, _Followed] | None:
+        """Cost at the wish's prices and plan, of the plans followed that the wish allows."""
+        study = self.study_of(wish)
+        found: list[tuple[float, _Followed]] = []
+        for one in self._followed:
+            prices = price_purchases(study, one.bought, self.device_changes)
+            if wish.fixed is not None:
+                is_allowed = is_same_purchase(one.bought, wish.fixed)
+            else:
+                budget = study.settings.capital_budget
+                is_allowed = budget is None or net_capital(prices) <= budget * (1.0 + 1e-9) + 0.01
+            if is_allowed:
+                yearly = sum(p.investment + p.fixed_om for p in prices)
+                found.append((one.running + yearly, one))
+        return min(found, key=lambda item: item[0], default=None)
 
     # -- one plan ------------------------------------------------------------------------------
 
@@ -372,6 +509,8 @@ class PlanSolver:
                 break
             inner *= 0.5
             samples = min(2 * samples, MOST_SAMPLES)
+        bought = read_purchases(self.graph.first_stage, found.x)
+        self._remember(bought, follow)
         bound_upper = cost if follow.is_enumerated else None
         if bound_upper is None and not wish.is_brief:
             bound_upper = self._upper_bound(found, time.monotonic() - started)
@@ -379,7 +518,7 @@ class PlanSolver:
             name=name,
             kind=wish.kind,
             description=wish.description,
-            bought=read_purchases(self.graph.first_stage, found.x),
+            bought=bought,
             lower_bound=bound,
             bound_upper=bound_upper,
             status="gap reached" if gap <= target else self._stopped(),
@@ -588,6 +727,19 @@ def choose_method(asked: str, fit: TreeFit) -> tuple[str, str]:
     if asked == "decomposed":
         return "decomposed", f"The decomposition was asked for; {fit.reason}."
     return ("tree" if fit.fits else "decomposed"), f"{fit.reason[0].upper()}{fit.reason[1:]}."
+
+
+def is_same_purchase(first: Purchases, second: Purchases) -> bool:
+    """Whether two plans buy the same, to a watt; the demand that they decide is left out."""
+    return bool(
+        np.allclose(first.generator_kw, second.generator_kw, rtol=0.0, atol=SAME_KW)
+        and np.allclose(first.storage_kw, second.storage_kw, rtol=0.0, atol=SAME_KW)
+        and np.allclose(first.storage_kwh, second.storage_kwh, rtol=0.0, atol=SAME_KW)
+        and np.array_equal(first.is_hardened, second.is_hardened)
+    )
+
+
+SAME_KW = 1e-3
 
 
 def fixed_demand(found: Purchases, fixed: Purchases | None) -> Purchases:

@@ -151,7 +151,8 @@ class Engine:
             graph, self.tables, self.pools, workers, self._work_weights(), self._cache
         )
         self._n_group = 0
-        self._n_pass = 0
+        self.is_warm = False
+        """Whether an earlier search has got as far as whole numbers: later ones begin there."""
         self._n_replica_used = 0
         self._n_path = self._follower.n_path(self.options.enumerate_up_to + 1)
         self._seconds_per_full: float = 0.0
@@ -287,6 +288,7 @@ class Engine:
         if self._saved is not None and self._saved.is_integer_phase:
             run.is_integer_phase = True
             self._saved = None  # its phase is that of the run that was stopped
+        run.is_integer_phase = run.is_integer_phase or self.is_warm
         try:
             reason = run.go()
         except KeyboardInterrupt:
@@ -294,6 +296,8 @@ class Engine:
             reason = StopReason.INTERRUPTED
         if reason is not StopReason.GAP_REACHED:
             run.save()
+        has_choice = self._first_stage.has_integers  # given decisions say little of the others
+        self.is_warm = self.is_warm or (run.is_integer_phase and has_choice)
         return run.result(reason)
 
     # -- parts used by the run -----------------------------------------------------------------

@@ -349,4 +349,10 @@ def solve_program(
         highs.setSolution(solution)
     begin = time.perf_counter()
     run_status = highs.run()
-    return _read_result(highs, run_status, is_mip, begin)
+    result = _read_result(highs, run_status, is_mip, begin)
+    is_optimal = result.termination is Termination.OPTIMAL
+    if is_optimal and start_point is not None and highs.getInfo().mip_node_count == 0:
+        # HiGHS 1.16 may call a start point optimal without having solved anything, with objective
+        # and bound 0 whatever the point costs. Where it looked at no node, solving again is cheap.
+        return solve_program(program, time_limit_s, gap_frac)
+    return result

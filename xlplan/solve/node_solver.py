@@ -60,6 +60,7 @@ class NodeRequest:
     group : number of the cuts made, -1 for no cuts
     share : other members for which the same multipliers are tried, or None
     cut_tolerance : how much too low the value may be for want of the children's last cuts
+    known : no cut is made where the value is no higher than this
     wants_primal : whether ``y`` is handed back
     """
 
@@ -72,6 +73,7 @@ class NodeRequest:
     group: int = -1
     share: Share | None = None
     cut_tolerance: float = 0.0
+    known: float = float("-inf")
     wants_primal: bool = False
 
 
@@ -171,7 +173,7 @@ class NodeSolver:
                 _LOG.warning("member %d: %s", request.member, failure)
                 solutions.append(self._failed(request, state))
                 continue
-            if request.group >= 0:
+            if request.group >= 0 and outcome.value > request.known:
                 asked.append(len(solutions))
                 outcomes.append(outcome)
             solutions.append(

@@ -34,7 +34,7 @@ def demo_settings() -> Row:
         "source_voltage_pu": 1.03,
         "substation_limit_kva": 5000,
         "length_unit": "km",
-        "period_minutes": 15,
+        "period_minutes": 30,
         "loss_allowance_pct": 3,
         "real_discount_rate_pct": 4,
         "budget": 700000,
@@ -182,7 +182,7 @@ def _generators() -> list[Row]:
         "running_cost_per_kwh": 0.34,
         "outage_only": "yes",
         "ramp_pct_per_minute": 5,
-        "start_delay_minutes": 15,
+        "start_delay_minutes": 30,
         "start_failure_pct": 3,
         "tank_hours": 20,
         "refill_delay_hours": 8,
@@ -212,7 +212,7 @@ def _generators() -> list[Row]:
         "life_years": 20,
         "running_cost_per_kwh": 0.24,
         "outage_only": "yes",
-        "start_delay_minutes": 15,
+        "start_delay_minutes": 30,
         "grid_forming": "yes",
     }
     return [diesel, solar, candidate]
@@ -275,10 +275,10 @@ def _outage_assumptions() -> list[Row]:
     return _table(
         "outage_class failures_per_year failures_per_length_year repair_hours switching_minutes"
         " weather_exposed repair_cost_per_failure included figure_from",
-        ("Main line", None, 0.07, 3.5, 45, "yes", 2400, "yes", "invented for this example"),
-        ("Lateral", None, 0.13, 3, 45, "yes", 1500, "yes", "invented for this example"),
+        ("Main line", None, 0.07, 3.5, 30, "yes", 2400, "yes", "invented for this example"),
+        ("Lateral", None, 0.13, 3, 30, "yes", 1500, "yes", "invented for this example"),
         ("Bulk supply", 0.25, None, 2, 30, "no", None, "yes", "invented for this example"),
-        ("Diesel", 0.5, None, 24, 15, "no", 3000, "yes", "invented for this example"),
+        ("Diesel", 0.5, None, 12, 30, "no", 3000, "yes", "invented for this example"),
     )
 
 
@@ -286,8 +286,8 @@ def _hardening() -> list[Row]:
     return _table(
         "measure lines capital_cost grant_pct life_years fixed_om_per_year failures_avoided_pct",
         ("Clear trees main line", "L03, L04", 30000, None, 6, 1200, 35),
-        ("Covered wire main line", "L04, L05", 190000, 25, 40, None, 70),
-        ("Clear trees water works", "L08, L09", 22000, None, 6, 900, 40),
+        ("Covered wire main line", "L04, L05", 170000, 25, 40, None, 70),
+        ("Clear trees water works", "L08, L09", 12000, None, 6, 900, 40),
         ("Stronger poles care home", "L10, L11", 85000, 10, 40, None, 50),
     )
 
@@ -307,9 +307,9 @@ def _windows() -> list[Row]:
         "window occurrences_per_year starts_at hours load_multiplier price_profile"
         " failure_multiplier repair_multiplier failure_profile start_soc_pct counts_for_demand"
         " storm",
-        ("Ordinary day", 300, ORDINARY_START, 24, 1, "price", None, None, None, None, "yes", "no"),
+        ("Ordinary day", 302, ORDINARY_START, 24, 1, "price", None, None, None, None, "yes", "no"),
         ("Peak day", 60, PEAK_START, 24, 1, "price", None, None, None, None, "yes", "no"),
-        ("Storm", 2.5, STORM_START, 48, 1, "price", 30, 1.5, "gusts", 90, "no", "yes"),
+        ("Storm", 2, STORM_START, 36, 1, "price", 40, 1.5, "gusts", 90, "no", "yes"),
     )
 
 

@@ -1,4 +1,4 @@
-"""Profiles of the demo study: an ordinary day, a peak day and a storm of two days.
+"""Profiles of the demo study: an ordinary day, a peak day and a storm on two days.
 
 Smooth invented shapes: a level, and bumps at given hours. Load profiles are shares of the peak
 and reach 1 on the peak day.
@@ -11,8 +11,8 @@ from datetime import datetime, timedelta
 from math import exp, pi, sin
 from typing import Any
 
-PERIOD = timedelta(minutes=15)
-PERIODS_A_DAY = 96
+PERIOD = timedelta(minutes=30)
+PERIODS_A_DAY = 48
 
 ORDINARY_START = datetime(2026, 1, 12)
 PEAK_START = datetime(2026, 1, 13)
