@@ -4,6 +4,10 @@ from __future__ import annotations
 
 import os
 import signal
+import subprocess
+import sys
+import time
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -194,6 +198,55 @@ def test_a_worker_that_dies_is_replaced_and_its_work_repeated():
         found = engine.run(1e-6)
         assert engine.counts()["worker restart"] >= 1
     assert found.lower_bound == pytest.approx(alone.lower_bound, rel=2e-6)
+
+
+PARENT = """
+import sys, time
+import numpy as np
+from tests.solve.graphs import random_tree_graph
+from xlplan.solve.decomposition import Engine
+from xlplan.solve.node_solver import NodeRequest
+
+if __name__ == "__main__":
+    with Engine(random_tree_graph(5, n_stage=3), seed=1, workers=2) as engine:
+        at = (np.array([1.0, 0.5]), np.array([4.0, 3.0, 1.0]))
+        engine.solve_nodes([NodeRequest(f, 0, *at) for f in range(len(engine.graph.families))])
+        for executor in engine._workers._executors:
+            print(*executor._processes, flush=True)
+        print("ready", flush=True)
+        time.sleep(600)
+"""
+
+
+@pytest.mark.skipif(sys.platform != "linux", reason="looks into /proc")
+def test_workers_end_with_a_parent_that_is_killed(tmp_path):
+    script = tmp_path / "parent.py"
+    script.write_text(PARENT, encoding="utf-8")
+    root = Path(__file__).parents[2]
+    with subprocess.Popen(
+        [sys.executable, str(script)], stdout=subprocess.PIPE, text=True, cwd=root,
+        env={**os.environ, "PYTHONPATH": str(root)},
+    ) as parent:  # fmt: skip
+        assert parent.stdout is not None
+        lines = list(iter(parent.stdout.readline, "ready\n"))
+        workers = [int(word) for line in lines for word in line.split()]
+        assert len(workers) == 2
+        assert all(Path(f"/proc/{pid}").exists() for pid in workers)
+        parent.kill()
+    for _ in range(200):
+        left = [pid for pid in workers if _is_alive(pid)]
+        if not left:
+            break
+        time.sleep(0.1)
+    assert not left
+
+
+def _is_alive(pid: int) -> bool:
+    """Whether a process is there and has not ended without anybody asking for its status."""
+    try:
+        return "State:\tZ" not in Path(f"/proc/{pid}/status").read_text(encoding="utf-8")
+    except FileNotFoundError:
+        return False
 
 
 def test_a_run_beyond_its_memory_stops_with_a_plan():

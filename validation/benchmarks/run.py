@@ -39,6 +39,10 @@ CYCLE = (4.0, 3.0, 2.0, 5.0)
 """Repair times of the classes when the scenarios of R2 are multiplied."""
 
 
+TREE_BYTES, TREE_LIMIT_S = 20 * 2**30, 1800.0
+"""What the whole tree may take."""
+
+
 @dataclass(frozen=True)
 class Case:
     """One solve by the decomposition."""
@@ -76,7 +80,7 @@ def cases() -> Iterator[Case]:
         yield Case(f"R2 periods {n}", {"windows": storm(n)}, 0.01, 900.0, workers=1)
     for n in (1, 2, 4):
         yield Case(f"R2 scenarios {12 * n}", {}, 0.01, 1200.0, n_repair_class=n, workers=1)
-    for n in (5, 6, 7, 8):
+    for n in (5, 6, 7, 8, 9):
         yield Case(
             f"R3 tree {n} periods",
             {"n_bus": 6, "windows": storm(n, 0.3), "repair_h": 0.5, "n_storage": 1,
@@ -112,6 +116,8 @@ class Outcome:
     tree_nodes: int = 0
     tree_s: float = float("nan")
     tree_cost: float = float("nan")
+    tree_peak_mib: float = float("nan")
+    tree_end: str = ""
     termination: str = ""
     passes: list[tuple[float, float]] = field(default_factory=list)
 
@@ -191,22 +197,40 @@ def run_case(case: Case, workers: int) -> Outcome:
     if case.has_tree:
         fit = judge_size(study, windows)
         outcome.tree_nodes = fit.size.n_node
+        outcome.peak_mib = _peak_mib(workers)
+        # What is known so far, in case that the tree takes the process with it.
+        print(json.dumps(vars(replace(outcome, tree_end="did not fit"))), flush=True)
+        resource.setrlimit(resource.RLIMIT_AS, (TREE_BYTES, TREE_BYTES))
         begin = time.perf_counter()
-        solution = solve_tree(build_whole_tree(study, feeder, windows, None), 1800.0, 1e-4)
+        try:
+            solution = solve_tree(
+                build_whole_tree(study, feeder, windows, None), TREE_LIMIT_S, 1e-4
+            )
+        except MemoryError:
+            outcome.tree_end = "did not fit"
+        else:
+            outcome.tree_end = str(solution.termination)
+            if solution.has_plan:
+                outcome.tree_cost = solution.objective
         outcome.tree_s = time.perf_counter() - begin
-        if solution.has_plan:
-            outcome.tree_cost = solution.objective
+        outcome.tree_peak_mib = _peak_mib(workers)
+        return outcome
+    outcome.peak_mib = _peak_mib(workers)
+    return outcome
+
+
+def _peak_mib(workers: int) -> float:
+    """Peak of this process and of its workers; the largest of these stands for all of them."""
     here = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
     below = resource.getrusage(resource.RUSAGE_CHILDREN).ru_maxrss
-    # The largest child stands for all of them.
-    outcome.peak_mib = (here + (workers if workers > 1 else 0) * below) / 1024.0
-    return outcome
+    return (here + (workers if workers > 1 else 0) * below) / 1024.0
 
 
 COLUMNS = (
     "case", "n_bus", "n_scenario", "n_period", "expected_events", "workers", "build_s", "solve_s",
     "gap_pct", "lower_bound", "cost", "n_solve", "solver_share", "own_ms_per_solve", "day_lp_s",
-    "day_lps", "peak_mib", "tree_nodes", "tree_s", "tree_cost", "termination",
+    "day_lps", "peak_mib", "tree_nodes", "tree_s", "tree_cost", "tree_peak_mib", "tree_end",
+    "termination",
 )  # fmt: skip
 
 
@@ -229,10 +253,12 @@ def main() -> None:
         command = [sys.executable, "-m", "validation.benchmarks.run", case.name, "--here",
                    "--workers", str(options.workers)]  # fmt: skip
         done = subprocess.run(command, stdout=subprocess.PIPE, text=True, check=False)
+        lines = done.stdout.strip().splitlines()
         if done.returncode:
             print(f"{case.name}: ended with {done.returncode}")
-            continue
-        found = json.loads(done.stdout.strip().splitlines()[-1])
+            if not lines:
+                continue
+        found = json.loads(lines[-1])
         rows.append([_short(found[name]) for name in COLUMNS])
         print(",".join(rows[-1]), flush=True)
     if options.out:

@@ -9,7 +9,9 @@ from __future__ import annotations
 
 import logging
 import multiprocessing
+import os
 import signal
+import threading
 from collections.abc import Callable, Sequence
 from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
 from concurrent.futures.process import BrokenProcessPool
@@ -45,7 +47,16 @@ def _start_worker(graph: ValueGraph, tables: GraphTables, cache_bytes: int) -> N
     """Runs once in every worker."""
     global _SOLVER
     signal.signal(signal.SIGINT, signal.SIG_IGN)  # the parent decides what Ctrl-C means
+    threading.Thread(target=_end_with_parent, daemon=True).start()
     _SOLVER = NodeSolver(graph, tables, MemberCache(graph.families, cache_bytes))
+
+
+def _end_with_parent() -> None:
+    """Ends the worker when its parent is gone: killed, it had no time to say so."""
+    parent = multiprocessing.parent_process()
+    if parent is not None:
+        parent.join()
+        os._exit(1)
 
 
 def _solve_chunk(
