@@ -11,7 +11,7 @@ from tests.builders import random_study
 from xlplan.model.study_graph import build_study_graph
 from xlplan.network.feeder import build_feeder
 from xlplan.outages.window_model import build_window_models
-from xlplan.solve.cuts import ExitMultipliers, SharedMultipliers
+from xlplan.solve.cuts import ChildMultipliers, ExitMultipliers
 from xlplan.solve.decomposition import Engine
 from xlplan.solve.member_cache import MemberCache
 from xlplan.solve.node_solver import NodeSolver
@@ -87,14 +87,19 @@ def test_quick_cuts_equal_plain_cuts(seed):
             else:
                 members = rng.permutation(family.n_member)[:4].tolist()
                 n = len(members)
-                shared = SharedMultipliers(
-                    exits.exit,
-                    exits.pi,
-                    np.tile(exits.intercept, (n, 1)),
-                    np.tile(exits.state_slope, (n, 1, 1)),
-                    np.tile(exits.capacity_slope, (n, 1, 1)),
+                n_cut = len(exits.exit)
+                children = ChildMultipliers(
+                    np.repeat(np.arange(n), n_cut),
+                    np.tile(exits.exit, n),
+                    np.tile(exits.pi, n),
+                    np.tile(exits.intercept, n),
+                    np.tile(exits.state_slope, (n, 1)),
+                    np.tile(exits.capacity_slope, (n, 1)),
                 )
-                quick = bound.cuts_of(np.array(members), pi, shared, 1)
+                quick, is_valid = bound.cuts_of_pairs(
+                    pi[None, :], np.zeros(n, int), np.array(members), children, np.ones(n, int)
+                )
+                assert is_valid.all()
                 n_shared += 1
             for i, m in enumerate(members):
                 plain = bound.cut(

@@ -234,36 +234,6 @@ class DualBound:
             parts.size,
         )
 
-    def cuts_of(
-        self, members: IntArray, pi: FloatArray, cuts: SharedMultipliers, group: int
-    ) -> CutBatch | None:
-        """Cuts of several members from the same ``pi``, each with its own children's cuts.
-
-        Parameters
-        ----------
-        members : array, shape (n,)
-        pi : array, shape (n_row,)
-        cuts : SharedMultipliers
-        group : int
-
-        Returns
-        -------
-        CutBatch of at most n cuts; None where the family is not fit for it (many exits, members
-        that hold their state in different columns)
-        """
-        n, n_cut = len(members), len(cuts.exit)
-        children = ChildMultipliers(
-            pair=np.repeat(np.arange(n), n_cut),
-            exit=np.tile(cuts.exit, n),
-            pi=np.tile(cuts.pi, n),
-            intercept=cuts.intercept.ravel(),
-            state_slope=cuts.state_slope.reshape(n * n_cut, cuts.state_slope.shape[2]),
-            capacity_slope=cuts.capacity_slope.reshape(n * n_cut, len(self.capacity_lower)),
-        )
-        none = np.zeros(n, dtype=np.int64)
-        found = self.cuts_of_pairs(pi[None, :], none, members, children, np.full(n, group))
-        return None if found is None else found[0].take(found[1])
-
     def cuts_of_pairs(
         self,
         pi: FloatArray,
@@ -400,7 +370,7 @@ class DualBound:
 
     @property
     def table(self) -> MemberTable | None:
-        """What differs between the members; None where ``cuts_of`` cannot be used."""
+        """What differs between the members; None where ``cuts_of_pairs`` cannot be used."""
         if not self._is_looked_at:
             self._is_looked_at = True
             if len(self.family.exit_gate) <= MANY_EXITS and self.family.exit_columns is None:
@@ -465,21 +435,6 @@ class ChildMultipliers:
     """
 
     pair: IntArray
-    exit: IntArray
-    pi: FloatArray
-    intercept: FloatArray
-    state_slope: FloatArray
-    capacity_slope: FloatArray
-
-
-@dataclass(frozen=True)
-class SharedMultipliers:
-    """Multipliers of children's cuts that serve several members, each with its own cuts.
-
-    exit, pi : (n_cut,); intercept (n, n_cut), state_slope (n, n_cut, n_state), capacity_slope
-    (n, n_cut, n_capacity) of the cut that takes the same place for each of n members
-    """
-
     exit: IntArray
     pi: FloatArray
     intercept: FloatArray

@@ -18,12 +18,7 @@ from numpy.typing import NDArray
 
 from xlplan.model.value_graph import ValueGraph
 from xlplan.solve.cut_pool import CutBatch, CutPool, joined
-from xlplan.solve.cuts import (
-    ChildMultipliers,
-    DualBound,
-    ExitMultipliers,
-    SharedMultipliers,
-)
+from xlplan.solve.cuts import ChildMultipliers, DualBound, ExitMultipliers
 from xlplan.solve.folding import Folding
 from xlplan.solve.highs import FEASIBILITY_TOLERANCE, KeptModel
 from xlplan.solve.member_cache import MemberCache
@@ -48,6 +43,9 @@ FACE_TOLERANCE = 1e-7
 
 FEW_ROWS = 40
 """Up to so many violated rows are all added at once."""
+
+MOST_PAIRS = 1024
+"""So many cuts of other members are made in one pass over arrays."""
 
 WORST_PART = 8
 """Of more violated rows this part is added, the worst ones first."""
@@ -437,40 +435,87 @@ class NodeModel:
             return self.bound.nested_cuts(member, i_member, outcome.pi, outcome.exits, group)
         return self.bound.cut(member, outcome.pi, outcome.exits, i_member, group)
 
-    def shared_cuts(self, outcome: NodeOutcome, members: IntArray, group: int) -> CutBatch | None:
-        """Cuts of other members from the same multipliers; None where there are none.
+    def shared_cuts(
+        self, outcomes: Sequence[NodeOutcome], shared: Sequence[IntArray], groups: Sequence[int]
+    ) -> tuple[CutBatch, IntArray] | None:
+        """Cuts of other members from the multipliers of solved ones; None where there are none.
 
         The multipliers of children's cuts go to the same-numbered cuts of the other's children;
         members that have none of that number are left out.
+
+        Parameters
+        ----------
+        outcomes, groups : solved nodes, and the numbers of their cuts
+        shared : per outcome, members (n,) for which its multipliers are tried
+
+        Returns
+        -------
+        the cuts, and the outcome that each came from, (n_cut,)
         """
-        exits, table = outcome.exits, self.bound.table
-        if table is None:
+        if self.bound.table is None:
             return None
-        n, n_cut = len(members), len(exits.exit)
-        intercept = np.tile(exits.intercept, (n, 1))
-        state_slope = np.tile(exits.state_slope, (n, 1, 1))
-        capacity_slope = np.tile(exits.capacity_slope, (n, 1, 1))
-        kept = np.ones(n, dtype=bool)
-        if not self.table.is_fixed and n_cut:
+        batches, origins = [], []
+        for part in _parts([len(members) for members in shared]):
+            found = self._shared_part(outcomes[part], shared[part], groups[part])
+            if found is not None:
+                batches.append(found[0])
+                origins.append(found[1] + part.start)
+        return (joined(batches), np.concatenate(origins)) if batches else None
+
+    def _shared_part(
+        self, outcomes: Sequence[NodeOutcome], shared: Sequence[IntArray], groups: Sequence[int]
+    ) -> tuple[CutBatch, IntArray] | None:
+        table = self.bound.table
+        assert table is not None
+        counts = np.array([len(members) for members in shared])
+        origin = np.repeat(np.arange(len(outcomes)), counts)
+        members = np.concatenate(shared)
+        # One entry for each pair of a member and a child's cut of the outcome it shares.
+        n_cut = np.array([len(o.exits.exit) for o in outcomes])
+        n_entry = n_cut[origin]
+        pair = np.repeat(np.arange(len(members)), n_entry)
+        first = np.cumsum(n_entry) - n_entry
+        at = np.arange(len(pair)) - first[pair] + (np.cumsum(n_cut) - n_cut)[origin[pair]]
+        exits = [o.exits for o in outcomes]
+        exit_ = np.concatenate([e.exit for e in exits])[at]
+        pi = np.concatenate([e.pi for e in exits])[at]
+        intercept = np.concatenate([e.intercept for e in exits])[at]
+        state_slope = np.concatenate([e.state_slope for e in exits])[at]
+        capacity_slope = np.concatenate([e.capacity_slope for e in exits])[at]
+        kept = np.ones(len(members), dtype=bool)
+        if not self.table.is_fixed and len(pair):
+            number = np.concatenate([o.exit_group for o in outcomes])[at]
             weight, child = table.exits(members)
-            for i in range(n_cut):
-                e, number = int(exits.exit[i]), int(outcome.exit_group[i])
-                # Without a child the multiplier is scaled to nothing.
-                has_child = (child[:, e, 1] >= 0) & (weight[:, e] > 0.0)
-                for i_child in np.unique(child[has_child, e, 0]).tolist():
-                    pool = self.pools[i_child]
-                    here = np.flatnonzero(has_child & (child[:, e, 0] == i_child))
-                    position = pool.positions_of(child[here, e, 1], number)
-                    kept[here[position < 0]] = False
-                    intercept[here, i] = pool.intercept[position]
-                    state_slope[here, i] = pool.state_slope[position]
-                    capacity_slope[here, i] = pool.capacity_slope[position]
+            weight, child = weight[pair, exit_], child[pair, exit_]
+            # Without a child the multiplier is scaled to nothing.
+            has_child = (child[:, 1] >= 0) & (weight > 0.0)
+            for i_child in np.unique(child[has_child, 0]).tolist():
+                pool = self.pools[i_child]
+                here = (has_child & (child[:, 0] == i_child)).nonzero()[0]
+                position = pool.positions_of(child[here, 1], number[here])
+                kept[pair[here[position < 0]]] = False
+                intercept[here] = pool.intercept[position]
+                state_slope[here] = pool.state_slope[position]
+                capacity_slope[here] = pool.capacity_slope[position]
         if not kept.any():
             return None
-        cuts = SharedMultipliers(
-            exits.exit, exits.pi, intercept[kept], state_slope[kept], capacity_slope[kept]
+        new_pair = np.cumsum(kept) - 1
+        stays = kept[pair]
+        children = ChildMultipliers(
+            new_pair[pair[stays]],
+            exit_[stays],
+            pi[stays],
+            intercept[stays],
+            state_slope[stays],
+            capacity_slope[stays],
         )
-        return self.bound.cuts_of(members[kept], outcome.pi, cuts, group)
+        origin, members = origin[kept], members[kept]
+        found = self.bound.cuts_of_pairs(
+            np.array([o.pi for o in outcomes]), origin, members, children, np.array(groups)[origin]
+        )
+        assert found is not None
+        cuts, is_valid = found
+        return (cuts, origin) if is_valid.all() else (cuts.take(is_valid), origin[is_valid])
 
     def rest(self) -> None:
         """Gives back the solver's working memory until the next solve."""
@@ -517,6 +562,19 @@ class NodeModel:
         rows, sides = self._children.sides()
         low[rows] = sides
         return low, high
+
+
+def _parts(counts: Sequence[int]) -> list[slice]:
+    """Consecutive outcomes whose pairs are worked out together: arrays of a bounded size."""
+    parts, begin, n = [], 0, 0
+    for i, count in enumerate(counts):
+        if n and n + count > MOST_PAIRS:
+            parts.append(slice(begin, i))
+            begin, n = i, 0
+        n += count
+    if n:
+        parts.append(slice(begin, len(counts)))
+    return parts
 
 
 def _with_tolerance(low: FloatArray, high: FloatArray) -> tuple[FloatArray, FloatArray]:

@@ -225,17 +225,17 @@ class NodeSolver:
                 )  # fmt: skip
             model.forget_basis()
         batches = [cuts]
-        for outcome, request in zip(outcomes, requests, strict=True):
-            share = request.share
-            if share is None or not len(share.members):
-                continue
-            shared = model.shared_cuts(outcome, share.members, request.group)
-            if shared is None:
-                continue
-            at = np.searchsorted(share.members, shared.member)
-            known = share.known[at]
-            gained = shared.values(share.states[at], request.capacity) - known
-            batches.append(shared.take(np.flatnonzero(gained > SHARE_MARGIN * np.abs(known))))
+        sharing = [
+            i for i, r in enumerate(requests) if r.share is not None and len(r.share.members)
+        ]
+        shares = [requests[i].share for i in sharing]
+        shared = model.shared_cuts(
+            [outcomes[i] for i in sharing],
+            [share.members for share in shares if share is not None],
+            [requests[i].group for i in sharing],
+        )
+        if shared is not None:
+            batches.append(_gaining(shared, shares, capacities[sharing]))
         return joined(batches)
 
     def _failed(self, request: NodeRequest, state: FloatArray) -> NodeSolution:
@@ -264,6 +264,25 @@ class NodeSolver:
             "seconds in solver": seconds,
             "resident bytes": float(resident_bytes()),
         }
+
+
+def _gaining(
+    shared: tuple[CutBatch, IntArray], shares: Sequence[Share | None], capacities: FloatArray
+) -> CutBatch:
+    """The shared cuts that beat what is known where they were asked for."""
+    cuts, origin = shared
+    states, known = np.zeros_like(cuts.state_slope), np.zeros(len(cuts))
+    for i, share in enumerate(shares):
+        assert share is not None
+        here = (origin == i).nonzero()[0]
+        at = np.searchsorted(share.members, cuts.member[here])
+        states[here], known[here] = share.states[at], share.known[at]
+    values = (
+        cuts.intercept
+        + np.einsum("ij,ij->i", cuts.state_slope, states)
+        + np.einsum("ij,ij->i", cuts.capacity_slope, capacities[origin])
+    )
+    return cuts.take(values - known > SHARE_MARGIN * np.abs(known))
 
 
 def new_pools(graph: ValueGraph, tables: GraphTables) -> list[CutPool]:
