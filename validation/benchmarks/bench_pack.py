@@ -93,7 +93,11 @@ class Ledger:
         made = work()
         self.rows.append((name, self.now() - before))
         spent = self.rows[-1][1]
-        print(f"  {name:44s} {spent.seconds:8.1f} s {spent.n_solve:9,.0f} solves", flush=True)
+        print(
+            f"  {name:40s} {spent.seconds:7.1f} s  {spent.cpu_s:7.1f} s processor "
+            f"{spent.n_solve:9,.0f} solves",
+            flush=True,
+        )
         return made
 
 
