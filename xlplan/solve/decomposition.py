@@ -57,6 +57,7 @@ BoolArray = NDArray[np.bool_]
 _LOG = logging.getLogger(__name__)
 
 Progress = Callable[[IterationRecord], None]
+RequestMaker = Callable[[tuple[int, int], FloatArray, FloatArray], NodeRequest]
 
 CACHE_SHARE = 0.2
 """Share of the memory allowed that all processes together may keep members in."""
@@ -540,14 +541,9 @@ class _Run:
 
     _open_seen = float("inf")
 
-    def _look(self, points: list[RootPoint], is_partial: bool) -> Following:
-        """Follows the plans of the roots."""
+    def _request_maker(self, points: list[RootPoint]) -> RequestMaker:
+        """Makes requests for what follows these plans: with cuts, as close as the gap asks for."""
         engine, tolerance = self.engine, self._event_tolerance(points)
-        first = self.current
-        assert first is not None
-
-        def solve(requests: Sequence[NodeRequest]) -> list[NodeSolution | None]:
-            return engine.solve_batch(requests, self.clock)
 
         def request(child: tuple[int, int], state: FloatArray, capacity: FloatArray) -> NodeRequest:
             return NodeRequest(
@@ -558,6 +554,17 @@ class _Run:
                 group=engine.next_group(),
                 cut_tolerance=tolerance,
             )
+
+        return request
+
+    def _look(self, points: list[RootPoint], is_partial: bool) -> Following:
+        """Follows the plans of the roots."""
+        engine, request = self.engine, self._request_maker(points)
+        first = self.current
+        assert first is not None
+
+        def solve(requests: Sequence[NodeRequest]) -> list[NodeSolution | None]:
+            return engine.solve_batch(requests, self.clock)
 
         if self.is_enumerating:
             found = engine._follower.enumerate(points, solve, request, first.cost)
@@ -597,7 +604,7 @@ class _Run:
     def _chain(
         self,
         points: list[RootPoint],
-        request: Callable[[tuple[int, int], FloatArray, FloatArray], NodeRequest],
+        request: RequestMaker,
     ) -> Sampled | None:
         """Draws chains from the last pass's events; their cuts serve this pass's events.
 

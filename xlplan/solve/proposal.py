@@ -131,19 +131,7 @@ def _chains(run: _Run, points: Sequence[RootPoint], found: Following) -> float:
     """What chains from the events of a look find open after them, scaled to all events."""
     if run.is_enumerating:
         return 0.0
-    engine, tolerance = run.engine, run._event_tolerance(list(points))
-
-    def request(child: tuple[int, int], state: FloatArray, capacity: FloatArray) -> NodeRequest:
-        return NodeRequest(
-            child[0],
-            child[1],
-            state,
-            capacity,
-            group=engine.next_group(),
-            cut_tolerance=tolerance,
-        )
-
-    drawn = run._chain(list(points), request)
+    drawn = run._chain(list(points), run._request_maker(list(points)))
     if drawn is None:
         return 0.0
     total = seen = 0.0
