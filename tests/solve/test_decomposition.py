@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import time
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -10,7 +11,7 @@ import pytest
 from tests.model.extensive_form import ExtensiveForm
 from tests.solve.graphs import gate_graph, random_tree_graph
 from xlplan.solve.decomposition import Engine, EngineOptions
-from xlplan.solve.node_solver import NodeRequest
+from xlplan.solve.node_solver import REST_ROWS, NodeRequest
 from xlplan.solve.result import StopReason
 
 
@@ -125,10 +126,16 @@ def _member_and_sum(family, i_member, y) -> tuple[str, int, float]:
     return family.name, i_member, float(y.sum())
 
 
-def test_one_worker_and_two_give_the_same_digits():
+@pytest.mark.parametrize("do_models_rest", [False, True])
+def test_one_worker_and_two_give_the_same_digits(do_models_rest):
     results = []
     for workers in (1, 2):
         with Engine(random_tree_graph(9), seed=1, workers=workers) as engine:
+            if do_models_rest:
+                # As if it were large; the processes are not there yet.
+                engine._workers.tables = replace(engine.tables, n_row=REST_ROWS + 1)
+                if engine._workers._local is not None:
+                    engine._workers._local._do_models_rest = True
             result = engine.run(1e-6)
             request = NodeRequest(1, 0, np.array([1.0, 0.5]), engine.run(1.0).capacities[0])
             node = engine.solve_nodes([request], _member_and_sum)[0]
