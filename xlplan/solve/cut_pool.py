@@ -12,7 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 FloatArray = NDArray[np.float64]
-IntArray = NDArray[np.int64]
+IntArray = NDArray[np.integer]
 
 GROUP_BITS = 40
 """A member and a group share one number of 64 bits; groups are counted from 0."""

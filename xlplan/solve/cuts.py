@@ -18,6 +18,7 @@ weight of the exit; then the value at the exit needs no upper bound.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -29,7 +30,8 @@ from xlplan.solve.member_table import MemberTable
 from xlplan.solve.row_matrix import RowMatrix
 
 FloatArray = NDArray[np.float64]
-IntArray = NDArray[np.int64]
+IntArray = NDArray[np.integer]
+BoolArray = NDArray[np.bool_]
 
 ROUNDING_SHIFT = 1e-12
 """Share of the sum of absolute terms by which a cut is lowered, for rounding in floats."""
@@ -198,7 +200,7 @@ class DualBound:
         col_term = col_term.copy()
         col_term[self._capacity_columns] = 0.0
 
-        def left(last: IntArray, term: FloatArray) -> FloatArray:
+        def left(last: IntArray, term: NDArray[Any]) -> FloatArray:
             """Sum of what still counts, by member, (n_member,)."""
             total = np.bincount(np.clip(last, -1, n - 1) + 1, term, n + 1)
             suffix: FloatArray = np.cumsum(total[::-1])[::-1][1:]
@@ -241,7 +243,7 @@ class DualBound:
         members: IntArray,
         children: ChildMultipliers,
         groups: IntArray,
-    ) -> tuple[CutBatch, NDArray[np.bool_]] | None:
+    ) -> tuple[CutBatch, BoolArray] | None:
         """Cuts of pairs of a solve, whose multipliers serve, and a member.
 
         Parameters
@@ -285,7 +287,7 @@ class DualBound:
             side = np.where(by_row > 0.0, side, now.row_upper)
         with np.errstate(invalid="ignore"):
             row_vary = np.where(by_row != 0.0, side * by_row, 0.0)
-        is_valid = np.isfinite(row_vary).all(axis=1)
+        is_valid = np.asarray(np.isfinite(row_vary).all(axis=1))
         # Reduced costs.
         matrix, n_col = self.matrix, len(first.cost)
         entries = matrix.entries(rows)
@@ -299,7 +301,7 @@ class DualBound:
             step = pi[:, self.patch_row][solve] * (now.patch_value - self.patch_base)
             moved = np.flatnonzero(step.any(axis=0))
             places = at_column[self.patch_column[moved]]
-            np.subtract.at(d_vary, (slice(None), places), step[:, moved])
+            np.subtract.at(d_vary.T, places, step[:, moved].T)
         # Children's cuts: scaled down where they weigh more than the exit does.
         weight = now.exit_weight
         n_exit = weight.shape[1]
@@ -362,7 +364,7 @@ class DualBound:
             capacity_slope,
             np.where(given, by_pair(into, first.col_lower[None, :], now.col_lower), 0.0),
             np.where(given, by_pair(into, first.col_upper[None, :], now.col_upper), 0.0),
-            now.scale,
+            np.asarray(now.scale),
             groups,
             size,
         )

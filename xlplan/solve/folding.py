@@ -24,7 +24,7 @@ from xlplan.model.linear_program import LinearProgram
 from xlplan.solve.row_matrix import RowMatrix
 
 FloatArray = NDArray[np.float64]
-IntArray = NDArray[np.int64]
+IntArray = NDArray[np.integer]
 
 NOTHING = 1e-13
 """Entries of an inverse below this are rounding."""

@@ -36,7 +36,7 @@ from xlplan.solve.result import CostEstimate
 from xlplan.solve.tables import GraphTables
 
 FloatArray = NDArray[np.float64]
-IntArray = NDArray[np.int64]
+IntArray = NDArray[np.integer]
 
 ROULETTE = 0.05
 """Chains whose weight has fallen below this share of their start go on by chance, unbiased."""

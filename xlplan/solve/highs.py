@@ -23,7 +23,7 @@ from xlplan.model.linear_program import LinearProgram
 from xlplan.solve.result import SolveResult, Termination
 
 FloatArray = NDArray[np.float64]
-IntArray = NDArray[np.int64]
+IntArray = NDArray[np.integer]
 
 _LOG = logging.getLogger(__name__)
 

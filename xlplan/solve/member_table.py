@@ -16,7 +16,7 @@ from xlplan.model.value_graph import Family, Member
 from xlplan.solve.member_cache import MemberCache
 
 FloatArray = NDArray[np.float64]
-IntArray = NDArray[np.int64]
+IntArray = NDArray[np.integer]
 
 
 @dataclass(frozen=True)

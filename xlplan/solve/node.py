@@ -30,7 +30,7 @@ from xlplan.solve.row_matrix import RowMatrix
 from xlplan.solve.tables import GraphTables
 
 FloatArray = NDArray[np.float64]
-IntArray = NDArray[np.int64]
+IntArray = NDArray[np.integer]
 
 MAX_ROUNDS = 60
 """Rounds of adding violated rows; what is left then only makes the value a little too low."""
@@ -143,13 +143,18 @@ class NodeModel:
         self._differs_column = np.ones(program.n_col, dtype=bool)
         self._differs_row = np.ones(program.n_row, dtype=bool)
         first = self.cache.get(self.i_family, 0)
-        numbers = (first.cost, first.col_lower, first.col_upper, first.row_lower, first.row_upper)
         if table is not None:
             self._differs_column[:] = self._differs_row[:] = False
             self._differs_column[table.columns] = self._differs_row[table.rows] = True
-            numbers = tuple(number.copy() for number in numbers)
-        none = np.zeros(0)
-        self._now = Now(*numbers, none, none.astype(bool))
+        self._now = Now(
+            first.cost.copy(),
+            first.col_lower.copy(),
+            first.col_upper.copy(),
+            first.row_lower.copy(),
+            first.row_upper.copy(),
+            fold_side=np.zeros(0),
+            is_fold_free=np.zeros(0, dtype=bool),
+        )
         self._now.fold(self._folding)
         kept = self._folding.kept
         self._moving = np.flatnonzero(self._differs_column[kept])

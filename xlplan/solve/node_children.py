@@ -26,7 +26,7 @@ from xlplan.solve.member_table import Numbers
 from xlplan.solve.tables import GraphTables
 
 FloatArray = NDArray[np.float64]
-IntArray = NDArray[np.int64]
+IntArray = NDArray[np.integer]
 
 CUT_TOLERANCE = 1e-9
 """Relative violation below which a child's cut is not added, for float rounding."""
@@ -440,7 +440,7 @@ class ChildRows:
             held = self._cuts.position[slots].tolist()
             if position in held:
                 continue  # it is there: what is left is the solver's tolerance
-            is_loose = row_dual[self._cuts.row[slots]] <= 0.0 if slots else []
+            is_loose = (row_dual[self._cuts.row[slots]] <= 0.0).tolist() if slots else []
             loose = [slot for slot, is_so in zip(slots, is_loose, strict=True) if is_so]
             # Of those the ones that repeat a cut come first.
             idle = [s for s in loose if held.count(int(self._cuts.position[s])) > 1]

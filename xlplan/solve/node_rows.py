@@ -15,7 +15,7 @@ from xlplan.solve.folding import Expanded, Folding
 from xlplan.solve.row_matrix import RowMatrix
 
 FloatArray = NDArray[np.float64]
-IntArray = NDArray[np.int64]
+IntArray = NDArray[np.integer]
 BoolArray = NDArray[np.bool_]
 
 FEW_ENTRIES = 8

@@ -25,7 +25,7 @@ from xlplan.solve.node import DUAL_TOLERANCE, NodeModel, NodeOutcome
 from xlplan.solve.tables import GraphTables, clip_state
 
 FloatArray = NDArray[np.float64]
-IntArray = NDArray[np.int64]
+IntArray = NDArray[np.integer]
 
 _LOG = logging.getLogger(__name__)
 

@@ -8,7 +8,7 @@ from numpy.typing import NDArray
 from xlplan.model.linear_program import LinearProgram
 
 FloatArray = NDArray[np.float64]
-IntArray = NDArray[np.int64]
+IntArray = NDArray[np.integer]
 
 
 class RowMatrix:

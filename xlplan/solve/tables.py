@@ -16,7 +16,7 @@ from xlplan.solve.cuts import DomainBox
 from xlplan.solve.member_cache import MemberCache
 
 FloatArray = NDArray[np.float64]
-IntArray = NDArray[np.int64]
+IntArray = NDArray[np.integer]
 
 
 FEW_EXITS = 8
