@@ -25,7 +25,8 @@ from xlplan.network.feeder import Feeder
 from xlplan.outages.damage import (
     first_moment_cost,
     normal_service_price_per_kwh,
-    price_per_kwh,
+    prices_per_kwh,
+    step_of,
 )
 from xlplan.outages.records import Scenario
 from xlplan.outages.sections import build_sections
@@ -97,16 +98,15 @@ class WindowContext:
     normal_price: FloatArray
     first_moment: FloatArray
     section_of_load: NDArray[np.int64]
+    prices: FloatArray
+    """(n_load, 4), price per kWh missed by the step of the clock (``damage.prices_per_kwh``)."""
     keep: float
     """Share of what is shed that customers miss: 1 / (1 + loss allowance)."""
 
     def event_price(self, clock_h: FloatArray) -> FloatArray:
         """Price per kWh missed, (n_period, n_load), or by load where ``clock_h`` is 2-D."""
-        classes = {c.customer_class: c for c in self.study.customer_classes}
         clock = clock_h if clock_h.ndim == 2 else np.repeat(clock_h[:, None], self.slots.n_load, 1)
-        price = np.zeros(clock.shape)
-        for i, load in enumerate(self.study.loads):
-            price[:, i] = price_per_kwh(classes[load.customer_class], clock[:, i])
+        price: FloatArray = self.prices[np.arange(self.slots.n_load), step_of(clock)]
         return price
 
 
@@ -122,6 +122,7 @@ def build_context(study: Study, feeder: Feeder, series: WindowSeries) -> WindowC
         normal_price=np.array([normal_service_price_per_kwh(c) for c in of_load]),
         first_moment=np.array([first_moment_cost(c) for c in of_load]),
         section_of_load=build_sections(feeder).section_of_bus[feeder.load_bus],
+        prices=np.array([prices_per_kwh(c) for c in of_load]).reshape(len(of_load), 4),
         keep=1.0 / (1.0 + study.settings.loss_allowance_frac),
     )
 

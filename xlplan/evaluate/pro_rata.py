@@ -110,6 +110,9 @@ def _spread(
     shed_kw: FloatArray,
 ) -> bool:
     """Spreads one period's shedding in place; whether anything moved."""
+    live = service.bus_live[context.feeder.load_bus]
+    if shed_kw[live].max(initial=0.0) <= TOLERANCE_KW:
+        return False  # equal shares of next to nothing
     moved = False
     for units in _pools(context, service, part_of_bus, load_kw, shed_kw):
         able = np.concatenate([unit.kw for unit in units])

@@ -49,9 +49,13 @@ def price_per_kwh(customer_class: CustomerClass, clock_h: ArrayLike) -> FloatArr
     -------
     array of the same shape
     """
+    return prices_per_kwh(customer_class)[step_of(clock_h)]
+
+
+def step_of(clock_h: ArrayLike) -> NDArray[np.int64]:
+    """Position in ``prices_per_kwh`` of a period that begins at ``clock_h``; the same shape."""
     clock = np.asarray(clock_h, dtype=float) + CLOCK_TOLERANCE_H
-    step = np.searchsorted(np.array(DURATIONS_H[1:]), clock, side="right")
-    return prices_per_kwh(customer_class)[step]
+    return np.searchsorted(np.array(DURATIONS_H[1:]), clock, side="right")
 
 
 def first_moment_cost(customer_class: CustomerClass) -> float:

@@ -130,24 +130,31 @@ class Folding:
         if not len(self):
             none = np.zeros(0, dtype=np.int64)
             return Expanded(start, index, value, np.zeros(len(start), int), none, np.zeros(0))
+        is_folded = np.append(self._fold_of_column[index] >= 0, False)
+        has_fold = np.diff(start) > 0  # an empty part of reduceat would be its first entry
+        if len(rows):
+            has_fold &= np.logical_or.reduceat(is_folded, start[:-1])
         return self._expand(
             [
-                (index[a:b], value[a:b])
-                for a, b in zip(start[:-1].tolist(), start[1:].tolist(), strict=True)
+                (index[a:b], value[a:b], has)
+                for a, b, has in zip(
+                    start[:-1].tolist(), start[1:].tolist(), has_fold.tolist(), strict=True
+                )
             ]
         )
 
     def expand_columns(self, folds: IntArray) -> Expanded:
         """Folded columns, by their position among the folds, as rows of the kept ones."""
-        return self._expand([(self.column[f : f + 1], np.ones(1)) for f in folds.tolist()])
+        return self._expand([(self.column[f : f + 1], np.ones(1), True) for f in folds.tolist()])
 
-    def _expand(self, rows: Sequence[tuple[IntArray, FloatArray]]) -> Expanded:
+    def _expand(self, rows: Sequence[tuple[IntArray, FloatArray, bool]]) -> Expanded:
+        """Rows as index, value and whether any of the columns is folded."""
         starts, indices, values = [0], [], []
         fold_starts, folds, multiples = [0], [], []
-        for index, value in rows:
+        for index, value, has_fold in rows:
             own, number = [], []
             # Late columns first: cancelling them brings in early ones.
-            for is_late in (True, False):
+            for is_late in (True, False) if has_fold else ():
                 fold = self._fold_of_column[index]
                 here = (fold >= 0) & (self._is_late[np.maximum(fold, 0)] == is_late)
                 if not here.any():
