@@ -454,8 +454,7 @@ def print_summary(result: StudyResult) -> None:
             size = {
                 "storage": f"{purchase.kw:,.0f} kW, {purchase.kwh:,.0f} kWh",
                 "generator": f"{purchase.kw:,.0f} kW",
-                "hardening": purchase.place,
-            }[purchase.kind]
+            }.get(purchase.kind, purchase.place)  # a line measure, or a device at its line
             print(f"  buy               {purchase.asset}: {size}")
     if not any(purchase.is_bought for purchase in best.purchases):
         print("  buy               nothing")

@@ -51,7 +51,7 @@ class CostParts:
 class Purchase:
     """One asset that can be bought, and what the plan buys of it.
 
-    ``kind``: storage, generator or hardening; ``place``: bus, or lines of a measure.
+    ``kind``: storage, generator, hardening or device; ``place``: bus, or lines of a measure.
     ``capital_gross`` before and ``capital_net`` after the grant; ``crf`` of its own life.
     """
 

@@ -402,9 +402,12 @@ def _pack_lines(
             money,
         )
     for case in pack.sensitivities:
-        # The plan kept is open to the search, so made anew can cost no more than it.
+        # The plan kept is open to the search, so made anew can cost no more than it; unless at
+        # these prices it is beyond the budget.
         above = case.anew.costs.total - case.kept.costs.total
-        if above > money:
+        budget = result.capital_budget
+        is_open = budget is None or case.kept.capital_cost <= budget * (1.0 + 1e-9)
+        if is_open and above > money:
             add(
                 f"Plan made anew, {case.parameter} {'high' if case.is_high else 'low'}",
                 "Amount by which it costs more than the plan kept, and 0",
