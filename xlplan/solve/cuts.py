@@ -26,7 +26,7 @@ from numpy.typing import NDArray
 from xlplan.model.value_graph import Family, Member
 from xlplan.solve.cut_pool import CutBatch
 from xlplan.solve.member_cache import MemberCache
-from xlplan.solve.member_table import MemberTable
+from xlplan.solve.member_table import FEW_EXITS, MemberTable
 from xlplan.solve.row_matrix import RowMatrix
 
 FloatArray = NDArray[np.float64]
@@ -38,9 +38,6 @@ ROUNDING_SHIFT = 1e-12
 
 SMALL_SLOPE = 1e-9
 """Slopes below this share of the largest term are moved into the intercept (scaling)."""
-
-MANY_EXITS = 8
-"""Cuts of a family with more exits than this are made member by member."""
 
 SNAP_WEIGHT = 1e-6
 """Multipliers of an exit whose sum is this close to the weight are scaled up to it."""
@@ -375,7 +372,7 @@ class DualBound:
         """What differs between the members; None where ``cuts_of_pairs`` cannot be used."""
         if not self._is_looked_at:
             self._is_looked_at = True
-            if len(self.family.exit_gate) <= MANY_EXITS and self.family.exit_columns is None:
+            if len(self.family.exit_gate) <= FEW_EXITS and self.family.exit_columns is None:
                 table = MemberTable(self._cache, self.i_family, self.family)
                 self._table = table if table.has_same_inputs else None
         return self._table

@@ -197,10 +197,12 @@ class KeptModel:
         HiGHS keeps its working space however small the need, so they go to a new object.
         """
         old, self._highs = self._highs, new_highs(**_KEPT)
-        self._highs.passModel(old.getLp())
+        if self._highs.passModel(old.getLp()) == highspy.HighsStatus.kError:
+            raise ValueError(f"HiGHS refused its own model of {self.name}")
         basis = old.getBasis()
-        if basis.valid:
-            self._highs.setBasis(basis)
+        # Without a basis the next run starts cold: slower, not wrong.
+        if basis.valid and self._highs.setBasis(basis) == highspy.HighsStatus.kError:
+            self.counts["basis refused"] += 1
 
     def forget_basis(self) -> None:
         """The next run starts cold."""

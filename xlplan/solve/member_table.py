@@ -19,6 +19,11 @@ FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.integer]
 
 
+FEW_EXITS = 8
+"""A family with no more exits than this has tables over all its members: of where they differ, and
+of the exits. Cuts and exits of other families are worked out member by member."""
+
+
 @dataclass(frozen=True)
 class Numbers:
     """Numbers of one member, or of n members with a first axis of length n.

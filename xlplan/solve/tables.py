@@ -14,13 +14,10 @@ from numpy.typing import NDArray
 from xlplan.model.value_graph import Family, Member, ValueGraph
 from xlplan.solve.cuts import DomainBox
 from xlplan.solve.member_cache import MemberCache
+from xlplan.solve.member_table import FEW_EXITS
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.integer]
-
-
-FEW_EXITS = 8
-"""Exits of families with no more than this are kept for every member."""
 
 
 @dataclass(frozen=True)
