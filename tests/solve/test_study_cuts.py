@@ -15,7 +15,7 @@ from xlplan.solve.cuts import ChildMultipliers, ExitMultipliers
 from xlplan.solve.decomposition import Engine
 from xlplan.solve.member_cache import MemberCache
 from xlplan.solve.node_solver import NodeSolver
-from xlplan.solve.tables import clip_state, gather_tables
+from xlplan.solve.tables import clip_states, gather_tables
 
 
 def graph_of(seed, features=None):
@@ -74,7 +74,7 @@ def test_quick_cuts_equal_plain_cuts(seed):
         for _ in range(3):
             i_member = int(rng.integers(family.n_member))
             capacity, state = random_point(graph, i_family, rng)
-            state = clip_state(solver.tables.families[i_family], state, capacity)
+            state = clip_states(solver.tables.families[i_family], state[None], capacity[None])[0]
             outcome = model.solve(i_member, state, capacity)
             # Noise makes every term count; any multipliers give a cut.
             pi = outcome.pi * (1.0 + 0.1 * rng.standard_normal(len(outcome.pi)))

@@ -133,6 +133,11 @@ class CutPool:
         """Group of one cut."""
         return int(self._key[position]) & ((1 << GROUP_BITS) - 1)
 
+    def groups_at(self, positions: IntArray) -> IntArray:
+        """Groups of some cuts."""
+        groups: IntArray = self._key[positions] & ((1 << GROUP_BITS) - 1)
+        return groups
+
     def add(self, batch: CutBatch) -> None:
         """Appends cuts; a second one of the same member and group is ignored."""
         key = _keys(batch.member, batch.group)

@@ -21,7 +21,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from xlplan.model.linear_program import LinearProgram
-from xlplan.solve.row_matrix import RowMatrix
+from xlplan.solve.row_matrix import RowMatrix, sums_by
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.integer]
@@ -106,23 +106,25 @@ class Folding:
         return place[~own].astype(np.int32), index[~own].astype(np.int32), value[~own]
 
     def complete(self, y: FloatArray, side: FloatArray) -> None:
-        """Fills the folded columns of a point.
+        """Fills the folded columns of k points.
 
         Parameters
         ----------
-        y : array, shape (n_col,), kept columns given, folded ones overwritten
-        side : array, shape (n_fold,), ``b_D``
+        y : array, shape (k, n_col), kept columns given, folded ones overwritten
+        side : array, shape (k, n_fold) or (1, n_fold), ``b_D``
         """
-        found = np.zeros(len(self))
-        left = np.zeros(len(self))
+        k = len(y)
+        found = np.zeros((k, len(self)))
+        left = np.zeros((k, len(self)))
         for blocks, places, (place, index, value) in zip(
             self._parts, (self._early, self._late), self._rest, strict=True
         ):
             if len(places):
-                left[places] = side[places] - np.bincount(place, value * y[index], len(places))
+                rest = sums_by(place, value * y.take(index, axis=1), len(places))
+                left[:, places] = side.take(places, axis=1) - rest
                 for inverse, inside in blocks:
-                    found[inside] = left[inside] @ inverse.T
-                y[self.column[places]] = found[places]
+                    found[:, inside] = left[:, inside] @ inverse.T
+                y[:, self.column[places]] = found[:, places]
 
     def expand_rows(self, rows: IntArray) -> Expanded:
         """Program rows without their folded columns."""

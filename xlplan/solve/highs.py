@@ -30,6 +30,8 @@ _LOG = logging.getLogger(__name__)
 FEASIBILITY_TOLERANCE = 1e-7
 """HiGHS's own default, stated because lazy rows are checked with the same."""
 
+_OK, _OPTIMAL = highspy.HighsStatus.kOk, highspy.HighsModelStatus.kOptimal
+
 _ROWWISE = int(highspy.MatrixFormat.kRowwise)
 _MINIMISE = int(highspy.ObjSense.kMinimize)
 
@@ -186,11 +188,6 @@ class KeptModel:
             if status == highspy.HighsStatus.kError:
                 raise ValueError(f"HiGHS refused rows of {self.name}")
 
-    def delete_rows(self, rows: IntArray) -> None:
-        """Deletes rows; those behind them move up."""
-        if len(rows):
-            self._highs.deleteRows(len(rows), _int32(rows))
-
     def rest(self) -> None:
         """Gives the memory for solving back; model and basis stay.
 
@@ -209,12 +206,14 @@ class KeptModel:
         self._highs.clearSolver()
         self.counts["cold restart"] += 1
 
-    def run(self) -> SolveResult:
+    def run(self, wants_dual: bool = True) -> SolveResult:
         """Solves; tries harder where the status is not optimal.
+
+        wants_dual : whether row duals come with the result; ``row_dual`` reads them afterwards
 
         Raises SolverFailureError where nothing helps; the model is then written to a file.
         """
-        result = self._run_once()
+        result = self._run_once(wants_dual)
         if result.termination is Termination.OPTIMAL:
             return result
         first_status = result.raw_status
@@ -228,7 +227,7 @@ class KeptModel:
             self._highs.clearSolver()
             for name, value in options.items():
                 self._highs.setOptionValue(name, value)
-            result = self._run_once()
+            result = self._run_once(wants_dual)
             self._highs.setOptionValue("presolve", "off")
             self._highs.setOptionValue("solver", "simplex")
             if result.termination is Termination.OPTIMAL:
@@ -236,17 +235,35 @@ class KeptModel:
         self.counts["failed"] += 1
         raise SolverFailureError(self.name, first_status, self.save())
 
-    def _run_once(self) -> SolveResult:
+    def _run_once(self, wants_dual: bool) -> SolveResult:
         begin = time.perf_counter()
         run_status = self._highs.run()
-        result = _read_result(self._highs, run_status, False, begin)
+        seconds = time.perf_counter() - begin
         self.counts["solve"] += 1
-        self.seconds += result.seconds
-        return result
+        self.seconds += seconds
+        if run_status != _OK or self._highs.getModelStatus() != _OPTIMAL:
+            return _read_result(self._highs, run_status, False, begin)
+        # What nearly every run comes to, read in as few steps as there can be.
+        solution, objective = self._highs.getSolution(), float(self._highs.getObjectiveValue())
+        has_dual = bool(solution.dual_valid)
+        return SolveResult(
+            Termination.OPTIMAL,
+            has_incumbent=True,
+            has_dual=has_dual,
+            raw_status="Optimal (Ok)",
+            seconds=seconds,
+            objective_or_nan=objective,
+            bound_or_nan=objective,
+            col_value_or_none=_vector(solution.col_value),
+            row_dual_or_none=_vector(solution.row_dual) if has_dual and wants_dual else None,
+        )
 
-    def column_duals(self) -> FloatArray:
-        """Reduced costs of the last run, which was optimal."""
-        return _vector(self._highs.getSolution().col_dual)
+    def row_dual(self) -> FloatArray:
+        """Multipliers of the rows, (n_row,), of the last run, which was optimal."""
+        solution = self._highs.getSolution()
+        if not solution.dual_valid:
+            raise SolverFailureError(self.name, "optimal without multipliers", self.save())
+        return _vector(solution.row_dual)
 
     def save(self) -> Path | None:
         """Writes the model to a file of the temporary folder; None where that fails."""

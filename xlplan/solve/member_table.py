@@ -49,6 +49,10 @@ class Numbers:
         """All numbers of one member, every column and row."""
         return Numbers(*(getattr(member, name) for name in Numbers.__dataclass_fields__))
 
+    def part(self, i: int | slice | IntArray) -> Numbers:
+        """One member, or several of them, of those on the first axis."""
+        return Numbers(*(getattr(self, name)[i] for name in Numbers.__dataclass_fields__))
+
 
 class ShiftedSeries:
     """An array (n_member, n) whose columns are kept as shifted parts of a few series.

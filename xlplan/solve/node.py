@@ -1,10 +1,14 @@
 """One family's linear program kept warm: members, states and capacities change, the basis stays.
 
-Enters: a state, capacities, the cuts of the children. Leaves: ``NodeOutcome``, and cuts of the
-node's own value. Folded columns are left out of the program (``folding.py``). Three things are left
-out at first and added where the solution violates them: lazy rows and the bounds of folded columns
+Enter: states, capacities, the cuts of the children. Leave: ``NodeOutcome``, and cuts of the node's
+own value. Folded columns are left out of the program (``folding.py``). Three things are left out at
+first and added where the solution violates them: lazy rows and the bounds of folded columns
 (``node_rows.py``), the cuts of the children, and the lifting of a gated exit's cuts
 (``node_children.py``).
+
+Points are solved in blocks: what moves the model from one to the next, and what is looked at
+afterwards, is worked out for the whole block in a few passes over arrays, for a call of NumPy costs
+as much for one point as for ten. Only the solver and the children's cuts go point by point.
 """
 
 from __future__ import annotations
@@ -20,17 +24,18 @@ from xlplan.model.value_graph import ValueGraph
 from xlplan.solve.cut_pool import CutBatch, CutPool, joined
 from xlplan.solve.cuts import ChildMultipliers, DualBound, ExitMultipliers
 from xlplan.solve.folding import Folding
-from xlplan.solve.highs import FEASIBILITY_TOLERANCE, KeptModel
+from xlplan.solve.highs import FEASIBILITY_TOLERANCE, KeptModel, SolverFailureError
 from xlplan.solve.member_cache import MemberCache
 from xlplan.solve.member_table import Numbers
 from xlplan.solve.node_children import ChildRows
-from xlplan.solve.node_rows import LazyRows, Now, ProgramRows
+from xlplan.solve.node_rows import Differences, LazyRows, Now, ProgramRows
 from xlplan.solve.result import SolveResult
 from xlplan.solve.row_matrix import RowMatrix
 from xlplan.solve.tables import GraphTables
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.integer]
+BoolArray = NDArray[np.bool_]
 
 MAX_ROUNDS = 60
 """Rounds of adding violated rows; what is left then only makes the value a little too low."""
@@ -38,17 +43,31 @@ MAX_ROUNDS = 60
 DUAL_TOLERANCE = 1e-6
 """Relative difference of a cut and the solver's objective that makes us drop the basis."""
 
-FACE_TOLERANCE = 1e-7
-"""Reduced cost, relative to the largest cost, that keeps a column at its bound on the face."""
-
 FEW_ROWS = 40
 """Up to so many violated rows are all added at once."""
+
+MOST_IN_BLOCK = 16
+"""So many points are solved before the lazy rows that they break are looked for."""
 
 MOST_PAIRS = 1024
 """So many cuts of other members are made in one pass over arrays."""
 
 WORST_PART = 8
 """Of more violated rows this part is added, the worst ones first."""
+
+
+@dataclass(frozen=True)
+class NodePoint:
+    """A member, and where its value is asked for.
+
+    state (n_state,), capacity (n_capacity,); cut_tolerance : by how much the value may be too low
+    because small violations of the children's cuts are left
+    """
+
+    member: int
+    state: FloatArray
+    capacity: FloatArray
+    cut_tolerance: float = 0.0
 
 
 @dataclass(frozen=True)
@@ -68,6 +87,41 @@ class NodeOutcome:
     exits: ExitMultipliers
     exit_group: IntArray
     """(n,) group of each cut in ``exits``, -1 where it is lifted."""
+
+
+@dataclass
+class _Block:
+    """Points that are solved together, and what the model is brought to for each of them.
+
+    now, members : numbers of the members, together and one by one; lower, upper (k, n_moving),
+    cost (k, n_costing), row_low, row_high (k, n_varying) of the model's columns and rows that may
+    change; fold_low, fold_high (k or 1, n_fold), lazy_low, lazy_high (k or 1, n_lazy): sides
+    beyond which a row is added; y (k, n_col): the points found, in the program's columns
+    """
+
+    points: Sequence[NodePoint]
+    now: Now
+    members: Sequence[Numbers]
+    lower: FloatArray
+    upper: FloatArray
+    cost: FloatArray
+    row_low: FloatArray
+    row_high: FloatArray
+    fold_low: FloatArray
+    fold_high: FloatArray
+    lazy_low: FloatArray
+    lazy_high: FloatArray
+    y: FloatArray
+
+
+@dataclass(frozen=True)
+class _Solved:
+    """What the solver says about one point; the children's cuts that were tight."""
+
+    result: SolveResult
+    row_dual: FloatArray
+    exits: ExitMultipliers
+    exit_group: IntArray
 
 
 class NodeModel:
@@ -100,76 +154,78 @@ class NodeModel:
         if self._theta_columns is not None:
             self._column_place[self._theta_columns] = self.n_kept + np.arange(self.n_exit)
         self._lazy = LazyRows(np.flatnonzero(program.is_lazy), self._matrix)
-        self._find_differences()
-        now = self._now
-        self._lower = np.concatenate([now.col_lower[kept], self.table.theta_lower])
-        self._upper = np.concatenate([now.col_upper[kept], np.full(self.n_exit, np.inf)])
-        self._cost = np.concatenate([now.cost[kept], np.zeros(self.n_exit)])
+        first = cache.get(i_family, 0)
+        self._differences = Differences(first, bound.table)
+        self._find_moving(first.in_columns)
+        self._rows = ProgramRows(family.name, self._folding, self._differences)
+        # The model begins at member 0; what its first point asks for is moved there.
+        now = self._now([0])
+        lower = np.concatenate([first.col_lower[kept], self.table.theta_lower])
+        upper = np.concatenate([first.col_upper[kept], np.full(self.n_exit, np.inf)])
+        cost = np.concatenate([first.cost[kept], np.zeros(self.n_exit)])
+        self._lower, self._upper = lower[self._moving], upper[self._moving]
+        self._cost = cost[self._costing]
         is_fold_row = np.zeros(program.n_row, dtype=bool)
         is_fold_row[self._folding.row] = True
         loaded = np.flatnonzero(~program.is_lazy & ~is_fold_row)
-        first = self._folding.expand_rows(loaded)
-        self._rows = ProgramRows(
-            family.name, self._folding, self._differs_row, self._differs_column
-        )
+        rows = self._folding.expand_rows(loaded)
         none = np.full(len(loaded), -1)
-        low, high = self._rows.append(loaded, none, np.arange(len(loaded)), first, now)
+        low, high = self._rows.append(loaded, none, np.arange(len(loaded)), rows, now)
         self._model = KeptModel(
             family.name,
-            self._cost,
-            self._lower,
-            self._upper,
+            cost,
+            lower,
+            upper,
             low,
             high,
-            first.start,
-            self._column_place[first.index],
-            first.value,
+            rows.start,
+            self._column_place[rows.index],
+            rows.value,
         )
         self._out_places = self._column_place[family.out_columns]
         self._children = ChildRows(
             graph, tables, pools, i_family, self._model, self._out_places, self.n_kept
         )
         self._member_index = -1
-        self._numbers: Numbers | None = None
+        self._n_block = 1
+        is_lazy_patched = bool(program.is_lazy[bound.patch_row].any())
+        # Members without a table are large; patched lazy rows are those of one member at a time.
+        self._most_in_block = 1 if bound.table is None or is_lazy_patched else MOST_IN_BLOCK
+        self._is_lazy_patched = is_lazy_patched
+
+    def _find_moving(self, in_columns: IntArray) -> None:
+        """Columns of the model whose bounds or costs may change, and how to read them."""
+        family, kept, differences = self.family, self._folding.kept, self._differences
         has_capacity = family.capacity_columns >= 0
         self._has_capacity = has_capacity
-        self._capacity_places = self._column_place[family.capacity_columns[has_capacity]]
-        patched_rows = bound.patch_row
-        self._is_lazy_patched = bool(program.is_lazy[patched_rows].any())
-
-    def _find_differences(self) -> None:
-        """Where members differ: everywhere, unless there is a table of it."""
-        table, program = self.bound.table, self.family.program
-        self._differs_column = np.ones(program.n_col, dtype=bool)
-        self._differs_row = np.ones(program.n_row, dtype=bool)
-        first = self.cache.get(self.i_family, 0)
-        if table is not None:
-            self._differs_column[:] = self._differs_row[:] = False
-            self._differs_column[table.columns] = self._differs_row[table.rows] = True
-        self._now = Now(
-            first.cost.copy(),
-            first.col_lower.copy(),
-            first.col_upper.copy(),
-            first.row_lower.copy(),
-            first.row_upper.copy(),
-            fold_side=np.zeros(0),
-            is_fold_free=np.zeros(0, dtype=bool),
+        capacities = family.capacity_columns[has_capacity]
+        is_moving = differences.column_place >= 0
+        self._differing = np.flatnonzero(is_moving)
+        is_moving[capacities] = True
+        is_moving[in_columns[in_columns >= 0]] = True
+        self._moving = np.flatnonzero(is_moving[kept])
+        """Columns of the model whose bounds may change."""
+        columns = kept[self._moving]
+        self._bounds = differences.bounds(columns)
+        self._place_in_moving = np.full(self.n_col, -1, dtype=np.int64)
+        self._place_in_moving[columns] = np.arange(len(columns))
+        self._capacity_at = self._place_in_moving[capacities]
+        costing = np.flatnonzero(differences.column_place[kept] >= 0)
+        self._costs = differences.costs(kept[costing])
+        self._n_costing = len(costing)
+        self._costing = np.concatenate([costing, self.n_kept + np.arange(self.n_exit)])
+        """Columns of the model whose costs may change, the exits last."""
+        if self._theta_columns is not None:
+            self._theta_costs = differences.costs(self._theta_columns)
+        self._fold_rows = differences.sides(self._folding.row)
+        self._fold_bounds = differences.bounds(self._folding.column)
+        self._lazy_sides = differences.sides(self._lazy.row)
+        self._limits: tuple[FloatArray, FloatArray, FloatArray, FloatArray] | None = None
+        self._do_limits_vary = (
+            self._fold_rows.does_vary or self._fold_bounds.does_vary or self._lazy_sides.does_vary
         )
-        self._now.fold(self._folding)
-        kept = self._folding.kept
-        self._moving = np.flatnonzero(self._differs_column[kept])
-        """Columns of the model whose bounds and costs may change with the member."""
-        self._moving_column = kept[self._moving]
-        self._do_folds_move = bool(self._differs_row[self._folding.row].any())
-        self._do_fold_bounds_move = bool(self._differs_column[self._folding.column].any())
-        self._do_lazy_rows_move = bool(self._differs_row[self._lazy.row].any())
-        self._take_sides()
-
-    def _take_sides(self) -> None:
-        """Sides of what is not in the model, as it is checked."""
-        now, lazy = self._now, self._lazy.row
-        self._fold_sides = _with_tolerance(*now.fold_bounds(self._folding))
-        self._lazy_sides = _with_tolerance(now.row_lower[lazy], now.row_upper[lazy])
+        self._same_cost = differences.first.cost.copy()
+        self._same_cost[self._differing] = 0.0
 
     @property
     def seconds_in_solver(self) -> float:
@@ -183,126 +239,170 @@ class NodeModel:
     # -- solving -------------------------------------------------------------------------------
 
     def solve(
-        self,
-        i_member: int,
-        state: FloatArray,
-        capacity: FloatArray,
-        cut_tolerance: float = 0.0,
-        second_cost: FloatArray | None = None,
+        self, i_member: int, state: FloatArray, capacity: FloatArray, cut_tolerance: float = 0.0
     ) -> NodeOutcome:
-        """Value of one member at one point, with the cuts that the pools hold now.
+        """One point of ``solve_run``; raises SolverFailureError where HiGHS finds no optimum."""
+        found = self.solve_run([NodePoint(i_member, state, capacity, cut_tolerance)])[0]
+        if isinstance(found, SolverFailureError):
+            raise found
+        return found
 
-        Parameters
-        ----------
-        i_member : int
-        state : array, shape (n_state,)
-        capacity : array, shape (n_capacity,)
-        cut_tolerance : float, by how much the value may be too low because small violations of
-            the children's cuts are left
-        second_cost : array, shape (n_col,), minimised among the optimal points; None: any of them
+    def solve_run(self, points: Sequence[NodePoint]) -> list[NodeOutcome | SolverFailureError]:
+        """Values at some points, one after the other, with the cuts that the pools hold now.
 
-        Returns
-        -------
-        NodeOutcome
-
-        Raises SolverFailureError where HiGHS finds no optimum.
+        Where HiGHS finds no optimum its failure stands in the place of the outcome.
         """
-        self._place(i_member, state, capacity)
-        assert self._numbers is not None
-        result = self._model.run()
+        outcomes: list[NodeOutcome | SolverFailureError] = []
+        while len(outcomes) < len(points):
+            part = points[len(outcomes) : len(outcomes) + self._n_block]
+            n_before = len(self._rows)
+            outcomes += self._solve_block(part)
+            # Where rows are still missed every point had better see those of the one before.
+            n = self._n_block // 2 if len(self._rows) > n_before else 2 * self._n_block
+            self._n_block = min(max(n, 1), self._most_in_block)
+        return outcomes
+
+    def _solve_block(self, points: Sequence[NodePoint]) -> list[NodeOutcome | SolverFailureError]:
+        """Points of one block: all once, then again those that broke rows left out."""
+        block = self._prepared(points)
+        found: list[_Solved | SolverFailureError | None] = [None] * len(points)
+        left = list(range(len(points)))
         for _ in range(MAX_ROUNDS):
-            y = self._point(result.col_value)
-            n_new = self._add_lazy_rows(y)
-            if self.n_exit:
-                n_new += self._children.add_violated(
-                    result.col_value, result.row_dual, self._numbers, cut_tolerance
-                )
-            if not n_new:
+            solved = []
+            for i in left:
+                self._move(block, i)
+                try:
+                    found[i] = self._settle(block, i)
+                    solved.append(i)
+                except SolverFailureError as failure:
+                    found[i] = failure
+            if not solved or len(points) == 1:
+                break  # one that is alone had its lazy rows looked at with the children's cuts
+            self._complete(block, solved, [_result(found[i]) for i in solved])
+            is_missed = self._add_lazy_rows(block, solved)
+            left = [i for i, is_so in zip(solved, is_missed, strict=True) if is_so]
+            if not left:
                 break
-            result = self._model.run()
+            block.row_low, block.row_high = self._rows.sides(block.now)
         else:
             self.counts["row rounds used up"] += 1
-            y = self._point(result.col_value)
-        if second_cost is not None:
-            for _ in range(MAX_ROUNDS):
-                y = self._point(self._second(result, second_cost))
-                # The second point may break rows that the first one did not need.
-                if not self._add_lazy_rows(y):
-                    break
-                result = self._model.run()
-        return self._outcome(result, y, capacity)
+        return self._outcomes(block, found)
 
-    def _point(self, primal: FloatArray) -> FloatArray:
-        """``y`` of the program, (n_col,), from the model's columns."""
-        y = np.empty(self.n_col)
-        y[self._folding.kept] = primal[: self.n_kept]
-        if self._theta_columns is not None:
-            y[self._theta_columns] = primal[self.n_kept :]
-        if len(self._folding):
-            self._folding.complete(y, self._now.fold_side)
-        return y
+    def _settle(self, block: _Block, i: int) -> _Solved:
+        """Solves where the model stands, until no cut of the children is missed.
 
-    def _place(self, i_member: int, state: FloatArray, capacity: FloatArray) -> None:
-        """Brings the kept model to a member, a state and capacities."""
-        is_new_member = i_member != self._member_index
-        if is_new_member:
-            self._take(i_member)
-        lower, upper, now, moving = self._lower.copy(), self._upper.copy(), self._now, self._moving
-        if is_new_member:
-            lower[moving] = now.col_lower[self._moving_column]
-            upper[moving] = now.col_upper[self._moving_column]
-        lower[self._capacity_places] = upper[self._capacity_places] = capacity[self._has_capacity]
-        lower[self._in_places] = upper[self._in_places] = state[self._is_given]
-        moved = ((lower != self._lower) | (upper != self._upper)).nonzero()[0]
-        self._model.set_col_bounds(moved, lower[moved], upper[moved])
-        self._lower, self._upper = lower, upper
-        self._children.set_capacity(capacity)
-        if is_new_member:
-            assert self._numbers is not None
-            self._children.set_member(self._numbers)
-
-    def _take(self, i_member: int) -> None:
-        """Takes another member's costs, sides and matrix entries into the model."""
-        table, now = self.bound.table, self._now
-        member = None if table is not None else self.cache.get(self.i_family, i_member)
-        if table is not None:
-            numbers = table.one(i_member)
-            now.cost[table.columns] = numbers.cost
-            now.col_lower[table.columns] = numbers.col_lower
-            now.col_upper[table.columns] = numbers.col_upper
-            now.row_lower[table.rows] = numbers.row_lower
-            now.row_upper[table.rows] = numbers.row_upper
-            into = table.first.in_columns
+        A point that is alone in its block gets its lazy rows in the same rounds.
+        """
+        numbers, is_alone = block.members[i], len(block.points) == 1
+        result = self._model.run(wants_dual=False)
+        for _ in range(MAX_ROUNDS):
+            n_new = 0
+            if self.n_exit:  # first, for it may ask for multipliers, which new rows make void
+                n_new += self._children.add_violated(
+                    result.col_value, numbers, block.points[i].cut_tolerance
+                )
+            if is_alone:
+                self._complete(block, [0], [result])
+                n_new += int(self._add_lazy_rows(block, [0]).sum())
+            if not n_new:
+                break
+            result = self._model.run(wants_dual=False)
         else:
-            assert member is not None
-            numbers, into = Numbers.of(member), member.in_columns
-            now.cost, now.col_lower, now.col_upper = member.cost, member.col_lower, member.col_upper
-            now.row_lower, now.row_upper = member.row_lower, member.row_upper
-        self._numbers, self._member_index = numbers, i_member
-        self._is_given = into >= 0
-        self._in_places = self._column_place[into[self._is_given]]
-        cost = self._cost.copy()
-        cost[self._moving] = now.cost[self._moving_column]
-        cost[self.n_kept :] = numbers.exit_weight
+            self.counts["row rounds used up"] += 1
+            if is_alone:
+                self._complete(block, [0], [result])
+        dual = self._model.row_dual()
+        exits, group = self._children.used(dual, result.col_value[self._out_places], numbers)
+        return _Solved(result, dual, exits, group)
+
+    def _complete(
+        self, block: _Block, places: Sequence[int], results: Sequence[SolveResult]
+    ) -> None:
+        """Fills ``y`` of some points of the block from the model's columns."""
+        y = np.empty((len(results), self.n_col))
+        primal = np.array([result.col_value for result in results])
+        y[:, self._folding.kept] = primal[:, : self.n_kept]
         if self._theta_columns is not None:
-            cost[self.n_kept :] += now.cost[self._theta_columns]
+            y[:, self._theta_columns] = primal[:, self.n_kept :]
+        if len(self._folding):
+            self._folding.complete(y, _of(block.now.fold_side, places))
+        block.y[places] = y
+
+    def _now(self, members: Sequence[int]) -> Now:
+        """Numbers of some members."""
+        table = self.bound.table
+        if table is not None:
+            numbers = table.numbers(np.array(members), np.arange(len(table.rows)))
+        else:
+            (i_member,) = members
+            own = Numbers.of(self.cache.get(self.i_family, i_member))
+            numbers = Numbers(*(np.asarray(v)[None] for v in vars(own).values()))
+        return Now.of(numbers, self._fold_rows)
+
+    def _prepared(self, points: Sequence[NodePoint]) -> _Block:
+        """What the model is brought to for each point."""
+        now, n = self._now([point.member for point in points]), len(points)
+        numbers = now.numbers
+        low, high = self._bounds.read(numbers.col_lower, numbers.col_upper)
+        lower, upper = (np.array(np.broadcast_to(v, (n, len(self._moving)))) for v in (low, high))
+        capacities = np.array([point.capacity for point in points])[:, self._has_capacity]
+        lower[:, self._capacity_at] = upper[:, self._capacity_at] = capacities
+        table = self.bound.table
+        into = (
+            self.cache.get(self.i_family, points[0].member).in_columns
+            if table is None
+            else table.first.in_columns
+        )
+        given = into >= 0
+        states = np.array([point.state for point in points])[:, given]
+        at = self._place_in_moving[into[given]]
+        lower[:, at] = upper[:, at] = states
+        cost = np.empty((n, len(self._costing)))
+        cost[:, : self._n_costing] = self._costs.read(numbers.cost)[0]
+        cost[:, self._n_costing :] = numbers.exit_weight
+        if self._theta_columns is not None:
+            cost[:, self._n_costing :] += self._theta_costs.read(numbers.cost)[0]
+        row_low, row_high = self._rows.sides(now)
+        if self._limits is None or self._do_limits_vary:
+            self._limits = (
+                *_with_tolerance(*now.fold_bounds(self._fold_bounds)),
+                *_with_tolerance(*self._lazy_sides.read(numbers.row_lower, numbers.row_upper)),
+            )
+        members = [numbers.part(i) for i in range(n)]
+        return _Block(
+            points, now, members, lower, upper, cost, row_low, row_high, *self._limits,
+            np.zeros((n, self.n_col)),
+        )  # fmt: skip
+
+    def _move(self, block: _Block, i: int) -> None:
+        """Brings the kept model to a point of the block."""
+        point, model, rows = block.points[i], self._model, self._rows
+        low, high = block.lower[i], block.upper[i]
+        moved = ((low != self._lower) | (high != self._upper)).nonzero()[0]
+        model.set_col_bounds(self._moving[moved], low[moved], high[moved])
+        self._lower, self._upper = low, high
+        self._children.set_capacity(point.capacity)
+        if point.member == self._member_index and len(rows.low) == block.row_low.shape[1]:
+            same = np.array_equal(rows.low, block.row_low[i])
+            if same and np.array_equal(rows.high, block.row_high[i]):
+                return
+        numbers, self._member_index = block.members[i], point.member
+        cost = block.cost[i]
         moved = (cost != self._cost).nonzero()[0]
-        self._model.set_costs(moved, cost[moved])
+        model.set_costs(self._costing[moved], cost[moved])
         self._cost = cost
-        was_free = now.is_fold_free
-        if self._do_folds_move:
-            now.fold(self._folding)
-        is_changed = self._do_fold_bounds_move or self._do_lazy_rows_move
-        if is_changed or not np.array_equal(was_free, now.is_fold_free):
-            self._take_sides()
-        moved = self._rows.move(now)
-        rows = self._rows
-        self._model.set_row_bounds(rows.place[moved], rows.low[moved], rows.high[moved])
+        low, high = block.row_low[i], block.row_high[i]
+        moved = ((low != rows.low) | (high != rows.high)).nonzero()[0]
+        model.set_row_bounds(rows.place[rows.varying[moved]], low[moved], high[moved])
+        rows.low, rows.high = low, high
         self._patch(numbers.patch_value)
+        self._children.set_member(numbers)
 
     def _patch(self, value: FloatArray) -> None:
         """Matrix entries that differ between members."""
         patch = self.family.patch
+        if not len(patch):
+            return
         changed = (self._matrix.value[patch] != value).nonzero()[0]
         if not len(changed):
             return
@@ -318,77 +418,126 @@ class NodeModel:
         if self._is_lazy_patched:
             self._lazy.refresh()
 
-    def _add_lazy_rows(self, y: FloatArray) -> int:
-        """Adds lazy rows and bounds of folded columns that ``y`` violates; their number."""
-        n_new = 0
+    def _add_lazy_rows(self, block: _Block, places: Sequence[int]) -> BoolArray:
+        """Adds lazy rows and bounds of folded columns that points of the block violate.
+
+        Returns which points, (k,), violate any that was not in the model.
+        """
+        y, is_missed, n_new = block.y[places], np.zeros(len(places), dtype=bool), 0
         if len(self._lazy):
-            low, high = self._lazy_sides
             place = self._rows.of_program[self._lazy.row]
-            at = self._worst(self._lazy.activity(y), low, high, place)
-            if len(at):
-                rows = self._lazy.row[at]
-                n_new += self._append_program_rows(rows, np.full(len(rows), -1))
+            rows = self._worst(
+                self._lazy.activity(y),
+                _of(block.lazy_low, places), _of(block.lazy_high, places), place, is_missed,
+            )  # fmt: skip
+            if len(rows):
+                rows = self._lazy.row[rows]
+                n_new += self._append_program_rows(block, rows, np.full(len(rows), -1))
         if len(self._folding):
-            value = y[self._folding.column]
-            low, high = self._fold_sides
-            folds = self._worst(value, low, high, self._rows.of_bound)
+            folds = self._worst(
+                y.take(self._folding.column, axis=1),
+                _of(block.fold_low, places), _of(block.fold_high, places),
+                self._rows.of_bound, is_missed,
+            )  # fmt: skip
             if len(folds):
-                n_new += self._append_program_rows(np.full(len(folds), -1), folds)
+                n_new += self._append_program_rows(block, np.full(len(folds), -1), folds)
         self.counts["lazy row"] += n_new
-        return n_new
+        return is_missed
 
     @staticmethod
     def _worst(
-        activity: FloatArray, low: FloatArray, high: FloatArray, place: IntArray
+        activity: FloatArray,
+        low: FloatArray,
+        high: FloatArray,
+        place: IntArray,
+        is_missed: BoolArray,
     ) -> IntArray:
-        """The most violated rows that are not in the model yet.
+        """The rows most violated at any of k points that are not in the model yet.
 
-        Where many are violated most of them follow from the worst ones (the voltage at the end of
-        a line from that in its middle), and every row makes the later solves slower.
+        activity (k, n); low, high (k, n) or (1, n); place (n,) in the model, -1 if not there;
+        is_missed (k,) is set where there are any. Where many are violated most of them follow from
+        the worst ones (the voltage at the end of a line from that in its middle), and every row
+        makes the later solves slower.
         """
-        found = ((activity > high) | (activity < low)).nonzero()[0]
-        if len(found):
+        is_out = (activity > high) | (activity < low)
+        hit = is_out.any(axis=1).nonzero()[0]
+        chosen: list[IntArray] = []
+        for i in hit.tolist():
+            found = is_out[i].nonzero()[0]
             found = found[place[found] < 0]
-        if len(found) <= FEW_ROWS:
-            return found
-        by = np.maximum(activity[found] - high[found], low[found] - activity[found])
-        size = np.where(by == activity[found] - high[found], high[found], low[found])
-        order = np.argsort(-by / (1.0 + np.abs(size)), kind="stable")
-        worst: IntArray = np.sort(found[order[: max(FEW_ROWS, len(found) // WORST_PART)]])
-        return worst
+            if not len(found):
+                continue
+            is_missed[i] = True
+            if len(found) > FEW_ROWS:
+                reached = activity[i, found]
+                below, above = _of(low, [i])[0, found], _of(high, [i])[0, found]
+                by = np.maximum(reached - above, below - reached)
+                size = np.where(by == reached - above, above, below)
+                order = np.argsort(-by / (1.0 + np.abs(size)), kind="stable")
+                found = np.sort(found[order[: max(FEW_ROWS, len(found) // WORST_PART)]])
+            chosen.append(found)
+        if len(chosen) <= 1:
+            return chosen[0] if chosen else np.zeros(0, dtype=np.int64)
+        together: IntArray = np.unique(np.concatenate(chosen))
+        return together
 
-    def _append_program_rows(self, rows: IntArray, folds: IntArray) -> int:
+    def _append_program_rows(self, block: _Block, rows: IntArray, folds: IntArray) -> int:
         """Adds program rows, or bounds of folded columns where ``rows`` is -1; their number."""
         if folds[0] >= 0:
             expanded = self._folding.expand_columns(folds)
         else:
             expanded = self._folding.expand_rows(rows)
         places = self._model.n_row + np.arange(len(rows))
-        low, high = self._rows.append(rows, folds, places, expanded, self._now)
+        low, high = self._rows.append(rows, folds, places, expanded, block.now.one(0))
         columns = self._column_place[expanded.index]
         self._model.add_rows(low, high, expanded.start, columns, expanded.value)
         return len(rows)
 
     # -- what comes out ------------------------------------------------------------------------
 
-    def _outcome(self, result: SolveResult, y: FloatArray, capacity: FloatArray) -> NodeOutcome:
-        assert self._numbers is not None
-        now, dual = self._numbers, result.row_dual
-        states = y[self.family.out_columns].reshape(self.n_exit, self.table.n_state)
-        exits, exit_group = self._children.used(dual, states, now)
-        box = self.table.box
-        low = box.state_lower_matrix @ capacity
-        high = np.maximum(box.state_upper_matrix @ capacity, low)
-        return NodeOutcome(
-            value=float((result.objective + now.offset) / now.scale),
-            cost=float((self._now.cost @ y + now.offset) / now.scale),
-            y=y,
-            theta=result.col_value[self.n_kept :],
-            out_states=np.minimum(np.maximum(states, low), high),
-            pi=self._rows.multipliers(dual),
-            exits=exits,
-            exit_group=exit_group,
+    def _outcomes(
+        self, block: _Block, found: Sequence[_Solved | SolverFailureError | None]
+    ) -> list[NodeOutcome | SolverFailureError]:
+        """Outcomes of a block, from what the solver said."""
+        places = [i for i, one in enumerate(found) if isinstance(one, _Solved)]
+        solved = [one for one in found if isinstance(one, _Solved)]
+        outcomes: list[NodeOutcome | SolverFailureError | None] = [
+            one if isinstance(one, SolverFailureError) else None for one in found
+        ]
+        if not solved:
+            return [one for one in outcomes if one is not None]
+        # Rows that came later than a result have no multiplier in it.
+        dual = np.zeros((len(solved), self._model.n_row))
+        for i, one in enumerate(solved):
+            dual[i, : len(one.row_dual)] = one.row_dual
+        pi = self._rows.multipliers(dual)
+        numbers, y = block.now.numbers, block.y
+        if len(places) < len(found):
+            numbers, y = numbers.part(np.array(places)), y[places]
+        cost = y @ self._same_cost + np.einsum(
+            "ij,ij->i", y.take(self._differing, axis=1), numbers.cost
         )
+        cost = (cost + numbers.offset) / numbers.scale
+        objective = np.array([one.result.objective for one in solved])
+        value = (objective + numbers.offset) / numbers.scale
+        n_exit, n_state, box = self.n_exit, self.table.n_state, self.table.box
+        states = y[:, self.family.out_columns.ravel()].reshape(len(places), n_exit, n_state)
+        capacity = np.array([block.points[i].capacity for i in places])
+        low = (capacity @ box.state_lower_matrix.T)[:, None, :]
+        high = np.maximum((capacity @ box.state_upper_matrix.T)[:, None, :], low)
+        states = np.minimum(np.maximum(states, low), high)
+        for i, (place, one) in enumerate(zip(places, solved, strict=True)):
+            outcomes[place] = NodeOutcome(
+                value=float(value[i]),
+                cost=float(cost[i]),
+                y=y[i],
+                theta=one.result.col_value[self.n_kept :],
+                out_states=states[i],
+                pi=pi[i],
+                exits=one.exits,
+                exit_group=one.exit_group,
+            )
+        return [one for one in outcomes if one is not None]
 
     def cuts_from(
         self, outcomes: Sequence[NodeOutcome], members: Sequence[int], groups: Sequence[int]
@@ -530,44 +679,6 @@ class NodeModel:
         """The next solve starts cold."""
         self._model.forget_basis()
 
-    def _second(self, result: SolveResult, second_cost: FloatArray) -> FloatArray:
-        """Primal point that is best by a second cost among the optimal ones.
-
-        Columns with a reduced cost and rows with a multiplier stay at their sides: that is the
-        optimal face. Only bounds and costs change, so the model is as before afterwards.
-        """
-        n_all = self.n_kept + self.n_exit
-        if second_cost[self._folding.column].any():
-            raise ValueError("a folded column has a second cost")
-        size = max(1.0, float(np.abs(self._cost).max(initial=0.0))) * FACE_TOLERANCE
-        value = np.clip(result.col_value, self._lower, self._upper)
-        columns = np.flatnonzero(np.abs(self._model.column_duals()) > size)
-        rows = np.flatnonzero(np.abs(result.row_dual) > size)
-        low, high = self._model_sides()
-        dual = result.row_dual[rows]
-        side = np.where(dual > 0.0, low[rows], high[rows])
-        rows, side = rows[np.isfinite(side)], side[np.isfinite(side)]
-        everything = np.arange(n_all)
-        kept_cost = second_cost[self._folding.kept]
-        self._model.set_col_bounds(columns, value[columns], value[columns])
-        self._model.set_row_bounds(rows, side, side)
-        self._model.set_costs(everything, np.concatenate([kept_cost, np.zeros(self.n_exit)]))
-        again = self._model.run()
-        self._model.set_costs(everything, self._cost)
-        self._model.set_row_bounds(rows, low[rows], high[rows])
-        self._model.set_col_bounds(columns, self._lower[columns], self._upper[columns])
-        self.counts["second objective"] += 1
-        return again.col_value
-
-    def _model_sides(self) -> tuple[FloatArray, FloatArray]:
-        """Sides of every row of the kept model, in its order."""
-        low = np.full(self._model.n_row, -np.inf)
-        high = np.full(self._model.n_row, np.inf)
-        low[self._rows.place], high[self._rows.place] = self._rows.low, self._rows.high
-        rows, sides = self._children.sides()
-        low[rows] = sides
-        return low, high
-
 
 def _parts(counts: Sequence[int]) -> list[slice]:
     """Consecutive outcomes whose pairs are worked out together: arrays of a bounded size."""
@@ -588,3 +699,13 @@ def _with_tolerance(low: FloatArray, high: FloatArray) -> tuple[FloatArray, Floa
         wide_low = low - FEASIBILITY_TOLERANCE * (1.0 + np.abs(low))
         wide_high = high + FEASIBILITY_TOLERANCE * (1.0 + np.abs(high))
     return wide_low, wide_high
+
+
+def _of(sides: FloatArray, places: Sequence[int]) -> FloatArray:
+    """Rows of some points, or the one row that serves all."""
+    return sides[places] if len(sides) > 1 else sides
+
+
+def _result(found: _Solved | SolverFailureError | None) -> SolveResult:
+    assert isinstance(found, _Solved)
+    return found.result

@@ -154,7 +154,7 @@ class ChildRows:
         # Whether an exit hands on one column as two components of the state.
         self._has_repeats = bool((out[:, 1:] == out[:, :-1]).any()) if out.size else False
         self._targets = self._find_targets(family.out_columns) if self.table.is_fixed else []
-        self._slots: dict[int, list[int]] = {}
+        self._slots = [np.zeros(0, dtype=np.int64) for _ in range(self.n_exit)]
         self._slot_cuts: dict[tuple[int, int, int], list[int]] = {}
         self._last_out = np.zeros((self.n_exit, self.n_state))
         self._lifts: dict[tuple[int, int, int], float] = {}
@@ -182,62 +182,56 @@ class ChildRows:
         """Puts the new member's child into the slots: cuts used last time, or the best guess."""
         if self.table.is_fixed:
             return
-        for e in range(self.n_exit):
+        for e, weight in enumerate(now.exit_weight.tolist()):
             i_child, i_member = now.exit_child[e].tolist()
-            slots = self._slots.setdefault(e, [])
             positions: list[int] = []
-            if now.exit_weight[e] > 0.0 and i_member >= 0:
+            if weight > 0.0 and i_member >= 0:
                 positions = self._slot_cuts.get((e, i_child, i_member), [])
                 if not positions:
                     best = self._highest(i_child, i_member, self._last_out[e])
                     positions = [] if best is None else [best[0]]
+            slots = self._slots[e]
             if not positions:
                 rows = self._cuts.row[slots]
                 self._cuts.group[slots] = NO_CUT
                 self._cuts.position[slots] = -1
+                self._cuts.intercept[slots] = -np.inf
                 self._model.set_row_bounds(
                     rows, np.full(len(rows), -np.inf), np.full(len(rows), np.inf)
                 )
-                self._cuts.intercept[slots] = -np.inf
                 continue
-            while len(slots) < min(len(positions), MOST_FIRST_SLOTS):
-                slots.append(len(self._cuts.row))
-                self._append([(e, i_child, positions[len(slots) - 1], 0)], now)
+            more = positions[len(slots) : MOST_FIRST_SLOTS]
+            if more:
+                self._add_slots(e, i_child, more, now)
             # Slots that have nothing to hold repeat the first cut: a free row in the basis of
             # the solver would cost more iterations than a double one.
-            for i, slot in enumerate(slots):
-                self._write_slot(slot, e, i_child, positions[i if i < len(positions) else 0])
-            self._set_slot_sides(slots)
+            n = len(slots)
+            self._write_slots(e, slots, i_child, (positions + [positions[0]] * n)[:n])
 
     # -- cuts that are missed ------------------------------------------------------------------
 
-    def add_violated(
-        self, point: FloatArray, row_dual: FloatArray, now: Numbers, tolerance: float
-    ) -> int:
+    def add_violated(self, point: FloatArray, now: Numbers, tolerance: float) -> int:
         """Adds the highest violated cut of every exit; their number.
 
         Parameters
         ----------
         point : array, (n_kept + n_exit,), of the model
-        row_dual : array, (n_model_row,)
         now : Numbers of the member
         tolerance : by how much the value may be too low, in true scale
         """
-        weight = now.exit_weight
-        total = weight.sum()
+        total = float(now.exit_weight.sum())
         if total <= 0.0:
             return 0
+        allowed = tolerance * float(now.scale) / total
+        if not self.table.is_fixed:
+            return self._use_slots(self._violated_varying(point, allowed, now), now)
         theta = point[self._n_kept :]
-        allowed = np.maximum(tolerance * now.scale / total, CUT_TOLERANCE * (1.0 + np.abs(theta)))
-        states = point[self._out_places]
-        if self.table.is_fixed:
-            chosen = self._violated_fixed(states, theta + allowed, now)
-            fresh = [choice for choice in chosen if choice not in self._known]
-            self._known.update(fresh)
-            self._append(fresh, now)
-            return len(fresh)
-        chosen = self._violated_varying(states, theta + allowed, now)
-        return self._use_slots(chosen, row_dual, now)
+        reached = theta + np.maximum(allowed, CUT_TOLERANCE * (1.0 + np.abs(theta)))
+        chosen = self._violated_fixed(point[self._out_places], reached, now)
+        fresh = [choice for choice in chosen if choice not in self._known]
+        self._known.update(fresh)
+        self._append(fresh, now)
+        return len(fresh)
 
     def _find_targets(self, out_columns: IntArray) -> list[_Target]:
         """Groups exits by child and state, so that a child's cuts are evaluated once."""
@@ -330,17 +324,20 @@ class ChildRows:
         top = int(np.argmax(value))
         return int(cuts.order[begin + top]), float(value[top])
 
-    def _violated_varying(
-        self, states: FloatArray, reached: FloatArray, now: Numbers
-    ) -> list[Choice]:
+    def _violated_varying(self, point: FloatArray, allowed: float, now: Numbers) -> list[Choice]:
         """Like ``_violated_fixed`` for children that change with the member."""
         chosen = []
-        for e in (now.exit_weight > 0.0).nonzero()[0].tolist():
-            i_child, i_member = now.exit_child[e].tolist()
+        for e, weight in enumerate(now.exit_weight.tolist()):
+            if weight <= 0.0:
+                continue
             if self._is_gated[e]:
                 raise NotImplementedError("a gated exit whose children differ between members")
-            best = self._highest(i_child, i_member, states[e])
-            if best is not None and best[1] > reached[e]:
+            i_child, i_member = now.exit_child[e].tolist()
+            theta = float(point[self._n_kept + e])
+            best = self._highest(i_child, i_member, point[self._out_places[e]])
+            if best is None:
+                continue
+            if best[1] > theta + max(allowed, CUT_TOLERANCE * (1.0 + abs(theta))):
                 chosen.append((e, i_child, best[0], 0))
         return chosen
 
@@ -408,50 +405,58 @@ class ChildRows:
 
     # -- slots: children that change with the member -------------------------------------------
 
-    def _write_slot(self, slot: int, e: int, i_child: int, position: int) -> None:
-        """Overwrites one slot with one cut; its side is set by ``_set_slot_sides``."""
+    def _add_slots(self, e: int, i_child: int, positions: list[int], now: Numbers) -> None:
+        """Appends rows for more slots of an exit."""
+        n = len(self._cuts.row)
+        self._append([(e, i_child, position, 0) for position in positions], now)
+        self._slots[e] = np.append(self._slots[e], np.arange(n, n + len(positions)))
+
+    def _write_slots(self, e: int, slots: IntArray, i_child: int, positions: list[int]) -> None:
+        """Overwrites slots of an exit with cuts of its child."""
+        if not len(slots):
+            return
         pool, cuts = self.pools[i_child], self._cuts
-        slope = pool.state_slope[position]
-        is_moved = slope != cuts.state_slope[slot]
+        at = np.array(positions)
+        slope = pool.state_slope[at]
+        is_moved = slope != cuts.state_slope[slots]
         if is_moved.any():
-            row, columns = int(cuts.row[slot]), self._out_places[e]
+            columns = self._out_places[e]
             if self._has_repeats:
                 merged, inverse = np.unique(columns, return_inverse=True)
-                total = np.bincount(inverse, weights=slope)
-                self._model.set_row_coefficients(row, merged, -total)
+                for slot, numbers in zip(slots.tolist(), slope, strict=True):
+                    total = np.bincount(inverse, weights=numbers)
+                    self._model.set_row_coefficients(int(cuts.row[slot]), merged, -total)
             else:
-                self._model.set_row_coefficients(row, columns[is_moved], -slope[is_moved])
-            cuts.state_slope[slot] = slope
-        cuts.intercept[slot] = pool.intercept[position]
-        cuts.capacity_slope[slot] = pool.capacity_slope[position]
-        cuts.group[slot] = pool.group_at(position)
-        cuts.position[slot] = position
-
-    def _set_slot_sides(self, slots: list[int]) -> None:
-        cuts = self._cuts
-        sides = cuts.intercept[slots] + cuts.capacity_slope[slots] @ self._capacity
+                i, j = is_moved.nonzero()
+                self._model.set_coefficients(cuts.row[slots[i]], columns[j], -slope[i, j])
+            cuts.state_slope[slots] = slope
+        capacity_slope, intercept = pool.capacity_slope[at], pool.intercept[at]
+        cuts.intercept[slots], cuts.capacity_slope[slots] = intercept, capacity_slope
+        cuts.group[slots] = pool.groups_at(at)
+        cuts.position[slots] = at
+        sides = intercept + capacity_slope @ self._capacity
         self._model.set_row_bounds(cuts.row[slots], sides, np.full(len(slots), np.inf))
 
-    def _use_slots(self, chosen: list[Choice], row_dual: FloatArray, now: Numbers) -> int:
+    def _use_slots(self, chosen: list[Choice], now: Numbers) -> int:
         """Writes violated cuts into slots that are not tight, or into new ones."""
-        n_used = 0
+        if not chosen:
+            return 0
+        row_dual, n_used = self._model.row_dual(), 0
         for e, i_child, position, _ in chosen:
             slots = self._slots[e]
             held = self._cuts.position[slots].tolist()
             if position in held:
                 continue  # it is there: what is left is the solver's tolerance
-            is_loose = (row_dual[self._cuts.row[slots]] <= 0.0).tolist() if slots else []
-            loose = [slot for slot, is_so in zip(slots, is_loose, strict=True) if is_so]
+            is_loose = (row_dual[self._cuts.row[slots]] <= 0.0).tolist()
+            loose = [i for i, is_so in enumerate(is_loose) if is_so]
             # Of those the ones that repeat a cut come first.
-            idle = [s for s in loose if held.count(int(self._cuts.position[s])) > 1]
+            idle = [i for i in loose if held.count(held[i]) > 1]
             # One cut per component of the state can be tight at once, beside the first ones.
             free = idle or (loose if len(slots) >= FIRST_SLOTS + self.n_state else [])
             if free:
-                self._write_slot(free[0], e, i_child, position)
-                self._set_slot_sides([free[0]])
+                self._write_slots(e, slots[free[0] : free[0] + 1], i_child, [position])
             else:
-                slots.append(len(self._cuts.row))
-                self._append([(e, i_child, position, 0)], now)
+                self._add_slots(e, i_child, [position], now)
             n_used += 1
         return n_used
 

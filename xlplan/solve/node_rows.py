@@ -1,7 +1,8 @@
 """Which rows of a program are in its kept model, with which sides, and which are missed there.
 
-``Now`` holds the numbers of the member that the model stands at, ``ProgramRows`` the rows in the
-model, ``LazyRows`` those that are added when a point breaks them.
+``Numbers`` of a few members come in, with a first axis over them; ``Lookup`` reads some positions
+of all of them at once. ``ProgramRows`` holds the rows in the model, ``LazyRows`` those that are
+added when a point breaks them.
 """
 
 from __future__ import annotations
@@ -11,8 +12,10 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from xlplan.model.value_graph import Member
 from xlplan.solve.folding import Expanded, Folding
-from xlplan.solve.row_matrix import RowMatrix
+from xlplan.solve.member_table import MemberTable, Numbers
+from xlplan.solve.row_matrix import RowMatrix, sums_by
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.integer]
@@ -22,32 +25,111 @@ FEW_ENTRIES = 8
 """Lazy rows of up to so many entries are evaluated side by side."""
 
 
-@dataclass
-class Now:
-    """Numbers of one member, of every column and row, and what folding makes of them.
+class Lookup:
+    """Some positions of vectors over the program's columns or rows, read for k members at once.
 
-    fold_side (n_fold,) ``b_D``; is_fold_free (n_fold,) whether the row of a fold is free
+    Parameters
+    ----------
+    at : (n,), positions
+    place : (n_all,), where each stands among the numbers that differ, -1: the same in all members
+    same : vectors (n_all,) of any member, one for each that will be read
     """
 
-    cost: FloatArray
-    col_lower: FloatArray
-    col_upper: FloatArray
-    row_lower: FloatArray
-    row_upper: FloatArray
+    def __init__(self, at: IntArray, place: IntArray, *same: FloatArray) -> None:
+        found = place[at]
+        self._inside = np.flatnonzero(found >= 0)
+        self._source = found[self._inside]
+        self._n_varying, self._is_all = len(self._inside), len(self._inside) == len(at)
+        self._same = [] if self._is_all else [vector[at][None, :] for vector in same]
+
+    @property
+    def does_vary(self) -> bool:
+        """Whether members differ at any of the positions."""
+        return self._n_varying > 0
+
+    def read(self, *varying: FloatArray) -> list[FloatArray]:
+        """Each vector, (k, n), from what differs, (k, n_differing); (1, n) where nothing does."""
+        if self._is_all and self._n_varying:
+            return [vector.take(self._source, axis=1) for vector in varying]
+        if not self._n_varying:
+            return list(self._same) or [np.zeros((1, 0)) for _ in varying]
+        found = []
+        for same, vector in zip(self._same, varying, strict=True):
+            whole = np.repeat(same, len(vector), axis=0)
+            whole[:, self._inside] = vector[:, self._source]
+            found.append(whole)
+        return found
+
+
+class Differences:
+    """Where the members of a family differ: everywhere, unless there is a table of it.
+
+    column_place (n_col,), row_place (n_row,) : place among what differs, -1: the same in all
+    """
+
+    def __init__(self, first: Member, table: MemberTable | None) -> None:
+        self.first = first
+        if table is None:
+            self.column_place = np.arange(len(first.cost))
+            self.row_place = np.arange(len(first.row_lower))
+        else:
+            self.column_place, self.row_place = table.column_place, table.row_place
+
+    def bounds(self, columns: IntArray) -> Lookup:
+        """Reads ``col_lower`` and ``col_upper``."""
+        first = self.first
+        return Lookup(columns, self.column_place, first.col_lower, first.col_upper)
+
+    def costs(self, columns: IntArray) -> Lookup:
+        """Reads ``cost``."""
+        return Lookup(columns, self.column_place, self.first.cost)
+
+    def sides(self, rows: IntArray) -> Lookup:
+        """Reads ``row_lower`` and ``row_upper``."""
+        first = self.first
+        return Lookup(rows, self.row_place, first.row_lower, first.row_upper)
+
+
+@dataclass(frozen=True)
+class Now:
+    """Numbers of k members, and what folding makes of them.
+
+    numbers : with a first axis of length k
+    fold_side (k, n_fold) or (1, n_fold) ``b_D``; is_fold_free alike, whether a fold's row is free
+    """
+
+    numbers: Numbers
     fold_side: FloatArray
     is_fold_free: BoolArray
 
-    def fold(self, folding: Folding) -> None:
-        """Takes the sides of folded rows anew."""
-        side = self.row_lower[folding.row]
-        self.is_fold_free = ~np.isfinite(side)
-        self.fold_side = np.where(self.is_fold_free, 0.0, side)
+    @staticmethod
+    def of(numbers: Numbers, fold_rows: Lookup) -> Now:
+        """Takes the sides of folded rows, which ``fold_rows`` reads."""
+        side, _ = fold_rows.read(numbers.row_lower, numbers.row_upper)
+        is_free = ~np.isfinite(side)
+        return Now(numbers, np.where(is_free, 0.0, side) if is_free.any() else side, is_free)
 
-    def fold_bounds(self, folding: Folding) -> tuple[FloatArray, FloatArray]:
-        """Bounds of folded columns, none where the row of the fold is free."""
+    def __len__(self) -> int:
+        return len(self.numbers.exit_weight)
+
+    def one(self, i: int) -> Now:
+        """The ``i``-th member alone."""
+        j = slice(i, i + 1)
+        side, is_free = self.fold_side, self.is_fold_free
+        return Now(
+            self.numbers.part(j),
+            side[j] if len(side) > 1 else side,
+            is_free[j] if len(side) > 1 else is_free,
+        )
+
+    def fold_bounds(self, bounds: Lookup) -> tuple[FloatArray, FloatArray]:
+        """Bounds of folded columns, which ``bounds`` reads; none where the fold's row is free."""
+        low, high = bounds.read(self.numbers.col_lower, self.numbers.col_upper)
+        if not self.is_fold_free.any():
+            return low, high
         return (
-            np.where(self.is_fold_free, -np.inf, self.col_lower[folding.column]),
-            np.where(self.is_fold_free, np.inf, self.col_upper[folding.column]),
+            np.where(self.is_fold_free, -np.inf, low),
+            np.where(self.is_fold_free, np.inf, high),
         )
 
 
@@ -55,30 +137,29 @@ class ProgramRows:
     """Program rows, and bounds of folded columns, that are in the model, and where.
 
     program (n,) program row or -1; bounded (n,) fold whose column's bound it is, or -1; place (n,)
-    row of the model; low, high (n,) sides as they stand there; ``multiple`` times fold row
-    ``multiple_fold`` is part of the ``multiple_row``-th of them; of_program, of_bound: the way
-    back, -1 where not in the model; varying: those whose sides differ between members.
+    row of the model; ``multiple`` times fold row ``multiple_fold`` is part of the
+    ``multiple_row``-th of them; of_program, of_bound: the way back, -1 where not in the model;
+    varying (n_varying,): those whose sides differ between members; low, high (n_varying,): their
+    sides as they stand in the model.
 
     Parameters
     ----------
     name : str, for messages
     folding : Folding
-    differs_row, differs_column : (n_row,), (n_col,), what differs between members
+    differences : Differences
     """
 
-    def __init__(
-        self, name: str, folding: Folding, differs_row: BoolArray, differs_column: BoolArray
-    ) -> None:
-        self.name, self._folding = name, folding
-        self._differs_row, self._differs_column = differs_row, differs_column
+    def __init__(self, name: str, folding: Folding, differences: Differences) -> None:
+        self.name, self._folding, self._differences = name, folding, differences
         self.program = self.bounded = self.place = np.zeros(0, dtype=np.int32)
         self.multiple_row = self.multiple_fold = np.zeros(0, dtype=np.int32)
         self.multiple = np.zeros(0)
-        self.of_program = np.full(len(differs_row), -1, dtype=np.int32)
+        n_row = len(differences.row_place)
+        self.of_program = np.full(n_row, -1, dtype=np.int32)
         self.of_bound = np.full(len(folding), -1, dtype=np.int32)
         self.low = self.high = np.zeros(0)
-        self.varying = self._varying_multiples = np.zeros(0, dtype=np.int64)
-        self._place_in_varying = np.zeros(0, dtype=np.int64)
+        self.varying = np.zeros(0, dtype=np.int64)
+        self._reader = _SideReader(self, self.varying, np.zeros(0, dtype=np.int64))
 
     def __len__(self) -> int:
         return len(self.program)
@@ -86,7 +167,7 @@ class ProgramRows:
     def append(
         self, rows: IntArray, folds: IntArray, places: IntArray, expanded: Expanded, now: Now
     ) -> tuple[FloatArray, FloatArray]:
-        """Puts rows behind; their sides."""
+        """Puts rows behind; their sides for the one member of ``now``."""
         begin = len(self)
         new = begin + np.arange(len(rows), dtype=np.int32)
         self.of_program[rows[rows >= 0]] = new[rows >= 0]
@@ -98,67 +179,84 @@ class ProgramRows:
         self.multiple_row = _behind(self.multiple_row, np.repeat(new, np.diff(expanded.fold_start)))
         self.multiple_fold = _behind(self.multiple_fold, expanded.fold)
         self.multiple = np.concatenate([self.multiple, expanded.multiple])
-        low, high = self._sides(
-            new, np.arange(n_before, len(self.multiple)), self.multiple_row[n_before:] - begin, now
-        )
-        self.low, self.high = np.concatenate([self.low, low]), np.concatenate([self.high, high])
+        multiples = np.arange(n_before, len(self.multiple))
+        low, high = _SideReader(self, new, multiples).read(now)
+        n_varying = len(self.varying)
         self._find_varying()
-        return low, high
+        # Rows come behind, so those that varied before stand first, as they stood.
+        fresh = self.varying[n_varying:] - begin
+        self.low = np.concatenate([self.low, low[0, fresh]])
+        self.high = np.concatenate([self.high, high[0, fresh]])
+        return low[0], high[0]
 
-    def move(self, now: Now) -> IntArray:
-        """Brings the sides to another member; positions of those that changed."""
-        low, high = self._sides(self.varying, self._varying_multiples, self._place_in_varying, now)
-        is_moved = (low != self.low[self.varying]) | (high != self.high[self.varying])
-        self.low[self.varying], self.high[self.varying] = low, high
-        moved: IntArray = self.varying[is_moved]
-        return moved
+    def sides(self, now: Now) -> tuple[FloatArray, FloatArray]:
+        """Sides of the varying rows for every member of ``now``, (k, n_varying)."""
+        return self._reader.read(now)
 
     def multipliers(self, dual: FloatArray) -> FloatArray:
-        """Multipliers of the program's rows, (n_row,), from those of the model's rows."""
-        pi = np.zeros(len(self.of_program))
-        own = dual[self.place]
+        """Multipliers of the program's rows, (k, n_row), from those of the model's, (k, n)."""
+        k, n_fold = len(dual), len(self._folding)
+        pi = np.zeros((k, len(self.of_program)))
+        own = dual.take(self.place, axis=1)
         is_row = self.program >= 0
-        pi[self.program[is_row]] = own[is_row]
-        n_fold = len(self._folding)
+        pi[:, self.program[is_row]] = own[:, is_row]
         if n_fold:
-            weights = self.multiple * own[self.multiple_row]
-            pi[self._folding.row] = np.bincount(self.multiple_fold, weights, n_fold)
+            weights = self.multiple * own.take(self.multiple_row, axis=1)
+            pi[:, self._folding.row] = sums_by(self.multiple_fold, weights, n_fold)
         return pi
 
     def _find_varying(self) -> None:
+        differs_column = self._differences.column_place >= 0
+        differs_row = self._differences.row_place >= 0
         differs = np.zeros(len(self), dtype=bool)
         is_row = self.program >= 0
-        differs[is_row] = self._differs_row[self.program[is_row]]
+        differs[is_row] = differs_row[self.program[is_row]]
         column = self._folding.column[self.bounded[~is_row]]
-        differs[~is_row] = self._differs_column[column]
-        by_fold = self._differs_row[self._folding.row]
+        differs[~is_row] = differs_column[column]
+        by_fold = differs_row[self._folding.row]
         differs[self.multiple_row[by_fold[self.multiple_fold]]] = True
         # Where a fold's row is free in some members, so is the bound of its column.
         differs[~is_row] |= by_fold[self.bounded[~is_row]]
         self.varying = np.flatnonzero(differs)
-        self._varying_multiples = np.flatnonzero(differs[self.multiple_row])
-        place = np.cumsum(differs) - 1
-        self._place_in_varying = place[self.multiple_row[self._varying_multiples]]
+        multiples = np.flatnonzero(differs[self.multiple_row])
+        self._reader = _SideReader(self, self.varying, multiples)
 
-    def _sides(
-        self, at: IntArray, multiples: IntArray, places: IntArray, now: Now
-    ) -> tuple[FloatArray, FloatArray]:
-        """Sides of the rows ``at``; ``multiples`` belong to them, at ``places`` in ``at``."""
-        program = self.program[at]
+
+class _SideReader:
+    """Sides of the rows ``at`` of ``ProgramRows``, to which the ``multiples`` belong."""
+
+    def __init__(self, rows: ProgramRows, at: IntArray, multiples: IntArray) -> None:
+        self._name, self.n = rows.name, len(at)
+        program = rows.program[at]
         is_bound = program < 0
-        low, high = now.row_lower[program], now.row_upper[program]
-        if is_bound.any():
-            folds = self.bounded[at[is_bound]]
-            columns = self._folding.column[folds]
-            free = now.is_fold_free[folds]
-            low[is_bound] = np.where(free, -np.inf, now.col_lower[columns])
-            high[is_bound] = np.where(free, np.inf, now.col_upper[columns])
-        if len(multiples):
-            fold = self.multiple_fold[multiples]
-            shift = np.bincount(places, self.multiple[multiples] * now.fold_side[fold], len(at))
-            lost = places[now.is_fold_free[fold]]
-            if len(lost) and (np.isfinite(low[lost]) | np.isfinite(high[lost])).any():
-                raise ValueError(f"{self.name}: a folded column counts without its row")
+        self._own, self._bound = np.flatnonzero(~is_bound), np.flatnonzero(is_bound)
+        self._sides = rows._differences.sides(program[self._own])
+        self._folds = rows.bounded[at[self._bound]]
+        self._bounds = rows._differences.bounds(rows._folding.column[self._folds])
+        place = np.full(len(rows), -1, dtype=np.int64)
+        place[at] = np.arange(len(at))
+        self._place = place[rows.multiple_row[multiples]]
+        self._fold, self._multiple = rows.multiple_fold[multiples], rows.multiple[multiples]
+
+    def read(self, now: Now) -> tuple[FloatArray, FloatArray]:
+        """Lower and upper sides, (k, n)."""
+        numbers = now.numbers
+        low, high = np.empty((len(now), self.n)), np.empty((len(now), self.n))
+        own_low, own_high = self._sides.read(numbers.row_lower, numbers.row_upper)
+        low[:, self._own], high[:, self._own] = own_low, own_high
+        if len(self._bound):
+            own_low, own_high = self._bounds.read(numbers.col_lower, numbers.col_upper)
+            free = now.is_fold_free.take(self._folds, axis=1)
+            low[:, self._bound] = np.where(free, -np.inf, own_low)
+            high[:, self._bound] = np.where(free, np.inf, own_high)
+        if len(self._fold):
+            sides = now.fold_side.take(self._fold, axis=1)
+            shift = sums_by(self._place, self._multiple * sides, self.n)
+            if now.is_fold_free.any():
+                lost = np.zeros((len(now.is_fold_free), self.n), dtype=bool)
+                lost |= sums_by(self._place, now.is_fold_free.take(self._fold, axis=1), self.n) > 0
+                if (lost & (np.isfinite(low) | np.isfinite(high))).any():
+                    raise ValueError(f"{self._name}: a folded column counts without its row")
             low, high = low + shift, high + shift
         return low, high
 
@@ -188,7 +286,6 @@ class LazyRows:
         self._entries = matrix.entries(many).astype(np.int32)
         self._index = matrix.index[self._entries].astype(np.int32)
         self._of_entry = np.repeat(np.arange(len(many)), counts[self._n_few :]).astype(np.int32)
-        self._activity = np.zeros(len(rows))
 
     def __len__(self) -> int:
         return len(self.row)
@@ -200,17 +297,18 @@ class LazyRows:
             value[:] = self._matrix.value[entries].T
 
     def activity(self, y: FloatArray) -> FloatArray:
-        """Activity at a point, (n,); overwritten by the next call."""
+        """Activity, (k, n), at k points, (k, n_col)."""
+        found = np.empty((len(y), len(self.row)))
         for part, index, value in self._parts:
-            total = self._activity[part]
+            total = found[:, part]
             total[:] = 0.0
             for i, v in zip(index, value, strict=True):
-                total += v * y[i]
+                total += v * y.take(i, axis=1)
         n_many = len(self.row) - self._n_few
         if n_many:
-            values = self._matrix.value[self._entries] * y[self._index]
-            self._activity[self._n_few :] = np.bincount(self._of_entry, values, n_many)
-        return self._activity
+            values = self._matrix.value[self._entries] * y.take(self._index, axis=1)
+            found[:, self._n_few :] = sums_by(self._of_entry, values, n_many)
+        return found
 
 
 def _behind(old: NDArray[np.int32], new: NDArray[np.integer]) -> NDArray[np.int32]:

@@ -21,8 +21,8 @@ from xlplan.solve.cut_pool import CutBatch, CutPool, joined
 from xlplan.solve.cuts import DualBound
 from xlplan.solve.highs import SolverFailureError
 from xlplan.solve.member_cache import MemberCache
-from xlplan.solve.node import DUAL_TOLERANCE, NodeModel, NodeOutcome
-from xlplan.solve.tables import GraphTables, clip_state
+from xlplan.solve.node import DUAL_TOLERANCE, NodeModel, NodeOutcome, NodePoint
+from xlplan.solve.tables import GraphTables, clip_states
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.integer]
@@ -55,7 +55,6 @@ class NodeRequest:
     """One node to be solved.
 
     state : (n_state,), clipped into its domain before use; capacity : (n_capacity,)
-    second_cost : (n_col,), minimised among the optimal points, or None
     replica : which of the family's kept models to use; each has its own history
     group : number of the cuts made, -1 for no cuts
     share : other members for which the same multipliers are tried, or None
@@ -68,7 +67,6 @@ class NodeRequest:
     member: int
     state: FloatArray
     capacity: FloatArray
-    second_cost: FloatArray | None = None
     replica: int = 0
     group: int = -1
     share: Share | None = None
@@ -154,23 +152,19 @@ class NodeSolver:
         i_family, family = requests[0].family, self.graph.families[requests[0].family]
         model, table = self.model(i_family, requests[0].replica), self.tables.families[i_family]
         solutions: list[NodeSolution] = []
-        states: list[FloatArray] = []
         asked: list[int] = []
         outcomes: list[NodeOutcome] = []
-        for request in requests:
-            self.counts["node solve"] += 1
-            state = clip_state(table, request.state, request.capacity)
-            states.append(state)
-            try:
-                outcome = model.solve(
-                    request.member,
-                    state,
-                    request.capacity,
-                    request.cut_tolerance,
-                    request.second_cost,
-                )
-            except SolverFailureError as failure:
-                _LOG.warning("member %d: %s", request.member, failure)
+        self.counts["node solve"] += len(requests)
+        states = clip_states(
+            table, np.array([r.state for r in requests]), np.array([r.capacity for r in requests])
+        )
+        points = [
+            NodePoint(r.member, state, r.capacity, r.cut_tolerance)
+            for r, state in zip(requests, states, strict=True)
+        ]
+        for request, state, outcome in zip(requests, states, model.solve_run(points), strict=True):
+            if isinstance(outcome, SolverFailureError):
+                _LOG.warning("member %d: %s", request.member, outcome)
                 solutions.append(self._failed(request, state))
                 continue
             if request.group >= 0 and outcome.value > request.known:
@@ -189,9 +183,7 @@ class NodeSolver:
                 )
             )
         if asked:
-            cuts = self._checked_cuts(
-                model, outcomes, [requests[i] for i in asked], np.array([states[i] for i in asked])
-            )
+            cuts = self._checked_cuts(model, outcomes, [requests[i] for i in asked], states[asked])
             solutions[asked[0]] = replace(solutions[asked[0]], cuts=(cuts,))
         if self._do_models_rest and family.is_expanded:
             model.rest()

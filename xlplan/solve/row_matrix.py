@@ -44,3 +44,12 @@ class RowMatrix:
         counts = self.start[rows + 1] - self.start[rows]
         start = np.concatenate([[0], np.cumsum(counts)])
         return start, self.index[entries], self.value[entries]
+
+
+def sums_by(place: IntArray, weights: NDArray[np.generic], n: int) -> FloatArray:
+    """Sums of every row of ``weights`` (k, m) by ``place`` (m,): (k, n)."""
+    k = len(weights)
+    if k == 1:
+        return np.bincount(place, weights[0], n)[None, :]
+    flat = place + n * np.arange(k)[:, None]
+    return np.bincount(flat.ravel(), weights.ravel(), k * n).reshape(k, n)

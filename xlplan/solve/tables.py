@@ -188,9 +188,12 @@ def _domain(graph: ValueGraph, i_family: int, family: Family) -> DomainBox:
     )
 
 
-def clip_state(table: FamilyTable, state: FloatArray, capacity: FloatArray) -> FloatArray:
-    """A state brought into its domain: solvers leave it outside by a rounding error."""
-    lower = table.box.state_lower_matrix @ capacity
-    upper = table.box.state_upper_matrix @ capacity
-    clipped: FloatArray = np.minimum(np.maximum(state, lower), np.maximum(upper, lower))
+def clip_states(table: FamilyTable, states: FloatArray, capacities: FloatArray) -> FloatArray:
+    """States (n, n_state), each at its own capacities (n, n_capacity), brought into their domain.
+
+    Solvers leave it by a rounding error.
+    """
+    lower = capacities @ table.box.state_lower_matrix.T
+    upper = capacities @ table.box.state_upper_matrix.T
+    clipped: FloatArray = np.minimum(np.maximum(states, lower), np.maximum(upper, lower))
     return clipped
