@@ -29,6 +29,7 @@ from xlplan.solve.member_cache import MemberCache
 from xlplan.solve.member_table import Numbers
 from xlplan.solve.node_children import ChildRows
 from xlplan.solve.node_rows import Differences, LazyRows, Now, ProgramRows
+from xlplan.solve.node_slots import Held, SlotRows
 from xlplan.solve.result import SolveResult
 from xlplan.solve.row_matrix import RowMatrix
 from xlplan.solve.tables import GraphTables
@@ -89,24 +90,46 @@ class NodeOutcome:
     """(n,) group of each cut in ``exits``, -1 where it is lifted."""
 
 
+@dataclass(frozen=True)
+class _Change:
+    """What differs between the model and k points, or between these.
+
+    whole : arrays (k, n_all) of what may differ; places (n,) : of the model, where it does; values
+    (k, n). So each point's numbers go to the solver without being compared in between.
+    """
+
+    whole: tuple[FloatArray, ...]
+    places: NDArray[np.int32]
+    values: tuple[FloatArray, ...]
+
+    @staticmethod
+    def between(
+        places: IntArray, before: Sequence[FloatArray], whole: tuple[FloatArray, ...]
+    ) -> _Change:
+        """From what stands in the model, (n_all,) each, and what is wanted."""
+        moves = np.zeros(len(places), dtype=bool)
+        for old, new in zip(before, whole, strict=True):
+            moves |= (new != old).any(axis=0)
+        at = moves.nonzero()[0]
+        values = tuple(v.take(at, axis=1) for v in whole)
+        return _Change(whole, places[at].astype(np.int32), values)
+
+
 @dataclass
 class _Block:
     """Points that are solved together, and what the model is brought to for each of them.
 
-    now, members : numbers of the members, together and one by one; lower, upper (k, n_moving),
-    cost (k, n_costing), row_low, row_high (k, n_varying) of the model's columns and rows that may
-    change; fold_low, fold_high (k or 1, n_fold), lazy_low, lazy_high (k or 1, n_lazy): sides
-    beyond which a row is added; y (k, n_col): the points found, in the program's columns
+    now, members : numbers of the members, together and one by one; bounds, costs, sides : of the
+    model's columns and rows; fold_low, fold_high (k or 1, n_fold), lazy_low, lazy_high (k or 1, n_lazy): sides beyond which a
+    row is added; y (k, n_col): the points found, in the program's columns
     """
 
     points: Sequence[NodePoint]
     now: Now
     members: Sequence[Numbers]
-    lower: FloatArray
-    upper: FloatArray
-    cost: FloatArray
-    row_low: FloatArray
-    row_high: FloatArray
+    bounds: _Change
+    costs: _Change
+    sides: _Change
     fold_low: FloatArray
     fold_high: FloatArray
     lazy_low: FloatArray
@@ -116,12 +139,11 @@ class _Block:
 
 @dataclass(frozen=True)
 class _Solved:
-    """What the solver says about one point; the children's cuts that were tight."""
+    """What the solver says about one point, and which cuts of the children were in the model."""
 
     result: SolveResult
     row_dual: FloatArray
-    exits: ExitMultipliers
-    exit_group: IntArray
+    held: Held
 
 
 class NodeModel:
@@ -183,9 +205,12 @@ class NodeModel:
             rows.value,
         )
         self._out_places = self._column_place[family.out_columns]
-        self._children = ChildRows(
-            graph, tables, pools, i_family, self._model, self._out_places, self.n_kept
-        )
+        self._children: ChildRows | SlotRows
+        parts = (i_family, self._model, self._out_places, self.n_kept)
+        if self.table.is_fixed:
+            self._children = ChildRows(graph, tables, pools, *parts)
+        else:
+            self._children = SlotRows(graph, pools, *parts)
         self._member_index = -1
         self._n_block = 1
         is_lazy_patched = bool(program.is_lazy[bound.patch_row].any())
@@ -283,7 +308,7 @@ class NodeModel:
             left = [i for i, is_so in zip(solved, is_missed, strict=True) if is_so]
             if not left:
                 break
-            block.row_low, block.row_high = self._rows.sides(block.now)
+            block.sides = self._side_change(block.now)
         else:
             self.counts["row rounds used up"] += 1
         return self._outcomes(block, found)
@@ -311,9 +336,7 @@ class NodeModel:
             self.counts["row rounds used up"] += 1
             if is_alone:
                 self._complete(block, [0], [result])
-        dual = self._model.row_dual()
-        exits, group = self._children.used(dual, result.col_value[self._out_places], numbers)
-        return _Solved(result, dual, exits, group)
+        return _Solved(result, self._model.row_dual(), self._children.held())
 
     def _complete(
         self, block: _Block, places: Sequence[int], results: Sequence[SolveResult]
@@ -362,41 +385,40 @@ class NodeModel:
         cost[:, self._n_costing :] = numbers.exit_weight
         if self._theta_columns is not None:
             cost[:, self._n_costing :] += self._theta_costs.read(numbers.cost)[0]
-        row_low, row_high = self._rows.sides(now)
         if self._limits is None or self._do_limits_vary:
             self._limits = (
                 *_with_tolerance(*now.fold_bounds(self._fold_bounds)),
                 *_with_tolerance(*self._lazy_sides.read(numbers.row_lower, numbers.row_upper)),
             )
+        bounds = _Change.between(self._moving, (self._lower, self._upper), (lower, upper))
+        costs = _Change.between(self._costing, (self._cost,), (cost,))
         members = [numbers.part(i) for i in range(n)]
         return _Block(
-            points, now, members, lower, upper, cost, row_low, row_high, *self._limits,
+            points, now, members, bounds, costs, self._side_change(now), *self._limits,
             np.zeros((n, self.n_col)),
         )  # fmt: skip
 
+    def _side_change(self, now: Now) -> _Change:
+        """Sides of the rows of the model for the members of a block."""
+        rows = self._rows
+        return _Change.between(rows.place[rows.varying], (rows.low, rows.high), rows.sides(now))
+
     def _move(self, block: _Block, i: int) -> None:
         """Brings the kept model to a point of the block."""
-        point, model, rows = block.points[i], self._model, self._rows
-        low, high = block.lower[i], block.upper[i]
-        moved = ((low != self._lower) | (high != self._upper)).nonzero()[0]
-        model.set_col_bounds(self._moving[moved], low[moved], high[moved])
-        self._lower, self._upper = low, high
-        self._children.set_capacity(point.capacity)
-        if point.member == self._member_index and len(rows.low) == block.row_low.shape[1]:
-            same = np.array_equal(rows.low, block.row_low[i])
-            if same and np.array_equal(rows.high, block.row_high[i]):
-                return
-        numbers, self._member_index = block.members[i], point.member
-        cost = block.cost[i]
-        moved = (cost != self._cost).nonzero()[0]
-        model.set_costs(self._costing[moved], cost[moved])
-        self._cost = cost
-        low, high = block.row_low[i], block.row_high[i]
-        moved = ((low != rows.low) | (high != rows.high)).nonzero()[0]
-        model.set_row_bounds(rows.place[rows.varying[moved]], low[moved], high[moved])
-        rows.low, rows.high = low, high
-        self._patch(numbers.patch_value)
-        self._children.set_member(numbers)
+        point, model, children, rows = block.points[i], self._model, self._children, self._rows
+        low, high = block.bounds.values
+        model.set_col_bounds(block.bounds.places, low[i], high[i])
+        model.set_costs(block.costs.places, block.costs.values[0][i])
+        low, high = block.sides.values
+        model.set_row_bounds(block.sides.places, low[i], high[i])
+        self._lower, self._upper = (whole[i] for whole in block.bounds.whole)
+        self._cost = block.costs.whole[0][i]
+        rows.low, rows.high = (whole[i] for whole in block.sides.whole)
+        is_other = children.set_capacity(point.capacity)
+        if is_other or point.member != self._member_index:
+            self._member_index = point.member
+            self._patch(block.members[i].patch_value)
+            children.set_member(block.members[i])
 
     def _patch(self, value: FloatArray) -> None:
         """Matrix entries that differ between members."""
@@ -523,6 +545,9 @@ class NodeModel:
         n_exit, n_state, box = self.n_exit, self.table.n_state, self.table.box
         states = y[:, self.family.out_columns.ravel()].reshape(len(places), n_exit, n_state)
         capacity = np.array([block.points[i].capacity for i in places])
+        exits = self._children.used(
+            dual, [one.held for one in solved], [block.members[i] for i in places]
+        )
         low = (capacity @ box.state_lower_matrix.T)[:, None, :]
         high = np.maximum((capacity @ box.state_upper_matrix.T)[:, None, :], low)
         states = np.minimum(np.maximum(states, low), high)
@@ -534,8 +559,8 @@ class NodeModel:
                 theta=one.result.col_value[self.n_kept :],
                 out_states=states[i],
                 pi=pi[i],
-                exits=one.exits,
-                exit_group=one.exit_group,
+                exits=exits[i][0],
+                exit_group=exits[i][1],
             )
         return [one for one in outcomes if one is not None]
 
