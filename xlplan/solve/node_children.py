@@ -13,14 +13,15 @@ made, so that it holds at the other value of the gate too.
 from __future__ import annotations
 
 from collections import Counter
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
 from xlplan.model.value_graph import ValueGraph
-from xlplan.solve.cut_pool import CutPool, SortedCuts
-from xlplan.solve.cuts import ExitMultipliers, lift_amount
+from xlplan.solve.cut_pool import CutPool
+from xlplan.solve.cuts import ExitMultipliers, lift_amounts
+from xlplan.solve.fixed_children import FixedChildren
 from xlplan.solve.highs import KeptModel
 from xlplan.solve.member_table import Numbers
 from xlplan.solve.tables import GraphTables
@@ -36,6 +37,9 @@ FIRST_SLOTS = 3
 
 MOST_FIRST_SLOTS = 8
 """Slots filled at most when a member comes with cuts that were tight last time."""
+
+MOST_LIFTS = 64
+"""So many cuts are lifted in one pass over arrays, each against all cuts of another child."""
 
 NO_CUT = -2
 """Group of a slot that holds no cut; -1 is that of a lifted cut."""
@@ -76,45 +80,6 @@ class _CutRows:
             setattr(self, name, np.concatenate([getattr(self, name), getattr(other, name)]))
 
 
-@dataclass(frozen=True)
-class _Segments:
-    """Targets that have cuts, where these begin and end, and the target of each cut."""
-
-    target: IntArray
-    start: IntArray
-    end: IntArray
-    by_cut: NDArray[np.int32]
-
-
-@dataclass(frozen=True)
-class _Target:
-    """Exits that ask one child family, grouped by the child's member and the state handed on.
-
-    exits (n,), place (n,) which target each exit asks; members (n_target,) of the child, ascending
-    """
-
-    i_child: int
-    is_gated: bool
-    exits: IntArray
-    place: IntArray
-    members: IntArray
-    _known: list[tuple[IntArray, _Segments]] = field(default_factory=list)
-
-    def segments(self, cuts: SortedCuts) -> _Segments:
-        """Where the cuts of the targets lie; kept until there are other cuts."""
-        if not self._known or self._known[0][0] is not cuts.order:
-            begin, end = cuts.start[self.members], cuts.start[self.members + 1]
-            has_cuts = np.flatnonzero(end > begin)
-            by_cut = np.zeros(len(cuts.order), dtype=np.int32)
-            start, stop = begin[has_cuts], end[has_cuts]
-            if len(has_cuts):
-                # Cuts of members between two targets count with the one before, and are left out.
-                reach = np.append(start[1:], stop[-1])
-                by_cut[start[0] : reach[-1]] = np.repeat(has_cuts, reach - start)
-            self._known[:] = [(cuts.order, _Segments(has_cuts, start, stop, by_cut))]
-        return self._known[0][1]
-
-
 class ChildRows:
     """The cut rows of one kept model.
 
@@ -153,7 +118,9 @@ class ChildRows:
         out = np.sort(family.out_columns, axis=1)
         # Whether an exit hands on one column as two components of the state.
         self._has_repeats = bool((out[:, 1:] == out[:, :-1]).any()) if out.size else False
-        self._targets = self._find_targets(family.out_columns) if self.table.is_fixed else []
+        self._fixed = FixedChildren(
+            self.table.child, self.table.child_if_gated, family.out_columns, self.table.box, pools
+        )
         self._slots: dict[int, list[int]] = {}
         self._slot_cuts: dict[tuple[int, int, int], list[int]] = {}
         self._last_out = np.zeros((self.n_exit, self.n_state))
@@ -239,86 +206,42 @@ class ChildRows:
         chosen = self._violated_varying(states, theta + allowed, now)
         return self._use_slots(chosen, row_dual, now)
 
-    def _find_targets(self, out_columns: IntArray) -> list[_Target]:
-        """Groups exits by child and state, so that a child's cuts are evaluated once."""
-        found: dict[tuple[int, bool, int], dict[int, list[int]]] = {}
-        layers: dict[tuple[int, bool, int], int] = {}
-        seen: dict[tuple[object, ...], tuple[int, bool, int]] = {}
-        for is_gated, table in ((False, self.table.child), (True, self.table.child_if_gated)):
-            for e in range(self.n_exit):
-                i_child, i_member = int(table[e, 0]), int(table[e, 1])
-                if i_member < 0:
-                    continue
-                columns = tuple(out_columns[e].tolist())
-                full = (i_child, i_member, is_gated, columns)
-                if full not in seen:
-                    depth = layers.get((i_child, is_gated, i_member), 0)
-                    layers[i_child, is_gated, i_member] = depth + 1
-                    seen[full] = (i_child, is_gated, depth)
-                found.setdefault(seen[full], {}).setdefault(i_member, []).append(e)
-        targets = []
-        for (i_child, is_gated, _), by_member in found.items():
-            members = sorted(by_member)
-            exits = [e for m in members for e in by_member[m]]
-            place = [i for i, m in enumerate(members) for _ in by_member[m]]
-            targets.append(
-                _Target(i_child, is_gated, np.array(exits), np.array(place), np.array(members))
-            )
-        return targets
-
     def _violated_fixed(
         self, states: FloatArray, reached: FloatArray, now: Numbers
     ) -> list[Choice]:
         """What to add, at most one cut for each exit: those above ``reached``."""
-        best = reached.copy()
-        choice: dict[int, tuple[int, int, int]] = {}
-        for target in self._targets:
-            pool, exits = self.pools[target.i_child], target.exits
-            is_active = now.exit_weight[exits] > 0.0
-            gate = self._gate[exits]
-            is_active &= gate > 0.0 if target.is_gated else gate < 1.0
-            if not pool.n or not is_active.any():
-                continue
-            cuts = pool.by_member(self._capacity)
-            segments = target.segments(cuts)
-            n_target = len(target.members)
-            at_state = np.zeros((n_target, self.n_state))
-            at_state[target.place] = states[exits]
-            # What is wanted lies together: a plan from some period on needs the later ones.
-            wanted = target.place[is_active]
-            k = slice(*np.searchsorted(segments.target, [wanted.min(), wanted.max() + 1]).tolist())
-            asked = segments.target[k]
-            if not len(asked):
-                continue
-            first, last = int(segments.start[k][0]), int(segments.end[k][-1])
-            by_cut = segments.by_cut[first:last]
-            value = cuts.level[first:last].copy()
-            for i in range(self.n_state):
-                value += cuts.state_slope[first:last, i] * at_state[:, i][by_cut]
-            start = segments.start[k] - first
-            top = np.full(n_target, -np.inf)
-            end = segments.end[k] - first
-            # Every second part is what lies between two targets.
-            parts = np.column_stack([start, end]).ravel()[:-1]
-            top[asked] = np.maximum.reduceat(value, parts)[::2]
-            position = np.full(n_target, -1, dtype=np.int64)
-            above = is_active & (top[target.place] > best[exits])
-            missed = np.zeros(n_target, dtype=bool)
-            missed[target.place[above]] = True
-            for j in np.flatnonzero(missed[asked]).tolist():
-                # The oldest at ties.
-                part = value[start[j] : end[j]]
-                position[asked[j]] = cuts.order[first + start[j] + int(np.argmax(part))]
-            for e, k in zip(exits[above].tolist(), target.place[above].tolist(), strict=True):
-                reach = top[k]
-                if 0.0 < self._gate[e] < 1.0:
-                    share = self._gate[e] if not target.is_gated else 1.0 - self._gate[e]
-                    lift = self._lift(e, target.i_child, int(position[k]), target.is_gated, now)
-                    reach -= lift * share
-                if reach > best[e]:
-                    best[e] = reach
-                    choice[e] = (target.i_child, int(position[k]), int(target.is_gated))
-        return [(e, *choice[e]) for e in sorted(choice)]
+        gate, place = self._gate, self._fixed.place
+        is_active = now.exit_weight > 0.0
+        wants = (place >= 0) & is_active & np.array([gate < 1.0, gate > 0.0])
+        targets = place[wants]
+        if not len(targets):
+            return []
+        found = self._fixed.highest(self._capacity, states, targets)
+        wants &= found.top[place] > reached
+        if not wants.any():
+            return []
+        best, choice = reached.copy(), dict[int, Choice]()
+        for is_gated in (0, 1):
+            exits = np.flatnonzero(wants[is_gated])
+            target = place[is_gated, exits]
+            is_above = found.top[target] > best[exits]
+            exits, target = exits[is_above], target[is_above]
+            families, positions = self._fixed.family[target], found.positions(target)
+            above = [
+                (e, i_child, position, is_gated)
+                for e, i_child, position in zip(
+                    exits.tolist(), families.tolist(), positions.tolist(), strict=True
+                )
+            ]
+            reach = found.top[target]
+            partly = np.flatnonzero((gate[exits] > 0.0) & (gate[exits] < 1.0))
+            if len(partly):
+                share = 1.0 - gate[exits[partly]] if is_gated else gate[exits[partly]]
+                reach[partly] -= self._find_lifts([above[i] for i in partly], now) * share
+            is_better = reach > best[exits]
+            best[exits[is_better]] = reach[is_better]
+            choice.update((above[i][0], above[i]) for i in np.flatnonzero(is_better).tolist())
+        return [choice[e] for e in sorted(choice)]
 
     def _highest(self, i_child: int, i_member: int, state: FloatArray) -> tuple[int, float] | None:
         """Position and value of a child's highest cut at a state; None where it has none."""
@@ -344,26 +267,58 @@ class ChildRows:
                 chosen.append((e, i_child, best[0], 0))
         return chosen
 
-    def _lift(self, e: int, i_child: int, position: int, is_gated: bool, now: Numbers) -> float:
-        """``B`` of a cut of an exit's child against the cuts of its other child."""
-        key = (e, position, int(is_gated))
-        if key not in self._lifts:
-            other = now.exit_child[e] if is_gated else now.exit_child_if_gated[e]
-            pool, below = self.pools[i_child], self.pools[int(other[0])]
-            places = below.positions(int(other[1]))
-            floor = self.tables.families[int(other[0])].value_lower[int(other[1])]
-            self._lifts[key] = lift_amount(
-                float(pool.intercept[position]),
-                pool.state_slope[position],
-                pool.capacity_slope[position],
-                np.concatenate([below.intercept[places], [floor]]),
-                np.vstack([below.state_slope[places], np.zeros((1, self.n_state))]),
-                np.vstack([below.capacity_slope[places], np.zeros((1, self._n_capacity))]),
-                self.table.box,
-                self._gates[e],
-                gate_is_one=not is_gated,
-            )
-        return self._lifts[key]
+    def _find_lifts(self, chosen: list[Choice], now: Numbers) -> FloatArray:
+        """``B`` of cuts of gated exits' children against the cuts of their other children, (n,)."""
+        missing: dict[tuple[int, int, int, tuple[int, ...]], list[Choice]] = {}
+        for one in chosen:
+            e, i_child, position, is_gated = one
+            if (e, position, is_gated) not in self._lifts:
+                other = now.exit_child if is_gated else now.exit_child_if_gated
+                key = (i_child, is_gated, int(other[e, 0]), self._gates[e])
+                missing.setdefault(key, []).append(one)
+        for (i_child, is_gated, i_other, gate), cuts in missing.items():
+            other = now.exit_child if is_gated else now.exit_child_if_gated
+            for begin in range(0, len(cuts), MOST_LIFTS):
+                part = cuts[begin : begin + MOST_LIFTS]
+                members = other[[choice[0] for choice in part], 1]
+                amounts = self._lifts_against(
+                    i_child, [choice[2] for choice in part], i_other, members, gate, not is_gated
+                )
+                for (e, _, position, _), amount in zip(part, amounts.tolist(), strict=True):
+                    self._lifts[e, position, is_gated] = amount
+        return np.array([self._lifts[e, position, g] for e, _, position, g in chosen])
+
+    def _lifts_against(
+        self,
+        i_child: int,
+        positions: list[int],
+        i_other: int,
+        members: IntArray,
+        gate: tuple[int, ...],
+        gate_is_one: bool,
+    ) -> FloatArray:
+        """Lifts of some cuts of a family, each against all cuts of a member of another one."""
+        pool, below = self.pools[i_child], self.pools[i_other]
+        # Behind the cuts of each member comes what is known of its value without any.
+        places, count = below.positions_of_each(members)
+        ends = np.cumsum(count)
+        floor = self.tables.families[i_other].value_lower[members]
+        return lift_amounts(
+            (
+                pool.intercept[positions],
+                pool.state_slope[positions],
+                pool.capacity_slope[positions],
+            ),
+            (
+                np.insert(below.intercept[places], ends, floor),
+                np.insert(below.state_slope.take(places, axis=0), ends, 0.0, axis=0),
+                np.insert(below.capacity_slope.take(places, axis=0), ends, 0.0, axis=0),
+            ),
+            ends - count + np.arange(len(ends)),
+            self.table.box,
+            gate,
+            gate_is_one=gate_is_one,
+        )
 
     def _append(self, chosen: list[Choice], now: Numbers) -> None:
         """Rows ``theta - g s >= a + h c`` at the end of the model."""
@@ -387,23 +342,26 @@ class ChildRows:
     def _cut_rows(self, chosen: list[Choice], now: Numbers) -> _CutRows:
         """Chosen cuts, lifted where the exit is gated; ``row`` is left to the caller."""
         rows = _CutRows.empty(len(chosen), self.n_state, self._n_capacity)
-        rows.exit[:] = [choice[0] for choice in chosen]
-        for i, (e, i_child, position, is_gated) in enumerate(chosen):
-            pool = self.pools[i_child]
-            rows.intercept[i] = pool.intercept[position]
-            rows.state_slope[i] = pool.state_slope[position]
-            rows.capacity_slope[i] = pool.capacity_slope[position]
-            rows.group[i] = pool.group_at(position)
-            rows.position[i] = position
-            if self._is_gated[e]:
-                lift = self._lift(e, i_child, position, bool(is_gated), now)
-                gate = list(self._gates[e])
-                rows.group[i] = -1
-                if is_gated:  # cut - B' (1 - gate)
-                    rows.intercept[i] -= lift
-                    rows.capacity_slope[i, gate] += lift
-                else:  # cut - B gate
-                    rows.capacity_slope[i, gate] -= lift
+        exits, families, positions, _ = np.array(chosen).T
+        rows.exit[:], rows.position[:] = exits, positions
+        for i_child in np.unique(families).tolist():
+            here = np.flatnonzero(families == i_child)
+            pool, at = self.pools[i_child], positions[here]
+            rows.intercept[here] = pool.intercept[at]
+            rows.state_slope[here] = pool.state_slope[at]
+            rows.capacity_slope[here] = pool.capacity_slope[at]
+            rows.group[here] = pool.groups_at(at)
+        lifted = np.flatnonzero(self._is_gated[exits]).tolist()
+        lifts = self._find_lifts([chosen[i] for i in lifted], now).tolist()
+        for i, lift in zip(lifted, lifts, strict=True):
+            e, _, _, is_gated = chosen[i]
+            gate = list(self._gates[e])
+            rows.group[i] = -1
+            if is_gated:  # cut - B' (1 - gate)
+                rows.intercept[i] -= lift
+                rows.capacity_slope[i, gate] += lift
+            else:  # cut - B gate
+                rows.capacity_slope[i, gate] -= lift
         return rows
 
     # -- slots: children that change with the member -------------------------------------------
