@@ -9,7 +9,7 @@ import scipy.optimize
 from tests.model.extensive_form import ExtensiveForm
 from tests.solve.graphs import gate_graph, random_tree_graph
 from xlplan.solve.cut_pool import CutBatch, CutPool
-from xlplan.solve.cuts import DomainBox, ExitMultipliers, lift_amount
+from xlplan.solve.cuts import DomainBox, ExitMultipliers, lift_amounts
 from xlplan.solve.decomposition import Engine
 from xlplan.solve.member_cache import MemberCache
 from xlplan.solve.node_solver import NodeRequest, NodeSolver
@@ -101,17 +101,11 @@ def test_lifted_cut_by_hand():
         state_lower_matrix=np.zeros((1, 1)),
         state_upper_matrix=np.full((1, 1), 3.0),
     )
-    amount = lift_amount(
-        10.0, np.array([-2.0]), np.zeros(1), np.array([1.0]), np.array([[1.0]]), np.zeros((1, 1)),
-        box, (0,), gate_is_one=True,
-    )  # fmt: skip
-    assert amount == pytest.approx(9.0)
+    upper = np.full(2, 10.0), np.full((2, 1), -2.0), np.zeros((2, 1))
     # A second lower cut at 4 makes it 6: any cut of the other child will do.
-    amount = lift_amount(
-        10.0, np.array([-2.0]), np.zeros(1), np.array([1.0, 4.0]), np.array([[1.0], [0.0]]),
-        np.zeros((2, 1)), box, (0,), gate_is_one=True,
-    )  # fmt: skip
-    assert amount == pytest.approx(6.0)
+    lower = np.array([1.0, 1.0, 4.0]), np.array([[1.0], [1.0], [0.0]]), np.zeros((3, 1))
+    amounts = lift_amounts(upper, lower, np.array([0, 1]), box, (0,), gate_is_one=True)
+    assert amounts == pytest.approx([9.0, 6.0])
 
 
 def test_gated_exit_at_both_values_of_the_gate():

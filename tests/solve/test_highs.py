@@ -82,7 +82,7 @@ def test_kept_model_follows_changes():
     model.add_rows(np.array([-np.inf]), np.array([0.5]), np.array([0, 1]), np.array([0]),
                    np.array([1.0]))  # fmt: skip
     assert model.run().objective == pytest.approx(-0.5)
-    model.set_row_coefficients(1, np.array([0]), np.array([2.0]))
+    model.set_coefficients([1], [0], [2.0])
     assert model.run().objective == pytest.approx(-0.25)
     assert model.row_dual()[1] == pytest.approx(-0.5)  # one more unit of the row is half an x
     assert model.counts["solve"] == 6

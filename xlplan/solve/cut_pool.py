@@ -20,6 +20,9 @@ GROUP_BITS = 40
 TAIL = 2048
 """So many new cuts are searched one after the other before all are sorted anew."""
 
+ROUNDING = 1e-12
+"""Difference of two cuts, relative to the largest of their terms, that may be float rounding."""
+
 _COLUMNS = ("_key", "_intercept", "_state_slope", "_capacity_slope", "_level")
 
 
@@ -84,6 +87,20 @@ class SortedCuts:
     level: FloatArray
 
 
+@dataclass(frozen=True)
+class HighCuts:
+    """Cuts that may be the highest of their member, by member, the oldest of a member first.
+
+    order (n,) positions in the pool; start (n_member + 1,) where each member's cuts begin;
+    level (n,) value without the state's part; state_slope (n, n_state)
+    """
+
+    order: IntArray
+    start: IntArray
+    level: FloatArray
+    state_slope: FloatArray
+
+
 class CutPool:
     """Every cut of one family, never deleted, in the order in which they came."""
 
@@ -95,6 +112,8 @@ class CutPool:
         self._state_slope = np.zeros((64, n_state))
         self._capacity_slope = np.zeros((64, n_capacity))
         self._level = np.zeros(64)
+        # Lowest and highest slope of any cut, and 0.
+        self._slope_range = np.zeros((2, n_state))
         self._level_capacity: FloatArray | None = None
         self._n_level = 0
         self._last_group = -1
@@ -103,6 +122,8 @@ class CutPool:
         self._sorted_key = np.zeros(0, dtype=np.int64)
         self._sorted: SortedCuts | None = None
         self._sorted_capacity: FloatArray | None = None
+        self._high: HighCuts | None = None
+        self._high_at, self._n_high = np.zeros(0), 0
 
     @property
     def member(self) -> IntArray:
@@ -160,6 +181,12 @@ class CutPool:
                 more = np.zeros((room - len(old), *old.shape[1:]), dtype=old.dtype)
                 setattr(self, name, np.concatenate([old, more]))
         part = slice(self.n, end)
+        if len(batch):
+            by_state = batch.state_slope.T
+            least, most = self._slope_range
+            self._slope_range = np.array(
+                [np.minimum(by_state.min(axis=1), least), np.maximum(by_state.max(axis=1), most)]
+            )
         self._key[part] = key
         self._intercept[part] = batch.intercept
         self._state_slope[part] = batch.state_slope
@@ -185,6 +212,13 @@ class CutPool:
         bounds = [member << GROUP_BITS, (member + 1) << GROUP_BITS]
         begin, end = np.searchsorted(self._sorted_key, bounds)
         return self._order[begin:end]
+
+    def positions_of_each(self, members: IntArray) -> tuple[IntArray, IntArray]:
+        """Positions of the cuts of some members, one after the other, and how many each has."""
+        self._sort()
+        begin = np.searchsorted(self._sorted_key, members << GROUP_BITS)
+        count = np.searchsorted(self._sorted_key, (members + 1) << GROUP_BITS) - begin
+        return self._order[ranges(begin, count)], count
 
     def position_of(self, member: int, group: int) -> int:
         """Position of the member's cut of one group, -1 where there is none."""
@@ -217,12 +251,51 @@ class CutPool:
         if known is None or not is_whole:
             bounds = np.arange(self.n_member + 1, dtype=np.int64) << GROUP_BITS
             start = np.searchsorted(self._sorted_key, bounds)
-            slope = self.state_slope[self._order]
+            slope = self._state_slope.take(self._order, axis=0)
         else:
             start, slope = known.start, known.state_slope
         self._sorted_capacity = capacity.copy()
         self._sorted = SortedCuts(self._order, start, slope, self.level(capacity)[self._order])
         return self._sorted
+
+    def high_cuts(self, capacity: FloatArray, low: FloatArray, high: FloatArray) -> HighCuts:
+        """Cuts that may be their member's highest at some state from low to high, (n_state,) each.
+
+        Left out is every cut that the member's highest one in the middle of the box exceeds in all
+        the box, by more than the rounding of both. Kept between calls; when cuts were added, only
+        they and what was high are looked at again.
+        """
+        known, at = self._high, np.concatenate([capacity, low, high])
+        is_same = known is not None and np.array_equal(at, self._high_at)
+        if known is not None and is_same and self._n_high == self.n:
+            return known
+        self._sort()
+        order, key = self._order, self._sorted_key
+        if known is not None and is_same:
+            is_asked = np.zeros(self.n, dtype=bool)
+            is_asked[known.order] = is_asked[self._n_high :] = True
+            here = np.flatnonzero(is_asked[order])
+            order, key = order[here], key[here]
+        middle, half = 0.5 * (low + high), 0.5 * (high - low)
+        level = self.level(capacity)
+        value = (level + self.state_slope @ middle)[order]
+        bounds = np.arange(self.n_member + 1, dtype=np.int64) << GROUP_BITS
+        best, count = _first_highest(value, np.searchsorted(key, bounds))
+        reach = np.maximum(np.abs(low), np.abs(high))
+        size = np.abs(level).max() + np.abs(self._slope_range).max(axis=0) @ reach
+        # By how much a cut may gain on the best one on the way from the middle, and remain below.
+        short = np.repeat(value[best], count) - value - ROUNDING * size
+        # Most are so far below that any two cuts of the family would not make up for it.
+        near = np.flatnonzero(short <= (self._slope_range[1] - self._slope_range[0]) @ half)
+        # Rows are taken by ``take``: an index does the same several times slower.
+        slope = self._state_slope.take(order[near], axis=0)
+        apart = slope - self._state_slope.take(np.repeat(order[best], count)[near], axis=0)
+        kept = np.flatnonzero(short[near] <= np.abs(apart) @ half)
+        order, key = order[near[kept]], key[near[kept]]
+        start = np.searchsorted(key, bounds)
+        self._high = HighCuts(order, start, level[order], slope.take(kept, axis=0))
+        self._high_at, self._n_high = at, self.n
+        return self._high
 
     def value(self, member: int, state: FloatArray, capacity: FloatArray) -> float:
         """Highest cut of one member at one point, minus infinity where it has none."""
@@ -270,3 +343,25 @@ class CutPool:
 
 def _keys(member: IntArray, group: IntArray) -> IntArray:
     return (np.asarray(member, dtype=np.int64) << GROUP_BITS) | group
+
+
+def ranges(start: IntArray, count: IntArray) -> IntArray:
+    """The numbers from each start on, so many of each, one after the other.
+
+    >>> ranges(np.array([5, 0]), np.array([2, 3])).tolist()
+    [5, 6, 0, 1, 2]
+    """
+    begin = np.cumsum(count) - count
+    numbers: IntArray = np.repeat(start - begin, count) + np.arange(int(count.sum()))
+    return numbers
+
+
+def _first_highest(value: FloatArray, start: IntArray) -> tuple[IntArray, IntArray]:
+    """Where the first highest value of each part is, and how long the part; none of empty ones.
+
+    value (n,); start (n_part + 1,)
+    """
+    count = np.diff(start)
+    begin, count = start[:-1][count > 0], count[count > 0]
+    hits = np.flatnonzero(value == np.repeat(np.maximum.reduceat(value, begin), count))
+    return hits[np.searchsorted(hits, begin)], count

@@ -554,27 +554,27 @@ def _col_terms(d: FloatArray, lower: FloatArray, upper: FloatArray) -> FloatArra
     return np.where(d > 0.0, d * lower, d * upper)
 
 
-def lift_amount(
-    upper_intercept: float,
-    upper_state: FloatArray,
-    upper_capacity: FloatArray,
-    lower_intercept: FloatArray,
-    lower_state: FloatArray,
-    lower_capacity: FloatArray,
-    boxes: DomainBox,
+def lift_amounts(
+    upper: tuple[FloatArray, FloatArray, FloatArray],
+    lower: tuple[FloatArray, FloatArray, FloatArray],
+    start: IntArray,
+    box: DomainBox,
     gate: tuple[int, ...],
     gate_is_one: bool,
-) -> float:
+) -> FloatArray:
     """Smallest ``B`` with ``upper - B <= some lower cut`` wherever the gate has the given value.
 
-    One cut against n others; the maximum over the state's domain and the capacity box is worked
-    out for each of them, and the least one is taken, for any of them will do.
+    Upper cuts (n,), (n, n_state), (n, n_capacity), each against some of the lower ones, whose first
+    axis is parted at ``start`` (n,). The maximum over the state's domain and the capacity box is
+    worked out for each pair, and an upper cut takes its least one, for any of them will do; (n,).
     """
-    intercept = upper_intercept - lower_intercept
-    state = upper_state[None, :] - lower_state
-    capacity = upper_capacity[None, :] - lower_capacity
-    worst = boxes.highest(intercept, state, capacity, gate, gate_is_one)
-    return float(worst.min())
+    count = np.diff(start, append=len(lower[0]))
+    intercept, state, capacity = (
+        np.repeat(a, count, axis=0) - b for a, b in zip(upper, lower, strict=True)
+    )
+    worst = box.highest(intercept, state, capacity, gate, gate_is_one)
+    amounts: FloatArray = np.minimum.reduceat(worst, start)
+    return amounts
 
 
 @dataclass(frozen=True)
@@ -587,6 +587,12 @@ class DomainBox:
     state_upper: FloatArray
     state_lower_matrix: FloatArray
     state_upper_matrix: FloatArray
+
+    def state_range(self, capacity: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Lowest and highest states at some capacities, (n_state,) each."""
+        low = np.maximum(self.state_lower, self.state_lower_matrix @ capacity)
+        high = np.minimum(self.state_upper, self.state_upper_matrix @ capacity)
+        return low, np.maximum(low, high)
 
     def highest(
         self,

@@ -13,6 +13,7 @@ import logging
 import tempfile
 import time
 from collections import Counter
+from collections.abc import Sequence
 from pathlib import Path
 
 import highspy
@@ -154,17 +155,16 @@ class KeptModel:
         if len(rows):
             self._highs.changeRowsBounds(len(rows), _int32(rows), _float(lower), _float(upper))
 
-    def set_row_coefficients(self, row: int, columns: IntArray, value: FloatArray) -> None:
-        """New coefficients in one row; the basis stays valid, unlike after deleting the row."""
-        self.set_coefficients(np.full(len(columns), row), columns, value)
+    def set_coefficients(
+        self, rows: Sequence[int], columns: Sequence[int], values: Sequence[float]
+    ) -> None:
+        """New coefficients, one by one: HiGHS has no call for many.
 
-    def set_coefficients(self, rows: IntArray, columns: IntArray, value: FloatArray) -> None:
-        """New coefficients, one by one: HiGHS has no call for many."""
+        The basis stays valid, unlike after deleting a row.
+        """
         change = self._highs.changeCoeff
-        for row, column, number in zip(
-            rows.tolist(), columns.tolist(), value.tolist(), strict=True
-        ):
-            change(row, column, number)
+        for row, column, value in zip(rows, columns, values, strict=True):
+            change(row, column, value)
 
     def add_rows(
         self,

@@ -120,8 +120,9 @@ class _Block:
     """Points that are solved together, and what the model is brought to for each of them.
 
     now, members : numbers of the members, together and one by one; bounds, costs, sides : of the
-    model's columns and rows; fold_low, fold_high (k or 1, n_fold), lazy_low, lazy_high (k or 1, n_lazy): sides beyond which a
-    row is added; y (k, n_col): the points found, in the program's columns
+    model's columns and rows; fold_low, fold_high (k or 1, n_fold), lazy_low, lazy_high (k or 1,
+    n_lazy): sides beyond which a row is added; y (k, n_col): the points found, in the program's
+    columns
     """
 
     points: Sequence[NodePoint]
@@ -432,9 +433,9 @@ class NodeModel:
         is_here = row >= 0
         here = changed[is_here]
         self._model.set_coefficients(
-            self._rows.place[row[is_here]],
-            self._column_place[self.bound.patch_column[here]],
-            value[here],
+            self._rows.place[row[is_here]].tolist(),
+            self._column_place[self.bound.patch_column[here]].tolist(),
+            value[here].tolist(),
         )
         self._matrix.value[patch] = value
         if self._is_lazy_patched:

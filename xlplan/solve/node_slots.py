@@ -1,9 +1,9 @@
 """Rows of a kept model that hold the cuts of children that change with the member.
 
-The rows, *slots*, stay in the model for ever and are rewritten when the member changes, for deleting
-a row that is in the basis would make the next solve cold. What stands in them is kept in lists: it
-is looked at one slot at a time, between two runs of the solver. A cut ``theta >= a + g s + h c`` of
-the child is the row ``theta - g s >= a + h c``, capacities ``c`` being fixed.
+The rows, *slots*, stay in the model for ever and are rewritten when the member changes, for
+deleting a row that is in the basis would make the next solve cold. What stands in them is kept in
+lists: it is looked at one slot at a time, between two runs of the solver. A cut ``theta >= a + g s
++ h c`` of the child is the row ``theta - g s >= a + h c``, capacities ``c`` being fixed.
 """
 
 from __future__ import annotations
@@ -41,10 +41,12 @@ FREE = -1
 class _Exit:
     """Slots of one exit, as they stand in the model.
 
-    columns : of the model, those of the states handed on and then that of the value; sums : (n_state,
-    n_column - 1), which state counts in which column, or None where each has its own; row, position,
-    slope, side : of every slot, its model row, the cut in the child's pool, minus the cut's slopes
-    and the lower side; child : family and member of the child whose cuts are held
+    value : column of the model for the value at the exit; out : (n_state,) those of the states
+    handed on; columns : the same without repeats, and that of the value; sums : (n_state, n_column
+    - 1), which state counts in which column, or None where each has its own; row, position, slope,
+    side : of every slot, its model row, the cut in the child's pool, minus the cut's slopes, and
+    the lower side; child : family and member of the child whose cuts are held, -1 for none;
+    last_state : handed on by the last point
     """
 
     value: int
