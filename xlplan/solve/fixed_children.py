@@ -120,8 +120,10 @@ class FixedChildren:
         start, asked = table.start[begin : end + 1], table.target[begin:end]
         part, count = slice(start[0], start[-1]), start[1:] - start[:-1]
         value = table.level[part].copy()
-        for slope, state in zip(table.state_slope, at_state, strict=True):
-            value += slope[part] * state[asked - first].repeat(count)
+        by_component = at_state.take(asked - first, axis=1).repeat(count, axis=1)
+        by_component *= table.state_slope[:, part]
+        for numbers in by_component:
+            value += numbers
         if begin < end:
             top[asked] = np.maximum.reduceat(value, start[:-1] - start[0])
         return HighestCuts(top, value, int(start[0]), table)
