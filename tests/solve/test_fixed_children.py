@@ -90,7 +90,7 @@ def test_the_highest_cut_of_every_exit():
         states = y[columns]
         wanted = fixed.place[:, rng.integers(0, n_exit - 5) :]
         targets = wanted[wanted >= 0]
-        found = fixed.highest(capacity, states, targets)
+        found = fixed.highest(capacity, y, targets)
         for exit_, which in np.argwhere(fixed.place.T >= 0).tolist():
             target = fixed.place[which, exit_]
             if target not in targets:
@@ -118,6 +118,6 @@ def test_the_oldest_of_equal_cuts_is_taken():
     pool.add(batch)
     exits = np.zeros((2, 2), dtype=int)
     fixed = FixedChildren(exits, exits - 1, np.zeros((2, 1), dtype=int), box, [pool])
-    found = fixed.highest(np.ones(1), np.full((2, 1), 0.5), fixed.place[0])
+    found = fixed.highest(np.ones(1), np.full(1, 0.5), fixed.place[0])
     assert found.top.tolist() == [0.5]
     assert found.positions(np.array([0])).tolist() == [1]

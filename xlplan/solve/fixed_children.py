@@ -68,7 +68,7 @@ class FixedChildren:
     Parameters
     ----------
     child, child_if_gated : (n_exit, 2), -1 where an exit has none
-    out_columns : (n_exit, n_state)
+    out_columns : (n_exit, n_state), where the states handed on stand in a point
     box : domain of the states at the exits
     pools : list of CutPool
 
@@ -99,7 +99,7 @@ class FixedChildren:
         order = np.argsort(first_exit, kind="stable")
         rank = np.argsort(order)
         self.family, self.member = unique[order, 0], unique[order, 1]
-        self._exit = first_exit[order]
+        self._columns = np.ascontiguousarray(out_columns[first_exit[order]].T)
         place = np.full(2 * n_exit, -1, dtype=np.int64)
         place[has_child] = rank[inverse]
         self.place = place.reshape(2, n_exit)
@@ -110,18 +110,20 @@ class FixedChildren:
         self._table: _Table | None = None
         self._n_known: list[int] = []
 
-    def highest(self, capacity: FloatArray, states: FloatArray, targets: IntArray) -> HighestCuts:
-        """The highest cuts of targets, at least one; states (n_exit, n_state) of every exit."""
+    def highest(self, capacity: FloatArray, point: FloatArray, targets: IntArray) -> HighestCuts:
+        """The highest cuts of targets, at least one, at the states in a point."""
         first, last = int(targets.min()), int(targets.max()) + 1
-        at_state = states.T.take(self._exit[first:last], axis=1)
+        at_state = point.take(self._columns[:, first:last])
         table = self._table_for(capacity, at_state)
         top = np.full(len(self.family), -np.inf)
         begin, end = np.searchsorted(table.target, [first, last]).tolist()
         start, asked = table.start[begin : end + 1], table.target[begin:end]
         part, count = slice(start[0], start[-1]), start[1:] - start[:-1]
         value = table.level[part].copy()
-        for slope, state in zip(table.state_slope, at_state, strict=True):
-            value += slope[part] * state[asked - first].repeat(count)
+        by_component = at_state.take(asked - first, axis=1).repeat(count, axis=1)
+        by_component *= table.state_slope[:, part]
+        for numbers in by_component:
+            value += numbers
         if begin < end:
             top[asked] = np.maximum.reduceat(value, start[:-1] - start[0])
         return HighestCuts(top, value, int(start[0]), table)

@@ -105,8 +105,10 @@ class ChildRows:
         # Whether an exit hands on one column as two components of the state.
         self._has_repeats = bool((out[:, 1:] == out[:, :-1]).any()) if out.size else False
         self._fixed = FixedChildren(
-            self.table.child, self.table.child_if_gated, family.out_columns, self.table.box, pools
+            self.table.child, self.table.child_if_gated, out_places, self.table.box, pools
         )
+        self._asked_by: Numbers | None = None
+        self._asked_at = self._capacity
         self._lifts: dict[tuple[int, int, int], float] = {}
 
     # -- the model moves -----------------------------------------------------------------------
@@ -141,30 +143,26 @@ class ChildRows:
             return 0
         allowed, theta = tolerance * float(now.scale) / total, point[self._n_kept :]
         reached = theta + np.maximum(allowed, CUT_TOLERANCE * (1.0 + np.abs(theta)))
-        chosen = self._violated(point[self._out_places], reached, now)
+        chosen = self._violated(point, reached, now)
         fresh = [choice for choice in chosen if choice not in self._known]
         self._known.update(fresh)
         self._append(fresh, now)
         return len(fresh)
 
-    def _violated(self, states: FloatArray, reached: FloatArray, now: Numbers) -> list[Choice]:
+    def _violated(self, point: FloatArray, reached: FloatArray, now: Numbers) -> list[Choice]:
         """What to add, at most one cut for each exit: those above ``reached``."""
-        gate, place = self._gate, self._fixed.place
-        is_active = now.exit_weight > 0.0
-        wants = (place >= 0) & is_active & np.array([gate < 1.0, gate > 0.0])
-        targets = place[wants]
-        if not len(targets):
+        layer, all_exits, all_targets = self._asked_of(now)
+        if not len(all_exits):
             return []
-        found = self._fixed.highest(self._capacity, states, targets)
-        wants &= found.top[place] > reached
-        if not wants.any():
+        found = self._fixed.highest(self._capacity, point, all_targets)
+        missed = np.flatnonzero(found.top[all_targets] > reached[all_exits])
+        if not len(missed):
             return []
         best, choice = reached.copy(), dict[int, Choice]()
         for is_gated in (0, 1):
-            exits = np.flatnonzero(wants[is_gated])
-            target = place[is_gated, exits]
-            is_above = found.top[target] > best[exits]
-            exits, target = exits[is_above], target[is_above]
+            at = missed[layer[missed] == is_gated]
+            at = at[found.top[all_targets[at]] > best[all_exits[at]]]
+            exits, target, gate = all_exits[at], all_targets[at], self._gate[all_exits[at]]
             families, positions = self._fixed.family[target], found.positions(target)
             above = [
                 (e, i_child, position, is_gated)
@@ -173,14 +171,24 @@ class ChildRows:
                 )
             ]
             reach = found.top[target]
-            partly = np.flatnonzero((gate[exits] > 0.0) & (gate[exits] < 1.0))
+            partly = np.flatnonzero((gate > 0.0) & (gate < 1.0))
             if len(partly):
-                share = 1.0 - gate[exits[partly]] if is_gated else gate[exits[partly]]
+                share = 1.0 - gate[partly] if is_gated else gate[partly]
                 reach[partly] -= self._find_lifts([above[i] for i in partly], now) * share
             is_better = reach > best[exits]
             best[exits[is_better]] = reach[is_better]
             choice.update((above[i][0], above[i]) for i in np.flatnonzero(is_better).tolist())
         return [choice[e] for e in sorted(choice)]
+
+    def _asked_of(self, now: Numbers) -> tuple[IntArray, IntArray, IntArray]:
+        """Which children count, (n,) each: 1 for the gated one, exit, target; kept for a member."""
+        if self._asked_by is not now or self._asked_at is not self._capacity:
+            is_active, place = now.exit_weight > 0.0, self._fixed.place
+            counts = np.array([self._gate < 1.0, self._gate > 0.0]) & is_active & (place >= 0)
+            is_gated, exits = np.nonzero(counts)
+            self._children_asked = is_gated, exits, place[is_gated, exits]
+            self._asked_by, self._asked_at = now, self._capacity
+        return self._children_asked
 
     def _find_lifts(self, chosen: list[Choice], now: Numbers) -> FloatArray:
         """``B`` of cuts of gated exits' children against the cuts of their other children, (n,)."""
