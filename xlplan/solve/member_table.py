@@ -136,7 +136,7 @@ class MemberTable:
     columns, rows : program columns and rows in which members differ
     given, into : which state components come in, and their columns
     has_same_inputs : whether every member holds its incoming state in the same columns
-    same_row_lower, same_row_upper : (n_row,) sides of rows, 0 where they differ
+    same_row_lower, same_row_upper : (n_row,) sides of rows, 0 where one of the two differs
     same_lower, same_upper : (n_col, 2) bounds of columns ``with_sizes``, 0 where they differ,
         where the column is moving, and where it is in a slope
     moving : (n_moving,) columns whose reduced cost differs: their cost does, or an entry of the
@@ -174,8 +174,8 @@ class MemberTable:
         self.moving_inside = np.where(is_apart[self.moving], 0.0, 1.0)
         self._gather(cache, i_family)
         is_left_out = is_moving | is_apart
-        self.same_row_lower = np.where(differs["row_lower"], 0.0, first.row_lower)
-        self.same_row_upper = np.where(differs["row_upper"], 0.0, first.row_upper)
+        self.same_row_lower, self.same_row_upper = first.row_lower.copy(), first.row_upper.copy()
+        self.same_row_lower[self.rows] = self.same_row_upper[self.rows] = 0.0
         lower = np.where(is_left_out | differs["col_lower"], 0.0, first.col_lower)
         upper = np.where(is_left_out | differs["col_upper"], 0.0, first.col_upper)
         self.same_lower, self.same_upper = with_sizes(lower, upper)
@@ -218,24 +218,21 @@ class MemberTable:
         }
 
     def _list_sides(self, differs: dict[str, BoolArray], is_left_out: BoolArray) -> None:
-        """Lists the sides that differ: equations, then lower ones, then upper ones."""
+        """Lists the sides that differ: equations, then lower sides, then upper ones."""
         place, part = self._series.place, self._part
         is_equation = place[part["row_lower"]] == place[part["row_upper"]]
         is_in_sums = ~is_left_out[self.columns]
-        low_row = np.flatnonzero(differs["row_lower"][self.rows] & ~is_equation)
-        high_row = np.flatnonzero(differs["row_upper"][self.rows] & ~is_equation)
         low_column = np.flatnonzero(differs["col_lower"][self.columns] & is_in_sums)
         high_column = np.flatnonzero(differs["col_upper"][self.columns] & is_in_sums)
-        equation = np.flatnonzero(is_equation)
-        self._equation = self.rows[equation]
-        self._low_row, self._high_row = self.rows[low_row], self.rows[high_row]
+        equation, other = np.flatnonzero(is_equation), np.flatnonzero(~is_equation)
+        self._equation, self._other_row = self.rows[equation], self.rows[other]
         self._low_column, self._high_column = self.columns[low_column], self.columns[high_column]
         self._side_at = np.concatenate(
             [
                 part["row_lower"].start + equation,
-                part["row_lower"].start + low_row,
+                part["row_lower"].start + other,
                 part["col_lower"].start + low_column,
-                part["row_upper"].start + high_row,
+                part["row_upper"].start + other,
                 part["col_upper"].start + high_column,
             ]
         )
@@ -257,12 +254,13 @@ class MemberTable:
         -------
         sums, sums of the absolute terms, and whether all sides that they need are finite, (n_pair,)
         """
+        other = pi.take(self._other_row, axis=1)
         factor = np.concatenate(
             [
                 pi.take(self._equation, axis=1),
-                np.maximum(pi.take(self._low_row, axis=1), 0.0),
+                np.maximum(other, 0.0),
                 np.maximum(d.take(self._low_column, axis=1), 0.0),
-                np.minimum(pi.take(self._high_row, axis=1), 0.0),
+                np.minimum(other, 0.0),
                 np.minimum(d.take(self._high_column, axis=1), 0.0),
             ],
             axis=1,
