@@ -25,7 +25,7 @@ from numpy.typing import NDArray
 from xlplan.model.value_graph import Family, Member
 from xlplan.solve.cut_pool import CutBatch
 from xlplan.solve.member_cache import MemberCache
-from xlplan.solve.member_table import FEW_EXITS, MemberTable, with_sizes
+from xlplan.solve.member_table import FEW_EXITS, MemberTable
 from xlplan.solve.row_matrix import RowMatrix
 
 FloatArray = NDArray[np.float64]
@@ -275,7 +275,7 @@ class DualBound:
             return None
         n_pair = len(members)
         pi, same, d = self._reduced_costs(table, pi)
-        same += _side_sums(d, table.same_lower, table.same_upper)
+        same += table.same_sums(d)
         vary, vary_size, is_valid = table.side_sums(pi, d, solve, members)
         # Children's cuts: scaled down where they weigh more than the exit does.
         weight = table.exits(members)[0]
@@ -354,15 +354,11 @@ class DualBound:
         n_solve, n_col = len(pi), len(table.first.cost)
         # Solves of one run have most of their multipliers in the same rows.
         rows = np.flatnonzero((pi != 0.0).any(axis=0))
-        used = pi.take(rows, axis=1)
-        lower, upper = table.same_row_lower[rows], table.same_row_upper[rows]
-        has_lower, has_upper = np.isfinite(lower), np.isfinite(upper)
-        is_open = ((used > 0.0) & ~has_lower) | ((used < 0.0) & ~has_upper)
-        if is_open.any():
-            used[is_open] = 0.0
+        asked = pi.take(rows, axis=1)
+        used, term = _row_terms(asked, *table.same_row_sides(rows))
+        if (used != asked).any():
             pi = pi.copy()
             pi[:, rows] = used
-        lower, upper = np.where(has_lower, lower, 0.0), np.where(has_upper, upper, 0.0)
         matrix = self.matrix
         entries = matrix.entries(rows)
         counts = matrix.start[rows + 1] - matrix.start[rows]
@@ -370,7 +366,8 @@ class DualBound:
         weights *= matrix.value[entries]
         every = np.arange(n_solve)
         product = _sums_at(every, matrix.index[entries], weights, (n_solve, n_col))
-        return pi, _side_sums(used, *with_sizes(lower, upper)), table.first.cost - product
+        sums = np.stack([term.sum(axis=1), np.abs(term).sum(axis=1)], axis=1)
+        return pi, sums, table.first.cost - product
 
     @property
     def table(self) -> MemberTable | None:
@@ -539,16 +536,9 @@ class _Sum:
 
 def _exit_factors(weight: FloatArray, total: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Factors that scale the multipliers of each exit to its weight, and the weight left over."""
-    with np.errstate(over="ignore"):
-        ratio = np.where(total > 0.0, weight / np.where(total > 0.0, total, 1.0), 0.0)
-    factor = np.where(ratio < 1.0 + SNAP_WEIGHT, ratio, 1.0)
+    is_scaled = weight < (1.0 + SNAP_WEIGHT) * total
+    factor = np.where(is_scaled, weight / np.where(is_scaled, total, 1.0), 1.0)
     return factor, np.maximum(weight - factor * total, 0.0)
-
-
-def _side_sums(factor: FloatArray, lower: FloatArray, upper: FloatArray) -> FloatArray:
-    """Sums of terms and of absolute terms, (n, 2), of factors (n, m) and sides ``with_sizes``."""
-    total: FloatArray = np.maximum(factor, 0.0) @ lower + np.minimum(factor, 0.0) @ upper
-    return total
 
 
 def _sums(place: IntArray, term: FloatArray, n: int) -> FloatArray:

@@ -25,6 +25,11 @@ FEW_EXITS = 8
 of the exits. Cuts and exits of other families are worked out member by member."""
 
 
+BLOCK_SIZE = 2**18
+"""Multiplications in one product of matrices. Larger ones are shared out among threads by the
+library below NumPy, which takes far longer than the product where other processes are at work."""
+
+
 @dataclass(frozen=True)
 class Numbers:
     """Numbers of one member.
@@ -111,24 +116,23 @@ class ShiftedSeries:
         return taken
 
 
-def with_sizes(lower: FloatArray, upper: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Sides (n, 2) by which factors give their terms and the absolute values of these.
-
-    Factors above 0 count with the lower side, those below 0 with the upper one.
-    """
-    return (
-        np.stack([lower, np.abs(lower)], axis=1),
-        np.stack([upper, -np.abs(upper)], axis=1),
-    )
+def product(one: FloatArray, other: FloatArray) -> FloatArray:
+    """``one @ other.T``, (n, m), of arrays (n, k) and (m, k), in blocks of a bounded size."""
+    step = max(1, BLOCK_SIZE // max(1, len(one) * len(other)))
+    total: FloatArray = one[:, :step] @ other[:, :step].T
+    for begin in range(step, one.shape[1], step):
+        part = slice(begin, begin + step)
+        total += one[:, part] @ other[:, part].T
+    return total
 
 
 class MemberTable:
     """Numbers of a family's members at the positions where they differ.
 
     The reduced cost of most columns is the same in all members, and so is what a row or a column
-    adds to a cut at a side that does not differ. ``same_row_lower`` ... ``same_upper`` hold those
-    sides. What is left are ``moving`` columns, and the sides of rows and of other columns that
-    differ: ``side_sums`` adds those up for many multipliers and members at once.
+    adds to a cut at a side that does not differ (``same_row_sides``, ``same_sums``). The sides that
+    differ are added up by ``side_sums``, for many multipliers and members at once. What is left are
+    ``moving`` columns.
 
     Attributes
     ----------
@@ -136,9 +140,6 @@ class MemberTable:
     columns, rows : program columns and rows in which members differ
     given, into : which state components come in, and their columns
     has_same_inputs : whether every member holds its incoming state in the same columns
-    same_row_lower, same_row_upper : (n_row,) sides of rows, 0 where one of the two differs
-    same_lower, same_upper : (n_col, 2) bounds of columns ``with_sizes``, 0 where they differ,
-        where the column is moving, and where it is in a slope
     moving : (n_moving,) columns whose reduced cost differs: their cost does, or an entry of the
         matrix, or they hold the state at an exit
     moving_place : (n_col,) the way back, -1 elsewhere
@@ -174,11 +175,11 @@ class MemberTable:
         self.moving_inside = np.where(is_apart[self.moving], 0.0, 1.0)
         self._gather(cache, i_family)
         is_left_out = is_moving | is_apart
-        self.same_row_lower, self.same_row_upper = first.row_lower.copy(), first.row_upper.copy()
-        self.same_row_lower[self.rows] = self.same_row_upper[self.rows] = 0.0
+        self._is_same_row = ~(differs["row_lower"] | differs["row_upper"])
         lower = np.where(is_left_out | differs["col_lower"], 0.0, first.col_lower)
         upper = np.where(is_left_out | differs["col_upper"], 0.0, first.col_upper)
-        self.same_lower, self.same_upper = with_sizes(lower, upper)
+        self._same_lower = np.stack([lower, np.abs(lower)])
+        self._same_upper = np.stack([upper, -np.abs(upper)])
         self._list_sides(differs, is_left_out)
 
     def _gather(self, cache: MemberCache, i_family: int) -> None:
@@ -197,24 +198,25 @@ class MemberTable:
             ("into_upper", "col_upper", self.into),
         ]
         exits = ("exit_weight", "exit_child", "exit_child_if_gated", "offset", "scale")
-        whole: list[FloatArray] = []
-        taken: list[list[object]] = [[] for _ in exits]
-        for i_member in range(self.n_member):
-            member = cache.get(i_family, i_member)
-            whole.append(np.concatenate([getattr(member, name)[at] for _, name, at in kinds]))
-            for part, name in zip(taken, exits, strict=True):
-                part.append(getattr(member, name))
-        self._series = ShiftedSeries(np.array(whole, dtype=float))
         ends = np.cumsum([len(getattr(self.first, name)[at]) for _, name, at in kinds]).tolist()
         self._part = {
             kind: slice(begin, end)
             for (kind, _, _), begin, end in zip(kinds, [0, *ends[:-1]], ends, strict=True)
         }
+        by_number = np.empty((ends[-1], self.n_member))
+        taken: list[list[object]] = [[] for _ in exits]
+        for i_member in range(self.n_member):
+            member = cache.get(i_family, i_member)
+            for kind, name, at in kinds:
+                by_number[self._part[kind], i_member] = getattr(member, name)[at]
+            for part, name in zip(taken, exits, strict=True):
+                part.append(getattr(member, name))
+        self._series = ShiftedSeries(by_number.T)
         self._exit_weight, self._exit_child, self._exit_child_if_gated, *rest = map(np.array, taken)
         self._offset, self._scale = rest
-        at = np.searchsorted(self.columns, self.moving)
+        among = np.searchsorted(self.columns, self.moving)
         self._moving_at = {
-            kind: self._part[kind].start + at for kind in ("cost", "col_lower", "col_upper")
+            kind: self._part[kind].start + among for kind in ("cost", "col_lower", "col_upper")
         }
 
     def _list_sides(self, differs: dict[str, BoolArray], is_left_out: BoolArray) -> None:
@@ -236,6 +238,21 @@ class MemberTable:
                 part["col_upper"].start + high_column,
             ]
         )
+
+    def same_row_sides(self, rows: IntArray) -> tuple[FloatArray, FloatArray]:
+        """Sides of some rows, (n,), 0 where one of the two differs between members."""
+        is_same = self._is_same_row[rows]
+        lower = np.where(is_same, self.first.row_lower[rows], 0.0)
+        return lower, np.where(is_same, self.first.row_upper[rows], 0.0)
+
+    def same_sums(self, d: FloatArray) -> FloatArray:
+        """What the bounds that are the same in all members add to cuts.
+
+        Sums and sums of absolute terms, (n_solve, 2), from reduced costs (n_solve, n_col); moving
+        columns and those in a slope are left out.
+        """
+        above, below = np.maximum(d, 0.0), np.minimum(d, 0.0)
+        return product(above, self._same_lower) + product(below, self._same_upper)
 
     def side_sums(
         self, pi: FloatArray, d: FloatArray, solve: IntArray, members: IntArray
@@ -276,10 +293,9 @@ class MemberTable:
         is_open = ~np.isfinite(side)
         if is_open.any():
             side[is_open] = 0.0
-            n_open = (factor != 0.0).astype(float) @ is_open.T
+            n_open = product((factor != 0.0).astype(float), is_open.astype(float))
             is_valid = n_open[solve, at] == 0.0
-        sums = factor @ side.T
-        sizes = np.abs(factor) @ np.abs(side).T
+        sums, sizes = product(factor, side), product(np.abs(factor), np.abs(side))
         return sums[solve, at], sizes[solve, at], is_valid
 
     def moving_numbers(self, members: IntArray) -> tuple[FloatArray, FloatArray, FloatArray]:
