@@ -2,14 +2,24 @@
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 import pytest
 import scipy.optimize
 
 from tests.model.extensive_form import ExtensiveForm
-from tests.solve.graphs import gate_graph, random_tree_graph
+from tests.solve.graphs import ListFamily, gate_graph, make_member, random_tree_graph
+from xlplan.model.linear_program import LinearProgram
 from xlplan.solve.cut_pool import CutBatch, CutPool
-from xlplan.solve.cuts import DomainBox, ExitMultipliers, lift_amounts
+from xlplan.solve.cuts import (
+    ROUNDING_SHIFT,
+    ChildMultipliers,
+    DomainBox,
+    DualBound,
+    ExitMultipliers,
+    lift_amounts,
+)
 from xlplan.solve.decomposition import Engine
 from xlplan.solve.member_cache import MemberCache
 from xlplan.solve.node_solver import NodeRequest, NodeSolver
@@ -177,3 +187,117 @@ def test_multipliers_above_the_weight_of_an_exit_are_scaled_down():
     cut = solver.bound(0).cut(graph.families[0].member(0), np.zeros(0), exits, 0, 1)
     assert cut.intercept[0] == pytest.approx(5.0)
     assert cut.capacity_slope[0, 0] == pytest.approx(-4.5)
+
+
+class _PatchedFamily(ListFamily):
+    """A family in which the first two entries of the matrix differ between members."""
+
+    @property
+    def patch(self):
+        return np.arange(2)
+
+
+def _random_family(rng, n_member=7, n_row=12, n_col=14, n_exit=2, n_state=2):
+    """(family, its matrices) with numbers of every kind that differ and that do not."""
+    matrix = np.where(rng.random((n_row, n_col)) < 0.4, rng.standard_normal((n_row, n_col)), 0.0)
+    matrix[0, :2] = 1.0
+    row, column = np.nonzero(matrix)
+    program = LinearProgram(
+        rng.standard_normal(n_col), -rng.random(n_col), rng.random(n_col), np.zeros(n_row),
+        np.zeros(n_row), np.searchsorted(row, np.arange(n_row + 1)), column, matrix[row, column],
+        np.zeros(n_col, dtype=bool), np.zeros(n_row, dtype=bool),
+    )  # fmt: skip
+    members = []
+    kind = rng.integers(0, 5, n_row)  # equation, lower, upper, both, the same in all
+    kind[:5] = np.arange(5)
+    for i in range(n_member):
+        low = program.row_lower - 1.0
+        high = program.row_lower + 2.0
+        low[kind < 4] += rng.standard_normal((kind < 4).sum())
+        high[kind == 2] += rng.random((kind == 2).sum())
+        high[kind == 0] = low[kind == 0]
+        high[(kind == 1) | (kind == 4)] = np.inf
+        low[kind == 2] = -np.inf
+        high[kind == 3] = low[kind == 3] + rng.random((kind == 3).sum())
+        if i == 3:  # free here, not elsewhere
+            low[1], high[2] = -np.inf, np.inf
+        cost, lower, upper = (
+            getattr(program, name).copy() for name in ("cost", "col_lower", "col_upper")
+        )
+        cost[[3, 4, 9]] += rng.standard_normal(3)
+        lower[[4, 5, 6, 10]] -= rng.random(4)
+        upper[[4, 6, 7, 9]] += rng.random(4)
+        exits = [(rng.random(), (0, 0), None) for _ in range(n_exit)]
+        members.append(
+            make_member(
+                program, [8, 9], exits, cost=cost, col_lower=lower, col_upper=upper,
+                row_lower=low, row_upper=high, offset=rng.standard_normal(),
+                scale=1.0 + rng.random(), patch_value=rng.standard_normal(2),
+            )
+        )  # fmt: skip
+    family = _PatchedFamily(
+        "random", program, members, np.array([10, -1, 11]),
+        np.array([[2, 12], [13, 12]])[:n_exit, :n_state], ((),) * n_exit, True,
+    )  # fmt: skip
+    matrices = np.repeat(matrix[None], n_member, axis=0)
+    matrices[:, 0, :2] = [member.patch_value for member in members]
+    return family, matrices
+
+
+@pytest.mark.parametrize("seed", range(6))
+def test_cut_of_a_pair_is_the_sum_term_by_term(seed):
+    rng = np.random.default_rng(seed)
+    family, matrices = _random_family(rng)
+    n_solve, n_pair, n_child = 3, 25, 40
+    theta_lower = -rng.random(2)
+    bound = DualBound(
+        0, family, np.zeros(3), np.ones(3), theta_lower, MemberCache((family,))
+    )  # fmt: skip
+    pi = rng.standard_normal((n_solve, 12)) * (rng.random((n_solve, 12)) < 0.6)
+    # Most multipliers have the sign that their row asks for.
+    sides = np.array([[member.row_lower, member.row_upper] for member in family.members])
+    is_same = (sides == sides[0]).all(axis=(0, 1))
+    is_usual = rng.random(pi.shape) < 0.9
+    pi = np.where(is_usual & np.isinf(sides[0, 1]), np.abs(pi), pi)
+    pi = np.where(is_usual & np.isinf(sides[0, 0]), -np.abs(pi), pi)
+    solve, members = rng.integers(0, n_solve, n_pair), rng.integers(0, family.n_member, n_pair)
+    children = ChildMultipliers(
+        np.sort(rng.integers(0, n_pair, n_child)), rng.integers(0, 2, n_child),
+        rng.random(n_child), rng.standard_normal(n_child),
+        rng.standard_normal((n_child, 2)), rng.standard_normal((n_child, 3)),
+    )  # fmt: skip
+    cuts, is_valid = bound.cuts_of_pairs(pi, solve, members, children, np.arange(n_pair))
+    assert is_valid.any()
+    for p, (s, m) in enumerate(zip(solve.tolist(), members.tolist(), strict=True)):
+        member, terms = family.member(m), [family.member(m).offset]
+        is_open = False
+        d = member.cost.copy()
+        for i in range(12):
+            if pi[s, i] != 0.0:
+                side = member.row_lower[i] if pi[s, i] > 0.0 else member.row_upper[i]
+                if is_same[i] and not np.isfinite(side):
+                    continue  # no member has that side: the multiplier counts as 0
+                is_open = is_open or not np.isfinite(side)
+                terms.append(pi[s, i] * side)
+                d -= pi[s, i] * matrices[m, i]
+        assert bool(is_valid[p]) == (not is_open)
+        capacity_slope = np.zeros(3)
+        for e in range(2):
+            here = (children.pair == p) & (children.exit == e)
+            weight, asked = member.exit_weight[e], children.pi[here].sum()
+            share = children.pi[here] * min(1.0, weight / asked if asked else 1.0)
+            terms += [*(share * children.intercept[here]), (weight - share.sum()) * theta_lower[e]]
+            d[family.out_columns[e]] += share @ children.state_slope[here]
+            capacity_slope += share @ children.capacity_slope[here]
+        for j in range(14):
+            if j not in (8, 9, 10, 11):
+                terms.append(min(d[j] * member.col_lower[j], d[j] * member.col_upper[j]))
+        capacity_slope[[0, 2]] += d[[10, 11]]
+        np.testing.assert_allclose(cuts.state_slope[p], d[[8, 9]] / member.scale, atol=1e-11)
+        np.testing.assert_allclose(
+            cuts.capacity_slope[p], capacity_slope / member.scale, atol=1e-11
+        )
+        if is_valid[p]:
+            total, shift = math.fsum(terms), ROUNDING_SHIFT * np.abs(terms).sum()
+            lowered_by = total - cuts.intercept[p] * member.scale
+            assert 0.99 * shift <= lowered_by <= 1.01 * shift

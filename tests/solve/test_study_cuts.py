@@ -6,8 +6,11 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
+import scipy.optimize
+import scipy.sparse
 
 from tests.builders import random_study
+from tests.solve.graphs import random_tree_graph
 from xlplan.model.study_graph import build_study_graph
 from xlplan.network.feeder import build_feeder
 from xlplan.outages.window_model import build_window_models
@@ -141,3 +144,140 @@ def test_folded_network_equals_the_full_one_at_random_states(seed):
             cut = solvers[0].model(i_family, 0).cut_from(folded, i_member, 1).take(np.arange(1))
             reached = cut.values(state[None, :], capacity)[0]
             assert reached == pytest.approx(full.value, rel=1e-6, abs=1e-5)
+
+
+def value_with_cuts(family, member, state, capacity, theta_lower, exits):
+    """Value of a member with the given cuts of its children alone: a cold LP."""
+    program, n_exit = family.program, len(theta_lower)
+    low, high = member.col_lower.copy(), member.col_upper.copy()
+    given, held = member.in_columns >= 0, family.capacity_columns >= 0
+    low[member.in_columns[given]] = high[member.in_columns[given]] = state[given]
+    low[family.capacity_columns[held]] = high[family.capacity_columns[held]] = capacity[held]
+    value = program.value.copy()
+    value[family.patch] = member.patch_value
+    rows = scipy.sparse.csr_array(
+        (value, program.index, program.start), shape=(program.n_row, program.n_col)
+    )
+    # One row for each cut of a child: theta - slope @ y >= the rest of the cut.
+    n_cut = len(exits.exit)
+    cut_rows = scipy.sparse.lil_array((n_cut, program.n_col + n_exit))
+    for k, e in enumerate(exits.exit):
+        cut_rows[k, program.n_col + e] = 1.0
+        for column, slope in zip(family.out_columns[e], exits.state_slope[k], strict=True):
+            cut_rows[k, column] -= slope
+    matrix = scipy.sparse.vstack(
+        [scipy.sparse.hstack([rows, scipy.sparse.csr_array((program.n_row, n_exit))]), cut_rows]
+    )
+    row_low = np.concatenate([member.row_lower, exits.intercept + exits.capacity_slope @ capacity])
+    found = scipy.optimize.milp(
+        np.concatenate([member.cost, member.exit_weight]),
+        bounds=scipy.optimize.Bounds(
+            np.concatenate([low, theta_lower]), np.concatenate([high, np.full(n_exit, np.inf)])
+        ),
+        constraints=scipy.optimize.LinearConstraint(
+            matrix.tocsr(), row_low, np.concatenate([member.row_upper, np.full(n_cut, np.inf)])
+        ),
+    )
+    assert found.status == 0
+    return (found.fun + member.offset) / member.scale
+
+
+def sides_that_are_infinite(family, pi, i_member):
+    """Whether ``pi`` needs an infinite side of a row that differs between the members."""
+    members = [family.member(m) for m in range(family.n_member)]
+    low = np.array([m.row_lower for m in members])
+    high = np.array([m.row_upper for m in members])
+    differs = (low != low[0]).any(axis=0) | (high != high[0]).any(axis=0)
+    side = np.where(pi > 0.0, low[i_member], high[i_member])
+    return bool((differs & (pi != 0.0) & ~np.isfinite(side)).any())
+
+
+def compared_with_cold_programs(graph, seed):
+    """Compares cuts of pairs and of nests with cold programs.
+
+    Returns how many were below, how many of these reached the value, how many were not valid.
+    """
+    rng = np.random.default_rng(seed)
+    with Engine(graph, seed=1) as engine:
+        engine.run(0.05)
+        pools = engine.pools
+    solver = NodeSolver(graph, gather_tables(graph, MemberCache(graph.families)))
+    for pool in pools:
+        solver.add_cuts([pool.since(0)])
+    n_reached = n_below = n_invalid = 0
+    for i_family, family in enumerate(graph.families):
+        model, bound = solver.model(i_family, 0), solver.bound(i_family)
+        box = solver.tables.families[i_family]
+        solved = []
+        for i_member in rng.integers(0, family.n_member, 3).tolist():
+            capacity, state = random_point(graph, i_family, rng)
+            state = clip_states(box, state[None], capacity[None])[0]
+            solved.append((i_member, capacity, state, model.solve(i_member, state, capacity)))
+        for noise in (0.0, 0.1, 2.0):
+            pi = np.array([outcome.pi for *_, outcome in solved])
+            pi = pi * (1.0 + noise * rng.standard_normal(pi.shape))
+            if noise > 1.0:  # some that were 0 are not, of either sign
+                at = rng.random(pi.shape) < 0.02
+                pi[at] += np.abs(pi).max(initial=0.0) * rng.standard_normal(at.sum())
+            if bound.is_nested:
+                i_solve = rng.integers(len(solved), size=1)
+                i_member, *_, outcome = solved[int(i_solve[0])]
+                cuts = bound.nested_cuts(
+                    family.member(i_member), i_member, pi[i_solve[0]], outcome.exits, 1
+                )
+                solve = np.repeat(i_solve, len(cuts))
+                is_valid = np.ones(len(cuts), dtype=bool)
+            else:
+                # Each solve's own member, and others, solves in no order.
+                own = np.array([i_member for i_member, *_ in solved])
+                others = rng.integers(0, family.n_member, 3)
+                solve = np.concatenate([np.arange(len(solved)), rng.permutation(len(solved))])
+                exits = [solved[i][3].exits for i in solve]
+                children = ChildMultipliers(
+                    np.repeat(np.arange(len(solve)), [len(e.exit) for e in exits]),
+                    *(
+                        np.concatenate([getattr(e, name) for e in exits])
+                        for name in ("exit", "pi", "intercept", "state_slope", "capacity_slope")
+                    ),
+                )
+                cuts, is_valid = bound.cuts_of_pairs(
+                    pi, solve, np.concatenate([own, others]), children, np.arange(len(solve))
+                )
+            for i in rng.permutation(len(cuts))[:6].tolist():
+                i_own, capacity, state, outcome = solved[solve[i]]
+                i_member = int(cuts.member[i])
+                member = family.member(i_member)
+                if not bound.is_nested:
+                    is_bad = sides_that_are_infinite(family, pi[solve[i]], i_member)
+                    assert bool(is_valid[i]) != is_bad
+                if not is_valid[i]:
+                    n_invalid += 1
+                    continue
+                is_own = noise == 0.0 and i_member == i_own
+                if not is_own:
+                    capacity, state = random_point(graph, i_family, rng)
+                    state = clip_states(box, state[None], capacity[None])[0]
+                value = value_with_cuts(
+                    family, member, state, capacity, box.theta_lower, outcome.exits
+                )
+                reached = cuts.take(np.array([i])).values(state[None, :], capacity)[0]
+                assert reached <= value + 1e-7 * (1.0 + abs(value))
+                n_below += 1
+                if is_own:
+                    assert reached == pytest.approx(value, rel=1e-6, abs=1e-6)
+                    n_reached += 1
+    return n_below, n_reached, n_invalid
+
+
+@pytest.mark.parametrize("seed", [1, 4, 6, 14, 26])
+def test_cuts_of_pairs_and_nests_are_below_cold_programs_of_their_members(seed):
+    n_below, n_reached, _ = compared_with_cold_programs(graph_of(seed), seed)
+    assert n_below > n_reached > 0
+
+
+@pytest.mark.parametrize("seed", [4, 5])
+def test_cuts_of_pairs_that_need_an_infinite_side_are_not_valid(seed):
+    graph = random_tree_graph(seed, n_stage=3)
+    n_below, n_reached, n_invalid = compared_with_cold_programs(graph, seed)
+    assert n_below > n_reached > 0
+    assert n_invalid

@@ -18,7 +18,6 @@ weight of the exit; then the value at the exit needs no upper bound.
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -59,19 +58,24 @@ class ExitMultipliers:
 
 @dataclass(frozen=True)
 class _NestTable:
-    """Entries that the sums of a nested family need (``Nest``).
+    """What the sums of a nested family need (``Nest``).
 
-    entry, entry_row, entry_place : position in the matrix, row, and place in the flattened
-        (n_member, n_state) incoming state, of entries in rows that count for that member; the same
-        for capacities, whose place is their position among those that have a column
+    entry_row, entry_value, entry_place : row, value, and place in the flattened (n_member,
+        n_state) incoming state, of matrix entries in rows that count for that member
+    capacity_row, capacity_value, capacity_place : likewise for the columns of capacities; the
+        place is in an array (n_held, n_member + 1) of the capacities that have a column, by slot
+    column_slot, exit_slot : 1 + the last member in which a column or an exit counts, 0 for none
+    first_only : rows that count in member 0 alone
     """
 
-    entry: IntArray
     entry_row: IntArray
+    entry_value: FloatArray
     entry_place: IntArray
-    capacity_entry: IntArray
     capacity_row: IntArray
+    capacity_value: FloatArray
     capacity_place: IntArray
+    column_slot: IntArray
+    exit_slot: IntArray
     first_only: IntArray
     state_lower: FloatArray
     state_upper: FloatArray
@@ -110,19 +114,33 @@ def _nest_table(cache: MemberCache, i_family: int, family: Family) -> _NestTable
     of_capacity = np.full(program.n_col, -1, dtype=np.int64)
     of_capacity[held] = np.arange(len(held))
     caps = of_capacity[program.index] >= 0
+    row_slot = _slots(nest.row_last[row[caps]], family.n_member)
     return _NestTable(
-        entry=np.flatnonzero(here),
         entry_row=row[here],
+        entry_value=program.value[here],
         entry_place=entry_place[here],
-        capacity_entry=np.flatnonzero(caps),
         capacity_row=row[caps],
-        capacity_place=of_capacity[program.index[caps]],
+        capacity_value=program.value[caps],
+        capacity_place=of_capacity[program.index[caps]] * (family.n_member + 1) + row_slot,
+        column_slot=_slots(nest.col_last, family.n_member),
+        exit_slot=_slots(nest.exit_last, family.n_member),
         first_only=np.flatnonzero(nest.row_last == 0),
         state_lower=np.array(lower),
         state_upper=np.array(upper),
         offset=np.array(offset),
         scale=np.array(scale),
     )
+
+
+def _slots(last: IntArray, n_member: int) -> IntArray:
+    """1 + the last member in which something counts, 0 where it counts in none."""
+    return np.clip(last, -1, n_member - 1) + 1
+
+
+def _left(by_slot: FloatArray) -> FloatArray:
+    """Sums by member, (n_member, ...), of what still counts there, from sums by slot."""
+    suffix: FloatArray = np.cumsum(by_slot[::-1], axis=0)[::-1][1:]
+    return suffix
 
 
 class DualBound:
@@ -183,8 +201,7 @@ class DualBound:
         assert nest is not None
         assert table is not None
         n = self.family.n_member
-        later = np.arange(i_member + 1, n)
-        if not len(later):
+        if i_member + 1 == n:
             return self._finish([first], [i_member], group, parts.size)
         full = np.zeros(len(pi))
         full[parts.rows] = parts.pi
@@ -196,39 +213,38 @@ class DualBound:
             full[rows] = 0.0
         col_term = col_term.copy()
         col_term[self._capacity_columns] = 0.0
-
-        def left(last: IntArray, term: NDArray[Any]) -> FloatArray:
-            """Sum of what still counts, by member, (n_member,)."""
-            total = np.bincount(np.clip(last, -1, n - 1) + 1, term, n + 1)
-            suffix: FloatArray = np.cumsum(total[::-1])[::-1][1:]
-            return suffix
-
-        intercept = table.offset + left(nest.col_last, col_term)
-        row_last = nest.row_last[parts.rows]
-        row_term = np.where(row_last > 0, parts.row_term, 0.0)
-        intercept += left(row_last, row_term)
-        intercept += left(nest.exit_last, parts.cut_term + parts.theta_term)
-        n_capacity = parts.capacity_part.shape[1]
-        exit_last = np.clip(nest.exit_last, -1, n - 1) + 1
-        by_exit = np.zeros((n + 1, n_capacity))
-        np.add.at(by_exit, exit_last[parts.used], parts.capacity_part[parts.used])
-        entry = self.matrix.value[table.capacity_entry] * full[table.capacity_row]
-        last = np.clip(nest.row_last[table.capacity_row], -1, n - 1) + 1
-        n_held = len(self._capacity_columns)
-        by_row = np.bincount(table.capacity_place * (n + 1) + last, entry, n_held * (n + 1))
-        by_exit[:, self._has_column] -= by_row.reshape(n_held, n + 1).T
-        capacity_slope = np.cumsum(by_exit[::-1], axis=0)[::-1][1:]
+        # Rows that count in member 0 alone are in the slot of that member, which is ``first``.
+        row_slot = _slots(nest.row_last[parts.rows], n)
+        by_slot = _sums(table.column_slot, col_term, n + 1)
+        by_slot += _sums(row_slot, parts.row_term, n + 1)
+        by_slot += _sums(table.exit_slot, parts.cut_term + parts.theta_term, n + 1)
+        intercept = table.offset + _left(by_slot)
+        n_capacity, n_held = len(self.capacity_lower), len(self._capacity_columns)
+        capacity_by_slot = _sums_at(
+            table.exit_slot[parts.cut_exit],
+            np.arange(n_capacity),
+            parts.capacity_term,
+            (n + 1, n_capacity),
+        )
+        entry = table.capacity_value * full[table.capacity_row]
+        by_row = _sums(table.capacity_place, entry, n_held * (n + 1))
+        capacity_by_slot[:, self._has_column] -= by_row.reshape(n_held, n + 1).T
+        capacity_slope = _left(capacity_by_slot)
         n_state = table.state_lower.shape[1]
-        entry = self.matrix.value[table.entry] * full[table.entry_row]
-        state_slope = -np.bincount(table.entry_place, entry, n * n_state).reshape(n, n_state)
+        entry = table.entry_value * full[table.entry_row]
+        state_slope = -_sums(table.entry_place, entry, n * n_state).reshape(n, n_state)
+        intercept[i_member] = first.intercept
+        state_slope[i_member] = first.state_slope
+        capacity_slope[i_member] = first.capacity_slope
+        these = slice(i_member, n)
         return self._assembled(
             np.arange(i_member, n),
-            np.concatenate([[first.intercept], intercept[later]]),
-            np.vstack([first.state_slope[None, :], state_slope[later]]),
-            np.vstack([first.capacity_slope[None, :], capacity_slope[later]]),
-            np.vstack([first.state_lower[None, :], table.state_lower[later]]),
-            np.vstack([first.state_upper[None, :], table.state_upper[later]]),
-            table.scale[i_member:],
+            intercept[these],
+            state_slope[these],
+            capacity_slope[these],
+            table.state_lower[these],
+            table.state_upper[these],
+            table.scale[these],
             group,
             parts.size,
         )
@@ -257,115 +273,101 @@ class DualBound:
         table = self.table
         if table is None:
             return None
-        first = table.first
         n_pair = len(members)
-        # Rows that are the same for all members.
-        at, rows = np.nonzero(pi)
-        multiplier = pi[at, rows]
-        place = table.row_place[rows]
-        side = np.where(multiplier > 0.0, first.row_lower[rows], first.row_upper[rows])
-        is_open = (place < 0) & ~np.isfinite(side)
-        if is_open.any():
-            pi = pi.copy()
-            pi[at[is_open], rows[is_open]] = 0.0
-            at, rows, place = at[~is_open], rows[~is_open], place[~is_open]
-            multiplier, side = multiplier[~is_open], side[~is_open]
-        same = place < 0
-        row_term = multiplier[same] * side[same]
-        n_solve = len(pi)
-        row_const = np.bincount(at[same], row_term, n_solve)
-        size_const = np.bincount(at[same], np.abs(row_term), n_solve)
-        # Rows that differ, of those that any solve uses.
-        used = np.unique(place[~same])
-        now = table.numbers(members, used)
-        by_row = pi[:, table.rows[used]][solve]
-        side = now.row_lower
-        if now.row_upper is not now.row_lower:
-            side = np.where(by_row > 0.0, side, now.row_upper)
-        with np.errstate(invalid="ignore"):
-            row_vary = np.where(by_row != 0.0, side * by_row, 0.0)
-        is_valid = np.asarray(np.isfinite(row_vary).all(axis=1))
-        # Reduced costs.
-        matrix, n_col = self.matrix, len(first.cost)
-        entries = matrix.entries(rows)
-        counts = matrix.start[rows + 1] - matrix.start[rows]
-        weights = matrix.value[entries] * np.repeat(multiplier, counts)
-        target = np.repeat(at * n_col, counts) + matrix.index[entries]
-        d = first.cost - np.bincount(target, weights, n_solve * n_col).reshape(n_solve, n_col)
-        columns, at_column = table.columns, table.column_place
-        d_vary = now.cost + (d[:, columns] - first.cost[columns])[solve]
-        if len(self.patch):
-            step = pi[:, self.patch_row][solve] * (now.patch_value - self.patch_base)
-            moved = np.flatnonzero(step.any(axis=0))
-            places = at_column[self.patch_column[moved]]
-            np.subtract.at(d_vary.T, places, step[:, moved].T)
+        pi, same, d = self._reduced_costs(table, pi)
+        same += table.same_sums(d)
+        vary, vary_size, is_valid = table.side_sums(pi, d, solve, members)
         # Children's cuts: scaled down where they weigh more than the exit does.
-        weight = now.exit_weight
+        weight = table.exits(members)[0]
         n_exit = weight.shape[1]
-        total = np.bincount(children.pair * n_exit + children.exit, children.pi, n_pair * n_exit)
-        total = total.reshape(n_pair, n_exit)
-        with np.errstate(divide="ignore", invalid="ignore"):
-            ratio = np.where(total > 0.0, weight / np.where(total > 0.0, total, 1.0), 0.0)
-        factor = np.where(ratio < 1.0 + SNAP_WEIGHT, ratio, 1.0)
-        rest = np.maximum(weight - factor * total, 0.0)
+        total = _sums(children.pair * n_exit + children.exit, children.pi, n_pair * n_exit)
+        factor, rest = _exit_factors(weight, total.reshape(n_pair, n_exit))
         exit_term = rest * self.theta_lower
         share = factor[children.pair, children.exit] * children.pi
         child_term = share * children.intercept
-        cut_term = np.bincount(children.pair, child_term, n_pair)
-        places = at_column[self.family.out_columns[children.exit]]
-        n_vary = len(columns)
+        # Columns whose reduced costs differ, from here on by pair.
+        cost, lower, upper = table.moving_numbers(members)
+        moving = cost + (d[:, table.moving] - table.first.cost[table.moving])[solve]
+        if len(self.patch):
+            step = pi[:, self.patch_row][solve] * (table.patch_values(members) - self.patch_base)
+            used = np.flatnonzero(step.any(axis=0))
+            places = table.moving_place[self.patch_column[used]]
+            moving -= _sums_at(np.arange(n_pair), places, step[:, used], moving.shape)
         if len(share):
-            flat = children.pair[:, None] * n_vary + places
-            more = np.bincount(
-                flat.ravel(), (share[:, None] * children.state_slope).ravel(), n_pair * n_vary
-            )
-            d_vary += more.reshape(n_pair, n_vary)
-        capacity_slope = np.zeros((n_pair, len(self.capacity_lower)))
-        np.add.at(capacity_slope, children.pair, share[:, None] * children.capacity_slope)
-        col_const = _col_terms(d[:, table.const], table.const_lower, table.const_upper)
-        col_vary = _col_terms(d_vary, now.col_lower, now.col_upper) * table.inside
-        size_const = size_const + np.abs(col_const).sum(axis=1)
+            places = table.moving_place[self.family.out_columns[children.exit]]
+            slope = share[:, None] * children.state_slope
+            moving += _sums_at(children.pair, places, slope, moving.shape)
+        moving_term = _col_terms(moving, lower, upper) * table.moving_inside
+        offset, scale = table.totals(members)
         intercept = (
-            now.offset
-            + (row_const + col_const.sum(axis=1))[solve]
-            + row_vary.sum(axis=1)
-            + col_vary.sum(axis=1)
-            + cut_term
+            offset
+            + same[solve, 0]
+            + vary
+            + moving_term.sum(axis=1)
+            + _sums(children.pair, child_term, n_pair)
             + exit_term.sum(axis=1)
         )
         size = (
-            np.abs(now.offset)
-            + size_const[solve]
-            + np.abs(row_vary).sum(axis=1)
-            + np.abs(col_vary).sum(axis=1)
-            + np.bincount(children.pair, np.abs(child_term), n_pair)
+            np.abs(offset)
+            + same[solve, 1]
+            + vary_size
+            + np.abs(moving_term).sum(axis=1)
+            + _sums(children.pair, np.abs(child_term), n_pair)
             + np.abs(exit_term).sum(axis=1)
         )
 
-        def by_pair(wanted: IntArray, same: FloatArray, vary: FloatArray) -> FloatArray:
-            """Numbers of some columns, (n_pair, n_wanted), where some of them differ."""
-            found = (
-                same[:, wanted][solve] if len(same) > 1 else np.tile(same[0, wanted], (n_pair, 1))
-            )
-            place = at_column[wanted]
-            found[:, place >= 0] = vary[:, place[place >= 0]]
+        def by_pair(wanted: IntArray) -> FloatArray:
+            """Reduced costs of some columns, (n_pair, n_wanted)."""
+            found = d[:, wanted][solve]
+            place = table.moving_place[wanted]
+            found[:, place >= 0] = moving[:, place[place >= 0]]
             return found
 
-        given, into = table.given, table.into
-        state_slope = np.where(given, by_pair(into, d, d_vary), 0.0)
-        capacity_slope[:, self._has_column] += by_pair(self._capacity_columns, d, d_vary)
+        capacity_slope = np.zeros((n_pair, len(self.capacity_lower)))
+        if len(share):
+            slope = share[:, None] * children.capacity_slope
+            places = np.arange(slope.shape[1])
+            capacity_slope += _sums_at(children.pair, places, slope, capacity_slope.shape)
+        capacity_slope[:, self._has_column] += by_pair(self._capacity_columns)
         cuts = self._assembled(
             members,
             np.where(is_valid, intercept, -np.inf),
-            state_slope,
+            np.where(table.given, by_pair(table.into), 0.0),
             capacity_slope,
-            np.where(given, by_pair(into, first.col_lower[None, :], now.col_lower), 0.0),
-            np.where(given, by_pair(into, first.col_upper[None, :], now.col_upper), 0.0),
-            np.asarray(now.scale),
+            *table.into_bounds(members),
+            scale,
             groups,
             size,
         )
         return cuts, is_valid
+
+    def _reduced_costs(
+        self, table: MemberTable, pi: FloatArray
+    ) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """Sums over the rows' sides that are the same in all members, and reduced costs.
+
+        Returns
+        -------
+        ``pi`` with 0 where the side that it needs is infinite in all members; sums and sums of
+        absolute terms, (n_solve, 2); ``cost - A' pi``, (n_solve, n_col), of member 0
+        """
+        n_solve, n_col = len(pi), len(table.first.cost)
+        # Solves of one run have most of their multipliers in the same rows.
+        rows = np.flatnonzero((pi != 0.0).any(axis=0))
+        asked = pi.take(rows, axis=1)
+        used, term = _row_terms(asked, *table.same_row_sides(rows))
+        if (used != asked).any():
+            pi = pi.copy()
+            pi[:, rows] = used
+        matrix = self.matrix
+        entries = matrix.entries(rows)
+        counts = matrix.start[rows + 1] - matrix.start[rows]
+        weights = used.take(np.repeat(np.arange(len(rows)), counts), axis=1)
+        weights *= matrix.value[entries]
+        every = np.arange(n_solve)
+        product = _sums_at(every, matrix.index[entries], weights, (n_solve, n_col))
+        sums = np.stack([term.sum(axis=1), np.abs(term).sum(axis=1)], axis=1)
+        return pi, sums, table.first.cost - product
 
     @property
     def table(self) -> MemberTable | None:
@@ -409,8 +411,9 @@ class DualBound:
             (capacity_slope, self.capacity_lower, self.capacity_upper),
         ):
             if slope.size:
-                largest = np.abs(slope).max(axis=1, initial=0.0, keepdims=True)
-                is_small = (slope != 0.0) & (np.abs(slope) < SMALL_SLOPE * largest)
+                magnitude = np.abs(slope)
+                largest = magnitude.max(axis=1, keepdims=True)
+                is_small = (magnitude < SMALL_SLOPE * largest) & (magnitude > 0.0)
                 if is_small.any():
                     moved = np.where(is_small, np.minimum(slope * lower, slope * upper), 0.0)
                     intercept = intercept + moved.sum(axis=1)
@@ -465,19 +468,16 @@ class _Sum:
         self.weight = member.exit_weight
         self.in_columns, self.offset, self.scale = member.in_columns, member.offset, member.scale
         # Most lazy rows have no multiplier: only the others are kept.
-        self.rows = np.flatnonzero(pi)
-        self.pi = _usable(pi[self.rows], member.row_lower[self.rows], member.row_upper[self.rows])
-        self.row_term = _row_terms(
-            self.pi, member.row_lower[self.rows], member.row_upper[self.rows]
+        self.rows = np.flatnonzero(pi != 0.0)
+        self.pi, self.row_term = _row_terms(
+            pi[self.rows], member.row_lower[self.rows], member.row_upper[self.rows]
         )
-        self.d = member.cost.copy()
-        if len(self.rows):
-            self.d -= matrix.transposed_times(self.rows, self.pi)
+        self.d = member.cost - matrix.transposed_times(self.rows, self.pi)
         if len(bound.patch):
             full = np.zeros(len(pi))
             full[self.rows] = self.pi
             step = full[bound.patch_row] * (member.patch_value - bound.patch_base)
-            np.subtract.at(self.d, bound.patch_column, step)
+            self.d -= _sums(bound.patch_column, step, len(self.d))
         if bound.family.exit_columns is not None:
             # What rows make of the value of an exit is part of its weight.
             self.weight = self.weight + self.d[bound.family.exit_columns]
@@ -485,9 +485,7 @@ class _Sum:
             self.weight = np.maximum(self.weight, 0.0)
         self.cut_exit, self.cut_pi = exits.exit, exits.pi
         self.cut_intercept = exits.intercept
-        self.cut_slope, self.cut_capacity = exits.state_slope, exits.capacity_slope
-        self.capacity_part = np.zeros((len(self.weight), self.cut_capacity.shape[1]))
-        self._weigh_exits()
+        self._weigh_exits(exits.state_slope, exits.capacity_slope)
         self.col_term = _col_terms(self.d, self.col_lower, self.col_upper)
         # Later members of a nest have fewer terms: this bounds the rounding of them all.
         self.size = abs(self.offset) + sum(
@@ -495,21 +493,18 @@ class _Sum:
             for term in (self.row_term, self.col_term, self.cut_term, self.theta_term)
         )
 
-    def _weigh_exits(self) -> None:
+    def _weigh_exits(self, state_slope: FloatArray, capacity_slope: FloatArray) -> None:
         """Scales the multipliers of every exit to its weight, and adds the cuts' slopes."""
         n_exit = len(self.weight)
-        total = np.bincount(self.cut_exit, weights=self.cut_pi, minlength=n_exit)
-        with np.errstate(divide="ignore", invalid="ignore"):
-            ratio = np.where(total > 0.0, self.weight / np.where(total > 0.0, total, 1.0), 0.0)
-        factor = np.where(ratio < 1.0 + SNAP_WEIGHT, ratio, 1.0)
-        rest = np.maximum(self.weight - factor * total, 0.0)
+        total = _sums(self.cut_exit, self.cut_pi, n_exit)
+        factor, rest = _exit_factors(self.weight, total)
         self.theta_term = np.where(rest > 0.0, rest * self.bound.theta_lower, 0.0)
         step = self.cut_pi * factor[self.cut_exit]
-        out = self.bound.family.out_columns[self.cut_exit]
-        np.add.at(self.d, out, step[:, None] * self.cut_slope)
-        self.cut_term = np.bincount(self.cut_exit, step * self.cut_intercept, n_exit)
-        self.used = np.unique(self.cut_exit)
-        np.add.at(self.capacity_part, self.cut_exit, step[:, None] * self.cut_capacity)
+        if len(step):
+            out = self.bound.family.out_columns[self.cut_exit]
+            self.d += _sums(out.ravel(), (step[:, None] * state_slope).ravel(), len(self.d))
+        self.cut_term = _sums(self.cut_exit, step * self.cut_intercept, n_exit)
+        self.capacity_term = step[:, None] * capacity_slope
 
     def terms(self) -> _Terms:
         """Its sums."""
@@ -527,7 +522,7 @@ class _Sum:
         self.col_term[columns] = kept
         is_given = self.in_columns >= 0
         held = np.where(is_given, self.in_columns, 0)
-        capacity_slope = self.capacity_part.sum(axis=0)
+        capacity_slope = self.capacity_term.sum(axis=0)
         capacity_slope[bound._has_column] += self.d[bound._capacity_columns]
         return _Terms(
             intercept=float(intercept),
@@ -539,19 +534,39 @@ class _Sum:
         )
 
 
-def _usable(pi: FloatArray, row_lower: FloatArray, row_upper: FloatArray) -> FloatArray:
-    """Multipliers, 0 where the side that they need is infinite."""
-    is_bad = ((pi > 0.0) & np.isneginf(row_lower)) | ((pi < 0.0) & np.isposinf(row_upper))
-    return np.where(is_bad, 0.0, pi)
+def _exit_factors(weight: FloatArray, total: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Factors that scale the multipliers of each exit to its weight, and the weight left over."""
+    is_scaled = weight < (1.0 + SNAP_WEIGHT) * total
+    factor = np.where(is_scaled, weight / np.where(is_scaled, total, 1.0), 1.0)
+    return factor, np.maximum(weight - factor * total, 0.0)
 
 
-def _row_terms(pi: FloatArray, row_lower: FloatArray, row_upper: FloatArray) -> FloatArray:
+def _sums(place: IntArray, term: FloatArray, n: int) -> FloatArray:
+    """Sums of the terms of each place, (n,)."""
+    return np.bincount(place, term, n).astype(float, copy=False)  # integers where there are none
+
+
+def _sums_at(
+    row: IntArray, column: IntArray, term: FloatArray, shape: tuple[int, ...]
+) -> FloatArray:
+    """Array of a shape with the sums of terms (n, m) at row (n,) and column (m,) or (n, m)."""
+    flat = row[:, None] * shape[1] + column
+    return _sums(flat.ravel(), term.ravel(), shape[0] * shape[1]).reshape(shape)
+
+
+def _row_terms(
+    pi: FloatArray, row_lower: FloatArray, row_upper: FloatArray
+) -> tuple[FloatArray, FloatArray]:
+    """Multipliers, 0 where the side that they need is infinite, and their terms."""
     side = np.where(pi > 0.0, row_lower, row_upper)
-    return pi * np.where(pi != 0.0, side, 0.0)
+    is_open = ~np.isfinite(side)
+    if is_open.any():
+        pi, side = np.where(is_open, 0.0, pi), np.where(is_open, 0.0, side)
+    return pi, pi * side
 
 
 def _col_terms(d: FloatArray, lower: FloatArray, upper: FloatArray) -> FloatArray:
-    return np.where(d > 0.0, d * lower, d * upper)
+    return d * np.where(d > 0.0, lower, upper)
 
 
 def lift_amounts(

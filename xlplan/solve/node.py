@@ -356,7 +356,7 @@ class NodeModel:
         """Numbers of some members."""
         table = self.bound.table
         if table is not None:
-            numbers = table.numbers(np.array(members), np.arange(len(table.rows)))
+            numbers = table.numbers(np.array(members))
         else:
             (i_member,) = members
             own = Numbers.of(self.cache.get(self.i_family, i_member))

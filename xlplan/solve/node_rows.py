@@ -73,7 +73,8 @@ class Differences:
             self.column_place = np.arange(len(first.cost))
             self.row_place = np.arange(len(first.row_lower))
         else:
-            self.column_place, self.row_place = table.column_place, table.row_place
+            self.column_place = _way_back(table.columns, len(first.cost))
+            self.row_place = _way_back(table.rows, len(first.row_lower))
 
     def bounds(self, columns: IntArray) -> Lookup:
         """Reads ``col_lower`` and ``col_upper``."""
@@ -309,6 +310,13 @@ class LazyRows:
             values = self._matrix.value[self._entries] * y.take(self._index, axis=1)
             found[:, self._n_few :] = sums_by(self._of_entry, values, n_many)
         return found
+
+
+def _way_back(at: IntArray, n: int) -> IntArray:
+    """Place of each of n numbers in ``at``, -1 where it is not there."""
+    place = np.full(n, -1, dtype=np.int64)
+    place[at] = np.arange(len(at))
+    return place
 
 
 def _behind(old: NDArray[np.int32], new: NDArray[np.integer]) -> NDArray[np.int32]:
