@@ -213,7 +213,7 @@ class NodeModel:
         else:
             self._children = SlotRows(graph, pools, *parts)
         self._member_index = -1
-        self._n_block = 1
+        self._n_block, self._last_capacity = 1, np.zeros(0)
         is_lazy_patched = bool(program.is_lazy[bound.patch_row].any())
         # Members without a table are large; patched lazy rows are those of one member at a time.
         self._most_in_block = 1 if bound.table is None or is_lazy_patched else MOST_IN_BLOCK
@@ -280,64 +280,59 @@ class NodeModel:
         """
         outcomes: list[NodeOutcome | SolverFailureError] = []
         while len(outcomes) < len(points):
-            part = points[len(outcomes) : len(outcomes) + self._n_block]
+            begin = len(outcomes)
+            capacity = points[begin].capacity
+            if not np.array_equal(capacity, self._last_capacity):
+                # Other rows will be missed, and then each point had better see those of the one
+                # before.
+                self._n_block, self._last_capacity = 1, capacity
             n_before = len(self._rows)
-            outcomes += self._solve_block(part)
-            # Where rows are still missed every point had better see those of the one before.
-            n = self._n_block // 2 if len(self._rows) > n_before else 2 * self._n_block
-            self._n_block = min(max(n, 1), self._most_in_block)
+            outcomes += self._solve_block(points[begin : begin + self._n_block])
+            n = 1 if len(self._rows) > n_before else 2 * self._n_block
+            self._n_block = min(n, self._most_in_block)
         return outcomes
 
     def _solve_block(self, points: Sequence[NodePoint]) -> list[NodeOutcome | SolverFailureError]:
         """Points of one block: all once, then again those that broke rows left out."""
         block = self._prepared(points)
-        found: list[_Solved | SolverFailureError | None] = [None] * len(points)
-        left = list(range(len(points)))
-        for _ in range(MAX_ROUNDS):
-            solved = []
-            for i in left:
-                self._move(block, i)
-                try:
-                    found[i] = self._settle(block, i)
-                    solved.append(i)
-                except SolverFailureError as failure:
-                    found[i] = failure
-            if not solved or len(points) == 1:
-                break  # one that is alone had its lazy rows looked at with the children's cuts
+        found: list[_Solved | SolverFailureError] = []
+        for i in range(len(points)):
+            found.append(self._solved(block, i, with_lazy_rows=len(points) == 1))
+        if len(points) > 1:
+            solved = [i for i, one in enumerate(found) if isinstance(one, _Solved)]
             self._complete(block, solved, [_result(found[i]) for i in solved])
-            is_missed = self._add_lazy_rows(block, solved)
-            left = [i for i, is_so in zip(solved, is_missed, strict=True) if is_so]
-            if not left:
-                break
-            block.sides = self._side_change(block.now)
-        else:
-            self.counts["row rounds used up"] += 1
+            missed = self._missed_rows(block, solved)
+            for i, (rows, folds) in zip(solved, missed, strict=True):
+                if len(rows) or len(folds):
+                    found[i] = self._solved(block, i, with_lazy_rows=True)
         return self._outcomes(block, found)
 
-    def _settle(self, block: _Block, i: int) -> _Solved:
-        """Solves where the model stands, until no cut of the children is missed.
+    def _solved(self, block: _Block, i: int, with_lazy_rows: bool) -> _Solved | SolverFailureError:
+        """One point of the block, solved until no cut of the children is missed.
 
-        A point that is alone in its block gets its lazy rows in the same rounds.
+        with_lazy_rows : whether the lazy rows that are missed come in too, in the same rounds
         """
-        numbers, is_alone = block.members[i], len(block.points) == 1
-        result = self._model.run(wants_dual=False)
-        for _ in range(MAX_ROUNDS):
-            n_new = 0
-            if self.n_exit:  # first, for it may ask for multipliers, which new rows make void
-                n_new += self._children.add_violated(
-                    result.col_value, numbers, block.points[i].cut_tolerance
-                )
-            if is_alone:
-                self._complete(block, [0], [result])
-                n_new += int(self._add_lazy_rows(block, [0]).sum())
-            if not n_new:
-                break
+        self._move(block, i)
+        numbers, tolerance = block.members[i], block.points[i].cut_tolerance
+        try:
             result = self._model.run(wants_dual=False)
-        else:
-            self.counts["row rounds used up"] += 1
-            if is_alone:
-                self._complete(block, [0], [result])
-        return _Solved(result, self._model.row_dual(), self._children.held())
+            for _ in range(MAX_ROUNDS):
+                n_new = 0
+                if self.n_exit:  # first, for it may ask for multipliers, which new rows make void
+                    n_new += self._children.add_violated(result.col_value, numbers, tolerance)
+                if with_lazy_rows:
+                    self._complete(block, [i], [result])
+                    n_new += self._append_program_rows(block, i, *self._missed_rows(block, [i])[0])
+                if not n_new:
+                    break
+                result = self._model.run(wants_dual=False)
+            else:
+                self.counts["row rounds used up"] += 1
+                if with_lazy_rows:
+                    self._complete(block, [i], [result])
+            return _Solved(result, self._model.row_dual(), self._children.held())
+        except SolverFailureError as failure:
+            return failure
 
     def _complete(
         self, block: _Block, places: Sequence[int], results: Sequence[SolveResult]
@@ -441,56 +436,38 @@ class NodeModel:
         if self._is_lazy_patched:
             self._lazy.refresh()
 
-    def _add_lazy_rows(self, block: _Block, places: Sequence[int]) -> BoolArray:
-        """Adds lazy rows and bounds of folded columns that points of the block violate.
-
-        Returns which points, (k,), violate any that was not in the model.
-        """
-        y, is_missed, n_new = block.y[places], np.zeros(len(places), dtype=bool), 0
+    def _missed_rows(self, block: _Block, places: Sequence[int]) -> list[tuple[IntArray, IntArray]]:
+        """Lazy rows, and folds whose bounds, that points of the block violate, not in the model."""
+        y, none = block.y[places], np.zeros(0, dtype=np.int64)
+        rows = folds = [none] * len(places)
         if len(self._lazy):
             place = self._rows.of_program[self._lazy.row]
-            rows = self._worst(
-                self._lazy.activity(y),
-                _of(block.lazy_low, places), _of(block.lazy_high, places), place, is_missed,
-            )  # fmt: skip
-            if len(rows):
-                rows = self._lazy.row[rows]
-                n_new += self._append_program_rows(block, rows, np.full(len(rows), -1))
+            low, high = _of(block.lazy_low, places), _of(block.lazy_high, places)
+            worst = self._worst(self._lazy.activity(y), low, high, place)
+            rows = [self._lazy.row[at] for at in worst]
         if len(self._folding):
-            folds = self._worst(
-                y.take(self._folding.column, axis=1),
-                _of(block.fold_low, places), _of(block.fold_high, places),
-                self._rows.of_bound, is_missed,
-            )  # fmt: skip
-            if len(folds):
-                n_new += self._append_program_rows(block, np.full(len(folds), -1), folds)
-        self.counts["lazy row"] += n_new
-        return is_missed
+            low, high = _of(block.fold_low, places), _of(block.fold_high, places)
+            values = y.take(self._folding.column, axis=1)
+            folds = self._worst(values, low, high, self._rows.of_bound)
+        return list(zip(rows, folds, strict=True))
 
     @staticmethod
     def _worst(
-        activity: FloatArray,
-        low: FloatArray,
-        high: FloatArray,
-        place: IntArray,
-        is_missed: BoolArray,
-    ) -> IntArray:
-        """The rows most violated at any of k points that are not in the model yet.
+        activity: FloatArray, low: FloatArray, high: FloatArray, place: IntArray
+    ) -> list[IntArray]:
+        """The rows most violated at each of k points that are not in the model yet.
 
-        activity (k, n); low, high (k, n) or (1, n); place (n,) in the model, -1 if not there;
-        is_missed (k,) is set where there are any. Where many are violated most of them follow from
-        the worst ones (the voltage at the end of a line from that in its middle), and every row
-        makes the later solves slower.
+        activity (k, n); low, high (k, n) or (1, n); place (n,) in the model, -1 if not there. Where
+        many are violated most of them follow from the worst ones (the voltage at the end of a line
+        from that in its middle), and every row makes the later solves slower.
         """
         is_out = (activity > high) | (activity < low)
-        hit = is_out.any(axis=1).nonzero()[0]
+        hit, none = is_out.any(axis=1), np.zeros(0, dtype=np.int64)
         chosen: list[IntArray] = []
-        for i in hit.tolist():
-            found = is_out[i].nonzero()[0]
-            found = found[place[found] < 0]
-            if not len(found):
-                continue
-            is_missed[i] = True
+        for i, is_hit in enumerate(hit.tolist()):
+            found = is_out[i].nonzero()[0] if is_hit else none
+            if is_hit:
+                found = found[place[found] < 0]
             if len(found) > FEW_ROWS:
                 reached = activity[i, found]
                 below, above = _of(low, [i])[0, found], _of(high, [i])[0, found]
@@ -499,27 +476,32 @@ class NodeModel:
                 order = np.argsort(-by / (1.0 + np.abs(size)), kind="stable")
                 found = np.sort(found[order[: max(FEW_ROWS, len(found) // WORST_PART)]])
             chosen.append(found)
-        if len(chosen) <= 1:
-            return chosen[0] if chosen else np.zeros(0, dtype=np.int64)
-        together: IntArray = np.unique(np.concatenate(chosen))
-        return together
+        return chosen
 
-    def _append_program_rows(self, block: _Block, rows: IntArray, folds: IntArray) -> int:
-        """Adds program rows, or bounds of folded columns where ``rows`` is -1; their number."""
-        if folds[0] >= 0:
-            expanded = self._folding.expand_columns(folds)
-        else:
-            expanded = self._folding.expand_rows(rows)
-        places = self._model.n_row + np.arange(len(rows))
-        low, high = self._rows.append(rows, folds, places, expanded, block.now.one(0))
-        columns = self._column_place[expanded.index]
-        self._model.add_rows(low, high, expanded.start, columns, expanded.value)
-        return len(rows)
+    def _append_program_rows(self, block: _Block, i: int, rows: IntArray, folds: IntArray) -> int:
+        """Adds program rows and bounds of folded columns at a point of the block; their number."""
+        parts = []
+        if len(rows):
+            none = np.full(len(rows), -1)
+            parts.append((rows, none, self._folding.expand_rows(rows)))
+        if len(folds):
+            none = np.full(len(folds), -1)
+            parts.append((none, folds, self._folding.expand_columns(folds)))
+        for program, bounded, expanded in parts:
+            places = self._model.n_row + np.arange(len(program))
+            low, high = self._rows.append(program, bounded, places, expanded, block.now.one(i))
+            columns = self._column_place[expanded.index]
+            self._model.add_rows(low, high, expanded.start, columns, expanded.value)
+        if parts and len(block.points) > 1:
+            block.sides = self._side_change(block.now)
+        n = len(rows) + len(folds)
+        self.counts["lazy row"] += n
+        return n
 
     # -- what comes out ------------------------------------------------------------------------
 
     def _outcomes(
-        self, block: _Block, found: Sequence[_Solved | SolverFailureError | None]
+        self, block: _Block, found: Sequence[_Solved | SolverFailureError]
     ) -> list[NodeOutcome | SolverFailureError]:
         """Outcomes of a block, from what the solver said."""
         places = [i for i, one in enumerate(found) if isinstance(one, _Solved)]
@@ -732,6 +714,6 @@ def _of(sides: FloatArray, places: Sequence[int]) -> FloatArray:
     return sides[places] if len(sides) > 1 else sides
 
 
-def _result(found: _Solved | SolverFailureError | None) -> SolveResult:
+def _result(found: _Solved | SolverFailureError) -> SolveResult:
     assert isinstance(found, _Solved)
     return found.result

@@ -240,7 +240,10 @@ class SlotRows:
     # -- what comes out ------------------------------------------------------------------------
 
     def held(self) -> Held:
-        """What stands in the slots now."""
+        """What stands in the slots now; where the same point is solved again it begins there."""
+        for e, at in enumerate(self._exits):
+            if at.child[1] >= 0:
+                self._tight[e, *at.child] = sorted(set(at.position) - {FREE})
         return [(at.child, list(at.row), list(at.position)) for at in self._exits]
 
     def used(
