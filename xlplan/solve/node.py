@@ -116,8 +116,8 @@ class _Change:
 
 
 @dataclass
-class _Block:
-    """Points that are solved together, and what the model is brought to for each of them.
+class _Run:
+    """Points solved one after the other, and what the model is brought to for each of them.
 
     now, members : numbers of the members, together and one by one; bounds, costs, sides : of the
     model's columns and rows; fold_low, fold_high (k or 1, n_fold), lazy_low, lazy_high (k or 1,
@@ -278,42 +278,44 @@ class NodeModel:
 
         Where HiGHS finds no optimum its failure stands in the place of the outcome.
         """
-        outcomes: list[NodeOutcome | SolverFailureError] = []
-        while len(outcomes) < len(points):
-            begin = len(outcomes)
+        if self.bound.table is None and len(points) > 1:
+            return [one for point in points for one in self.solve_run([point])]
+        run, found = self._prepared(points), list[_Solved | SolverFailureError]()
+        while len(found) < len(points):
+            begin = len(found)
             capacity = points[begin].capacity
             if not np.array_equal(capacity, self._last_capacity):
-                # Other rows will be missed, and then each point had better see those of the one
+                # Other rows may be missed, and then each point had better see those of the one
                 # before.
-                self._n_block, self._last_capacity = 1, capacity
+                self._n_block, self._last_capacity = max(1, self._n_block // 4), capacity
             n_before = len(self._rows)
-            outcomes += self._solve_block(points[begin : begin + self._n_block])
+            found += self._solve_block(run, range(begin, min(begin + self._n_block, len(points))))
             n = 1 if len(self._rows) > n_before else 2 * self._n_block
             self._n_block = min(n, self._most_in_block)
-        return outcomes
+        return self._outcomes(run, found)
 
-    def _solve_block(self, points: Sequence[NodePoint]) -> list[NodeOutcome | SolverFailureError]:
-        """Points of one block: all once, then again those that broke rows left out."""
-        block = self._prepared(points)
-        found: list[_Solved | SolverFailureError] = []
-        for i in range(len(points)):
-            found.append(self._solved(block, i, with_lazy_rows=len(points) == 1))
-        if len(points) > 1:
-            solved = [i for i, one in enumerate(found) if isinstance(one, _Solved)]
-            self._complete(block, solved, [_result(found[i]) for i in solved])
-            missed = self._missed_rows(block, solved)
+    def _solve_block(self, run: _Run, places: range) -> list[_Solved | SolverFailureError]:
+        """Some points of a run: all once, then again those that broke rows left out."""
+        is_alone = len(places) == 1
+        found = [self._solved(run, i, with_lazy_rows=is_alone) for i in places]
+        if not is_alone:
+            solved = [i for i, one in zip(places, found, strict=True) if isinstance(one, _Solved)]
+            results = [one.result for one in found if isinstance(one, _Solved)]
+            if solved:
+                self._complete(run, solved, results)
+            missed = self._missed_rows(run, solved)
             for i, (rows, folds) in zip(solved, missed, strict=True):
                 if len(rows) or len(folds):
-                    found[i] = self._solved(block, i, with_lazy_rows=True)
-        return self._outcomes(block, found)
+                    found[i - places.start] = self._solved(run, i, with_lazy_rows=True)
+        return found
 
-    def _solved(self, block: _Block, i: int, with_lazy_rows: bool) -> _Solved | SolverFailureError:
-        """One point of the block, solved until no cut of the children is missed.
+    def _solved(self, run: _Run, i: int, with_lazy_rows: bool) -> _Solved | SolverFailureError:
+        """One point of the run, solved until no cut of the children is missed.
 
         with_lazy_rows : whether the lazy rows that are missed come in too, in the same rounds
         """
-        self._move(block, i)
-        numbers, tolerance = block.members[i], block.points[i].cut_tolerance
+        self._move(run, i)
+        numbers, tolerance = run.members[i], run.points[i].cut_tolerance
         try:
             result = self._model.run(wants_dual=False)
             for _ in range(MAX_ROUNDS):
@@ -321,31 +323,29 @@ class NodeModel:
                 if self.n_exit:  # first, for it may ask for multipliers, which new rows make void
                     n_new += self._children.add_violated(result.col_value, numbers, tolerance)
                 if with_lazy_rows:
-                    self._complete(block, [i], [result])
-                    n_new += self._append_program_rows(block, i, *self._missed_rows(block, [i])[0])
+                    self._complete(run, [i], [result])
+                    n_new += self._append_program_rows(run, i, *self._missed_rows(run, [i])[0])
                 if not n_new:
                     break
                 result = self._model.run(wants_dual=False)
             else:
                 self.counts["row rounds used up"] += 1
                 if with_lazy_rows:
-                    self._complete(block, [i], [result])
+                    self._complete(run, [i], [result])
             return _Solved(result, self._model.row_dual(), self._children.held())
         except SolverFailureError as failure:
             return failure
 
-    def _complete(
-        self, block: _Block, places: Sequence[int], results: Sequence[SolveResult]
-    ) -> None:
-        """Fills ``y`` of some points of the block from the model's columns."""
+    def _complete(self, run: _Run, places: Sequence[int], results: Sequence[SolveResult]) -> None:
+        """Fills ``y`` of some points of the run from the model's columns."""
         y = np.empty((len(results), self.n_col))
         primal = np.array([result.col_value for result in results])
         y[:, self._folding.kept] = primal[:, : self.n_kept]
         if self._theta_columns is not None:
             y[:, self._theta_columns] = primal[:, self.n_kept :]
         if len(self._folding):
-            self._folding.complete(y, _of(block.now.fold_side, places))
-        block.y[places] = y
+            self._folding.complete(y, _of(run.now.fold_side, places))
+        run.y[places] = y
 
     def _now(self, members: Sequence[int]) -> Now:
         """Numbers of some members."""
@@ -358,7 +358,7 @@ class NodeModel:
             numbers = Numbers(*(np.asarray(v)[None] for v in vars(own).values()))
         return Now.of(numbers, self._fold_rows)
 
-    def _prepared(self, points: Sequence[NodePoint]) -> _Block:
+    def _prepared(self, points: Sequence[NodePoint]) -> _Run:
         """What the model is brought to for each point."""
         now, n = self._now([point.member for point in points]), len(points)
         numbers = now.numbers
@@ -389,7 +389,7 @@ class NodeModel:
         bounds = _Change.between(self._moving, (self._lower, self._upper), (lower, upper))
         costs = _Change.between(self._costing, (self._cost,), (cost,))
         members = [numbers.part(i) for i in range(n)]
-        return _Block(
+        return _Run(
             points, now, members, bounds, costs, self._side_change(now), *self._limits,
             np.zeros((n, self.n_col)),
         )  # fmt: skip
@@ -399,22 +399,22 @@ class NodeModel:
         rows = self._rows
         return _Change.between(rows.place[rows.varying], (rows.low, rows.high), rows.sides(now))
 
-    def _move(self, block: _Block, i: int) -> None:
-        """Brings the kept model to a point of the block."""
-        point, model, children, rows = block.points[i], self._model, self._children, self._rows
-        low, high = block.bounds.values
-        model.set_col_bounds(block.bounds.places, low[i], high[i])
-        model.set_costs(block.costs.places, block.costs.values[0][i])
-        low, high = block.sides.values
-        model.set_row_bounds(block.sides.places, low[i], high[i])
-        self._lower, self._upper = (whole[i] for whole in block.bounds.whole)
-        self._cost = block.costs.whole[0][i]
-        rows.low, rows.high = (whole[i] for whole in block.sides.whole)
+    def _move(self, run: _Run, i: int) -> None:
+        """Brings the kept model to a point of the run."""
+        point, model, children, rows = run.points[i], self._model, self._children, self._rows
+        low, high = run.bounds.values
+        model.set_col_bounds(run.bounds.places, low[i], high[i])
+        model.set_costs(run.costs.places, run.costs.values[0][i])
+        low, high = run.sides.values
+        model.set_row_bounds(run.sides.places, low[i], high[i])
+        self._lower, self._upper = (whole[i] for whole in run.bounds.whole)
+        self._cost = run.costs.whole[0][i]
+        rows.low, rows.high = (whole[i] for whole in run.sides.whole)
         is_other = children.set_capacity(point.capacity)
         if is_other or point.member != self._member_index:
             self._member_index = point.member
-            self._patch(block.members[i].patch_value)
-            children.set_member(block.members[i])
+            self._patch(run.members[i].patch_value)
+            children.set_member(run.members[i])
 
     def _patch(self, value: FloatArray) -> None:
         """Matrix entries that differ between members."""
@@ -436,17 +436,17 @@ class NodeModel:
         if self._is_lazy_patched:
             self._lazy.refresh()
 
-    def _missed_rows(self, block: _Block, places: Sequence[int]) -> list[tuple[IntArray, IntArray]]:
-        """Lazy rows, and folds whose bounds, that points of the block violate, not in the model."""
-        y, none = block.y[places], np.zeros(0, dtype=np.int64)
+    def _missed_rows(self, run: _Run, places: Sequence[int]) -> list[tuple[IntArray, IntArray]]:
+        """Lazy rows, and folds whose bounds, that points of the run violate, not in the model."""
+        y, none = run.y[places], np.zeros(0, dtype=np.int64)
         rows = folds = [none] * len(places)
         if len(self._lazy):
             place = self._rows.of_program[self._lazy.row]
-            low, high = _of(block.lazy_low, places), _of(block.lazy_high, places)
+            low, high = _of(run.lazy_low, places), _of(run.lazy_high, places)
             worst = self._worst(self._lazy.activity(y), low, high, place)
             rows = [self._lazy.row[at] for at in worst]
         if len(self._folding):
-            low, high = _of(block.fold_low, places), _of(block.fold_high, places)
+            low, high = _of(run.fold_low, places), _of(run.fold_high, places)
             values = y.take(self._folding.column, axis=1)
             folds = self._worst(values, low, high, self._rows.of_bound)
         return list(zip(rows, folds, strict=True))
@@ -478,8 +478,8 @@ class NodeModel:
             chosen.append(found)
         return chosen
 
-    def _append_program_rows(self, block: _Block, i: int, rows: IntArray, folds: IntArray) -> int:
-        """Adds program rows and bounds of folded columns at a point of the block; their number."""
+    def _append_program_rows(self, run: _Run, i: int, rows: IntArray, folds: IntArray) -> int:
+        """Adds program rows and bounds of folded columns at a point of the run; their number."""
         parts = []
         if len(rows):
             none = np.full(len(rows), -1)
@@ -489,11 +489,11 @@ class NodeModel:
             parts.append((none, folds, self._folding.expand_columns(folds)))
         for program, bounded, expanded in parts:
             places = self._model.n_row + np.arange(len(program))
-            low, high = self._rows.append(program, bounded, places, expanded, block.now.one(i))
+            low, high = self._rows.append(program, bounded, places, expanded, run.now.one(i))
             columns = self._column_place[expanded.index]
             self._model.add_rows(low, high, expanded.start, columns, expanded.value)
-        if parts and len(block.points) > 1:
-            block.sides = self._side_change(block.now)
+        if parts and len(run.points) > 1:
+            run.sides = self._side_change(run.now)
         n = len(rows) + len(folds)
         self.counts["lazy row"] += n
         return n
@@ -501,7 +501,7 @@ class NodeModel:
     # -- what comes out ------------------------------------------------------------------------
 
     def _outcomes(
-        self, block: _Block, found: Sequence[_Solved | SolverFailureError]
+        self, run: _Run, found: Sequence[_Solved | SolverFailureError]
     ) -> list[NodeOutcome | SolverFailureError]:
         """Outcomes of a block, from what the solver said."""
         places = [i for i, one in enumerate(found) if isinstance(one, _Solved)]
@@ -516,7 +516,7 @@ class NodeModel:
         for i, one in enumerate(solved):
             dual[i, : len(one.row_dual)] = one.row_dual
         pi = self._rows.multipliers(dual)
-        numbers, y = block.now.numbers, block.y
+        numbers, y = run.now.numbers, run.y
         if len(places) < len(found):
             numbers, y = numbers.part(np.array(places)), y[places]
         cost = y @ self._same_cost + np.einsum(
@@ -527,9 +527,9 @@ class NodeModel:
         value = (objective + numbers.offset) / numbers.scale
         n_exit, n_state, box = self.n_exit, self.table.n_state, self.table.box
         states = y[:, self.family.out_columns.ravel()].reshape(len(places), n_exit, n_state)
-        capacity = np.array([block.points[i].capacity for i in places])
+        capacity = np.array([run.points[i].capacity for i in places])
         exits = self._children.used(
-            dual, [one.held for one in solved], [block.members[i] for i in places]
+            dual, [one.held for one in solved], [run.members[i] for i in places]
         )
         low = (capacity @ box.state_lower_matrix.T)[:, None, :]
         high = np.maximum((capacity @ box.state_upper_matrix.T)[:, None, :], low)
@@ -712,8 +712,3 @@ def _with_tolerance(low: FloatArray, high: FloatArray) -> tuple[FloatArray, Floa
 def _of(sides: FloatArray, places: Sequence[int]) -> FloatArray:
     """Rows of some points, or the one row that serves all."""
     return sides[places] if len(sides) > 1 else sides
-
-
-def _result(found: _Solved | SolverFailureError) -> SolveResult:
-    assert isinstance(found, _Solved)
-    return found.result
