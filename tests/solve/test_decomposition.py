@@ -147,3 +147,30 @@ def test_one_worker_and_two_give_the_same_digits(do_models_rest):
     assert node_one.value == node_two.value
     assert node_one.measured == node_two.measured
     assert node_one.measured[:2] == ("stage 1", 0)
+
+
+def test_second_cost_chooses_among_optimal_points():
+    # With free storage and nothing to serve, any stored energy is optimal; the second cost decides.
+    graph = random_tree_graph(1)
+    with Engine(graph, seed=1) as engine:
+        result = engine.run(1e-7)
+        last = len(graph.families) - 1
+        family = graph.families[last]
+        after = family.program.col_names.index("after 0")
+        values, stored = [], []
+        for sign in (1.0, -1.0):
+            second = np.zeros(family.program.n_col)
+            second[after] = sign
+            request = NodeRequest(
+                last,
+                0,
+                np.array([5.0, 3.0]),
+                result.capacities[0],
+                second_cost=second,
+                wants_primal=True,
+            )
+            solution = engine.solve_nodes([request])[0]
+            values.append(solution.cost)
+            stored.append(solution.y[after])
+    assert values[0] == pytest.approx(values[1], abs=1e-6)
+    assert stored[0] <= stored[1] + 1e-9

@@ -254,7 +254,8 @@ class CutPool:
             slope = self._state_slope.take(self._order, axis=0)
         else:
             start, slope = known.start, known.state_slope
-        self._sorted_capacity = capacity.copy()
+        # Kept as it is, so that the same array is known at a glance; nobody changes it in place.
+        self._sorted_capacity = capacity
         self._sorted = SortedCuts(self._order, start, slope, self.level(capacity)[self._order])
         return self._sorted
 

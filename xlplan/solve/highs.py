@@ -33,6 +33,9 @@ FEASIBILITY_TOLERANCE = 1e-7
 
 _OK, _OPTIMAL = highspy.HighsStatus.kOk, highspy.HighsModelStatus.kOptimal
 
+FACE_TOLERANCE = 1e-7
+"""Reduced cost, relative to the largest cost, that keeps a column at its bound on the face."""
+
 _ROWWISE = int(highspy.MatrixFormat.kRowwise)
 _MINIMISE = int(highspy.ObjSense.kMinimize)
 
@@ -264,6 +267,43 @@ class KeptModel:
         if not solution.dual_valid:
             raise SolverFailureError(self.name, "optimal without multipliers", self.save())
         return _vector(solution.row_dual)
+
+    def second_point(self, dual: FloatArray, cost: FloatArray) -> FloatArray:
+        """Point that is best by another cost among the optimal ones of the last run.
+
+        Columns with a reduced cost and rows with a multiplier stay at their sides: that is the
+        optimal face. Only bounds and costs change, so the model is as before afterwards, but for
+        its basis.
+
+        Parameters
+        ----------
+        dual : array, shape (n_row,), of the last run
+        cost : array, shape (n_col,)
+        """
+        solution, program = self._highs.getSolution(), self._highs.getLp()
+        own, lower, upper, row_lower, row_upper = (
+            _vector(values)
+            for values in (
+                program.col_cost_, program.col_lower_, program.col_upper_,
+                program.row_lower_, program.row_upper_,
+            )
+        )  # fmt: skip
+        size = max(1.0, float(np.abs(own).max(initial=0.0))) * FACE_TOLERANCE
+        value = np.clip(_vector(solution.col_value), lower, upper)
+        columns = np.flatnonzero(np.abs(_vector(solution.col_dual)) > size)
+        rows = np.flatnonzero(np.abs(dual) > size)
+        side = np.where(dual[rows] > 0.0, row_lower[rows], row_upper[rows])
+        rows, side = rows[np.isfinite(side)], side[np.isfinite(side)]
+        everything = np.arange(len(own))
+        self.set_col_bounds(columns, value[columns], value[columns])
+        self.set_row_bounds(rows, side, side)
+        self.set_costs(everything, cost)
+        again = self.run(wants_dual=False)
+        self.set_costs(everything, own)
+        self.set_row_bounds(rows, row_lower[rows], row_upper[rows])
+        self.set_col_bounds(columns, lower[columns], upper[columns])
+        self.counts["second objective"] += 1
+        return again.col_value
 
     def save(self) -> Path | None:
         """Writes the model to a file of the temporary folder; None where that fails."""

@@ -62,13 +62,15 @@ class NodePoint:
     """A member, and where its value is asked for.
 
     state (n_state,), capacity (n_capacity,); cut_tolerance : by how much the value may be too low
-    because small violations of the children's cuts are left
+    because small violations of the children's cuts are left; second_cost (n_col,), minimised among
+    the optimal points, or None: any of them
     """
 
     member: int
     state: FloatArray
     capacity: FloatArray
     cut_tolerance: float = 0.0
+    second_cost: FloatArray | None = None
 
 
 @dataclass(frozen=True)
@@ -121,8 +123,8 @@ class _Run:
 
     now, members : numbers of the members, together and one by one; bounds, costs, sides : of the
     model's columns and rows; fold_low, fold_high (k or 1, n_fold), lazy_low, lazy_high (k or 1,
-    n_lazy): sides beyond which a row is added; y (k, n_col): the points found, in the program's
-    columns
+    n_lazy): sides beyond which a row is added; primal (k, n_model_col), y (k, n_col): the points
+    found, in the columns of the model and of the program
     """
 
     points: Sequence[NodePoint]
@@ -135,6 +137,7 @@ class _Run:
     fold_high: FloatArray
     lazy_low: FloatArray
     lazy_high: FloatArray
+    primal: FloatArray
     y: FloatArray
 
 
@@ -142,7 +145,8 @@ class _Run:
 class _Solved:
     """What the solver says about one point, and which cuts of the children were in the model."""
 
-    result: SolveResult
+    value: float
+    theta: FloatArray
     row_dual: FloatArray
     held: Held
 
@@ -288,8 +292,10 @@ class NodeModel:
                 # Other rows may be missed, and then each point had better see those of the one
                 # before.
                 self._n_block, self._last_capacity = max(1, self._n_block // 4), capacity
-            n_before = len(self._rows)
-            found += self._solve_block(run, range(begin, min(begin + self._n_block, len(points))))
+            n_before, end = len(self._rows), min(begin + self._n_block, len(points))
+            if any(point.second_cost is not None for point in points[begin:end]):
+                end = begin + 1
+            found += self._solve_block(run, range(begin, end))
             n = 1 if len(self._rows) > n_before else 2 * self._n_block
             self._n_block = min(n, self._most_in_block)
         return self._outcomes(run, found)
@@ -300,9 +306,7 @@ class NodeModel:
         found = [self._solved(run, i, with_lazy_rows=is_alone) for i in places]
         if not is_alone:
             solved = [i for i, one in zip(places, found, strict=True) if isinstance(one, _Solved)]
-            results = [one.result for one in found if isinstance(one, _Solved)]
-            if solved:
-                self._complete(run, solved, results)
+            self._complete(run, solved)
             missed = self._missed_rows(run, solved)
             for i, (rows, folds) in zip(solved, missed, strict=True):
                 if len(rows) or len(folds):
@@ -322,24 +326,49 @@ class NodeModel:
                 n_new = 0
                 if self.n_exit:  # first, for it may ask for multipliers, which new rows make void
                     n_new += self._children.add_violated(result.col_value, numbers, tolerance)
+                run.primal[i] = result.col_value
                 if with_lazy_rows:
-                    self._complete(run, [i], [result])
+                    self._complete(run, [i])
                     n_new += self._append_program_rows(run, i, *self._missed_rows(run, [i])[0])
                 if not n_new:
                     break
                 result = self._model.run(wants_dual=False)
             else:
                 self.counts["row rounds used up"] += 1
-                if with_lazy_rows:
-                    self._complete(run, [i], [result])
-            return _Solved(result, self._model.row_dual(), self._children.held())
+                run.primal[i] = result.col_value
+                self._complete(run, [i])
+            dual = self._model.row_dual()
+            if run.points[i].second_cost is not None:
+                result, dual = self._seconded(run, i, result, dual)
+            theta = result.col_value[self.n_kept :]
+            return _Solved(result.objective, theta, dual, self._children.held())
         except SolverFailureError as failure:
             return failure
 
-    def _complete(self, run: _Run, places: Sequence[int], results: Sequence[SolveResult]) -> None:
+    def _seconded(
+        self, run: _Run, i: int, result: SolveResult, dual: FloatArray
+    ) -> tuple[SolveResult, FloatArray]:
+        """Moves a point to the one that is best by its second cost; result and duals of the first.
+
+        The second point may break rows that the first one did not need.
+        """
+        second_cost = run.points[i].second_cost
+        assert second_cost is not None
+        if second_cost[self._folding.column].any():
+            raise ValueError("a folded column has a second cost")
+        cost = np.concatenate([second_cost[self._folding.kept], np.zeros(self.n_exit)])
+        for _ in range(MAX_ROUNDS):
+            run.primal[i] = self._model.second_point(dual, cost)
+            self._complete(run, [i])
+            if not self._append_program_rows(run, i, *self._missed_rows(run, [i])[0]):
+                break
+            result = self._model.run()
+            dual = result.row_dual
+        return result, dual
+
+    def _complete(self, run: _Run, places: Sequence[int]) -> None:
         """Fills ``y`` of some points of the run from the model's columns."""
-        y = np.empty((len(results), self.n_col))
-        primal = np.array([result.col_value for result in results])
+        primal, y = run.primal[places], np.empty((len(places), self.n_col))
         y[:, self._folding.kept] = primal[:, : self.n_kept]
         if self._theta_columns is not None:
             y[:, self._theta_columns] = primal[:, self.n_kept :]
@@ -391,7 +420,7 @@ class NodeModel:
         members = [numbers.part(i) for i in range(n)]
         return _Run(
             points, now, members, bounds, costs, self._side_change(now), *self._limits,
-            np.zeros((n, self.n_col)),
+            np.zeros((n, self.n_kept + self.n_exit)), np.zeros((n, self.n_col)),
         )  # fmt: skip
 
     def _side_change(self, now: Now) -> _Change:
@@ -523,7 +552,7 @@ class NodeModel:
             "ij,ij->i", y.take(self._differing, axis=1), numbers.cost
         )
         cost = (cost + numbers.offset) / numbers.scale
-        objective = np.array([one.result.objective for one in solved])
+        objective = np.array([one.value for one in solved])
         value = (objective + numbers.offset) / numbers.scale
         n_exit, n_state, box = self.n_exit, self.table.n_state, self.table.box
         states = y[:, self.family.out_columns.ravel()].reshape(len(places), n_exit, n_state)
@@ -539,7 +568,7 @@ class NodeModel:
                 value=float(value[i]),
                 cost=float(cost[i]),
                 y=y[i],
-                theta=one.result.col_value[self.n_kept :],
+                theta=one.theta,
                 out_states=states[i],
                 pi=pi[i],
                 exits=exits[i][0],

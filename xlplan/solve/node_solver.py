@@ -55,6 +55,7 @@ class NodeRequest:
     """One node to be solved.
 
     state : (n_state,), clipped into its domain before use; capacity : (n_capacity,)
+    second_cost : (n_col,), minimised among the optimal points, or None
     replica : which of the family's kept models to use; each has its own history
     group : number of the cuts made, -1 for no cuts
     share : other members for which the same multipliers are tried, or None
@@ -67,6 +68,7 @@ class NodeRequest:
     member: int
     state: FloatArray
     capacity: FloatArray
+    second_cost: FloatArray | None = None
     replica: int = 0
     group: int = -1
     share: Share | None = None
@@ -159,7 +161,7 @@ class NodeSolver:
             table, np.array([r.state for r in requests]), np.array([r.capacity for r in requests])
         )
         points = [
-            NodePoint(r.member, state, r.capacity, r.cut_tolerance)
+            NodePoint(r.member, state, r.capacity, r.cut_tolerance, r.second_cost)
             for r, state in zip(requests, states, strict=True)
         ]
         for request, state, outcome in zip(requests, states, model.solve_run(points), strict=True):
