@@ -50,6 +50,10 @@ FEW_ROWS = 40
 MOST_IN_BLOCK = 16
 """So many points are solved before the lazy rows that they break are looked for."""
 
+BLOCK_SIZE = 50_000
+"""Points of a block times lazy rows: in large programs calls of NumPy cost little beside the work,
+and solving a point again for its rows costs much."""
+
 MOST_PAIRS = 1024
 """So many cuts of other members are made in one pass over arrays."""
 
@@ -219,8 +223,9 @@ class NodeModel:
         self._member_index = -1
         self._n_block, self._last_capacity = 1, np.zeros(0)
         is_lazy_patched = bool(program.is_lazy[bound.patch_row].any())
-        # Members without a table are large; patched lazy rows are those of one member at a time.
-        self._most_in_block = 1 if bound.table is None or is_lazy_patched else MOST_IN_BLOCK
+        most = min(MOST_IN_BLOCK, BLOCK_SIZE // max(len(self._lazy), 1))
+        # Patched lazy rows are those of one member at a time.
+        self._most_in_block = 1 if bound.table is None or is_lazy_patched else max(most, 1)
         self._is_lazy_patched = is_lazy_patched
 
     def _find_moving(self, in_columns: IntArray) -> None:
@@ -298,6 +303,10 @@ class NodeModel:
             found += self._solve_block(run, range(begin, end))
             n = 1 if len(self._rows) > n_before else 2 * self._n_block
             self._n_block = min(n, self._most_in_block)
+        # What stands in the model would keep the arrays of the whole run.
+        rows = self._rows
+        self._lower, self._upper = self._lower.copy(), self._upper.copy()
+        self._cost, rows.low, rows.high = self._cost.copy(), rows.low.copy(), rows.high.copy()
         return self._outcomes(run, found)
 
     def _solve_block(self, run: _Run, places: range) -> list[_Solved | SolverFailureError]:
@@ -340,7 +349,7 @@ class NodeModel:
             dual = self._model.row_dual()
             if run.points[i].second_cost is not None:
                 result, dual = self._seconded(run, i, result, dual)
-            theta = result.col_value[self.n_kept :]
+            theta = result.col_value[self.n_kept :].copy()
             return _Solved(result.objective, theta, dual, self._children.held())
         except SolverFailureError as failure:
             return failure
@@ -410,16 +419,19 @@ class NodeModel:
         cost[:, self._n_costing :] = numbers.exit_weight
         if self._theta_columns is not None:
             cost[:, self._n_costing :] += self._theta_costs.read(numbers.cost)[0]
-        if self._limits is None or self._do_limits_vary:
-            self._limits = (
+        limits = self._limits
+        if limits is None:
+            limits = (
                 *_with_tolerance(*now.fold_bounds(self._fold_bounds)),
                 *_with_tolerance(*self._lazy_sides.read(numbers.row_lower, numbers.row_upper)),
             )
+            if not self._do_limits_vary:
+                self._limits = limits
         bounds = _Change.between(self._moving, (self._lower, self._upper), (lower, upper))
         costs = _Change.between(self._costing, (self._cost,), (cost,))
         members = [numbers.part(i) for i in range(n)]
         return _Run(
-            points, now, members, bounds, costs, self._side_change(now), *self._limits,
+            points, now, members, bounds, costs, self._side_change(now), *limits,
             np.zeros((n, self.n_kept + self.n_exit)), np.zeros((n, self.n_col)),
         )  # fmt: skip
 
