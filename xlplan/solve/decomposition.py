@@ -65,6 +65,9 @@ CACHE_SHARE = 0.2
 POOR_AGREEMENT = 0.1
 """First stage and roots this far apart have hardly met yet."""
 
+LEAST_OPEN_SHARE = 0.5
+"""Share of the target below which a gap seen in a part of the events is not believed."""
+
 LEAST_TURNS = 10
 """Turns of first stage and roots that a stopped run still makes while they are that far apart."""
 
@@ -452,7 +455,7 @@ class _Run:
         size = max(abs(first.bound), 1e-9)
         if is_first or not np.isfinite(self.gap_abs):
             return self.options.first_gap_frac * size
-        return max(INNER_SHARE * self.gap_abs, 0.1 * self.target * size)
+        return max(INNER_SHARE * self._open_gap(), 0.1 * self.target * size)
 
     def _decide(self) -> FirstStagePlan:
         """The first stage as this phase asks for it."""
@@ -513,7 +516,7 @@ class _Run:
 
     def _root_tolerance(self, first: FirstStagePlan) -> float:
         """By how much the roots together may be too low, weighted."""
-        gap = self.gap_abs
+        gap = self._open_gap()
         if not np.isfinite(gap):
             gap = self.options.first_gap_frac * max(abs(first.bound), 1e-9)
         if self.is_enumerating:
@@ -540,6 +543,15 @@ class _Run:
         return self._open_seen <= 0.7 * self.target * max(abs(self.lower_bound), 1e-12)
 
     _open_seen = float("inf")
+
+    def _open_gap(self) -> float:
+        """Gap that tolerances go by: the measured one, or what the last pass saw if that is less.
+
+        The gap is measured in full passes only; tolerances of a gap long closed would keep the
+        bound from rising in the passes between.
+        """
+        least = LEAST_OPEN_SHARE * self.target * max(abs(self.lower_bound), 1e-12)
+        return min(self.gap_abs, max(self._open_seen, least))
 
     def _request_maker(self, points: list[RootPoint]) -> RequestMaker:
         """Makes requests for what follows these plans: with cuts, as close as the gap asks for."""
@@ -632,7 +644,7 @@ class _Run:
     def _event_tolerance(self, points: list[RootPoint]) -> float:
         """By how much an event's value may be too low."""
         total = sum(self.graph.roots[p.i_root].weight * float(p.exits.weight.sum()) for p in points)
-        gap = self.gap_abs
+        gap = self._open_gap()
         if self.is_enumerating or total <= 0.0:
             return 0.0
         if not np.isfinite(gap):
