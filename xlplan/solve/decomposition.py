@@ -540,7 +540,7 @@ class _Run:
 
     def _seems_reached(self) -> bool:
         """Whether the last partial pass found little that the cuts did not know."""
-        return self._open_seen <= 0.7 * self.target * max(abs(self.lower_bound), 1e-12)
+        return self._open_seen <= self.target * max(abs(self.lower_bound), 1e-12)
 
     _open_seen = float("inf")
 
