@@ -50,9 +50,12 @@ FEW_ROWS = 40
 MOST_IN_BLOCK = 16
 """So many points are solved before the lazy rows that they break are looked for."""
 
-BLOCK_SIZE = 50_000
-"""Points of a block times lazy rows: in large programs calls of NumPy cost little beside the work,
-and solving a point again for its rows costs much."""
+MANY_LAZY_ROWS = 10_000
+"""Programs with more lazy rows are solved point by point: calls of NumPy cost little beside the
+work there, and solving a point again for its rows costs much."""
+
+MOST_PREPARED, FEW_PREPARED = 64, 8
+"""So many points are prepared together, the few in such programs, for the sake of memory."""
 
 MOST_PAIRS = 1024
 """So many cuts of other members are made in one pass over arrays."""
@@ -223,9 +226,12 @@ class NodeModel:
         self._member_index = -1
         self._n_block, self._last_capacity = 1, np.zeros(0)
         is_lazy_patched = bool(program.is_lazy[bound.patch_row].any())
-        most = min(MOST_IN_BLOCK, BLOCK_SIZE // max(len(self._lazy), 1))
+        is_large = len(self._lazy) > MANY_LAZY_ROWS
         # Patched lazy rows are those of one member at a time.
-        self._most_in_block = 1 if bound.table is None or is_lazy_patched else max(most, 1)
+        self._most_in_block = 1 if is_large or is_lazy_patched else MOST_IN_BLOCK
+        self._most_prepared = FEW_PREPARED if is_large else MOST_PREPARED
+        if bound.table is None:
+            self._most_in_block = self._most_prepared = 1
         self._is_lazy_patched = is_lazy_patched
 
     def _find_moving(self, in_columns: IntArray) -> None:
@@ -287,8 +293,10 @@ class NodeModel:
 
         Where HiGHS finds no optimum its failure stands in the place of the outcome.
         """
-        if self.bound.table is None and len(points) > 1:
-            return [one for point in points for one in self.solve_run([point])]
+        most = self._most_prepared
+        if len(points) > most:
+            parts = (points[i : i + most] for i in range(0, len(points), most))
+            return [one for part in parts for one in self.solve_run(part)]
         run, found = self._prepared(points), list[_Solved | SolverFailureError]()
         while len(found) < len(points):
             begin = len(found)
