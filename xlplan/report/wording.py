@@ -175,10 +175,10 @@ def outage_planning(result: StudyResult) -> str:
             "Planning for outages is worth nothing here that can be told from 0: the plan that "
             f"ignores them costs {_change(value, currency)} ({words})."
         )
-    if 0.0 <= value <= left_open:
+    if abs(value) <= left_open:
         return (
             "Planning for outages is worth nothing here: the plan that ignores them costs "
-            f"{money_words(value, currency)} a year more, and the search leaves "
+            f"{_change(value, currency)}, and the search leaves "
             f"{money_words(left_open, currency)} open."
         )
     return (
