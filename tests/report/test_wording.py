@@ -124,3 +124,24 @@ def test_basis_and_consequence(result: StudyResult) -> None:
     assert "The utility itself pays 49,457 crowns a year more" in text
     assert "outages cost customers 233,360 crowns a year less" in text
     assert EXISTING in [plan.name for plan in result.plans]
+
+
+@pytest.mark.parametrize(("sign", "word"), [(1.0, "more"), (-1.0, "less")])
+def test_outage_planning_within_what_the_search_leaves_open(
+    result: StudyResult, sign: float, word: str
+) -> None:
+    """Either plan may come out a little dearer: neither way is it a value."""
+    best = result.plan(LEAST_COST)
+    assert best.gap_frac
+    value = sign * 0.5 * best.gap_frac * best.costs.total
+    near = dataclasses.replace(
+        result,
+        value_of_outage_planning=value,
+        value_of_outage_planning_interval=(0.9 * value, 1.1 * value),
+    )
+    text = wording.outage_planning(near)
+    assert "worth nothing here" in text
+    assert f"a year {word}," in text
+    assert "-" not in text.replace("least-cost", "")
+    far = dataclasses.replace(near, value_of_outage_planning=4.0 * value)
+    assert "worth nothing" not in wording.outage_planning(far)

@@ -75,7 +75,7 @@ def joined(batches: list[CutBatch]) -> CutBatch:
 
 @dataclass(frozen=True)
 class SortedCuts:
-    """Cuts of a family sorted by member, the oldest of a member first.
+    """Cuts of a family, all or some, sorted by member, the oldest of a member first.
 
     order (n,) positions in the pool; start (n_member + 1,) where each member's cuts begin;
     state_slope (n, n_state), level (n,) value without the state's part, both in that order
@@ -85,20 +85,6 @@ class SortedCuts:
     start: IntArray
     state_slope: FloatArray
     level: FloatArray
-
-
-@dataclass(frozen=True)
-class HighCuts:
-    """Cuts that may be the highest of their member, by member, the oldest of a member first.
-
-    order (n,) positions in the pool; start (n_member + 1,) where each member's cuts begin;
-    level (n,) value without the state's part; state_slope (n, n_state)
-    """
-
-    order: IntArray
-    start: IntArray
-    level: FloatArray
-    state_slope: FloatArray
 
 
 class CutPool:
@@ -122,7 +108,7 @@ class CutPool:
         self._sorted_key = np.zeros(0, dtype=np.int64)
         self._sorted: SortedCuts | None = None
         self._sorted_capacity: FloatArray | None = None
-        self._high: HighCuts | None = None
+        self._high: SortedCuts | None = None
         self._high_at, self._n_high = np.zeros(0), 0
 
     @property
@@ -149,10 +135,6 @@ class CutPool:
     def capacity_slope(self) -> FloatArray:
         """(n, n_capacity)"""
         return self._capacity_slope[: self.n]
-
-    def group_at(self, position: int) -> int:
-        """Group of one cut."""
-        return int(self._key[position]) & ((1 << GROUP_BITS) - 1)
 
     def groups_at(self, positions: IntArray) -> IntArray:
         """Groups of some cuts."""
@@ -259,7 +241,7 @@ class CutPool:
         self._sorted = SortedCuts(self._order, start, slope, self.level(capacity)[self._order])
         return self._sorted
 
-    def high_cuts(self, capacity: FloatArray, low: FloatArray, high: FloatArray) -> HighCuts:
+    def high_cuts(self, capacity: FloatArray, low: FloatArray, high: FloatArray) -> SortedCuts:
         """Cuts that may be their member's highest at some state from low to high, (n_state,) each.
 
         Left out is every cut that the member's highest one in the middle of the box exceeds in all
@@ -294,7 +276,7 @@ class CutPool:
         kept = np.flatnonzero(short[near] <= np.abs(apart) @ half)
         order, key = order[near[kept]], key[near[kept]]
         start = np.searchsorted(key, bounds)
-        self._high = HighCuts(order, start, level[order], slope.take(kept, axis=0))
+        self._high = SortedCuts(order, start, slope.take(kept, axis=0), level[order])
         self._high_at, self._n_high = at, self.n
         return self._high
 

@@ -26,7 +26,7 @@ from xlplan.model.value_graph import Family, Member
 from xlplan.solve.cut_pool import CutBatch
 from xlplan.solve.member_cache import MemberCache
 from xlplan.solve.member_table import FEW_EXITS, MemberTable
-from xlplan.solve.row_matrix import RowMatrix
+from xlplan.solve.row_matrix import RowMatrix, sums, sums_at, sums_by
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.integer]
@@ -215,24 +215,24 @@ class DualBound:
         col_term[self._capacity_columns] = 0.0
         # Rows that count in member 0 alone are in the slot of that member, which is ``first``.
         row_slot = _slots(nest.row_last[parts.rows], n)
-        by_slot = _sums(table.column_slot, col_term, n + 1)
-        by_slot += _sums(row_slot, parts.row_term, n + 1)
-        by_slot += _sums(table.exit_slot, parts.cut_term + parts.theta_term, n + 1)
+        by_slot = sums(table.column_slot, col_term, n + 1)
+        by_slot += sums(row_slot, parts.row_term, n + 1)
+        by_slot += sums(table.exit_slot, parts.cut_term + parts.theta_term, n + 1)
         intercept = table.offset + _left(by_slot)
         n_capacity, n_held = len(self.capacity_lower), len(self._capacity_columns)
-        capacity_by_slot = _sums_at(
+        capacity_by_slot = sums_at(
             table.exit_slot[parts.cut_exit],
             np.arange(n_capacity),
             parts.capacity_term,
             (n + 1, n_capacity),
         )
         entry = table.capacity_value * full[table.capacity_row]
-        by_row = _sums(table.capacity_place, entry, n_held * (n + 1))
+        by_row = sums(table.capacity_place, entry, n_held * (n + 1))
         capacity_by_slot[:, self._has_column] -= by_row.reshape(n_held, n + 1).T
         capacity_slope = _left(capacity_by_slot)
         n_state = table.state_lower.shape[1]
         entry = table.entry_value * full[table.entry_row]
-        state_slope = -_sums(table.entry_place, entry, n * n_state).reshape(n, n_state)
+        state_slope = -sums(table.entry_place, entry, n * n_state).reshape(n, n_state)
         intercept[i_member] = first.intercept
         state_slope[i_member] = first.state_slope
         capacity_slope[i_member] = first.capacity_slope
@@ -280,7 +280,7 @@ class DualBound:
         # Children's cuts: scaled down where they weigh more than the exit does.
         weight = table.exits(members)[0]
         n_exit = weight.shape[1]
-        total = _sums(children.pair * n_exit + children.exit, children.pi, n_pair * n_exit)
+        total = sums(children.pair * n_exit + children.exit, children.pi, n_pair * n_exit)
         factor, rest = _exit_factors(weight, total.reshape(n_pair, n_exit))
         exit_term = rest * self.theta_lower
         share = factor[children.pair, children.exit] * children.pi
@@ -292,11 +292,11 @@ class DualBound:
             step = pi[:, self.patch_row][solve] * (table.patch_values(members) - self.patch_base)
             used = np.flatnonzero(step.any(axis=0))
             places = table.moving_place[self.patch_column[used]]
-            moving -= _sums_at(np.arange(n_pair), places, step[:, used], moving.shape)
+            moving -= sums_at(np.arange(n_pair), places, step[:, used], moving.shape)
         if len(share):
             places = table.moving_place[self.family.out_columns[children.exit]]
             slope = share[:, None] * children.state_slope
-            moving += _sums_at(children.pair, places, slope, moving.shape)
+            moving += sums_at(children.pair, places, slope, moving.shape)
         moving_term = _col_terms(moving, lower, upper) * table.moving_inside
         offset, scale = table.totals(members)
         intercept = (
@@ -304,7 +304,7 @@ class DualBound:
             + same[solve, 0]
             + vary
             + moving_term.sum(axis=1)
-            + _sums(children.pair, child_term, n_pair)
+            + sums(children.pair, child_term, n_pair)
             + exit_term.sum(axis=1)
         )
         size = (
@@ -312,7 +312,7 @@ class DualBound:
             + same[solve, 1]
             + vary_size
             + np.abs(moving_term).sum(axis=1)
-            + _sums(children.pair, np.abs(child_term), n_pair)
+            + sums(children.pair, np.abs(child_term), n_pair)
             + np.abs(exit_term).sum(axis=1)
         )
 
@@ -327,7 +327,7 @@ class DualBound:
         if len(share):
             slope = share[:, None] * children.capacity_slope
             places = np.arange(slope.shape[1])
-            capacity_slope += _sums_at(children.pair, places, slope, capacity_slope.shape)
+            capacity_slope += sums_at(children.pair, places, slope, capacity_slope.shape)
         capacity_slope[:, self._has_column] += by_pair(self._capacity_columns)
         cuts = self._assembled(
             members,
@@ -351,7 +351,7 @@ class DualBound:
         ``pi`` with 0 where the side that it needs is infinite in all members; sums and sums of
         absolute terms, (n_solve, 2); ``cost - A' pi``, (n_solve, n_col), of member 0
         """
-        n_solve, n_col = len(pi), len(table.first.cost)
+        n_col = len(table.first.cost)
         # Solves of one run have most of their multipliers in the same rows.
         rows = np.flatnonzero((pi != 0.0).any(axis=0))
         asked = pi.take(rows, axis=1)
@@ -364,10 +364,9 @@ class DualBound:
         counts = matrix.start[rows + 1] - matrix.start[rows]
         weights = used.take(np.repeat(np.arange(len(rows)), counts), axis=1)
         weights *= matrix.value[entries]
-        every = np.arange(n_solve)
-        product = _sums_at(every, matrix.index[entries], weights, (n_solve, n_col))
-        sums = np.stack([term.sum(axis=1), np.abs(term).sum(axis=1)], axis=1)
-        return pi, sums, table.first.cost - product
+        product = sums_by(matrix.index[entries], weights, n_col)
+        same = np.stack([term.sum(axis=1), np.abs(term).sum(axis=1)], axis=1)
+        return pi, same, table.first.cost - product
 
     @property
     def table(self) -> MemberTable | None:
@@ -477,7 +476,7 @@ class _Sum:
             full = np.zeros(len(pi))
             full[self.rows] = self.pi
             step = full[bound.patch_row] * (member.patch_value - bound.patch_base)
-            self.d -= _sums(bound.patch_column, step, len(self.d))
+            self.d -= sums(bound.patch_column, step, len(self.d))
         if bound.family.exit_columns is not None:
             # What rows make of the value of an exit is part of its weight.
             self.weight = self.weight + self.d[bound.family.exit_columns]
@@ -496,14 +495,14 @@ class _Sum:
     def _weigh_exits(self, state_slope: FloatArray, capacity_slope: FloatArray) -> None:
         """Scales the multipliers of every exit to its weight, and adds the cuts' slopes."""
         n_exit = len(self.weight)
-        total = _sums(self.cut_exit, self.cut_pi, n_exit)
+        total = sums(self.cut_exit, self.cut_pi, n_exit)
         factor, rest = _exit_factors(self.weight, total)
         self.theta_term = np.where(rest > 0.0, rest * self.bound.theta_lower, 0.0)
         step = self.cut_pi * factor[self.cut_exit]
         if len(step):
             out = self.bound.family.out_columns[self.cut_exit]
-            self.d += _sums(out.ravel(), (step[:, None] * state_slope).ravel(), len(self.d))
-        self.cut_term = _sums(self.cut_exit, step * self.cut_intercept, n_exit)
+            self.d += sums(out.ravel(), (step[:, None] * state_slope).ravel(), len(self.d))
+        self.cut_term = sums(self.cut_exit, step * self.cut_intercept, n_exit)
         self.capacity_term = step[:, None] * capacity_slope
 
     def terms(self) -> _Terms:
@@ -539,19 +538,6 @@ def _exit_factors(weight: FloatArray, total: FloatArray) -> tuple[FloatArray, Fl
     is_scaled = weight < (1.0 + SNAP_WEIGHT) * total
     factor = np.where(is_scaled, weight / np.where(is_scaled, total, 1.0), 1.0)
     return factor, np.maximum(weight - factor * total, 0.0)
-
-
-def _sums(place: IntArray, term: FloatArray, n: int) -> FloatArray:
-    """Sums of the terms of each place, (n,)."""
-    return np.bincount(place, term, n).astype(float, copy=False)  # integers where there are none
-
-
-def _sums_at(
-    row: IntArray, column: IntArray, term: FloatArray, shape: tuple[int, ...]
-) -> FloatArray:
-    """Array of a shape with the sums of terms (n, m) at row (n,) and column (m,) or (n, m)."""
-    flat = row[:, None] * shape[1] + column
-    return _sums(flat.ravel(), term.ravel(), shape[0] * shape[1]).reshape(shape)
 
 
 def _row_terms(

@@ -414,8 +414,8 @@ class _Run:
                 return StopReason.MEMORY_LIMIT
             if not self.is_integer_phase:
                 self.relaxed_bounds.append(self.lower_bound)
-                target_abs = 0.5 * self.target * max(abs(self.lower_bound), 1e-12)
-                if is_relaxation_settled(self.relaxed_bounds, self.gap_abs, target_abs, self.clock):
+                half = 0.5 * self._target_abs()
+                if is_relaxation_settled(self.relaxed_bounds, self.gap_abs, half, self.clock):
                     self.is_integer_phase = True
                     _LOG.info("first stage in whole numbers from pass %d on", i_pass + 1)
         self._finish_with_integers()
@@ -540,7 +540,7 @@ class _Run:
 
     def _seems_reached(self) -> bool:
         """Whether the last partial pass found little that the cuts did not know."""
-        return self._open_seen <= self.target * max(abs(self.lower_bound), 1e-12)
+        return self._open_seen <= self._target_abs()
 
     _open_seen = float("inf")
 
@@ -550,8 +550,11 @@ class _Run:
         The gap is measured in full passes only; tolerances of a gap long closed would keep the
         bound from rising in the passes between.
         """
-        least = LEAST_OPEN_SHARE * self.target * max(abs(self.lower_bound), 1e-12)
-        return min(self.gap_abs, max(self._open_seen, least))
+        return min(self.gap_abs, max(self._open_seen, LEAST_OPEN_SHARE * self._target_abs()))
+
+    def _target_abs(self) -> float:
+        """The target in money."""
+        return self.target * max(abs(self.lower_bound), 1e-12)
 
     def _request_maker(self, points: list[RootPoint]) -> RequestMaker:
         """Makes requests for what follows these plans: with cuts, as close as the gap asks for."""

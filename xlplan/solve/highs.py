@@ -31,8 +31,6 @@ _LOG = logging.getLogger(__name__)
 FEASIBILITY_TOLERANCE = 1e-7
 """HiGHS's own default, stated because lazy rows are checked with the same."""
 
-_OK, _OPTIMAL = highspy.HighsStatus.kOk, highspy.HighsModelStatus.kOptimal
-
 FACE_TOLERANCE = 1e-7
 """Reduced cost, relative to the largest cost, that keeps a column at its bound on the face."""
 
@@ -241,25 +239,10 @@ class KeptModel:
     def _run_once(self, wants_dual: bool) -> SolveResult:
         begin = time.perf_counter()
         run_status = self._highs.run()
-        seconds = time.perf_counter() - begin
+        result = _read_result(self._highs, run_status, False, begin, wants_dual)
         self.counts["solve"] += 1
-        self.seconds += seconds
-        if run_status != _OK or self._highs.getModelStatus() != _OPTIMAL:
-            return _read_result(self._highs, run_status, False, begin)
-        # What nearly every run comes to, read in as few steps as there can be.
-        solution, objective = self._highs.getSolution(), float(self._highs.getObjectiveValue())
-        has_dual = bool(solution.dual_valid)
-        return SolveResult(
-            Termination.OPTIMAL,
-            has_incumbent=True,
-            has_dual=has_dual,
-            raw_status="Optimal (Ok)",
-            seconds=seconds,
-            objective_or_nan=objective,
-            bound_or_nan=objective,
-            col_value_or_none=_vector(solution.col_value),
-            row_dual_or_none=_vector(solution.row_dual) if has_dual and wants_dual else None,
-        )
+        self.seconds += result.seconds
+        return result
 
     def row_dual(self) -> FloatArray:
         """Multipliers of the rows, (n_row,), of the last run, which was optimal."""
@@ -317,7 +300,11 @@ class KeptModel:
 
 
 def _read_result(
-    highs: highspy.Highs, run_status: highspy.HighsStatus, is_mip: bool, begin: float
+    highs: highspy.Highs,
+    run_status: highspy.HighsStatus,
+    is_mip: bool,
+    begin: float,
+    wants_dual: bool = True,
 ) -> SolveResult:
     """Turns HiGHS's state into a ``SolveResult``, reading only what is valid."""
     seconds = time.perf_counter() - begin
@@ -348,7 +335,7 @@ def _read_result(
         bound_or_nan=bound,
         # Attribute access builds a list of the whole vector, hence once each.
         col_value_or_none=_vector(solution.col_value) if has_incumbent else None,
-        row_dual_or_none=_vector(solution.row_dual) if has_dual else None,
+        row_dual_or_none=_vector(solution.row_dual) if has_dual and wants_dual else None,
     )
 
 

@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 
 from xlplan.model.value_graph import Family, Member
 from xlplan.solve.member_cache import MemberCache
+from xlplan.solve.row_matrix import way_back
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.integer]
@@ -169,8 +170,7 @@ class MemberTable:
         is_apart[self.into[self.given]] = True
         is_apart[family.capacity_columns[family.capacity_columns >= 0]] = True
         self.moving = np.flatnonzero(is_moving)
-        self.moving_place = np.full(len(is_moving), -1, dtype=np.int64)
-        self.moving_place[self.moving] = np.arange(len(self.moving))
+        self.moving_place = way_back(self.moving, len(is_moving))
         self.moving_inside = np.where(is_apart[self.moving], 0.0, 1.0)
         self._gather(cache, i_family)
         is_left_out = is_moving | is_apart

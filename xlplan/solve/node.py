@@ -6,9 +6,9 @@ first and added where the solution violates them: lazy rows and the bounds of fo
 (``node_rows.py``), the cuts of the children, and the lifting of a gated exit's cuts
 (``node_children.py``).
 
-Points are solved in blocks: what moves the model from one to the next, and what is looked at
-afterwards, is worked out for the whole block in a few passes over arrays, for a call of NumPy costs
-as much for one point as for ten. Only the solver and the children's cuts go point by point.
+What moves the model from point to point is worked out for a whole run of points, and so is what
+comes out; missed rows are looked for in blocks of them: a call of NumPy costs as much for one point
+as for ten. Only the solver and the children's cuts go point by point.
 """
 
 from __future__ import annotations
@@ -28,10 +28,10 @@ from xlplan.solve.highs import FEASIBILITY_TOLERANCE, KeptModel, SolverFailureEr
 from xlplan.solve.member_cache import MemberCache
 from xlplan.solve.member_table import Numbers
 from xlplan.solve.node_children import ChildRows
-from xlplan.solve.node_rows import Differences, LazyRows, Now, ProgramRows
+from xlplan.solve.node_rows import Differences, LazyRows, Now, ProgramRows, rows_of
 from xlplan.solve.node_slots import Held, SlotRows
 from xlplan.solve.result import SolveResult
-from xlplan.solve.row_matrix import RowMatrix
+from xlplan.solve.row_matrix import RowMatrix, way_back
 from xlplan.solve.tables import GraphTables
 
 FloatArray = NDArray[np.float64]
@@ -248,8 +248,7 @@ class NodeModel:
         """Columns of the model whose bounds may change."""
         columns = kept[self._moving]
         self._bounds = differences.bounds(columns)
-        self._place_in_moving = np.full(self.n_col, -1, dtype=np.int64)
-        self._place_in_moving[columns] = np.arange(len(columns))
+        self._place_in_moving = way_back(columns, self.n_col)
         self._capacity_at = self._place_in_moving[capacities]
         costing = np.flatnonzero(differences.column_place[kept] >= 0)
         self._costs = differences.costs(kept[costing])
@@ -358,7 +357,7 @@ class NodeModel:
             if run.points[i].second_cost is not None:
                 result, dual = self._seconded(run, i, result, dual)
             theta = result.col_value[self.n_kept :].copy()
-            return _Solved(result.objective, theta, dual, self._children.held())
+            return _Solved(result.objective, theta, dual, self._children.settled())
         except SolverFailureError as failure:
             return failure
 
@@ -390,7 +389,7 @@ class NodeModel:
         if self._theta_columns is not None:
             y[:, self._theta_columns] = primal[:, self.n_kept :]
         if len(self._folding):
-            self._folding.complete(y, _of(run.now.fold_side, places))
+            self._folding.complete(y, rows_of(run.now.fold_side, places))
         run.y[places] = y
 
     def _now(self, members: Sequence[int]) -> Now:
@@ -444,7 +443,7 @@ class NodeModel:
         )  # fmt: skip
 
     def _side_change(self, now: Now) -> _Change:
-        """Sides of the rows of the model for the members of a block."""
+        """Sides of the rows of the model for the members of a run."""
         rows = self._rows
         return _Change.between(rows.place[rows.varying], (rows.low, rows.high), rows.sides(now))
 
@@ -491,11 +490,11 @@ class NodeModel:
         rows = folds = [none] * len(places)
         if len(self._lazy):
             place = self._rows.of_program[self._lazy.row]
-            low, high = _of(run.lazy_low, places), _of(run.lazy_high, places)
+            low, high = rows_of(run.lazy_low, places), rows_of(run.lazy_high, places)
             worst = self._worst(self._lazy.activity(y), low, high, place)
             rows = [self._lazy.row[at] for at in worst]
         if len(self._folding):
-            low, high = _of(run.fold_low, places), _of(run.fold_high, places)
+            low, high = rows_of(run.fold_low, places), rows_of(run.fold_high, places)
             values = y.take(self._folding.column, axis=1)
             folds = self._worst(values, low, high, self._rows.of_bound)
         return list(zip(rows, folds, strict=True))
@@ -519,7 +518,7 @@ class NodeModel:
                 found = found[place[found] < 0]
             if len(found) > FEW_ROWS:
                 reached = activity[i, found]
-                below, above = _of(low, [i])[0, found], _of(high, [i])[0, found]
+                below, above = rows_of(low, [i])[0, found], rows_of(high, [i])[0, found]
                 by = np.maximum(reached - above, below - reached)
                 size = np.where(by == reached - above, above, below)
                 order = np.argsort(-by / (1.0 + np.abs(size)), kind="stable")
@@ -552,7 +551,7 @@ class NodeModel:
     def _outcomes(
         self, run: _Run, found: Sequence[_Solved | SolverFailureError]
     ) -> list[NodeOutcome | SolverFailureError]:
-        """Outcomes of a block, from what the solver said."""
+        """Outcomes of a run, from what the solver said."""
         places = [i for i, one in enumerate(found) if isinstance(one, _Solved)]
         solved = [one for one in found if isinstance(one, _Solved)]
         outcomes: list[NodeOutcome | SolverFailureError | None] = [
@@ -756,8 +755,3 @@ def _with_tolerance(low: FloatArray, high: FloatArray) -> tuple[FloatArray, Floa
         wide_low = low - FEASIBILITY_TOLERANCE * (1.0 + np.abs(low))
         wide_high = high + FEASIBILITY_TOLERANCE * (1.0 + np.abs(high))
     return wide_low, wide_high
-
-
-def _of(sides: FloatArray, places: Sequence[int]) -> FloatArray:
-    """Rows of some points, or the one row that serves all."""
-    return sides[places] if len(sides) > 1 else sides

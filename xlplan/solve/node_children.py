@@ -289,7 +289,7 @@ class ChildRows:
 
     # -- what comes out ------------------------------------------------------------------------
 
-    def held(self) -> Held:
+    def settled(self) -> Held:
         """Rows stay: there is nothing to note."""
         return []
 

@@ -7,7 +7,9 @@ added when a point breaks them.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,11 +17,13 @@ from numpy.typing import NDArray
 from xlplan.model.value_graph import Member
 from xlplan.solve.folding import Expanded, Folding
 from xlplan.solve.member_table import MemberTable, Numbers
-from xlplan.solve.row_matrix import RowMatrix, sums_by
+from xlplan.solve.row_matrix import RowMatrix, sums_by, way_back
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.integer]
 BoolArray = NDArray[np.bool_]
+
+_Any = TypeVar("_Any", np.float64, np.bool_)
 
 FEW_ENTRIES = 8
 """Lazy rows of up to so many entries are evaluated side by side."""
@@ -73,8 +77,8 @@ class Differences:
             self.column_place = np.arange(len(first.cost))
             self.row_place = np.arange(len(first.row_lower))
         else:
-            self.column_place = _way_back(table.columns, len(first.cost))
-            self.row_place = _way_back(table.rows, len(first.row_lower))
+            self.column_place = way_back(table.columns, len(first.cost))
+            self.row_place = way_back(table.rows, len(first.row_lower))
 
     def bounds(self, columns: IntArray) -> Lookup:
         """Reads ``col_lower`` and ``col_upper``."""
@@ -115,13 +119,8 @@ class Now:
 
     def one(self, i: int) -> Now:
         """The ``i``-th member alone."""
-        j = slice(i, i + 1)
-        side, is_free = self.fold_side, self.is_fold_free
-        return Now(
-            self.numbers.part(j),
-            side[j] if len(side) > 1 else side,
-            is_free[j] if len(side) > 1 else is_free,
-        )
+        numbers = self.numbers.part(slice(i, i + 1))
+        return Now(numbers, rows_of(self.fold_side, [i]), rows_of(self.is_fold_free, [i]))
 
     def fold_bounds(self, bounds: Lookup) -> tuple[FloatArray, FloatArray]:
         """Bounds of folded columns, which ``bounds`` reads; none where the fold's row is free."""
@@ -234,9 +233,7 @@ class _SideReader:
         self._sides = rows._differences.sides(program[self._own])
         self._folds = rows.bounded[at[self._bound]]
         self._bounds = rows._differences.bounds(rows._folding.column[self._folds])
-        place = np.full(len(rows), -1, dtype=np.int64)
-        place[at] = np.arange(len(at))
-        self._place = place[rows.multiple_row[multiples]]
+        self._place = way_back(at, len(rows))[rows.multiple_row[multiples]]
         self._fold, self._multiple = rows.multiple_fold[multiples], rows.multiple[multiples]
 
     def read(self, now: Now) -> tuple[FloatArray, FloatArray]:
@@ -312,11 +309,9 @@ class LazyRows:
         return found
 
 
-def _way_back(at: IntArray, n: int) -> IntArray:
-    """Place of each of n numbers in ``at``, -1 where it is not there."""
-    place = np.full(n, -1, dtype=np.int64)
-    place[at] = np.arange(len(at))
-    return place
+def rows_of(array: NDArray[_Any], places: Sequence[int]) -> NDArray[_Any]:
+    """Rows of some points, (k, n), or the one row (1, n) that serves all."""
+    return array[places] if len(array) > 1 else array
 
 
 def _behind(old: NDArray[np.int32], new: NDArray[np.integer]) -> NDArray[np.int32]:

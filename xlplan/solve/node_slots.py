@@ -239,8 +239,8 @@ class SlotRows:
 
     # -- what comes out ------------------------------------------------------------------------
 
-    def held(self) -> Held:
-        """What stands in the slots now; where the same point is solved again it begins there."""
+    def settled(self) -> Held:
+        """Notes what stands in the slots: where the same point is solved again it begins there."""
         for e, at in enumerate(self._exits):
             if at.child[1] >= 0:
                 self._tight[e, *at.child] = sorted(set(at.position) - {FREE})

@@ -46,10 +46,32 @@ class RowMatrix:
         return start, self.index[entries], self.value[entries]
 
 
-def sums_by(place: IntArray, weights: NDArray[np.generic], n: int) -> FloatArray:
-    """Sums of every row of ``weights`` (k, m) by ``place`` (m,): (k, n)."""
-    k = len(weights)
-    if k == 1:
-        return np.bincount(place, weights[0], n)[None, :]
-    flat = place + n * np.arange(k)[:, None]
-    return np.bincount(flat.ravel(), weights.ravel(), k * n).reshape(k, n)
+def sums(place: IntArray, term: NDArray[np.generic], n: int) -> FloatArray:
+    """Sums of the terms of each place, (n,)."""
+    return np.bincount(place, term, n).astype(float, copy=False)  # integers where there are none
+
+
+def sums_at(
+    row: IntArray, column: IntArray, term: NDArray[np.generic], shape: tuple[int, ...]
+) -> FloatArray:
+    """Array of a shape with the sums of terms (n, m) at row (n,) and column (m,) or (n, m)."""
+    flat = row[:, None] * shape[1] + column
+    return sums(flat.ravel(), term.ravel(), shape[0] * shape[1]).reshape(shape)
+
+
+def sums_by(place: IntArray, term: NDArray[np.generic], n: int) -> FloatArray:
+    """Sums of every row of ``term`` (k, m) by ``place`` (m,): (k, n)."""
+    if len(term) == 1:
+        return sums(place, term[0], n)[None, :]
+    return sums_at(np.arange(len(term)), place, term, (len(term), n))
+
+
+def way_back(at: IntArray, n: int) -> IntArray:
+    """Where each of n numbers stands in ``at``, -1 where it does not.
+
+    >>> way_back(np.array([3, 1]), 4).tolist()
+    [-1, 1, -1, 0]
+    """
+    place = np.full(n, -1, dtype=np.int64)
+    place[at] = np.arange(len(at))
+    return place
