@@ -612,11 +612,9 @@ def test_the_blank_template_says_what_is_missing(tmp_path, capsys):
 
 
 def run_installed(*words: str, **options: Any) -> subprocess.Popen[str]:
-    environment = {**os.environ, "OMP_NUM_THREADS": "1"}
     return subprocess.Popen(
         [sys.executable, "-m", "xlplan", *words],
         cwd=ROOT,
-        env=environment,
         stdout=subprocess.PIPE,
         stderr=subprocess.PIPE,
         text=True,

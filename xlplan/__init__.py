@@ -15,4 +15,11 @@ compare   several plans side by side
 report    results workbook and JSON twin; computes nothing
 """
 
+import os
+
+# Before anything imports NumPy. Its linear algebra would start a thread for each core in every
+# process: no gain on arrays this small, a loss beside other work, and digits that depend on the
+# number of cores. Whoever sets the variable has their way.
+os.environ.setdefault("OMP_NUM_THREADS", "1")
+
 __version__ = "0.1.0"
