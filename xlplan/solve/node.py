@@ -123,6 +123,19 @@ class _Change:
         values = tuple(v.take(at, axis=1) for v in whole)
         return _Change(whole, places[at].astype(np.int32), values)
 
+    def extended(self, places: IntArray, whole: tuple[FloatArray, ...]) -> _Change:
+        """More of the model behind, which stands at one of the points."""
+        more = _Change.between(places, [array[0] for array in whole], whole)
+        return _Change(
+            _beside(self.whole, whole),
+            np.concatenate([self.places, more.places]),
+            _beside(self.values, more.values),
+        )
+
+
+def _beside(left: tuple[FloatArray, ...], right: tuple[FloatArray, ...]) -> tuple[FloatArray, ...]:
+    return tuple(np.hstack(pair) for pair in zip(left, right, strict=True))
+
 
 @dataclass
 class _Run:
@@ -204,14 +217,14 @@ class NodeModel:
         loaded = np.flatnonzero(~program.is_lazy & ~is_fold_row)
         rows = self._folding.expand_rows(loaded)
         none = np.full(len(loaded), -1)
-        low, high = self._rows.append(loaded, none, np.arange(len(loaded)), rows, now)
+        low, high, _ = self._rows.append(loaded, none, np.arange(len(loaded)), rows, now)
         self._model = KeptModel(
             family.name,
             cost,
             lower,
             upper,
-            low,
-            high,
+            low[0],
+            high[0],
             rows.start,
             self._column_place[rows.index],
             rows.value,
@@ -537,11 +550,12 @@ class NodeModel:
             parts.append((none, folds, self._folding.expand_columns(folds)))
         for program, bounded, expanded in parts:
             places = self._model.n_row + np.arange(len(program))
-            low, high = self._rows.append(program, bounded, places, expanded, run.now.one(i))
+            low, high, varying = self._rows.append(program, bounded, places, expanded, run.now, i)
             columns = self._column_place[expanded.index]
-            self._model.add_rows(low, high, expanded.start, columns, expanded.value)
-        if parts and len(run.points) > 1:
-            run.sides = self._side_change(run.now)
+            self._model.add_rows(low[i], high[i], expanded.start, columns, expanded.value)
+            if len(run.points) > 1:
+                more = (low[:, varying], high[:, varying])
+                run.sides = run.sides.extended(places[varying], more)
         n = len(rows) + len(folds)
         self.counts["lazy row"] += n
         return n

@@ -139,8 +139,8 @@ class ProgramRows:
     program (n,) program row or -1; bounded (n,) fold whose column's bound it is, or -1; place (n,)
     row of the model; ``multiple`` times fold row ``multiple_fold`` is part of the
     ``multiple_row``-th of them; of_program, of_bound: the way back, -1 where not in the model;
-    varying (n_varying,): those whose sides differ between members; low, high (n_varying,): their
-    sides as they stand in the model.
+    varying (n_varying,): those whose sides differ between members, ascending; low, high
+    (n_varying,): their sides as they stand in the model.
 
     Parameters
     ----------
@@ -157,17 +157,29 @@ class ProgramRows:
         n_row = len(differences.row_place)
         self.of_program = np.full(n_row, -1, dtype=np.int32)
         self.of_bound = np.full(len(folding), -1, dtype=np.int32)
+        self._does_fold_differ = differences.row_place[folding.row] >= 0
         self.low = self.high = np.zeros(0)
         self.varying = np.zeros(0, dtype=np.int64)
-        self._reader = _SideReader(self, self.varying, np.zeros(0, dtype=np.int64))
+        self._reader: _SideReader | None = None
 
     def __len__(self) -> int:
         return len(self.program)
 
     def append(
-        self, rows: IntArray, folds: IntArray, places: IntArray, expanded: Expanded, now: Now
-    ) -> tuple[FloatArray, FloatArray]:
-        """Puts rows behind; their sides for the one member of ``now``."""
+        self,
+        rows: IntArray,
+        folds: IntArray,
+        places: IntArray,
+        expanded: Expanded,
+        now: Now,
+        i: int = 0,
+    ) -> tuple[FloatArray, FloatArray, IntArray]:
+        """Puts rows behind; the model holds them with the sides of the ``i``-th member.
+
+        Returns
+        -------
+        sides for the members of ``now``, (k, n) each; which of the rows vary, (n_new_varying,)
+        """
         begin = len(self)
         new = begin + np.arange(len(rows), dtype=np.int32)
         self.of_program[rows[rows >= 0]] = new[rows >= 0]
@@ -181,16 +193,20 @@ class ProgramRows:
         self.multiple = np.concatenate([self.multiple, expanded.multiple])
         multiples = np.arange(n_before, len(self.multiple))
         low, high = _SideReader(self, new, multiples).read(now)
-        n_varying = len(self.varying)
-        self._find_varying()
-        # Rows come behind, so those that varied before stand first, as they stood.
-        fresh = self.varying[n_varying:] - begin
-        self.low = np.concatenate([self.low, low[0, fresh]])
-        self.high = np.concatenate([self.high, high[0, fresh]])
-        return low[0], high[0]
+        fresh = self._find_varying(new, multiples)
+        self.varying = np.concatenate([self.varying, begin + fresh])
+        self._reader = None
+        self.low = np.concatenate([self.low, low[i, fresh]])
+        self.high = np.concatenate([self.high, high[i, fresh]])
+        return low, high, fresh
 
     def sides(self, now: Now) -> tuple[FloatArray, FloatArray]:
         """Sides of the varying rows for every member of ``now``, (k, n_varying)."""
+        if self._reader is None:
+            differs = np.zeros(len(self), dtype=bool)
+            differs[self.varying] = True
+            multiples = np.flatnonzero(differs[self.multiple_row])
+            self._reader = _SideReader(self, self.varying, multiples)
         return self._reader.read(now)
 
     def multipliers(self, dual: FloatArray) -> FloatArray:
@@ -205,21 +221,20 @@ class ProgramRows:
             pi[:, self._folding.row] = sums_by(self.multiple_fold, weights, n_fold)
         return pi
 
-    def _find_varying(self) -> None:
-        differs_column = self._differences.column_place >= 0
-        differs_row = self._differences.row_place >= 0
-        differs = np.zeros(len(self), dtype=bool)
-        is_row = self.program >= 0
-        differs[is_row] = differs_row[self.program[is_row]]
-        column = self._folding.column[self.bounded[~is_row]]
-        differs[~is_row] = differs_column[column]
-        by_fold = differs_row[self._folding.row]
-        differs[self.multiple_row[by_fold[self.multiple_fold]]] = True
+    def _find_varying(self, new: IntArray, multiples: IntArray) -> IntArray:
+        """Which of some rows, the last ones, have sides that differ between members."""
+        program, bounded = self.program[new], self.bounded[new]
+        differs = np.zeros(len(new), dtype=bool)
+        is_row = program >= 0
+        differs[is_row] = self._differences.row_place[program[is_row]] >= 0
+        column = self._folding.column[bounded[~is_row]]
+        differs[~is_row] = self._differences.column_place[column] >= 0
+        by_fold = self._does_fold_differ
+        row = self.multiple_row[multiples] - new[0] if len(new) else multiples
+        differs[row[by_fold[self.multiple_fold[multiples]]]] = True
         # Where a fold's row is free in some members, so is the bound of its column.
-        differs[~is_row] |= by_fold[self.bounded[~is_row]]
-        self.varying = np.flatnonzero(differs)
-        multiples = np.flatnonzero(differs[self.multiple_row])
-        self._reader = _SideReader(self, self.varying, multiples)
+        differs[~is_row] |= by_fold[bounded[~is_row]]
+        return np.flatnonzero(differs)
 
 
 class _SideReader:
