@@ -402,7 +402,7 @@ class NodeModel:
         if self._theta_columns is not None:
             y[:, self._theta_columns] = primal[:, self.n_kept :]
         if len(self._folding):
-            self._folding.complete(y, rows_of(run.now.fold_side, places))
+            self._folding.complete(y, rows_of(run.now.fold_shift, places))
         run.y[places] = y
 
     def _now(self, members: Sequence[int]) -> Now:
@@ -414,7 +414,7 @@ class NodeModel:
             (i_member,) = members
             own = Numbers.of(self.cache.get(self.i_family, i_member))
             numbers = Numbers(*(np.asarray(v)[None] for v in vars(own).values()))
-        return Now.of(numbers, self._fold_rows)
+        return Now.of(numbers, self._fold_rows, self._folding)
 
     def _prepared(self, points: Sequence[NodePoint]) -> _Run:
         """What the model is brought to for each point."""
@@ -548,11 +548,11 @@ class NodeModel:
         if len(folds):
             none = np.full(len(folds), -1)
             parts.append((none, folds, self._folding.expand_columns(folds)))
-        for program, bounded, expanded in parts:
+        for program, bounded, folded in parts:
             places = self._model.n_row + np.arange(len(program))
-            low, high, varying = self._rows.append(program, bounded, places, expanded, run.now, i)
-            columns = self._column_place[expanded.index]
-            self._model.add_rows(low[i], high[i], expanded.start, columns, expanded.value)
+            low, high, varying = self._rows.append(program, bounded, places, folded, run.now, i)
+            columns = self._column_place[folded.index]
+            self._model.add_rows(low[i], high[i], folded.start, columns, folded.value)
             if len(run.points) > 1:
                 more = (low[:, varying], high[:, varying])
                 run.sides = run.sides.extended(places[varying], more)

@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from xlplan.model.value_graph import Member
-from xlplan.solve.folding import Expanded, Folding
+from xlplan.solve.folding import FoldedRows, Folding
 from xlplan.solve.member_table import MemberTable, Numbers
 from xlplan.solve.row_matrix import RowMatrix, sums_by, way_back
 
@@ -100,32 +100,31 @@ class Now:
     """Numbers of k members, and what folding makes of them.
 
     numbers : with a first axis of length k
-    fold_side (k, n_fold) or (1, n_fold) ``b_D``; is_fold_free alike, whether a fold's row is free
+    fold_shift (k, n_fold) or (1, n_fold) ``W b_D``; is_fold_free alike, whether a fold's row is
+    free; is_fold_lost alike, whether the column hangs on a free row, or None: none does
     """
 
     numbers: Numbers
-    fold_side: FloatArray
+    fold_shift: FloatArray
     is_fold_free: BoolArray
+    is_fold_lost: BoolArray | None
 
     @staticmethod
-    def of(numbers: Numbers, fold_rows: Lookup) -> Now:
+    def of(numbers: Numbers, fold_rows: Lookup, folding: Folding) -> Now:
         """Takes the sides of folded rows, which ``fold_rows`` reads."""
         side, _ = fold_rows.read(numbers.row_lower, numbers.row_upper)
-        is_free = ~np.isfinite(side)
-        return Now(numbers, np.where(is_free, 0.0, side) if is_free.any() else side, is_free)
+        is_free, is_lost = ~np.isfinite(side), None
+        if is_free.any():
+            side, is_lost = np.where(is_free, 0.0, side), folding.touched(is_free)
+        return Now(numbers, folding.shift(side), is_free, is_lost)
 
     def __len__(self) -> int:
         return len(self.numbers.exit_weight)
 
-    def one(self, i: int) -> Now:
-        """The ``i``-th member alone."""
-        numbers = self.numbers.part(slice(i, i + 1))
-        return Now(numbers, rows_of(self.fold_side, [i]), rows_of(self.is_fold_free, [i]))
-
     def fold_bounds(self, bounds: Lookup) -> tuple[FloatArray, FloatArray]:
         """Bounds of folded columns, which ``bounds`` reads; none where the fold's row is free."""
         low, high = bounds.read(self.numbers.col_lower, self.numbers.col_upper)
-        if not self.is_fold_free.any():
+        if self.is_fold_lost is None:
             return low, high
         return (
             np.where(self.is_fold_free, -np.inf, low),
@@ -137,8 +136,8 @@ class ProgramRows:
     """Program rows, and bounds of folded columns, that are in the model, and where.
 
     program (n,) program row or -1; bounded (n,) fold whose column's bound it is, or -1; place (n,)
-    row of the model; ``multiple`` times fold row ``multiple_fold`` is part of the
-    ``multiple_row``-th of them; of_program, of_bound: the way back, -1 where not in the model;
+    row of the model; in the ``term_row``-th of them ``term_weight`` times the folded column
+    ``term_fold`` was replaced; of_program, of_bound: the way back, -1 where not in the model;
     varying (n_varying,): those whose sides differ between members, ascending; low, high
     (n_varying,): their sides as they stand in the model.
 
@@ -152,12 +151,13 @@ class ProgramRows:
     def __init__(self, name: str, folding: Folding, differences: Differences) -> None:
         self.name, self._folding, self._differences = name, folding, differences
         self.program = self.bounded = self.place = np.zeros(0, dtype=np.int32)
-        self.multiple_row = self.multiple_fold = np.zeros(0, dtype=np.int32)
-        self.multiple = np.zeros(0)
+        self.term_row = self.term_fold = np.zeros(0, dtype=np.int32)
+        self.term_weight = np.zeros(0)
         n_row = len(differences.row_place)
         self.of_program = np.full(n_row, -1, dtype=np.int32)
         self.of_bound = np.full(len(folding), -1, dtype=np.int32)
-        self._does_fold_differ = differences.row_place[folding.row] >= 0
+        # Where a row D differs between members, so does what hangs on it.
+        self._does_shift_vary = folding.touched(differences.row_place[None, folding.row] >= 0)[0]
         self.low = self.high = np.zeros(0)
         self.varying = np.zeros(0, dtype=np.int64)
         self._reader: _SideReader | None = None
@@ -170,7 +170,7 @@ class ProgramRows:
         rows: IntArray,
         folds: IntArray,
         places: IntArray,
-        expanded: Expanded,
+        folded: FoldedRows,
         now: Now,
         i: int = 0,
     ) -> tuple[FloatArray, FloatArray, IntArray]:
@@ -187,13 +187,13 @@ class ProgramRows:
         self.program = _behind(self.program, rows)
         self.bounded = _behind(self.bounded, folds)
         self.place = _behind(self.place, places)
-        n_before = len(self.multiple)
-        self.multiple_row = _behind(self.multiple_row, np.repeat(new, np.diff(expanded.fold_start)))
-        self.multiple_fold = _behind(self.multiple_fold, expanded.fold)
-        self.multiple = np.concatenate([self.multiple, expanded.multiple])
-        multiples = np.arange(n_before, len(self.multiple))
-        low, high = _SideReader(self, new, multiples).read(now)
-        fresh = self._find_varying(new, multiples)
+        n_before = len(self.term_row)
+        self.term_row = _behind(self.term_row, begin + folded.term_row)
+        self.term_fold = _behind(self.term_fold, folded.term_fold)
+        self.term_weight = np.concatenate([self.term_weight, folded.term_weight])
+        terms = np.arange(n_before, len(self.term_row))
+        low, high = _SideReader(self, new, terms).read(now)
+        fresh = self._find_varying(new, terms)
         self.varying = np.concatenate([self.varying, begin + fresh])
         self._reader = None
         self.low = np.concatenate([self.low, low[i, fresh]])
@@ -205,8 +205,8 @@ class ProgramRows:
         if self._reader is None:
             differs = np.zeros(len(self), dtype=bool)
             differs[self.varying] = True
-            multiples = np.flatnonzero(differs[self.multiple_row])
-            self._reader = _SideReader(self, self.varying, multiples)
+            terms = np.flatnonzero(differs[self.term_row])
+            self._reader = _SideReader(self, self.varying, terms)
         return self._reader.read(now)
 
     def multipliers(self, dual: FloatArray) -> FloatArray:
@@ -217,11 +217,12 @@ class ProgramRows:
         is_row = self.program >= 0
         pi[:, self.program[is_row]] = own[:, is_row]
         if n_fold:
-            weights = self.multiple * own.take(self.multiple_row, axis=1)
-            pi[:, self._folding.row] = sums_by(self.multiple_fold, weights, n_fold)
+            weights = self.term_weight * own.take(self.term_row, axis=1)
+            by_column = sums_by(self.term_fold, weights, n_fold)
+            pi[:, self._folding.row] = self._folding.multipliers(by_column)
         return pi
 
-    def _find_varying(self, new: IntArray, multiples: IntArray) -> IntArray:
+    def _find_varying(self, new: IntArray, terms: IntArray) -> IntArray:
         """Which of some rows, the last ones, have sides that differ between members."""
         program, bounded = self.program[new], self.bounded[new]
         differs = np.zeros(len(new), dtype=bool)
@@ -229,18 +230,18 @@ class ProgramRows:
         differs[is_row] = self._differences.row_place[program[is_row]] >= 0
         column = self._folding.column[bounded[~is_row]]
         differs[~is_row] = self._differences.column_place[column] >= 0
-        by_fold = self._does_fold_differ
-        row = self.multiple_row[multiples] - new[0] if len(new) else multiples
-        differs[row[by_fold[self.multiple_fold[multiples]]]] = True
+        row = self.term_row[terms] - (len(self) - len(new))
+        differs[row[self._does_shift_vary[self.term_fold[terms]]]] = True
         # Where a fold's row is free in some members, so is the bound of its column.
-        differs[~is_row] |= by_fold[bounded[~is_row]]
+        own = self._folding.row[bounded[~is_row]]
+        differs[~is_row] |= self._differences.row_place[own] >= 0
         return np.flatnonzero(differs)
 
 
 class _SideReader:
-    """Sides of the rows ``at`` of ``ProgramRows``, to which the ``multiples`` belong."""
+    """Sides of the rows ``at`` of ``ProgramRows``, to which the ``terms`` belong."""
 
-    def __init__(self, rows: ProgramRows, at: IntArray, multiples: IntArray) -> None:
+    def __init__(self, rows: ProgramRows, at: IntArray, terms: IntArray) -> None:
         self._name, self.n = rows.name, len(at)
         program = rows.program[at]
         is_bound = program < 0
@@ -248,8 +249,8 @@ class _SideReader:
         self._sides = rows._differences.sides(program[self._own])
         self._folds = rows.bounded[at[self._bound]]
         self._bounds = rows._differences.bounds(rows._folding.column[self._folds])
-        self._place = way_back(at, len(rows))[rows.multiple_row[multiples]]
-        self._fold, self._multiple = rows.multiple_fold[multiples], rows.multiple[multiples]
+        self._place = way_back(at, len(rows))[rows.term_row[terms]]
+        self._fold, self._weight = rows.term_fold[terms], rows.term_weight[terms]
 
     def read(self, now: Now) -> tuple[FloatArray, FloatArray]:
         """Lower and upper sides, (k, n)."""
@@ -263,14 +264,14 @@ class _SideReader:
             low[:, self._bound] = np.where(free, -np.inf, own_low)
             high[:, self._bound] = np.where(free, np.inf, own_high)
         if len(self._fold):
-            sides = now.fold_side.take(self._fold, axis=1)
-            shift = sums_by(self._place, self._multiple * sides, self.n)
-            if now.is_fold_free.any():
-                lost = np.zeros((len(now.is_fold_free), self.n), dtype=bool)
-                lost |= sums_by(self._place, now.is_fold_free.take(self._fold, axis=1), self.n) > 0
-                if (lost & (np.isfinite(low) | np.isfinite(high))).any():
+            if now.is_fold_lost is not None:
+                lost = now.is_fold_lost.take(self._fold, axis=1)
+                is_asked = np.isfinite(low) | np.isfinite(high)
+                if (lost & is_asked.take(self._place, axis=1)).any():
                     raise ValueError(f"{self._name}: a folded column counts without its row")
-            low, high = low + shift, high + shift
+            shift = self._weight * now.fold_shift.take(self._fold, axis=1)
+            shift = sums_by(self._place, shift, self.n)
+            low, high = low - shift, high - shift
         return low, high
 
 
