@@ -63,6 +63,10 @@ MOST_PAIRS = 1024
 WORST_PART = 8
 """Of more violated rows this part is added, the worst ones first."""
 
+LEAST_SCALE = 2.0**-10
+"""Members whose objective is scaled by less are solved at a scale near 1: the solver's tolerances
+are absolute, and costs of a plan that is reached once in a million times would be below them."""
+
 
 @dataclass(frozen=True)
 class NodePoint:
@@ -128,15 +132,17 @@ class _Change:
 class _Run:
     """Points solved one after the other, and what the model is brought to for each of them.
 
-    now, members : numbers of the members, together and one by one; bounds, costs, sides : of the
-    model's columns and rows; fold_low, fold_high (k or 1, n_fold), lazy_low, lazy_high (k or 1,
-    n_lazy): sides beyond which a row is added; primal (k, n_model_col), y (k, n_col): the points
-    found, in the columns of the model and of the program
+    now, members : numbers of the members, together and one by one; factors (k,) : of the
+    objective, as the model has it; bounds, costs, sides : of the model's columns and rows;
+    fold_low, fold_high (k or 1, n_fold), lazy_low, lazy_high (k or 1, n_lazy): sides beyond which
+    a row is added; primal (k, n_model_col), y (k, n_col): the points found, in the columns of the
+    model and of the program
     """
 
     points: Sequence[NodePoint]
     now: Now
     members: Sequence[Numbers]
+    factors: FloatArray
     bounds: _Change
     costs: _Change
     sides: _Change
@@ -190,6 +196,8 @@ class NodeModel:
         self._lazy = LazyRows(np.flatnonzero(program.is_lazy), self._matrix)
         first = cache.get(i_family, 0)
         self._differences = Differences(first, bound.table)
+        scales = [cache.get(i_family, i).scale for i in (0, family.n_member - 1)]
+        self._is_rescaled = min(scales) < LEAST_SCALE
         self._find_moving(first.in_columns)
         self._rows = ProgramRows(family.name, self._folding, self._differences)
         # The model begins at member 0; what its first point asks for is moved there.
@@ -250,7 +258,10 @@ class NodeModel:
         self._bounds = differences.bounds(columns)
         self._place_in_moving = way_back(columns, self.n_col)
         self._capacity_at = self._place_in_moving[capacities]
-        costing = np.flatnonzero(differences.column_place[kept] >= 0)
+        is_costing = differences.column_place[kept] >= 0
+        if self._is_rescaled:
+            is_costing |= differences.first.cost[kept] != 0.0
+        costing = np.flatnonzero(is_costing)
         self._costs = differences.costs(kept[costing])
         self._n_costing = len(costing)
         self._costing = np.concatenate([costing, self.n_kept + np.arange(self.n_exit)])
@@ -356,8 +367,9 @@ class NodeModel:
             dual = self._model.row_dual()
             if run.points[i].second_cost is not None:
                 result, dual = self._seconded(run, i, result, dual)
-            theta = result.col_value[self.n_kept :].copy()
-            return _Solved(result.objective, theta, dual, self._children.settled())
+            theta, factor = result.col_value[self.n_kept :].copy(), float(run.factors[i])
+            value = result.objective / factor
+            return _Solved(value, theta, dual / factor, self._children.settled())
         except SolverFailureError as failure:
             return failure
 
@@ -426,6 +438,10 @@ class NodeModel:
         cost[:, self._n_costing :] = numbers.exit_weight
         if self._theta_columns is not None:
             cost[:, self._n_costing :] += self._theta_costs.read(numbers.cost)[0]
+        factors = np.ones(n)
+        if self._is_rescaled:
+            factors = _factors(np.broadcast_to(numbers.scale, (n,)))
+            cost *= factors[:, None]
         limits = self._limits
         if limits is None:
             limits = (
@@ -438,7 +454,7 @@ class NodeModel:
         costs = _Change.between(self._costing, (self._cost,), (cost,))
         members = [numbers.part(i) for i in range(n)]
         return _Run(
-            points, now, members, bounds, costs, self._side_change(now), *limits,
+            points, now, members, factors, bounds, costs, self._side_change(now), *limits,
             np.zeros((n, self.n_kept + self.n_exit)), np.zeros((n, self.n_col)),
         )  # fmt: skip
 
@@ -747,6 +763,12 @@ def _parts(counts: Sequence[int]) -> list[slice]:
     if n:
         parts.append(slice(begin, len(counts)))
     return parts
+
+
+def _factors(scale: FloatArray) -> FloatArray:
+    """Powers of two that bring small scales near 1, so that no digit is lost; 1 for the others."""
+    exact: FloatArray = np.exp2(-np.floor(np.log2(scale)))
+    return np.where(scale < LEAST_SCALE, exact, 1.0)
 
 
 def _with_tolerance(low: FloatArray, high: FloatArray) -> tuple[FloatArray, FloatArray]:
