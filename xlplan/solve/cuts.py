@@ -624,4 +624,5 @@ class DomainBox:
             if gate_is_one:
                 total = total + slope[:, positions].max(axis=1)
             results.append(constant + total)
-        return np.minimum(results[0], results[1])
+        lower_one: FloatArray = np.minimum(results[0], results[1])
+        return lower_one

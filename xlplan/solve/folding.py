@@ -21,7 +21,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from xlplan.model.linear_program import LinearProgram
-from xlplan.solve.row_matrix import RowMatrix, sums_by
+from xlplan.solve.row_matrix import RowMatrix, sums, sums_by
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.integer]
@@ -167,7 +167,7 @@ class Folding:
                 first, more, entry = self._matrix.take(self.row[used])
                 entry = entry * np.repeat(multiple, np.diff(first))
                 index, inverse = np.unique(np.concatenate([index, more]), return_inverse=True)
-                value = np.bincount(inverse, np.concatenate([value, entry]), len(index))
+                value = sums(inverse, np.concatenate([value, entry]), len(index))
                 gone = self._fold_of_column[index]
                 stays = (gone < 0) | (self._is_late[np.maximum(gone, 0)] != is_late)
                 stays &= np.abs(value) > NOTHING * np.abs(entry).max(initial=0.0)
@@ -180,16 +180,20 @@ class Folding:
             fold_starts.append(fold_starts[-1] + sum(len(used) for used in own))
         return Expanded(
             np.array(starts),
-            _joined(indices, np.int64),
-            _joined(values, np.float64),
+            _joined_places(indices),
+            _joined_numbers(values),
             np.array(fold_starts),
-            _joined(folds, np.int64),
-            _joined(multiples, np.float64),
+            _joined_places(folds),
+            _joined_numbers(multiples),
         )
 
 
-def _joined(parts: Sequence[NDArray[np.generic]], kind: type) -> NDArray[np.generic]:
-    return np.concatenate(parts) if parts else np.zeros(0, dtype=kind)
+def _joined_places(parts: Sequence[IntArray]) -> IntArray:
+    return np.concatenate(parts) if parts else np.zeros(0, dtype=np.int64)
+
+
+def _joined_numbers(parts: Sequence[FloatArray]) -> FloatArray:
+    return np.concatenate(parts) if parts else np.zeros(0)
 
 
 @dataclass(frozen=True)
@@ -217,7 +221,7 @@ class _Inverse:
         self._group = np.zeros(n, dtype=np.int64)
         self._begin = np.zeros(n, dtype=np.int64)
         for i, (key, begins) in enumerate(starts.items()):
-            inverse = np.linalg.inv(matrices[key])
+            inverse = np.asarray(np.linalg.inv(matrices[key]), dtype=np.float64)
             inverse[np.abs(inverse) <= NOTHING * np.abs(inverse).max(initial=0.0)] = 0.0
             at = np.array(begins, dtype=np.int64)
             places = at[:, None] + np.arange(len(inverse))

@@ -503,7 +503,8 @@ class NodeModel:
     def _missed_rows(self, run: _Run, places: Sequence[int]) -> list[tuple[IntArray, IntArray]]:
         """Lazy rows, and folds whose bounds, that points of the run violate, not in the model."""
         y, none = run.y[places], np.zeros(0, dtype=np.int64)
-        rows = folds = [none] * len(places)
+        rows: list[IntArray] = [none] * len(places)
+        folds = rows
         if len(self._lazy):
             place = self._rows.of_program[self._lazy.row]
             low, high = rows_of(run.lazy_low, places), rows_of(run.lazy_high, places)
@@ -526,7 +527,8 @@ class NodeModel:
         from that in its middle), and every row makes the later solves slower.
         """
         is_out = (activity > high) | (activity < low)
-        hit, none = is_out.any(axis=1), np.zeros(0, dtype=np.int64)
+        hit: BoolArray = np.any(is_out, axis=1)
+        none = np.zeros(0, dtype=np.int64)
         chosen: list[IntArray] = []
         for i, is_hit in enumerate(hit.tolist()):
             found = is_out[i].nonzero()[0] if is_hit else none
