@@ -22,7 +22,7 @@ from xlplan.compare.standing import StandingAlternatives, against
 from xlplan.compare.study_result import StudyResult
 from xlplan.network.feeder import Feeder, build_feeder
 from xlplan.network.topology import check_no_load_voltage, check_radial
-from xlplan.outages.checks import check_islands, check_rounded_times
+from xlplan.outages.checks import check_failure_counts, check_islands, check_rounded_times
 from xlplan.outages.window_model import WindowModel, build_window_models
 from xlplan.report.json_twin import write_json
 from xlplan.report.target import put_in_place, temporary_beside
@@ -96,6 +96,7 @@ def check_raw(raw: RawStudy) -> CheckedInput:
     }
     findings += check_no_load_voltage(study, feeder, scenarios)
     findings += check_rounded_times(study)
+    findings += check_failure_counts(study, windows)
     findings += check_islands(study, feeder, scenarios)
     return CheckedInput(raw, _ordered(findings), study, feeder, windows)
 

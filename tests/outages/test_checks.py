@@ -5,14 +5,18 @@ from __future__ import annotations
 from tests.builders import (
     make_generator,
     make_outage_class,
+    make_profiles,
     make_storage,
     make_window,
+    small_study,
 )
 from tests.outages.hand_feeders import scenarios_of, town
 from xlplan.base.codes import Code
 from xlplan.base.errors import Level, Origin
 from xlplan.network.feeder import build_feeder
-from xlplan.outages.checks import check_islands, check_rounded_times
+from xlplan.outages.checks import check_failure_counts, check_islands, check_rounded_times
+from xlplan.outages.window_model import build_window_models
+from xlplan.study.study import RateBasis
 
 CLASSES = Origin("Outage assumptions", 7, {"repair_hours": "D", "switching_minutes": "E"})
 UNITS = Origin("Generators", 9, {"start_delay_minutes": "M", "grid_forming": "Q"})
@@ -78,3 +82,39 @@ def test_units_in_islands_that_nothing_forms():
     assert findings(storage=(make_storage("E", "C"),)) == []
     # Storage at B forms the island of B and C after a fault on M1: the unit can be of use.
     assert findings(storage=(make_storage("E", "B"),)) == []
+
+
+WINDOWS = Origin("Windows", 8, {"failure_multiplier": "G"})
+
+
+def counted(rate_per_year: float, n_period: int = 40, **settings: object) -> list:
+    """Findings for two lines that fail so often, in one window of hours, once a year."""
+    study = small_study(
+        outage_classes=(make_outage_class("overhead", rate_per_year),),
+        windows=(make_window(n_period=n_period, occurrences_per_year=1.0, origin=WINDOWS),),
+        profiles=make_profiles(n_period),
+        **settings,
+    )
+    return check_failure_counts(study, build_window_models(study, build_feeder(study)))
+
+
+def test_more_failures_in_a_window_than_can_be_planned_for():
+    # 2 lines, 40 of 8760 hours: 2 * 32,000 * 40 / 8760 = 292.2 failures, and 301.4 with 33,000.
+    assert counted(32_000.0) == []
+    (finding,) = counted(33_000.0)
+    assert (finding.level, finding.code) == (Level.FAULT, Code.FAILURES_TOO_MANY)
+    assert (finding.sheet, finding.cell) == ("Windows", "G8")
+    assert "301.4 failures in one occurrence" in finding.message
+    # All failures of the two lines' year in these hours: 2 * 160 = 320.
+    (finding,) = counted(160.0, rate_basis=RateBasis.ALL_YEAR)
+    assert "320 failures" in finding.message
+    assert "fair weather" in finding.hint
+    assert counted(140.0, rate_basis=RateBasis.ALL_YEAR) == []
+
+
+def test_more_failures_in_a_period_than_can_be_planned_for():
+    # An hour: 2 * 87,000 / 8760 = 19.9 failures, and 20.1 with 88,000.
+    assert counted(87_000.0, n_period=4) == []
+    (finding,) = counted(88_000.0, n_period=4)
+    assert finding.code == Code.FAILURES_TOO_MANY
+    assert "20.09 failures in one period" in finding.message

@@ -91,7 +91,7 @@ def test_multipliers_of_one_member_serve_another():
     solver = NodeSolver(graph, tables)
     state, capacity = np.array([1.0, 0.5]), np.array([4.0, 3.0, 1.0])
     outcome = solver.model(1, 0).solve(0, state, capacity)
-    cut, origin = solver.model(1, 0).shared_cuts([outcome], [np.array([1])], [1])
+    cut, origin = solver.cuts(1).shared_cuts([outcome], [np.array([1])], [1])
     assert origin.tolist() == [0]
     assert cut.member.tolist() == [1]
     rng = np.random.default_rng(3)

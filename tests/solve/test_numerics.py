@@ -14,6 +14,7 @@ from tests.builders import (
     make_generator,
     make_line,
     make_load,
+    make_measure,
     make_outage_class,
     make_profiles,
     make_storage,
@@ -21,11 +22,12 @@ from tests.builders import (
     random_study,
     small_study,
 )
+from xlplan.base.units import HOURS_PER_YEAR
 from xlplan.model.study_graph import build_study_graph
 from xlplan.model.whole_tree import build_whole_tree
 from xlplan.network.feeder import build_feeder
 from xlplan.outages.window_model import build_window_models
-from xlplan.solve.decomposition import Engine
+from xlplan.solve.decomposition import Engine, EngineOptions
 from xlplan.solve.tree import solve_tree
 from xlplan.study.study import Device
 
@@ -63,12 +65,12 @@ def far_apart_study():
     )  # fmt: skip
 
 
-def solved(study, gap=1e-3):
-    """(decomposition, tree) of a study."""
+def solved(study, gap=1e-3, n_pass=1000):
+    """(decomposition, tree, counted events) of a study."""
     feeder = build_feeder(study)
     windows = build_window_models(study, feeder)
     graph = build_study_graph(study, feeder, windows).graph
-    with Engine(graph, seed=1) as engine:
+    with Engine(graph, seed=1, options=EngineOptions(n_pass=n_pass)) as engine:
         found = engine.run(gap, enumerate_paths=True)
         counts = engine.counts()
     return found, solve_tree(build_whole_tree(study, feeder, windows)), counts
@@ -121,3 +123,27 @@ def test_the_same_study_in_other_money_is_the_same_plan(seed, factor):
     other, *_ = solved(scaled)
     assert other.cost.mean == pytest.approx(found.cost.mean * factor, rel=2e-3)
     assert np.isfinite(other.lower_bound)
+
+
+def rare_plans_study(expected):
+    """S - A - B, two windows with storage and a generator with a memory; so many failures each."""
+    rate = expected / 2 / (4 / HOURS_PER_YEAR)
+    return small_study(
+        outage_classes=(make_outage_class("overhead", rate, repair_h=1.0),),
+        generators=(make_generator("unit", "B", ramp_frac_per_period=0.5, tank_h=2.0),),
+        storage=(make_storage("battery", "A", max_new_kw=150.0, max_new_kwh=300.0),),
+        measures=(make_measure("trees", ("AB",), capital_cost=30_000.0),),
+        demand_charge_per_kw_year=50.0,
+        windows=(make_window(), make_window("night", occurrences_per_year=20.0)),
+    )
+
+
+@pytest.mark.parametrize("expected", [20.0, 70.0])
+def test_plans_that_are_hardly_ever_reached_without_a_failure(expected):
+    # No failure in the first hour has a chance of exp(-5) or exp(-17), none in three of exp(-15) or
+    # exp(-52); but plans made after a repair begin there, and then cost as much as any other.
+    found, tree, counts = solved(rare_plans_study(expected), 1e-4, n_pass=30)
+    assert found.gap_frac <= 1e-4
+    assert found.cost.mean == pytest.approx(tree.objective, rel=1e-4)
+    assert found.lower_bound <= tree.objective * (1.0 + 1e-6)
+    assert counts.get("cut not tight", 0) == 0

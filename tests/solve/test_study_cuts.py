@@ -141,7 +141,7 @@ def test_folded_network_equals_the_full_one_at_random_states(seed):
             assert (activity >= member.row_lower - slack).all()
             assert (activity <= member.row_upper + slack).all()
             # Cuts from either hold for both: the folded multipliers are of the full program.
-            cut = solvers[0].model(i_family, 0).cut_from(folded, i_member, 1).take(np.arange(1))
+            cut = solvers[0].cuts(i_family).cut_from(folded, i_member, 1).take(np.arange(1))
             reached = cut.values(state[None, :], capacity)[0]
             assert reached == pytest.approx(full.value, rel=1e-6, abs=1e-5)
 

@@ -438,7 +438,11 @@ MUTATIONS: list[tuple[str, Change, list[Found]]] = [
     (
         "400 failures a km",
         put(("Outage assumptions!C6", 400)),
-        [warning("unlikely value", "Outage assumptions!C6")],
+        # In the storm that is more than any plan can be made for.
+        [
+            warning("unlikely value", "Outage assumptions!C6"),
+            fault("failures too many", "Windows!G8"),
+        ],
     ),
     (
         "discount rate of 40 %",

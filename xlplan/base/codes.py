@@ -29,6 +29,7 @@ class Code(StrEnum):
     EXCEL_ERROR = "excel error"  # a cell with a spreadsheet error
     EXTERNAL_FORMULA = "external formula"  # a cell whose formula reads another workbook
     EXTERNAL_LINKS = "external links"  # links to other workbooks
+    FAILURES_TOO_MANY = "failures too many"  # rates beyond what a window can be planned for
     FORMULA_NOT_CALCULATED = "formula not calculated"  # a formula without a stored value
     HALF_IMPEDANCE = "half impedance"  # resistance without reactance, or the reverse
     HALF_STORE = "half store"  # power without energy, or the reverse

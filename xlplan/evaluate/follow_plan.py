@@ -647,9 +647,9 @@ class _History:
             at, heads, self._after_events(at), strict=True
         ):
             difference[i] += weight * extra
-            u = self._back(k, w)
-            if u is not None:
-                further.append((i, u, state, weight))
+            back = self._back(k, w)
+            if back is not None:
+                further.append((i, back, state, weight))
         return further
 
     def _share_out(

@@ -84,7 +84,8 @@ class Slots:
 
     def cost(self, vector: FloatArray) -> FloatArray:
         """Cost of running, (...,) from (..., n_slot)."""
-        return vector[..., : len(COST_PARTS)].sum(axis=-1)
+        total: FloatArray = vector[..., : len(COST_PARTS)].sum(axis=-1)
+        return total
 
 
 @dataclass(frozen=True)
@@ -215,7 +216,7 @@ def event_metrics(
     dt, n_window = series.period_h, series.n_period
     period = failure_period + 1 + np.arange(scenario.n_period)
     rows = period % n_window
-    out = _running(context, dispatch, rows).sum(axis=0)
+    out: FloatArray = _running(context, dispatch, rows).sum(axis=0)
     beyond = period >= n_window
     if beyond.any():
         load = series.load_kw[rows].sum(axis=1)
@@ -230,7 +231,7 @@ def event_metrics(
     out[slots.single("repair")] = scenario.repair_cost[failure_period]
     shed = dispatch.shed_kw
     missed = shed * context.keep * dt
-    clock = np.arange(scenario.n_period) * dt
+    clock = np.arange(scenario.n_period, dtype=float) * dt
     first_moment = shed.max(axis=0) * context.keep * context.first_moment
     by_load = (missed * context.event_price(clock)).sum(axis=0) + first_moment
     out[slots.single("interruption")] = by_load.sum()

@@ -148,8 +148,8 @@ def _pools(
         pools.setdefault(key, []).append(_Unit(tuple(loads), kw))
 
     if study.settings.load_control is LoadControl.BUS:
-        for i in np.flatnonzero(live):
-            add("load", [int(i)], load_kw[[i]])
+        for i in np.flatnonzero(live).tolist():
+            add("load", [i], load_kw[[i]])
     else:
         for section in np.unique(section_of_load[live]):
             loads = [int(i) for i in np.flatnonzero(live & (section_of_load == section))]

@@ -66,7 +66,7 @@ def trace_of(
         title=title,
         description=description,
         times=tuple(time_label(study.profiles.times[window.start_row + int(r)]) for r in rows),
-        hours=np.arange(n_period) * series.period_h,
+        hours=np.arange(n_period, dtype=float) * series.period_h,
         load_kw=load,
         served_kw=load - unserved,
         unserved_kw=unserved,

@@ -76,7 +76,8 @@ class LinearProgram:
         """``A y``, shape (n_row,)."""
         products = self.value * y[self.index]
         total = np.concatenate([[0.0], np.cumsum(products)])
-        return total[self.start[1:]] - total[self.start[:-1]]
+        by_row: FloatArray = total[self.start[1:]] - total[self.start[:-1]]
+        return by_row
 
     def check(self) -> None:
         """Invariants, for tests; raises AssertionError."""
@@ -176,10 +177,10 @@ class ProgramBuilder:
         self.row_upper += upper.tolist()
         self.is_lazy += [True] * n
 
-    def add_fold(self, stage: int, rows: Sequence[int], columns: Sequence[int]) -> None:
+    def add_fold(self, stage: int, rows: IntArray, columns: IntArray) -> None:
         """Says that some equality rows determine as many columns, see ``Folds``."""
         if len(rows):
-            self.folds.append((stage, [int(r) for r in rows], [int(c) for c in columns]))
+            self.folds.append((stage, rows.tolist(), columns.tolist()))
 
     def build(self, offset: float = 0.0) -> LinearProgram:
         """The program as arrays."""

@@ -70,7 +70,9 @@ def build_loads(study: Study, series: WindowSeries, section_of_load: NDArray[np.
     members: dict[tuple[object, ...], list[int]] = {}
     for i, load in enumerate(study.loads):
         if remote[i] < 1.0:
-            key = (int(section_of_load[i]), load.load_profile) if by_section else (i,)
+            key: tuple[object, ...] = (i,)
+            if by_section:
+                key = (int(section_of_load[i]), load.load_profile)
             members.setdefault(key, []).append(i)
     groups = []
     for key, loads in members.items():

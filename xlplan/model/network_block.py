@@ -115,7 +115,7 @@ def add_network(
     kw_terms: dict[int, Terms] = {}
     kvar_terms: dict[int, Terms] = {}
     low, high = V_SCALE * band_pu[0] ** 2, V_SCALE * band_pu[1] ** 2
-    for bus in np.flatnonzero(service.bus_live):
+    for bus in np.flatnonzero(service.bus_live).tolist():
         kw_terms[bus], kvar_terms[bus] = [], []
         bounds = (low, high)
         if bus in voltage_sources:
@@ -134,9 +134,9 @@ def add_network(
         box = min(rating, flow_limit_kw)
         flow_kw[line] = p = builder.add_column(f"kW {name}", -box, box)
         flow_kvar[line] = q = builder.add_column(f"kvar {name}", -box, box)
-        for terms, flow in ((kw_terms, p), (kvar_terms, q)):
-            terms[i].append((flow, -1.0))
-            terms[j].append((flow, 1.0))
+        for at_bus, flow in ((kw_terms, p), (kvar_terms, q)):
+            at_bus[i].append((flow, -1.0))
+            at_bus[j].append((flow, 1.0))
         drop_r = V_SCALE * v_sq_drop_per_kw(float(feeder.r_ohm[line]), feeder.base_kv)
         drop_x = V_SCALE * v_sq_drop_per_kw(float(feeder.x_ohm[line]), feeder.base_kv)
         boost = (1.0 + float(feeder.boost_frac[line])) ** 2

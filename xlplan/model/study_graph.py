@@ -267,7 +267,9 @@ def _event_bound(model: FeederModel, scenario: Scenario) -> FloatArray:
     """Repair and interruption of everything for the whole event, (n_period,)."""
     series, n_period, dt = model.series, model.series.n_period, model.series.period_h
     rows = np.arange(n_period)
-    bound = scenario.repair_cost + model.first_moment_price() @ series.load_kw.max(axis=0)
+    bound: FloatArray = scenario.repair_cost + model.first_moment_price() @ series.load_kw.max(
+        axis=0
+    )
     upper = model.layout.capacity_upper
     for j, service in enumerate(scenario.service):
         row = (rows + 1 + j) % n_period

@@ -420,7 +420,7 @@ def _add_dead_loads(
         offset += load @ price * series.period_h
         largest_dead = np.maximum(largest_dead, load * dead)
     first_moment = model.first_moment_price()
-    has_remote = model.loads.remote_kw.any(axis=0)
+    has_remote: BoolArray = np.any(model.loads.remote_kw, axis=0)
     for i_group, group in enumerate(model.loads.groups):
         plain = [i for i in range(len(group.loads)) if not has_remote[group.loads[i]]]
         live = [int(c.group_kw[i_group]) for c in periods if c.group_kw[i_group] >= 0]
@@ -437,20 +437,20 @@ def _add_dead_loads(
         numbers.put("col_lower", column, floor, MEMBER)
         for shed in live:
             builder.add_row(f"largest {i_group}", [(column, 1.0), (shed, -1.0)], lower=0.0)
-    for load in np.flatnonzero(has_remote & (first_moment > 0.0)):
-        top = float(series.load_kw[:, load].max()) * ROUNDING_ROOM
-        column = builder.add_column(f"largest shed {load}", 0.0, top, float(first_moment[load]))
-        numbers.put("col_lower", column, largest_dead[:, load], MEMBER)
+    for i_load in np.flatnonzero(has_remote & (first_moment > 0.0)).tolist():
+        top = float(series.load_kw[:, i_load].max()) * ROUNDING_ROOM
+        column = builder.add_column(f"largest shed {i_load}", 0.0, top, float(first_moment[i_load]))
+        numbers.put("col_lower", column, largest_dead[:, i_load], MEMBER)
         for columns in periods:
             terms = [(column, 1.0)]
             for i_group, group in enumerate(model.loads.groups):
-                if load in group.loads and columns.group_kw[i_group] >= 0:
-                    share = group.share[group.loads.index(int(load))]
+                if i_load in group.loads and columns.group_kw[i_group] >= 0:
+                    share = group.share[group.loads.index(i_load)]
                     terms.append((int(columns.group_kw[i_group]), -share))
-            if columns.remote_kw[load] >= 0:
-                terms.append((int(columns.remote_kw[load]), -1.0))
+            if columns.remote_kw[i_load] >= 0:
+                terms.append((int(columns.remote_kw[i_load]), -1.0))
             if len(terms) > 1:
-                builder.add_row(f"largest {load}", terms, lower=0.0)
+                builder.add_row(f"largest {i_load}", terms, lower=0.0)
     return offset
 
 

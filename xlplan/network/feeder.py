@@ -6,6 +6,7 @@ Lines keep their own direction (from, to): flows are signed, a boost acts at the
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -67,7 +68,7 @@ def build_feeder(study: Study) -> Feeder:
     """
     position = {bus.bus: i for i, bus in enumerate(study.buses)}
 
-    def at_bus(records: tuple, key: str = "bus") -> IntArray:
+    def at_bus(records: Sequence[object], key: str = "bus") -> IntArray:
         return np.array([position[getattr(r, key)] for r in records], dtype=np.int64)
 
     def column(name: str) -> FloatArray:

@@ -1,24 +1,75 @@
-"""Warnings about outages: times that rounding moves, islands that nothing can form.
+"""Checks of outages: times that rounding moves, islands that nothing can form, too many failures.
 
-Enters: a study, and its scenarios by window. Leaves: findings.
+Enters: a study, its scenarios or models by window. Leaves: findings.
 """
 
 from __future__ import annotations
 
 import itertools
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 
 from xlplan.base.codes import Code
 from xlplan.base.errors import Finding, Level, Origin
-from xlplan.base.units import minutes_from_hours, pct_from_frac
+from xlplan.base.units import HOURS_PER_YEAR, minutes_from_hours, pct_from_frac
 from xlplan.network.feeder import Feeder
 from xlplan.outages.records import Scenario
 from xlplan.outages.scenarios import REPAIR_SPREAD
 from xlplan.outages.service import n_period_of
-from xlplan.study.study import Study
+from xlplan.outages.window_model import WindowModel
+from xlplan.study.study import RateBasis, Study
 
 ROUNDING_WARNING_FRAC = 0.05
 """A time that rounding to whole periods moves by more than this is a warning (model.md)."""
+
+MOST_FAILURES, MOST_PER_PERIOD = 300.0, 20.0
+"""Failures that the rates of one occurrence of a window, and of one of its periods, may add up to.
+The chance of none is then 1e-130, and 2e-9; not far beyond they are 0 in floating point, and a plan
+for that would have no value."""
+
+
+def check_failure_counts(study: Study, windows: Sequence[WindowModel]) -> list[Finding]:
+    """Faults at windows whose rates add up to more failures than can be planned for.
+
+    Parameters
+    ----------
+    study : Study
+    windows : WindowModel of each window of the study
+
+    Returns
+    -------
+    list of Finding, at the window's ``failure_multiplier``
+    """
+    findings = []
+    for record, window in zip(study.windows, windows, strict=True):
+        clock = window.clock
+        by_period = clock.rate_per_year.sum(axis=1) * clock.period_h / HOURS_PER_YEAR
+        expected, highest = clock.poisson_mean(), float(by_period.max(initial=0.0))
+        if expected > MOST_FAILURES:
+            what, most = f"{expected:.4g} failures in one occurrence", MOST_FAILURES
+        elif highest > MOST_PER_PERIOD:
+            what, most = f"{highest:.4g} failures in one period", MOST_PER_PERIOD
+        else:
+            continue
+        hint = "Give failures per year, and a multiplier of 1 where they are as usual."
+        if study.settings.rate_basis is RateBasis.ALL_YEAR:
+            hint += (
+                " With rate_basis all year, all failures of a year fall into the windows listed:"
+                " add windows for the rest of the year, or take fair weather."
+            )
+        findings.append(
+            Finding(
+                level=Level.FAULT,
+                code=Code.FAILURES_TOO_MANY,
+                sheet=record.origin.sheet,
+                cell=record.origin.cell("failure_multiplier"),
+                key="failure_multiplier",
+                value=f"{record.failure_multiplier:g}",
+                message=f"the failure rates add up to {what} of window {record.window}; more than "
+                f"{most:g} cannot be planned for.",
+                hint=hint,
+            )
+        )
+    return findings
 
 
 def check_rounded_times(study: Study) -> list[Finding]:

@@ -57,7 +57,8 @@ class CutBatch:
     def values(self, states: FloatArray, capacity: FloatArray) -> FloatArray:
         """Value of each cut at its own state, (n,)."""
         state_part = np.einsum("ij,ij->i", self.state_slope, states)
-        return self.intercept + state_part + self.capacity_slope @ capacity
+        found: FloatArray = self.intercept + state_part + self.capacity_slope @ capacity
+        return found
 
 
 def joined(batches: list[CutBatch]) -> CutBatch:
@@ -232,7 +233,7 @@ class CutPool:
         self._sort()
         if known is None or not is_whole:
             bounds = np.arange(self.n_member + 1, dtype=np.int64) << GROUP_BITS
-            start = np.searchsorted(self._sorted_key, bounds)
+            start: IntArray = np.searchsorted(self._sorted_key, bounds)
             slope = self._state_slope.take(self._order, axis=0)
         else:
             start, slope = known.start, known.state_slope

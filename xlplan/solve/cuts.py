@@ -42,6 +42,11 @@ SNAP_WEIGHT = 1e-6
 """Multipliers of an exit whose sum is this close to the weight are scaled up to it."""
 
 
+NEGLIGIBLE_SCALE = 1e-9
+"""Later members of a nest whose objective is scaled by less than this share of the solved one's get
+no cut from it: beside the rest, what counts in them is below the solver's tolerances."""
+
+
 @dataclass(frozen=True)
 class ExitMultipliers:
     """Multipliers of the cuts of children that were rows of a node's program.
@@ -236,9 +241,10 @@ class DualBound:
         intercept[i_member] = first.intercept
         state_slope[i_member] = first.state_slope
         capacity_slope[i_member] = first.capacity_slope
-        these = slice(i_member, n)
+        counts = table.scale[i_member:] >= NEGLIGIBLE_SCALE * table.scale[i_member]
+        these = np.arange(i_member, n)[counts]
         return self._assembled(
-            np.arange(i_member, n),
+            these,
             intercept[these],
             state_slope[these],
             capacity_slope[these],
@@ -618,4 +624,5 @@ class DomainBox:
             if gate_is_one:
                 total = total + slope[:, positions].max(axis=1)
             results.append(constant + total)
-        return np.minimum(results[0], results[1])
+        lower_one: FloatArray = np.minimum(results[0], results[1])
+        return lower_one

@@ -188,7 +188,8 @@ class Engine:
         """What the cuts know about a node's value at some states, (n,), from (n, n_state)."""
         lower = float(self.tables.families[family].value_lower[member])
         values = [self.pools[family].value(member, state, capacity) for state in states]
-        return np.maximum(np.array(values, dtype=float), lower)
+        found: FloatArray = np.maximum(np.array(values, dtype=float), lower)
+        return found
 
     def solve_nodes(
         self,

@@ -281,7 +281,7 @@ def _times(blocks: FloatArray, matrix: FloatArray) -> FloatArray:
 
 
 def _cleaned_inverse(matrix: FloatArray) -> FloatArray:
-    inverse: FloatArray = np.linalg.inv(matrix)
+    inverse: FloatArray = np.asarray(np.linalg.inv(matrix), dtype=np.float64)
     inverse[np.abs(inverse) <= NOTHING * np.abs(inverse).max(initial=0.0)] = 0.0
     return inverse
 

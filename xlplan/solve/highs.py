@@ -37,7 +37,11 @@ FACE_TOLERANCE = 1e-7
 _ROWWISE = int(highspy.MatrixFormat.kRowwise)
 _MINIMISE = int(highspy.ObjSense.kMinimize)
 
-_KEPT: dict[str, object] = {"solver": "simplex", "simplex_strategy": 1, "presolve": "off"}
+_KEPT: dict[str, bool | float | str] = {
+    "solver": "simplex",
+    "simplex_strategy": 1,
+    "presolve": "off",
+}
 """Options of kept models: presolve would throw the basis away."""
 
 _TERMINATIONS = {
@@ -57,16 +61,16 @@ _TERMINATIONS = {
 }
 
 
-class _QuietHighs(highspy.Highs):  # type: ignore[misc]
+class _QuietHighs(highspy.Highs):
     """Turns output off before anything else: the wrapper's callbacks print a banner."""
 
     def enableCallbacks(self) -> None:
         self.setOptionValue("output_flag", False)
 
 
-def new_highs(**options: object) -> highspy.Highs:
+def new_highs(**options: bool | float | str) -> highspy.Highs:
     """HiGHS object without output, on one thread."""
-    highs = _QuietHighs()
+    highs = _QuietHighs()  # type: ignore[no-untyped-call]  # highspy leaves it without types
     # One value of threads per process: mixing them makes later runs fail silently.
     for name, value in {"output_flag": False, "threads": 1, **options}.items():
         if highs.setOptionValue(name, value) != highspy.HighsStatus.kOk:
@@ -154,7 +158,10 @@ class KeptModel:
     def set_row_bounds(self, rows: IntArray, lower: FloatArray, upper: FloatArray) -> None:
         """New sides of some rows."""
         if len(rows):
-            self._highs.changeRowsBounds(len(rows), _int32(rows), _float(lower), _float(upper))
+            # The stubs of highspy leave this one out.
+            self._highs.changeRowsBounds(  # type: ignore[attr-defined]
+                len(rows), _int32(rows), _float(lower), _float(upper)
+            )
 
     def set_coefficients(
         self, rows: Sequence[int], columns: Sequence[int], values: Sequence[float]
@@ -339,7 +346,7 @@ def _read_result(
     )
 
 
-def _vector(values: list[float]) -> FloatArray:
+def _vector(values: list[float] | FloatArray) -> FloatArray:
     """A list of floats as an array; quicker than ``np.asarray`` for that."""
     return np.fromiter(values, float, len(values))
 
@@ -364,7 +371,7 @@ def solve_program(
     SolveResult; for a MILP ``bound`` is the proven dual bound, not the incumbent
     """
     is_mip = bool(program.is_integer.any())
-    options: dict[str, object] = {}
+    options: dict[str, bool | float | str] = {}
     if is_mip:
         options = {"mip_rel_gap": float(gap_frac), "mip_abs_gap": 1e-9}
     if time_limit_s is not None:

@@ -321,8 +321,12 @@ class MemberTable:
         part = self._part
         row = self._series.take(members, slice(0, part["patch_value"].stop))
         return Numbers(
-            *(row[:, part[kind]] for kind in ("cost", "col_lower", "col_upper")),
-            *(row[:, part[kind]] for kind in ("row_lower", "row_upper", "patch_value")),
+            row[:, part["cost"]],
+            row[:, part["col_lower"]],
+            row[:, part["col_upper"]],
+            row[:, part["row_lower"]],
+            row[:, part["row_upper"]],
+            row[:, part["patch_value"]],
             self._exit_weight[members],
             self._exit_child[members],
             self._exit_child_if_gated[members],

@@ -1,9 +1,9 @@
 """One family's linear program kept warm: members, states and capacities change, the basis stays.
 
-Enter: states, capacities, the cuts of the children. Leave: ``NodeOutcome``, and cuts of the node's
-own value. Folded columns are left out of the program (``folding.py``). Three things are left out at
-first and added where the solution violates them: lazy rows and the bounds of folded columns
-(``node_rows.py``), the cuts of the children, and the lifting of a gated exit's cuts
+Enter: states, capacities, the cuts of the children. Leaves: ``NodeOutcome``, from whose multipliers
+``node_cuts.py`` makes cuts. Folded columns are left out of the program (``folding.py``). Three
+things are left out at first and added where the solution violates them: lazy rows and the bounds of
+folded columns (``node_rows.py``), the cuts of the children, and the lifting of a gated exit's cuts
 (``node_children.py``).
 
 What moves the model from point to point is worked out for a whole run of points, and so is what
@@ -21,8 +21,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from xlplan.model.value_graph import ValueGraph
-from xlplan.solve.cut_pool import CutBatch, CutPool, joined
-from xlplan.solve.cuts import ChildMultipliers, DualBound, ExitMultipliers
+from xlplan.solve.cut_pool import CutPool
+from xlplan.solve.cuts import DualBound, ExitMultipliers
 from xlplan.solve.folding import Folding
 from xlplan.solve.highs import FEASIBILITY_TOLERANCE, KeptModel, SolverFailureError
 from xlplan.solve.member_cache import MemberCache
@@ -57,11 +57,12 @@ work there, and solving a point again for its rows costs much."""
 MOST_PREPARED, FEW_PREPARED = 64, 8
 """So many points are prepared together, the few in such programs, for the sake of memory."""
 
-MOST_PAIRS = 1024
-"""So many cuts of other members are made in one pass over arrays."""
-
 WORST_PART = 8
 """Of more violated rows this part is added, the worst ones first."""
+
+LEAST_SCALE = 2.0**-10
+"""Members whose objective is scaled by less are solved at a scale near 1: the solver's tolerances
+are absolute, and costs of a plan that is reached once in a million times would be below them."""
 
 
 @dataclass(frozen=True)
@@ -141,15 +142,17 @@ def _beside(left: tuple[FloatArray, ...], right: tuple[FloatArray, ...]) -> tupl
 class _Run:
     """Points solved one after the other, and what the model is brought to for each of them.
 
-    now, members : numbers of the members, together and one by one; bounds, costs, sides : of the
-    model's columns and rows; fold_low, fold_high (k or 1, n_fold), lazy_low, lazy_high (k or 1,
-    n_lazy): sides beyond which a row is added; primal (k, n_model_col), y (k, n_col): the points
-    found, in the columns of the model and of the program
+    now, members : numbers of the members, together and one by one; factors (k,) : of the
+    objective, as the model has it; bounds, costs, sides : of the model's columns and rows;
+    fold_low, fold_high (k or 1, n_fold), lazy_low, lazy_high (k or 1, n_lazy): sides beyond which
+    a row is added; primal (k, n_model_col), y (k, n_col): the points found, in the columns of the
+    model and of the program
     """
 
     points: Sequence[NodePoint]
     now: Now
     members: Sequence[Numbers]
+    factors: FloatArray
     bounds: _Change
     costs: _Change
     sides: _Change
@@ -185,7 +188,7 @@ class NodeModel:
     ) -> None:
         family = graph.families[i_family]
         program = family.program
-        self.cache, self.pools = cache, pools
+        self.cache = cache
         self.i_family, self.family, self.table = i_family, family, tables.families[i_family]
         self.bound = bound
         self.n_col, self.n_exit = program.n_col, len(family.exit_gate)
@@ -203,6 +206,8 @@ class NodeModel:
         self._lazy = LazyRows(np.flatnonzero(program.is_lazy), self._matrix)
         first = cache.get(i_family, 0)
         self._differences = Differences(first, bound.table)
+        scales = [cache.get(i_family, i).scale for i in (0, family.n_member - 1)]
+        self._is_rescaled = min(scales) < LEAST_SCALE
         self._find_moving(first.in_columns)
         self._rows = ProgramRows(family.name, self._folding, self._differences)
         # The model begins at member 0; what its first point asks for is moved there.
@@ -263,7 +268,10 @@ class NodeModel:
         self._bounds = differences.bounds(columns)
         self._place_in_moving = way_back(columns, self.n_col)
         self._capacity_at = self._place_in_moving[capacities]
-        costing = np.flatnonzero(differences.column_place[kept] >= 0)
+        is_costing = differences.column_place[kept] >= 0
+        if self._is_rescaled:
+            is_costing |= differences.first.cost[kept] != 0.0
+        costing = np.flatnonzero(is_costing)
         self._costs = differences.costs(kept[costing])
         self._n_costing = len(costing)
         self._costing = np.concatenate([costing, self.n_kept + np.arange(self.n_exit)])
@@ -369,8 +377,9 @@ class NodeModel:
             dual = self._model.row_dual()
             if run.points[i].second_cost is not None:
                 result, dual = self._seconded(run, i, result, dual)
-            theta = result.col_value[self.n_kept :].copy()
-            return _Solved(result.objective, theta, dual, self._children.settled())
+            theta, factor = result.col_value[self.n_kept :].copy(), float(run.factors[i])
+            value = result.objective / factor
+            return _Solved(value, theta, dual / factor, self._children.settled())
         except SolverFailureError as failure:
             return failure
 
@@ -439,6 +448,10 @@ class NodeModel:
         cost[:, self._n_costing :] = numbers.exit_weight
         if self._theta_columns is not None:
             cost[:, self._n_costing :] += self._theta_costs.read(numbers.cost)[0]
+        factors = np.ones(n)
+        if self._is_rescaled:
+            factors = _factors(np.broadcast_to(numbers.scale, (n,)))
+            cost *= factors[:, None]
         limits = self._limits
         if limits is None:
             limits = (
@@ -451,7 +464,7 @@ class NodeModel:
         costs = _Change.between(self._costing, (self._cost,), (cost,))
         members = [numbers.part(i) for i in range(n)]
         return _Run(
-            points, now, members, bounds, costs, self._side_change(now), *limits,
+            points, now, members, factors, bounds, costs, self._side_change(now), *limits,
             np.zeros((n, self.n_kept + self.n_exit)), np.zeros((n, self.n_col)),
         )  # fmt: skip
 
@@ -500,7 +513,8 @@ class NodeModel:
     def _missed_rows(self, run: _Run, places: Sequence[int]) -> list[tuple[IntArray, IntArray]]:
         """Lazy rows, and folds whose bounds, that points of the run violate, not in the model."""
         y, none = run.y[places], np.zeros(0, dtype=np.int64)
-        rows = folds = [none] * len(places)
+        rows: list[IntArray] = [none] * len(places)
+        folds = rows
         if len(self._lazy):
             place = self._rows.of_program[self._lazy.row]
             low, high = rows_of(run.lazy_low, places), rows_of(run.lazy_high, places)
@@ -523,7 +537,8 @@ class NodeModel:
         from that in its middle), and every row makes the later solves slower.
         """
         is_out = (activity > high) | (activity < low)
-        hit, none = is_out.any(axis=1), np.zeros(0, dtype=np.int64)
+        hit: BoolArray = np.any(is_out, axis=1)
+        none = np.zeros(0, dtype=np.int64)
         chosen: list[IntArray] = []
         for i, is_hit in enumerate(hit.tolist()):
             found = is_out[i].nonzero()[0] if is_hit else none
@@ -609,138 +624,6 @@ class NodeModel:
             )
         return [one for one in outcomes if one is not None]
 
-    def cuts_from(
-        self, outcomes: Sequence[NodeOutcome], members: Sequence[int], groups: Sequence[int]
-    ) -> tuple[CutBatch, IntArray]:
-        """Cuts of solved members, and of later ones of a nested family.
-
-        Returns
-        -------
-        the cuts, and the position of each outcome's own among them, (n_outcome,)
-        """
-        if self.bound.is_nested or self.bound.table is None:
-            parts = [
-                self._cut_alone(outcome, member, group)
-                for outcome, member, group in zip(outcomes, members, groups, strict=True)
-            ]
-            lengths = [len(part) for part in parts]
-            return joined(parts), np.cumsum([0, *lengths[:-1]])
-        n = np.arange(len(outcomes))
-        exits = [outcome.exits for outcome in outcomes]
-        children = ChildMultipliers(
-            np.repeat(n, [len(e.exit) for e in exits]),
-            *(
-                np.concatenate([getattr(e, name) for e in exits])
-                for name in ("exit", "pi", "intercept", "state_slope", "capacity_slope")
-            ),
-        )
-        found = self.bound.cuts_of_pairs(
-            np.array([o.pi for o in outcomes]), n, np.array(members), children, np.array(groups)
-        )
-        assert found is not None
-        cuts, is_valid = found
-        if is_valid.all():
-            return cuts, n
-        parts = [
-            cuts.take(n[i : i + 1])
-            if is_valid[i]
-            else self._cut_alone(outcomes[i], members[i], groups[i])
-            for i in n.tolist()
-        ]
-        return joined(parts), n
-
-    def cut_from(self, outcome: NodeOutcome, i_member: int, group: int) -> CutBatch:
-        """The cut of the solved member, first, and of later ones of a nested family."""
-        return self.cuts_from([outcome], [i_member], [group])[0]
-
-    def _cut_alone(self, outcome: NodeOutcome, i_member: int, group: int) -> CutBatch:
-        member = self.cache.get(self.i_family, i_member)
-        if self.bound.is_nested:
-            return self.bound.nested_cuts(member, i_member, outcome.pi, outcome.exits, group)
-        return self.bound.cut(member, outcome.pi, outcome.exits, i_member, group)
-
-    def shared_cuts(
-        self, outcomes: Sequence[NodeOutcome], shared: Sequence[IntArray], groups: Sequence[int]
-    ) -> tuple[CutBatch, IntArray] | None:
-        """Cuts of other members from the multipliers of solved ones; None where there are none.
-
-        The multipliers of children's cuts go to the same-numbered cuts of the other's children;
-        members that have none of that number are left out.
-
-        Parameters
-        ----------
-        outcomes, groups : solved nodes, and the numbers of their cuts
-        shared : per outcome, members (n,) for which its multipliers are tried
-
-        Returns
-        -------
-        the cuts, and the outcome that each came from, (n_cut,)
-        """
-        if self.bound.table is None:
-            return None
-        batches, origins = [], []
-        for part in _parts([len(members) for members in shared]):
-            found = self._shared_part(outcomes[part], shared[part], groups[part])
-            if found is not None:
-                batches.append(found[0])
-                origins.append(found[1] + part.start)
-        return (joined(batches), np.concatenate(origins)) if batches else None
-
-    def _shared_part(
-        self, outcomes: Sequence[NodeOutcome], shared: Sequence[IntArray], groups: Sequence[int]
-    ) -> tuple[CutBatch, IntArray] | None:
-        table = self.bound.table
-        assert table is not None
-        counts = np.array([len(members) for members in shared])
-        origin = np.repeat(np.arange(len(outcomes)), counts)
-        members = np.concatenate(shared)
-        # One entry for each pair of a member and a child's cut of the outcome it shares.
-        n_cut = np.array([len(o.exits.exit) for o in outcomes])
-        n_entry = n_cut[origin]
-        pair = np.repeat(np.arange(len(members)), n_entry)
-        first = np.cumsum(n_entry) - n_entry
-        at = np.arange(len(pair)) - first[pair] + (np.cumsum(n_cut) - n_cut)[origin[pair]]
-        exits = [o.exits for o in outcomes]
-        exit_ = np.concatenate([e.exit for e in exits])[at]
-        pi = np.concatenate([e.pi for e in exits])[at]
-        intercept = np.concatenate([e.intercept for e in exits])[at]
-        state_slope = np.concatenate([e.state_slope for e in exits])[at]
-        capacity_slope = np.concatenate([e.capacity_slope for e in exits])[at]
-        kept = np.ones(len(members), dtype=bool)
-        if not self.table.is_fixed and len(pair):
-            number = np.concatenate([o.exit_group for o in outcomes])[at]
-            weight, child = table.exits(members)
-            weight, child = weight[pair, exit_], child[pair, exit_]
-            # Without a child the multiplier is scaled to nothing.
-            has_child = (child[:, 1] >= 0) & (weight > 0.0)
-            for i_child in np.unique(child[has_child, 0]).tolist():
-                pool = self.pools[i_child]
-                here = (has_child & (child[:, 0] == i_child)).nonzero()[0]
-                position = pool.positions_of(child[here, 1], number[here])
-                kept[pair[here[position < 0]]] = False
-                intercept[here] = pool.intercept[position]
-                state_slope[here] = pool.state_slope[position]
-                capacity_slope[here] = pool.capacity_slope[position]
-        if not kept.any():
-            return None
-        new_pair = np.cumsum(kept) - 1
-        stays = kept[pair]
-        children = ChildMultipliers(
-            new_pair[pair[stays]],
-            exit_[stays],
-            pi[stays],
-            intercept[stays],
-            state_slope[stays],
-            capacity_slope[stays],
-        )
-        origin, members = origin[kept], members[kept]
-        found = self.bound.cuts_of_pairs(
-            np.array([o.pi for o in outcomes]), origin, members, children, np.array(groups)[origin]
-        )
-        assert found is not None
-        cuts, is_valid = found
-        return (cuts, origin) if is_valid.all() else (cuts.take(is_valid), origin[is_valid])
-
     def rest(self) -> None:
         """Gives back the solver's working memory until the next solve."""
         self._model.rest()
@@ -750,17 +633,10 @@ class NodeModel:
         self._model.forget_basis()
 
 
-def _parts(counts: Sequence[int]) -> list[slice]:
-    """Consecutive outcomes whose pairs are worked out together: arrays of a bounded size."""
-    parts, begin, n = [], 0, 0
-    for i, count in enumerate(counts):
-        if n and n + count > MOST_PAIRS:
-            parts.append(slice(begin, i))
-            begin, n = i, 0
-        n += count
-    if n:
-        parts.append(slice(begin, len(counts)))
-    return parts
+def _factors(scale: FloatArray) -> FloatArray:
+    """Powers of two that bring small scales near 1, so that no digit is lost; 1 for the others."""
+    exact: FloatArray = np.exp2(-np.floor(np.log2(scale)))
+    return np.where(scale < LEAST_SCALE, exact, 1.0)
 
 
 def _with_tolerance(low: FloatArray, high: FloatArray) -> tuple[FloatArray, FloatArray]:

@@ -74,8 +74,8 @@ class Differences:
     def __init__(self, first: Member, table: MemberTable | None) -> None:
         self.first = first
         if table is None:
-            self.column_place = np.arange(len(first.cost))
-            self.row_place = np.arange(len(first.row_lower))
+            self.column_place: IntArray = np.arange(len(first.cost))
+            self.row_place: IntArray = np.arange(len(first.row_lower))
         else:
             self.column_place = way_back(table.columns, len(first.cost))
             self.row_place = way_back(table.rows, len(first.row_lower))

@@ -22,6 +22,7 @@ from xlplan.solve.cuts import DualBound
 from xlplan.solve.highs import SolverFailureError
 from xlplan.solve.member_cache import MemberCache
 from xlplan.solve.node import DUAL_TOLERANCE, NodeModel, NodeOutcome, NodePoint
+from xlplan.solve.node_cuts import NodeCuts
 from xlplan.solve.tables import GraphTables, clip_states
 
 FloatArray = NDArray[np.float64]
@@ -110,6 +111,7 @@ class NodeSolver:
         self.counts: Counter[str] = Counter()
         self._models: dict[tuple[int, int], NodeModel] = {}
         self._bounds: dict[int, DualBound] = {}
+        self._cuts: dict[int, NodeCuts] = {}
         self._do_models_rest = tables.n_row > REST_ROWS
 
     def add_cuts(self, batches: Sequence[CutBatch]) -> None:
@@ -138,6 +140,14 @@ class NodeSolver:
                 self.graph, self.tables, self.cache, self.pools, i_family, self.bound(i_family)
             )
         return self._models[key]
+
+    def cuts(self, i_family: int) -> NodeCuts:
+        """What makes the cuts of a family's nodes."""
+        if i_family not in self._cuts:
+            is_fixed = self.tables.families[i_family].is_fixed
+            bound = self.bound(i_family)
+            self._cuts[i_family] = NodeCuts(i_family, bound, self.cache, self.pools, is_fixed)
+        return self._cuts[i_family]
 
     def solve(self, request: NodeRequest, measure: Measure | None = None) -> NodeSolution:
         """One node."""
@@ -199,7 +209,8 @@ class NodeSolver:
         states: FloatArray,
     ) -> CutBatch:
         """Cuts of nodes and of others by sharing; a cut far off the objective is counted."""
-        cuts, places = model.cuts_from(
+        maker = self.cuts(model.i_family)
+        cuts, places = maker.cuts_from(
             outcomes, [r.member for r in requests], [r.group for r in requests]
         )
         capacities = np.array([r.capacity for r in requests])
@@ -223,7 +234,7 @@ class NodeSolver:
             i for i, r in enumerate(requests) if r.share is not None and len(r.share.members)
         ]
         shares = [requests[i].share for i in sharing]
-        shared = model.shared_cuts(
+        shared = maker.shared_cuts(
             [outcomes[i] for i in sharing],
             [share.members for share in shares if share is not None],
             [requests[i].group for i in sharing],

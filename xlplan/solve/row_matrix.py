@@ -36,7 +36,7 @@ class RowMatrix:
         entries = self.entries(rows)
         counts = self.start[rows + 1] - self.start[rows]
         weights = self.value[entries] * np.repeat(pi, counts)
-        return np.bincount(self.index[entries], weights, self.n_col)
+        return sums(self.index[entries], weights, self.n_col)
 
     def take(self, rows: IntArray) -> tuple[IntArray, IntArray, FloatArray]:
         """Some rows as start, index, value."""
