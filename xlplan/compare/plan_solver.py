@@ -70,6 +70,9 @@ saving is counted): how much better they could still be run must be small beside
 BRIEF_TARGET = 0.5
 """The same for a brief wish that does not say how near the best plan is near enough."""
 
+DEMAND_CLOSENESS = 1e-7
+"""Share of the cost to which first stage and roots agree on the demand limit of a plan."""
+
 MOST_LOOKS = 8
 """Parts of the events that a point's search looks at before the plan is followed."""
 
@@ -322,6 +325,32 @@ class PlanSolver:
             gap_frac=gap,
         )
 
+    def _with_demand_settled(
+        self, wish: Wish, found: DecompositionResult, deadline: float
+    ) -> DecompositionResult:
+        """The plan with the demand limit that goes with its purchases.
+
+        Within the gap the limit may lie a little below the peak, and the first plan then sheds
+        load in normal service that nobody means to shed. First stage and roots are made to agree
+        closely with the purchases given, which takes no further look at events.
+        """
+        if self.study.settings.demand_charge_per_kw_year <= 0.0:
+            return found
+        first_stage = self.graph.first_stage
+        bounds = first_stage.fixed(
+            first_stage.bounds(None, wish.price_list),
+            self.study,
+            read_purchases(first_stage, found.x),
+        )
+        closeness = DEMAND_CLOSENESS * abs(found.cost.mean)
+        settled = self._proposed(bounds, closeness, 0, deadline)
+        return replace(
+            found,
+            x=settled.x,
+            capacities=settled.capacities,
+            first_stage_cost=settled.first_stage_cost,
+        )
+
     def _limit_s(self, wish: Wish) -> float:
         limit_s = self.options.time_limit_h * SECONDS_PER_HOUR
         return limit_s if wish.limit_s is None else min(limit_s, wish.limit_s)
@@ -565,6 +594,7 @@ class PlanSolver:
                 found = self._without_remnants(
                     self.graph, self.engine, bounds, found, inner, deadline
                 )
+            found = self._with_demand_settled(wish, found, deadline)
             self.on_progress(Progress(name, "following the plan", bound))
             follow = self._follower(self.graph, self.engine).follow(
                 found.capacities[0], samples, self.options.seed
