@@ -556,6 +556,70 @@ def test_two_files_under_one_name(tmp_path, capsys):
     assert not both.exists()
 
 
+@pytest.mark.parametrize("words", [("solve", "--json"), ("solve", "--log"), ("check", "--json")])
+def test_a_workbook_is_never_replaced_by_a_text(tmp_path, capsys, words):
+    study = write_study(tmp_path / "study.xlsx", 4)
+    other = tmp_path / "other.xlsx"
+    shutil.copy(study, other)
+    before = other.read_bytes()
+    command, option = words
+    assert main([command, str(study), option, str(other)]) == 1
+    assert "other.xlsx" in capsys.readouterr().err
+    assert other.read_bytes() == before
+    assert sorted(p.name for p in tmp_path.iterdir()) == ["other.xlsx", "study.xlsx"]
+
+
+def test_results_are_named_as_a_workbook(tmp_path, capsys):
+    """A workbook under another ending does not open."""
+    study = write_study(tmp_path / "study.xlsx", 4)
+    assert main(["solve", str(study), "-o", str(tmp_path / "results.txt")]) == 1
+    assert "should end in .xlsx" in capsys.readouterr().err
+    assert list(tmp_path.iterdir()) == [study]
+
+
+@pytest.mark.parametrize(
+    ("option", "typed", "said"),
+    [
+        ("--gap", "abc", "'abc' is not a number"),
+        ("--time-limit", "-1", "-1 is not above 0"),
+        ("--memory", "inf", "inf is without limit"),
+        ("--gap", "nan", "nan is not above 0"),
+        ("--workers", "1.5", "'1.5' is not a whole number"),
+        ("--seed", "x", "'x' is not a whole number"),
+    ],
+)
+def test_wrong_numbers_are_told_in_plain_words(capsys, option, typed, said):
+    with pytest.raises(SystemExit) as stopped:
+        main(["solve", "study.xlsx", option, typed])
+    assert stopped.value.code == 1
+    told = capsys.readouterr().err
+    assert f"argument {option}: {said}" in told
+    assert "_" not in told
+
+
+def test_a_fault_of_our_own_is_one_plain_line_and_the_rest_in_the_log(tmp_path):
+    """In a process of its own: what the terminal shows is more than what is printed."""
+    study = write_study(tmp_path / "study.xlsx", 4)
+    program = (
+        "import sys; import xlplan.cli as cli; cli.solve_study = None; "
+        "sys.exit(cli.main(sys.argv[1:]))"
+    )
+    log = tmp_path / "run.log"
+    for more in ((), ("--log", str(log))):
+        run = subprocess.run(
+            [sys.executable, "-c", program, "solve", str(study), *more],
+            capture_output=True,
+            text=True,
+            cwd=ROOT,
+            check=False,
+        )
+        assert run.returncode == 1
+        lines = run.stderr.strip().splitlines()
+        assert len(lines) == 1
+        assert lines[0].startswith("xlplan: something went wrong inside the program")
+    assert "Traceback" in log.read_text("utf-8")
+
+
 @pytest.mark.parametrize("command", ["check", "solve"])
 def test_a_folder_is_no_study(tmp_path, capsys, monkeypatch, command):
     monkeypatch.chdir(tmp_path)

@@ -50,6 +50,8 @@ from xlplan.workbook.template import write_template
 
 DONE, FAILED, UNUSABLE, STOPPED = 0, 1, 2, 3
 
+WORKBOOK_SUFFIXES = frozenset({".xlsx", ".xlsm", ".xlsb", ".xls", ".ods"})
+
 _LOG = logging.getLogger("xlplan")
 
 
@@ -89,8 +91,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     except KeyboardInterrupt:
         print("xlplan: stopped before there was a plan.", file=sys.stderr)
         return FAILED
-    except Exception as error:  # A fault of our own: one plain line, the rest to the log.
-        _LOG.error("%s", traceback.format_exc())
+    except Exception as error:  # A fault of our own: one plain line, the rest is in the log.
         detail = f"{type(error).__name__}: {error}".splitlines()[0]
         print(
             f"xlplan: something went wrong inside the program ({detail}). "
@@ -163,24 +164,36 @@ def build_parser() -> argparse.ArgumentParser:
 
 
 def _positive(text: str) -> float:
-    value = float(text)
-    if not 0.0 < value < float("inf"):
+    try:
+        value = float(text)
+    except ValueError:
+        raise argparse.ArgumentTypeError(f"'{text}' is not a number") from None
+    if value == float("inf"):
+        raise argparse.ArgumentTypeError(f"{text} is without limit; leave the option out for that")
+    if not value > 0.0:
         raise argparse.ArgumentTypeError(f"{text} is not above 0")
     return value
 
 
 def _count(text: str) -> int:
-    value = int(text)
+    value = _integer(text)
     if value < 1:
         raise argparse.ArgumentTypeError(f"{text} is not at least 1")
     return value
 
 
 def _whole(text: str) -> int:
-    value = int(text)
+    value = _integer(text)
     if value < 0:
         raise argparse.ArgumentTypeError(f"{text} is below 0")
     return value
+
+
+def _integer(text: str) -> int:
+    try:
+        return int(text)
+    except ValueError:
+        raise argparse.ArgumentTypeError(f"'{text}' is not a whole number") from None
 
 
 # -- commands ----------------------------------------------------------------------------------
@@ -204,8 +217,6 @@ def _template(options: argparse.Namespace) -> int:
 
 def _check(options: argparse.Namespace) -> int:
     mark: Path | None = options.mark
-    if mark is not None and mark.suffix.lower() != ".xlsx":
-        raise PathError(f"'{mark}' should end in .xlsx.")
     for path in (mark, options.json):
         if path is not None:
             check_target(path, options.study)
@@ -354,7 +365,8 @@ def _cores() -> int:
 
 
 def _check_paths(options: argparse.Namespace) -> None:
-    """Raises PathError for a study that is a folder, or two files to write under one name.
+    """Raises PathError for a study that is a folder, two files to write under one name, or a name
+    that says another kind of file.
 
     Called before the log is opened: opening it empties whatever it names.
     """
@@ -370,6 +382,13 @@ def _check_paths(options: argparse.Namespace) -> None:
             raise PathError(f"'{target}' is the study itself; it is never written to.")
         if any(_is_same_file(target, other) for other in targets[:i]):
             raise PathError(f"'{target}' is named for two different files; give each its own.")
+    for path in (getattr(options, "output", None), getattr(options, "mark", None)):
+        if path is not None and path.suffix.lower() != ".xlsx" and not path.is_dir():
+            raise PathError(f"'{path}' should end in .xlsx.")
+    for path in (getattr(options, "json", None), getattr(options, "log", None)):
+        # Both are replaced without asking; a workbook of the user's must not be.
+        if path is not None and path.suffix.lower() in WORKBOOK_SUFFIXES:
+            raise PathError(f"'{path}' is the name of a workbook, and this file is none.")
 
 
 def _is_same_file(one: Path, other: Path) -> bool:
@@ -553,6 +572,12 @@ def _logged(path: Path | None) -> Iterator[None]:
     root.setLevel(logging.DEBUG)
     try:
         yield
+    except XlplanError:
+        raise
+    except Exception:
+        # While the file is still there to take it; without one it would go to the terminal.
+        _LOG.error("%s", traceback.format_exc())
+        raise
     finally:
         root.setLevel(level)
         root.removeHandler(handler)

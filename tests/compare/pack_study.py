@@ -89,10 +89,12 @@ def alternative(name: str, **changes: object) -> Alternative:
     return Alternative(alternative=name, **{**plain, **changes})  # type: ignore[arg-type]
 
 
-def solver(study: Study, method: str = "decomposed", **more: object) -> StandingAlternatives:
-    """Solver of a study to a close gap."""
+def solver(
+    study: Study, method: str = "decomposed", gap_frac: float = GAP, **more: object
+) -> StandingAlternatives:
+    """Solver of a study to a close gap, unless said otherwise."""
     feeder = build_feeder(study)
-    options = SolveOptions(method=method, gap_target_frac=GAP)
+    options = SolveOptions(method=method, gap_target_frac=gap_frac)
     windows = build_window_models(study, feeder)
     return StandingAlternatives(study, feeder, windows, options, **more)  # type: ignore[arg-type]
 

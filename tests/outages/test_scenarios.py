@@ -307,6 +307,8 @@ def test_a_generator_that_fails_to_start_has_its_own_copy():
     feeder = build_feeder(study)
     failed = by_name(study)["Section of bus B: overhead fault, 2 h, G does not start"]
     assert not any(period.generator_live[0] for period in failed.service)
+    started = by_name(study)["Section of bus B: overhead fault, 2 h"]
+    assert failed.what_fails == f"{started.what_fails}, G does not start"
     assert not any(period.bus_live[feeder.bus_ids.index("C")] for period in failed.service)
     assert dead_buses(feeder, failed.stages[0]) == "B"  # dead by the fault itself: B alone
 

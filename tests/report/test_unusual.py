@@ -43,3 +43,14 @@ def test_a_plan_kept_beyond_the_budget_is_not_open_to_the_search(
     words = [str(cell) for row in book["Checks"].iter_rows(values_only=True) for cell in row]
     assert case.kept.capital_cost > 0.0
     assert any(word.startswith("Plan made anew, ") for word in words) == is_open
+
+
+@pytest.mark.parametrize("budget", [None, 1_500_000.0])
+def test_a_kept_plan_beyond_the_budget_is_explained_where_there_is_one(
+    result: StudyResult, tmp_path: Path, budget: float | None
+) -> None:
+    changed = replace(result, capital_budget=budget)
+    path = write_results(changed, tmp_path / "o.xlsx", False, tmp_path / "s.xlsx")
+    book = load_workbook(path, read_only=True)
+    words = [str(row[0]) for row in book["Sensitivities"].iter_rows(values_only=True)]
+    assert any("more than the budget" in word for word in words) == (budget is not None)

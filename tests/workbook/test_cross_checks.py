@@ -290,3 +290,11 @@ def test_customers_and_loads_that_are_all_zero_are_warned_about() -> None:
     raw = with_cell(with_cell(raw, "Loads!D2", 0), "Loads!D3", 0)
     found = places(check_and_build(raw)[1], WARNING)
     assert {("no customers", "Loads!F2"), ("no load", "Loads!D2")} <= found
+
+
+@pytest.mark.parametrize("place", ["Outage assumptions!F2", "Outage assumptions!H2"])
+def test_a_storm_that_reaches_no_class_is_warned_about(place: str) -> None:
+    """Main is the one exposed class: without it the storm's three columns act on nothing."""
+    found = places(check_and_build(with_cell(raw_study(), place, "no"))[1], WARNING)
+    cells = {cell for code, cell in found if code == Code.NOT_USED}
+    assert cells == {"Windows!G3", "Windows!H3", "Windows!I3"}

@@ -115,3 +115,20 @@ def test_very_many_faults_of_one_kind_are_cut_short_and_counted() -> None:
     sheet = next(s for s in load_sheets() if s.name == "Profiles")
     _, findings = check_table(raw.tables["Profiles"], sheet)
     assert len(findings) == 48
+
+
+def field_of(sheet: str, key: str) -> Field:
+    return next(field for name, field in NUMBER_FIELDS if (name, field.key) == (sheet, key))
+
+
+@pytest.mark.parametrize(("typed", "is_asked"), [(95, True), (1.2, False)])
+def test_a_percentage_is_offered_only_where_it_would_be_likely(typed, is_asked):
+    """95 is 95 %, a usual power factor; nobody means a power factor of 1.2 %."""
+    _, findings = check_field(Cell("Loads", "E2", typed), field_of("Loads", "power_factor"))
+    assert ("Did you mean" in findings[0].hint) is is_asked
+
+
+@pytest.mark.parametrize(("typed", "said"), [(1, "1 year would"), (2, "2 years would")])
+def test_one_of_a_unit_is_singular(typed, said):
+    _, findings = check_field(Cell("Storage", "N2", typed), field_of("Storage", "life_years"))
+    assert findings[0].message.startswith(said)

@@ -35,6 +35,7 @@ from xlplan.evaluate.purchases import net_capital, price_purchases, read_purchas
 from xlplan.evaluate.results import CheckLine, ConvergenceRow, PlanResult, Trace
 from xlplan.model.dispatch import Purchases
 from xlplan.model.purchase import Choices
+from xlplan.model.remnants import bounds_without, find_remnants, study_without
 from xlplan.model.study_graph import StudyGraph, build_study_graph
 from xlplan.model.tree_size import TreeFit, judge_size
 from xlplan.model.whole_tree import build_whole_tree
@@ -44,7 +45,7 @@ from xlplan.solve.decomposition import Engine
 from xlplan.solve.proposal import LearningService, Proposal, propose
 from xlplan.solve.result import DecompositionResult, IterationRecord, StopReason
 from xlplan.solve.savepoint import Savepoint
-from xlplan.solve.tree import TreeTermination, solve_tree
+from xlplan.solve.tree import TreeSolution, TreeTermination, solve_tree
 from xlplan.study.alternatives import with_budget
 from xlplan.study.economics import capital_recovery_factor
 from xlplan.study.study import DeviceChange, Study
@@ -68,6 +69,9 @@ saving is counted): how much better they could still be run must be small beside
 
 BRIEF_TARGET = 0.5
 """The same for a brief wish that does not say how near the best plan is near enough."""
+
+DEMAND_CLOSENESS = 1e-7
+"""Share of the cost to which first stage and roots agree on the demand limit of a plan."""
 
 MOST_LOOKS = 8
 """Parts of the events that a point's search looks at before the plan is followed."""
@@ -280,6 +284,73 @@ class PlanSolver:
         bounds = first_stage.bounds(None, wish.price_list)
         return first_stage.fixed(bounds, self.study, wish.fixed)
 
+    def _clean_bounds(
+        self,
+        graph: StudyGraph,
+        bounds: tuple[FloatArray, FloatArray],
+        found: Proposal | DecompositionResult,
+    ) -> tuple[FloatArray, FloatArray] | None:
+        """Bounds that rule out what of a decision is no purchase; None where all of it is."""
+        remnants = find_remnants(self.study, read_purchases(graph.first_stage, found.x))
+        return None if remnants is None else bounds_without(graph.first_stage, bounds, remnants)
+
+    def _without_remnants(
+        self,
+        graph: StudyGraph,
+        engine: Engine,
+        bounds: tuple[FloatArray, FloatArray],
+        found: DecompositionResult,
+        gap_frac: float,
+        deadline: float,
+    ) -> DecompositionResult:
+        """The plan searched again without its remnants; ``found`` where that is not as near.
+
+        The new plan has its own cost. The bound is that of the search in which they were free.
+        """
+        clean = self._clean_bounds(graph, bounds, found)
+        if clean is None or found.termination is not StopReason.GAP_REACHED:
+            return found
+        other = engine.run(
+            gap_frac, deadline=deadline, x_bounds=clean, should_stop=self.should_stop
+        )
+        if not other.has_plan:
+            return found
+        gap = _gap(other.cost.high, found.lower_bound, other.cost.mean)
+        if gap > max(gap_frac, found.gap_frac):
+            return found
+        return replace(
+            other,
+            termination=found.termination,
+            lower_bound=found.lower_bound,
+            gap_frac=gap,
+        )
+
+    def _with_demand_settled(
+        self, wish: Wish, found: DecompositionResult, deadline: float
+    ) -> DecompositionResult:
+        """The plan with the demand limit that goes with its purchases.
+
+        Within the gap the limit may lie a little below the peak, and the first plan then sheds
+        load in normal service that nobody means to shed. First stage and roots are made to agree
+        closely with the purchases given, which takes no further look at events.
+        """
+        if self.study.settings.demand_charge_per_kw_year <= 0.0:
+            return found
+        first_stage = self.graph.first_stage
+        bounds = first_stage.fixed(
+            first_stage.bounds(None, wish.price_list),
+            self.study,
+            read_purchases(first_stage, found.x),
+        )
+        closeness = DEMAND_CLOSENESS * abs(found.cost.mean)
+        settled = self._proposed(bounds, closeness, 0, deadline)
+        return replace(
+            found,
+            x=settled.x,
+            capacities=settled.capacities,
+            first_stage_cost=settled.first_stage_cost,
+        )
+
     def _limit_s(self, wish: Wish) -> float:
         limit_s = self.options.time_limit_h * SECONDS_PER_HOUR
         return limit_s if wish.limit_s is None else min(limit_s, wish.limit_s)
@@ -350,7 +421,11 @@ class PlanSolver:
             if self.should_stop():
                 raise NoPlanError(f"Stopped before there was a plan for '{name}'.")
             self.on_progress(Progress(name, "following the plan", bound))
-            self._follow_briefly(found, closeness)
+            clean = (
+                None if wish.fixed is not None else self._clean_bounds(self.graph, bounds, found)
+            )
+            followed = found if clean is None else self._proposed(clean, closeness, 0, deadline)
+            self._follow_briefly(followed, closeness)
             n_new, has_looked = n_new + 1, False
             found = self._proposed(bounds, closeness, 0, deadline)
         facts = PlanFacts(
@@ -433,6 +508,9 @@ class PlanSolver:
                 f"The solver found no plan for '{name}' ({solution.raw_status}). "
                 "A longer time limit, or --method decomposed, may help."
             )
+        if wish.fixed is None:
+            solution = self._tree_without_remnants(wish, tree_study, solution, gap)
+        assert solution.purchases is not None
         bought = fixed_demand(solution.purchases, wish.fixed)
         follow = follow_tree(study, self.feeder, self.windows, bought, solution.segments)
         reached = solution.termination is TreeTermination.OPTIMAL
@@ -471,6 +549,24 @@ class PlanSolver:
             result = self._with_ac(result, bought, dispatches)
         return SolvedPlan(self._with_status(result), follow, bought)
 
+    def _tree_without_remnants(
+        self, wish: Wish, study: Study, solution: TreeSolution, gap: float
+    ) -> TreeSolution:
+        """The whole tree solved again without remnants; as it was where that costs more."""
+        assert solution.purchases is not None
+        remnants = find_remnants(study, solution.purchases)
+        left_s = self._limit_s(wish) - solution.seconds
+        if remnants is None or solution.termination is not TreeTermination.OPTIMAL or left_s <= 0.0:
+            return solution
+        tree = build_whole_tree(study_without(study, remnants), self.feeder, self.windows)
+        other = solve_tree(tree, left_s, gap)
+        allowed = solution.objective + gap * abs(solution.objective)
+        is_as_good = other.termination is TreeTermination.OPTIMAL and other.objective <= allowed
+        if not is_as_good:
+            return solution
+        seconds = solution.seconds + other.seconds
+        return replace(other, bound=solution.bound, seconds=seconds)
+
     def _by_decomposition(self, wish: Wish, before: SolvedPlan | None = None) -> SolvedPlan:
         """One plan; ``before``: the plan whose bound holds for it, where its search was wider."""
         name = wish.name
@@ -494,6 +590,11 @@ class PlanSolver:
             found = self._run(name, inner, deadline, started + limit_s, bounds, rows)
             if before is None:
                 bound = max(bound, found.lower_bound + self.device_yearly)
+            if wish.fixed is None:
+                found = self._without_remnants(
+                    self.graph, self.engine, bounds, found, inner, deadline
+                )
+            found = self._with_demand_settled(wish, found, deadline)
             self.on_progress(Progress(name, "following the plan", bound))
             follow = self._follower(self.graph, self.engine).follow(
                 found.capacities[0], samples, self.options.seed
@@ -613,14 +714,15 @@ class PlanSolver:
             )
             self._blind = (graph, engine)
         graph, engine = self._blind
+        deadline = started + self._limit_s(wish) * (1.0 - RESERVE)
+        bounds = self._bounds(graph, wish)
         found = engine.run(
-            BLIND_GAP,
-            deadline=started + self._limit_s(wish) * (1.0 - RESERVE),
-            x_bounds=self._bounds(graph, wish),
-            should_stop=self.should_stop,
+            BLIND_GAP, deadline=deadline, x_bounds=bounds, should_stop=self.should_stop
         )
         if not found.has_plan:
             raise NoPlanError(f"Stopped before there was a plan for '{name}'.")
+        if wish.fixed is None:
+            found = self._without_remnants(graph, engine, bounds, found, BLIND_GAP, deadline)
         self.on_progress(Progress(name, "following the plan"))
         follower = replace(self._follower(graph, engine), breaks_ties_by_energy=True)
         follow = follower.follow(found.capacities[0], self.options.samples, self.options.seed)

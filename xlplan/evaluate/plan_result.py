@@ -208,7 +208,7 @@ def _cause_results(
                     window=window.series.window,
                     scenario=scenario.name,
                     section=scenario.section,
-                    causes=", ".join(dict.fromkeys(c.ident for c in scenario.causes)),
+                    causes=scenario.what_fails,
                     repair_h=scenario.repair_h,
                     events_per_year=float(n * result.event_count[:, w].sum()),
                     eens_kwh=float(events[slots.per_load("ens_kwh")].sum()),

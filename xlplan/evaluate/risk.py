@@ -170,7 +170,7 @@ def worst_events(
                 WorstEvent(
                     window=series.window,
                     scenario=scenario.name,
-                    causes=", ".join(dict.fromkeys(c.ident for c in scenario.causes)),
+                    causes=scenario.what_fails,
                     begins=time_label(study.profiles.times[row]),
                     hours=scenario.n_period * series.period_h,
                     per_year=float(follow.occurrences[i] * result.event_count[:, w].sum()),

@@ -100,6 +100,7 @@ class Scenario:
     failure's next period to the end of the repair, the first ``n_isolation`` of them isolation.
     ``hardening``: (measure position, share of failures avoided), ascending by share; the measures
     exclude one another. ``repair_cost``: shape (n_period of the window,), money per failure.
+    ``detail``: "" or words for a generator that does not start, after a comma.
     """
 
     name: str
@@ -115,3 +116,12 @@ class Scenario:
     is_bulk_supply: bool
     rate_per_year: FloatArray
     repair_cost: FloatArray
+    detail: str = ""
+
+    @property
+    def what_fails(self) -> str:
+        """The components whose failure this is, and what else goes wrong then.
+
+        Scenarios that differ in a generator that does not start have different words.
+        """
+        return ", ".join(dict.fromkeys(cause.ident for cause in self.causes)) + self.detail

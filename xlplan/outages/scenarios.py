@@ -308,6 +308,7 @@ def _merge(events: list[_Event]) -> Scenario:
     what = "fault" if first.cause.kind == LINE else "failure"
     return Scenario(
         name=f"{first.where}: {classes} {what}, {repair_h:.3g} h{first.detail}",
+        detail=first.detail,
         section=first.section,
         causes=_joined_causes(events),
         n_isolation=first.n_isolation,

@@ -215,7 +215,13 @@ def _percent_meant(field: Field, value: float) -> str:
     is_share = field.maximum == 1 and not field.key.endswith("_pct")
     if not is_share or not 1.0 < value <= pct_from_frac(1.0):
         return ""
+    if field.likely_min is not None and frac_from_pct(value) < field.likely_min:
+        return ""
     return f"Did you mean {value:.6g} %? That is {frac_from_pct(value):.6g} here."
+
+
+PLURAL_UNITS = frozenset({"years", "hours", "minutes"})
+"""Units that lose their s beside a 1."""
 
 
 def _unlikely(cell: Cell, field: Field, value: float) -> Finding | None:
@@ -224,6 +230,8 @@ def _unlikely(cell: Cell, field: Field, value: float) -> Finding | None:
     if not (below or above):
         return _fraction_of_a_percent(cell, field, value)
     unit = f" {field.unit}" if field.unit else ""
+    if value == 1.0 and field.unit in PLURAL_UNITS:
+        unit = unit.removesuffix("s")
     means = (field.likely_text or "an unusual value").removesuffix(".")
     return finding_at(
         cell,

@@ -47,6 +47,7 @@ def check_times(study: CheckedStudy) -> Iterator[Finding]:
             stretches.append((row, stretch))
             yield from _window_profiles(row, profiles, stretch)
     yield from _hours_of_a_year(study)
+    yield from _weather(study)
     yield from _start_charges(study)
     yield from _sale_price(study, profiles, stretches)
     yield from _stored_energy_price(study, profiles, stretches)
@@ -184,6 +185,27 @@ def _hours_of_a_year(study: CheckedStudy) -> Iterator[Finding]:
             f"{pct_from_frac(total / HOURS_PER_YEAR):.0f} % of {HOURS_PER_YEAR:g}.",
             "Yearly figures count only what the windows hold.",
         )
+
+
+def _weather(study: CheckedStudy) -> Iterator[Finding]:
+    """A storm's multipliers and failure profile act on exposed classes alone."""
+    classes = study.rows("Outage assumptions")
+    if any("weather_exposed" in row.faulty or "included" in row.faulty for row in classes):
+        return
+    if not classes or any(r.is_yes("weather_exposed") and r.is_yes("included") for r in classes):
+        return
+    for row in study.rows("Windows"):
+        for key in ("failure_multiplier", "repair_multiplier", "failure_profile"):
+            is_given = row.text(key) is not None or row.number(key) not in (None, 1.0)
+            if is_given:
+                yield warning(
+                    row,
+                    Code.NOT_USED,
+                    key,
+                    "this has no effect: no outage class that is included is exposed to weather.",
+                    "Mark the classes that storms reach in Outage assumptions, or leave this "
+                    "blank.",
+                )
 
 
 def _start_charges(study: CheckedStudy) -> Iterator[Finding]:

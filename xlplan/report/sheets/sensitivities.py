@@ -81,7 +81,7 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
     width = sheet.pixels(0, len(WIDTHS) - 1) - 10
     sheet.chart(CHART_TOP, 0, chart, width, n_row * charts.PIXELS_PER_ROW - 10, alt)
     row = _regrets(sheet, result, parts.below + 2)
-    notes = (
+    notes: tuple[str, ...] = (
         "The plan changes where another asset is bought or a size moves by more than 10 %. Kept "
         "plan no worse: the loss by keeping it is within its interval.",
         "Regret: yearly cost of an alternative's purchases less that of the best plan of the case. "
@@ -89,6 +89,11 @@ def write(book: SafeBook, result: StudyResult) -> Grid | None:
         "Asset costs vary in capital, not in O&M; the energy price varies with the sale price and "
         "the price of stored energy; load varies in every window alike.",
     )
+    if result.capital_budget is not None:
+        notes += (
+            "A plan that is kept may cost more than the budget where assets are dearer; a plan "
+            "made anew keeps within it, and may then be the dearer one a year.",
+        )
     for i, note in enumerate(notes):
         sheet.text(row + i, 0, note, "note")
     sheet.freeze(2, 1)
