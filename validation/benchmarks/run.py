@@ -252,7 +252,11 @@ def main() -> None:
     for case in chosen:
         command = [sys.executable, "-m", "validation.benchmarks.run", case.name, "--here",
                    "--workers", str(options.workers)]  # fmt: skip
-        done = subprocess.run(command, stdout=subprocess.PIPE, text=True, check=False)
+        # As the program itself does; here NumPy may be imported before it.
+        environment = {"OMP_NUM_THREADS": "1", **os.environ}
+        done = subprocess.run(
+            command, stdout=subprocess.PIPE, text=True, check=False, env=environment
+        )
         lines = done.stdout.strip().splitlines()
         if done.returncode:
             print(f"{case.name}: ended with {done.returncode}")
