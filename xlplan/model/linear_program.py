@@ -156,19 +156,19 @@ class ProgramBuilder:
         return len(self.row_lower) - 1
 
     def add_lazy_block(
-        self, names: Sequence[str], columns: Sequence[int], values: FloatArray, upper: FloatArray
+        self, names: Sequence[str], columns: IntArray, values: FloatArray, upper: FloatArray
     ) -> None:
-        """Adds lazy rows ``values @ columns <= upper`` over the same columns, none of them twice.
+        """Adds lazy rows ``values @ columns <= upper``, no column twice in a row.
 
         Parameters
         ----------
         names : n names
-        columns : m positions
+        columns : array, shape (n, m), positions
         values : array, shape (n, m), none of them 0
         upper : array, shape (n,)
         """
         n, m = values.shape
-        self.index += list(columns) * n
+        self.index += columns.ravel().tolist()
         self.value += values.ravel().tolist()
         begin = self.start[-1]
         self.start += range(begin + m, begin + n * m + 1, m)

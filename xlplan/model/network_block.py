@@ -31,6 +31,7 @@ V_SCALE = 1000.0
 above the 1e-9 under which the solver drops a coefficient."""
 
 Terms = list[tuple[int, float]]
+FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
 
@@ -76,7 +77,28 @@ def add_polygon(
         raise ValueError(f"{name}: a column occurs twice in a rating")
     # One name for all: a name of its own for each would take more room than the rows.
     builder.add_lazy_block(
-        [f"{name} polygon"] * N_CORNER, columns, np.array([a for _, a in terms]).T, upper
+        [f"{name} polygon"] * N_CORNER,
+        np.array([columns] * N_CORNER),
+        np.array([a for _, a in terms]).T,
+        upper,
+    )
+
+
+def add_line_polygons(
+    builder: ProgramBuilder,
+    names: list[str],
+    flow_kw: IntArray,
+    flow_kvar: IntArray,
+    rating_kva: FloatArray,
+) -> None:
+    """``add_polygon`` for the flows of n lines at once: columns (n,), ratings (n,)."""
+    n = len(names)
+    labels = [f"rating {name} polygon" for name in names]
+    builder.add_lazy_block(
+        [label for label in labels for _ in range(N_CORNER)],
+        np.repeat(np.stack([flow_kw, flow_kvar], axis=1), N_CORNER, axis=0),
+        np.tile(np.stack([_COS, _SIN], axis=1), (n, 1)),
+        np.repeat(rating_kva * np.cos(np.pi / N_CORNER), N_CORNER),
     )
 
 
@@ -125,7 +147,9 @@ def add_network(
     for terminal in terminals:
         kw_terms[terminal.bus] += terminal.kw
         kvar_terms[terminal.bus] += terminal.kvar
-    for line in np.flatnonzero(service.line_live):
+    rated: list[int] = []
+    rated_names: list[str] = []
+    for line in np.flatnonzero(service.line_live).tolist():
         i, j = int(feeder.from_bus[line]), int(feeder.to_bus[line])
         if not (service.bus_live[i] and service.bus_live[j]):
             continue
@@ -140,10 +164,14 @@ def add_network(
         drop_r = V_SCALE * v_sq_drop_per_kw(float(feeder.r_ohm[line]), feeder.base_kv)
         drop_x = V_SCALE * v_sq_drop_per_kw(float(feeder.x_ohm[line]), feeder.base_kv)
         boost = (1.0 + float(feeder.boost_frac[line])) ** 2
-        terms = [(v_sq[j], 1.0), (v_sq[i], -boost), (p, drop_r), (q, drop_x)]
+        terms = [(int(v_sq[j]), 1.0), (int(v_sq[i]), -boost), (p, drop_r), (q, drop_x)]
         voltage_row[line] = builder.add_row(f"voltage {name}", terms, 0.0, 0.0)
         if np.isfinite(rating):
-            add_polygon(builder, f"rating {name}", [(p, 1.0)], [(q, 1.0)], rating)
+            rated.append(line)
+            rated_names.append(name)
+    if rated:
+        ratings = feeder.rating_kva[rated]
+        add_line_polygons(builder, rated_names, flow_kw[rated], flow_kvar[rated], ratings)
     kw_row = np.full(n_bus, -1)
     kvar_row = np.full(n_bus, -1)
     for bus in kw_terms:

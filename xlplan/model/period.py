@@ -8,6 +8,7 @@ only then is the agreement of the two methods evidence.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -47,6 +48,18 @@ class FeederModel:
     layout: Layout
     loads: Loads
     flow_limit_kw: float
+
+    @cached_property
+    def bus_loads(self) -> dict[int, tuple[FloatArray, FloatArray]]:
+        """Load in kW and in kvar by period, (n_period,) each, of every bus that has any."""
+        at, series = self.feeder.load_bus, self.series
+        return {
+            bus: (
+                series.load_kw[:, at == bus].sum(axis=1),
+                series.load_kvar[:, at == bus].sum(axis=1),
+            )
+            for bus in np.unique(at).tolist()
+        }
 
     def price_of_shed(self, clock_h: float, is_event: bool) -> FloatArray:
         """Cost of a kW of each load shed for one hour, (n_load,); losses are no energy missed."""
@@ -184,15 +197,10 @@ def add_period(
     )
     columns.flow_kw, columns.flow_kvar = network.flow_kw, network.flow_kvar
     columns.v_sq = network.v_sq
-    for bus in range(model.feeder.n_bus):
-        loads = np.flatnonzero(model.feeder.load_bus == bus)
-        if network.kw_row[bus] < 0 or not len(loads):
+    for bus, totals in model.bus_loads.items():
+        if network.kw_row[bus] < 0:
             continue
-        for row, load in (
-            (network.kw_row[bus], model.series.load_kw),
-            (network.kvar_row[bus], model.series.load_kvar),
-        ):
-            total = load[:, loads].sum(axis=1)
+        for row, total in zip((network.kw_row[bus], network.kvar_row[bus]), totals, strict=True):
             numbers.put("row_lower", int(row), total, offset)
             numbers.put("row_upper", int(row), total, offset)
     _add_islands(builder, numbers, model, service, capacities, columns, offset)

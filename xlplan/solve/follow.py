@@ -189,14 +189,7 @@ class Follower:
 
     def exits(self, i_family: int, i_member: int, capacity: FloatArray) -> Exits:
         """Exits of a node that count."""
-        known = self.tables.families[i_family].exits
-        if known is not None:
-            weight, child = known.weight[i_member], known.child[i_member]
-            child_if_gated = known.child_if_gated[i_member]
-        else:
-            member = self.cache.get(i_family, i_member)
-            weight = member.exit_weight / member.scale
-            child, child_if_gated = member.exit_child, member.exit_child_if_gated
+        weight, child, child_if_gated = self._exits_of(i_family, i_member)
         index = (weight > 0.0).nonzero()[0]
         gates = self.graph.families[i_family].exit_gate
         gate = np.array(
@@ -208,14 +201,22 @@ class Follower:
             child = np.where(is_gated[:, None], child_if_gated[index], child)
         return Exits(index, weight[index], child, gate)
 
+    def _exits_of(self, i_family: int, i_member: int) -> tuple[FloatArray, IntArray, IntArray]:
+        """Weight (n_exit,) in true scale of a node's exits, and their children (n_exit, 2)."""
+        known = self.tables.families[i_family].exits
+        if known is not None:
+            return known.weight[i_member], known.child[i_member], known.child_if_gated[i_member]
+        member = self.cache.get(i_family, i_member)
+        return member.exit_weight / member.scale, member.exit_child, member.exit_child_if_gated
+
     def n_path(self, limit: int) -> int:
         """Nodes on all paths from the roots, or ``limit`` where there are more."""
         number = [np.ones(f.n_member) for f in self.graph.families]
         for i_family, i_member in self.graph.order.tolist():
-            member = self.cache.get(i_family, i_member)
+            weight, *tables = self._exits_of(i_family, i_member)
             total = 1.0
-            for table in (member.exit_child, member.exit_child_if_gated):
-                used = (member.exit_weight > 0.0) & (table[:, 1] >= 0)
+            for table in tables:
+                used = (weight > 0.0) & (table[:, 1] >= 0)
                 for child_family, child_member in table[used].tolist():
                     total += number[child_family][child_member]
                     if total > limit:

@@ -60,6 +60,13 @@ _TERMINATIONS = {
     "kHighsInterrupt": Termination.INTERRUPTED,
 }
 
+# Looked up by the value itself: asking a value of HiGHS for its name goes through all names.
+_MODEL_STATUSES = {
+    status: (_TERMINATIONS.get(name, Termination.ERROR), name[1:])
+    for name, status in highspy.HighsModelStatus.__members__.items()
+}
+_RUN_STATUSES = {status: name[1:] for name, status in highspy.HighsStatus.__members__.items()}
+
 
 class _QuietHighs(highspy.Highs):
     """Turns output off before anything else: the wrapper's callbacks print a banner."""
@@ -315,8 +322,7 @@ def _read_result(
 ) -> SolveResult:
     """Turns HiGHS's state into a ``SolveResult``, reading only what is valid."""
     seconds = time.perf_counter() - begin
-    model_status = highs.getModelStatus()
-    termination = _TERMINATIONS.get(model_status.name, Termination.ERROR)
+    termination, word = _MODEL_STATUSES[highs.getModelStatus()]
     if run_status == highspy.HighsStatus.kError:
         termination = Termination.ERROR
     solution = highs.getSolution()
@@ -336,7 +342,7 @@ def _read_result(
         termination=termination,
         has_incumbent=bool(has_incumbent),
         has_dual=bool(has_dual),
-        raw_status=f"{model_status.name[1:]} ({run_status.name[1:]})",
+        raw_status=f"{word} ({_RUN_STATUSES[run_status]})",
         seconds=seconds,
         objective_or_nan=objective,
         bound_or_nan=bound,
