@@ -285,20 +285,24 @@ class PlanSolver:
         return first_stage.fixed(bounds, self.study, wish.fixed)
 
     def _clean_bounds(
-        self,
-        graph: StudyGraph,
-        bounds: tuple[FloatArray, FloatArray],
-        found: Proposal | DecompositionResult,
+        self, graph: StudyGraph, wish: Wish, found: Proposal | DecompositionResult
     ) -> tuple[FloatArray, FloatArray] | None:
-        """Bounds that rule out what of a decision is no purchase; None where all of it is."""
+        """Bounds that rule out what of a decision is no purchase; None where all of it is.
+
+        Purchases that are given stay as they are.
+        """
+        if wish.fixed is not None:
+            return None
         remnants = find_remnants(self.study, read_purchases(graph.first_stage, found.x))
-        return None if remnants is None else bounds_without(graph.first_stage, bounds, remnants)
+        if remnants is None:
+            return None
+        return bounds_without(graph.first_stage, self._bounds(graph, wish), remnants)
 
     def _without_remnants(
         self,
         graph: StudyGraph,
         engine: Engine,
-        bounds: tuple[FloatArray, FloatArray],
+        wish: Wish,
         found: DecompositionResult,
         gap_frac: float,
         deadline: float,
@@ -307,7 +311,7 @@ class PlanSolver:
 
         The new plan has its own cost. The bound is that of the search in which they were free.
         """
-        clean = self._clean_bounds(graph, bounds, found)
+        clean = self._clean_bounds(graph, wish, found)
         if clean is None or found.termination is not StopReason.GAP_REACHED:
             return found
         other = engine.run(
@@ -336,12 +340,8 @@ class PlanSolver:
         """
         if self.study.settings.demand_charge_per_kw_year <= 0.0:
             return found
-        first_stage = self.graph.first_stage
-        bounds = first_stage.fixed(
-            first_stage.bounds(None, wish.price_list),
-            self.study,
-            read_purchases(first_stage, found.x),
-        )
+        bought = read_purchases(self.graph.first_stage, found.x)
+        bounds = self._bounds(self.graph, replace(wish, fixed=bought))
         closeness = DEMAND_CLOSENESS * abs(found.cost.mean)
         settled = self._proposed(bounds, closeness, 0, deadline)
         return replace(
@@ -421,9 +421,7 @@ class PlanSolver:
             if self.should_stop():
                 raise NoPlanError(f"Stopped before there was a plan for '{name}'.")
             self.on_progress(Progress(name, "following the plan", bound))
-            clean = (
-                None if wish.fixed is not None else self._clean_bounds(self.graph, bounds, found)
-            )
+            clean = self._clean_bounds(self.graph, wish, found)
             followed = found if clean is None else self._proposed(clean, closeness, 0, deadline)
             self._follow_briefly(followed, closeness)
             n_new, has_looked = n_new + 1, False
@@ -508,8 +506,7 @@ class PlanSolver:
                 f"The solver found no plan for '{name}' ({solution.raw_status}). "
                 "A longer time limit, or --method decomposed, may help."
             )
-        if wish.fixed is None:
-            solution = self._tree_without_remnants(wish, tree_study, solution, gap)
+        solution = self._tree_without_remnants(wish, tree_study, solution, gap)
         assert solution.purchases is not None
         bought = fixed_demand(solution.purchases, wish.fixed)
         follow = follow_tree(study, self.feeder, self.windows, bought, solution.segments)
@@ -553,6 +550,8 @@ class PlanSolver:
         self, wish: Wish, study: Study, solution: TreeSolution, gap: float
     ) -> TreeSolution:
         """The whole tree solved again without remnants; as it was where that costs more."""
+        if wish.fixed is not None:
+            return solution
         assert solution.purchases is not None
         remnants = find_remnants(study, solution.purchases)
         left_s = self._limit_s(wish) - solution.seconds
@@ -590,10 +589,7 @@ class PlanSolver:
             found = self._run(name, inner, deadline, started + limit_s, bounds, rows)
             if before is None:
                 bound = max(bound, found.lower_bound + self.device_yearly)
-            if wish.fixed is None:
-                found = self._without_remnants(
-                    self.graph, self.engine, bounds, found, inner, deadline
-                )
+            found = self._without_remnants(self.graph, self.engine, wish, found, inner, deadline)
             found = self._with_demand_settled(wish, found, deadline)
             self.on_progress(Progress(name, "following the plan", bound))
             follow = self._follower(self.graph, self.engine).follow(
@@ -721,8 +717,7 @@ class PlanSolver:
         )
         if not found.has_plan:
             raise NoPlanError(f"Stopped before there was a plan for '{name}'.")
-        if wish.fixed is None:
-            found = self._without_remnants(graph, engine, bounds, found, BLIND_GAP, deadline)
+        found = self._without_remnants(graph, engine, wish, found, BLIND_GAP, deadline)
         self.on_progress(Progress(name, "following the plan"))
         follower = replace(self._follower(graph, engine), breaks_ties_by_energy=True)
         follow = follower.follow(found.capacities[0], self.options.samples, self.options.seed)

@@ -25,6 +25,8 @@ N_CORNER = 12
 
 _ANGLE = (2.0 * np.arange(N_CORNER) + 1.0) * np.pi / N_CORNER
 _COS, _SIN = np.cos(_ANGLE), np.sin(_ANGLE)
+_SHRINK = float(np.cos(np.pi / N_CORNER))
+"""Distance of the polygon's sides from its middle, in radii."""
 
 V_SCALE = 1000.0
 """Voltage columns hold 1000 times the squared p.u. voltage: impedances of 1e-4 ohm then stay well
@@ -65,13 +67,12 @@ def add_polygon(
 
     ``rating`` is a number, or terms where the rating is bought. The rows are lazy: few ever bind.
     """
-    shrink = float(np.cos(np.pi / N_CORNER))
     terms = [(c, a * _COS) for c, a in kw] + [(c, a * _SIN) for c, a in kvar]
     upper = np.zeros(N_CORNER)
     if isinstance(rating, float):
-        upper += rating * shrink
+        upper += rating * _SHRINK
     else:
-        terms += [(c, np.full(N_CORNER, -a * shrink)) for c, a in rating]
+        terms += [(c, np.full(N_CORNER, -a * _SHRINK)) for c, a in rating]
     columns = [int(c) for c, _ in terms]
     if len(set(columns)) != len(columns):
         raise ValueError(f"{name}: a column occurs twice in a rating")
@@ -98,7 +99,7 @@ def add_line_polygons(
         [label for label in labels for _ in range(N_CORNER)],
         np.repeat(np.stack([flow_kw, flow_kvar], axis=1), N_CORNER, axis=0),
         np.tile(np.stack([_COS, _SIN], axis=1), (n, 1)),
-        np.repeat(rating_kva * np.cos(np.pi / N_CORNER), N_CORNER),
+        np.repeat(rating_kva * _SHRINK, N_CORNER),
     )
 
 

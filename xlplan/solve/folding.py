@@ -254,7 +254,8 @@ def _inverse_of(
     outside: tuple[IntArray, IntArray, FloatArray],
 ) -> _Inverse:
     """``W`` and ``G`` from entries (row, column, value) of ``A_DE`` and ``A_DK``."""
-    parts: Sequence[NDArray[np.generic]] = (np.array([n_early, *shape]), *own, *outside)
+    head = np.array([n_early, *shape, len(own[0])])
+    parts: Sequence[NDArray[np.generic]] = (head, *own, *outside)
     key = b"".join(part.tobytes() for part in parts)
     known = _KNOWN.get(key)
     if known is not None:

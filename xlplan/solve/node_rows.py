@@ -232,9 +232,6 @@ class ProgramRows:
         differs[~is_row] = self._differences.column_place[column] >= 0
         row = self.term_row[terms] - (len(self) - len(new))
         differs[row[self._does_shift_vary[self.term_fold[terms]]]] = True
-        # Where a fold's row is free in some members, so is the bound of its column.
-        own = self._folding.row[bounded[~is_row]]
-        differs[~is_row] |= self._differences.row_place[own] >= 0
         return np.flatnonzero(differs)
 
 
